@@ -1,0 +1,225 @@
+"""Circuits: parts between nets, grouped into cells, each part knowing what it sets.
+
+Net ``0`` is ground, ``in`` the source, ``out`` the output.  With a source resistance the
+cells hang on net ``src`` behind it.  An op-amp output bears the name of its block, its
+summing node the same with ``_s``; an inverter of block b drives ``b_n``.
+"""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Iterator, Mapping
+from dataclasses import dataclass, replace
+from functools import cached_property
+
+from synth.errors import CircuitError
+from synth.parts import OpAmp, PartRule
+
+__all__ = ["GROUND", "Amplifier", "Cell", "Circuit", "Passive"]
+
+GROUND = "0"
+_REFERENCE = re.compile(r"[A-Z][A-Z0-9_]{0,15}")
+_NET = re.compile(r"0|[a-z][a-z0-9_]{0,30}")
+
+
+@dataclass(frozen=True, kw_only=True)
+class Passive:
+    """A resistor or a capacitor.
+
+    Parameters
+    ----------
+    ref
+        Reference such as ``"R7"``.
+    kind
+        ``"resistor"`` or ``"capacitor"``.
+    nets
+        The two nets it joins.
+    value
+        [ohm] or [F].
+    ideal
+        Value the mathematics asks for, before a standard one was taken.
+    rule
+        What may be bought; None for what is not a part of the board (the resistance of
+        the source, the load), which then has no tolerance either.
+    sets
+        What the part sets, in words.
+    """
+
+    ref: str
+    kind: str
+    nets: tuple[str, str]
+    value: float
+    ideal: float
+    rule: PartRule | None
+    sets: str = ""
+
+    @property
+    def tolerance(self) -> float:
+        """Relative tolerance, 0 for what is not on the board."""
+        return self.rule.tolerance if self.rule else 0.0
+
+    @property
+    def on_board(self) -> bool:
+        """Whether the part is bought and placed."""
+        return self.rule is not None
+
+
+@dataclass(frozen=True, kw_only=True)
+class Amplifier:
+    """An op-amp: nets of its inputs and output, and its figures."""
+
+    ref: str
+    plus: str
+    minus: str
+    output: str
+    figures: OpAmp
+    sets: str = ""
+
+
+@dataclass(frozen=True, kw_only=True)
+class Cell:
+    """A group of parts that realises one block.
+
+    Parameters
+    ----------
+    kind
+        ``"integrator"``, ``"adder"`` or ``"inverter"``: inverting summing integrator, inverting
+        summing amplifier, inverter.
+    block
+        The block it realises (of an inverter: the block it inverts, or ``"in"``).
+    amplifier
+        Reference of the op-amp.
+    inputs
+        References of the input resistors, from their source nets to `summing`.
+    feedback
+        Reference of the part from `output` to `summing`.
+    summing, output
+        Nets.
+    polarity
+        +1 when the output net carries the signal of the block, -1 when it carries its
+        negative.
+    """
+
+    kind: str
+    block: str
+    amplifier: str
+    inputs: tuple[str, ...]
+    feedback: str
+    summing: str
+    output: str
+    polarity: int
+
+
+@dataclass(frozen=True, kw_only=True)
+class Circuit:
+    """A whole circuit, driven by 1 V at net ``in``.
+
+    Attributes
+    ----------
+    passives
+        Resistors and capacitors, those of the source and the load included.
+    amplifiers
+        Op-amps.
+    cells
+        The cells, in signal-flow order; may be empty for a circuit not made from blocks.
+
+    Raises
+    ------
+    CircuitError
+        A reference used twice, a name that is not allowed, a net with one connection, an
+        op-amp output driven twice, an unknown reference in a cell.
+    """
+
+    passives: tuple[Passive, ...]
+    amplifiers: tuple[Amplifier, ...]
+    cells: tuple[Cell, ...] = ()
+    input_net: str = "in"
+    output_net: str = "out"
+
+    def __post_init__(self) -> None:
+        self._check_names()
+        self._check_nets()
+        for cell in self.cells:
+            for ref in (*cell.inputs, cell.feedback):
+                if ref not in self.by_ref:
+                    raise CircuitError(f"cell {cell.block}: unknown part {ref!r}")
+
+    def _check_names(self) -> None:
+        refs = [p.ref for p in self.passives] + [a.ref for a in self.amplifiers]
+        for ref in refs:
+            if not _REFERENCE.fullmatch(ref):
+                raise CircuitError(f"got the reference {ref!r}, expected one such as 'R7'")
+        if len(set(refs)) != len(refs):
+            twice = sorted({r for r in refs if refs.count(r) > 1})
+            raise CircuitError(f"references used twice: {', '.join(twice)}")
+        for net in self.connections:
+            if not _NET.fullmatch(net):
+                raise CircuitError(f"got the net name {net!r}")
+        for part in self.passives:
+            if not 0 < part.value < float("inf"):
+                raise CircuitError(f"{part.ref}: got {part.value}, expected a positive value")
+
+    def _check_nets(self) -> None:
+        for net in (self.input_net, self.output_net):
+            if net not in self.connections:
+                raise CircuitError(f"nothing is connected to net {net!r}")
+        for net, refs in self.connections.items():
+            if len(refs) < 2 and net not in (GROUND, self.input_net, self.output_net):
+                raise CircuitError(f"net {net!r} hangs on {refs[0]} alone")
+        outputs = [a.output for a in self.amplifiers]
+        driven = [*outputs, self.input_net, GROUND]
+        for net in set(driven):
+            if driven.count(net) > 1:
+                raise CircuitError(f"net {net!r} is driven twice")
+
+    @cached_property
+    def connections(self) -> dict[str, tuple[str, ...]]:
+        """References on each net."""
+        out: dict[str, list[str]] = {}
+        for part in self.passives:
+            for net in part.nets:
+                out.setdefault(net, []).append(part.ref)
+        for amp in self.amplifiers:
+            for net in (amp.plus, amp.minus, amp.output):
+                out.setdefault(net, []).append(amp.ref)
+        return {net: tuple(refs) for net, refs in out.items()}
+
+    @cached_property
+    def by_ref(self) -> dict[str, Passive]:
+        """Passives by reference."""
+        return {p.ref: p for p in self.passives}
+
+    @property
+    def bought(self) -> tuple[Passive, ...]:
+        """Resistors and capacitors that are parts of the board."""
+        return tuple(p for p in self.passives if p.on_board)
+
+    def cell_of(self, ref: str) -> Cell | None:
+        """The cell a part or op-amp belongs to."""
+        for cell in self.cells:
+            if ref in (*cell.inputs, cell.feedback, cell.amplifier):
+                return cell
+        return None
+
+    def signal_nets(self) -> Iterator[str]:
+        """Nets of the op-amp outputs, in order of the op-amps."""
+        return (a.output for a in self.amplifiers)
+
+    def with_values(self, values: Mapping[str, float]) -> Circuit:
+        """The same circuit with some values changed.
+
+        Raises
+        ------
+        CircuitError
+            An unknown reference.
+        """
+        unknown = values.keys() - self.by_ref.keys()
+        if unknown:
+            raise CircuitError(f"unknown parts: {', '.join(sorted(unknown))}")
+        return replace(
+            self,
+            passives=tuple(
+                replace(p, value=float(values[p.ref])) if p.ref in values else p
+                for p in self.passives
+            ),
+        )

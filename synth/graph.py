@@ -1,0 +1,231 @@
+"""Block graphs: named integrators and adders joined by weighted terms.
+
+The signal of an integrator obeys dv/dt = sum of weight * source, weights in 1/s; that of an
+adder is v = sum of weight * source, weights plain ratios.  A source is ``"in"`` or the name
+of a block.  Signs are those of the mathematics; polarity is a later stage.
+"""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Iterable
+from dataclasses import dataclass, replace
+from fractions import Fraction
+from functools import cached_property
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from synth.errors import GraphError
+
+__all__ = ["INPUT", "Block", "BlockGraph", "Term", "merged_terms"]
+
+INPUT = "in"
+Weight = Fraction | float
+_NAME = re.compile(r"[a-z][a-z0-9]{0,15}")
+_RESERVED = frozenset({"in", "out", "src"})
+
+
+@dataclass(frozen=True)
+class Term:
+    """One weighted input of a block.
+
+    Parameters
+    ----------
+    source
+        ``"in"`` or the name of a block.
+    weight
+        1/s into an integrator, a plain ratio into an adder; not zero.
+    sets
+        What the weight stands for, in words a reader of the parts list understands.
+    """
+
+    source: str
+    weight: Fraction | float
+    sets: str = ""
+
+
+@dataclass(frozen=True)
+class Block:
+    """An integrator or an adder with its terms."""
+
+    name: str
+    kind: str
+    terms: tuple[Term, ...]
+
+    def __post_init__(self) -> None:
+        if not _NAME.fullmatch(self.name) or self.name in _RESERVED:
+            raise GraphError(f"got the block name {self.name!r}, expected letters and digits")
+        if self.kind not in ("integrator", "adder"):
+            raise GraphError(f"block {self.name}: got kind {self.kind!r}")
+        if not self.terms:
+            raise GraphError(f"block {self.name} has no input")
+        sources = [t.source for t in self.terms]
+        if len(set(sources)) != len(sources):
+            raise GraphError(f"block {self.name} takes one source twice: {sources}")
+        if any(t.weight == 0 for t in self.terms):
+            raise GraphError(f"block {self.name} has a term of weight zero")
+
+    @property
+    def is_integrator(self) -> bool:
+        """Whether the block integrates."""
+        return self.kind == "integrator"
+
+
+@dataclass(frozen=True)
+class BlockGraph:
+    """A network of blocks between ``in`` and the block named `output`.
+
+    Attributes
+    ----------
+    form
+        Name of the realization.
+    blocks
+        In signal-flow order where there is one.
+    output
+        The block whose signal is the output.
+
+    Raises
+    ------
+    GraphError
+        A name used twice, an unknown source or output, or adders in a loop.
+    """
+
+    form: str
+    blocks: tuple[Block, ...]
+    output: str
+
+    def __post_init__(self) -> None:
+        names = [b.name for b in self.blocks]
+        if len(set(names)) != len(names):
+            raise GraphError(f"a block name is used twice among {names}")
+        known = {INPUT, *names}
+        for block in self.blocks:
+            for term in block.terms:
+                if term.source not in known:
+                    raise GraphError(f"block {block.name}: unknown source {term.source!r}")
+        if self.output not in names:
+            raise GraphError(f"unknown output {self.output!r}")
+        _ = self.adder_order
+
+    @cached_property
+    def by_name(self) -> dict[str, Block]:
+        """Blocks by name."""
+        return {b.name: b for b in self.blocks}
+
+    @property
+    def integrators(self) -> tuple[Block, ...]:
+        """The integrators in order."""
+        return tuple(b for b in self.blocks if b.is_integrator)
+
+    @property
+    def adders(self) -> tuple[Block, ...]:
+        """The adders in order."""
+        return tuple(b for b in self.blocks if not b.is_integrator)
+
+    @cached_property
+    def adder_order(self) -> tuple[str, ...]:
+        """Adders so that each comes after the adders it reads."""
+        waiting = {b.name: {t.source for t in b.terms} for b in self.adders}
+        order: list[str] = []
+        while waiting:
+            ready = [n for n, sources in waiting.items() if not sources & waiting.keys()]
+            if not ready:
+                raise GraphError(f"the adders {sorted(waiting)} feed each other in a loop")
+            order += ready
+            for name in ready:
+                del waiting[name]
+        return tuple(order)
+
+    def readers(self, source: str) -> tuple[tuple[Block, Term], ...]:
+        """Every block and term that reads `source`."""
+        return tuple((b, t) for b in self.blocks for t in b.terms if t.source == source)
+
+    def state_matrices(
+        self,
+    ) -> tuple[list[list[Weight]], list[Weight], list[Weight], Weight]:
+        """A, B, C, D of dx/dt = A x + B u, y = C x + D u; x are the integrators in order.
+
+        Adders are substituted.  Exact when every weight is a rational.
+        """
+        states = [b.name for b in self.integrators]
+        columns = [*states, INPUT]
+        rows: dict[str, list[Weight]] = {
+            name: [Fraction(int(c == name)) for c in columns] for name in columns
+        }
+
+        def combine(block: Block) -> list[Weight]:
+            out: list[Weight] = [Fraction(0)] * len(columns)
+            for term in block.terms:
+                for k, value in enumerate(rows[term.source]):
+                    if value:
+                        out[k] = out[k] + term.weight * value
+            return out
+
+        for name in self.adder_order:
+            rows[name] = combine(self.by_name[name])
+        derivatives = [combine(b) for b in self.integrators]
+        y = rows[self.output]
+        return [d[:-1] for d in derivatives], [d[-1] for d in derivatives], y[:-1], y[-1]
+
+    def signals(self, s: ArrayLike) -> dict[str, NDArray[np.complex128]]:
+        """Transfer function from the input to every block at complex frequencies [rad/s].
+
+        Computed on the sparse equations of integrators and adders together, so zeros made by
+        the structure come out as zeros.  Returns arrays of the shape of `s`.
+        """
+        points = np.asarray(s, dtype=complex)
+        flat = points.ravel()
+        index = {b.name: k for k, b in enumerate(self.blocks)}
+        n = len(index)
+        matrix = np.zeros((flat.size, n, n), dtype=complex)
+        right = np.zeros((flat.size, n, 1), dtype=complex)
+        for block in self.blocks:
+            row = index[block.name]
+            # Rows of integrators are divided by their largest weight, to balance the matrix.
+            unit = max(abs(float(t.weight)) for t in block.terms) if block.is_integrator else 1.0
+            matrix[:, row, row] += flat / unit if block.is_integrator else 1.0
+            for term in block.terms:
+                weight = float(term.weight) / unit
+                if term.source == INPUT:
+                    right[:, row, 0] += weight
+                else:
+                    matrix[:, row, index[term.source]] -= weight
+        solved = np.asarray(np.linalg.solve(matrix, right)[:, :, 0], dtype=np.complex128)
+        return {name: solved[:, k].reshape(points.shape) for name, k in index.items()}
+
+    def at(self, s: ArrayLike) -> NDArray[np.complex128]:
+        """Transfer function from input to output at complex frequencies [rad/s]."""
+        return self.signals(s)[self.output]
+
+    def rescaled(self, levels: dict[str, float]) -> BlockGraph:
+        """The same graph with signal b multiplied by ``levels[b]`` > 0 (1 where not named).
+
+        A term from j to i then has weight * level_i / level_j.  The input stays as it is, and
+        the output too if its level is 1.
+        """
+        blocks = tuple(
+            replace(
+                b,
+                terms=tuple(
+                    replace(
+                        t,
+                        weight=float(t.weight)
+                        * levels.get(b.name, 1.0)
+                        / levels.get(t.source, 1.0),
+                    )
+                    for t in b.terms
+                ),
+            )
+            for b in self.blocks
+        )
+        return replace(self, blocks=blocks)
+
+
+def merged_terms(terms: Iterable[Term]) -> tuple[Term, ...]:
+    """Terms with those of one source added up and those of weight zero left out."""
+    out: dict[str, Term] = {}
+    for term in terms:
+        have = out.get(term.source)
+        out[term.source] = term if have is None else replace(have, weight=have.weight + term.weight)
+    return tuple(t for t in out.values() if t.weight != 0)

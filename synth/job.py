@@ -1,0 +1,181 @@
+"""What a user asks for, as values that check themselves.
+
+A `Job` is what every later stage reads.  SI units; frequencies a person states stay in
+Hz and carry ``_hz`` in their name.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass, field
+
+from synth.errors import JobError
+from synth.parts import OpAmp, PartRule
+from synth.transfer import TransferFunction
+
+__all__ = ["Accept", "Board", "Job", "Loop", "Signal"]
+
+
+@dataclass(frozen=True, kw_only=True)
+class Signal:
+    """The signal the board sees.
+
+    Parameters
+    ----------
+    band_hz
+        Lowest and highest frequency at which the response must hold [Hz].
+    input_peak
+        Largest input [V].
+    swing
+        ``"sine"``: the input is a sine of any frequency, and peaks follow from the Linf
+        norm; ``"any"``: any waveform below `input_peak`, and peaks follow from the L1 norm.
+    source_resistance
+        Of the source that drives the board [ohm].
+    load
+        Resistance from the output to ground [ohm], or None.
+    """
+
+    band_hz: tuple[float, float]
+    input_peak: float = 1.0
+    swing: str = "sine"
+    source_resistance: float = 0.0
+    load: float | None = None
+
+    def __post_init__(self) -> None:
+        low, high = self.band_hz
+        if not (0 < low < high < math.inf):
+            raise JobError(
+                f"got {low:g} Hz to {high:g} Hz, expected 0 < lowest < highest", key="signal.band"
+            )
+        if not (0 < self.input_peak < math.inf):
+            raise JobError(
+                f"got {self.input_peak}, expected a positive voltage", key="signal.input_peak"
+            )
+        if self.swing not in ("sine", "any"):
+            raise JobError(f"got {self.swing!r}, expected 'sine' or 'any'", key="signal.swing")
+        if not (0 <= self.source_resistance < math.inf):
+            raise JobError(
+                f"got {self.source_resistance}, expected zero or a positive resistance",
+                key="signal.source_resistance",
+            )
+        if self.load is not None and not (0 < self.load < math.inf):
+            raise JobError(f"got {self.load}, expected a positive resistance", key="signal.load")
+
+
+@dataclass(frozen=True, kw_only=True)
+class Board:
+    """What the board is built from.
+
+    Parameters
+    ----------
+    op_amp
+        Figures of the op-amp.
+    resistors, capacitors
+        Which values may be bought.
+    supply
+        Negative and positive rail [V].
+    form
+        Name of a realization, or ``"auto"``.
+    inverted
+        ``"no"``: the output is H(s); ``"yes"``: it is -H(s); ``"either"``: as cheaper.
+    """
+
+    op_amp: OpAmp
+    resistors: PartRule
+    capacitors: PartRule
+    supply: tuple[float, float] = (-12.0, 12.0)
+    form: str = "auto"
+    inverted: str = "no"
+
+    def __post_init__(self) -> None:
+        low, high = self.supply
+        if not (-math.inf < low < 0 < high < math.inf):
+            raise JobError(
+                f"got rails of {low:g} V and {high:g} V, expected one below and one above ground",
+                key="board.supply",
+            )
+        if self.swing_limit <= 0:
+            raise JobError(
+                f"got {self.op_amp.swing_headroom:g} V of headroom on rails of {low:g} V and "
+                f"{high:g} V, expected room for a signal",
+                key="board.op_amp.swing_headroom",
+            )
+        if self.inverted not in ("no", "yes", "either"):
+            raise JobError(
+                f"got {self.inverted!r}, expected 'no', 'yes' or 'either'", key="board.inverted"
+            )
+
+    @property
+    def swing_limit(self) -> float:
+        """Largest peak an op-amp output may reach [V]: the nearer rail less the headroom."""
+        return min(-self.supply[0], self.supply[1]) - self.op_amp.swing_headroom
+
+
+@dataclass(frozen=True, kw_only=True)
+class Accept:
+    """The limits.
+
+    Parameters
+    ----------
+    magnitude_db
+        Largest magnitude error over the band [dB].
+    phase_deg
+        Largest phase error over the band [deg].
+    yield_share
+        Smallest share of boards within both limits, a ratio, or None for no limit.
+    """
+
+    magnitude_db: float = 0.5
+    phase_deg: float = 3.0
+    yield_share: float | None = None
+
+    def __post_init__(self) -> None:
+        if not (0 < self.magnitude_db < math.inf):
+            raise JobError(
+                f"got {self.magnitude_db}, expected a positive number of dB", key="accept.magnitude"
+            )
+        if not (0 < self.phase_deg < math.inf):
+            raise JobError(f"got {self.phase_deg}, expected a positive angle", key="accept.phase")
+        if self.yield_share is not None and not (0 < self.yield_share <= 1):
+            raise JobError(
+                f"got {self.yield_share}, expected above 0 and up to 100 %", key="accept.yield"
+            )
+
+
+@dataclass(frozen=True, kw_only=True)
+class Loop:
+    """The plant P(s) exp(-s delay) that the board drives; L = P H, negative feedback.
+
+    `delay` in [s], `phase_margin_deg` in [deg], `gain_margin_db` in [dB]; None: no limit.
+    """
+
+    plant: TransferFunction
+    delay: float = 0.0
+    phase_margin_deg: float | None = None
+    gain_margin_db: float | None = None
+
+    def __post_init__(self) -> None:
+        if not (0 <= self.delay < math.inf):
+            raise JobError(f"got {self.delay}, expected zero or a positive time", key="loop.delay")
+
+
+@dataclass(frozen=True, kw_only=True)
+class Job:
+    """A whole job.
+
+    Parameters
+    ----------
+    target
+        H(s), reduced and checked.
+    notices
+        What the reader of the job should know, one sentence each: a pole and a zero that
+        cancelled, a band that misses every root.
+    """
+
+    target: TransferFunction
+    signal: Signal
+    board: Board
+    accept: Accept = field(default_factory=Accept)
+    loop: Loop | None = None
+    title: str = "untitled"
+    notices: tuple[str, ...] = ()

@@ -1,0 +1,106 @@
+"""Rules for buying parts, and the figures of op-amps.
+
+Resistances in ohm, capacitances in farad, everything else in the SI unit named.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+from synth.errors import JobError
+
+__all__ = ["OpAmp", "PartRule"]
+
+
+@dataclass(frozen=True, kw_only=True)
+class PartRule:
+    """Which values of one kind of part may be bought.
+
+    Parameters
+    ----------
+    kind
+        ``"resistor"`` or ``"capacitor"``.
+    series
+        Name of an IEC 60063 series, ``"E3"`` to ``"E192"``.
+    tolerance
+        Relative tolerance of a part, a ratio (0.01 is 1 %).
+    smallest, largest
+        Allowed range of values [ohm] or [F], both ends included.
+    """
+
+    kind: str
+    series: str
+    tolerance: float
+    smallest: float
+    largest: float
+
+    def __post_init__(self) -> None:
+        if self.kind not in ("resistor", "capacitor"):
+            raise JobError(f"got kind {self.kind!r}, expected 'resistor' or 'capacitor'")
+        if not (math.isfinite(self.tolerance) and 0 <= self.tolerance < 1):
+            raise JobError(f"got a tolerance of {self.tolerance}, expected 0 to below 100 %")
+        if not (0 < self.smallest < self.largest < math.inf):
+            raise JobError(
+                f"got a range from {self.smallest} to {self.largest}, "
+                "expected 0 < smallest < largest"
+            )
+
+
+@dataclass(frozen=True, kw_only=True)
+class OpAmp:
+    """Figures of an op-amp: typical values of a class, or what the job states.
+
+    Parameters
+    ----------
+    kind
+        Name of the class the figures start from.
+    gain_bandwidth
+        Gain-bandwidth product [Hz]: the one-pole gain is
+        A(s) = A0 / (1 + s A0 / (2 pi gain_bandwidth)).
+    slew_rate
+        Largest rate of change of the output [V/s].
+    open_loop_gain
+        DC gain A0, a plain ratio [V/V].
+    offset
+        Input offset voltage [V], the magnitude.
+    bias_current
+        Input bias current [A], the magnitude.
+    voltage_noise, current_noise
+        White input noise densities [V/rtHz], [A/rtHz].
+    swing_headroom
+        How close the output gets to either rail [V].
+    output_current
+        Largest output current [A].
+    supply_current
+        Quiescent current of one amplifier [A].
+    """
+
+    kind: str
+    gain_bandwidth: float
+    slew_rate: float
+    open_loop_gain: float
+    offset: float
+    bias_current: float
+    voltage_noise: float
+    current_noise: float
+    swing_headroom: float
+    output_current: float
+    supply_current: float
+
+    def __post_init__(self) -> None:
+        for name in ("gain_bandwidth", "slew_rate", "open_loop_gain", "output_current"):
+            value = getattr(self, name)
+            if not (math.isfinite(value) and value > 0):
+                raise JobError(f"got {value}, expected a positive number", key=name)
+        for name in (
+            "offset",
+            "bias_current",
+            "voltage_noise",
+            "current_noise",
+            "swing_headroom",
+            "supply_current",
+        ):
+            value = getattr(self, name)
+            if not (math.isfinite(value) and value >= 0):
+                raise JobError(f"got {value}, expected zero or a positive number", key=name)
