@@ -1,0 +1,179 @@
+"""The result of a design: what was asked beside what was reached.
+
+Filled by the stages of `synth.design`, read by everything that draws, writes or checks.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+from synth.circuit import Circuit
+from synth.evidence import Check, ResponseError
+from synth.graph import BlockGraph
+from synth.job import Job
+from synth.transfer import TransferFunction
+
+__all__ = ["Candidate", "Design", "Drift", "NoiseResult", "Swing", "ToleranceResult"]
+
+Real = NDArray[np.float64]
+
+
+@dataclass(frozen=True, kw_only=True)
+class Swing:
+    """What one op-amp output does at the stated input.
+
+    Parameters
+    ----------
+    amplifier, net
+        Reference and output net.
+    peak, peak_limit
+        Largest output [V] and the nearer rail less the headroom [V].
+    peak_hz
+        Frequency of the largest output [Hz]; None when the bound is the L1 norm.
+    slew, slew_limit
+        Largest rate of change within the band [V/s] and the op-amp's slew rate [V/s].
+    current, current_limit
+        Largest output current into the parts on the net [A] and the op-amp's limit [A].
+    """
+
+    amplifier: str
+    net: str
+    peak: float
+    peak_limit: float
+    peak_hz: float | None
+    slew: float
+    slew_limit: float
+    current: float
+    current_limit: float
+
+
+@dataclass(frozen=True, kw_only=True)
+class Drift:
+    """An integrator whose capacitor no resistive path discharges at DC.
+
+    `rate` is Vos/(R C) + Ib/C [V/s], R the parallel value of its input resistors.
+    """
+
+    amplifier: str
+    net: str
+    rate: float
+
+
+@dataclass(frozen=True, kw_only=True)
+class NoiseResult:
+    """Noise at the output.
+
+    `frequency_hz` and `density` [V/rtHz], shapes (F,); `output_rms` over the band [V].
+    `shares` maps a reference to its share of the power, a ratio.
+    """
+
+    frequency_hz: Real
+    density: Real
+    output_rms: float
+    shares: dict[str, float]
+
+
+@dataclass(frozen=True, kw_only=True)
+class ToleranceResult:
+    """A run of boards with parts drawn within their tolerance.
+
+    Parameters
+    ----------
+    boards, passed
+        How many were drawn, and how many meet both limits over the band.
+    low, high
+        Clopper-Pearson interval of the yield at `confidence`, ratios.
+    frequency_hz
+        Shape (F,) [Hz].
+    magnitude_5, magnitude_95, phase_5, phase_95
+        Percentiles over the boards of the signed error at each frequency, shape (F,)
+        [dB], [deg].
+    error_95_db
+        95th percentile over the boards of the largest absolute dB error over the band.
+    seed
+        Of the random generator.
+    """
+
+    boards: int
+    passed: int
+    low: float
+    high: float
+    confidence: float
+    frequency_hz: Real
+    magnitude_5: Real
+    magnitude_95: Real
+    phase_5: Real
+    phase_95: Real
+    error_95_db: float
+    seed: int
+
+    @property
+    def share(self) -> float:
+        """Share of the boards that pass, a ratio."""
+        return self.passed / self.boards
+
+
+@dataclass(frozen=True, kw_only=True)
+class Candidate:
+    """A form that was considered.
+
+    `spread_db` is the predicted spread of the magnitude from part tolerance (one standard
+    deviation, largest over the band) [dB]; None with a `reason` where the form could not be
+    built.
+    """
+
+    form: str
+    possible: bool
+    op_amps: int | None
+    spread_db: float | None
+    reason: str = ""
+
+
+@dataclass(frozen=True, kw_only=True)
+class Design:
+    """A finished design, before the simulator has had its say.
+
+    Parameters
+    ----------
+    job
+        What was asked.
+    wanted
+        What the output net must show: H(s), or -H(s) when `inverted`.
+    graph
+        The scaled block graph: signals are volts at op-amp outputs, up to polarity.
+    circuit
+        The circuit with standard values.
+    frequency_hz
+        The grid over the band on which errors are taken, shape (F,) [Hz].
+    nominal, nearest
+        Error of the circuit with the chosen values, and with each value rounded to its
+        nearest neighbour, computed with the job's op-amp; shape (F,).
+    tolerance, noise, swings, drifts
+        The evidence.
+    candidates
+        The forms considered, the chosen one among them.
+    checks
+        Predicted checks: yield, swing, slew, current.
+    notices
+        What the user should know, one sentence each.
+    """
+
+    job: Job
+    form: str
+    inverted: bool
+    wanted: TransferFunction
+    graph: BlockGraph
+    circuit: Circuit
+    frequency_hz: Real
+    nominal: ResponseError
+    nearest: ResponseError
+    tolerance: ToleranceResult
+    noise: NoiseResult
+    swings: tuple[Swing, ...]
+    drifts: tuple[Drift, ...]
+    candidates: tuple[Candidate, ...]
+    checks: tuple[Check, ...]
+    notices: tuple[str, ...] = field(default=())
