@@ -8,7 +8,7 @@ of a block.  Signs are those of the mathematics; polarity is a later stage.
 from __future__ import annotations
 
 import re
-from collections.abc import Iterable
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, replace
 from fractions import Fraction
 from functools import cached_property
@@ -22,6 +22,7 @@ __all__ = ["INPUT", "Block", "BlockGraph", "Term", "merged_terms"]
 
 INPUT = "in"
 Weight = Fraction | float
+_Complex = NDArray[np.complex128]
 _NAME = re.compile(r"[a-z][a-z0-9]{0,15}")
 _RESERVED = frozenset({"in", "out", "src"})
 
@@ -175,44 +176,43 @@ class BlockGraph:
         the structure come out as zeros.  Returns arrays of the shape of `s`.
         """
         points = np.asarray(s, dtype=complex)
-        flat = points.ravel()
+        matrix, right = self._equations(points.ravel())
+        solved = _solve_scaled(matrix, right)
+        return {b.name: solved[:, k].reshape(points.shape) for k, b in enumerate(self.blocks)}
+
+    def _equations(self, s: NDArray[np.complex128]) -> tuple[_Complex, _Complex]:
+        """Matrix (points, n, n) and right-hand side (points, n) of the signals at `s`."""
         index = {b.name: k for k, b in enumerate(self.blocks)}
         n = len(index)
-        matrix = np.zeros((flat.size, n, n), dtype=complex)
-        right = np.zeros((flat.size, n, 1), dtype=complex)
-        for block in self.blocks:
-            row = index[block.name]
-            # Rows of integrators are divided by their largest weight, to balance the matrix.
-            unit = max(abs(float(t.weight)) for t in block.terms) if block.is_integrator else 1.0
-            matrix[:, row, row] += flat / unit if block.is_integrator else 1.0
+        matrix = np.zeros((s.size, n, n), dtype=complex)
+        right = np.zeros((s.size, n), dtype=complex)
+        for row, block in enumerate(self.blocks):
+            matrix[:, row, row] += s if block.is_integrator else 1.0
             for term in block.terms:
-                weight = float(term.weight) / unit
                 if term.source == INPUT:
-                    right[:, row, 0] += weight
+                    right[:, row] += float(term.weight)
                 else:
-                    matrix[:, row, index[term.source]] -= weight
-        solved = np.asarray(np.linalg.solve(matrix, right)[:, :, 0], dtype=np.complex128)
-        return {name: solved[:, k].reshape(points.shape) for name, k in index.items()}
+                    matrix[:, row, index[term.source]] -= float(term.weight)
+        return matrix, right
 
     def at(self, s: ArrayLike) -> NDArray[np.complex128]:
         """Transfer function from input to output at complex frequencies [rad/s]."""
         return self.signals(s)[self.output]
 
-    def rescaled(self, levels: dict[str, float]) -> BlockGraph:
-        """The same graph with signal b multiplied by ``levels[b]`` > 0 (1 where not named).
+    def rescaled(self, levels: Mapping[str, Weight]) -> BlockGraph:
+        """The same graph with signal b multiplied by ``levels[b]`` (1 where not named).
 
         A term from j to i then has weight * level_i / level_j.  The input stays as it is, and
         the output too if its level is 1.
         """
+        one = Fraction(1)
         blocks = tuple(
             replace(
                 b,
                 terms=tuple(
                     replace(
                         t,
-                        weight=float(t.weight)
-                        * levels.get(b.name, 1.0)
-                        / levels.get(t.source, 1.0),
+                        weight=t.weight * levels.get(b.name, one) / levels.get(t.source, one),
                     )
                     for t in b.terms
                 ),
@@ -220,6 +220,28 @@ class BlockGraph:
             for b in self.blocks
         )
         return replace(self, blocks=blocks)
+
+
+def _solve_scaled(matrix: _Complex, right: _Complex) -> _Complex:
+    """Solve (points, n, n) x = (points, n) so that small signals are as accurate as large ones.
+
+    Columns are scaled by the size of the solution found so far and rows to a largest element
+    of one, until the solution stands still; elimination then loses nothing to a signal that
+    is small because the structure makes it so.
+    """
+    size = np.ones(right.shape)
+    found = right
+    for _ in range(8):
+        scaled = matrix * size[:, None, :]
+        rows = 1 / np.max(np.abs(scaled), axis=2, keepdims=True)
+        step = np.linalg.solve(scaled * rows, right[:, :, None] * rows)[:, :, 0] * size
+        change = np.max(np.abs(step - found) / np.maximum(np.abs(step), 1e-280))
+        found = np.asarray(step, dtype=np.complex128)
+        if change < 1e-13:
+            break
+        largest = np.max(np.abs(found), axis=1, keepdims=True)
+        size = np.maximum(np.abs(found), 1e-250 * largest + 1e-280)
+    return found
 
 
 def merged_terms(terms: Iterable[Term]) -> tuple[Term, ...]:
