@@ -1,0 +1,101 @@
+"""What the cells share: reference numbers, inputs, and the inverting op-amp around them."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, field, replace
+
+from synth.circuit import GROUND, Amplifier, Cell, Passive
+from synth.parts import OpAmp, PartRule
+
+__all__ = ["BuiltCell", "CellInput", "CellRules", "Numbering", "inverting_cell"]
+
+
+@dataclass
+class Numbering:
+    """Hands out references: R1, R2, ... C1, ... U1, ..."""
+
+    used: dict[str, int] = field(default_factory=dict)
+
+    def next(self, letter: str) -> str:
+        """The next free reference with that letter."""
+        self.used[letter] = self.used.get(letter, 0) + 1
+        return f"{letter}{self.used[letter]}"
+
+
+@dataclass(frozen=True)
+class CellInput:
+    """One input: the net it comes from, its resistance [ohm] and what it sets."""
+
+    net: str
+    resistance: float
+    sets: str
+
+
+@dataclass(frozen=True, kw_only=True)
+class CellRules:
+    """What the parts of a cell may be."""
+
+    resistors: PartRule
+    capacitors: PartRule
+    op_amp: OpAmp
+
+
+@dataclass(frozen=True)
+class BuiltCell:
+    """The parts of one cell."""
+
+    cell: Cell
+    passives: tuple[Passive, ...]
+    amplifier: Amplifier
+
+
+def inverting_cell(
+    numbering: Numbering,
+    *,
+    kind: str,
+    block: str,
+    output: str,
+    summing: str,
+    inputs: Sequence[CellInput],
+    feedback: Passive,
+    rules: CellRules,
+    polarity: int,
+) -> BuiltCell:
+    """Input resistors into a summing node, an op-amp with + at ground, and a feedback part.
+
+    `feedback` comes with value, rule and provenance; its reference and nets are set here.
+    """
+    resistors = tuple(
+        Passive(
+            ref=numbering.next("R"),
+            kind="resistor",
+            nets=(each.net, summing),
+            value=each.resistance,
+            ideal=each.resistance,
+            rule=rules.resistors,
+            sets=each.sets,
+        )
+        for each in inputs
+    )
+    letter = "C" if feedback.kind == "capacitor" else "R"
+    closing = replace(feedback, ref=numbering.next(letter), nets=(summing, output))
+    amplifier = Amplifier(
+        ref=numbering.next("U"),
+        plus=GROUND,
+        minus=summing,
+        output=output,
+        figures=rules.op_amp,
+        sets=f"{kind} {block}",
+    )
+    cell = Cell(
+        kind=kind,
+        block=block,
+        amplifier=amplifier.ref,
+        inputs=tuple(r.ref for r in resistors),
+        feedback=closing.ref,
+        summing=summing,
+        output=output,
+        polarity=polarity,
+    )
+    return BuiltCell(cell, (*resistors, closing), amplifier)

@@ -1,0 +1,182 @@
+"""From a scaled block graph with signs to a circuit with ideal values.
+
+Every block becomes one cell; every source that must be read with the other sign gets one
+inverter.  Integrators take their capacitor from the scaling; adders their feedback resistor.
+A source resistance Rs drops part of the input: with virtual grounds behind them, the input
+resistors draw v_src * G, so dividing their ideal values by 1 + Rs G, that is multiplying
+them by kappa = 1 - Rs G_ideal, restores every weight exactly.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+
+from synth.cells import (
+    BuiltCell,
+    CellInput,
+    CellRules,
+    Numbering,
+    adder_cell,
+    integrator_cell,
+    inverter_cell,
+)
+from synth.circuit import GROUND, Circuit, Passive
+from synth.errors import RealizationError
+from synth.graph import INPUT, Block, BlockGraph
+from synth.job import Job
+from synth.polarity import Polarity
+
+__all__ = ["Sizing", "map_graph"]
+
+LOAD_REF = "RLOAD"
+SOURCE_REF = "RSOURCE"
+
+
+@dataclass(frozen=True, kw_only=True)
+class Sizing:
+    """The impedance of every cell.
+
+    `capacitors` [F] by integrator, `feedback` [ohm] by adder, `inverters` [ohm] for all.
+    """
+
+    capacitors: Mapping[str, float]
+    feedback: Mapping[str, float]
+    inverters: float
+
+
+def map_graph(graph: BlockGraph, polarity: Polarity, sizing: Sizing, job: Job) -> Circuit:
+    """The circuit of a scaled graph, every value ideal.
+
+    Raises
+    ------
+    RealizationError
+        The source resistance is too large for the input resistors.
+    """
+    board, signal = job.board, job.signal
+    rules = CellRules(resistors=board.resistors, capacitors=board.capacitors, op_amp=board.op_amp)
+    wiring = _Wiring(graph, polarity, sizing, _input_factor(graph, polarity, sizing, job))
+    wiring.source_net = "src" if signal.source_resistance else "in"
+    numbering = Numbering()
+    built: list[BuiltCell] = []
+    if INPUT in polarity.inverters:
+        built.append(wiring.inverter(numbering, INPUT, rules))
+    for block in graph.blocks:
+        built.append(wiring.cell(numbering, block, rules))
+        if block.name in polarity.inverters:
+            built.append(wiring.inverter(numbering, block.name, rules))
+    return Circuit(
+        passives=(*_fixtures(job), *(p for b in built for p in b.passives)),
+        amplifiers=tuple(b.amplifier for b in built),
+        cells=tuple(b.cell for b in built),
+    )
+
+
+def _fixtures(job: Job) -> tuple[Passive, ...]:
+    """Source resistance and load."""
+    found: list[tuple[str, tuple[str, str], float, str]] = []
+    if job.signal.source_resistance:
+        found.append((SOURCE_REF, ("in", "src"), job.signal.source_resistance, "the source"))
+    if job.signal.load is not None:
+        found.append((LOAD_REF, ("out", GROUND), job.signal.load, "the load"))
+    return tuple(
+        Passive(ref=ref, kind="resistor", nets=nets, value=value, ideal=value, rule=None, sets=text)
+        for ref, nets, value, text in found
+    )
+
+
+@dataclass
+class _Wiring:
+    """Which net carries which signal, and the ideal resistance of every input."""
+
+    graph: BlockGraph
+    polarity: Polarity
+    sizing: Sizing
+    input_factor: float
+    source_net: str = "in"
+
+    def direct_net(self, source: str) -> str:
+        if source == INPUT:
+            return self.source_net
+        if source == self.graph.output and not self.polarity.output_from_inverter:
+            return "out"
+        return source
+
+    def inverted_net(self, source: str) -> str:
+        if source == self.graph.output and self.polarity.output_from_inverter:
+            return "out"
+        return f"{source}_n"
+
+    def resistance(self, net: str, ideal: float) -> float:
+        return ideal * self.input_factor if net == self.source_net else ideal
+
+    def inputs(self, block: Block) -> list[CellInput]:
+        out: list[CellInput] = []
+        for term in block.terms:
+            weight = float(term.weight)
+            direct = self.polarity.direct(block.name, term.source, weight)
+            net = self.direct_net(term.source) if direct else self.inverted_net(term.source)
+            ideal = self.resistance(net, _ideal_resistance(block, weight, self.sizing))
+            out.append(CellInput(net, ideal, term.sets))
+        return out
+
+    def cell(self, numbering: Numbering, block: Block, rules: CellRules) -> BuiltCell:
+        output = self.direct_net(block.name)
+        sign = self.polarity.of(block.name)
+        if block.is_integrator:
+            return integrator_cell(
+                numbering,
+                block=block.name,
+                output=output,
+                inputs=self.inputs(block),
+                capacitance=self.sizing.capacitors[block.name],
+                rules=rules,
+                polarity=sign,
+            )
+        return adder_cell(
+            numbering,
+            block=block.name,
+            output=output,
+            inputs=self.inputs(block),
+            feedback=self.sizing.feedback[block.name],
+            rules=rules,
+            polarity=sign,
+        )
+
+    def inverter(self, numbering: Numbering, source: str, rules: CellRules) -> BuiltCell:
+        net = self.direct_net(source)
+        value = self.sizing.inverters
+        return inverter_cell(
+            numbering,
+            block=source,
+            source=CellInput(net, self.resistance(net, value), f"inverter of {source}"),
+            output=self.inverted_net(source),
+            feedback=value,
+            rules=rules,
+            polarity=-self.polarity.of(source),
+        )
+
+
+def _ideal_resistance(block: Block, weight: float, sizing: Sizing) -> float:
+    if block.is_integrator:
+        return 1 / (abs(weight) * sizing.capacitors[block.name])
+    return sizing.feedback[block.name] / abs(weight)
+
+
+def _input_factor(graph: BlockGraph, polarity: Polarity, sizing: Sizing, job: Job) -> float:
+    """kappa, by which the resistors on the source's net are multiplied."""
+    resistance = job.signal.source_resistance
+    if not resistance:
+        return 1.0
+    conductance = 1 / sizing.inverters if INPUT in polarity.inverters else 0.0
+    for block, term in graph.readers(INPUT):
+        if polarity.direct(block.name, INPUT, float(term.weight)):
+            conductance += 1 / _ideal_resistance(block, float(term.weight), sizing)
+    factor = 1 - resistance * conductance
+    if factor <= 0:
+        raise RealizationError(
+            f"signal.source_resistance: got {resistance:g} ohm, but the board's input "
+            f"resistance would have to be {1 / conductance:.4g} ohm in all for its gain; "
+            "expected a smaller source resistance, or a buffer before the board"
+        )
+    return factor
