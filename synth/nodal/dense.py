@@ -1,0 +1,90 @@
+"""The nodal equations as full matrices, solved by LAPACK: slow, pivoted, trusted.
+
+Serves the few samples where the compiled elimination may not be trusted, and checks it.
+Rows and columns as in `synth.nodal.structure`.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from synth.errors import NumericalError
+from synth.nodal.structure import Structure
+
+__all__ = ["admittances", "equations", "inverse_gains", "solve_rows", "solve_samples"]
+
+Real = NDArray[np.float64]
+Complex = NDArray[np.complex128]
+
+
+def admittances(structure: Structure, s: Complex, values: Real) -> Complex:
+    """1/R or sC of every passive [S].
+
+    `s` shape (samples,) [rad/s], `values` shape (samples, P); shape (samples, P).
+    """
+    return np.where(structure.is_resistor, 1.0 / values, s[:, None] * values)
+
+
+def inverse_gains(s: Complex, gain_bandwidth: Real, open_loop_gain: Real) -> Complex:
+    """a = 1/A0 + s/(2 pi GBW); `s` shape (samples,), figures (samples, U) or (U,)."""
+    return 1.0 / open_loop_gain + s[:, None] / (2 * np.pi * gain_bandwidth)
+
+
+def equations(structure: Structure, y: Complex, a: Complex) -> Complex:
+    """The matrix of every sample, shape (samples, n, n + 2).
+
+    Column n holds what the input of 1 V contributes, column n + 1 (ground) is of no use.
+    `y` shape (samples, P) [S], `a` shape (samples, U).
+    """
+    n = structure.size
+    matrix = np.zeros((y.shape[0], n, n + 2), dtype=complex)
+    for k, (p, q) in enumerate(structure.ends):
+        for row, other in ((p, q), (q, p)):
+            if row < n and row not in structure.driver:
+                matrix[:, row, row] += y[:, k]
+                matrix[:, row, other] -= y[:, k]
+    for k, (plus, minus, out) in enumerate(structure.pins):
+        matrix[:, out, plus] += 1.0
+        matrix[:, out, minus] -= 1.0
+        matrix[:, out, out] -= a[:, k]
+    return matrix
+
+
+def solve_rows(matrix: Complex, right: Complex, *, transposed: bool = False) -> Complex:
+    """x with matrix x = right, or with matrix^T x = right; rows are balanced first.
+
+    `matrix` shape (samples, n, n), `right` (samples, n, m).
+
+    Raises
+    ------
+    NumericalError
+        A singular sample.
+    """
+    scale = np.max(np.abs(matrix), axis=2, keepdims=True)
+    if not np.all(scale > 0):
+        raise _singular()
+    balanced = matrix / scale
+    try:
+        if transposed:
+            return np.asarray(np.linalg.solve(balanced.swapaxes(1, 2), right) / scale)
+        return np.asarray(np.linalg.solve(balanced, right / scale))
+    except np.linalg.LinAlgError:
+        raise _singular() from None
+
+
+def solve_samples(structure: Structure, y: Complex, a: Complex) -> Complex:
+    """Voltages of all nets, input and ground included, shape (samples, n + 2)."""
+    n = structure.size
+    matrix = equations(structure, y, a)
+    solved = np.zeros((y.shape[0], n + 2), dtype=complex)
+    solved[:, :n] = solve_rows(matrix[:, :, :n], -matrix[:, :, n : n + 1])[:, :, 0]
+    solved[:, n] = 1.0
+    return solved
+
+
+def _singular() -> NumericalError:
+    return NumericalError(
+        "the nodal equations are singular at a frequency: a net that only capacitors hold at "
+        "DC, or a loop that oscillates there exactly; change the frequency or add a DC path"
+    )
