@@ -142,30 +142,26 @@ class BlockGraph:
         """Every block and term that reads `source`."""
         return tuple((b, t) for b in self.blocks for t in b.terms if t.source == source)
 
-    def state_matrices(
-        self,
-    ) -> tuple[list[list[Weight]], list[Weight], list[Weight], Weight]:
-        """A, B, C, D of dx/dt = A x + B u, y = C x + D u; x are the integrators in order.
+    def signal_rows(self) -> dict[str, list[Weight]]:
+        """Every signal as a weighted sum of the integrators in order and, last, the input.
 
         Adders are substituted.  Exact when every weight is a rational.
         """
-        states = [b.name for b in self.integrators]
-        columns = [*states, INPUT]
+        columns = [*(b.name for b in self.integrators), INPUT]
         rows: dict[str, list[Weight]] = {
             name: [Fraction(int(c == name)) for c in columns] for name in columns
         }
-
-        def combine(block: Block) -> list[Weight]:
-            out: list[Weight] = [Fraction(0)] * len(columns)
-            for term in block.terms:
-                for k, value in enumerate(rows[term.source]):
-                    if value:
-                        out[k] = out[k] + term.weight * value
-            return out
-
         for name in self.adder_order:
-            rows[name] = combine(self.by_name[name])
-        derivatives = [combine(b) for b in self.integrators]
+            rows[name] = _combined(self.by_name[name], rows)
+        return rows
+
+    def state_matrices(self) -> tuple[list[list[Weight]], list[Weight], list[Weight], Weight]:
+        """A, B, C, D of dx/dt = A x + B u, y = C x + D u; x are the integrators in order.
+
+        Exact when every weight is a rational.
+        """
+        rows = self.signal_rows()
+        derivatives = [_combined(b, rows) for b in self.integrators]
         y = rows[self.output]
         return [d[:-1] for d in derivatives], [d[-1] for d in derivatives], y[:-1], y[-1]
 
@@ -220,6 +216,16 @@ class BlockGraph:
             for b in self.blocks
         )
         return replace(self, blocks=blocks)
+
+
+def _combined(block: Block, rows: Mapping[str, list[Weight]]) -> list[Weight]:
+    """The weighted sum of the rows a block reads."""
+    out: list[Weight] = [Fraction(0)] * len(rows[block.terms[0].source])
+    for term in block.terms:
+        for k, value in enumerate(rows[term.source]):
+            if value:
+                out[k] = out[k] + term.weight * value
+    return out
 
 
 def _solve_scaled(matrix: _Complex, right: _Complex) -> _Complex:
