@@ -1,0 +1,243 @@
+"""The search for the levels: two smooth minimisations over a region of linear limits."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from synth.graph import BlockGraph
+from synth.job import Job
+from synth.mapping import Sizing
+from synth.peaks import SignalPeaks
+from synth.polarity import Polarity
+from synth.preferred import nearest, series_values
+from synth.scaling.constraints import Region, refuse, region
+from synth.scaling.objectives import current_shares, noise_power, response_error_power
+from synth.scaling.signomial import Signomial
+from synth.scaling.variables import Variables
+
+__all__ = ["Scaled", "scale"]
+
+Real = NDArray[np.float64]
+Smooth = Callable[[Real], tuple[float, Real]]
+
+# Comfortable sizes (common practice), the weight of leaving them per decade squared.
+COMFORTABLE_R = 14e3
+COMFORTABLE_C = 4.7e-9
+COMFORT_WEIGHT = 0.3
+
+# What the second minimisation may give up of the first: a ratio of its optimum, or this
+# share of the accepted magnitude error, whichever is larger.
+ERROR_RATIO = 1.1
+ERROR_SHARE = 0.02
+
+# Largest share of the output current the parts around an output may take.
+CURRENT_SHARE = 0.7
+
+
+@dataclass(frozen=True, kw_only=True)
+class Scaled:
+    """A graph in volts, the impedance of its cells, and the predicted error.
+
+    `predicted_error` is the root mean square of the error of ln H over the band from the
+    op-amps alone, first order, with ideal values.
+    """
+
+    graph: BlockGraph
+    sizing: Sizing
+    predicted_error: float
+
+
+def scale(
+    graph: BlockGraph,
+    polarity: Polarity,
+    job: Job,
+    peaks: SignalPeaks,
+    frequency_hz: Real,
+) -> Scaled:
+    """Levels, capacitors and feedback resistors for `graph`.
+
+    Parameters
+    ----------
+    frequency_hz
+        Where the response error and the noise are judged, ascending, shape (F,) [Hz].
+
+    Raises
+    ------
+    RealizationError
+        No choice fits the ranges of the parts; the message has the numbers.
+    """
+    variables = Variables(graph)
+    limits = region(variables, job, peaks)
+    start, margin = limits.start()
+    if margin < -1e-9:
+        raise refuse(variables, job, start)
+    problem = _Problem(
+        variables,
+        error=response_error_power(variables, polarity, job.board.op_amp, frequency_hz),
+        noise=noise_power(variables, job.board.op_amp, frequency_hz),
+        currents=current_shares(
+            variables,
+            peaks,
+            job.board.op_amp,
+            input_peak=job.signal.input_peak,
+            load=job.signal.load,
+        ),
+        allowed_error=ERROR_SHARE * job.accept.magnitude_db / 8.686,
+    )
+    v = problem.solve(limits, start)
+    limits, v = _with_standard_capacitors(variables, job, limits, v)
+    v = problem.solve(limits, v)
+    sizes = variables.sizes_of(v)
+    capacitors = {
+        b.name: nearest(_capacitors(job), sizes[b.name]) for b in graph.blocks if b.is_integrator
+    }
+    feedback = {b.name: sizes[b.name] for b in graph.adders}
+    return Scaled(
+        graph=graph.rescaled(variables.levels_of(v)),
+        sizing=Sizing(capacitors=capacitors, feedback=feedback, inverters=_inverter_value(job)),
+        predicted_error=math.sqrt(max(problem.error(v)[0], 0.0)),
+    )
+
+
+def _capacitors(job: Job) -> Real:
+    rule = job.board.capacitors
+    return series_values(rule.series, rule.smallest, rule.largest)
+
+
+def _inverter_value(job: Job) -> float:
+    """The standard value next to 10 kohm (common practice)."""
+    rule = job.board.resistors
+    return nearest(series_values(rule.series, rule.smallest, rule.largest), 10e3)
+
+
+def _with_standard_capacitors(
+    variables: Variables, job: Job, limits: Region, v: Real
+) -> tuple[Region, Real]:
+    """The region with every capacitor fixed at a standard value, and a point inside.
+
+    Each takes the value nearest to where it stands; one that then leaves no room is moved
+    along the series, nearest first.
+    """
+    offered = np.log(_capacitors(job))
+    fixed = limits
+    point = v
+    for block in (b for b in variables.graph.blocks if b.is_integrator):
+        row = limits.names.index(f"capacitor of {block.name}")
+        here = v[variables.size_place(block.name)]
+        best: tuple[float, Region, Real] | None = None
+        for value in offered[np.argsort(np.abs(offered - here), kind="stable")]:
+            lower, upper = fixed.lower.copy(), fixed.upper.copy()
+            lower[row] = upper[row] = value
+            trial = replace(fixed, lower=lower, upper=upper)
+            # Equal bounds leave no margin: judge the others with this row widened by nothing.
+            start, _ = trial.start()
+            excess = float(np.max(trial.excess(start)))
+            if best is None or excess < best[0] - 1e-12:
+                best = (excess, trial, start)
+            if excess < 1e-7:
+                break
+        assert best is not None
+        if best[0] >= 1e-7:
+            raise refuse(variables, job, best[2])
+        fixed, point = best[1], best[2]
+    # Start from the unrounded optimum where it still fits, else from inside the region.
+    moved = v.copy()
+    for block in (b for b in variables.graph.blocks if b.is_integrator):
+        k = variables.size_place(block.name)
+        moved[k] = fixed.lower[limits.names.index(f"capacitor of {block.name}")]
+    return fixed, moved if float(np.max(fixed.excess(moved))) < 1e-7 else point
+
+
+@dataclass(frozen=True, eq=False)
+class _Problem:
+    """The two objectives and how they are combined."""
+
+    variables: Variables
+    error: Signomial
+    noise: Signomial
+    currents: list[Signomial]
+    allowed_error: float
+
+    def solve(self, limits: Region, start: Real) -> Real:
+        """Least error, then least noise within what may be given up of it."""
+        first = _minimise(self._of_error, limits, start)
+        least, _ = self.error(first)
+        allowed = max(ERROR_RATIO**2 * least, self.allowed_error**2)
+
+        def room(v: Real) -> tuple[float, Real]:
+            value, gradient = self.error(v)
+            value = max(value, 1e-300)
+            return math.log(allowed / value), -gradient / value
+
+        second = _minimise(self._of_noise, limits, first, room)
+        within = room(second)[0] > -1e-6 and float(np.max(limits.excess(second))) < 1e-6
+        return second if within else first
+
+    def _of_error(self, v: Real) -> tuple[float, Real]:
+        value, gradient = self.error(v)
+        value = max(value, 1e-300)
+        comfort, slope = self._comfort(v)
+        return math.log(value) + 0.01 * comfort, gradient / value + 0.01 * slope
+
+    def _of_noise(self, v: Real) -> tuple[float, Real]:
+        value, gradient = self.noise(v)
+        comfort, slope = self._comfort(v)
+        return math.log(value) + comfort, gradient / value + slope
+
+    def _comfort(self, v: Real) -> tuple[float, Real]:
+        """Penalty on resistors and capacitors far from comfortable sizes, and on currents."""
+        rows, centres = self._comfort_rows
+        distance = (rows @ v - centres) / math.log(10)
+        total = COMFORT_WEIGHT * float(distance @ distance)
+        slope = COMFORT_WEIGHT * 2 * (distance @ rows) / math.log(10)
+        for share in self.currents:
+            value, gradient = share(v)
+            over = math.log(max(value, 1e-300) / CURRENT_SHARE)
+            if over > 0:
+                total += 20 * over**2
+                slope = slope + 40 * over * gradient / value
+        return total, slope
+
+    @property
+    def _comfort_rows(self) -> tuple[Real, Real]:
+        rows: list[Real] = []
+        centres: list[float] = []
+        for block in self.variables.graph.blocks:
+            rows.append(self.variables.size(block.name))
+            centres.append(math.log(COMFORTABLE_C if block.is_integrator else COMFORTABLE_R))
+            for term in block.terms:
+                r, exponents = self.variables.resistance(block, term)
+                rows.append(exponents)
+                centres.append(math.log(COMFORTABLE_R / r))
+        return np.array(rows), np.array(centres)
+
+
+def _minimise(objective: Smooth, limits: Region, start: Real, room: Smooth | None = None) -> Real:
+    """A local minimum inside the region, by sequential quadratic programming."""
+    from scipy.optimize import minimize
+
+    matrix = np.concatenate([limits.matrix, -limits.matrix])
+    offset = np.concatenate([-limits.lower, limits.upper])
+    keep = np.isfinite(offset)
+    matrix, offset = matrix[keep], offset[keep]
+    constraints = [{"type": "ineq", "fun": lambda v: matrix @ v + offset, "jac": lambda _: matrix}]
+    if room is not None:
+        constraints.append(
+            {"type": "ineq", "fun": lambda v: room(v)[0], "jac": lambda v: room(v)[1]}
+        )
+    found = minimize(
+        objective,
+        start,
+        jac=True,
+        method="SLSQP",
+        constraints=constraints,
+        options={"maxiter": 200, "ftol": 1e-7},
+    )
+    v = np.asarray(found.x, dtype=float)
+    usable = bool(np.all(np.isfinite(v))) and float(np.max(limits.excess(v))) < 1e-6
+    return v if usable else start
