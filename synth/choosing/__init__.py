@@ -1,0 +1,10 @@
+"""Standard values for a whole circuit at once.
+
+Input: a circuit with ideal values, the response it must show, and how far its op-amp outputs
+may rise.  Output: the same circuit with values from its series, and one with every value
+rounded to its nearest neighbour, to compare with.  Called by `synth.design` only.
+"""
+
+from synth.choosing.choose import Choice, choose_values
+
+__all__ = ["Choice", "choose_values"]

@@ -1,0 +1,80 @@
+"""The values each part may take, as indices into sorted tables of logarithms."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import cached_property
+
+import numpy as np
+from numpy.typing import NDArray
+
+from synth.circuit import Passive
+from synth.parts import PartRule
+from synth.preferred import series_values
+
+__all__ = ["ValueGrid"]
+
+Real = NDArray[np.float64]
+Index = NDArray[np.intp]
+
+
+@dataclass(frozen=True, eq=False)
+class ValueGrid:
+    """Allowed values of the parts of a circuit.
+
+    A part that is not bought (source resistance, load) has its one value.  Index vectors have
+    shape (P,), one index per part, into its own ascending list.
+    """
+
+    parts: tuple[Passive, ...]
+
+    @cached_property
+    def values(self) -> tuple[Real, ...]:
+        """Allowed values of each part, ascending [ohm] or [F]."""
+        tables: dict[PartRule, Real] = {}
+        out = []
+        for part in self.parts:
+            if part.rule is None:
+                out.append(np.array([part.value]))
+                continue
+            rule = part.rule
+            if rule not in tables:
+                tables[rule] = series_values(rule.series, rule.smallest, rule.largest)
+            out.append(tables[rule])
+        return tuple(out)
+
+    @cached_property
+    def counts(self) -> Index:
+        """Number of values of each part."""
+        return np.array([v.size for v in self.values])
+
+    @cached_property
+    def logs(self) -> Real:
+        """ln of the values, shape (P, longest list), padded with NaN."""
+        table = np.full((len(self.parts), int(self.counts.max())), np.nan)
+        for row, values in zip(table, self.values, strict=True):
+            row[: values.size] = np.log(values)
+        return table
+
+    @cached_property
+    def capacitors(self) -> NDArray[np.bool_]:
+        """Which parts are capacitors, shape (P,)."""
+        return np.array([p.kind == "capacitor" for p in self.parts])
+
+    @cached_property
+    def resistors(self) -> NDArray[np.bool_]:
+        """Which parts are resistors with a choice, shape (P,)."""
+        return np.array([p.kind == "resistor" and p.rule is not None for p in self.parts])
+
+    def nearest(self, logs: Real) -> Index:
+        """Index of the value nearest to each part's logarithm, shape (P,)."""
+        distance = np.abs(self.logs - logs[:, None])
+        return np.asarray(np.nanargmin(distance, axis=1), dtype=np.intp)
+
+    def logs_at(self, index: Index) -> Real:
+        """ln of the values at an index vector."""
+        return self.logs[np.arange(index.size), index]
+
+    def values_at(self, index: Index) -> Real:
+        """The values at an index vector, as the tables spell them."""
+        return np.array([v[k] for v, k in zip(self.values, index, strict=True)])

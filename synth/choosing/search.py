@@ -1,0 +1,177 @@
+"""The joint search: kicks along the free scales, compensation, rounding, descent.
+
+In every round the response is linear about the best values so far.  A kick moves a random
+part of the values, capacitors go to standard ones, the resistors make up for the error by
+the smallest change, everything is rounded, and the descent follows.  The best candidates of
+a round are judged by the nodal engine on the whole circuit, and the best of them is the
+reference of the next round.  Deterministic for a seed; no result depends on the clock.
+"""
+
+from __future__ import annotations
+
+import heapq
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+from synth.choosing.descent import Neighbourhood
+from synth.choosing.grid import ValueGrid
+from synth.choosing.model import LevelLimits, LinearModel, mean_square_error
+from synth.nodal import NodalProgram
+
+__all__ = ["SearchOutcome", "search_values"]
+
+Real = NDArray[np.float64]
+Complex = NDArray[np.complex128]
+Index = NDArray[np.intp]
+
+# Size of the kicks in each round, as a ratio of the value.
+KICKS = (0.25, 0.12, 0.06, 0.04)
+
+# How many candidates of a round the nodal engine judges.
+CANDIDATES = 24
+
+
+@dataclass(frozen=True, kw_only=True)
+class SearchOutcome:
+    """The chosen values, their error, and the work it took.
+
+    `index` is into the grid, `rms` the root mean square of |ln(H/T)| by the nodal engine,
+    `looked` the number of neighbourhoods evaluated.
+    """
+
+    index: Index
+    rms: float
+    looked: int
+
+
+@dataclass
+class _Pool:
+    """The best distinct candidates of a round."""
+
+    size: int
+    heap: list[tuple[float, int, tuple[int, ...]]] = field(default_factory=list)
+    seen: set[tuple[int, ...]] = field(default_factory=set)
+    counter: int = 0
+
+    def offer(self, index: Index, cost: float) -> None:
+        key = tuple(int(k) for k in index)
+        if key in self.seen:
+            return
+        self.seen.add(key)
+        self.counter += 1
+        heapq.heappush(self.heap, (-cost, self.counter, key))
+        if len(self.heap) > self.size:
+            heapq.heappop(self.heap)
+
+    def members(self) -> list[Index]:
+        return [np.array(key) for _, _, key in sorted(self.heap, reverse=True)]
+
+
+def search_values(
+    program: NodalProgram,
+    grid: ValueGrid,
+    *,
+    start_logs: Real,
+    target: Complex,
+    frequency_hz: Real,
+    limits: LevelLimits | None,
+    seed: int,
+    descents: int,
+) -> SearchOutcome:
+    """Standard values for the least response error of the whole circuit.
+
+    Parameters
+    ----------
+    start_logs
+        ln of the ideal values, shape (P,): where the search starts.
+    target, frequency_hz
+        Target response and frequencies [Hz], shape (F,).
+    limits
+        How far op-amp outputs may rise; a candidate beyond them is not taken.
+    descents
+        Number of kicks in all rounds together.
+    """
+    rng = np.random.default_rng(seed)
+    best = grid.nearest(start_logs)
+    best_square = float(
+        mean_square_error(program, grid.values_at(best)[None, :], target, frequency_hz)[0]
+    )
+    reference = np.exp(start_logs)
+    looked = 0
+    for kick in KICKS:
+        model = LinearModel.about(program, reference, target, frequency_hz)
+        one = _Round(grid, model, limits, rng, kick)
+        pool = one.run(best, max(1, descents // len(KICKS)))
+        looked += one.looked
+        members = pool.members()
+        if not members:
+            continue
+        values = np.array([grid.values_at(m) for m in members])
+        squares = mean_square_error(program, values, target, frequency_hz)
+        k = int(np.argmin(squares))
+        if squares[k] < best_square:
+            best, best_square = members[k], float(squares[k])
+        reference = grid.values_at(best)
+    return SearchOutcome(index=best, rms=float(np.sqrt(best_square)), looked=looked)
+
+
+class _Round:
+    """One round of kicks about one linear model."""
+
+    def __init__(
+        self,
+        grid: ValueGrid,
+        model: LinearModel,
+        limits: LevelLimits | None,
+        rng: np.random.Generator,
+        kick: float,
+    ) -> None:
+        self.grid, self.model, self.limits = grid, model, limits
+        self.rng, self.kick = rng, kick
+        self.coarse = Neighbourhood(grid, model)
+        self.fine = Neighbourhood(grid, model, quads=160)
+        free = grid.resistors
+        self.compensation = np.zeros((free.size, model.offset.size))
+        self.compensation[free] = np.linalg.pinv(model.matrix[:, free], rcond=1e-6)
+        self.looked = 0
+
+    def run(self, start: Index, kicks: int) -> _Pool:
+        pool = _Pool(CANDIDATES)
+        here, cost = self._descend(self.coarse, start)
+        self._offer(pool, here, cost)
+        best, best_cost = here, cost
+        for _ in range(kicks):
+            base = best if self.rng.random() < 0.6 else here
+            trial, cost_trial = self._descend(self.coarse, self._kicked(base))
+            if cost_trial < 2 * best_cost:
+                trial, cost_trial = self._descend(self.fine, trial)
+            if not self._offer(pool, trial, cost_trial):
+                continue
+            if cost_trial < 1.5 * cost:
+                here, cost = trial, cost_trial
+            if cost_trial < best_cost:
+                best, best_cost = trial, cost_trial
+        return pool
+
+    def _descend(self, neighbourhood: Neighbourhood, index: Index) -> tuple[Index, float]:
+        index, cost, looked = neighbourhood.descend(index)
+        self.looked += looked
+        return index, cost
+
+    def _offer(self, pool: _Pool, index: Index, cost: float) -> bool:
+        if self.limits is not None and not self.limits.hold(self.grid.logs_at(index)):
+            return False
+        pool.offer(index, cost)
+        return True
+
+    def _kicked(self, index: Index) -> Index:
+        """`index` with a random part of the values moved and the resistors making up for it."""
+        count = index.size
+        moved = self.rng.random(count) < self.rng.uniform(0.1, 0.6)
+        logs = self.grid.logs_at(index) + moved * self.rng.normal(0.0, self.kick, count)
+        standard = self.grid.logs_at(self.grid.nearest(logs))
+        logs = np.where(self.grid.capacitors, standard, logs)
+        logs = logs - self.compensation @ self.model.residual(logs)
+        return self.grid.nearest(logs)
