@@ -1,0 +1,239 @@
+"""Job files: TOML text in, a checked `synth.job.Job` out, or one clear error.
+
+Every mistake that can be found is reported at once, one per line, each as
+``file:line: key.path: what came, what was expected``.  Numbers are read as decimals, so that
+coefficients reach `synth` exactly as they are written.
+"""
+
+from __future__ import annotations
+
+import re
+import tomllib
+from collections.abc import Mapping
+from dataclasses import replace
+from decimal import Decimal
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from netlist.jobvalues import unknown_key
+from netlist.mistakes import Mistakes
+from synth.errors import JobError
+from synth.job import Accept, Board, Job, Loop, Signal
+from synth.op_amps import DEFAULT_CLASS, op_amp_class
+from synth.parts import OpAmp, PartRule
+from synth.preferred import decade, series_values
+from synth.quantities import show, what_came
+
+if TYPE_CHECKING:
+    from pydantic_core import ErrorDetails
+
+    from netlist.jobschema import BoardTable, JobTable, LoopTable, TargetTable
+    from synth.transfer import TransferFunction
+
+__all__ = ["DEFAULT_CAPACITORS", "DEFAULT_RESISTORS", "parse_job", "read_job"]
+
+LARGEST_FILE = 1_000_000  # bytes
+
+DEFAULT_RESISTORS = PartRule(
+    kind="resistor", series="E96", tolerance=0.01, smallest=1e3, largest=1e6
+)
+DEFAULT_CAPACITORS = PartRule(
+    kind="capacitor", series="E12", tolerance=0.05, smallest=100e-12, largest=1e-6
+)
+
+_PLACE = re.compile(r"(.*) \(at (?:line (\d+), column (\d+)|end of document)\)", re.DOTALL)
+
+
+def read_job(path: str | Path) -> Job:
+    """The job a file states.
+
+    Raises
+    ------
+    JobError
+        The file cannot be read, or what `parse_job` refuses.
+    """
+    file = Path(path)
+    data = _bytes_of(file)
+    if len(data) > LARGEST_FILE:
+        raise JobError(f"{file}: got more than {LARGEST_FILE} bytes, expected a job file")
+    try:
+        text = data.decode("utf-8-sig")
+    except UnicodeDecodeError as error:
+        raise JobError(
+            f"{file}: got a byte {data[error.start]:#04x} at position {error.start}, "
+            "expected text in UTF-8"
+        ) from None
+    return parse_job(text, name=str(file))
+
+
+def parse_job(text: str, *, name: str = "job") -> Job:
+    """The job a TOML text states; `name` stands for the file in messages.
+
+    Raises
+    ------
+    JobError
+        Anything wrong with the text.  The message has one line per mistake; ``key`` is the
+        path of the first.
+    """
+    mistakes = Mistakes(text, name)
+    table = _checked(_parsed(text, name), mistakes)
+    if table is None:
+        mistakes.stop()
+    signal = mistakes.attempt("signal", lambda: Signal(**table.signal.given()))
+    board = _board(table.board, mistakes)
+    accept = mistakes.attempt("accept", lambda: Accept(**table.accept.given()))
+    loop = None
+    if (plant := table.loop) is not None:
+        loop = mistakes.attempt("loop", lambda: _loop(plant))
+    target = mistakes.attempt("target", lambda: _target(table.target, signal))
+    if mistakes.found or signal is None or board is None or accept is None or target is None:
+        mistakes.stop()
+    transfer, notices = target
+    named = {"title": table.title} if table.title else {}
+    return Job(
+        target=transfer,
+        signal=signal,
+        board=board,
+        accept=accept,
+        loop=loop,
+        notices=notices,
+        **named,
+    )
+
+
+def _bytes_of(file: Path) -> bytes:
+    """The content of a file, cut off when it is far too long for a job."""
+    try:
+        kind = "a folder" if file.is_dir() else "no regular file"
+        regular = file.is_file() or not file.exists()
+        if regular:
+            with file.open("rb") as stream:
+                return stream.read(LARGEST_FILE + 1)
+    except FileNotFoundError:
+        raise JobError(f"{file}: no such file, expected a job file in TOML") from None
+    except OSError as error:
+        raise JobError(f"{what_came(str(file))}: cannot be read: {error.strerror}") from None
+    except ValueError as error:
+        raise JobError(f"{what_came(str(file))}: cannot be read: {error}") from None
+    raise JobError(f"{file}: got {kind}, expected a job file")
+
+
+def _parsed(text: str, name: str) -> dict[str, Any]:
+    """The TOML document, decimals exact."""
+    if len(text) > LARGEST_FILE:
+        raise JobError(f"{name}: got more than {LARGEST_FILE} characters, expected a job file")
+    try:
+        return tomllib.loads(text, parse_float=Decimal)
+    except tomllib.TOMLDecodeError as error:
+        problem, line, column = str(error), None, None
+        if found := _PLACE.fullmatch(problem):
+            problem, line, column = found.groups()
+        place = f"{name}:{line}" if line else name
+        where = f" at column {column}" if column else " at the end"
+        problem = " ".join(problem.split())
+        raise JobError(
+            f"{place}: {problem[:1].lower()}{problem[1:]}{where}, expected TOML"
+        ) from None
+    except (ValueError, ArithmeticError):
+        raise JobError(f"{name}: got a number too long to read, expected TOML") from None
+    except RecursionError:
+        raise JobError(f"{name}: got brackets nested too deeply, expected TOML") from None
+
+
+def _checked(document: Mapping[str, Any], mistakes: Mistakes) -> JobTable | None:
+    """The document with every key known and every value read; None with mistakes noted."""
+    from pydantic import ValidationError
+
+    from netlist.jobschema import JobTable, keys_of
+
+    try:
+        return JobTable.model_validate(document)
+    except ValidationError as invalid:
+        keys = dict(keys_of(JobTable))
+        for error in invalid.errors(include_url=False):
+            path = tuple(str(part) for part in error["loc"])
+            mistakes.add(path, _problem(path, error, keys))
+        return None
+
+
+def _problem(
+    path: tuple[str, ...], error: ErrorDetails, keys: Mapping[tuple[str, ...], str]
+) -> str:
+    """What to say of one finding of the schema."""
+    if error["type"] == "missing":
+        return f"is missing, expected {keys[path]}"
+    if error["type"] == "extra_forbidden":
+        siblings = [key[-1] for key in keys if key[:-1] == path[:-1]]
+        return unknown_key(path[-1], siblings, elsewhere=[".".join(key) for key in keys])
+    if isinstance(known := error.get("ctx", {}).get("error"), JobError):
+        return known.problem
+    return f"got {what_came(error['input'])}, expected a table [{'.'.join(path)}]"
+
+
+def _board(table: BoardTable, mistakes: Mistakes) -> Board | None:
+    """The board with the defaults of everything not stated."""
+    resistors = mistakes.attempt(
+        "board.resistors", lambda: _part_rule(DEFAULT_RESISTORS, table.resistors.given())
+    )
+    capacitors = mistakes.attempt(
+        "board.capacitors", lambda: _part_rule(DEFAULT_CAPACITORS, table.capacitors.given())
+    )
+    op_amp = mistakes.attempt("board.op_amp", lambda: _op_amp(table.op_amp.given()))
+    rest = {k: v for k, v in table.given().items() if k in ("supply", "form", "inverted")}
+    if "form" in rest:
+        from synth.forms import check_form_name
+
+        mistakes.attempt("board.form", lambda: check_form_name(rest["form"]))
+    if resistors is None or capacitors is None or op_amp is None:
+        return None
+    return mistakes.attempt(
+        "board",
+        lambda: Board(op_amp=op_amp, resistors=resistors, capacitors=capacitors, **rest),
+    )
+
+
+def _part_rule(default: PartRule, given: dict[str, Any]) -> PartRule:
+    """The rule, once its series has a value within its range."""
+    rule = replace(default, **given)
+    decade(rule.series, key="series")
+    if not series_values(rule.series, rule.smallest, rule.largest).size:
+        unit = "ohm" if rule.kind == "resistor" else "F"
+        raise JobError(
+            f"got no value of {rule.series} from {show(rule.smallest, unit)} to "
+            f"{show(rule.largest, unit)}, expected a wider range"
+        )
+    return rule
+
+
+def _op_amp(given: dict[str, Any]) -> OpAmp:
+    """A class with the figures that were stated in place of its own."""
+    kind = given.pop("kind", DEFAULT_CLASS)
+    return replace(op_amp_class(kind, key="kind"), **given)
+
+
+def _loop(table: LoopTable) -> Loop:
+    from synth.targets import from_coefficients
+
+    given = table.given()
+    plant = from_coefficients(given.pop("numerator"), given.pop("denominator"), key="loop")
+    return Loop(plant=plant, **given)
+
+
+def _target(
+    table: TargetTable, signal: Signal | None
+) -> tuple[TransferFunction, tuple[str, ...]] | None:
+    """H(s), reduced and accepted, with its notices; None without a signal to judge it by."""
+    from synth import targets
+
+    match table.way:
+        case "coefficients":
+            stated = targets.from_coefficients(table.numerator, table.denominator)
+        case "roots":
+            zeros = [targets.Root(f, q) for f, q in table.zeros]
+            poles = [targets.Root(f, q) for f, q in table.poles]
+            stated = targets.from_roots(zeros, poles, table.gain, table.gain_at)
+        case _:
+            stated = targets.from_expression(table.expression, table.parameters)
+    if signal is None:
+        return None
+    return targets.accept(stated, allow_unstable=table.allow_unstable, band_hz=signal.band_hz)
