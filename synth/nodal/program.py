@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -15,8 +16,10 @@ from numpy.typing import ArrayLike, NDArray
 from synth.circuit import Circuit
 from synth.errors import CircuitError
 from synth.nodal import dense
+from synth.nodal.engine import Boards, Engine, choose_engine
 from synth.nodal.noise import Noise, noise_from
 from synth.nodal.offsets import Offsets, offsets_of
+from synth.nodal.reduction import Reduction, reduce
 from synth.nodal.sensitivity import Adjoint, Sensitivities, sensitivities_from
 from synth.nodal.structure import Structure, structure_of
 
@@ -92,43 +95,63 @@ class NodalProgram:
         NumericalError
             The equations are singular at a sample.
         """
+        structure = self.structure
         frequency = checked_frequency(frequency_hz)
-        parts = self._checked("values", values, self.structure.values)
-        gbw = self._checked("gain_bandwidth", gain_bandwidth, self.structure.gain_bandwidth)
-        gain = self._checked("open_loop_gain", open_loop_gain, self.structure.open_loop_gain)
-        batched = any(array.ndim == 2 for array in (parts, gbw, gain))
-        boards = _common_boards(parts, gbw, gain)
-        columns = [self.structure.column(n) for n in nets] if nets is not None else []
-        s = np.tile(_laplace(frequency), boards)
+        parts = self._checked("values", values, structure.values)
+        gbw = self._checked("gain_bandwidth", gain_bandwidth, structure.gain_bandwidth)
+        gain = self._checked("open_loop_gain", open_loop_gain, structure.open_loop_gain)
+        count = _common_boards(parts, gbw, gain)
+        boards = Boards(
+            *(np.broadcast_to(array, (count or 1, array.shape[-1])) for array in (parts, gbw, gain))
+        )
+        solved: Complex
+        if nets is None:
+            solved = self._voltages((structure.output,), boards, frequency)[0]
+        else:
+            columns = tuple(structure.column(net) for net in nets)
+            solved = np.moveaxis(self._voltages(columns, boards, frequency), 0, -1)
+        return solved if count else np.asarray(solved[0])
 
-        def samples(array: Real) -> Real:
-            wide = np.broadcast_to(array, (boards, array.shape[-1]))
-            return np.repeat(wide, frequency.size, axis=0)
+    def _voltages(self, columns: tuple[int, ...], boards: Boards, frequency: Real) -> Complex:
+        """Voltages of nets, shape (nets, boards, F)."""
+        n = self.structure.size
+        unknown = tuple(sorted({c for c in columns if c < n}))
+        out = np.zeros((len(columns), boards.count, frequency.size), dtype=complex)
+        solved = self._engine(unknown).solve(boards, _laplace(frequency))
+        for k, column in enumerate(columns):
+            if column < n:
+                out[k] = solved[unknown.index(column)]
+            elif column == n:
+                out[k] = 1.0
+        return out
 
-        y = dense.admittances(self.structure, s, samples(parts))
-        a = dense.inverse_gains(s, samples(gbw), samples(gain))
-        solved = dense.solve_samples(self.structure, y, a)
-        picked = solved[:, self.structure.output] if nets is None else solved[:, columns]
-        shaped = picked.reshape(boards, frequency.size, *picked.shape[1:])
-        return shaped if batched else shaped[0]
+    def _engine(self, unknown: tuple[int, ...]) -> Engine:
+        """The engine that solves for some unknown nets, made when first asked for."""
+        if unknown not in self._engines:
+            self._engines[unknown] = choose_engine(self.structure, self._reduction, unknown)
+        return self._engines[unknown]
+
+    @cached_property
+    def _engines(self) -> dict[tuple[int, ...], Engine]:
+        return {}
+
+    @cached_property
+    def _reduction(self) -> Reduction:
+        return reduce(self.structure)
 
     def adjoint(self, frequency_hz: ArrayLike, *, values: ArrayLike | None, column: int) -> Adjoint:
-        """Forward and transposed solution of one board, observing net `column`."""
-        structure, n = self.structure, self.structure.size
+        """Forward and transposed solution of one board, observing net `column`.
+
+        Raises
+        ------
+        CircuitError, NumericalError
+            As `solve`.
+        """
         frequency = checked_frequency(frequency_hz)
         s = _laplace(frequency)
-        y = dense.admittances(structure, s, self._one_board(values)[None, :])
-        a = dense.inverse_gains(s, structure.gain_bandwidth, structure.open_loop_gain)
-        psi = np.zeros((frequency.size, n + 2), dtype=complex)
-        if column < n:
-            matrix = dense.equations(structure, y, a)[:, :, :n]
-            right = np.zeros((frequency.size, n, 1), dtype=complex)
-            right[:, column] = 1.0
-            psi[:, :n] = dense.solve_rows(matrix, right, transposed=True)[:, :, 0]
-        outputs = structure.pins[:, 2]
-        amplifiers = psi[:, outputs]
-        psi[:, outputs] = 0.0
-        return Adjoint(dense.solve_samples(structure, y, a), psi, amplifiers)
+        y = dense.admittances(self.structure, s, self._one_board(values)[None, :])
+        a = dense.inverse_gains(s, self.structure.gain_bandwidth, self.structure.open_loop_gain)
+        return dense.solve_both(self.structure, y, a, column)
 
     def sensitivities(
         self, frequency_hz: ArrayLike, *, values: ArrayLike | None = None, net: str | None = None
@@ -259,8 +282,9 @@ def _laplace(frequency: Real) -> Complex:
     return np.asarray(2j * np.pi * frequency, dtype=np.complex128)
 
 
-def _common_boards(*arrays: Real) -> int:
+def _common_boards(*arrays: Real) -> int | None:
+    """The number of boards the arrays agree on, None when none has an axis of boards."""
     boards = {array.shape[0] for array in arrays if array.ndim == 2}
     if len(boards) > 1:
         raise CircuitError(f"got arrays for {sorted(boards)} boards, expected one number of boards")
-    return boards.pop() if boards else 1
+    return boards.pop() if boards else None

@@ -1,0 +1,173 @@
+"""The nodal equations with the op-amps' input nets taken out, as polynomials in s.
+
+Op-amp k gives v(-) = v(+) - a_k v(out), so the net at its - input needs no unknown (pivot exactly
+1; the net at + serves where - cannot).  What remains is one unknown per op-amp output plus the
+other passive nets, and every entry of the matrix is a polynomial in s of degree 2 at most,
+
+    entry = sum over m of s^m * sum of (integer * quantity_i * quantity_j),
+
+in the board's quantities: 1, then 1/R or C of every passive, 1/A0 of every op-amp, and
+1/(2 pi GBW) of every op-amp, in this order.
+"""
+
+from __future__ import annotations
+
+from collections import defaultdict
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from synth.nodal.structure import Structure
+
+__all__ = ["DEGREE", "Entry", "Reduction", "quantities", "reduce"]
+
+Real = NDArray[np.float64]
+
+DEGREE = 2
+"""Largest power of s in an entry: a capacitor times the pole of one op-amp."""
+
+Entry = dict[tuple[int, int, int], int]
+"""Integer coefficients by (power of s, quantity i, quantity j), i <= j."""
+
+_Voltage = dict[int, dict[int, int]]
+"""A net as a combination of unknowns: column -> {-1: plain coefficient, k: coefficient of a_k}."""
+
+
+@dataclass(frozen=True, eq=False)
+class Reduction:
+    """The reduced equations: sum over columns of entry * voltage = 0 in every row.
+
+    Parameters
+    ----------
+    rows, columns
+        Rows and unknown nets that remain, numbered as in `Structure`; equally many.
+    source
+        Column of the input, known to be 1 V.
+    entries
+        By (row, column), the source's column among them.
+    pairs
+        (op-amp, net) for every op-amp equation used up and the net it took out.
+    """
+
+    rows: tuple[int, ...]
+    columns: tuple[int, ...]
+    source: int
+    entries: dict[tuple[int, int], Entry]
+    pairs: tuple[tuple[int, int], ...]
+
+
+def quantities(structure: Structure, values: Real, gain_bandwidth: Real, gain: Real) -> Real:
+    """Quantities of every board, shape (1 + P + 2 U, boards), from arrays (boards, P or U)."""
+    inverse = np.where(structure.is_resistor, 1.0 / values, values)
+    one = np.ones((values.shape[0], 1))
+    return np.concatenate([one, inverse, 1 / gain, 1 / (2 * np.pi * gain_bandwidth)], axis=1).T
+
+
+def reduce(structure: Structure) -> Reduction:
+    """Take the op-amps' input nets out of the nodal equations."""
+    n = structure.size
+    voltages, pairs = _taken_out(structure)
+    taken = {net for _, net in pairs}
+    used = {k for k, _ in pairs}
+    add = _Adder(len(structure.refs), len(structure.amplifiers))
+    rows: dict[int, dict[int, Entry]] = {}
+    for k, (plus, minus, out) in enumerate(structure.pins):
+        if k not in used:
+            row = rows.setdefault(int(out), defaultdict(dict))
+            add(row, voltages[plus], 1)
+            add(row, voltages[minus], -1)
+            add(row, {int(out): {k: 1}}, -1)
+    for part, ends in enumerate(structure.ends):
+        load = (1 + part, 0 if structure.is_resistor[part] else 1)
+        for p, q in ((int(ends[0]), int(ends[1])), (int(ends[1]), int(ends[0]))):
+            if p < n and p not in structure.driver:
+                row = rows.setdefault(p, defaultdict(dict))
+                add(row, voltages[p], 1, load)
+                add(row, voltages[q], -1, load)
+    entries = {}
+    for r, row in rows.items():
+        for c, entry in row.items():
+            kept = {key: value for key, value in entry.items() if value}
+            if kept:
+                entries[r, c] = kept
+    columns = tuple(c for c in range(n) if c not in taken)
+    return Reduction(tuple(sorted(rows)), columns, n, entries, tuple(pairs))
+
+
+def _taken_out(structure: Structure) -> tuple[list[_Voltage], list[tuple[int, int]]]:
+    """Every net as a combination of the unknowns that stay, and the (op-amp, net) pairs used."""
+    n = structure.size
+    voltages: list[_Voltage] = [{k: {-1: 1}} for k in range(n + 1)]
+    voltages.append({})  # ground
+    pairs: list[tuple[int, int]] = []
+    for k, (plus, minus, out) in enumerate(structure.pins):
+        equation: _Voltage = defaultdict(lambda: defaultdict(int))
+        for voltage, sign in ((voltages[plus], 1), (voltages[minus], -1), ({out: {k: 1}}, -1)):
+            for column, terms in voltage.items():
+                for a, coefficient in terms.items():
+                    equation[int(column)][a] += sign * coefficient
+        for net in (int(minus), int(plus)):
+            terms = {a: c for a, c in equation.get(net, {}).items() if c}
+            fixed = net >= n or net in structure.driver or net == structure.output
+            if fixed or set(terms) != {-1} or abs(terms[-1]) != 1:
+                continue
+            _substitute(voltages, net, equation, terms[-1])
+            pairs.append((k, net))
+            break
+    return voltages, pairs
+
+
+def _substitute(voltages: list[_Voltage], net: int, equation: _Voltage, pivot: int) -> None:
+    """Replace `net` in all voltages by what the equation, pivot * v(net) + rest = 0, says."""
+    rest = {
+        column: {a: -pivot * c for a, c in terms.items() if c}
+        for column, terms in equation.items()
+        if column != net
+    }
+    for k, voltage in enumerate(voltages):
+        if net not in voltage:
+            continue
+        factor = voltage[net][-1]
+        merged: _Voltage = {c: dict(t) for c, t in voltage.items() if c != net}
+        for column, terms in rest.items():
+            target = merged.setdefault(column, {})
+            for a, c in terms.items():
+                target[a] = target.get(a, 0) + factor * c
+        voltages[k] = {
+            column: kept
+            for column, terms in merged.items()
+            if (kept := {a: c for a, c in terms.items() if c})
+        }
+
+
+@dataclass(frozen=True)
+class _Adder:
+    """Adds sign * admittance * voltage to a row; `load` is (quantity, power of s) of the
+    admittance, the number 1 when left out."""
+
+    passives: int
+    amplifiers: int
+
+    def __call__(
+        self,
+        row: dict[int, Entry],
+        voltage: _Voltage,
+        sign: int,
+        load: tuple[int, int] = (0, 0),
+    ) -> None:
+        quantity, power = load
+        for column, terms in voltage.items():
+            entry = row[column]
+            for a, coefficient in terms.items():
+                for factor, extra in self._factors(a):
+                    low, high = sorted((quantity, factor))
+                    key = (power + extra, low, high)
+                    entry[key] = entry.get(key, 0) + sign * coefficient
+
+    def _factors(self, a: int) -> list[tuple[int, int]]:
+        """(quantity, power of s) of the terms of a_k, of the number 1 for k = -1."""
+        if a < 0:
+            return [(0, 0)]
+        first = 1 + self.passives + a
+        return [(first, 0), (first + self.amplifiers, 1)]
