@@ -31,7 +31,7 @@ fail() {
 
 # The end of the log, indented, for a message that the caller prints next.
 show_log() {
-    [ -s "$log" ] && tail -n 12 "$log" | sed 's/^/    /' >&2
+    grep -v -e '^Ignoring ' -e '^ *$' "$log" | tail -n 8 | sed 's/^/    /' >&2
 }
 
 prepare() {
@@ -55,7 +55,7 @@ prepare() {
     if environment_is_ready; then
         install_system_packages $(missing "$base" "$@")
     else
-        install_system_packages $(missing "$base" venv "$@")
+        install_system_packages $(missing "$base" "$@" venv)
         install_python_packages
     fi
     rm -f "$log"
@@ -147,10 +147,14 @@ install_system_packages() {
     done
     packages=
     for need in $needs; do
-        packages="$packages $(package_for "$manager" "$need")"
+        [ -z "$manager" ] || packages="$packages $(package_for "$manager" "$need")"
     done
     packages=$(printf '%s' "$packages" | sed 's/  */ /g; s/^ //; s/ $//')
-    if [ -n "$manager" ] && [ -n "$packages" ]; then
+    if [ -z "$packages" ]; then
+        :
+    elif [ "$manager" != brew ] && [ "$(id -u)" -ne 0 ] && ! command -v sudo >/dev/null; then
+        say "$packages: installing them needs an administrator, and there is no sudo here"
+    else
         say "installing $packages with $manager"
         # Word splitting is wanted: the names hold no spaces.
         run_manager "$manager" $packages 9>&- >>"$log" 2>&1 || true
@@ -197,10 +201,8 @@ apt_install() {
 as_root() {
     if [ "$(id -u)" -eq 0 ]; then
         "$@"
-    elif ! command -v sudo >/dev/null; then
-        echo "$1 needs an administrator, and there is no sudo here"
-        return 1
     elif [ -t 0 ]; then
+        # Somebody is there to type a password.
         sudo "$@"
     else
         sudo -n "$@"
@@ -213,8 +215,8 @@ explain_missing() {
     show_log
     if [ -z "$manager" ]; then
         say "found no package manager that this script knows (apt-get, dnf, zypper, pacman, brew)"
-    else
-        say "$manager did not deliver; as an administrator, with a network: $manager install $packages"
+    elif [ -n "$packages" ]; then
+        say "$manager did not install $packages; try it as an administrator, with a network"
     fi
     for need in "$@"; do
         case $need in
