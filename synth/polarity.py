@@ -154,7 +154,7 @@ def _order(graph: BlockGraph, touching: dict[str, list[_Edge]]) -> list[str]:
 
     def still_open(extra: str) -> int:
         have = done | {extra}
-        return sum(any(not {e.source, e.reader} <= have for e in touching[n]) for n in have)
+        return sum(any(not {e.source, e.reader} <= have for e in touching.get(n, ())) for n in have)
 
     while waiting:
         best = min(waiting, key=lambda n: (still_open(n), waiting.index(n)))

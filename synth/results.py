@@ -120,15 +120,16 @@ class ToleranceResult:
 class Candidate:
     """A form that was considered.
 
-    `spread_db` is the predicted spread of the magnitude from part tolerance (one standard
-    deviation, largest over the band) [dB]; None with a `reason` where the form could not be
-    built.
+    `spread_db` and `spread_deg` are the predicted spreads of magnitude and phase from part
+    tolerance (one standard deviation, largest over the band) [dB], [deg]; None with a
+    `reason` where the form could not be built.
     """
 
     form: str
     possible: bool
     op_amps: int | None
     spread_db: float | None
+    spread_deg: float | None
     reason: str = ""
 
 

@@ -43,11 +43,13 @@ CURRENT_SHARE = 0.7
 class Scaled:
     """A graph in volts, the impedance of its cells, and the predicted error.
 
-    `predicted_error` is the root mean square of the error of ln H over the band from the
-    op-amps alone, first order, with ideal values.
+    `levels` are the volts per unit of each block's signal before.  `predicted_error` is the
+    root mean square of the error of ln H over the band from the op-amps alone, first order,
+    with ideal values.
     """
 
     graph: BlockGraph
+    levels: dict[str, float]
     sizing: Sizing
     predicted_error: float
 
@@ -99,6 +101,7 @@ def scale(
     feedback = {b.name: sizes[b.name] for b in graph.adders}
     return Scaled(
         graph=graph.rescaled(variables.levels_of(v)),
+        levels={graph.output: 1.0, **variables.levels_of(v)},
         sizing=Sizing(capacitors=capacitors, feedback=feedback, inverters=_inverter_value(job)),
         predicted_error=math.sqrt(max(problem.error(v)[0], 0.0)),
     )

@@ -1,0 +1,209 @@
+"""The one function that runs the stages, from a job to a design.
+
+::
+
+    Job -> target -> form -> block graph -> signs -> levels -> circuit -> standard values
+        -> tolerance, noise, swing, drift -> Design
+
+Everything here is computed; the simulator's opinion is asked for outside.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+
+import numpy as np
+from numpy.typing import NDArray
+
+from synth.candidates import Sketch, choose_form
+from synth.choosing import choose_values
+from synth.circuit import Circuit
+from synth.evidence import Check, response_error
+from synth.job import Job
+from synth.limits import drifts, swing_checks, swings
+from synth.nodal import compile_circuit
+from synth.peaks import frequencies_of_interest
+from synth.results import Candidate, Design, NoiseResult, Swing, ToleranceResult
+from synth.sampling import judging_frequencies
+from synth.tolerance import run_boards
+
+__all__ = ["DEFAULT_BOARDS", "DEFAULT_SEED", "compare_forms", "design"]
+
+Real = NDArray[np.float64]
+Progress = Callable[[str, int, int], None]
+
+# The search for values sees the response at about this many frequencies.
+FREQUENCIES_OF_THE_SEARCH = 200
+
+# 50 times a stray of 2 pF.
+SMALL_CAPACITOR = 100e-12
+
+DEFAULT_BOARDS = 1000
+DEFAULT_SEED = 1
+
+
+def compare_forms(job: Job) -> tuple[str, tuple[Candidate, ...]]:
+    """The form `design` would take, and every form considered.
+
+    Raises
+    ------
+    RealizationError
+        No form fits.
+    """
+    sketch, candidates = choose_form(job, judging_frequencies(job.target, job.signal.band_hz))
+    return sketch.form, candidates
+
+
+def design(
+    job: Job,
+    *,
+    boards: int = DEFAULT_BOARDS,
+    seed: int = DEFAULT_SEED,
+    progress: Progress | None = None,
+) -> Design:
+    """Carry a job through every stage.
+
+    Parameters
+    ----------
+    boards
+        How many boards the tolerance run draws, at least 1.
+    seed
+        Of the choice of values and of the boards; the same seed gives the same design.
+    progress
+        Called with the stage's name, and how much of how much of it is done.
+
+    Raises
+    ------
+    JobError, RealizationError
+        The job contradicts itself, or no circuit within its rules exists.
+    """
+    say = progress or (lambda stage, done, total: None)
+    frequency = judging_frequencies(job.target, job.signal.band_hz)
+    sketch, candidates = choose_form(
+        job, frequency, progress=lambda done, total: say("forms", done, total)
+    )
+    wanted = job.target.negated() if sketch.polarity.output_inverted else job.target
+    response = wanted.response(frequency)
+    say("values", 0, 1)
+    few = slice(None, None, max(1, frequency.size // FREQUENCIES_OF_THE_SEARCH))
+    choice = choose_values(
+        sketch.circuit,
+        target=response[few],
+        frequency_hz=frequency[few],
+        level_limits=_level_limits(sketch, job),
+        seed=seed,
+    )
+    circuit = choice.circuit
+    program = compile_circuit(circuit)
+    tolerance = run_boards(
+        program,
+        circuit,
+        response,
+        frequency,
+        accept=job.accept,
+        boards=boards,
+        seed=seed,
+        progress=lambda done, total: say("boards", done, total),
+    )
+    say("limits", 0, 1)
+    swing = swings(circuit, wanted, job)
+    names = {c.amplifier: _cell_name(circuit, c.amplifier) for c in circuit.cells}
+    return Design(
+        job=job,
+        form=sketch.form,
+        inverted=sketch.polarity.output_inverted,
+        wanted=wanted,
+        graph=sketch.graph,
+        circuit=circuit,
+        frequency_hz=frequency,
+        nominal=response_error(program.solve(frequency), response),
+        nearest=response_error(compile_circuit(choice.nearest).solve(frequency), response),
+        tolerance=tolerance,
+        noise=_noise(circuit, frequency),
+        swings=swing,
+        drifts=drifts(circuit),
+        candidates=candidates,
+        checks=(_yield_check(tolerance, job), *swing_checks(swing, names)),
+        notices=(*job.notices, *_notices(circuit, job, swing)),
+    )
+
+
+def _level_limits(sketch: Sketch, job: Job) -> dict[str, tuple[float, float]]:
+    """For each op-amp output but the board's: where it peaks [Hz], and by what ratio the peak
+    may rise before it meets the rail or half the slew rate."""
+    peaks = sketch.peaks
+    grid = frequencies_of_interest(job.target, from_hz=peaks.from_hz)
+    signals = sketch.graph.signals(2j * np.pi * grid)
+    limits: dict[str, tuple[float, float]] = {}
+    for cell in sketch.circuit.cells:
+        if cell.output == sketch.circuit.output_net or cell.block not in signals:
+            continue
+        volts = job.signal.input_peak * sketch.levels[cell.block]
+        rising = min(
+            job.board.swing_limit / (volts * peaks.peak[cell.block]),
+            job.board.op_amp.slew_rate / 2 / (volts * peaks.rate[cell.block]),
+        )
+        watch = float(grid[int(np.argmax(np.abs(signals[cell.block])))])
+        limits[cell.output] = (watch, rising)
+    return limits
+
+
+def _notices(circuit: Circuit, job: Job, swing: tuple[Swing, ...]) -> tuple[str, ...]:
+    """What the user should know of the design itself."""
+    said: list[str] = []
+    stray = [p for p in circuit.bought if p.kind == "capacitor" and p.value < SMALL_CAPACITOR]
+    if stray:
+        refs = ", ".join(p.ref for p in stray)
+        said.append(
+            f"{refs}: below {SMALL_CAPACITOR * 1e12:.0f} pF strays of a picofarad or two count "
+            "(common practice: at least 50 times the stray)"
+        )
+    fast = [s for s in swing if s.slew > s.slew_limit / 2]
+    if fast:
+        refs = ", ".join(s.amplifier for s in fast)
+        said.append(
+            f"{refs}: the output needs more than half the op-amp's slew rate at the upper edge "
+            "of the band (common practice: a margin of two)"
+        )
+    if job.target.poles_at_origin:
+        said.append(
+            f"H(s) has a pole at s = 0: below {job.signal.band_hz[0]:.4g} Hz, the lower edge of "
+            "the band, its signals grow without bound, so peaks are taken from there upward; on "
+            "the bench the board has no operating point of its own outside its loop"
+        )
+    if any(p.q < 0 or p.roots[0].real > 0 for p in job.target.pole_factors):
+        said.append(
+            "H(s) is unstable by itself: peaks are those of its response to steady sines, and "
+            "the board saturates unless a loop around it holds it"
+        )
+    return tuple(said)
+
+
+def _cell_name(circuit: Circuit, amplifier: str) -> str:
+    cell = circuit.cell_of(amplifier)
+    if cell is None:
+        return amplifier
+    return f"inverter of {cell.block}" if cell.kind == "inverter" else cell.block
+
+
+def _yield_check(tolerance: ToleranceResult, job: Job) -> Check:
+    limit = job.accept.yield_share
+    note = (
+        f"{tolerance.passed} of {tolerance.boards} boards, "
+        f"{100 * tolerance.low:.1f} to {100 * tolerance.high:.1f} % at "
+        f"{100 * tolerance.confidence:.0f} % confidence"
+    )
+    percent = 100 * tolerance.share
+    return Check.at_least("yield", percent, None if limit is None else 100 * limit, "%", note)
+
+
+def _noise(circuit: Circuit, frequency_hz: Real) -> NoiseResult:
+    found = compile_circuit(circuit).noise(frequency_hz)
+    power = float(np.trapezoid(found.total, frequency_hz))
+    shares = np.asarray(np.trapezoid(found.power, frequency_hz, axis=0) / power)
+    return NoiseResult(
+        frequency_hz=frequency_hz,
+        density=found.density,
+        output_rms=float(np.sqrt(power)),
+        shares=dict(zip(found.refs, shares.tolist(), strict=True)),
+    )

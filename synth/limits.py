@@ -1,0 +1,137 @@
+"""What the op-amps must do: swing, slew, output current, and the drift of bare integrators.
+
+Computed on the circuit as it will be built, with its chosen values and its op-amps.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from synth.circuit import Amplifier, Circuit
+from synth.evidence import Check
+from synth.job import Job
+from synth.nodal import compile_circuit
+from synth.peaks import frequencies_of_interest
+from synth.readback import block_names, graph_of
+from synth.results import Drift, Swing
+from synth.statespace import StateSpace
+from synth.transfer import TransferFunction
+
+__all__ = ["drifts", "swing_checks", "swings"]
+
+Real = NDArray[np.float64]
+
+
+def swings(circuit: Circuit, target: TransferFunction, job: Job) -> tuple[Swing, ...]:
+    """Peak, rate and current of every op-amp output at the stated input.
+
+    The peak is the Linf norm over all frequencies (from the lower edge of the band upward
+    with a pole at the origin) times the input, or with ``swing = "any"`` the L1 norm times
+    the input.  Rate and current are those of sines within the band.
+    """
+    signal = job.signal
+    from_hz = signal.band_hz[0] if target.poles_at_origin else None
+    everywhere = frequencies_of_interest(target, from_hz=from_hz)
+    low, high = signal.band_hz
+    within = np.unique(np.concatenate([np.geomspace(low, high, 400), everywhere]))
+    within = within[(within >= low) & (within <= high)]
+    outputs = [a.output for a in circuit.amplifiers]
+    program = compile_circuit(circuit)
+    volts = signal.input_peak * np.abs(program.solve(everywhere, nets=outputs))
+    in_band = signal.input_peak * np.abs(program.solve(within, nets=outputs))
+    bounds = _any_input_peaks(circuit, signal.input_peak) if signal.swing == "any" else None
+    out: list[Swing] = []
+    for k, amplifier in enumerate(circuit.amplifiers):
+        place = int(np.argmax(volts[:, k]))
+        admittance = _output_admittance(circuit, amplifier, within)
+        out.append(
+            Swing(
+                amplifier=amplifier.ref,
+                net=amplifier.output,
+                peak=bounds[amplifier.output] if bounds else float(volts[place, k]),
+                peak_limit=job.board.swing_limit,
+                peak_hz=None if bounds else float(everywhere[place]),
+                slew=float(np.max(2 * np.pi * within * in_band[:, k])),
+                slew_limit=amplifier.figures.slew_rate,
+                current=float(np.max(in_band[:, k] * admittance)),
+                current_limit=amplifier.figures.output_current,
+            )
+        )
+    return tuple(out)
+
+
+def _any_input_peaks(circuit: Circuit, input_peak: float) -> dict[str, float]:
+    """Bound on every op-amp output for any input up to the peak, by net [V]."""
+    graph = graph_of(circuit)
+    names = block_names(circuit)
+    norms = StateSpace.of_signals(graph, tuple(names.values())).l1_norms()
+    return {net: input_peak * float(v) for net, v in zip(names, norms, strict=True)}
+
+
+def _output_admittance(circuit: Circuit, amplifier: Amplifier, frequency_hz: Real) -> Real:
+    """|Y| of the parts on an op-amp output, their far ends at ground or a virtual ground [S]."""
+    on_net = [p for p in circuit.passives if amplifier.output in p.nets]
+    conductance = sum(1 / p.value for p in on_net if p.kind == "resistor")
+    capacitance = sum(p.value for p in on_net if p.kind == "capacitor")
+    return np.hypot(conductance, 2 * np.pi * frequency_hz * capacitance)
+
+
+def swing_checks(found: tuple[Swing, ...], names: dict[str, str]) -> tuple[Check, ...]:
+    """The lines of the verdict: peak, slew rate and output current of every op-amp.
+
+    `names` gives the words for each op-amp.
+    """
+    checks: list[Check] = []
+    for swing in found:
+        where = f"{swing.amplifier} ({names[swing.amplifier]})"
+        at = "any input" if swing.peak_hz is None else f"at {swing.peak_hz:.4g} Hz"
+        checks.append(Check.at_most(f"peak of {where}", swing.peak, swing.peak_limit, "V", at))
+    for swing in found:
+        where = f"{swing.amplifier} ({names[swing.amplifier]})"
+        checks.append(
+            Check.at_most(f"slew of {where}", swing.slew / 1e6, swing.slew_limit / 1e6, "V/us")
+        )
+    for swing in found:
+        where = f"{swing.amplifier} ({names[swing.amplifier]})"
+        checks.append(
+            Check.at_most(
+                f"current of {where}", swing.current * 1e3, swing.current_limit * 1e3, "mA"
+            )
+        )
+    return tuple(checks)
+
+
+def drifts(circuit: Circuit) -> tuple[Drift, ...]:
+    """Integrators with no feedback at DC, and how fast offset and bias make them drift.
+
+    An integrator has DC feedback when its output finds a way back to its input through other
+    cells.  The rate is Vos/(R C) + Ib/C with R the parallel value of its input resistors.
+    """
+    graph = graph_of(circuit)
+    names = block_names(circuit)
+    reads = {b.name: {t.source for t in b.terms} for b in graph.blocks}
+    amplifiers = {a.ref: a for a in circuit.amplifiers}
+    out: list[Drift] = []
+    for cell in circuit.cells:
+        if cell.kind != "integrator" or _reaches_itself(names[cell.output], reads):
+            continue
+        figures = amplifiers[cell.amplifier].figures
+        capacitance = circuit.by_ref[cell.feedback].value
+        conductance = sum(1 / circuit.by_ref[r].value for r in cell.inputs)
+        rate = (figures.offset * conductance + figures.bias_current) / capacitance
+        out.append(Drift(amplifier=cell.amplifier, net=cell.output, rate=rate))
+    return tuple(out)
+
+
+def _reaches_itself(name: str, reads: dict[str, set[str]]) -> bool:
+    seen: set[str] = set()
+    waiting = set(reads[name])
+    while waiting:
+        source = waiting.pop()
+        if source == name:
+            return True
+        if source in reads and source not in seen:
+            seen.add(source)
+            waiting |= reads[source]
+    return False

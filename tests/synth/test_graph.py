@@ -1,0 +1,79 @@
+"""Block graphs refuse contradictions, and solve their signals accurately."""
+
+from __future__ import annotations
+
+from fractions import Fraction
+
+import numpy as np
+import pytest
+
+from synth.errors import GraphError
+from synth.graph import Block, BlockGraph, Term, merged_terms
+
+
+def lossy(weight: Fraction | float = Fraction(-3)) -> BlockGraph:
+    """x' = 6 u + weight x, y = 2 x + u."""
+    x = Block("x1", "integrator", (Term("in", Fraction(6)), Term("x1", weight)))
+    y = Block("y", "adder", (Term("x1", Fraction(2)), Term("in", Fraction(1))))
+    return BlockGraph("test", (x, y), "y")
+
+
+def test_state_matrices_are_exact() -> None:
+    """Adders are substituted, rationals stay rationals."""
+    A, B, C, D = lossy().state_matrices()
+    assert (A, B, C, D) == ([[-3]], [6], [2], 1)
+    assert all(isinstance(v, Fraction) for v in (A[0][0], B[0], C[0], D))
+
+
+def test_signals_and_injections_agree_with_hand_calculation() -> None:
+    """x/u = 6/(s+3); y = 2x + u; a disturbance of x reaches y by 2 s/(s+3)."""
+    s = np.array([1j, 5 + 2j, 100j])
+    signals = lossy().signals(s)
+    np.testing.assert_allclose(signals["x1"], 6 / (s + 3), rtol=1e-13)
+    np.testing.assert_allclose(signals["y"], 12 / (s + 3) + 1, rtol=1e-13)
+    injections = lossy().injections(s)
+    np.testing.assert_allclose(injections["x1"], 2 * s / (s + 3), rtol=1e-13)
+    np.testing.assert_allclose(injections["y"], np.ones(3), rtol=1e-13)
+
+
+def test_rescaling_keeps_the_response_and_moves_the_signal() -> None:
+    """Twice the level of x doubles x and leaves y."""
+    s = np.array([0.1j, 7j])
+    scaled = lossy().rescaled({"x1": 2.0})
+    np.testing.assert_allclose(scaled.at(s), lossy().at(s), rtol=1e-13)
+    np.testing.assert_allclose(scaled.signals(s)["x1"], 2 * lossy().signals(s)["x1"], rtol=1e-13)
+
+
+def test_merged_terms_add_up_and_vanish() -> None:
+    """Two terms of one source become one; a sum of zero disappears."""
+    terms = merged_terms([Term("in", 2.0), Term("x1", 1.0), Term("in", 3.0), Term("x1", -1.0)])
+    assert [(t.source, t.weight) for t in terms] == [("in", 5.0)]
+
+
+@pytest.mark.parametrize(
+    ("blocks", "output", "message"),
+    [
+        ([("x1", "integrator", "x9")], "x1", "unknown source 'x9'"),
+        ([("x1", "integrator", "in")], "y", "unknown output 'y'"),
+        ([("a", "adder", "b"), ("b", "adder", "a")], "a", "feed each other in a loop"),
+        ([("x1", "integrator", "in"), ("x1", "adder", "in")], "x1", "used twice"),
+        ([("in", "integrator", "x1")], "in", "got the block name 'in'"),
+        ([("x1", "gyrator", "in")], "x1", "got kind 'gyrator'"),
+    ],
+)
+def test_contradictions_are_refused(
+    blocks: list[tuple[str, str, str]], output: str, message: str
+) -> None:
+    """Each with its reason."""
+    with pytest.raises(GraphError, match=message):
+        BlockGraph("test", tuple(Block(n, k, (Term(s, 1.0),)) for n, k, s in blocks), output)
+
+
+def test_zero_weight_and_empty_blocks_are_refused() -> None:
+    """They would be parts of infinite value."""
+    with pytest.raises(GraphError, match="weight zero"):
+        Block("x1", "integrator", (Term("in", 0.0),))
+    with pytest.raises(GraphError, match="no input"):
+        Block("x1", "integrator", ())
+    with pytest.raises(GraphError, match="one source twice"):
+        Block("x1", "integrator", (Term("in", 1.0), Term("in", 2.0)))
