@@ -1,0 +1,14 @@
+"""What part tolerance does: runs of boards, first-order spread, intervals of a yield."""
+
+from synth.tolerance.boards import drawn_values, run_boards, tolerances_of
+from synth.tolerance.interval import clopper_pearson
+from synth.tolerance.spread import Spread, predicted_spread
+
+__all__ = [
+    "Spread",
+    "clopper_pearson",
+    "drawn_values",
+    "predicted_spread",
+    "run_boards",
+    "tolerances_of",
+]
