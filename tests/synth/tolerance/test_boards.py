@@ -125,9 +125,9 @@ def test_no_drawn_board_lies_beyond_the_extremes_of_its_corner():
 
 
 def test_phase_is_compared_modulo_a_turn():
-    """A third-order low-pass passes 180 deg inside the band, where the angles of board and target
+    """A fourth-order low-pass passes 180 deg inside the band, where the angles of board and target
     have opposite signs on many boards; the errors stay small all the same."""
-    circuit = chain(3, op_amp())
+    circuit = chain(4, op_amp())
     angle = np.angle(compile_circuit(circuit).solve(BAND), deg=True)
     assert angle.min() < -150
     assert angle.max() > 150
