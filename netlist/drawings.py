@@ -8,12 +8,17 @@ from __future__ import annotations
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
+import numpy as np
+
+from synth.evidence import DB_PER_NEPER
 from synth.results import Design
 
 if TYPE_CHECKING:
     from netlist.verification import Verification
 
-__all__ = ["Drawings"]
+__all__ = ["Drawings", "draw_all", "one_line"]
+
+LONGEST_TITLE = 100
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -37,3 +42,77 @@ class Drawings:
             "step": self.step,
             "swings": self.swings,
         }
+
+
+def draw_all(design: Design, verification: Verification) -> Drawings:
+    """Draw everything a pack shows."""
+    from netlist.blocks import draw_blocks
+    from netlist.plots import noise_plot, swing_chart
+    from netlist.schematic import draw_schematic
+
+    job, title = design.job, one_line(design.job.title)
+    sign = "output −H(s)" if design.inverted else "output H(s)"
+    return Drawings(
+        schematic=draw_schematic(
+            design.circuit,
+            title=title,
+            supply=job.board.supply,
+            subtitle=f"{design.form.replace('_', ' ')} form, order {job.target.order}, {sign}",
+        ),
+        blocks=draw_blocks(design.graph, title=title),
+        bode=_bode(design, verification, title),
+        noise=noise_plot(
+            design.noise.frequency_hz, design.noise.density, title="Noise density at the output"
+        ),
+        step=_step(design, verification),
+        swings=swing_chart(design.swings) if design.swings else "",
+    )
+
+
+def one_line(text: str) -> str:
+    """A title without control characters, on one line, not too long for a picture."""
+    kept = "".join(c if c.isprintable() else " " for c in text)
+    words = " ".join(kept.split())
+    return words if len(words) <= LONGEST_TITLE else words[: LONGEST_TITLE - 1].rstrip() + "…"
+
+
+def _bode(design: Design, verification: Verification, title: str) -> str:
+    from netlist.plots import bode_plot
+
+    simulated = verification.simulated if verification.failure is None else None
+    if simulated is not None and verification.frequency_hz is not None:
+        return bode_plot(
+            verification.frequency_hz,
+            design.wanted.response(verification.frequency_hz),
+            simulated,
+            tolerance=design.tolerance,
+            accept=design.job.accept,
+            title=title,
+        )
+    target = design.wanted.response(design.frequency_hz)
+    error = design.nominal
+    ratio = np.exp(error.magnitude_db / DB_PER_NEPER + 1j * np.radians(error.phase_deg))
+    return bode_plot(
+        design.frequency_hz,
+        target,
+        None,
+        tolerance=design.tolerance,
+        accept=design.job.accept,
+        title=title,
+        predicted=target * ratio,
+    )
+
+
+def _step(design: Design, verification: Verification) -> str:
+    from netlist.plots import step_plot
+
+    if verification.step is None:
+        return ""
+    job = design.job
+    return step_plot(
+        verification.step.time_s,
+        verification.step.voltages,
+        rails=job.board.supply,
+        output_net=design.circuit.output_net,
+        title=f"Step of {job.signal.input_peak:g} V at the input",
+    )

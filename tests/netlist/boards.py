@@ -5,11 +5,12 @@ from __future__ import annotations
 
 import math
 from dataclasses import replace
-from types import SimpleNamespace
 
 import numpy as np
 
 from netlist.drawings import Drawings
+from netlist.ngspice import TransientResult
+from netlist.verification import Verification
 from synth.circuit import Amplifier, Cell, Circuit, Passive
 from synth.evidence import Check, response_error
 from synth.graph import Block, BlockGraph, Term
@@ -200,29 +201,25 @@ def tolerance(made: Circuit, asked: Job, frequency: np.ndarray, boards: int) -> 
     )
 
 
-def verification(made: Design, *, failure: str | None = None) -> SimpleNamespace:
+def verification(made: Design, *, failure: str | None = None) -> Verification:
     """What the simulator would say: the nodal response as if simulated, or a failure."""
     if failure is not None:
-        names = "frequency_hz simulated target error operating_point step noise_rms"
-        return SimpleNamespace(
-            **dict.fromkeys(names.split()), nodal_disagreement=None, checks=(), failure=failure
-        )
+        return Verification(failure=failure)
     simulated = compile_circuit(made.circuit).solve(made.frequency_hz)
     target = made.wanted.response(made.frequency_hz)
     error = response_error(simulated, target)
     accept = made.job.accept
     time = np.linspace(0, 5e-3, 400)
     decay = np.exp(-W0 / (2 * Q) * time)
-    return SimpleNamespace(
+    return Verification(
         frequency_hz=made.frequency_hz,
         simulated=simulated,
         target=target,
         error=error,
         operating_point={"out": 0.0, "x1": 1e-9, "x2_n": 0.0},
-        step=(time, {"in": np.ones(400), "out": 1 - decay * np.cos(W0 * time)}),
+        step=TransientResult(time, {"in": np.ones(400), "out": 1 - decay * np.cos(W0 * time)}),
         noise_rms=made.noise.output_rms,
         nodal_disagreement=3e-9,
-        failure=None,
         checks=(
             Check.at_most("magnitude error", error.largest_db, accept.magnitude_db, "dB"),
             Check.at_most("phase error", error.largest_deg, accept.phase_deg, "deg"),

@@ -1,0 +1,196 @@
+"""The record of a design for other programs: what ``design.json`` holds.
+
+Numbers are in SI units unless the key ends in another one (``_hz``, ``_db``, ``_deg``, or the
+``unit`` beside a check); a number that does not exist is null, never NaN or Infinity.
+``target`` is H(s) as the job states it; with ``"inverted": true`` the output net shows -H(s).
+``components`` are the parts of the signal path on the board; what the job hangs on its
+terminals (source resistance, load) is under ``surroundings``.
+
+Without a simulation both checks that rest on it stay in the list, with ``"value": null`` and
+``"passed": false``: a script that asks for them by name finds them, and finds no pass.
+"""
+
+from __future__ import annotations
+
+import json
+import math
+from dataclasses import asdict
+from typing import TYPE_CHECKING, TypeAlias
+
+from synth.evidence import Check, verdict
+from synth.results import Candidate, Design
+
+if TYPE_CHECKING:
+    from netlist.verification import Verification
+
+__all__ = [
+    "FORMAT",
+    "all_checks",
+    "candidate_records",
+    "design_record",
+    "record_text",
+    "verdict_of",
+]
+
+FORMAT = 1
+Json: TypeAlias = "dict[str, Json] | list[Json] | str | float | bool | None"
+
+
+def all_checks(design: Design, verification: Verification) -> tuple[Check, ...]:
+    """Every check: those of the simulation first, then the predicted ones."""
+    if verification.failure is None:
+        return (*verification.checks, *design.checks)
+    accept = design.job.accept
+    note = "not simulated"
+    return (
+        Check("magnitude error", accept.magnitude_db, None, "dB", False, note),
+        Check("phase error", accept.phase_deg, None, "deg", False, note),
+        *design.checks,
+    )
+
+
+def verdict_of(design: Design, verification: Verification) -> str:
+    """``"pass"``, ``"fail"`` or ``"unverified"``."""
+    return verdict(all_checks(design, verification), verified=verification.failure is None)
+
+
+def design_record(design: Design, verification: Verification) -> dict[str, Json]:
+    """Everything about a design as plain dictionaries, lists, strings and numbers."""
+    job = design.job
+    record = {
+        "format": FORMAT,
+        "title": job.title,
+        "form": design.form,
+        "inverted": design.inverted,
+        "verdict": verdict_of(design, verification),
+        "target": {
+            "numerator": [float(c) for c in job.target.numerator],
+            "denominator": [float(c) for c in job.target.denominator],
+        },
+        "signal": {
+            "band_hz": list(job.signal.band_hz),
+            "input_peak": job.signal.input_peak,
+            "swing": job.signal.swing,
+        },
+        "supply": list(job.board.supply),
+        "op_amp": asdict(job.board.op_amp),
+        "components": _components(design),
+        "surroundings": _surroundings(design),
+        "checks": [_check(c) for c in all_checks(design, verification)],
+        "yield": _yield(design),
+        "nominal": {
+            "rms_error": design.nominal.rms,
+            "nearest_rms_error": design.nearest.rms,
+        },
+        "noise": {
+            "band_hz": list(job.signal.band_hz),
+            "output_rms_v": design.noise.output_rms,
+        },
+        "swing": [asdict(s) for s in design.swings],
+        "drift": [asdict(d) for d in design.drifts],
+        "forms": candidate_records(design.candidates),
+        "simulation": _simulation(verification),
+        "notices": list(dict.fromkeys((*job.notices, *design.notices))),
+    }
+    return {key: _finite(value) for key, value in record.items()}
+
+
+def candidate_records(candidates: tuple[Candidate, ...]) -> list[Json]:
+    """The forms considered, as plain dictionaries."""
+    return [_finite(asdict(c)) for c in candidates]
+
+
+def record_text(record: object) -> str:
+    """A record as JSON text with a final newline; the same record gives the same text."""
+    return json.dumps(_finite(record), indent=1, ensure_ascii=False, allow_nan=False) + "\n"
+
+
+def _components(design: Design) -> list[dict[str, object]]:
+    passives: list[dict[str, object]] = [
+        {
+            "ref": p.ref,
+            "kind": p.kind,
+            "value": p.value,
+            "ideal": p.ideal,
+            "series": p.rule.series if p.rule else None,
+            "tolerance": p.tolerance,
+            "nets": list(p.nets),
+            "sets": p.sets,
+        }
+        for p in design.circuit.bought
+    ]
+    amplifiers: list[dict[str, object]] = [
+        {
+            "ref": a.ref,
+            "kind": "op_amp",
+            "value": None,
+            "ideal": None,
+            "series": None,
+            "tolerance": None,
+            "nets": [a.plus, a.minus, a.output],
+            "sets": a.sets,
+        }
+        for a in design.circuit.amplifiers
+    ]
+    return [*passives, *amplifiers]
+
+
+def _surroundings(design: Design) -> list[dict[str, object]]:
+    return [
+        {"ref": p.ref, "kind": p.kind, "value": p.value, "nets": list(p.nets), "is": p.sets}
+        for p in design.circuit.passives
+        if not p.on_board
+    ]
+
+
+def _check(check: Check) -> dict[str, object]:
+    return {
+        "name": check.name,
+        "limit": check.limit,
+        "value": check.value,
+        "unit": check.unit,
+        "passed": bool(check.passed),
+        "note": check.note,
+    }
+
+
+def _yield(design: Design) -> dict[str, object]:
+    run = design.tolerance
+    return {
+        "boards": run.boards,
+        "frequencies": len(run.frequency_hz),
+        "passed": run.passed,
+        "share": run.share,
+        "low": run.low,
+        "high": run.high,
+        "confidence": run.confidence,
+        "error_95_db": run.error_95_db,
+        "seed": run.seed,
+    }
+
+
+def _simulation(verification: Verification) -> dict[str, object]:
+    done = verification.failure is None
+    return {
+        "done": done,
+        "failure": verification.failure,
+        "rms_error": verification.error.rms if done and verification.error is not None else None,
+        "nodal_disagreement": verification.nodal_disagreement,
+        "noise_rms_v": verification.noise_rms,
+        "operating_point_v": dict(sorted((verification.operating_point or {}).items())),
+    }
+
+
+def _finite(value: object) -> Json:
+    """`value` in plain Python types, numbers that are not finite as None."""
+    if isinstance(value, dict):
+        return {str(k): _finite(v) for k, v in value.items()}
+    if isinstance(value, (list, tuple)):
+        return [_finite(v) for v in value]
+    if value is None or isinstance(value, (str, bool, int)):
+        return value
+    if hasattr(value, "item"):  # a numpy scalar
+        return _finite(value.item())
+    if isinstance(value, float):
+        return value if math.isfinite(value) else None
+    raise TypeError(f"got a {type(value).__name__}, expected a number, text, list or dictionary")

@@ -1,0 +1,180 @@
+"""What was found, ready for the page: checks with their margins, values, swing, tolerance,
+noise, DC, parts.  Every cell is text; nothing here computes a result."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+
+from netlist.partslist import PartLine
+from netlist.report.wording import NONE, decibel, number, percent, quantity, spelled, stated
+from synth.circuit import Circuit
+from synth.evidence import Check
+from synth.results import Candidate, Design, Drift, Swing
+
+__all__ = [
+    "check_rows",
+    "drift_rows",
+    "form_rows",
+    "largest_noise",
+    "margin",
+    "part_rows",
+    "swing_rows",
+    "value_rows",
+]
+
+Row = dict[str, object]
+
+
+def margin(check: Check) -> float | None:
+    """How far a value is inside its limit, negative outside, in the unit of the check."""
+    if check.limit is None or check.value is None:
+        return None
+    # A value below the limit passes when the limit is the most, and fails when it is the least.
+    at_most = (check.value <= check.limit) == check.passed
+    return check.limit - check.value if at_most else check.value - check.limit
+
+
+def check_rows(checks: Iterable[Check]) -> list[Row]:
+    """Name, limit, value, margin and result of each check."""
+    rows: list[Row] = []
+    for check in checks:
+        left = margin(check)
+        share = f" ({number(100 * left / check.limit, 2)} %)" if left and check.limit else ""
+        result = "pass" if check.passed else "FAIL"
+        if check.value is None:
+            result = "no value"
+        elif check.limit is None:
+            result = "no limit"
+        rows.append(
+            {
+                "name": check.name,
+                "limit": "none" if check.limit is None else _limit(check.limit, check.unit),
+                "value": NONE if check.value is None else _with(check.value, check.unit),
+                "margin": NONE if left is None else _with(left, check.unit) + share,
+                "result": result,
+                "passed": check.passed,
+                "limited": check.limit is not None,
+                "note": check.note,
+            }
+        )
+    return rows
+
+
+def form_rows(candidates: Iterable[Candidate], chosen: str) -> list[Row]:
+    """The forms considered."""
+    return [
+        {
+            "form": spelled(c.form),
+            "chosen": c.form == chosen,
+            "possible": c.possible,
+            "op_amps": NONE if c.op_amps is None else str(c.op_amps),
+            "spread_db": decibel(c.spread_db),
+            "spread_deg": decibel(c.spread_deg),
+            "reason": c.reason,
+        }
+        for c in candidates
+    ]
+
+
+def swing_rows(swings: Iterable[Swing], circuit: Circuit) -> list[Row]:
+    """What each op-amp output does at the stated input."""
+    return [
+        {
+            "amplifier": s.amplifier,
+            "net": s.net,
+            "block": _block(circuit, s.amplifier),
+            "peak": number(s.peak),
+            "peak_limit": number(s.peak_limit),
+            "peak_bad": s.peak > s.peak_limit,
+            "at": "any waveform" if s.peak_hz is None else quantity(s.peak_hz, "Hz"),
+            "slew": number(s.slew / 1e6),
+            "slew_limit": number(s.slew_limit / 1e6),
+            "slew_bad": s.slew > s.slew_limit,
+            "current": number(s.current * 1e3),
+            "current_limit": number(s.current_limit * 1e3),
+            "current_bad": s.current > s.current_limit,
+        }
+        for s in swings
+    ]
+
+
+def value_rows(circuit: Circuit) -> list[Row]:
+    """Each resistor and capacitor: what it sets, the value asked for and the one chosen."""
+    rows: list[Row] = []
+    for part in circuit.bought:
+        unit = "Ω" if part.kind == "resistor" else "F"
+        rows.append(
+            {
+                "ref": part.ref,
+                "sets": part.sets or NONE,
+                "nets": f"{part.nets[0]} – {part.nets[1]}",
+                "ideal": quantity(part.ideal, unit, 5),
+                "value": stated(part.value, unit),
+                "off": percent(part.value / part.ideal - 1, 2),
+                "rule": f"{part.rule.series}, {stated(part.tolerance, '%')}" if part.rule else NONE,
+            }
+        )
+    return rows
+
+
+def largest_noise(design: Design, count: int = 8) -> list[Row]:
+    """The parts that make the most of the output noise, by falling share of its power."""
+    shares = sorted(design.noise.shares.items(), key=lambda item: (-item[1], item[0]))
+    sets = {p.ref: p.sets for p in design.circuit.passives}
+    sets |= {a.ref: a.sets or f"op-amp at net {a.output}" for a in design.circuit.amplifiers}
+    return [
+        {"ref": ref, "share": percent(share, 2), "sets": sets.get(ref, NONE)}
+        for ref, share in shares[:count]
+        if share > 0
+    ]
+
+
+def drift_rows(drifts: Iterable[Drift]) -> list[Row]:
+    """Integrators without DC feedback and how fast they run away on their own."""
+    return [
+        {"amplifier": d.amplifier, "net": d.net, "rate": quantity(d.rate, "V/s")} for d in drifts
+    ]
+
+
+def part_rows(lines: Iterable[PartLine]) -> list[Row]:
+    """The parts list."""
+    rows: list[Row] = []
+    for line in lines:
+        unit = "Ω" if line.kind == "resistor" else "F"
+        code, _, rest = line.marking.partition(" ")
+        valued = line.value is not None
+        tolerance = "" if line.tolerance is None else stated(line.tolerance, "%")
+        rows.append(
+            {
+                "refs": " ".join(line.refs),
+                "quantity": str(line.quantity),
+                "kind": spelled(line.kind),
+                "value": stated(line.value, unit) if valued else "",
+                "marking": code if valued else "",
+                "type": rest if valued else spelled(line.marking),
+                "rule": ", ".join(filter(None, (line.series, tolerance))),
+                "note": line.note,
+            }
+        )
+    return rows
+
+
+def _with(value: float, unit: str) -> str:
+    """A value of a check with its unit, as plain as its table of limits wants it."""
+    text = decibel(value) if unit in ("dB", "deg") else number(value, 4)
+    return f"{text}\N{NO-BREAK SPACE}{unit.replace('us', 'µs')}".strip()
+
+
+def _limit(limit: float, unit: str) -> str:
+    """A limit as it was stated."""
+    text = number(limit, 6)
+    text = text.rstrip("0").rstrip(".") if "." in text and "·" not in text else text
+    return f"{text}\N{NO-BREAK SPACE}{unit.replace('us', 'µs')}".strip()
+
+
+def _block(circuit: Circuit, amplifier: str) -> str:
+    """Which block an op-amp belongs to, in words."""
+    cell = circuit.cell_of(amplifier)
+    if cell is None:
+        return NONE
+    return f"inverter of {cell.block}" if cell.kind == "inverter" else f"{cell.kind} {cell.block}"

@@ -1,0 +1,184 @@
+"""The report tells the truth, shows hostile text as text, and needs nothing but itself."""
+
+from __future__ import annotations
+
+import re
+import xml.etree.ElementTree as ET
+from dataclasses import replace
+from html.parser import HTMLParser
+
+import pytest
+
+from netlist.partslist import parts_list
+from netlist.report.found import margin
+from netlist.report.page import headline, inlined, report_page
+from netlist.report.wording import decibel, number, quantity, stated
+from synth.evidence import Check
+from tests.netlist import boards
+
+HOSTILE = "<script>alert(1)</script> & \"quotes\" 'single' {{ 7*7 }}\nline\x00\x1b[31m"
+
+
+class Page(HTMLParser):
+    """Collects tags with their attributes, ids and the text between tags."""
+
+    VOID = frozenset({"meta", "path", "rect", "line", "circle", "use", "br"})
+
+    def __init__(self, text):
+        super().__init__()
+        self.tags, self.ids, self.open, self.words = [], [], [], []
+        self.feed(text)
+        self.close()
+
+    def handle_starttag(self, tag, attrs):
+        self.tags.append((tag, dict(attrs)))
+        self.ids += [v for k, v in attrs if k == "id"]
+        if tag not in self.VOID:
+            self.open.append(tag)
+
+    def handle_startendtag(self, tag, attrs):
+        self.tags.append((tag, dict(attrs)))
+        self.ids += [v for k, v in attrs if k == "id"]
+
+    def handle_endtag(self, tag):
+        if tag not in self.VOID:
+            assert self.open.pop() == tag
+
+    def handle_data(self, data):
+        self.words.append(data)
+
+    @property
+    def text(self):
+        return " ".join(" ".join(self.words).split())
+
+
+def page(*, failure=None, **changes):
+    made = boards.design(**changes)
+    return report_page(
+        made,
+        boards.verification(made, failure=failure),
+        drawings=boards.drawings(),
+        lines=parts_list(made.circuit, supply=made.job.board.supply),
+        job_name="low-pass.toml",
+    )
+
+
+def test_every_tag_is_closed_and_no_id_is_used_twice():
+    found = Page(page())
+    assert found.open == []
+    assert len(found.ids) == len(set(found.ids))
+
+
+def test_nothing_is_loaded_from_elsewhere():
+    text = page()
+    for tag, attributes in Page(text).tags:
+        assert tag not in ("link", "iframe", "img", "object", "base")
+        assert "src" not in attributes
+        for name in ("href", "xlink:href", "action"):
+            assert attributes.get(name, "#").startswith("#")
+    assert "@import" not in text
+    assert not re.search(r"url\((?!#)", text)
+
+
+def test_hostile_text_in_the_title_and_notices_stays_text():
+    text = page(title=HOSTILE, notices=(HOSTILE,))
+    found = Page(text)
+    assert sum(tag == "script" for tag, _ in found.tags) == 2
+    assert "<script>alert" not in text
+    assert "{{ 7*7 }}" in found.text
+    assert "\x00" not in text
+    assert "\x1b" not in text
+
+
+def test_a_pass_says_pass_and_no_warning_banner():
+    text = page()
+    assert 'class="stamp pass"' in text
+    assert 'class="banner"' not in text
+
+
+def test_unverified_has_a_banner_with_the_reason_and_what_to_do():
+    found = Page(page(failure="the ngspice library is not installed"))
+    assert "NOT VERIFIED" in found.text
+    assert "the ngspice library is not installed" in found.text
+    assert "apt-get install" in found.text
+    assert found.text.index("NOT VERIFIED") < found.text.index("boards within limits")
+    assert ("class", "stamp unverified") in [p for _, a in found.tags for p in a.items()]
+
+
+def test_a_yield_below_nine_in_ten_without_a_limit_draws_a_warning():
+    assert "only 86.67" in Page(page(boards=60)).text
+    assert "No limit on the yield is stated" not in page(boards=1000)
+
+
+def test_the_assumption_stands_beside_the_yield():
+    assert "rests on an assumption" in page()
+
+
+@pytest.mark.parametrize(
+    "word",
+    [
+        "15.8\xa0kΩ",
+        "coupling from x1 into x2",
+        "10n",
+        "C0G 50V",
+        "16.2\xa0V/s",
+        "--seed 1",
+        "Clopper",
+    ],
+)
+def test_what_a_review_asks_for_is_on_the_page(word):
+    assert word in " ".join(Page(page()).words)
+
+
+def test_the_same_design_gives_the_same_page():
+    assert page() == page()
+
+
+def test_a_drawing_keeps_its_ids_and_its_style_to_itself():
+    drawn = str(inlined(boards.drawings().bode, "bode"))
+    assert drawn.startswith("<svg")
+    assert 'id="bode-patch_2"' in drawn
+    assert "#drawing-bode svg * {" in drawn
+    ET.fromstring(drawn)
+
+
+def test_a_missed_limit_is_named_in_the_headline():
+    checks = (Check("a", 1.0, 2.0, "V", False), Check("b", 1.0, 0.5, "V", True))
+    assert headline(checks, "fail") == "1 of 2 limits missed: a."
+    assert "1 of 1" in headline(checks[1:], "pass")
+
+
+@pytest.mark.parametrize(
+    ("check", "expected"),
+    [
+        (Check.at_most("x", 2.0, 3.0, "V"), 1.0),
+        (Check.at_most("x", 4.0, 3.0, "V"), -1.0),
+        (Check.at_least("x", 99.0, 95.0, "%"), 4.0),
+        (Check.at_least("x", 90.0, 95.0, "%"), -5.0),
+        (Check.at_most("x", 3.0, 3.0, "V"), 0.0),
+        (Check.at_most("x", 3.0, None, "V"), None),
+    ],
+)
+def test_a_margin_is_positive_inside_the_limit_whichever_way_it_points(check, expected):
+    assert margin(check) == expected
+
+
+def test_numbers_read_well_and_round_up_across_a_prefix():
+    assert quantity(999.96, "Hz", 4) == "1.000\xa0kHz"
+    assert quantity(-0.002, "V") == "−2.00\xa0mV"
+    assert number(float("nan")) == "–"
+    assert number(9.999e5) == "1000000"
+    assert decibel(1e-9) == "0.0000"
+    assert stated(47e-9, "F") == "47\xa0nF"
+    assert stated(100.0, "Hz") == "100\xa0Hz"
+
+
+def test_what_was_not_measured_is_a_dash_not_a_crash():
+    made = replace(boards.design(), swings=(), drifts=(), candidates=())
+    text = report_page(
+        made,
+        boards.verification(made, failure="x"),
+        drawings=boards.drawings(),
+        lines=(),
+    )
+    assert "none drifts to a rail by itself" in text
