@@ -1,0 +1,5 @@
+"""``python -m netlist.cli`` is ``polewright``."""
+
+from netlist.cli import main
+
+main()

@@ -1,0 +1,117 @@
+"""What the commands print for a person: short tables of plain text."""
+
+from __future__ import annotations
+
+import sys
+from collections.abc import Iterable, Sequence
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+import click
+
+from netlist.cli.progress import colour_on
+from netlist.cli.running import say
+from netlist.partslist import packages
+from netlist.records import all_checks, verdict_of
+from netlist.report.found import check_rows, form_rows
+from netlist.report.page import LOW_YIELD
+from netlist.report.wording import percent, spelled, stated
+from synth.results import Candidate, Design
+
+if TYPE_CHECKING:
+    from netlist.verification import Verification
+
+__all__ = ["EXIT_CODES", "forms_table", "summary", "warn"]
+
+EXIT_CODES = {"pass": 0, "fail": 1, "unverified": 3}
+_COLOURS = {"pass": "green", "fail": "red", "unverified": "yellow"}
+
+
+def summary(design: Design, verification: Verification, *, folder: Path) -> str:
+    """The design in a dozen lines: form, parts, each check, where the pack is."""
+    outcome = verdict_of(design, verification)
+    circuit, run = design.circuit, design.tolerance
+    kinds = [p.kind for p in circuit.bought]
+    chips = packages(circuit.amplifiers)
+    limit = "" if design.job.accept.yield_share is not None else ", no limit stated"
+    facts = (
+        ("verdict", _coloured(outcome.upper(), _COLOURS[outcome])
+         + f", {percent(run.share, 4)} of boards within limits"),
+        ("form", spelled(design.form) + (", output inverted" if design.inverted else "")),
+        ("op-amps", f"{len(circuit.amplifiers)} in {_counted(len(chips), 'package')}"),
+        ("parts", f"{_counted(kinds.count('resistor'), 'resistor')}, "
+         f"{_counted(kinds.count('capacitor'), 'capacitor')}"),
+        ("yield", f"{run.passed} of {run.boards} boards, "
+         f"{percent(run.low, 4)} to {percent(run.high, 4)} at {stated(run.confidence, '%')} "
+         f"confidence{limit}"),
+    )  # fmt: skip
+    rows = [
+        (str(r["name"]), str(r["limit"]), str(r["value"]), str(r["result"]), str(r["note"]))
+        for r in check_rows(all_checks(design, verification))
+    ]
+    lines = [
+        _printable(design.job.title),
+        *(f"  {name:<9}{text}" for name, text in facts),
+        "",
+        *_table(("check", "limit", "value", "result", ""), rows),
+        "",
+        f"  pack     {_printable(str(folder))}",
+    ]
+    return _plain_spaces("\n".join(lines) + "\n")
+
+
+def forms_table(chosen: str, candidates: Iterable[Candidate]) -> str:
+    """The forms side by side."""
+    rows = [
+        (
+            str(r["form"]),
+            "yes" if r["possible"] else "no",
+            str(r["op_amps"]),
+            str(r["spread_db"]),
+            str(r["spread_deg"]),
+            "chosen" if r["chosen"] else "",
+            str(r["reason"]),
+        )
+        for r in form_rows(candidates, chosen)
+    ]
+    header = ("form", "possible", "op-amps", "spread, dB", "spread, deg", "", "reason")
+    return _plain_spaces("\n".join(_table(header, rows)) + "\n")
+
+
+def warn(design: Design, verification: Verification) -> None:
+    """What the user should know, on standard error."""
+    for notice in dict.fromkeys((*design.job.notices, *design.notices)):
+        say(f"warning: {notice}")
+    share = design.tolerance.share
+    if design.job.accept.yield_share is None and share < LOW_YIELD:
+        say(f"warning: only {_plain_spaces(percent(share, 4))} of the boards meet the limits")
+    if verification.failure is not None:
+        say(f"not verified: {verification.failure}")
+        say("the pack is written and marked unverified; repeat the command once ngspice runs")
+
+
+def _table(header: Sequence[str], rows: Sequence[Sequence[str]]) -> list[str]:
+    """Columns of equal width, two spaces apart."""
+    cells = [[_printable(c) for c in row] for row in (header, *rows)]
+    widths = [max(len(row[k]) for row in cells) for k in range(len(header))]
+    return [
+        ("  " + "  ".join(c.ljust(w) for c, w in zip(row, widths, strict=True))).rstrip()
+        for row in cells
+    ]
+
+
+def _coloured(text: str, colour: str) -> str:
+    return click.style(text, fg=colour, bold=True) if colour_on(sys.stdout) else text
+
+
+def _counted(number: int, noun: str) -> str:
+    return f"{number} {noun}{'' if number == 1 else 's'}"
+
+
+def _printable(text: str) -> str:
+    """`text` without what could steer a terminal."""
+    return "".join(c if c.isprintable() or c == "\N{NO-BREAK SPACE}" else " " for c in text)
+
+
+def _plain_spaces(text: str) -> str:
+    return text.replace("\N{NO-BREAK SPACE}", " ")
