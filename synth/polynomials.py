@@ -5,10 +5,11 @@ The empty tuple is the zero polynomial; every other one has a nonzero leading co
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable, Sequence
 from fractions import Fraction
 
-from synth.errors import NumericalError
+from synth.polynomial_roots import separated_roots
 
 __all__ = [
     "Polynomial",
@@ -25,6 +26,7 @@ __all__ = [
 ]
 
 Polynomial = tuple[Fraction, ...]
+_PRIME = 2**61 - 1
 
 
 def trimmed(coefficients: Sequence[Fraction]) -> Polynomial:
@@ -78,11 +80,61 @@ def divide(p: Polynomial, q: Polynomial) -> tuple[Polynomial, Polynomial]:
 
 
 def greatest_common_divisor(p: Polynomial, q: Polynomial) -> Polynomial:
-    """The monic greatest common divisor (Euclid); (1,) when coprime."""
-    while q:
-        _, remainder = divide(p, q)
-        p, q = q, tuple(c / remainder[0] for c in remainder)
-    return tuple(c / p[0] for c in p)
+    """The monic greatest common divisor; (1,) when coprime, () of two zero polynomials.
+
+    Euclid on primitive integer polynomials, after a test modulo a prime that settles most
+    coprime pairs at once.
+    """
+    a, b = _primitive(p), _primitive(q)
+    if a and b and _coprime_modulo_prime(a, b):
+        return (Fraction(1),)
+    while b:
+        a, b = b, _primitive(_pseudo_remainder(a, b))
+    return tuple(Fraction(c, a[0]) for c in a)
+
+
+def _primitive(p: Sequence[Fraction | int]) -> tuple[int, ...]:
+    """The multiple of p whose coefficients are integers without a common factor."""
+    if not p:
+        return ()
+    common = math.lcm(*(c.denominator for c in p))
+    whole = [c.numerator * (common // c.denominator) for c in p]
+    content = math.gcd(*whole)
+    return tuple(c // content for c in whole)
+
+
+def _pseudo_remainder(p: Sequence[int], q: Sequence[int]) -> tuple[int, ...]:
+    """The remainder of p / q times a nonzero integer, q nonzero."""
+    rest = list(p)
+    while len(rest) >= len(q):
+        lead = rest[0]
+        rest = [q[0] * c for c in rest]
+        for k, c in enumerate(q):
+            rest[k] -= lead * c
+        del rest[0]
+    start = next((k for k, c in enumerate(rest) if c), len(rest))
+    return tuple(rest[start:])
+
+
+def _coprime_modulo_prime(p: Sequence[int], q: Sequence[int]) -> bool:
+    """Whether p and q are coprime modulo one large prime, which proves them coprime.
+
+    A common divisor keeps its degree modulo a prime that does not divide a leading
+    coefficient; False proves nothing.
+    """
+    a, b = [c % _PRIME for c in p], [c % _PRIME for c in q]
+    if not a[0] or not b[0]:
+        return False
+    while b:
+        inverse = pow(b[0], -1, _PRIME)
+        while len(a) >= len(b):
+            factor = a[0] * inverse % _PRIME
+            for k, c in enumerate(b):
+                a[k] = (a[k] - factor * c) % _PRIME
+            del a[0]
+        start = next((k for k, c in enumerate(a) if c), len(a))
+        a, b = b, a[start:]
+    return len(a) == 1
 
 
 def derivative(p: Polynomial) -> Polynomial:
@@ -119,34 +171,23 @@ def squarefree_parts(p: Polynomial) -> list[tuple[Polynomial, int]]:
 def simple_roots(p: Polynomial) -> list[complex]:
     """Roots of a monic polynomial without repeated roots, each correct to a double.
 
-    A complex root comes with its exact conjugate; a real one has imaginary part 0.
+    Real and imaginary part are each correct.  A complex root follows its exact conjugate; a
+    real root has imaginary part 0, one on the imaginary axis has real part 0.
 
     Raises
     ------
     NumericalError
-        The roots lie so close together that 400 digits do not separate them.
+        The roots lie too close together to be separated, or beyond the range of a double.
     """
-    import mpmath
-
-    for digits in (50, 120, 400):
-        with mpmath.workdps(digits):
-            # Scaled to a geometric mean of 1, so that powers of large roots stay harmless.
-            n = len(p) - 1
-            last = mpmath.mpf(abs(p[-1]).numerator) / abs(p[-1]).denominator
-            scale = mpmath.root(last, n)
-            scaled = [mpmath.mpf(c.numerator) / c.denominator / scale**k for k, c in enumerate(p)]
-            try:
-                found = mpmath.polyroots(scaled, maxsteps=60 + digits, extraprec=4 * digits)
-            except mpmath.libmp.libhyper.NoConvergence:
-                continue
-            roots = [complex(r * scale) for r in found]
-            tiny = mpmath.mpf(10) ** (-digits // 2)
-            real = [abs(mpmath.im(r)) <= tiny * abs(r) for r in found]
-        reals = [complex(r.real) for r, is_real in zip(roots, real, strict=True) if is_real]
-        above = [r for r, is_real in zip(roots, real, strict=True) if not is_real and r.imag > 0]
-        if len(reals) + 2 * len(above) == n:
-            return reals + [z for r in above for z in (r.conjugate(), r)]
-    raise NumericalError(
-        "the roots of a polynomial could not be separated; state the target by its "
-        "zeros and poles instead"
-    )
+    if not p[-1]:
+        return [0j, *simple_roots(p[:-1])]
+    # Roots that have their mirror image in the origin, among them every pair on the imaginary
+    # axis, are those of the common divisor of the even and the odd part.
+    n = len(p) - 1
+    even = trimmed([c if (n - k) % 2 == 0 else Fraction(0) for k, c in enumerate(p)])
+    mirrored = greatest_common_divisor(even, subtract(p, even))
+    rest, _ = divide(p, mirrored)
+    roots = [*separated_roots(mirrored, mirrored=True), *separated_roots(rest)]
+    reals = sorted((r for r in roots if r.imag == 0), key=abs)
+    above = sorted((r for r in roots if r.imag > 0), key=abs)
+    return reals + [z for r in above for z in (r.conjugate(), r)]

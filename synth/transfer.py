@@ -123,7 +123,15 @@ class TransferFunction:
         zero_factors: Iterable[Factor],
         pole_factors: Iterable[Factor],
     ) -> TransferFunction:
-        """H(s) from its leading gain (of numerator over monic denominator) and real factors."""
+        """H(s) from its leading gain (of numerator over monic denominator) and real factors.
+
+        Raises
+        ------
+        TargetError
+            A gain of zero.
+        """
+        if not gain:
+            raise TargetError("got a gain of zero, expected a nonzero number")
         zeros, poles = tuple(zero_factors), tuple(pole_factors)
         numerator = polynomials.product([(Fraction(gain),), *(z.coefficients for z in zeros)])
         denominator = polynomials.product([(Fraction(1),), *(p.coefficients for p in poles)])
@@ -141,6 +149,8 @@ class TransferFunction:
         ------
         TargetError
             A zero numerator or denominator.
+        NumericalError
+            Roots that cannot be told apart, or beyond the range of a double.
         """
         num = polynomials.trimmed([Fraction(c) for c in numerator])
         den = polynomials.trimmed([Fraction(c) for c in denominator])
