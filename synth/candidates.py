@@ -80,7 +80,7 @@ def sketch_form(job: Job, form: str, frequency_hz: Real) -> Sketch:
     circuit = map_graph(scaled.graph, polarity, scaled.sizing, job)
     tolerances = np.array([p.tolerance for p in circuit.passives])
     sensitivities = compile_circuit(circuit).sensitivities(few)
-    spread_db, spread_deg = predicted_spread(sensitivities, tolerances)
+    spread = predicted_spread(sensitivities, tolerances)
     return Sketch(
         form=form,
         graph=scaled.graph,
@@ -88,8 +88,8 @@ def sketch_form(job: Job, form: str, frequency_hz: Real) -> Sketch:
         polarity=polarity,
         peaks=peaks,
         circuit=circuit,
-        spread_db=float(np.max(spread_db)),
-        spread_deg=float(np.max(spread_deg)),
+        spread_db=float(np.max(spread.magnitude_db)),
+        spread_deg=float(np.max(spread.phase_deg)),
     )
 
 

@@ -8,18 +8,18 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.choosing.grid import ValueGrid
-from synth.choosing.model import LevelLimits, LinearModel
+from synth.choosing.model import LevelLimits, LinearModel, compensation
 from synth.choosing.search import search_values
 from synth.circuit import Circuit
 from synth.nodal import compile_circuit
 
-__all__ = ["DEFAULT_DESCENTS", "Choice", "choose_values"]
+__all__ = ["DEFAULT_EFFORT", "Choice", "choose_values"]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
 
-# Kicks of the search: about a second on one core at order 4.
-DEFAULT_DESCENTS = 800
+# Pairs of steps the search evaluates: about a second on one core.
+DEFAULT_EFFORT = 60_000_000
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -34,7 +34,7 @@ class Choice:
     nearest
         With each ideal value of the start rounded to its nearest neighbour.
     looked
-        How many neighbourhoods of values the search evaluated.
+        How many pairs of steps along the series the search evaluated.
     """
 
     circuit: Circuit
@@ -49,7 +49,7 @@ def choose_values(
     frequency_hz: Real,
     level_limits: dict[str, tuple[float, float]] | None = None,
     seed: int = 1,
-    descents: int = DEFAULT_DESCENTS,
+    effort: int = DEFAULT_EFFORT,
 ) -> Choice:
     """Values from the series of every part, for the least error of the whole response.
 
@@ -66,8 +66,8 @@ def choose_values(
         may still rise.
     seed
         Of the random kicks.
-    descents
-        How many kicks; more take longer and find better values.
+    effort
+        Pairs of steps the search evaluates; more take longer and find better values.
     """
     program = compile_circuit(circuit)
     grid = ValueGrid(circuit.passives)
@@ -80,7 +80,7 @@ def choose_values(
         frequency_hz=frequency_hz,
         limits=_limits(program.circuit, ideal, level_limits or {}),
         seed=seed,
-        descents=descents,
+        effort=effort,
     )
     chosen = _with(circuit, grid.values_at(outcome.index))
     return Choice(
@@ -119,8 +119,7 @@ def _with_ideals(circuit: Circuit, grid: ValueGrid, target: Complex, frequency_h
     free = grid.resistors
     for _ in range(2):
         model = LinearModel.about(compile_circuit(circuit), np.exp(logs), target, frequency_hz)
-        change = np.linalg.pinv(model.matrix[:, free], rcond=1e-6) @ model.offset
-        logs[free] -= change
+        logs[free] -= compensation(model.matrix[:, free]) @ model.offset
     return replace(
         circuit,
         passives=tuple(

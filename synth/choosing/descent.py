@@ -53,6 +53,11 @@ class Neighbourhood:
     def _same_part(self) -> NDArray[np.bool_]:
         return np.equal.outer(self._part, self._part)
 
+    @property
+    def pairs(self) -> int:
+        """Pairs of steps one look evaluates, the quads counted as such."""
+        return self._part.size**2 + self.quads**2
+
     def descend(self, index: Index) -> tuple[Index, float, int]:
         """A local minimum from `index`: index vector, |residual|^2, and how many
         neighbourhoods were looked at."""

@@ -16,13 +16,24 @@ from numpy.typing import NDArray
 
 from synth.nodal import NodalProgram
 
-__all__ = ["LevelLimits", "LinearModel", "mean_square_error"]
+__all__ = ["LevelLimits", "LinearModel", "compensation", "mean_square_error"]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
 
 # Singular values below this share of the largest are directions that do not move ln H.
 NEGLIGIBLE = 1e-9
+
+
+# Residuals are made up for along directions that move ln H by more than this per unit of ln p;
+# weaker ones (what the finite gain of the op-amps lets through) would need huge changes.
+RIDGE = 3e-3
+
+
+def compensation(matrix: Real) -> Real:
+    """G so that d = -G r makes |matrix d + r|^2 + (RIDGE |d|)^2 least, shape (P, K)."""
+    left, singular, right = np.linalg.svd(matrix, full_matrices=False)
+    return np.asarray((right.T * (singular / (singular**2 + RIDGE**2))) @ left.T)
 
 
 @dataclass(frozen=True, eq=False)
@@ -82,9 +93,13 @@ class LevelLimits:
     slack: Real
     reference: Real
 
+    def excess(self, logs: Real) -> Real:
+        """By how much the ln of each output's peak passes its ceiling, negative below it."""
+        return np.asarray(self.matrix @ (logs - self.reference) - self.slack)
+
     def hold(self, logs: Real) -> bool:
         """Whether every output stays below its ceiling at ln p = `logs`."""
-        return bool(np.all(self.matrix @ (logs - self.reference) <= self.slack + 1e-12))
+        return bool(np.all(self.excess(logs) <= 1e-12))
 
 
 def mean_square_error(

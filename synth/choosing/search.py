@@ -17,7 +17,12 @@ from numpy.typing import NDArray
 
 from synth.choosing.descent import Neighbourhood
 from synth.choosing.grid import ValueGrid
-from synth.choosing.model import LevelLimits, LinearModel, mean_square_error
+from synth.choosing.model import (
+    LevelLimits,
+    LinearModel,
+    compensation,
+    mean_square_error,
+)
 from synth.nodal import NodalProgram
 
 __all__ = ["SearchOutcome", "search_values"]
@@ -29,6 +34,12 @@ Index = NDArray[np.intp]
 # Size of the kicks in each round, as a ratio of the value.
 KICKS = (0.25, 0.12, 0.06, 0.04)
 
+# Room below the ceilings that a kick leaves for the descent, in ln.
+HEADROOM = 0.02
+
+# What a kick costs beside the neighbourhoods it leads to, in pairs of steps.
+PAIRS_PER_KICK = 10_000
+
 # How many candidates of a round the nodal engine judges.
 CANDIDATES = 24
 
@@ -38,7 +49,7 @@ class SearchOutcome:
     """The chosen values, their error, and the work it took.
 
     `index` is into the grid, `rms` the root mean square of |ln(H/T)| by the nodal engine,
-    `looked` the number of neighbourhoods evaluated.
+    `looked` the number of pairs of steps evaluated.
     """
 
     index: Index
@@ -78,7 +89,7 @@ def search_values(
     frequency_hz: Real,
     limits: LevelLimits | None,
     seed: int,
-    descents: int,
+    effort: int,
 ) -> SearchOutcome:
     """Standard values for the least response error of the whole circuit.
 
@@ -90,8 +101,9 @@ def search_values(
         Target response and frequencies [Hz], shape (F,).
     limits
         How far op-amp outputs may rise; a candidate beyond them is not taken.
-    descents
-        Number of kicks in all rounds together.
+    effort
+        Pairs of steps to be evaluated in all rounds together, about; the search stops by
+        this count alone.
     """
     rng = np.random.default_rng(seed)
     best = grid.nearest(start_logs)
@@ -103,7 +115,7 @@ def search_values(
     for kick in KICKS:
         model = LinearModel.about(program, reference, target, frequency_hz)
         one = _Round(grid, model, limits, rng, kick)
-        pool = one.run(best, max(1, descents // len(KICKS)))
+        pool = one.run(best, effort // len(KICKS))
         looked += one.looked
         members = pool.members()
         if not members:
@@ -134,15 +146,16 @@ class _Round:
         self.fine = Neighbourhood(grid, model, quads=160)
         free = grid.resistors
         self.compensation = np.zeros((free.size, model.offset.size))
-        self.compensation[free] = np.linalg.pinv(model.matrix[:, free], rcond=1e-6)
+        self.compensation[free] = compensation(model.matrix[:, free])
         self.looked = 0
 
-    def run(self, start: Index, kicks: int) -> _Pool:
+    def run(self, start: Index, effort: int) -> _Pool:
         pool = _Pool(CANDIDATES)
         here, cost = self._descend(self.coarse, start)
         self._offer(pool, here, cost)
         best, best_cost = here, cost
-        for _ in range(kicks):
+        while self.looked < effort:
+            self.looked += PAIRS_PER_KICK
             base = best if self.rng.random() < 0.6 else here
             trial, cost_trial = self._descend(self.coarse, self._kicked(base))
             if cost_trial < 2 * best_cost:
@@ -157,7 +170,7 @@ class _Round:
 
     def _descend(self, neighbourhood: Neighbourhood, index: Index) -> tuple[Index, float]:
         index, cost, looked = neighbourhood.descend(index)
-        self.looked += looked
+        self.looked += looked * neighbourhood.pairs
         return index, cost
 
     def _offer(self, pool: _Pool, index: Index, cost: float) -> bool:
@@ -174,4 +187,20 @@ class _Round:
         standard = self.grid.logs_at(self.grid.nearest(logs))
         logs = np.where(self.grid.capacitors, standard, logs)
         logs = logs - self.compensation @ self.model.residual(logs)
-        return self.grid.nearest(logs)
+        return self.grid.nearest(self._below_ceilings(logs))
+
+    def _below_ceilings(self, logs: Real) -> Real:
+        """The nearest values with the same response whose op-amp outputs have room left."""
+        if self.limits is None:
+            return logs
+        for _ in range(3):
+            excess = self.limits.excess(logs) + HEADROOM
+            over = excess > 0
+            if not np.any(over):
+                break
+            free = self.grid.resistors
+            rows = np.concatenate([self.model.matrix, self.limits.matrix[over]])[:, free]
+            wanted = np.concatenate([self.model.residual(logs), excess[over]])
+            logs = logs.copy()
+            logs[free] -= compensation(rows) @ wanted
+        return logs

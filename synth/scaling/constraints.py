@@ -21,9 +21,9 @@ __all__ = ["Region", "ceilings", "region"]
 
 Real = NDArray[np.float64]
 
-# Internal outputs stay this far (a ratio) below their ceiling, so that standard values and
-# part tolerance do not carry them over it.
-CEILING_MARGIN = 0.05
+# Internal outputs stay this far (a ratio) below their ceiling, so that the choice of standard
+# values has room and part tolerance does not carry them over it.
+CEILING_MARGIN = 0.1
 
 # A level this far below its ceiling drowns in noise; no scaling goes lower.
 LOWEST_LEVEL = 1e-6
