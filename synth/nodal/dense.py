@@ -10,7 +10,6 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.errors import NumericalError
-from synth.nodal.sensitivity import Adjoint
 from synth.nodal.structure import Structure
 
 __all__ = [
@@ -18,7 +17,6 @@ __all__ = [
     "equations",
     "inverse_gains",
     "reference",
-    "solve_both",
     "solve_rows",
     "solve_samples",
     "solve_transposed",
@@ -102,17 +100,6 @@ def solve_transposed(structure: Structure, y: Complex, a: Complex, observed: int
     return solve_rows(matrix, right, transposed=True)[:, :, 0]
 
 
-def solve_both(structure: Structure, y: Complex, a: Complex, observed: int) -> Adjoint:
-    """Forward and transposed solution, observing net `observed` (any net)."""
-    psi = np.zeros((y.shape[0], structure.size + 2), dtype=complex)
-    if observed < structure.size:
-        psi[:, : structure.size] = solve_transposed(structure, y, a, observed)
-    outputs = structure.pins[:, 2]
-    amplifiers = psi[:, outputs]
-    psi[:, outputs] = 0.0
-    return Adjoint(solve_samples(structure, y, a), psi, amplifiers)
-
-
 def reference(
     structure: Structure, y: Complex, a: Complex, *, observed: int | None = None
 ) -> tuple[Complex, Real]:
@@ -144,7 +131,7 @@ def reference(
         residual = right - np.einsum("sij,sj->si", wide, solved)
         solved = solved + np.einsum("sij,sj->si", inverse, residual.astype(complex))
     size = np.abs(solved)
-    bound = np.einsum("sij,sjk,sk->si", np.abs(inverse), np.abs(matrix), size, optimize=True)
+    bound = (np.abs(inverse) @ (np.abs(matrix) @ size[:, :, None]))[:, :, 0]
     with np.errstate(divide="ignore", invalid="ignore"):
         amplification = np.where(size > 0, bound / size, np.inf)
     return solved, np.finfo(float).eps * amplification

@@ -2,13 +2,15 @@
 
 The elimination has a fixed order, so nothing pivots when it runs.  Its accuracy is therefore
 measured: when a plan is chosen, on the nominal board and on boards far from it, over all
-frequencies at which the circuit does anything; when it runs outside what was measured, on a
+frequencies at which the circuit does anything; and when it runs outside what was measured, on a
 sample of what it was asked for.  Where a plan fails, LAPACK solves instead: slower, same result.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+import contextlib
+from collections.abc import Callable
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -19,7 +21,7 @@ from synth.nodal.elimination import Plan, plan
 from synth.nodal.reduction import Reduction, quantities
 from synth.nodal.structure import Structure
 
-__all__ = ["Boards", "Engine", "choose_engine"]
+__all__ = ["Boards", "Engine", "LazyEngine", "choose_engine"]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -34,7 +36,13 @@ ROUNDING = 64.0
 """... or this many times what one unit of rounding in every entry causes, where that is more."""
 
 TRIES = 12
-"""Plans drawn for a system; the cheapest that is accurate enough is taken."""
+"""Plans drawn with free pivots for one unknown; the cheapest that is accurate enough is taken."""
+
+FLOW_TRIES = 3
+"""Plans drawn along the signal flow, for one unknown or many."""
+
+COMPILE_AFTER = 1500
+"""Samples solved by LAPACK before a plan is looked for, which takes about as long."""
 
 SAMPLES = 64
 """Samples checked in a call outside the trusted region, and solved at once by LAPACK times 64."""
@@ -152,12 +160,7 @@ class Engine:
         y, a = boards.samples(self.structure, s, board, point)
         exact, rounding = dense.reference(self.structure, y, a, observed=self.observed)
         columns = list(self.wanted)
-        exact, rounding = exact[:, columns], rounding[:, columns]
-        allowed = np.maximum(RELATIVE_ERROR, ROUNDING * rounding)
-        with np.errstate(all="ignore"):
-            close = np.abs(solved - exact) <= allowed * np.abs(exact)
-        # An unknown that is 0 by a balance of parts rather than by structure carries no scale.
-        return bool(np.all(close | ~np.isfinite(rounding)))
+        return _is_accurate(solved, exact[:, columns], rounding[:, columns])
 
     def _by_lapack(self, boards: Boards, s: Complex) -> Complex:
         out = np.empty((len(self.wanted), boards.count, s.size), dtype=complex)
@@ -189,25 +192,78 @@ def choose_engine(
 ) -> Engine:
     """The engine with the cheapest plan that is accurate on every board it is measured on."""
     low, high = _active_range(structure)
-    if not set(wanted) <= set(system.columns):
-        return Engine(structure, wanted, observed, None, low, high)
-    boards = _test_boards(structure)
-    s = np.asarray(1j * np.geomspace(low, high, 24), dtype=np.complex128)
-    board, point = (k.ravel() for k in np.indices((boards.count, s.size)))
-    drawn = [plan(system, wanted, np.random.default_rng(k)) for k in range(TRIES)]
-    for candidate in sorted(drawn, key=lambda p: p.tape.cost):
-        engine = Engine(structure, wanted, observed, candidate, low * 0.999, high * 1.001)
-        quantity = quantities(
-            structure, boards.values, boards.gain_bandwidth, boards.open_loop_gain
+    none = Engine(structure, wanted, observed, None, low * 0.999, high * 1.001)
+    if not wanted or not set(wanted) <= set(system.columns):
+        return none
+    boards, s = _test_boards(structure), _test_frequencies(low, high)
+    board, point = np.indices((boards.count, s.size)).reshape(2, -1)
+    columns = list(wanted)
+    try:
+        exact, rounding = dense.reference(
+            structure, *boards.samples(structure, s, board, point), observed=observed
         )
+    except NumericalError:
+        return none
+    quantity = quantities(structure, boards.values, boards.gain_bandwidth, boards.open_loop_gain)
+    for candidate in sorted(_candidates(system, wanted), key=lambda p: p.tape.cost):
         with np.errstate(all="ignore"):
-            solved = candidate.solve(quantity, s)
-        try:
-            if engine._agrees(boards, s, board, point, solved[:, board, point].T):
-                return engine
-        except NumericalError:
-            break
-    return Engine(structure, wanted, observed, None, low, high)
+            solved = candidate.solve(quantity, s)[:, board, point].T
+        if _is_accurate(solved, exact[:, columns], rounding[:, columns]):
+            return replace(none, chosen=candidate)
+    return none
+
+
+class LazyEngine:
+    """An engine that is chosen once it has been asked for enough to be worth it.
+
+    Until then LAPACK solves, so that a circuit solved once costs no choice of a plan.
+    """
+
+    def __init__(
+        self,
+        structure: Structure,
+        system: Callable[[], Reduction],
+        wanted: tuple[int, ...],
+        *,
+        observed: int | None = None,
+    ) -> None:
+        self._system = system
+        self._asked = 0
+        self._is_chosen = False
+        self._engine = Engine(structure, wanted, observed, None, 0.0, 0.0)
+
+    def solve(self, boards: Boards, s: Complex) -> Complex:
+        """As `Engine.solve`."""
+        self._asked += boards.count * s.size
+        if not self._is_chosen and self._asked >= COMPILE_AFTER:
+            had = self._engine
+            self._engine = choose_engine(
+                had.structure, self._system(), had.wanted, observed=had.observed
+            )
+            self._is_chosen = True
+        return self._engine.solve(boards, s)
+
+
+def _candidates(system: Reduction, wanted: tuple[int, ...]) -> list[Plan]:
+    """Plans to measure: with free pivots for one unknown, along the signal flow for any."""
+    drawn = []
+    if len(wanted) == 1:
+        drawn += [plan(system, wanted, np.random.default_rng(k)) for k in range(TRIES)]
+    with contextlib.suppress(ArithmeticError):
+        drawn += [
+            plan(system, wanted, np.random.default_rng(k), along_flow=True)
+            for k in range(FLOW_TRIES)
+        ]
+    return drawn
+
+
+def _is_accurate(solved: Complex, exact: Complex, rounding: Real) -> bool:
+    """Whether every unknown is within its allowed relative error; shapes (samples, wanted)."""
+    allowed = np.maximum(RELATIVE_ERROR, ROUNDING * rounding)
+    with np.errstate(all="ignore"):
+        close = np.abs(solved - exact) <= allowed * np.abs(exact)
+    # An unknown that is 0, or noise where it should be 0, carries no scale of its own.
+    return bool(np.all(close | ~(rounding < 1e-3)))
 
 
 def _active_range(structure: Structure) -> tuple[float, float]:
@@ -224,7 +280,11 @@ def _active_range(structure: Structure) -> tuple[float, float]:
     return float(found.min()) / 100, float(found.max()) * 100
 
 
-def _test_boards(structure: Structure, count: int = 6) -> Boards:
+def _test_frequencies(low: float, high: float) -> Complex:
+    return np.asarray(1j * np.geomspace(low, high, 20), dtype=np.complex128)
+
+
+def _test_boards(structure: Structure, count: int = 4) -> Boards:
     """The nominal board and others up to the trusted ratio away, always the same ones."""
     generator = np.random.default_rng(20)
 

@@ -13,7 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from synth.nodal.sensitivity import Adjoint
+from synth.nodal.adjoint import Adjoint
 from synth.nodal.structure import Structure
 
 __all__ = ["BOLTZMANN", "Noise", "noise_from"]

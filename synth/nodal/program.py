@@ -16,11 +16,12 @@ from numpy.typing import ArrayLike, NDArray
 from synth.circuit import Circuit
 from synth.errors import CircuitError
 from synth.nodal import dense
-from synth.nodal.engine import Boards, Engine, choose_engine
+from synth.nodal.adjoint import Adjoint, completed
+from synth.nodal.engine import Boards, LazyEngine
 from synth.nodal.noise import Noise, noise_from
 from synth.nodal.offsets import Offsets, offsets_of
 from synth.nodal.reduction import Reduction, reduce
-from synth.nodal.sensitivity import Adjoint, Sensitivities, sensitivities_from
+from synth.nodal.sensitivity import Sensitivities, sensitivities_from
 from synth.nodal.structure import Structure, structure_of
 
 __all__ = ["NodalProgram", "compile_circuit"]
@@ -125,33 +126,54 @@ class NodalProgram:
                 out[k] = 1.0
         return out
 
-    def _engine(self, unknown: tuple[int, ...]) -> Engine:
-        """The engine that solves for some unknown nets, made when first asked for."""
-        if unknown not in self._engines:
-            self._engines[unknown] = choose_engine(self.structure, self._reduction, unknown)
-        return self._engines[unknown]
+    def _engine(self, unknown: tuple[int, ...], observed: int | None = None) -> LazyEngine:
+        """The engine for some unknowns of the equations, or of the transposed ones."""
+        key = (unknown, observed)
+        if key not in self._engines:
+
+            def system() -> Reduction:
+                own = self._reduction
+                return own if observed is None else own.transposed(observed)
+
+            self._engines[key] = LazyEngine(self.structure, system, unknown, observed=observed)
+        return self._engines[key]
 
     @cached_property
-    def _engines(self) -> dict[tuple[int, ...], Engine]:
+    def _engines(self) -> dict[tuple[tuple[int, ...], int | None], LazyEngine]:
         return {}
 
     @cached_property
     def _reduction(self) -> Reduction:
         return reduce(self.structure)
 
-    def adjoint(self, frequency_hz: ArrayLike, *, values: ArrayLike | None, column: int) -> Adjoint:
-        """Forward and transposed solution of one board, observing net `column`.
+    def adjoint(
+        self, frequency_hz: ArrayLike, *, values: ArrayLike | None = None, net: str | None = None
+    ) -> Adjoint:
+        """Forward and transposed solution of one board, observing `net` (None: the output).
 
         Raises
         ------
         CircuitError, NumericalError
             As `solve`.
         """
-        frequency = checked_frequency(frequency_hz)
-        s = _laplace(frequency)
-        y = dense.admittances(self.structure, s, self._one_board(values)[None, :])
-        a = dense.inverse_gains(s, self.structure.gain_bandwidth, self.structure.open_loop_gain)
-        return dense.solve_both(self.structure, y, a, column)
+        structure = self.structure
+        n, own = structure.size, self._reduction
+        column = structure.output if net is None else structure.column(net)
+        parts = self._one_board(values)
+        s = _laplace(checked_frequency(frequency_hz))
+        boards = Boards(
+            parts[None, :], structure.gain_bandwidth[None, :], structure.open_loop_gain[None, :]
+        )
+        y = dense.admittances(structure, s, parts[None, :])
+        a = dense.inverse_gains(s, structure.gain_bandwidth, structure.open_loop_gain)
+        voltages = self._engine(own.columns).solve(boards, s)[:, 0].T
+        if column in own.columns:
+            psi = self._engine(own.rows, column).solve(boards, s)[:, 0].T
+        elif column < n:
+            psi = dense.solve_transposed(structure, y, a, column)[:, list(own.rows)]
+        else:
+            psi = np.zeros((s.size, len(own.rows)), dtype=complex)
+        return completed(structure, own, column, y=y, a=a, voltages=voltages, psi=psi)
 
     def sensitivities(
         self, frequency_hz: ArrayLike, *, values: ArrayLike | None = None, net: str | None = None
@@ -173,7 +195,7 @@ class NodalProgram:
         parts = self._one_board(values)
         return sensitivities_from(
             structure,
-            self.adjoint(frequency, values=parts, column=column),
+            self.adjoint(frequency, values=parts, net=net),
             column,
             frequency_hz=frequency,
             y=dense.admittances(structure, _laplace(frequency), parts[None, :]),
@@ -200,11 +222,10 @@ class NodalProgram:
         """
         frequency = checked_frequency(frequency_hz)
         parts = self._one_board(values)
-        column = self.structure.output if net is None else self.structure.column(net)
         figures = [a.figures for a in self.circuit.amplifiers]
         return noise_from(
             self.structure,
-            self.adjoint(frequency, values=parts, column=column),
+            self.adjoint(frequency, values=parts, net=net),
             frequency_hz=frequency,
             values=parts,
             temperature=temperature,

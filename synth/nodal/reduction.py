@@ -48,6 +48,9 @@ class Reduction:
         By (row, column), the source's column among them.
     pairs
         (op-amp, net) for every op-amp equation used up and the net it took out.
+    flow
+        The column every row determines when signals are followed: the output of the op-amp
+        whose input net the row's currents meet at, or the row's own net.
     """
 
     rows: tuple[int, ...]
@@ -55,6 +58,28 @@ class Reduction:
     source: int
     entries: dict[tuple[int, int], Entry]
     pairs: tuple[tuple[int, int], ...]
+    flow: dict[int, int]
+
+    def depths(self) -> dict[int, int]:
+        """Steps of the signal flow from the source to every column it reaches."""
+        readers: dict[int, list[int]] = {}
+        for r, c in self.entries:
+            readers.setdefault(c, []).append(self.flow[r])
+        depth = {self.source: 0}
+        queue = [self.source]
+        for column in queue:
+            for reached in readers.get(column, ()):
+                if reached not in depth:
+                    depth[reached] = depth[column] + 1
+                    queue.append(reached)
+        return depth
+
+    def transposed(self, observed: int) -> Reduction:
+        """The system whose unknowns psi solve M^T psi = unit vector at column `observed`."""
+        entries = {(c, r): entry for (r, c), entry in self.entries.items() if c != self.source}
+        entries[observed, self.source] = {(0, 0, 0): -1}
+        flow = {column: row for row, column in self.flow.items()}
+        return Reduction(self.columns, self.rows, self.source, entries, (), flow)
 
 
 def quantities(structure: Structure, values: Real, gain_bandwidth: Real, gain: Real) -> Real:
@@ -92,7 +117,8 @@ def reduce(structure: Structure) -> Reduction:
             if kept:
                 entries[r, c] = kept
     columns = tuple(c for c in range(n) if c not in taken)
-    return Reduction(tuple(sorted(rows)), columns, n, entries, tuple(pairs))
+    flow = {r: r for r in rows} | {net: int(structure.pins[k, 2]) for k, net in pairs}
+    return Reduction(tuple(sorted(rows)), columns, n, entries, tuple(pairs), flow)
 
 
 def _taken_out(structure: Structure) -> tuple[list[_Voltage], list[tuple[int, int]]]:

@@ -14,33 +14,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.errors import NumericalError
+from synth.nodal.adjoint import Adjoint
 from synth.nodal.structure import Structure
 
-__all__ = ["Adjoint", "Sensitivities", "sensitivities_from"]
+__all__ = ["Sensitivities", "sensitivities_from"]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
-
-
-@dataclass(frozen=True)
-class Adjoint:
-    """Forward and transposed solution over frequency.
-
-    Parameters
-    ----------
-    voltages
-        Of all nets, input and ground included, shape (F, n + 2).
-    currents
-        Voltage of the observed net per ampere drawn *out of* each net, shape (F, n + 2) [ohm];
-        0 at nets a source or an op-amp drives.  This is psi of the current rows.
-    amplifiers
-        psi of the op-amp rows, shape (F, U): the observed net answers -psi_k e to a voltage e in
-        series with the + input of op-amp k.
-    """
-
-    voltages: Complex
-    currents: Complex
-    amplifiers: Complex
 
 
 @dataclass(frozen=True, eq=False)
