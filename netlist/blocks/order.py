@@ -14,7 +14,7 @@ from typing import TypeAlias
 from netlist.blocks.buses import Link, buses
 from synth.graph import INPUT, BlockGraph
 
-__all__ = ["ordered", "sections"]
+__all__ = ["carried", "ordered", "sections"]
 
 # Lines beside the path, connections on them, sum of their lengths.
 Cost: TypeAlias = tuple[int, int, int]
@@ -38,7 +38,7 @@ def ordered(graph: BlockGraph) -> tuple[str, ...]:
 def sections(graph: BlockGraph, order: Sequence[str]) -> list[tuple[str, ...]]:
     """`order` cut wherever one signal alone, going forward, crosses the cut.
 
-    That signal is the last one read across the cut, see `carried`.
+    `carried` names that signal.
     """
     out: list[tuple[str, ...]] = []
     start = 0

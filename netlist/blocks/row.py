@@ -108,6 +108,11 @@ class Track:
         return min(xs), max(xs)
 
     @property
+    def extent(self) -> tuple[float, float]:
+        """From left to right with what stands at the ends."""
+        return min(s.x - s.half for s in self.slots), max(s.x + s.half for s in self.slots)
+
+    @property
     def sums(self) -> bool:
         """Whether there are summing circles on the line."""
         return len(self.taps) > 1
@@ -306,21 +311,16 @@ def _lay_gain(track: Track, made: Row) -> bool:
 
 
 def _stack(tracks: list[Track], sign: int) -> float:
-    """Give every track of one side its y, short ones nearest; returns the room they take."""
-    levels: list[list[Track]] = []
+    """Give every track of one side its y, short ones first, each as near the path as it fits;
+    returns how far they reach."""
+    placed: list[Track] = []
     for track in sorted(tracks, key=lambda t: (t.ends[1] - t.ends[0], t.ends)):
-        left, right = track.ends
-        margin = _HALF_SUM + _CLEAR
-        for level in levels:
-            if all(right + margin < t.ends[0] or t.ends[1] + margin < left for t in level):
-                level.append(track)
-                break
-        else:
-            levels.append([track])
-    y = _NEAR_PATH
-    for level in levels:
-        y += max(t.inside for t in level)
-        for track in level:
-            track.y = sign * y
-        y += max(t.outside for t in level)
-    return y
+        left, right = track.extent
+        beside = [t for t in placed if left < t.extent[1] and t.extent[0] < right]
+        bands = [(abs(t.y) - t.inside, abs(t.y) + t.outside) for t in beside]
+        need = track.inside + track.outside
+        starts = sorted({_NEAR_PATH, *(end for _, end in bands)})
+        base = next(s for s in starts if all(s + need <= a or b <= s for a, b in bands))
+        track.y = sign * (base + track.inside)
+        placed.append(track)
+    return max((abs(t.y) + t.outside for t in placed), default=_NEAR_PATH)

@@ -54,7 +54,7 @@ def swing_chart(
         axes.set_xlim(0, end)
         axes.set_yticks(range(len(swings)), [f"{s.amplifier}  {s.net}" for s in swings])
         axes.tick_params(axis="y", length=0)
-        axes.xaxis.set_major_locator(MultipleLocator(25))
+        axes.xaxis.set_major_locator(MultipleLocator(25 if end < 150 else 50))
         axes.xaxis.set_major_formatter(PercentFormatter(decimals=0))
         axes.set_xlabel("peak, share of the limit")
         axes.grid(visible=True, axis="x")
