@@ -224,3 +224,19 @@ def test_the_shell_scripts_parse_and_say_how_they_are_used(project):
         )
         assert f"sh {script}" in shown.stdout
         assert not shown.stderr
+
+
+def test_the_map_for_developers_names_every_module_and_no_other(project):
+    """A module is named in DEVELOPERS.md or in the docstring of its package."""
+    guide = (project / "DEVELOPERS.md").read_text(encoding="utf-8")
+    named = set(re.findall(r"[a-z_0-9]+", guide))
+    modules = [p for folder in PACKAGES for p in sources(project / folder) if p.stem[0] != "_"]
+    lost = []
+    for path in modules:
+        around = ast.get_docstring(tree_of(path.parent / "__init__.py")) or ""
+        if path.stem not in named | set(re.findall(r"[a-z_0-9]+", around)):
+            lost.append(str(path.relative_to(project)))
+    assert not lost, f"not on the map: {lost}"
+    everything = {p.name for p in texts(project)}
+    for name in re.findall(r"`(?:[\w./]*/)?(\w+\.py)`", guide):
+        assert name in everything or name == "NAME.py", f"on the map but not there: {name}"
