@@ -20,7 +20,8 @@ def command(job_file: Path, as_json: bool) -> Result:
     """Compare the realizations for JOB.toml; write nothing.
 
     Spread is one standard deviation of magnitude and phase from part tolerance, the largest over
-    the band; the form with the smallest is chosen unless the job names one.
+    the band.  Unless the job names a form, the one is chosen whose spread is smallest against
+    the limits, magnitude or phase, whichever is worse.
     """
     from netlist.cli.summary import forms_table
     from netlist.jobfile import read_job

@@ -42,6 +42,10 @@ def run(arguments: list[str]) -> int:
         sys.stdout.flush()
     except BrokenPipeError:
         _silence_stdout()
+    except OSError as error:
+        _silence_stdout()
+        say(f"cannot write to standard output: {(error.strerror or 'it failed').lower()}")
+        return USAGE
     return code
 
 
@@ -103,7 +107,7 @@ def _described(error: BaseException) -> str:
 
 
 def _silence_stdout() -> None:
-    """Keep the interpreter from writing into a closed pipe when it ends."""
+    """Keep the interpreter from writing to a closed pipe or a full disk when it ends."""
     devnull = os.open(os.devnull, os.O_WRONLY)
     os.dup2(devnull, sys.stdout.fileno())
     os.close(devnull)

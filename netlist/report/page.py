@@ -30,6 +30,9 @@ __all__ = ["LOW_YIELD", "headline", "inlined", "report_page"]
 LOW_YIELD = 0.9
 """Without a limit on the yield, a share of good boards below this one draws a warning."""
 
+NO_VOLTAGE = 1e-6
+"""An operating point this close to ground [V] is not worth a line."""
+
 DISTRIBUTION = "each part is drawn on its own, uniformly within its tolerance."
 """What the boards of the tolerance run assume, beside every number that rests on it."""
 
@@ -100,7 +103,11 @@ def report_page(
         drifts=found.drift_rows(design.drifts),
         parts=found.part_rows(lines),
         chips=packages(design.circuit.amplifiers, taken=design.circuit.by_ref),
-        operating_point=sorted((verification.operating_point or {}).items()),
+        operating_point=[
+            (net, volts)
+            for net, volts in sorted((verification.operating_point or {}).items())
+            if abs(volts) > NO_VOLTAGE
+        ],
         drawings={name: inlined(svg, name) for name, svg in drawings.by_name().items() if svg},
         readout=_readout(design, verification),
         command=_command(design, job_name),

@@ -38,8 +38,8 @@ def number(value: float | None, digits: int = 3) -> str:
     if value == 0:
         return "0"
     if 1e-4 <= abs(value) < 1e6:
-        decimals = digits - 1 - math.floor(math.log10(abs(value)))
-        rounded = round(value, decimals)
+        rounded = float(f"{value:.{digits - 1}e}")
+        decimals = digits - 1 - math.floor(math.log10(abs(rounded)))
         return f"{rounded:.{max(decimals, 0)}f}".replace("-", _MINUS)
     mantissa, exponent = scientific(value, digits)
     return f"{mantissa}·10{_raised(exponent)}" if exponent else mantissa

@@ -261,6 +261,15 @@ def test_a_reader_who_leaves_early_causes_no_noise():
     assert ended.returncode == 0
 
 
+@pytest.mark.skipif(not Path("/dev/full").exists(), reason="needs the device that is always full")
+def test_a_full_disk_behind_standard_output_is_one_line(stages, monkeypatch, capsys):
+    with Path("/dev/full").open("w") as full:
+        monkeypatch.setattr(sys, "stdout", full)
+        assert run(["forms", "x.toml"]) == 2
+    line = "polewright: cannot write to standard output: no space left on device\n"
+    assert capsys.readouterr().err == line
+
+
 @pytest.mark.parametrize("no_color", ["", "1"])
 def test_colour_is_for_terminals_and_only_without_no_color(no_color):
     leader, follower = pty.openpty()

@@ -168,6 +168,8 @@ def test_numbers_read_well_and_round_up_across_a_prefix():
     assert quantity(-0.002, "V") == "−2.00\xa0mV"
     assert number(float("nan")) == "–"
     assert number(9.999e5) == "1000000"
+    assert number(0.99996, 4) == "1.000"
+    assert number(99.996, 4) == "100.0"
     assert decibel(1e-9) == "0.0000"
     assert stated(47e-9, "F") == "47\xa0nF"
     assert stated(100.0, "Hz") == "100\xa0Hz"
@@ -182,3 +184,16 @@ def test_what_was_not_measured_is_a_dash_not_a_crash():
         lines=(),
     )
     assert "none drifts to a rail by itself" in text
+
+
+def test_an_operating_point_at_ground_is_one_sentence_and_another_is_listed():
+    made = boards.design()
+    checked = boards.verification(made)
+    stuck = replace(checked, operating_point={"out": -10.5, "x1": 0.0})
+
+    def shown(verification):
+        return Page(report_page(made, verification, drawings=boards.drawings(), lines=())).text
+
+    assert "0\xa0V at every net (3 nets" in shown(checked).replace(" V at", "\xa0V at")
+    assert "1 of 2 nets are not at" in shown(stuck)
+    assert "−10.5" in shown(stuck)
