@@ -21,8 +21,7 @@ from synth.errors import JobError
 from synth.job import Accept, Board, Job, Loop, Signal
 from synth.op_amps import DEFAULT_CLASS, op_amp_class
 from synth.parts import OpAmp, PartRule
-from synth.preferred import decade, series_values
-from synth.quantities import show, what_came
+from synth.quantities import what_came
 
 if TYPE_CHECKING:
     from pydantic_core import ErrorDetails
@@ -173,10 +172,10 @@ def _problem(
 def _board(table: BoardTable, mistakes: Mistakes) -> Board | None:
     """The board with the defaults of everything not stated."""
     resistors = mistakes.attempt(
-        "board.resistors", lambda: _part_rule(DEFAULT_RESISTORS, table.resistors.given())
+        "board.resistors", lambda: replace(DEFAULT_RESISTORS, **table.resistors.given())
     )
     capacitors = mistakes.attempt(
-        "board.capacitors", lambda: _part_rule(DEFAULT_CAPACITORS, table.capacitors.given())
+        "board.capacitors", lambda: replace(DEFAULT_CAPACITORS, **table.capacitors.given())
     )
     op_amp = mistakes.attempt("board.op_amp", lambda: _op_amp(table.op_amp.given()))
     rest = {k: v for k, v in table.given().items() if k in ("supply", "form", "inverted")}
@@ -190,19 +189,6 @@ def _board(table: BoardTable, mistakes: Mistakes) -> Board | None:
         "board",
         lambda: Board(op_amp=op_amp, resistors=resistors, capacitors=capacitors, **rest),
     )
-
-
-def _part_rule(default: PartRule, given: dict[str, Any]) -> PartRule:
-    """The rule, once its series has a value within its range."""
-    rule = replace(default, **given)
-    decade(rule.series, key="series")
-    if not series_values(rule.series, rule.smallest, rule.largest).size:
-        unit = "ohm" if rule.kind == "resistor" else "F"
-        raise JobError(
-            f"got no value of {rule.series} from {show(rule.smallest, unit)} to "
-            f"{show(rule.largest, unit)}, expected a wider range"
-        )
-    return rule
 
 
 def _op_amp(given: dict[str, Any]) -> OpAmp:

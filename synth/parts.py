@@ -7,8 +7,14 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from functools import cached_property
+
+import numpy as np
+from numpy.typing import NDArray
 
 from synth.errors import JobError
+from synth.preferred import decade, series_values
+from synth.quantities import show
 
 __all__ = ["OpAmp", "PartRule"]
 
@@ -40,11 +46,24 @@ class PartRule:
             raise JobError(f"got kind {self.kind!r}, expected 'resistor' or 'capacitor'")
         if not (math.isfinite(self.tolerance) and 0 <= self.tolerance < 1):
             raise JobError(f"got a tolerance of {self.tolerance}, expected 0 to below 100 %")
+        unit = "ohm" if self.kind == "resistor" else "F"
+        decade(self.series, key="series")
+        unit = "ohm" if self.kind == "resistor" else "F"
         if not (0 < self.smallest < self.largest < math.inf):
             raise JobError(
-                f"got a range from {self.smallest} to {self.largest}, "
+                f"got a range from {self.smallest:g} to {self.largest:g} {unit}, "
                 "expected 0 < smallest < largest"
             )
+        if self.values.size == 0:
+            raise JobError(
+                f"got no value of {self.series} from {show(self.smallest, unit)} to "
+                f"{show(self.largest, unit)}, expected a wider range"
+            )
+
+    @cached_property
+    def values(self) -> NDArray[np.float64]:
+        """What may be bought, ascending [ohm] or [F]."""
+        return series_values(self.series, self.smallest, self.largest)
 
 
 @dataclass(frozen=True, kw_only=True)

@@ -55,7 +55,10 @@ def random_target(
         root = 0.0 if draw > 0.8 else frequency() * (1 if draw > 0.7 else -1)
         zeros.append(Factor.real(root))
         left -= 1
-    return TransferFunction.from_factors(float(rng.uniform(0.1, 10)), zeros, poles)
+    # A gain of order one where the response is largest.
+    plain = TransferFunction.from_factors(1, zeros, poles)
+    largest = np.max(np.abs(plain.response(from_hz * np.geomspace(0.1, 10 ** (decades + 1), 200))))
+    return TransferFunction.from_factors(float(rng.uniform(0.1, 10) / largest), zeros, poles)
 
 
 @st.composite

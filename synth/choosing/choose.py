@@ -21,6 +21,10 @@ Complex = NDArray[np.complex128]
 # Pairs of steps the search evaluates: about a second on one core.
 DEFAULT_EFFORT = 60_000_000
 
+# Ideal values stay near the chosen ones: what finite op-amp gain would only let through by
+# large changes of the values is left.
+IDEAL_RIDGE = 0.03
+
 
 @dataclass(frozen=True, kw_only=True)
 class Choice:
@@ -29,8 +33,8 @@ class Choice:
     Parameters
     ----------
     circuit
-        With the chosen values; each part's `ideal` is the value nearest to the chosen one with
-        which the circuit, capacitors as chosen, would show the target exactly.
+        With the chosen values; the `ideal` of the resistors are the values nearest to the
+        chosen ones with which the circuit, capacitors as chosen, would show the target.
     nearest
         With each ideal value of the start rounded to its nearest neighbour.
     looked
@@ -119,7 +123,7 @@ def _with_ideals(circuit: Circuit, grid: ValueGrid, target: Complex, frequency_h
     free = grid.resistors
     for _ in range(2):
         model = LinearModel.about(compile_circuit(circuit), np.exp(logs), target, frequency_hz)
-        logs[free] -= compensation(model.matrix[:, free]) @ model.offset
+        logs[free] -= compensation(model.matrix[:, free], IDEAL_RIDGE) @ model.offset
     return replace(
         circuit,
         passives=tuple(

@@ -9,8 +9,6 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.circuit import Passive
-from synth.parts import PartRule
-from synth.preferred import series_values
 
 __all__ = ["ValueGrid"]
 
@@ -31,17 +29,9 @@ class ValueGrid:
     @cached_property
     def values(self) -> tuple[Real, ...]:
         """Allowed values of each part, ascending [ohm] or [F]."""
-        tables: dict[PartRule, Real] = {}
-        out = []
-        for part in self.parts:
-            if part.rule is None:
-                out.append(np.array([part.value]))
-                continue
-            rule = part.rule
-            if rule not in tables:
-                tables[rule] = series_values(rule.series, rule.smallest, rule.largest)
-            out.append(tables[rule])
-        return tuple(out)
+        return tuple(
+            np.array([part.value]) if part.rule is None else part.rule.values for part in self.parts
+        )
 
     @cached_property
     def counts(self) -> Index:

@@ -30,10 +30,10 @@ NEGLIGIBLE = 1e-9
 RIDGE = 3e-3
 
 
-def compensation(matrix: Real) -> Real:
-    """G so that d = -G r makes |matrix d + r|^2 + (RIDGE |d|)^2 least, shape (P, K)."""
+def compensation(matrix: Real, ridge: float = RIDGE) -> Real:
+    """G so that d = -G r makes |matrix d + r|^2 + (ridge |d|)^2 least, shape (P, K)."""
     left, singular, right = np.linalg.svd(matrix, full_matrices=False)
-    return np.asarray((right.T * (singular / (singular**2 + RIDGE**2))) @ left.T)
+    return np.asarray((right.T * (singular / (singular**2 + ridge**2))) @ left.T)
 
 
 @dataclass(frozen=True, eq=False)

@@ -14,7 +14,7 @@ from synth.job import Job
 from synth.mapping import Sizing
 from synth.peaks import SignalPeaks
 from synth.polarity import Polarity
-from synth.preferred import nearest, series_values
+from synth.preferred import nearest
 from synth.scaling.constraints import Region, refuse, region
 from synth.scaling.objectives import current_shares, noise_power, response_error_power
 from synth.scaling.signomial import Signomial
@@ -96,7 +96,9 @@ def scale(
     v = problem.solve(limits, v)
     sizes = variables.sizes_of(v)
     capacitors = {
-        b.name: nearest(_capacitors(job), sizes[b.name]) for b in graph.blocks if b.is_integrator
+        b.name: nearest(job.board.capacitors.values, sizes[b.name])
+        for b in graph.blocks
+        if b.is_integrator
     }
     feedback = {b.name: sizes[b.name] for b in graph.adders}
     return Scaled(
@@ -107,15 +109,9 @@ def scale(
     )
 
 
-def _capacitors(job: Job) -> Real:
-    rule = job.board.capacitors
-    return series_values(rule.series, rule.smallest, rule.largest)
-
-
 def _inverter_value(job: Job) -> float:
     """The standard value next to 10 kohm (common practice)."""
-    rule = job.board.resistors
-    return nearest(series_values(rule.series, rule.smallest, rule.largest), 10e3)
+    return nearest(job.board.resistors.values, 10e3)
 
 
 def _with_standard_capacitors(
@@ -126,7 +122,7 @@ def _with_standard_capacitors(
     Each takes the value nearest to where it stands; one that then leaves no room is moved
     along the series, nearest first.
     """
-    offered = np.log(_capacitors(job))
+    offered = np.log(job.board.capacitors.values)
     fixed = limits
     point = v
     for block in (b for b in variables.graph.blocks if b.is_integrator):

@@ -375,7 +375,7 @@ ONE_LINE = [
     ),
     (
         {"board": "[board.capacitors]\nlargest = '1 pF'"},
-        ":7: board.capacitors: got a range from 1e-10 to 1e-12, expected 0 < smallest < largest",
+        ":7: board.capacitors: got a range from 1e-10 to 1e-12 F, expected 0 < smallest < largest",
     ),
     (
         {"board": "[board.capacitors]\ntolerance = '150 %'"},

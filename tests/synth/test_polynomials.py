@@ -88,10 +88,19 @@ def test_squarefree_parts_multiply_back_and_have_no_repeated_root(p, q):
         [-(Fraction(10) ** (10 * k)) for k in range(-6, 6)],
         [-Fraction(k) for k in range(1, 13)],
         [-1 - Fraction(k, 10**8) for k in range(12)],
+        [-1 - Fraction(k, 10**10) for k in range(3)],
         [-1 - Fraction(k, 10**14) for k in range(6)],
         [Fraction(3), Fraction(-3), Fraction(1, 3), Fraction(-7)],
     ],
-    ids=["12 decades", "110 decades", "integers", "cluster 1e-8", "cluster 1e-14", "both sides"],
+    ids=[
+        "12 decades",
+        "110 decades",
+        "integers",
+        "cluster 1e-8",
+        "cluster 1e-10",
+        "cluster 1e-14",
+        "both sides",
+    ],
 )
 def test_real_roots_come_back_to_the_last_digit(roots):
     found = polynomials.simple_roots(_from_roots(*roots))
@@ -118,6 +127,17 @@ def test_pairs_on_the_imaginary_axis_have_no_real_part_and_others_keep_theirs():
     assert [z.real for z in above] == [0.0, -0.5e-30, 0.0]
     assert [z.imag for z in above] == pytest.approx([2**0.5, 3**0.5, 5**0.5], rel=1e-15)
     assert sorted(z.real for z in found if not z.imag) == [-2.0, -1.0, 2.0]
+
+
+@settings(deadline=None, derandomize=True, max_examples=15)
+@given(st.lists(st.fractions(1, 10**6), min_size=2, max_size=4, unique=True), st.floats(0.1, 1e6))
+def test_any_pairs_on_the_imaginary_axis_are_told_from_damped_ones(squares, pole):
+    p = polynomials.product([(Fraction(1), Fraction(0), w) for w in squares])
+    found = polynomials.simple_roots(polynomials.multiply(p, _from_roots(-Fraction(pole))))
+    above = [z for z in found if z.imag]
+    assert {z.real for z in above} == {0.0}
+    expected = sorted(math.sqrt(w) for w in squares)
+    assert sorted(z.imag for z in above)[len(squares) :] == pytest.approx(expected, rel=1e-15)
 
 
 def test_complex_roots_stand_behind_their_exact_conjugates():

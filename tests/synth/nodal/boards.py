@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections import Counter
 
 import numpy as np
 
@@ -113,7 +114,7 @@ def chain(order, figures, *, frequency_hz=1e3, load=None, source=None):
 
 
 def random_circuit(rng, *, most_amplifiers=9):
-    """A random RC network around op-amps, in and out: any topology the engine must take.
+    """A random RC network around op-amps: any topology the engine must take.
 
     Every op-amp has a feedback part and an input part at -; its + is at ground, the input, a
     divider, another output or a passive net.  Values roam over several decades.
@@ -160,14 +161,25 @@ def random_circuit(rng, *, most_amplifiers=9):
     for net in ({"in"} | {f"y{k}" for k in range(count - 1)}) - used:
         add(net, "0")
     parts.append(resistor("RLOAD", "out", "0", 10e3, bought=False))
-    single = {}
-    for part in parts:
-        for net in part.nets:
-            single.setdefault(net, []).append(part.ref)
-    for a in amps:
-        for net in (a.plus, a.minus, a.output):
-            single.setdefault(net, []).append(a.ref)
-    for net, refs in sorted(single.items()):
-        if len(refs) == 1 and net not in ("0", "in", "out"):
-            add(net, "0", "resistor")
+    pins = [n for a in amps for n in (a.plus, a.minus, a.output)]
+    count_of = Counter([*pins, *(n for p in parts for n in p.nets)])
+    for net in sorted(n for n, number in count_of.items() if number == 1 and n not in ("0", "in")):
+        add(net, "0", "resistor")
+    for net in _without_dc_path(parts, outputs):
+        add(net, "0", "resistor")
     return Circuit(passives=tuple(parts), amplifiers=tuple(amps))
+
+
+def _without_dc_path(parts, outputs):
+    """One net of every group that no resistor ties to a driven net: SPICE wants a DC level."""
+    groups = {}
+    for net in ["0", "in", *outputs, *(n for p in parts for n in p.nets)]:
+        groups.setdefault(net, {net})
+    for part in parts:
+        if part.kind == "resistor":
+            a, b = (groups[n] for n in part.nets)
+            if a is not b:
+                a |= b
+                groups.update(dict.fromkeys(b, a))
+    driven = {"0", "in", *outputs}
+    return sorted({min(g) for g in groups.values() if not g & driven})
