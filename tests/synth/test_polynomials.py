@@ -88,7 +88,7 @@ def test_squarefree_parts_multiply_back_and_have_no_repeated_root(p, q):
         [-(Fraction(10) ** (10 * k)) for k in range(-6, 6)],
         [-Fraction(k) for k in range(1, 13)],
         [-1 - Fraction(k, 10**8) for k in range(12)],
-        [-1 - Fraction(k, 10**10) for k in range(3)],
+        [-1 - Fraction(7 * k * k + k, 3 * 10**10) for k in range(3)],
         [-1 - Fraction(k, 10**14) for k in range(6)],
         [Fraction(3), Fraction(-3), Fraction(1, 3), Fraction(-7)],
     ],
