@@ -1,0 +1,175 @@
+"""Circuit -> SPICE text.  Pure and deterministic: the same circuit gives the same bytes.
+
+Nets keep their names, ground is ``0``; every component is one top-level line such as
+``R1 in x1_s 10200.0``, numbers plain, without suffixes.  Op-amp ``U1`` is the subcircuit call
+``XU1 plus minus out``, one subcircuit per distinct set of figures.  The only text from a user
+is in comments, filtered to printable ASCII without backslashes, so it can neither end a line
+nor join two.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+
+from netlist.opamp_models import linear_model, number, saturating_model
+from synth.circuit import Circuit, Passive
+from synth.errors import CircuitError
+from synth.parts import OpAmp
+
+__all__ = ["board_deck", "filtered", "step_deck"]
+
+LONGEST_TEXT = 120
+SOURCE = "Vin"
+_LETTER = {"resistor": "R", "capacitor": "C"}
+# Names that a SPICE program gives another meaning.
+_RESERVED_NETS = frozenset({"frequency", "gnd", "null", "time"})
+
+Model = Callable[[str, OpAmp], tuple[str, ...]]
+
+
+def board_deck(
+    circuit: Circuit, *, title: str, start_hz: float, stop_hz: float, points_per_decade: int
+) -> str:
+    """The linear deck: AC response at the output, operating point, noise sources in place.
+
+    ``ngspice -b`` runs it as it is; see `synth.grid.band_grid` for its frequencies.
+
+    Raises
+    ------
+    CircuitError
+        A name that SPICE cannot take, or a sweep less than one step wide.
+    """
+    if not (0 < start_hz < stop_hz < math.inf):
+        raise CircuitError(
+            f"got a sweep from {start_hz} Hz to {stop_hz} Hz, expected 0 < from < to"
+        )
+    if math.log10(stop_hz / start_hz) * points_per_decade < 1.000001:
+        # ngspice 39 never ends on such a sweep.
+        raise CircuitError(
+            f"got {points_per_decade} points per decade from {start_hz} Hz to {stop_hz} Hz, "
+            "expected at least one step"
+        )
+    out = circuit.output_net
+    return _text(
+        [
+            f"* {filtered(title)}",
+            "* The board as it is verified: linear op-amps with one pole and their noise.",
+            f"{SOURCE} {circuit.input_net} 0 DC 0 AC 1",
+            *_components(circuit, linear_model),
+            "* Response at the output: magnitude in dB, phase in radians.",
+            f".ac dec {points_per_decade:d} {number(start_hz)} {number(stop_hz)}",
+            f".print ac vdb({out}) vp({out})",
+            ".op",
+        ]
+    )
+
+
+def step_deck(
+    circuit: Circuit,
+    *,
+    title: str,
+    supply: tuple[float, float],
+    step_volts: float,
+    stop_s: float,
+    delay_s: float | None = None,
+    edge_s: float | None = None,
+    largest_step_s: float | None = None,
+) -> str:
+    """The transient deck: a voltage step into op-amps that saturate and slew.
+
+    Parameters
+    ----------
+    supply
+        Negative and positive rail [V].
+    step_volts
+        Height of the step, from 0 V.
+    stop_s
+        End of the run [s].
+    delay_s, edge_s
+        Start and length of the edge [s]; by default 1/50 and 1/10,000 of the run.
+    largest_step_s
+        Upper bound of the time step [s]; by default 1/1,000 of the run.
+
+    Raises
+    ------
+    CircuitError
+        A name that SPICE cannot take, or times that are not in order.
+    """
+    delay = stop_s / 50 if delay_s is None else delay_s
+    edge = stop_s / 10_000 if edge_s is None else edge_s
+    largest = stop_s / 1000 if largest_step_s is None else largest_step_s
+    times = (delay, edge, largest, stop_s)
+    if not (all(0 < t < math.inf for t in times) and delay + edge < stop_s and largest <= stop_s):
+        raise CircuitError(
+            f"got a step after {delay} s, an edge of {edge} s, time steps up to {largest} s and an "
+            f"end at {stop_s} s, expected positive times in order"
+        )
+    if not math.isfinite(step_volts):
+        raise CircuitError(f"got a step of {step_volts} V, expected a finite voltage")
+
+    def model(name: str, figures: OpAmp) -> tuple[str, ...]:
+        return saturating_model(name, figures, supply=supply)
+
+    high = number(step_volts)
+    return _text(
+        [
+            f"* {filtered(title)}",
+            "* The step response: op-amps that saturate at the rails and slew, no noise.",
+            f"{SOURCE} {circuit.input_net} 0 PWL(0.0 0.0 {number(delay)} 0.0 "
+            f"{number(delay + edge)} {high} {number(stop_s)} {high})",
+            *_components(circuit, model),
+            "* Trapezoidal rule: Gear's method would damp resonances of its own accord.",
+            ".options method=trap reltol=1e-05",
+            f".tran {number(largest)} {number(stop_s)} 0.0 {number(largest)}",
+            f".print tran v({circuit.input_net}) v({circuit.output_net})",
+        ]
+    )
+
+
+def filtered(text: str) -> str:
+    """Text that is safe in a comment: printable ASCII on one line, no backslash, not too long."""
+    kept = "".join(c for c in text if " " <= c <= "~" and c != "\\")
+    return " ".join(kept.split())[:LONGEST_TEXT].rstrip()
+
+
+def _components(circuit: Circuit, model: Model) -> list[str]:
+    """Lines of all parts, then the subcircuits they call."""
+    _check_nets(circuit)
+    lines = [line for part in circuit.passives for line in _passive(part)]
+    names: dict[OpAmp, str] = {}
+    for amp in circuit.amplifiers:
+        name = names.setdefault(amp.figures, f"opamp_{len(names) + 1}")
+        lines += _comment(amp.ref, amp.sets)
+        lines.append(f"X{amp.ref} {amp.plus} {amp.minus} {amp.output} {name}")
+    for figures, name in names.items():
+        lines += model(name, figures)
+    return lines
+
+
+def _passive(part: Passive) -> tuple[str, ...]:
+    letter = _LETTER[part.kind]
+    if not part.ref.startswith(letter):
+        raise CircuitError(
+            f"got the reference {part.ref!r} for a {part.kind}, expected one that starts with "
+            f"{letter}"
+        )
+    return (
+        *_comment(part.ref, part.sets),
+        f"{part.ref} {' '.join(part.nets)} {number(part.value)}",
+    )
+
+
+def _comment(ref: str, sets: str) -> tuple[str, ...]:
+    told = filtered(sets)
+    return (f"* {ref}: {told}",) if told else ()
+
+
+def _check_nets(circuit: Circuit) -> None:
+    for net in circuit.connections:
+        if net in _RESERVED_NETS:
+            raise CircuitError(f"got the net name {net!r}, which SPICE gives another meaning")
+
+
+def _text(lines: list[str]) -> str:
+    return "\n".join([*lines, ".end", ""])
