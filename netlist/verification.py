@@ -1,0 +1,135 @@
+"""The independent second opinion on a design, from ngspice.
+
+The response, the operating point and the noise come from the linear deck, the step response
+from the saturating one.  Two opinions on the same circuit, the nodal engine's and ngspice's,
+are compared as well.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from netlist.comparison import compare
+from netlist.ngspice import Simulator, TransientResult
+from netlist.stimulus import Decks, decks_of
+from synth.circuit import GROUND
+from synth.errors import SimulatorError
+from synth.evidence import Check, ResponseError, response_error
+from synth.grid import judged, points_per_decade
+from synth.nodal import compile_circuit
+from synth.results import Design
+
+__all__ = ["Verification", "disagreement", "verify"]
+
+Real = NDArray[np.float64]
+Complex = NDArray[np.complex128]
+
+SMALLEST_COMPARED = 1e-6
+"""Below this share of its largest value a response is compared absolutely."""
+
+
+@dataclass(frozen=True, kw_only=True, eq=False)
+class Verification:
+    """What ngspice says about a design.
+
+    Parameters
+    ----------
+    frequency_hz, simulated, target
+        Frequencies of the sweep [Hz], less any on a zero on the imaginary axis, response of
+        the output, H there; shapes (F,).
+    error
+        Error of `simulated` against `target`.
+    operating_point
+        DC voltage of each net with the input at 0 V [V].
+    step
+        Voltages of the input, the output and every op-amp output after a step of the largest
+        input.
+    noise_rms
+        Noise of the output over the band [V].
+    nodal_disagreement
+        Of ngspice and the nodal engine on the same circuit, see `disagreement`.
+    checks
+        ``magnitude error`` and ``phase error``; empty without a response.
+    failure
+        Why the simulator did not deliver, or None.  What it did not deliver is None above; a
+        response may be there although a later analysis failed.
+    """
+
+    frequency_hz: Real | None = None
+    simulated: Complex | None = None
+    target: Complex | None = None
+    error: ResponseError | None = None
+    operating_point: dict[str, float] | None = None
+    step: TransientResult | None = None
+    noise_rms: float | None = None
+    nodal_disagreement: float | None = None
+    checks: tuple[Check, ...] = ()
+    failure: str | None = None
+
+    def __post_init__(self) -> None:
+        if self.failure is None and not self.checks:
+            raise ValueError("got neither checks nor a failure, expected one of them")
+
+
+def verify(design: Design, *, simulator: Simulator | None = None) -> Verification:
+    """Simulate a design and compare it with its target.
+
+    Without `simulator` one is started and ended.  A simulator that is missing or fails ends
+    in a `Verification` with a `failure`, not in an error.
+    """
+    decks = decks_of(design)
+    if simulator is not None:
+        return _verify(design, decks, simulator)
+    try:
+        with Simulator() as own:
+            return _verify(design, decks, own)
+    except SimulatorError as problem:
+        return Verification(failure=str(problem))
+
+
+def disagreement(one: Complex, other: Complex) -> float:
+    """Largest difference of two responses relative to `other`, shapes (F,).
+
+    Where `other` is below one millionth of its largest value, relative to that instead.
+    """
+    size = np.abs(other)
+    floor = np.maximum(size, SMALLEST_COMPARED * np.max(size))
+    return float(np.max(np.abs(one - other) / np.maximum(floor, np.finfo(float).tiny)))
+
+
+def _verify(design: Design, decks: Decks, simulator: Simulator) -> Verification:
+    """Run the analyses, the response first; the first that fails ends the work."""
+    circuit = design.circuit
+    band = design.job.signal.band_hz
+    out = circuit.output_net
+    nets = sorted(net for net in circuit.connections if net != GROUND)
+    watched = list(dict.fromkeys([circuit.input_net, *circuit.signal_nets(), out]))
+    density = points_per_decade(design.wanted, band_hz=band)
+    so_far = Verification(failure="nothing was simulated")
+    try:
+        response = simulator.ac(decks.board, [out])
+        so_far = _compared(design, response.frequency_hz, response.voltages[out])
+        so_far = replace(so_far, operating_point=simulator.operating_point(decks.board, nets))
+        noise = simulator.noise(decks.board, out, *band, density)
+        so_far = replace(so_far, noise_rms=noise.total_rms)
+        return replace(so_far, step=simulator.transient(decks.step, watched))
+    except SimulatorError as problem:
+        return replace(so_far, failure=str(problem))
+
+
+def _compared(design: Design, frequency_hz: Real, simulated: Complex) -> Verification:
+    keep = judged(design.wanted, frequency_hz)
+    frequency_hz, simulated = frequency_hz[keep], simulated[keep]
+    target = design.wanted.response(frequency_hz)
+    nodal = compile_circuit(design.circuit).solve(frequency_hz)
+    return Verification(
+        frequency_hz=frequency_hz,
+        simulated=simulated,
+        target=target,
+        error=response_error(simulated, target),
+        nodal_disagreement=disagreement(simulated, nodal),
+        checks=compare(frequency_hz, simulated, target, design.job.accept),
+    )

@@ -1,0 +1,145 @@
+"""The whole second opinion on a design, and what becomes of a simulator that fails."""
+
+import math
+from dataclasses import replace
+
+import numpy as np
+import pytest
+
+from netlist.ngspice import Simulator
+from netlist.stimulus import decks_of, step_duration
+from netlist.verification import Verification, disagreement, verify
+from synth.errors import SimulationFailedError
+from synth.evidence import response_error
+from synth.nodal import compile_circuit
+from synth.transfer import Factor, TransferFunction
+from tests.circuits import figures, tow_thomas
+from tests.netlist import boards
+
+FIRST = Factor.real(-1000.0)
+
+
+@pytest.fixture(scope="module")
+def design():
+    return boards.design()
+
+
+@pytest.fixture(scope="module")
+def verified(design, simulator):
+    return verify(design, simulator=simulator)
+
+
+def test_a_good_board_is_verified_with_both_checks(verified, design):
+    assert verified.failure is None
+    assert [c.name for c in verified.checks] == ["magnitude error", "phase error"]
+    low, high = design.job.signal.band_hz
+    np.testing.assert_allclose(verified.frequency_hz[[0, -1]], [low, high], rtol=1e-12)
+    expected = response_error(verified.simulated, design.wanted.response(verified.frequency_hz))
+    np.testing.assert_array_equal(verified.error.magnitude_db, expected.magnitude_db)
+    assert verified.checks[0].value == verified.error.largest_db
+
+
+def test_ngspice_and_the_nodal_engine_agree(verified, design):
+    assert 0 <= verified.nodal_disagreement < 1e-9
+    density = compile_circuit(design.circuit).noise(verified.frequency_hz).power.sum(axis=1)
+    total = math.sqrt(np.trapezoid(density, verified.frequency_hz))
+    np.testing.assert_allclose(verified.noise_rms, total, rtol=2e-3)
+
+
+def test_every_net_rests_at_ground_and_the_step_settles_at_the_dc_gain(verified, design):
+    nets = {net for net in design.circuit.connections if net != "0"}
+    assert verified.operating_point.keys() == nets
+    assert max(abs(v) for v in verified.operating_point.values()) < 1e-6
+    assert {"in", "out", *design.circuit.signal_nets()} == verified.step.voltages.keys()
+    peak = design.job.signal.input_peak
+    dc = compile_circuit(design.circuit).solve([1e-3])[0].real
+    np.testing.assert_allclose(verified.step.voltages["out"][-1], peak * dc, rtol=5e-3)
+
+
+def test_a_wrong_part_fails_the_checks_but_not_the_agreement(design, simulator):
+    part = design.circuit.passives[0]
+    wrong = replace(design, circuit=design.circuit.with_values({part.ref: part.value * 1.5}))
+    found = verify(wrong, simulator=simulator)
+    assert not found.checks[0].passed
+    assert found.nodal_disagreement < 1e-9
+
+
+def test_without_a_library_the_failure_is_told_and_nothing_else(design, monkeypatch):
+    monkeypatch.setattr("ctypes.util.find_library", lambda name: None)
+    found = verify(design)
+    assert "install libngspice0" in found.failure
+    assert found.simulated is None
+    assert found.checks == ()
+
+
+def test_a_failure_after_the_response_keeps_the_response(design):
+    class StepFails(Simulator):
+        def transient(self, deck, nets):
+            raise SimulationFailedError("ngspice failed: timestep too small")
+
+    with StepFails() as broken:
+        found = verify(design, simulator=broken)
+    assert found.failure == "ngspice failed: timestep too small"
+    assert found.step is None
+    assert found.noise_rms is not None
+    assert len(found.checks) == 2
+
+
+def test_a_verification_without_checks_needs_a_failure():
+    with pytest.raises(ValueError, match="neither checks nor a failure"):
+        Verification()
+
+
+def test_disagreement_is_relative_until_a_millionth_of_the_largest():
+    h = np.array([1.0, 1e-3, 1e-9], dtype=complex)
+    assert disagreement(h, h) == 0
+    np.testing.assert_allclose(disagreement(h + np.array([0, 1e-5, 0]), h), 1e-2, rtol=1e-9)
+    np.testing.assert_allclose(disagreement(h + np.array([0, 0, 1e-9]), h), 1e-3, rtol=1e-9)
+
+
+def test_the_decks_are_those_of_the_band_and_the_rails(design):
+    decks = decks_of(design)
+    low, high = design.job.signal.band_hz
+    assert f".ac dec 50 {low!r} {high!r}\n" in decks.board
+    assert "saturates at -10.5 V and 10.5 V" in decks.step
+    assert decks == decks_of(design)
+
+
+def test_a_long_ringing_is_followed_to_its_end(design, simulator):
+    """A resonance of Q = 20 near 1 kHz: with a fast op-amp the step response is
+    1 - exp(-at) (cos bt + a/b sin bt)."""
+    w0, q = 1 / (10e3 * 15.9e-9), 20.0
+    circuit = tow_thomas(figures(gain_bandwidth=1e9), C=15.9e-9, damping=q * 10e3)
+    target = TransferFunction.from_factors(w0**2, (), [Factor.pair(w0, q)])
+    found = verify(replace(design, circuit=circuit, wanted=target), simulator=simulator)
+    decks = decks_of(replace(design, circuit=circuit, wanted=target))
+    start, end = (float(t) for t in decks.step.split("PWL(")[1].split()[2:5:2])
+    t = np.maximum(found.step.time_s - (start + end) / 2, 0.0)
+    a = w0 / (2 * q)
+    b = math.sqrt(w0**2 - a**2)
+    peak = design.job.signal.input_peak
+    expected = peak * (1 - np.exp(-a * t) * (np.cos(b * t) + a / b * np.sin(b * t)))
+    np.testing.assert_allclose(found.step.voltages["out"], expected, rtol=0, atol=0.02 * peak)
+
+
+@pytest.mark.parametrize(
+    ("zeros", "poles", "gain", "expected"),
+    [
+        # Settled to 0.1 %: seven time constants of the slowest pole.
+        ([], [FIRST, Factor.real(-1e5)], 1e8, 7e-3),
+        # An integrator 100/s: 5 V from 1 V after 50 ms, and a fifth more.
+        ([FIRST], [Factor.real(0.0), Factor.real(-1e4)], 1e3, 60e-3),
+        # Two poles at the origin: 1e6 t^2/2 = 5 V.
+        ([], [Factor.real(0.0), Factor.real(0.0)], 1e6, 3.8e-3),
+        # A growing pole: ten time constants.
+        ([], [Factor.real(500.0)], 1.0, 20e-3),
+        # Undamped: five time constants of the band's lower edge.
+        ([], [Factor.pair(100.0, math.inf)], 1.0, 0.8),
+        # 60 periods of the fastest resonance at most.
+        ([], [Factor.pair(2 * math.pi * 1e4, 5.0), Factor.real(-1.0)], 1.0, 6.1e-3),
+    ],
+)
+def test_the_length_of_the_step_response(zeros, poles, gain, expected):
+    target = TransferFunction.from_factors(gain, zeros, poles)
+    stop = step_duration(target, band_hz=(1.0, 1e4), step_volts=1.0, swing_limit=5.0)
+    np.testing.assert_allclose(stop, expected, rtol=0.03)
