@@ -21,9 +21,10 @@ from synth.circuit import Circuit
 from synth.evidence import Check, response_error
 from synth.job import Job
 from synth.limits import drifts, swing_checks, swings
+from synth.loop import loop_checks, loop_margins
 from synth.nodal import compile_circuit
 from synth.peaks import frequencies_of_interest
-from synth.results import Candidate, Design, NoiseResult, Swing, ToleranceResult
+from synth.results import Candidate, Design, LoopResult, NoiseResult, Swing, ToleranceResult
 from synth.sampling import judging_frequencies
 from synth.tolerance import run_boards
 
@@ -107,6 +108,7 @@ def design(
     )
     say("limits", 0, 1)
     swing = swings(circuit, wanted, job)
+    loop = _loop(job, circuit, inverted=sketch.polarity.output_inverted)
     names = {c.amplifier: _cell_name(circuit, c.amplifier) for c in circuit.cells}
     return Design(
         job=job,
@@ -123,8 +125,25 @@ def design(
         swings=swing,
         drifts=drifts(circuit),
         candidates=candidates,
-        checks=(_yield_check(tolerance, job), *swing_checks(swing, names)),
+        checks=(
+            _yield_check(tolerance, job),
+            *(loop_checks(job.loop, loop.nominal) if job.loop and loop else ()),
+            *swing_checks(swing, names),
+        ),
+        loop=loop,
         notices=(*job.notices, *_notices(circuit, job, swing)),
+    )
+
+
+def _loop(job: Job, circuit: Circuit, *, inverted: bool) -> LoopResult | None:
+    """Margins of the job's loop; an inverted board is taken to be inverted once more."""
+    if job.loop is None:
+        return None
+    program = compile_circuit(circuit)
+    sign = -1.0 if inverted else 1.0
+    return LoopResult(
+        target=loop_margins(job.loop, job.target),
+        nominal=loop_margins(job.loop, job.target, lambda f: sign * program.solve(f)),
     )
 
 

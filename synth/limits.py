@@ -22,6 +22,9 @@ __all__ = ["drifts", "swing_checks", "swings"]
 
 Real = NDArray[np.float64]
 
+# Outputs this close (a ratio) to their peak count as being at it.
+FLAT = 1e-6
+
 
 def swings(circuit: Circuit, target: TransferFunction, job: Job) -> tuple[Swing, ...]:
     """Peak, rate and current of every op-amp output at the stated input.
@@ -33,6 +36,8 @@ def swings(circuit: Circuit, target: TransferFunction, job: Job) -> tuple[Swing,
     signal = job.signal
     from_hz = signal.band_hz[0] if target.poles_at_origin else None
     everywhere = frequencies_of_interest(target, from_hz=from_hz)
+    if from_hz is None:
+        everywhere = np.concatenate([[0.0], everywhere])
     low, high = signal.band_hz
     within = np.unique(np.concatenate([np.geomspace(low, high, 400), everywhere]))
     within = within[(within >= low) & (within <= high)]
@@ -43,7 +48,8 @@ def swings(circuit: Circuit, target: TransferFunction, job: Job) -> tuple[Swing,
     bounds = _any_input_peaks(circuit, signal.input_peak) if signal.swing == "any" else None
     out: list[Swing] = []
     for k, amplifier in enumerate(circuit.amplifiers):
-        place = int(np.argmax(volts[:, k]))
+        # The lowest frequency that has the peak: DC where the response is flat from there.
+        place = int(np.argmax(volts[:, k] >= np.max(volts[:, k]) * (1 - FLAT)))
         admittance = _output_admittance(circuit, amplifier, within)
         out.append(
             Swing(
@@ -86,6 +92,7 @@ def swing_checks(found: tuple[Swing, ...], names: dict[str, str]) -> tuple[Check
     for swing in found:
         where = f"{swing.amplifier} ({names[swing.amplifier]})"
         at = "any input" if swing.peak_hz is None else f"at {swing.peak_hz:.4g} Hz"
+        at = "at DC" if swing.peak_hz == 0 else at
         checks.append(Check.at_most(f"peak of {where}", swing.peak, swing.peak_limit, "V", at))
     for swing in found:
         where = f"{swing.amplifier} ({names[swing.amplifier]})"

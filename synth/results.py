@@ -14,9 +14,10 @@ from synth.circuit import Circuit
 from synth.evidence import Check, ResponseError
 from synth.graph import BlockGraph
 from synth.job import Job
+from synth.loop import LoopMargins
 from synth.transfer import TransferFunction
 
-__all__ = ["Candidate", "Design", "Drift", "NoiseResult", "Swing", "ToleranceResult"]
+__all__ = ["Candidate", "Design", "Drift", "LoopResult", "NoiseResult", "Swing", "ToleranceResult"]
 
 Real = NDArray[np.float64]
 
@@ -32,7 +33,7 @@ class Swing:
     peak, peak_limit
         Largest output [V] and the nearer rail less the headroom [V].
     peak_hz
-        Frequency of the largest output [Hz]; None when the bound is the L1 norm.
+        Frequency of the largest output [Hz], 0 for DC; None when the bound is the L1 norm.
     slew, slew_limit
         Largest rate of change within the band [V/s] and the op-amp's slew rate [V/s].
     current, current_limit
@@ -134,6 +135,14 @@ class Candidate:
 
 
 @dataclass(frozen=True, kw_only=True)
+class LoopResult:
+    """Margins of the loop with H(s) itself, and with the nominal board in its place."""
+
+    target: LoopMargins
+    nominal: LoopMargins
+
+
+@dataclass(frozen=True, kw_only=True)
 class Design:
     """A finished design, before the simulator has had its say.
 
@@ -154,6 +163,8 @@ class Design:
         nearest neighbour, computed with the job's op-amp; shape (F,).
     tolerance, noise, swings, drifts
         The evidence.
+    loop
+        Margins, where the job names a plant.
     candidates
         The forms considered, the chosen one among them.
     checks
@@ -177,4 +188,5 @@ class Design:
     drifts: tuple[Drift, ...]
     candidates: tuple[Candidate, ...]
     checks: tuple[Check, ...]
+    loop: LoopResult | None = None
     notices: tuple[str, ...] = field(default=())
