@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 from synth.nodal.reduction import Reduction
 from synth.nodal.structure import Structure
 
-__all__ = ["Adjoint", "completed"]
+__all__ = ["Adjoint", "all_voltages", "completed"]
 
 Complex = NDArray[np.complex128]
 
@@ -61,26 +61,40 @@ def completed(
     voltages, psi
         In order of the reduction's columns and rows, shapes (F, columns), (F, rows).
     """
-    n, outputs = structure.size, structure.pins[:, 2]
-    v = np.zeros((y.shape[0], n + 2), dtype=complex)
-    v[:, list(reduction.columns)] = voltages
-    v[:, n] = 1.0
+    outputs = structure.pins[:, 2]
+    v = all_voltages(structure, reduction, voltages, a)
     currents = np.zeros_like(v)
     currents[:, list(reduction.rows)] = psi
     amplifiers = currents[:, outputs]
     currents[:, outputs] = 0.0
     if reduction.pairs:
+        # The columns of the nets taken out, in M^T psi = c, give psi of the op-amps used.
         used, nets = (list(k) for k in zip(*reduction.pairs, strict=True))
         pins = _pin_signs(structure)
-        inverse = np.linalg.inv(pins[np.ix_(used, nets)])
-        # v(+) - v(-) = a v(out) of the op-amps used gives the nets taken out, which are still 0.
-        known = a[:, used] * v[:, outputs[used]] - v @ pins[used].T
-        v[:, nets] = known @ inverse.T
-        # The columns of those nets in M^T psi = c give psi of the op-amps used.
         right = -_gathered(structure, y, currents, nets) - amplifiers @ pins[:, nets]
         right[:, [k for k, net in enumerate(nets) if net == observed]] += 1.0
-        amplifiers[:, used] = right @ inverse
+        amplifiers[:, used] = right @ np.linalg.inv(pins[np.ix_(used, nets)])
     return Adjoint(v, currents, amplifiers)
+
+
+def all_voltages(
+    structure: Structure, reduction: Reduction, voltages: Complex, a: Complex
+) -> Complex:
+    """Voltages of all nets, shape (samples, n + 2), from those of the reduced equations.
+
+    `voltages` shape (samples, columns), `a` shape (samples, U).
+    """
+    n, outputs = structure.size, structure.pins[:, 2]
+    v = np.zeros((voltages.shape[0], n + 2), dtype=complex)
+    v[:, list(reduction.columns)] = voltages
+    v[:, n] = 1.0
+    if reduction.pairs:
+        # v(+) - v(-) = a v(out) of the op-amps used gives the nets taken out, which are still 0.
+        used, nets = (list(k) for k in zip(*reduction.pairs, strict=True))
+        pins = _pin_signs(structure)
+        known = a[:, used] * v[:, outputs[used]] - v @ pins[used].T
+        v[:, nets] = known @ np.linalg.inv(pins[np.ix_(used, nets)]).T
+    return v
 
 
 def _pin_signs(structure: Structure) -> NDArray[np.float64]:

@@ -9,7 +9,6 @@ sample of what it was asked for.  Where a plan fails, LAPACK solves instead: slo
 from __future__ import annotations
 
 import contextlib
-from collections.abc import Callable
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -97,14 +96,17 @@ class Engine:
         The plan, or None where none was accurate enough.
     low, high
         Angular frequencies between which the plan was measured [rad/s].
+    silent
+        Unknowns that are 0 whatever the values are.
     """
 
     structure: Structure
     wanted: tuple[int, ...]
     observed: int | None
     chosen: Plan | None
-    low: float
-    high: float
+    low: float = 0.0
+    high: float = 0.0
+    silent: frozenset[int] = frozenset()
 
     def solve(self, boards: Boards, s: Complex) -> Complex:
         """The wanted unknowns, shape (wanted, boards, F); `s` shape (F,) [rad/s].
@@ -180,7 +182,9 @@ class Engine:
             solved = dense.solve_samples(self.structure, y, a)
         else:
             solved = dense.solve_transposed(self.structure, y, a, self.observed)
-        return solved[:, list(self.wanted)]
+        picked = solved[:, list(self.wanted)]
+        picked[:, [k for k, w in enumerate(self.wanted) if w in self.silent]] = 0.0
+        return picked
 
 
 def choose_engine(
@@ -192,8 +196,8 @@ def choose_engine(
 ) -> Engine:
     """The engine with the cheapest plan that is accurate on every board it is measured on."""
     low, high = _active_range(structure)
-    none = Engine(structure, wanted, observed, None, low * 0.999, high * 1.001)
-    if not wanted or not set(wanted) <= set(system.columns):
+    none = Engine(structure, wanted, observed, None, low * 0.999, high * 1.001, system.silent())
+    if not wanted:
         return none
     boards, s = _test_boards(structure), _test_frequencies(low, high)
     board, point = np.indices((boards.count, s.size)).reshape(2, -1)
@@ -222,7 +226,7 @@ class LazyEngine:
     def __init__(
         self,
         structure: Structure,
-        system: Callable[[], Reduction],
+        system: Reduction,
         wanted: tuple[int, ...],
         *,
         observed: int | None = None,
@@ -230,7 +234,7 @@ class LazyEngine:
         self._system = system
         self._asked = 0
         self._is_chosen = False
-        self._engine = Engine(structure, wanted, observed, None, 0.0, 0.0)
+        self._engine = Engine(structure, wanted, observed, None, silent=system.silent())
 
     def solve(self, boards: Boards, s: Complex) -> Complex:
         """As `Engine.solve`."""
@@ -238,7 +242,7 @@ class LazyEngine:
         if not self._is_chosen and self._asked >= COMPILE_AFTER:
             had = self._engine
             self._engine = choose_engine(
-                had.structure, self._system(), had.wanted, observed=had.observed
+                had.structure, self._system, had.wanted, observed=had.observed
             )
             self._is_chosen = True
         return self._engine.solve(boards, s)

@@ -16,7 +16,7 @@ from numpy.typing import ArrayLike, NDArray
 from synth.circuit import Circuit
 from synth.errors import CircuitError
 from synth.nodal import dense
-from synth.nodal.adjoint import Adjoint, completed
+from synth.nodal.adjoint import Adjoint, all_voltages, completed
 from synth.nodal.engine import Boards, LazyEngine
 from synth.nodal.noise import Noise, noise_from
 from synth.nodal.offsets import Offsets, offsets_of
@@ -115,10 +115,12 @@ class NodalProgram:
 
     def _voltages(self, columns: tuple[int, ...], boards: Boards, frequency: Real) -> Complex:
         """Voltages of nets, shape (nets, boards, F)."""
-        n = self.structure.size
+        own, n, s = self._reduction, self.structure.size, _laplace(frequency)
         unknown = tuple(sorted({c for c in columns if c < n}))
+        if not set(unknown) <= set(own.columns):
+            return self._all_voltages(boards, s)[list(columns)]
         out = np.zeros((len(columns), boards.count, frequency.size), dtype=complex)
-        solved = self._engine(unknown).solve(boards, _laplace(frequency))
+        solved = self._engine(unknown).solve(boards, s)
         for k, column in enumerate(columns):
             if column < n:
                 out[k] = solved[unknown.index(column)]
@@ -126,15 +128,23 @@ class NodalProgram:
                 out[k] = 1.0
         return out
 
+    def _all_voltages(self, boards: Boards, s: Complex) -> Complex:
+        """Voltages of all nets, those at op-amp inputs too, shape (n + 2, boards, F)."""
+        own = self._reduction
+        solved = self._engine(own.columns).solve(boards, s)
+        board, point = np.indices((boards.count, s.size)).reshape(2, -1)
+        a = dense.inverse_gains(
+            s[point], boards.gain_bandwidth[board], boards.open_loop_gain[board]
+        )
+        voltages = all_voltages(self.structure, own, solved.reshape(solved.shape[0], -1).T, a)
+        return voltages.T.reshape(-1, boards.count, s.size)
+
     def _engine(self, unknown: tuple[int, ...], observed: int | None = None) -> LazyEngine:
         """The engine for some unknowns of the equations, or of the transposed ones."""
         key = (unknown, observed)
         if key not in self._engines:
-
-            def system() -> Reduction:
-                own = self._reduction
-                return own if observed is None else own.transposed(observed)
-
+            own = self._reduction
+            system = own if observed is None else own.transposed(observed)
             self._engines[key] = LazyEngine(self.structure, system, unknown, observed=observed)
         return self._engines[key]
 

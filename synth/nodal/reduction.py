@@ -74,6 +74,16 @@ class Reduction:
                     queue.append(reached)
         return depth
 
+    def silent(self) -> frozenset[int]:
+        """Columns that cannot answer to the source whatever the values are.
+
+        Where every row holds the column it determines, these are the ones the signal flow does
+        not reach; otherwise none is claimed.
+        """
+        if any((r, c) not in self.entries for r, c in self.flow.items()):
+            return frozenset()
+        return frozenset(self.columns) - self.depths().keys()
+
     def transposed(self, observed: int) -> Reduction:
         """The system whose unknowns psi solve M^T psi = unit vector at column `observed`."""
         entries = {(c, r): entry for (r, c), entry in self.entries.items() if c != self.source}
