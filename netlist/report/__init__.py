@@ -1,0 +1,1 @@
+"""The report of a design: `page` renders it, `asked` and `found` word what it says."""

@@ -94,7 +94,7 @@ def report_page(
         roots=asked.roots(job.target),
         gains=asked.gain_lines(job),
         requirements=asked.requirements(job),
-        checks=found.check_rows(checks),
+        checks=found.check_rows(sorted(checks, key=lambda c: c.passed)),  # what fails comes first
         low_yield=job.accept.yield_share is None and design.tolerance.share < LOW_YIELD,
         forms=found.form_rows(design.candidates, design.form),
         swings=found.swing_rows(design.swings, design.circuit),

@@ -197,3 +197,10 @@ def test_an_operating_point_at_ground_is_one_sentence_and_another_is_listed():
     assert "0\xa0V at every net (3 nets" in shown(checked).replace(" V at", "\xa0V at")
     assert "1 of 2 nets are not at" in shown(stuck)
     assert "−10.5" in shown(stuck)
+
+
+def test_what_fails_stands_at_the_top_of_the_checks():
+    missed = Check("peak at U9", 10.5, 12.0, "V", False)
+    found = Page(page(checks=(*boards.LIMITS, missed))).text
+    table = found[found.index("limit value margin result") :]
+    assert table.index("peak at U9") < table.index("magnitude error")
