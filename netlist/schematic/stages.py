@@ -1,0 +1,205 @@
+r"""The inverting stage: one op-amp with + at ground, a feedback part, input resistors.
+
+Summing integrators, summing amplifiers and inverters are all this stage; they differ in the
+feedback part and in the caption.  Its own origin lies where the summing bus crosses the line
+of the op-amp's output::
+
+                  feedback
+            +------[   ]------+
+            |                 |
+            +----- -\         |
+    -[ R ]--+        >--------+---- output, y = 0
+    -[ R ]--+   +- +/
+    -[ R ]--+   |
+               ground
+
+The first resistor lies on the line of the output, so that a chain of stages is a straight
+line; the others hang below it at a constant pitch.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass
+from types import MappingProxyType
+
+from netlist.schematic import lettering
+from netlist.schematic.geometry import Box, Point, Sheet, Symbol, Text
+from synth.circuit import GROUND, Amplifier, Cell, Circuit, Passive
+
+__all__ = ["PITCH", "STAGES", "TEE", "Stage", "draw_ground", "draw_resistor", "resistor_length"]
+
+PITCH = 30.0  # from one input resistor to the next
+TEE = 105.0  # where the feedback meets the output
+_MINUS, _PLUS = -15.0, 15.0  # the inputs
+_BACK, _TIP = 30.0, 90.0  # the op-amp
+_OVER = -50.0  # the feedback part
+_GROUND_X = 16.0
+_CAPTION = 42.0  # baseline
+_SMALL = 8.0
+_BODY = (30.0, 10.0)  # resistor
+_PLATES = (6.0, 20.0)  # capacitor: gap, height
+
+
+@dataclass(frozen=True)
+class Stage:
+    """How one kind of cell is drawn.
+
+    Parameters
+    ----------
+    draw
+        ``draw(sheet, circuit, cell, at, stack=..., lead=..., main=...)``.
+    caption
+        Words under the op-amp, with the signal its output carries.
+    """
+
+    draw: Callable[..., None]
+    caption: Callable[[Cell], str]
+    above: float = 76.0
+
+    def below(self, cell: Cell) -> float:
+        """How far it reaches below its output line [px]."""
+        return max(_CAPTION + 4, (len(cell.inputs) - 1) * PITCH + 8)
+
+    def right(self, cell: Cell) -> float:
+        """Where the caption ends [px]."""
+        return _BACK + lettering.width(self.caption(cell), _SMALL)
+
+
+def resistor_length(part: Passive) -> float:
+    """Length of a lying resistor with its leads, so that its label fits between its ends."""
+    w = lettering.width(_label(part), 10.0)
+    return 10.0 * max(6, int((w + 8) / 10) + 1)
+
+
+def draw_resistor(
+    sheet: Sheet, part: Passive, left: Point, length: float, nets: tuple[str, str], *, heavy: bool
+) -> None:
+    """A lying resistor with leads from `left` over `length`; `nets` from left to right."""
+    x, y = left
+    middle = x + length / 2
+    half, _ = _half_size(part)
+    _lying(sheet, part, (middle, y))
+    sheet.wire(nets[0], left, (middle - half, y), heavy=heavy)
+    sheet.wire(nets[1], (middle + half, y), (x + length, y), heavy=heavy)
+
+
+def draw_ground(sheet: Sheet, at: Point) -> None:
+    """A ground symbol hanging from `at`."""
+    x, y = at
+    sheet.symbols.append(Symbol("ground", "", at, Box(x - 8, y, x + 8, y + 8), (("0", at),)))
+
+
+def _lying(sheet: Sheet, part: Passive, at: Point) -> None:
+    """A resistor or capacitor on a horizontal line, its label above."""
+    x, y = at
+    half, rise = _half_size(part)
+    pins = (("1", (x - half, y)), ("2", (x + half, y)))
+    box = Box(x - half, y - rise, x + half, y + rise)
+    dashed = not part.on_board
+    sheet.symbols.append(
+        Symbol(part.kind, part.ref, at, box, pins, dashed=dashed, hint=_hint(part))
+    )
+    sheet.texts.append(Text((x, y - rise - 3), _label(part), side="middle"))
+
+
+def _label(part: Passive) -> str:
+    return f"{part.ref} {lettering.value_text(part)}"
+
+
+def _hint(part: Passive) -> str:
+    rule = f", {part.rule.series} {100 * part.tolerance:g} %" if part.rule else ""
+    return f"{_label(part)}{rule}" + (f": sets {part.sets}" if part.sets else "")
+
+
+def _draw_inverting(
+    sheet: Sheet,
+    circuit: Circuit,
+    cell: Cell,
+    at: Point,
+    *,
+    stack: Sequence[str],
+    lead: float,
+    main: str,
+) -> None:
+    r"""The inverting stage with its bus at `at`.
+
+    `stack` are the input resistors from top to bottom, `lead` the length of each, `main` the
+    one on the main path or ``""``.  The output ends at the feedback tee.
+    """
+    x, y = at
+    top, last = y + _OVER, y + (len(stack) - 1) * PITCH
+    for k, ref in enumerate(stack):
+        part = circuit.by_ref[ref]
+        far = part.nets[1] if part.nets[0] == cell.summing else part.nets[0]
+        place = (x - lead, y + k * PITCH)
+        draw_resistor(sheet, part, place, lead, (far, cell.summing), heavy=ref == main)
+    _draw_bus(sheet, cell, at, last, y + PITCH * stack.index(main) if main else None)
+    feedback = circuit.by_ref[cell.feedback]
+    middle = x + TEE / 2
+    half, _ = _half_size(feedback)
+    _lying(sheet, feedback, (middle, top))
+    sheet.wire(cell.summing, (x, top), (middle - half, top))
+    sheet.wire(cell.output, (middle + half, top), (x + TEE, top), (x + TEE, y))
+    amplifier = next(a for a in circuit.amplifiers if a.ref == cell.amplifier)
+    _draw_op_amp(sheet, amplifier, (x + _BACK, y), STAGES[cell.kind].caption(cell))
+    sheet.wire(cell.output, (x + _TIP, y), (x + TEE, y), heavy=bool(main))
+    sheet.wire(GROUND, (x + _BACK, y + _PLUS), (x + _GROUND_X, y + _PLUS))
+    sheet.wire(GROUND, (x + _GROUND_X, y + _PLUS), (x + _GROUND_X, y + _PLUS + 7))
+    draw_ground(sheet, (x + _GROUND_X, y + _PLUS + 7))
+
+
+def _draw_bus(sheet: Sheet, cell: Cell, at: Point, last: float, entry: float | None) -> None:
+    """The summing bus; from `entry`, where the main path comes in, to the op-amp it is heavy."""
+    x, y = at
+    minus = y + _MINUS
+    sheet.wire(cell.summing, (x, minus), (x + _BACK, minus), heavy=entry is not None)
+    sheet.wire(cell.summing, (x, y + _OVER), (x, minus))
+    if entry is None:
+        sheet.wire(cell.summing, (x, minus), (x, last))
+    else:
+        sheet.wire(cell.summing, (x, minus), (x, entry), heavy=True)
+        sheet.wire(cell.summing, (x, entry), (x, last))
+
+
+def _half_size(part: Passive) -> tuple[float, float]:
+    """Half the length and half the height of a lying symbol."""
+    length, height = _BODY if part.kind == "resistor" else _PLATES
+    return length / 2, height / 2
+
+
+def _draw_op_amp(sheet: Sheet, amplifier: Amplifier, back: Point, caption: str) -> None:
+    """The triangle; the reference inside where it fits, else before the caption."""
+    x, y = back
+    pins = (
+        ("-", (x, y + _MINUS)),
+        ("+", (x, y + _PLUS)),
+        ("out", (x + _TIP - _BACK, y)),
+    )
+    box = Box(x, y - 30, x + _TIP - _BACK, y + 30)
+    f = amplifier.figures
+    hint = f"{amplifier.ref} {f.kind}" + (f": {amplifier.sets}" if amplifier.sets else "")
+    sheet.symbols.append(Symbol("op_amp", amplifier.ref, back, box, pins, hint=hint))
+    if _fits(amplifier.ref):
+        sheet.texts.append(Text((x + 23, y + 3.6), amplifier.ref, bold=True, side="middle"))
+    sheet.texts.append(Text((x, y + _CAPTION), caption, _SMALL, tone="faint"))
+
+
+def _fits(ref: str) -> bool:
+    """Whether a reference fits into the op-amp."""
+    return lettering.width(ref, 10.0, bold=True) <= 32
+
+
+def _caption(cell: Cell) -> str:
+    """What the cell is and the signal its output carries; the reference if it stands nowhere
+    else."""
+    signal = ("" if cell.polarity > 0 else "−") + cell.block
+    ref = "" if _fits(cell.amplifier) else f"{cell.amplifier} "
+    return f"{ref}{cell.kind}: {signal}"
+
+
+_INVERTING = Stage(_draw_inverting, _caption)
+STAGES: Mapping[str, Stage] = MappingProxyType(
+    {"integrator": _INVERTING, "adder": _INVERTING, "inverter": _INVERTING}
+)
+"""How each kind of cell is drawn."""
