@@ -19,6 +19,7 @@ from synth.candidates import Sketch, choose_form
 from synth.choosing import choose_values
 from synth.circuit import Circuit
 from synth.evidence import Check, response_error
+from synth.graph import BlockGraph
 from synth.job import Job
 from synth.limits import drifts, swing_checks, swings
 from synth.loop import loop_checks, loop_margins
@@ -115,7 +116,7 @@ def design(
         form=sketch.form,
         inverted=sketch.polarity.output_inverted,
         wanted=wanted,
-        graph=sketch.graph,
+        graph=_as_chosen(sketch, circuit, frequency),
         circuit=circuit,
         frequency_hz=frequency,
         nominal=response_error(program.solve(frequency), response),
@@ -133,6 +134,20 @@ def design(
         loop=loop,
         notices=(*job.notices, *_notices(circuit, job, swing)),
     )
+
+
+def _as_chosen(sketch: Sketch, circuit: Circuit, frequency_hz: Real) -> BlockGraph:
+    """The sketch's graph at the levels the chosen values give: the choice moves the scales of
+    the states, which H(s) does not see."""
+    signals = sketch.graph.signals(2j * np.pi * frequency_hz)
+    cells = [c for c in circuit.cells if c.kind != "inverter"]
+    volts = np.abs(compile_circuit(circuit).solve(frequency_hz, nets=[c.output for c in cells]))
+    levels = {
+        cell.block: float(np.exp(np.mean(np.log(volts[:, k] / np.abs(signals[cell.block])))))
+        for k, cell in enumerate(cells)
+        if cell.block != sketch.graph.output
+    }
+    return sketch.graph.rescaled(levels)
 
 
 def _loop(job: Job, circuit: Circuit, *, inverted: bool) -> LoopResult | None:

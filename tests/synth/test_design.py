@@ -1,0 +1,166 @@
+"""The whole pipeline on small jobs: every promise of the result, and what it refuses."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import replace
+
+import numpy as np
+import pytest
+
+from synth.design import compare_forms, design
+from synth.errors import JobError, RealizationError
+from synth.evidence import response_error
+from synth.job import Accept, Loop
+from synth.nodal import compile_circuit
+from synth.readback import block_names, graph_of
+from synth.transfer import Factor, TransferFunction
+from tests.jobs import capacitor_rule, job_for
+from tests.strategies import butterworth
+
+BAND = (100.0, 2e3)
+PI = TransferFunction.from_factors(2, [Factor.real(-600)], [Factor.real(0)])
+
+
+def test_a_design_holds_together() -> None:
+    """Nominal error from the values, yield within its interval, swing below the rails, the
+    block diagram's weights those of the parts."""
+    job = job_for(butterworth(3, 1e3), BAND, input_peak=3.0)
+    found = design(job, boards=200)
+    response = job.target.response(found.frequency_hz)
+    error = response_error(compile_circuit(found.circuit).solve(found.frequency_hz), response)
+    assert error.rms == pytest.approx(found.nominal.rms, rel=1e-9)
+    assert found.nominal.rms < found.nearest.rms
+    assert found.tolerance.low <= found.tolerance.share <= found.tolerance.high
+    assert all(c.passed for c in found.checks)
+    assert {c.form for c in found.candidates} == {"controllable", "observable", "cascade"}
+    names = block_names(found.circuit)
+    built = graph_of(found.circuit)
+    for cell in found.circuit.cells:
+        if cell.kind == "inverter":
+            continue
+        weights = sorted(abs(float(t.weight)) for t in found.graph.by_name[cell.block].terms)
+        direct = list(built.by_name[names[cell.output]].terms)
+        inverters = {names[c.output] for c in found.circuit.cells if c.kind == "inverter"}
+        if any(t.source in inverters for t in direct):
+            continue
+        np.testing.assert_allclose(sorted(abs(float(t.weight)) for t in direct), weights, rtol=0.05)
+
+
+def test_same_seed_same_design_and_another_seed_other_boards() -> None:
+    """The seed decides the choice of values and the boards."""
+    job = job_for(butterworth(2, 1e3), BAND)
+    first, again, other = (design(job, boards=150, seed=s) for s in (1, 1, 2))
+    assert first.circuit == again.circuit
+    assert first.tolerance.error_95_db == again.tolerance.error_95_db
+    assert first.tolerance.error_95_db != other.tolerance.error_95_db
+
+
+def test_an_output_that_must_clip_fails_its_swing_check() -> None:
+    """H alone sets the output: 20 V peak on 12 V rails fails, and nothing else does."""
+    job = job_for(butterworth(2, 1e3), BAND, input_peak=20.0)
+    failed = [c for c in design(job, boards=50).checks if not c.passed]
+    assert failed
+    assert all(c.name.startswith(("peak of", "inverter")) for c in failed)
+    assert failed[0].value == pytest.approx(20.0, rel=0.05)
+
+
+def test_pole_at_the_origin_is_allowed_flagged_and_measured_from_the_band() -> None:
+    """The integrator drifts at Vos/(R C) + Ib/C, and peaks are those from the band's edge up."""
+    job = job_for(PI, (10.0, 5e3), input_peak=0.1)
+    found = design(job, boards=50)
+    (drift,) = found.drifts
+    cell = next(c for c in found.circuit.cells if c.kind == "integrator")
+    capacitor = found.circuit.by_ref[cell.feedback].value
+    resistor = found.circuit.by_ref[cell.inputs[0]].value
+    assert drift.rate == pytest.approx(1e-3 / (resistor * capacitor) + 100e-9 / capacitor)
+    output = next(s for s in found.swings if s.net == "out")
+    expected = 0.1 * abs(PI.response(np.array([10.0]))[0])
+    assert output.peak == pytest.approx(expected, rel=0.01)
+    assert any("pole at s = 0" in n for n in found.notices)
+
+
+def test_any_input_uses_the_l1_bound() -> None:
+    """With swing = "any" the output's peak is the L1 norm of H times the input."""
+    q = 2.0
+    w0 = 2 * math.pi * 1e3
+    target = TransferFunction.from_factors(w0**2, [], [Factor.pair(w0, q)])
+    found = design(job_for(target, BAND, swing="any", input_peak=1.0), boards=50)
+    zeta = 1 / (2 * q)
+    l1 = 1 / math.tanh(math.pi * zeta / (2 * math.sqrt(1 - zeta**2)))
+    output = next(s for s in found.swings if s.net == "out")
+    assert output.peak == pytest.approx(l1, rel=0.02)
+    assert output.peak_hz is None
+    assert all(s.peak <= s.peak_limit for s in found.swings)
+
+
+def test_any_input_with_a_pole_at_the_origin_is_refused() -> None:
+    """No bound exists; the message says what to use."""
+    with pytest.raises(RealizationError, match=r"signal.swing: got 'any'.*expected 'sine'"):
+        design(job_for(PI, (10.0, 5e3), swing="any"), boards=10)
+
+
+def test_either_polarity_gives_the_negative_where_it_saves_an_op_amp() -> None:
+    """The wanted response is -H, the error is measured against it."""
+    job = job_for(butterworth(1, 1e3), BAND, inverted="either")
+    found = design(job, boards=50)
+    assert found.inverted
+    assert len(found.circuit.amplifiers) == 1
+    assert found.nominal.largest_deg < 1.0
+    np.testing.assert_allclose(
+        found.wanted.response(found.frequency_hz), -job.target.response(found.frequency_hz)
+    )
+
+
+def test_auto_takes_the_form_with_the_smallest_spread() -> None:
+    """Against the limits, among the forms that fit."""
+    job = job_for(butterworth(6, 1e3), BAND)
+    chosen, candidates = compare_forms(job)
+    spread = {c.form: max(c.spread_db / 0.5, c.spread_deg / 3.0) for c in candidates if c.possible}
+    assert spread[chosen] == min(spread.values())
+    assert chosen == "cascade"
+
+
+def test_yield_limit_is_a_check() -> None:
+    """5 % capacitors cannot hold 0.1 dB."""
+    job = job_for(
+        butterworth(3, 1e3),
+        BAND,
+        capacitors=capacitor_rule(tolerance=0.05),
+        accept=Accept(magnitude_db=0.1, phase_deg=1.0, yield_share=0.9),
+    )
+    check = next(c for c in design(job, boards=100).checks if c.name == "yield")
+    assert not check.passed
+    assert check.limit == pytest.approx(90)
+
+
+def test_loop_margins_are_checked_against_their_limits() -> None:
+    """The nominal board's margins stand beside those of H(s)."""
+    plant = TransferFunction.from_polynomials([3e5], [1, 2e3, 0])
+    job = job_for(PI, (10.0, 5e3), input_peak=0.1)
+    job = replace(job, loop=Loop(plant=plant, phase_margin_deg=89.0))
+    found = design(job, boards=50)
+    assert found.loop.nominal.phase_margin_deg == pytest.approx(
+        found.loop.target.phase_margin_deg, abs=1.0
+    )
+    failed = {c.name for c in found.checks if not c.passed}
+    assert failed == {"phase margin"}
+
+
+def test_unknown_form_is_refused() -> None:
+    """With the names there are."""
+    with pytest.raises(JobError, match="expected auto, controllable, observable, cascade"):
+        design(job_for(butterworth(2, 1e3), BAND, form="spiral"), boards=10)
+
+
+def test_progress_is_told_stage_by_stage() -> None:
+    """Stages in order, done never above total."""
+    told: list[tuple[str, int, int]] = []
+    design(
+        job_for(butterworth(1, 1e3), BAND),
+        boards=250,
+        progress=lambda stage, done, total: told.append((stage, done, total)),
+    )
+    stages = list(dict.fromkeys(stage for stage, _, _ in told))
+    assert stages == ["forms", "values", "boards", "limits"]
+    assert all(0 <= done <= total for _, done, total in told)
