@@ -16,17 +16,15 @@ from numpy.typing import NDArray
 
 from synth.errors import NumericalError
 from synth.nodal import dense
-from synth.nodal.elimination import Plan, plan
+from synth.nodal.plan import Plan, plan
 from synth.nodal.reduction import Reduction, quantities
+from synth.nodal.region import Boards, Region
 from synth.nodal.structure import Structure
 
-__all__ = ["Boards", "Engine", "LazyEngine", "choose_engine"]
+__all__ = ["Engine", "LazyEngine", "choose_engine"]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
-
-TRUSTED_RATIO = 4.0
-"""A plan is measured with parts and op-amps up to this factor from nominal, and trusted there."""
 
 RELATIVE_ERROR = 1e-10
 """Relative error a plan may always have."""
@@ -48,39 +46,6 @@ SAMPLES = 64
 
 
 @dataclass(frozen=True, eq=False)
-class Boards:
-    """Values of parts and figures of op-amps, board by board.
-
-    `values` (boards, P) [ohm], [F]; `gain_bandwidth` [Hz] and `open_loop_gain` (boards, U).
-    """
-
-    values: Real
-    gain_bandwidth: Real
-    open_loop_gain: Real
-
-    @property
-    def count(self) -> int:
-        """Number of boards."""
-        return int(self.values.shape[0])
-
-    def part(self, start: int, stop: int) -> Boards:
-        """Boards start to stop - 1."""
-        return Boards(
-            self.values[start:stop],
-            self.gain_bandwidth[start:stop],
-            self.open_loop_gain[start:stop],
-        )
-
-    def samples(
-        self, structure: Structure, s: Complex, board: NDArray[np.intp], point: NDArray[np.intp]
-    ) -> tuple[Complex, Complex]:
-        """y and a of `synth.nodal.dense` for pairs of board and frequency index."""
-        y = dense.admittances(structure, s[point], self.values[board])
-        a = dense.inverse_gains(s[point], self.gain_bandwidth[board], self.open_loop_gain[board])
-        return y, a
-
-
-@dataclass(frozen=True, eq=False)
 class Engine:
     """Solves one system for some of its unknowns.
 
@@ -94,8 +59,8 @@ class Engine:
         None for the equations themselves; for the transposed ones, the net observed.
     chosen
         The plan, or None where none was accurate enough.
-    low, high
-        Angular frequencies between which the plan was measured [rad/s].
+    region
+        Where the plan was measured, and is trusted without a check.
     silent
         Unknowns that are 0 whatever the values are.
     """
@@ -104,9 +69,8 @@ class Engine:
     wanted: tuple[int, ...]
     observed: int | None
     chosen: Plan | None
-    low: float = 0.0
-    high: float = 0.0
-    silent: frozenset[int] = frozenset()
+    region: Region
+    silent: frozenset[int]
 
     def solve(self, boards: Boards, s: Complex) -> Complex:
         """The wanted unknowns, shape (wanted, boards, F); `s` shape (F,) [rad/s].
@@ -125,7 +89,7 @@ class Engine:
         )
         with np.errstate(all="ignore"):
             solved = self.chosen.solve(quantity, s)
-        if not self._is_trusted(boards, s):
+        if not self.region.holds(boards, s):
             board, point = _spread(boards.count, s.size)
             if not self._agrees(boards, s, board, point, solved[:, board, point].T):
                 return self._by_lapack(boards, s)
@@ -133,22 +97,6 @@ class Engine:
             board, point = np.nonzero(~np.isfinite(solved).all(axis=0))
             solved[:, board, point] = self._samples_by_lapack(boards, s, board, point).T
         return solved
-
-    def _is_trusted(self, boards: Boards, s: Complex) -> bool:
-        size = np.abs(s)
-        if size.min() < self.low or size.max() > self.high:
-            return False
-        own = self.structure
-        pairs = (
-            (boards.values, own.values),
-            (boards.gain_bandwidth, own.gain_bandwidth),
-            (boards.open_loop_gain, own.open_loop_gain),
-        )
-        return all(
-            bool(np.all(given <= nominal * TRUSTED_RATIO))
-            and bool(np.all(given * TRUSTED_RATIO >= nominal))
-            for given, nominal in pairs
-        )
 
     def _agrees(
         self,
@@ -195,11 +143,11 @@ def choose_engine(
     observed: int | None = None,
 ) -> Engine:
     """The engine with the cheapest plan that is accurate on every board it is measured on."""
-    low, high = _active_range(structure)
-    none = Engine(structure, wanted, observed, None, low * 0.999, high * 1.001, system.silent())
+    region = Region.of(structure)
+    none = Engine(structure, wanted, observed, None, region, system.silent())
     if not wanted:
         return none
-    boards, s = _test_boards(structure), _test_frequencies(low, high)
+    boards, s = region.boards(), region.frequencies()
     board, point = np.indices((boards.count, s.size)).reshape(2, -1)
     columns = list(wanted)
     try:
@@ -234,7 +182,9 @@ class LazyEngine:
         self._system = system
         self._asked = 0
         self._is_chosen = False
-        self._engine = Engine(structure, wanted, observed, None, silent=system.silent())
+        self._engine = Engine(
+            structure, wanted, observed, None, Region.of(structure), system.silent()
+        )
 
     def solve(self, boards: Boards, s: Complex) -> Complex:
         """As `Engine.solve`."""
@@ -268,40 +218,6 @@ def _is_accurate(solved: Complex, exact: Complex, rounding: Real) -> bool:
         close = np.abs(solved - exact) <= allowed * np.abs(exact)
     # An unknown that is 0, or noise where it should be 0, carries no scale of its own.
     return bool(np.all(close | ~(rounding < 1e-3)))
-
-
-def _active_range(structure: Structure) -> tuple[float, float]:
-    """Angular frequencies that hold every corner of the circuit, with two decades to spare."""
-    resistances = structure.values[structure.is_resistor]
-    capacitances = structure.values[~structure.is_resistor]
-    corners = [2 * np.pi * structure.gain_bandwidth]
-    corners.append(corners[0] / structure.open_loop_gain)
-    if resistances.size and capacitances.size:
-        corners.append(1.0 / np.multiply.outer(resistances, capacitances).ravel())
-    found = np.concatenate(corners)
-    if not found.size:
-        return 1.0, 1e9
-    return float(found.min()) / 100, float(found.max()) * 100
-
-
-def _test_frequencies(low: float, high: float) -> Complex:
-    return np.asarray(1j * np.geomspace(low, high, 20), dtype=np.complex128)
-
-
-def _test_boards(structure: Structure, count: int = 4) -> Boards:
-    """The nominal board and others up to the trusted ratio away, always the same ones."""
-    generator = np.random.default_rng(20)
-
-    def around(nominal: Real) -> Real:
-        exponent = generator.uniform(-1, 1, (count, nominal.size))
-        exponent[0] = 0.0
-        return np.asarray(nominal * TRUSTED_RATIO**exponent)
-
-    return Boards(
-        around(structure.values),
-        around(structure.gain_bandwidth),
-        around(structure.open_loop_gain),
-    )
 
 
 def _spread(boards: int, frequencies: int) -> tuple[NDArray[np.intp], NDArray[np.intp]]:

@@ -17,10 +17,12 @@ from synth.circuit import Circuit
 from synth.errors import CircuitError
 from synth.nodal import dense
 from synth.nodal.adjoint import Adjoint, all_voltages, completed
-from synth.nodal.engine import Boards, LazyEngine
+from synth.nodal.arguments import checked_columns, checked_frequency, common_boards
+from synth.nodal.engine import LazyEngine
 from synth.nodal.noise import Noise, noise_from
 from synth.nodal.offsets import Offsets, offsets_of
 from synth.nodal.reduction import Reduction, reduce
+from synth.nodal.region import Boards
 from synth.nodal.sensitivity import Sensitivities, sensitivities_from
 from synth.nodal.structure import Structure, structure_of
 
@@ -98,10 +100,10 @@ class NodalProgram:
         """
         structure = self.structure
         frequency = checked_frequency(frequency_hz)
-        parts = self._checked("values", values, structure.values)
-        gbw = self._checked("gain_bandwidth", gain_bandwidth, structure.gain_bandwidth)
-        gain = self._checked("open_loop_gain", open_loop_gain, structure.open_loop_gain)
-        count = _common_boards(parts, gbw, gain)
+        parts = checked_columns("values", values, structure.values)
+        gbw = checked_columns("gain_bandwidth", gain_bandwidth, structure.gain_bandwidth)
+        gain = checked_columns("open_loop_gain", open_loop_gain, structure.open_loop_gain)
+        count = common_boards(parts, gbw, gain)
         boards = Boards(
             *(np.broadcast_to(array, (count or 1, array.shape[-1])) for array in (parts, gbw, gain))
         )
@@ -119,8 +121,10 @@ class NodalProgram:
         unknown = tuple(sorted({c for c in columns if c < n}))
         if not set(unknown) <= set(own.columns):
             return self._all_voltages(boards, s)[list(columns)]
-        out = np.zeros((len(columns), boards.count, frequency.size), dtype=complex)
         solved = self._engine(unknown).solve(boards, s)
+        if columns == unknown:
+            return solved
+        out = np.zeros((len(columns), boards.count, frequency.size), dtype=complex)
         for k, column in enumerate(columns):
             if column < n:
                 out[k] = solved[unknown.index(column)]
@@ -261,26 +265,10 @@ class NodalProgram:
         )
 
     def _one_board(self, values: ArrayLike | None) -> Real:
-        parts = self._checked("values", values, self.structure.values)
+        parts = checked_columns("values", values, self.structure.values)
         if parts.ndim != 1:
             raise CircuitError(f"got values of shape {parts.shape}, expected one board")
         return parts
-
-    def _checked(self, name: str, given: ArrayLike | None, nominal: Real) -> Real:
-        """`given` as an array of shape (K,) or (boards, K), K the size of `nominal`."""
-        if given is None:
-            return nominal
-        array = np.asarray(given, dtype=float)
-        if array.ndim == 0 and name != "values":
-            array = np.full(nominal.size, float(array))
-        if array.ndim not in (1, 2) or array.shape[-1] != nominal.size:
-            raise CircuitError(
-                f"got {name} of shape {array.shape}, expected ({nominal.size},) or "
-                f"(boards, {nominal.size})"
-            )
-        if not (np.all(array > 0) and np.all(np.isfinite(array))):
-            raise CircuitError(f"got {name} that are not all positive and finite")
-        return array
 
 
 def compile_circuit(circuit: Circuit) -> NodalProgram:
@@ -294,28 +282,6 @@ def compile_circuit(circuit: Circuit) -> NodalProgram:
     return NodalProgram(circuit, structure_of(circuit))
 
 
-def checked_frequency(frequency_hz: ArrayLike) -> Real:
-    """Frequencies as an array of shape (F,).
-
-    Raises
-    ------
-    CircuitError
-        A frequency that is negative or not finite, or not one axis.
-    """
-    frequency = np.atleast_1d(np.asarray(frequency_hz, dtype=float))
-    if frequency.ndim != 1 or not (np.all(frequency >= 0) and np.all(np.isfinite(frequency))):
-        raise CircuitError("got frequencies that are not one row of finite numbers from 0 upward")
-    return frequency
-
-
 def _laplace(frequency: Real) -> Complex:
     """s = j 2 pi f [rad/s]."""
     return np.asarray(2j * np.pi * frequency, dtype=np.complex128)
-
-
-def _common_boards(*arrays: Real) -> int | None:
-    """The number of boards the arrays agree on, None when none has an axis of boards."""
-    boards = {array.shape[0] for array in arrays if array.ndim == 2}
-    if len(boards) > 1:
-        raise CircuitError(f"got arrays for {sorted(boards)} boards, expected one number of boards")
-    return boards.pop() if boards else None

@@ -1,13 +1,18 @@
 """The compiled elimination: what it computes, and that its fallbacks are taken."""
 
+import os
+import subprocess
+import sys
+
 import numpy as np
 import pytest
 
 from synth.circuit import Circuit
 from synth.nodal import compile_circuit, dense
-from synth.nodal.elimination import plan
-from synth.nodal.engine import Boards, Engine, choose_engine
+from synth.nodal.engine import COMPILE_AFTER, Engine, choose_engine
+from synth.nodal.plan import plan
 from synth.nodal.reduction import DEGREE, quantities, reduce
+from synth.nodal.region import Boards, Region
 from synth.nodal.structure import structure_of
 from tests.synth.nodal.boards import (
     amplifier,
@@ -123,7 +128,7 @@ def test_a_plan_that_fails_outside_its_region_is_replaced_by_lapack():
     other = choose_engine(wrong, reduce(wrong), (wrong.output,))
     broken = plan(reduce(wrong), (0,), np.random.default_rng(0))
     assert other.chosen is not None
-    engine = Engine(right, (right.output,), None, broken, 0.0, 1.0)
+    engine = Engine(right, (right.output,), None, broken, Region(right, 0.0, 1.0), frozenset())
     boards = nominal(right, 2)
     assert not np.allclose(
         broken.solve(
@@ -151,6 +156,33 @@ def test_a_response_that_vanishes_by_structure_is_exactly_zero():
     assert not compile_circuit(circuit).solve(f, values=values).any()
 
 
+def test_the_same_circuit_gives_the_same_bytes_in_every_process():
+    """Plans depend on no hash seed: results are reproducible to the last bit."""
+    script = """
+import hashlib
+import numpy as np
+from synth.nodal import compile_circuit
+from tests.synth.nodal.boards import chain, op_amp
+program = compile_circuit(chain(5, op_amp(), source=50.0))
+values = program.structure.values * np.linspace(0.9, 1.1, 40)[:, None]
+f = np.geomspace(10, 1e5, 60)
+found = program.solve(f, values=values), program.solve(np.tile(f, 30), nets=["x1", "x2", "out"])
+print(hashlib.sha256(b"".join(a.tobytes() for a in found)).hexdigest())
+"""
+    digests = {
+        subprocess.run(
+            [sys.executable, "-c", script],
+            env={**os.environ, "PYTHONHASHSEED": seed},
+            capture_output=True,
+            text=True,
+            check=True,
+            timeout=60,
+        ).stdout
+        for seed in ("1", "2", "3")
+    }
+    assert len(digests) == 1
+
+
 def test_pieces_of_a_batch_are_the_same_boards():
     """Chunks inside do not show: any subset of boards gives the same numbers."""
     program = compile_circuit(chain(5, op_amp()))
@@ -161,3 +193,81 @@ def test_pieces_of_a_batch_are_the_same_boards():
         np.testing.assert_allclose(
             program.solve(f, values=values[start:stop]), whole[start:stop], rtol=1e-13
         )
+
+
+ODD = {
+    "only fixtures": Circuit(
+        passives=(resistor("R1", "in", "0", 1e3),), amplifiers=(), output_net="in"
+    ),
+    "a part across one net": Circuit(
+        passives=(
+            resistor("R1", "in", "out", 1e3),
+            resistor("R2", "out", "out", 1e3),
+            capacitor("C1", "out", "0", 1e-9),
+            capacitor("C2", "out", "0", 2e-9),
+        ),
+        amplifiers=(),
+    ),
+    "a comparator without feedback": Circuit(
+        passives=(resistor("R1", "out", "0", 1e3),),
+        amplifiers=(amplifier("U1", "in", "0", "out", op_amp()),),
+    ),
+    "positive feedback": Circuit(
+        passives=(resistor("R1", "in", "p", 1e3), resistor("R2", "p", "out", 5e3)),
+        amplifiers=(amplifier("U1", "p", "0", "out", op_amp()),),
+    ),
+    "two op-amps on one summing net": Circuit(
+        passives=(
+            resistor("R1", "in", "m", 1e3),
+            resistor("R2", "m", "y", 5e3),
+            capacitor("C1", "m", "out", 1e-8),
+        ),
+        amplifiers=(
+            amplifier("U1", "0", "m", "y", op_amp()),
+            amplifier("U2", "y", "m", "out", op_amp(1e6, 1e4)),
+        ),
+    ),
+    "inputs that follow each other": Circuit(
+        passives=(
+            resistor("R1", "in", "p", 1e3),
+            resistor("R2", "p", "y", 2e3),
+            resistor("R3", "q", "out", 3e3),
+            capacitor("C1", "q", "0", 1e-9),
+        ),
+        amplifiers=(
+            amplifier("U1", "q", "p", "y", op_amp()),
+            amplifier("U2", "p", "q", "out", op_amp(1e6, 1e4)),
+        ),
+    ),
+    "the output is a summing net": Circuit(
+        passives=(resistor("R1", "in", "out", 1e3), resistor("R2", "out", "y", 2e3)),
+        amplifiers=(amplifier("U1", "0", "out", "y", op_amp()),),
+    ),
+    "an op-amp that reads the source and another's output": Circuit(
+        passives=(resistor("R1", "in", "m", 1e3), resistor("R2", "m", "y", 1e4)),
+        amplifiers=(
+            amplifier("U1", "0", "m", "y", op_amp()),
+            amplifier("U2", "y", "in", "out", op_amp(1e6, 100.0)),
+        ),
+    ),
+}
+
+
+@pytest.mark.parametrize("name", list(ODD))
+def test_odd_circuits_are_solved_like_any(name):
+    """Compiled, by LAPACK and in extended precision; net by net where there is any."""
+    circuit = ODD[name]
+    program, structure = compile_circuit(circuit), structure_of(circuit)
+    f = GRID.imag / (2 * np.pi)
+    expected = exact(structure, nominal(structure), GRID)[:, 0].T if structure.size else None
+    values = np.tile(structure.values, (COMPILE_AFTER // f.size + 1, 1))
+    for nets in (None, list(program.nets)):
+        alone = program.solve(f, nets=nets)
+        np.testing.assert_allclose(
+            program.solve(f, values=values, nets=nets)[0], alone, rtol=1e-9, atol=1e-25
+        )
+        if nets is None and structure.output < structure.size:
+            np.testing.assert_allclose(alone, expected[:, structure.output], rtol=1e-10)
+    if np.all(program.solve(f)):
+        relative = program.sensitivities(f).passives
+        assert np.all(np.isfinite(relative))
