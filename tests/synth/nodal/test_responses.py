@@ -4,6 +4,8 @@ import math
 
 import numpy as np
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
 from synth.circuit import Circuit
 from synth.errors import CircuitError, NumericalError
@@ -15,6 +17,7 @@ from tests.synth.nodal.boards import (
     chain,
     integrator,
     op_amp,
+    random_circuit,
     resistor,
     tow_thomas,
 )
@@ -268,3 +271,30 @@ def test_a_net_only_capacitors_hold_has_no_dc_level():
     assert program.solve(1e3)[0] == pytest.approx(0.5)
     with pytest.raises(NumericalError, match="singular"):
         program.solve(0.0)
+
+
+@settings(deadline=None, derandomize=True, max_examples=25)
+@given(seed=st.integers(0, 10**6), factor=st.floats(1e-3, 1e3))
+def test_scaling_impedances_leaves_the_response(seed, factor):
+    """R times k and C over k: no op-amp of ours loads anything, so H stays."""
+    program = compile_circuit(random_circuit(np.random.default_rng(seed), most_amplifiers=5))
+    structure, f = program.structure, np.geomspace(1.0, 1e6, 7)
+    scaled = np.where(structure.is_resistor, structure.values * factor, structure.values / factor)
+    np.testing.assert_allclose(
+        program.solve(f, values=scaled), program.solve(f), rtol=1e-8, atol=1e-20
+    )
+
+
+@settings(deadline=None, derandomize=True, max_examples=25)
+@given(seed=st.integers(0, 10**6), factor=st.floats(1e-3, 1e3))
+def test_scaling_frequencies_moves_the_response(seed, factor):
+    """C over k and GBW times k: H(k f) becomes what H(f) was."""
+    program = compile_circuit(random_circuit(np.random.default_rng(seed), most_amplifiers=5))
+    structure, f = program.structure, np.geomspace(1.0, 1e6, 7)
+    scaled = np.where(structure.is_resistor, structure.values, structure.values / factor)
+    np.testing.assert_allclose(
+        program.solve(f * factor, values=scaled, gain_bandwidth=structure.gain_bandwidth * factor),
+        program.solve(f),
+        rtol=1e-8,
+        atol=1e-20,
+    )
