@@ -15,13 +15,14 @@ from netlist.schematic.layout import Layout, lay_out
 from netlist.schematic.notes import NOTES_WIDTH, Notes
 from netlist.schematic.placement import place
 from netlist.schematic.routing import draw_layout
-from netlist.schematic.svg import print_scale, sheet_svg
+from netlist.schematic.svg import READABLE, print_scale, sheet_svg
 from synth.circuit import Circuit
 
 __all__ = ["Drawing", "compose", "draw_schematic"]
 
 _MARGIN, _FRAME = 30.0, 10.0
 _FLAG_COST, _ROW_COST = 0.03, 0.03
+_STRAIN = 3.0  # how much more it costs to print letters smaller than can be read with ease
 _MOST_COLUMNS = 8
 
 
@@ -97,7 +98,8 @@ class _Draft:
     def cost(self) -> float:
         """Smaller is better."""
         flags = sum(len(each.flagged) for each in self.layout.links.values())
-        size = -math.log(print_scale(self.width, self.height))
+        scale = print_scale(self.width, self.height)
+        size = -math.log(scale) + _STRAIN * max(0.0, math.log(READABLE / scale))
         return size + _FLAG_COST * flags + _ROW_COST * len(self.layout.placement.rows)
 
     def finished(self) -> Drawing:
@@ -113,9 +115,10 @@ def _draft(layout: Layout, notes: Notes) -> _Draft:
     """The layout drawn, with its notes in the bottom right corner."""
     sheet = draw_layout(layout)
     e = sheet.extent
-    width = 10 * math.ceil(max(e.right - e.left, NOTES_WIDTH) / 10)
-    left = 10.0 * math.floor((e.left + e.right - width) / 20)
-    right = left + width
+    left, right = 10.0 * math.floor(e.left / 10), 10.0 * math.ceil(e.right / 10)
+    missing = max(0.0, NOTES_WIDTH - (right - left))
+    left -= 10.0 * math.ceil(missing / 20)
+    right = max(right, left + NOTES_WIDTH)
     top = _free_top(sheet, notes, right - NOTES_WIDTH)
     notes.draw(sheet, right - NOTES_WIDTH, top)
     bottom = 10.0 * math.ceil(max(e.bottom, top + notes.height) / 10)

@@ -11,13 +11,13 @@ from collections.abc import Iterable
 from netlist.schematic.geometry import Flag, Point, Sheet, Symbol, Text, dots
 from netlist.svg import FONT, coordinate, escape
 
-__all__ = ["print_scale", "sheet_svg"]
+__all__ = ["READABLE", "print_scale", "sheet_svg"]
 
 _TONES = {"ink": "#1a1a1a", "faint": "#666666", "accent": "#0b5c7a"}
 _INK = _TONES["ink"]
 _THIN, _HEAVY = 1.1, 2.2
 _PAGES = ((277.0, 190.0), (400.0, 277.0))  # A4 and A3 within their margins [mm]
-_READABLE, _LARGEST = 0.25, 0.35  # mm of a px: letters of 7 and of 10 points
+READABLE, _LARGEST = 0.25, 0.35  # mm of a px: letters of 7 and of 10 points
 
 
 def sheet_svg(sheet: Sheet, *, width: float, height: float, title: str) -> str:
@@ -50,7 +50,7 @@ def _scale(width: float, height: float) -> float:
     """Millimetres of one px on the smallest page on which the letters can be read."""
     for page_width, page_height in _PAGES:
         scale = min(page_width / width, page_height / height, _LARGEST)
-        if scale >= _READABLE:
+        if scale >= READABLE:
             return scale
     return print_scale(width, height)
 
