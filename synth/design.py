@@ -16,7 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.candidates import Sketch, choose_form
-from synth.choosing import choose_values
+from synth.choosing import Choice, choose_values
 from synth.circuit import Circuit
 from synth.evidence import Check, response_error
 from synth.graph import BlockGraph
@@ -32,6 +32,7 @@ from synth.tolerance import run_boards
 __all__ = ["DEFAULT_BOARDS", "DEFAULT_SEED", "compare_forms", "design"]
 
 Real = NDArray[np.float64]
+Complex = NDArray[np.complex128]
 Progress = Callable[[str, int, int], None]
 
 # The search for values sees the response at about this many frequencies.
@@ -87,14 +88,7 @@ def design(
     wanted = job.target.negated() if sketch.polarity.output_inverted else job.target
     response = wanted.response(frequency)
     say("values", 0, 1)
-    few = slice(None, None, max(1, frequency.size // FREQUENCIES_OF_THE_SEARCH))
-    choice = choose_values(
-        sketch.circuit,
-        target=response[few],
-        frequency_hz=frequency[few],
-        level_limits=_level_limits(sketch, job),
-        seed=seed,
-    )
+    choice = _choose(sketch, job, response, frequency, seed)
     circuit = choice.circuit
     program = compile_circuit(circuit)
     tolerance = run_boards(
@@ -110,7 +104,6 @@ def design(
     say("limits", 0, 1)
     swing = swings(circuit, wanted, job)
     loop = _loop(job, circuit, inverted=sketch.polarity.output_inverted)
-    names = {c.amplifier: _cell_name(circuit, c.amplifier) for c in circuit.cells}
     return Design(
         job=job,
         form=sketch.form,
@@ -126,13 +119,37 @@ def design(
         swings=swing,
         drifts=drifts(circuit),
         candidates=candidates,
-        checks=(
-            _yield_check(tolerance, job),
-            *(loop_checks(job.loop, loop.nominal) if job.loop and loop else ()),
-            *swing_checks(swing, names),
-        ),
+        checks=_checks(job, circuit, tolerance, swing, loop),
         loop=loop,
         notices=(*job.notices, *_notices(circuit, job, swing)),
+    )
+
+
+def _choose(sketch: Sketch, job: Job, response: Complex, frequency_hz: Real, seed: int) -> Choice:
+    """Standard values, on at most about `FREQUENCIES_OF_THE_SEARCH` of the frequencies."""
+    few = slice(None, None, max(1, frequency_hz.size // FREQUENCIES_OF_THE_SEARCH))
+    return choose_values(
+        sketch.circuit,
+        target=response[few],
+        frequency_hz=frequency_hz[few],
+        level_limits=_level_limits(sketch, job),
+        seed=seed,
+    )
+
+
+def _checks(
+    job: Job,
+    circuit: Circuit,
+    tolerance: ToleranceResult,
+    swing: tuple[Swing, ...],
+    loop: LoopResult | None,
+) -> tuple[Check, ...]:
+    """Every predicted line of the verdict."""
+    names = {c.amplifier: _cell_name(circuit, c.amplifier) for c in circuit.cells}
+    return (
+        _yield_check(tolerance, job),
+        *(loop_checks(job.loop, loop.nominal) if job.loop and loop else ()),
+        *swing_checks(swing, names),
     )
 
 

@@ -1,0 +1,170 @@
+"""The benchmark: speed, memory and quality of values, as one table.
+
+``sh tests/run bench`` prints it; ``python -m tests.bench values`` one part alone (parts:
+commands, engine, memory, values).  Nothing here passes or fails: the aims stand beside the
+figures.  Ratios are taken within one run, so that a slow or busy machine does not blur them.
+"""
+
+from __future__ import annotations
+
+import os
+import statistics
+import subprocess
+import sys
+import tempfile
+import time
+from collections.abc import Callable, Iterator, Mapping
+from pathlib import Path
+
+import numpy as np
+
+from synth.candidates import sketch_form
+from synth.choosing import choose_values
+from synth.evidence import response_error
+from synth.forms import FORMS
+from synth.nodal import compile_circuit
+from tests.bench_nodal import bench as bench_engine
+from tests.jobs import capacitor_rule, job_for, resistor_rule
+from tests.strategies import butterworth
+
+__all__ = ["PARTS", "main"]
+
+Row = tuple[str, str, str]
+
+SCENARIOS = Path(__file__).resolve().parent.parent / "scenarios"
+
+ORDER_8 = """
+title = "order 8"
+[target]
+poles = [
+    {frequency = "1 kHz", q = 0.50979558}, {frequency = "1 kHz", q = 0.60134489},
+    {frequency = "1 kHz", q = 0.89997622}, {frequency = "1 kHz", q = 2.56291545},
+]
+gain = 1
+[signal]
+band = ["100 Hz", "2 kHz"]
+"""
+
+BOARDS_IN_A_CHILD = """
+import resource, sys
+import numpy as np
+from netlist.jobfile import read_job
+from synth.design import design
+found = design(read_job(sys.argv[1]), boards=int(sys.argv[2]))
+print(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024, found.frequency_hz.size)
+"""
+
+
+def commands() -> Iterator[Row]:
+    """Whole commands, as a user times them: the median of three runs."""
+    command = [sys.executable, "-m", "netlist.cli"]
+    yield "polewright --help", _seconds([*command, "--help"], runs=9), "0.2 s"
+    with tempfile.TemporaryDirectory() as folder:
+        job = Path(folder, "order8.toml")
+        job.write_text(ORDER_8, encoding="utf-8")
+        for name, path, aim in (
+            ("design, order 3 (servo_lead_lag)", SCENARIOS / "servo_lead_lag.toml", "5 s"),
+            ("design, order 8", job, "10 s"),
+        ):
+            into = Path(folder, f"pack-{path.stem}")
+            yield name, _seconds([*command, "design", str(path), "--into", str(into)]), aim
+
+
+def _seconds(command: list[str], runs: int = 3) -> str:
+    times = []
+    for _ in range(runs):
+        start = time.perf_counter()
+        subprocess.run(command, check=False, capture_output=True)
+        times.append(time.perf_counter() - start)
+    return f"{statistics.median(times):.2f} s ({min(times):.2f} to {max(times):.2f})"
+
+
+def engine() -> Iterator[Row]:
+    """The nodal engine against an ngspice in-process alter loop, same circuit, same run."""
+    row = bench_engine()
+    name = f"{row.op_amps} op-amps, {row.frequencies} frequencies, a board"
+    yield f"{name}, ngspice", f"{1e6 * row.ngspice:.0f} us", ""
+    yield f"{name}, nodal engine", f"{1e6 * row.engine:.1f} us", ""
+    yield "nodal engine faster by", f"{row.ratio:.0f} times", "20 times"
+    yield "largest difference of |H|", f"{row.largest_difference:.1e}", "1e-6"
+
+
+def memory() -> Iterator[Row]:
+    """Peak memory of a process that designs and draws many boards."""
+    job = SCENARIOS / "servo_lead_lag.toml"
+    for boards in (1_000, 100_000):
+        found = subprocess.run(
+            [sys.executable, "-c", BOARDS_IN_A_CHILD, str(job), str(boards)],
+            check=True,
+            capture_output=True,
+            text=True,
+            env={**os.environ, "PYTHONPATH": str(SCENARIOS.parent)},
+        )
+        megabytes, frequencies = found.stdout.split()
+        aim = "400 MB" if boards == 100_000 else ""
+        name = f"peak memory, {boards} boards at {frequencies} frequencies"
+        yield name, f"{float(megabytes):.0f} MB", aim
+
+
+def values() -> Iterator[Row]:
+    """Nominal rms error of ln H against nearest rounding: Butterworth at 1 kHz, 100 Hz to
+    2 kHz, 100 points a decade, 1 k to 1 M, capacitors E6 and E12."""
+    frequency = np.geomspace(100.0, 2e3, 131)
+    for capacitors in ("E6", "E12"):
+        for series in ("E96", "E24"):
+            for order in (2, 3, 4, 6):
+                yield from _values_row(order, series, capacitors, frequency)
+
+
+def _values_row(order: int, series: str, capacitors: str, frequency: np.ndarray) -> Iterator[Row]:
+    target = butterworth(order, 1e3)
+    response = target.response(frequency)
+    for form in FORMS:
+        job = job_for(
+            target,
+            (100.0, 2e3),
+            form=form,
+            resistors=resistor_rule(series),
+            capacitors=capacitor_rule(capacitors),
+        )
+        circuit = sketch_form(job, form, frequency).circuit
+        start = time.perf_counter()
+        choice = choose_values(circuit, target=response, frequency_hz=frequency)
+        took = time.perf_counter() - start
+        chosen, nearest = (
+            response_error(compile_circuit(c).solve(frequency), response).rms
+            for c in (choice.circuit, choice.nearest)
+        )
+        yield (
+            f"order {order}, {series}, {capacitors}, {form}",
+            f"{100 * chosen:.4f} % of {100 * nearest:.3f} %: ratio {chosen / nearest:.3f}, "
+            f"{took:.1f} s",
+            "ratio 0.2",
+        )
+
+
+PARTS: Mapping[str, Callable[[], Iterator[Row]]] = {
+    "commands": commands,
+    "engine": engine,
+    "memory": memory,
+    "values": values,
+}
+
+
+def main(chosen: list[str]) -> int:
+    """Print the parts named, or all; returns the exit code."""
+    unknown = [name for name in chosen if name not in PARTS]
+    if unknown:
+        sys.stderr.write(f"got {unknown[0]!r}, expected {', '.join(PARTS)}\n")
+        return 2
+    for name in chosen or PARTS:
+        first = (PARTS[name].__doc__ or "").strip().splitlines()[0]
+        sys.stdout.write(f"\n{name}: {first}\n")
+        for label, figure, aim in PARTS[name]():
+            sys.stdout.write(f"  {label:52s} {figure:48s} {'aim ' + aim if aim else ''}\n")
+            sys.stdout.flush()
+    return 0
+
+
+if __name__ == "__main__":
+    sys.exit(main(sys.argv[1:]))
