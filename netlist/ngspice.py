@@ -1,36 +1,24 @@
-"""The one place that runs ngspice: a worker process behind a pipe, killed when it hangs.
+"""The one place that runs ngspice.
 
-The library lives in a process of its own (`netlist.ngspice_worker`), because it can crash,
-hang, leak and print.  `Simulator` starts it, sends decks, waits no longer than its time limit,
-and replaces it after a failure.  Nothing of it reaches this process's output.
+The library lives in a process of its own (`netlist.ngspice_process`, `netlist.ngspice_worker`),
+because it can crash, hang, leak and print.  A `Simulator` sends it decks, waits no longer than its
+time limit, and has it replaced after a failure.  Nothing of it reaches this process's output.
 """
 
 from __future__ import annotations
 
 import ctypes.util
-import os
-import pickle
 import re
-import select
-import struct
-import subprocess
-import sys
-import tempfile
-import time
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
-from pathlib import Path
 from types import TracebackType
-from typing import Any, BinaryIO, cast
+from typing import Any, cast
 
 import numpy as np
 from numpy.typing import NDArray
 
-from synth.errors import (
-    SimulationFailedError,
-    SimulationTimeoutError,
-    SimulatorMissingError,
-)
+from netlist.ngspice_process import INSTALL, WorkerProcess
+from synth.errors import SimulationFailedError, SimulatorMissingError
 
 __all__ = ["AcResult", "NoiseSpectrum", "Simulator", "TransientResult"]
 
@@ -38,15 +26,9 @@ Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
 
 TIME_LIMIT_S = 60.0
-START_LIMIT_S = 60.0
 MEMORY_LIMIT = 4 << 30
-_WORKER = Path(__file__).with_name("ngspice_worker.py")
-_LENGTH = struct.Struct("<Q")
 _FORBIDDEN = re.compile(r"\s*(\*#|\.(control|include|inc|lib|csparam)\b)", re.IGNORECASE)
 _NET = re.compile(r"[a-z][a-z0-9_]{0,30}")
-INSTALL = (
-    "install libngspice0 with the system's package manager (Debian: apt-get install libngspice0)"
-)
 
 
 @dataclass(frozen=True)
@@ -106,14 +88,8 @@ class Simulator:
         found = library or ctypes.util.find_library("ngspice")
         if found is None:
             raise SimulatorMissingError(f"the ngspice library was not found: {INSTALL}")
-        self._library = found
         self._time_limit = time_limit
-        self._memory_limit = memory_limit
-        self._process: subprocess.Popen[bytes] | None = None
-        self._ready = False
-        self._folder = tempfile.TemporaryDirectory(prefix="polewright-")
-        self._log: BinaryIO = tempfile.TemporaryFile()  # noqa: SIM115  (closed in close)
-        self._start()
+        self._worker = WorkerProcess(found, memory_limit=memory_limit)
 
     def __enter__(self) -> Simulator:
         return self
@@ -129,13 +105,11 @@ class Simulator:
     @property
     def process_id(self) -> int | None:
         """Process id of the worker, None when there is none at the moment."""
-        return self._process.pid if self._process else None
+        return self._worker.process_id
 
     def close(self) -> None:
-        """End the worker and remove its folder.  Safe to call twice."""
-        self._stop()
-        self._log.close()
-        self._folder.cleanup()
+        """End the worker.  Safe to call twice."""
+        self._worker.close()
 
     def ac(self, deck: str, nets: Sequence[str]) -> AcResult:
         """Run the ``.ac`` line of `deck`; responses of `nets`."""
@@ -148,9 +122,14 @@ class Simulator:
         found = self._run(deck, "op", "", nets, "op")
         return {n: float(found[n][0]) for n in nets}
 
-    def transient(self, deck: str, nets: Sequence[str]) -> TransientResult:
-        """Run the ``.tran`` line of `deck`; voltages of `nets`."""
-        found = self._run(deck, "tran", "time", nets, _card(deck, "tran"))
+    def transient(
+        self, deck: str, nets: Sequence[str], *, time_limit: float | None = None
+    ) -> TransientResult:
+        """Run the ``.tran`` line of `deck`; voltages of `nets`.
+
+        `time_limit` [s] stands in for that of the simulator.
+        """
+        found = self._run(deck, "tran", "time", nets, _card(deck, "tran"), time_limit=time_limit)
         return TransientResult(found["time"], {n: found[n] for n in nets})
 
     def noise(
@@ -163,14 +142,22 @@ class Simulator:
         *,
         source: str = "Vin",
     ) -> NoiseSpectrum:
-        """Noise at `output_net` over a sweep by decades."""
+        """Noise at `output_net` over a sweep by decades, from `start_hz` to `stop_hz`.
+
+        ngspice ends its noise sweep short of the last frequency, and its own total is no number
+        where the density is flat (seen with ngspice 39).  So the sweep goes one step further,
+        the last point is interpolated, and the total is integrated here, the density between
+        two points being a power of the frequency.
+        """
         _check_nets([output_net])
-        sweep = f"dec {points_per_decade:d} {float(start_hz)!r} {float(stop_hz)!r}"
+        beyond = stop_hz * 10 ** (1 / points_per_decade)
+        sweep = f"dec {points_per_decade:d} {float(start_hz)!r} {float(beyond)!r}"
         command = f"noise v({output_net}) {source.lower()} {sweep}"
         reply = self._request(
             {"task": "noise", "deck": _checked(deck), "net": output_net, "command": command}
         )
-        return NoiseSpectrum(*cast("tuple[Real, Real, float]", reply))
+        frequency, density = cast("tuple[Real, Real]", reply)
+        return _cut_at(stop_hz, frequency, density)
 
     def alter_ac(self, deck: str, changes: Sequence[Mapping[str, float]], net: str) -> Complex:
         """Response of `net` for each set of changed part values, shape (boards, F).
@@ -192,7 +179,14 @@ class Simulator:
         return cast("Complex", self._request({**request, "net": net, "changes": plain}))
 
     def _run(
-        self, deck: str, kind: str, scale: str, nets: Sequence[str], command: str
+        self,
+        deck: str,
+        kind: str,
+        scale: str,
+        nets: Sequence[str],
+        command: str,
+        *,
+        time_limit: float | None = None,
     ) -> dict[str, NDArray[Any]]:
         _check_nets(nets)
         request: dict[str, object] = {
@@ -201,111 +195,29 @@ class Simulator:
             "kind": kind,
             "scale": scale,
         }
-        reply = self._request({**request, "nets": list(nets), "command": command})
+        reply = self._request(
+            {**request, "nets": list(nets), "command": command}, time_limit=time_limit
+        )
         return cast("dict[str, NDArray[Any]]", reply)
 
-    def _request(self, request: dict[str, object]) -> object:
-        """Send a request and wait for the reply; the worker is replaced after any failure."""
-        if self._log.closed:
-            raise SimulationFailedError("the simulator was closed before this call")
-        if self._process is None:
-            self._start()
-        try:
-            if not self._ready:
-                self._receive(time.monotonic() + START_LIMIT_S)
-                self._ready = True
-            self._send(request)
-            return self._receive(time.monotonic() + self._time_limit)
-        except BaseException:
-            self._stop()
-            raise
+    def _request(self, request: dict[str, object], *, time_limit: float | None = None) -> object:
+        limit = self._time_limit if time_limit is None else time_limit
+        return self._worker.request(request, time_limit=limit)
 
-    def _start(self) -> None:
-        environment = {
-            **os.environ,
-            "HOME": self._folder.name,  # no .spiceinit of the user
-            "OPENBLAS_NUM_THREADS": "1",
-            "OMP_NUM_THREADS": "1",
-        }
-        self._log.seek(0)
-        self._log.truncate()
-        self._ready = False
-        # -P: the folder of the worker's own file is not searched for modules.
-        self._process = subprocess.Popen(
-            [sys.executable, "-P", str(_WORKER), self._library, str(self._memory_limit)],
-            stdin=subprocess.PIPE,
-            stdout=subprocess.PIPE,
-            stderr=self._log,
-            cwd=self._folder.name,
-            env=environment,
-            bufsize=0,
-            start_new_session=True,
-        )
 
-    def _stop(self) -> None:
-        process, self._process = self._process, None
-        if process is None:
-            return
-        process.kill()
-        for stream in (process.stdin, process.stdout):
-            if stream:
-                stream.close()
-        process.wait()
-
-    def _send(self, request: dict[str, object]) -> None:
-        assert self._process is not None and self._process.stdin is not None
-        payload = pickle.dumps(request, protocol=pickle.HIGHEST_PROTOCOL)
-        rest = memoryview(_LENGTH.pack(len(payload)) + payload)
-        try:
-            while rest:
-                rest = rest[self._process.stdin.write(rest) :]
-        except BrokenPipeError:
-            raise self._crashed() from None
-
-    def _receive(self, deadline: float) -> object:
-        """The value of a reply; its errors become ours."""
-        (length,) = _LENGTH.unpack(self._read(_LENGTH.size, deadline))
-        reply = pickle.loads(self._read(length, deadline))
-        if reply[0] == "done":
-            return reply[1]
-        _, message, log = reply
-        if reply[0] == "missing":
-            raise SimulatorMissingError(
-                f"the ngspice library could not be loaded ({message}): {INSTALL}", log=log
-            )
-        raise SimulationFailedError(f"ngspice failed: {message}", log=log)
-
-    def _read(self, size: int, deadline: float) -> bytes:
-        """Exactly `size` bytes from the worker, or an error at the deadline or at its end."""
-        assert self._process is not None and self._process.stdout is not None
-        pipe = self._process.stdout.fileno()
-        kept = bytearray()
-        while len(kept) < size:
-            left = deadline - time.monotonic()
-            if left <= 0 or not select.select([pipe], [], [], left)[0]:
-                raise SimulationTimeoutError(
-                    f"ngspice passed its time limit of {self._time_limit:g} s and was ended; "
-                    "allow more time or check the circuit for values far apart",
-                    log=self._log_text(),
-                )
-            piece = os.read(pipe, min(size - len(kept), 1 << 20))
-            if not piece:
-                raise self._crashed()
-            kept += piece
-        return bytes(kept)
-
-    def _crashed(self) -> SimulationFailedError:
-        code = self._process.wait() if self._process else None
-        how = f"signal {-code}" if code is not None and code < 0 else f"exit code {code}"
-        return SimulationFailedError(
-            f"ngspice ended in the middle of its work ({how}); try again, and check the deck "
-            "with ngspice -b if it happens again",
-            log=self._log_text(),
-        )
-
-    def _log_text(self) -> str:
-        self._log.seek(0)
-        return self._log.read().decode("utf-8", "replace")
+def _cut_at(stop_hz: float, frequency_hz: Real, density: Real) -> NoiseSpectrum:
+    """A spectrum that ends at `stop_hz`, straight lines on logarithmic axes between points."""
+    tiny = np.finfo(float).tiny
+    x, y = np.log(frequency_hz), np.log(np.maximum(density, tiny))
+    below = x < np.log(stop_hz) - 1e-9
+    last = np.interp(np.log(stop_hz), x, y)
+    x, y = np.append(x[below], np.log(stop_hz)), np.append(y[below], last)
+    f, d = np.append(frequency_hz[below], stop_hz), np.append(density[below], np.exp(last))
+    # The integral of d^2 f over ln f from point to point, d^2 f being exponential in ln f.
+    width, growth = np.diff(x), np.diff(2 * y + x)
+    mean = np.where(np.abs(growth) > 1e-9, np.expm1(growth) / np.where(growth, growth, 1.0), 1.0)
+    power = np.sum(d[:-1] ** 2 * f[:-1] * width * mean)
+    return NoiseSpectrum(f, d, float(np.sqrt(power)))
 
 
 def _card(deck: str, kind: str) -> str:

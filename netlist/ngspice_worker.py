@@ -1,6 +1,6 @@
 """The process that runs ngspice: a program of its own, spoken to over a pipe.
 
-Started by `netlist.ngspice` as ``python -P ngspice_worker.py LIBRARY MEMORY``; it imports
+Started by `netlist.ngspice_process` as ``ngspice_worker.py LIBRARY MEMORY``; it imports
 nothing of this project.  Requests come on standard input, replies go to what was standard
 output, each a pickle behind its length in 8 bytes, little-endian.  Whatever the library prints
 goes to standard error, which the parent keeps as a log.
@@ -117,16 +117,15 @@ class _Session:
         plot = self.new_plots(before, kind)[0]
         return {name: self.vector(plot, name) for name in ([scale] if scale else []) + list(nets)}
 
-    def noise(self, deck: str, net: str, command: str) -> tuple[NDArray[Any], NDArray[Any], float]:
-        """Frequencies, output density and total rms of a noise analysis."""
+    def noise(self, deck: str, net: str, command: str) -> tuple[NDArray[Any], NDArray[Any]]:
+        """Frequencies and output density of a noise analysis."""
         self.run(deck, "op", "", [net], "op")  # an unknown output would read as silent
         before = set(self.ng.plot_names)
         self.command(command)
-        spectrum, total = self.new_plots(before, "noise")[:2]
+        spectrum = self.new_plots(before, "noise")[0]
         return (
             self.vector(spectrum, "frequency").real,
             self.vector(spectrum, "onoise_spectrum").real,
-            float(self.vector(total, "onoise_total").real[0]),
         )
 
     def alter(

@@ -13,10 +13,13 @@ from synth.grid import points_per_decade
 from synth.results import Design
 from synth.transfer import TransferFunction
 
-__all__ = ["Decks", "decks_of", "step_duration"]
+__all__ = ["Decks", "decks_of", "settling_time", "step_duration"]
 
 SETTLING = 7.0
 """Time constants until a decay is within 0.1 % of its end."""
+
+SETTLING_OF_EACH_MORE = 2.0
+"""Time constants that each further equal pole adds (fits the 0.1 % tails of t^k exp(-t))."""
 
 POINTS_PER_PERIOD = 100.0
 """Of the fastest resonance; with fewer its phase drifts visibly over many periods."""
@@ -77,14 +80,13 @@ def step_duration(
 ) -> float:
     """How long a step response should run [s], rounded to two digits.
 
-    Until the slowest pole has settled.  With poles at the origin, until the output would reach
+    Until the slowest poles have settled.  With poles at the origin, until the output would reach
     `swing_limit`; with growing or undamped ones, some of their time constants; neither longer
     than five time constants of the band's lower edge.  Never longer than 60 periods of the
     fastest resonance.
     """
     edge = 5 / (2 * math.pi * band_hz[0])
     damping = [-float(p.real) for p in target.poles]
-    settled = [SETTLING / d for d in damping if d > 0]
     growing = [10 / -d for d in damping if d < 0]
     undamped = any(d == 0 for d in damping)
     if target.poles_at_origin:
@@ -92,10 +94,20 @@ def step_duration(
     elif growing or undamped:
         stop = min(edge, *growing) if growing else edge
     else:
-        stop = max(settled, default=edge)
+        stop = settling_time(target) or edge
     stop = min(stop, LONGEST_RINGING * _fastest_period(target))
     digits = 1 - math.floor(math.log10(stop))
     return round(stop, digits)
+
+
+def settling_time(target: TransferFunction) -> float | None:
+    """When the step response of a stable target is within about 0.1 % of its end [s]; None for
+    any other target and one without poles."""
+    modes = [-float(p.real) for p in target.poles if p.imag >= 0]
+    if not modes or min(modes) <= 0:
+        return None
+    slow = sum(d < 3 * min(modes) for d in modes)
+    return (SETTLING + SETTLING_OF_EACH_MORE * (slow - 1)) / min(modes)
 
 
 def _time_to(target: TransferFunction, level: float) -> float:

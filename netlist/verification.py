@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 
 from netlist.comparison import compare
 from netlist.ngspice import Simulator, TransientResult
-from netlist.stimulus import Decks, decks_of
+from netlist.stimulus import Decks, decks_of, settling_time
 from synth.circuit import GROUND
 from synth.errors import SimulatorError
 from synth.evidence import Check, ResponseError, response_error
@@ -22,10 +22,16 @@ from synth.grid import judged, points_per_decade
 from synth.nodal import compile_circuit
 from synth.results import Design
 
-__all__ = ["Verification", "disagreement", "verify"]
+__all__ = ["Verification", "disagreement", "unrest", "verify"]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
+
+STEP_LIMIT_S = 20.0
+"""Time for a step response [s]; a sound board of order 12 takes less than one."""
+
+LARGEST_UNREST = 5.0
+"""Of the largest swing [%]."""
 
 SMALLEST_COMPARED = 1e-6
 """Below this share of its largest value a response is compared absolutely."""
@@ -52,7 +58,8 @@ class Verification:
     nodal_disagreement
         Of ngspice and the nodal engine on the same circuit, see `disagreement`.
     checks
-        ``magnitude error`` and ``phase error``; empty without a response.
+        ``magnitude error`` and ``phase error``, then ``unrest after a step`` where the target
+        settles; empty without a response.
     failure
         Why the simulator did not deliver, or None.  What it did not deliver is None above; a
         response may be there although a later analysis failed.
@@ -100,6 +107,27 @@ def disagreement(one: Complex, other: Complex) -> float:
     return float(np.max(np.abs(one - other) / np.maximum(floor, np.finfo(float).tiny)))
 
 
+def unrest(design: Design, step: TransientResult) -> tuple[Check, ...]:
+    """Whether every op-amp output is at rest at the end of the step response.
+
+    A response over frequency shows nothing of an op-amp that oscillates; the saturating models
+    do.  The check is the largest peak-to-peak voltage over the last tenth of the run, a share
+    of the largest swing.  There is none where the target itself does not settle in the run.
+    """
+    settled = settling_time(design.wanted)
+    if settled is None or settled > 1.05 * step.time_s[-1]:
+        return ()
+    late = step.time_s >= 0.9 * step.time_s[-1]
+    moved = {net: float(np.ptp(step.voltages[net][late])) for net in design.circuit.signal_nets()}
+    net = max(moved, key=lambda name: moved[name], default=None)
+    if net is None:
+        return ()
+    share = 100 * moved[net] / design.job.board.swing_limit
+    return (
+        Check.at_most("unrest after a step", share, LARGEST_UNREST, "%", f"of the swing, at {net}"),
+    )
+
+
 def _verify(design: Design, decks: Decks, simulator: Simulator) -> Verification:
     """Run the analyses, the response first; the first that fails ends the work."""
     circuit = design.circuit
@@ -115,7 +143,8 @@ def _verify(design: Design, decks: Decks, simulator: Simulator) -> Verification:
         so_far = replace(so_far, operating_point=simulator.operating_point(decks.board, nets))
         noise = simulator.noise(decks.board, out, *band, density)
         so_far = replace(so_far, noise_rms=noise.total_rms)
-        return replace(so_far, step=simulator.transient(decks.step, watched))
+        step = simulator.transient(decks.step, watched, time_limit=STEP_LIMIT_S)
+        return replace(so_far, step=step, checks=(*so_far.checks, *unrest(design, step)))
     except SimulatorError as problem:
         return replace(so_far, failure=str(problem))
 

@@ -9,7 +9,7 @@ import pytest
 from netlist.ngspice import Simulator
 from netlist.stimulus import decks_of, step_duration
 from netlist.verification import Verification, disagreement, verify
-from synth.errors import SimulationFailedError
+from synth.errors import SimulationFailedError, SimulationTimeoutError
 from synth.evidence import response_error
 from synth.nodal import compile_circuit
 from synth.transfer import Factor, TransferFunction
@@ -31,7 +31,8 @@ def verified(design, simulator):
 
 def test_a_good_board_is_verified_with_both_checks(verified, design):
     assert verified.failure is None
-    assert [c.name for c in verified.checks] == ["magnitude error", "phase error"]
+    names = ["magnitude error", "phase error", "unrest after a step"]
+    assert [(c.name, c.passed) for c in verified.checks] == [(name, True) for name in names]
     low, high = design.job.signal.band_hz
     np.testing.assert_allclose(verified.frequency_hz[[0, -1]], [low, high], rtol=1e-12)
     expected = response_error(verified.simulated, design.wanted.response(verified.frequency_hz))
@@ -43,7 +44,46 @@ def test_ngspice_and_the_nodal_engine_agree(verified, design):
     assert 0 <= verified.nodal_disagreement < 1e-9
     density = compile_circuit(design.circuit).noise(verified.frequency_hz).power.sum(axis=1)
     total = math.sqrt(np.trapezoid(density, verified.frequency_hz))
-    np.testing.assert_allclose(verified.noise_rms, total, rtol=2e-3)
+    np.testing.assert_allclose(verified.noise_rms, total, rtol=1e-3)
+
+
+@pytest.mark.parametrize("points_per_decade", [50, 333, 1000])
+def test_total_noise_reaches_to_the_end_of_the_band(design, simulator, points_per_decade):
+    """However the sweep divides the band, flat parts and all; against a fine quadrature."""
+    low, high = design.job.signal.band_hz[0], 7777.0
+    fine = np.geomspace(low, high, 3000)
+    density = compile_circuit(design.circuit).noise(fine).power.sum(axis=1)
+    expected = math.sqrt(np.trapezoid(density, fine))
+    found = simulator.noise(decks_of(design).board, "out", low, high, points_per_decade)
+    np.testing.assert_allclose(found.total_rms, expected, rtol=2e-4)
+    assert (found.frequency_hz[0], found.frequency_hz[-1]) == (low, high)
+    assert np.all(np.diff(found.frequency_hz) > 0)
+
+
+def test_a_board_that_oscillates_does_not_pass(design, simulator):
+    """Two integrators with op-amps too slow for the Q asked: Q / (1 - 4 Q f0 / GBW) is negative
+    (methods of Tow-Thomas sections, to first order), which no frequency response shows."""
+    w0, q = 1 / (10e3 * 1.59e-9), 60.0
+    slow = tow_thomas(figures(gain_bandwidth=1e6), damping=q * 10e3)
+    target = TransferFunction.from_factors(w0**2, (), [Factor.pair(w0, 0.7)])
+    found = verify(replace(design, circuit=slow, wanted=target), simulator=simulator)
+    check = found.checks[-1]
+    assert (check.name, check.passed) == ("unrest after a step", False)
+    assert check.value > 5.0
+
+
+def test_an_oscillation_that_outlasts_the_time_limit_is_told(design):
+    with Simulator() as hurried:
+        deck = endless(decks_of(design).step)
+        with pytest.raises(SimulationTimeoutError, match=r"limit of 0.5 s .* oscillation"):
+            hurried.transient(deck, ["out"], time_limit=0.5)
+
+
+def endless(deck):
+    """The deck with a run that is far too long."""
+    words = next(line for line in deck.splitlines() if line.startswith(".tran"))
+    step = words.split()[1]
+    return deck.replace(words, f".tran 1.0 1000.0 0.0 {step}")
 
 
 def test_every_net_rests_at_ground_and_the_step_settles_at_the_dc_gain(verified, design):
@@ -74,7 +114,7 @@ def test_without_a_library_the_failure_is_told_and_nothing_else(design, monkeypa
 
 def test_a_failure_after_the_response_keeps_the_response(design):
     class StepFails(Simulator):
-        def transient(self, deck, nets):
+        def transient(self, deck, nets, *, time_limit=None):
             raise SimulationFailedError("ngspice failed: timestep too small")
 
     with StepFails() as broken:
@@ -82,7 +122,7 @@ def test_a_failure_after_the_response_keeps_the_response(design):
     assert found.failure == "ngspice failed: timestep too small"
     assert found.step is None
     assert found.noise_rms is not None
-    assert len(found.checks) == 2
+    assert [c.name for c in found.checks] == ["magnitude error", "phase error"]
 
 
 def test_a_verification_without_checks_needs_a_failure():
@@ -127,6 +167,8 @@ def test_a_long_ringing_is_followed_to_its_end(design, simulator):
     [
         # Settled to 0.1 %: seven time constants of the slowest pole.
         ([], [FIRST, Factor.real(-1e5)], 1e8, 7e-3),
+        # Four equal ones take longer: 1 - exp(-t) (1 + t + t^2/2 + t^3/6) = 0.999 at t = 13.06.
+        ([], [FIRST] * 4, 1e12, 13.06e-3),
         # An integrator 100/s: 5 V from 1 V after 50 ms, and a fifth more.
         ([FIRST], [Factor.real(0.0), Factor.real(-1e4)], 1e3, 60e-3),
         # Two poles at the origin: 1e6 t^2/2 = 5 V.
