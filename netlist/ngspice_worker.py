@@ -24,6 +24,7 @@ import sys
 import threading
 import time
 from collections.abc import Callable, Mapping, Sequence
+from pathlib import Path
 from typing import TYPE_CHECKING, Any, BinaryIO
 
 if TYPE_CHECKING:
@@ -183,7 +184,14 @@ def _watch_parent(parent: int) -> None:
     """End this process when the one that started it is gone, even in the middle of a run."""
     while os.getppid() == parent:
         time.sleep(PARENT_POLL_S)
+    _remove_folder()
     os._exit(1)
+
+
+def _remove_folder() -> None:
+    """Remove the empty folder this process runs in, which nobody else will now."""
+    with contextlib.suppress(OSError):
+        Path.cwd().rmdir()
 
 
 def _send(channel: BinaryIO, reply: tuple[Any, ...]) -> None:
@@ -218,6 +226,7 @@ def main(library: str, memory: int) -> None:
     _send(replies, ("done", session.ng.ngspice_version))
     while (request := _receive(sys.stdin.buffer)) is not None:
         _send(replies, _answer(session, request))
+    _remove_folder()
 
 
 if __name__ == "__main__":

@@ -283,16 +283,36 @@ def test_the_worker_ends_when_its_program_is_killed_in_the_middle_of_a_run(tmp_p
         from netlist.ngspice import Simulator
         simulator = Simulator()
         simulator.ac(open("board.cir").read(), ["out"])
-        print(simulator.process_id, flush=True)
+        process = simulator.process_id
+        print(process, os.readlink(f"/proc/{process}/cwd"), flush=True)
         threading.Timer(0.2, os.kill, (os.getpid(), signal.SIGKILL)).start()
         simulator.ac(open("endless.cir").read(), ["out"])
         """,
         tmp_path,
     )
     assert done.returncode == -signal.SIGKILL
+    process, folder = done.stdout.split()
     deadline = time.monotonic() + 10.0
-    while is_running(int(done.stdout)) and time.monotonic() < deadline:
+    while is_running(int(process)) and time.monotonic() < deadline:
         time.sleep(0.05)
+    assert not is_running(int(process))
+    assert not Path(folder).exists()
+
+
+def test_an_interrupt_ends_the_program_and_its_worker(tmp_path):
+    done = run_script(
+        """
+        import os, signal, threading
+        from netlist.ngspice import Simulator
+        with Simulator() as simulator:
+            simulator.ac(open("board.cir").read(), ["out"])
+            print(simulator.process_id, flush=True)
+            threading.Timer(0.2, os.kill, (os.getpid(), signal.SIGINT)).start()
+            simulator.ac(open("endless.cir").read(), ["out"])
+        """,
+        tmp_path,
+    )
+    assert "KeyboardInterrupt" in done.stderr
     assert not is_running(int(done.stdout))
 
 
