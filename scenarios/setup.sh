@@ -262,7 +262,7 @@ install_python_packages() {
             show_log
             fail 69 "the private environment could not be made"
         }
-        say "installing the packages of requirements.lock; about half a minute, 200 MB"
+        say "installing the packages of requirements.lock; about half a minute, 0.6 GB on disk"
     fi
     rm -f "$venv/stamp"
     pip_install >>"$log" 2>&1 || {
