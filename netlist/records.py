@@ -86,6 +86,7 @@ def design_record(design: Design, verification: Verification) -> dict[str, Json]
             "band_hz": list(job.signal.band_hz),
             "output_rms_v": design.noise.output_rms,
         },
+        **_loop(design),
         "swing": [asdict(s) for s in design.swings],
         "drift": [asdict(d) for d in design.drifts],
         "forms": candidate_records(design.candidates),
@@ -167,6 +168,13 @@ def _yield(design: Design) -> dict[str, object]:
         "error_95_db": run.error_95_db,
         "seed": run.seed,
     }
+
+
+def _loop(design: Design) -> dict[str, object]:
+    """Margins of H(s) itself and of the nominal board, where the job names a plant."""
+    if design.loop is None:
+        return {}
+    return {"loop": {"target": asdict(design.loop.target), "nominal": asdict(design.loop.nominal)}}
 
 
 def _simulation(verification: Verification) -> dict[str, object]:

@@ -39,7 +39,7 @@ def swing_chart(
             over = share > 100
             colour = style.LIMIT if over else style.FOUND
             axes.barh(k, min(share, end), height=0.62, color=colour, linewidth=0)
-            where = "" if swing.peak_hz is None else f" at {_hertz(swing.peak_hz)}"
+            where = _where(swing.peak_hz)
             axes.text(
                 1.015,
                 k,
@@ -65,5 +65,7 @@ def _volts(value: float) -> str:
     return f"{value:.3g}"
 
 
-def _hertz(value: float) -> str:
-    return style.engineering(float(f"{value:.3g}"), "Hz")
+def _where(peak_hz: float | None) -> str:
+    if peak_hz is None:
+        return ""
+    return f" at {style.engineering(float(f'{peak_hz:.3g}'), 'Hz')}" if peak_hz else " at DC"

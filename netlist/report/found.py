@@ -9,13 +9,15 @@ from netlist.partslist import PartLine
 from netlist.report.wording import NONE, decibel, number, percent, quantity, spelled, stated
 from synth.circuit import Circuit
 from synth.evidence import Check
-from synth.results import Candidate, Design, Drift, Swing
+from synth.loop import LoopMargins
+from synth.results import Candidate, Design, Drift, LoopResult, Swing
 
 __all__ = [
     "check_rows",
     "drift_rows",
     "form_rows",
     "largest_noise",
+    "loop_rows",
     "margin",
     "part_rows",
     "swing_rows",
@@ -86,7 +88,7 @@ def swing_rows(swings: Iterable[Swing], circuit: Circuit) -> list[Row]:
             "peak": number(s.peak),
             "peak_limit": number(s.peak_limit),
             "peak_bad": s.peak > s.peak_limit,
-            "at": "any waveform" if s.peak_hz is None else quantity(s.peak_hz, "Hz"),
+            "at": _where(s.peak_hz),
             "slew": number(s.slew / 1e6),
             "slew_limit": number(s.slew_limit / 1e6),
             "slew_bad": s.slew > s.slew_limit,
@@ -95,6 +97,40 @@ def swing_rows(swings: Iterable[Swing], circuit: Circuit) -> list[Row]:
             "current_bad": s.current > s.current_limit,
         }
         for s in swings
+    ]
+
+
+def _where(peak_hz: float | None) -> str:
+    if peak_hz is None:
+        return "any waveform"
+    return quantity(peak_hz, "Hz") if peak_hz else "DC"
+
+
+def loop_rows(loop: LoopResult | None) -> list[Row]:
+    """Margins with H(s) itself and with the nominal board."""
+    if loop is None:
+        return []
+    both = (loop.target, loop.nominal)
+
+    def row(name: str, values: Iterable[float | None], unit: str) -> Row:
+        target, board = (
+            NONE if v is None else (quantity(v, unit) if unit else number(v)) for v in values
+        )
+        return {"name": name, "target": target, "board": board}
+
+    def poles(margins: LoopMargins) -> str:
+        return NONE if margins.unstable_poles is None else str(margins.unstable_poles)
+
+    return [
+        row("crossover", [m.crossover_hz for m in both], "Hz"),
+        row("phase margin, deg", [m.phase_margin_deg for m in both], ""),
+        row("gain margin, dB", [m.gain_margin_db for m in both], ""),
+        row("disk margin", [m.disk_margin for m in both], ""),
+        {
+            "name": "closed-loop poles in the right half-plane (Nyquist)",
+            "target": poles(loop.target),
+            "board": poles(loop.nominal),
+        },
     ]
 
 

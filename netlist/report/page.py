@@ -20,6 +20,7 @@ from synth.evidence import Check
 from synth.results import Design
 
 if TYPE_CHECKING:
+    from jinja2 import Environment
     from markupsafe import Markup
 
     from netlist.drawings import Drawings
@@ -61,6 +62,52 @@ def report_page(
     """
     from importlib.metadata import version
 
+    checks = all_checks(design, verification)
+    outcome = verdict_of(design, verification)
+    job = design.job
+    return (
+        _environment()
+        .get_template("page.html")
+        .render(
+            design=design,
+            job=job,
+            verification=verification,
+            verdict=outcome,
+            headline=headline(checks, outcome),
+            notices=list(dict.fromkeys((*job.notices, *design.notices))),
+            numerator=asked.polynomial(job.target.numerator),
+            denominator=asked.polynomial(job.target.denominator),
+            roots=asked.roots(job.target),
+            gains=asked.gain_lines(job),
+            requirements=asked.requirements(job),
+            checks=found.check_rows(
+                sorted(checks, key=lambda c: c.passed)
+            ),  # what fails comes first
+            low_yield=job.accept.yield_share is None and design.tolerance.share < LOW_YIELD,
+            forms=found.form_rows(design.candidates, design.form),
+            swings=found.swing_rows(design.swings, design.circuit),
+            values=found.value_rows(design.circuit),
+            loop=found.loop_rows(design.loop),
+            noise_parts=found.largest_noise(design),
+            drifts=found.drift_rows(design.drifts),
+            parts=found.part_rows(lines),
+            chips=packages(design.circuit.amplifiers, taken=design.circuit.by_ref),
+            operating_point=[
+                (net, volts)
+                for net, volts in sorted((verification.operating_point or {}).items())
+                if abs(volts) > NO_VOLTAGE
+            ],
+            drawings={name: inlined(svg, name) for name, svg in drawings.by_name().items() if svg},
+            readout=_readout(design, verification),
+            command=_command(design, job_name),
+            distribution=DISTRIBUTION,
+            version=version("polewright"),
+        )
+    )
+
+
+def _environment() -> Environment:
+    """Templates of this folder, everything escaped, with the filters the page uses."""
     from jinja2 import Environment, FileSystemLoader, StrictUndefined
 
     environment = Environment(
@@ -79,41 +126,7 @@ def report_page(
         spelled=wording.spelled,
         clean=lambda text: _CONTROL.sub(" ", str(text)),
     )
-    checks = all_checks(design, verification)
-    outcome = verdict_of(design, verification)
-    job = design.job
-    return environment.get_template("page.html").render(
-        design=design,
-        job=job,
-        verification=verification,
-        verdict=outcome,
-        headline=headline(checks, outcome),
-        notices=list(dict.fromkeys((*job.notices, *design.notices))),
-        numerator=asked.polynomial(job.target.numerator),
-        denominator=asked.polynomial(job.target.denominator),
-        roots=asked.roots(job.target),
-        gains=asked.gain_lines(job),
-        requirements=asked.requirements(job),
-        checks=found.check_rows(sorted(checks, key=lambda c: c.passed)),  # what fails comes first
-        low_yield=job.accept.yield_share is None and design.tolerance.share < LOW_YIELD,
-        forms=found.form_rows(design.candidates, design.form),
-        swings=found.swing_rows(design.swings, design.circuit),
-        values=found.value_rows(design.circuit),
-        noise_parts=found.largest_noise(design),
-        drifts=found.drift_rows(design.drifts),
-        parts=found.part_rows(lines),
-        chips=packages(design.circuit.amplifiers, taken=design.circuit.by_ref),
-        operating_point=[
-            (net, volts)
-            for net, volts in sorted((verification.operating_point or {}).items())
-            if abs(volts) > NO_VOLTAGE
-        ],
-        drawings={name: inlined(svg, name) for name, svg in drawings.by_name().items() if svg},
-        readout=_readout(design, verification),
-        command=_command(design, job_name),
-        distribution=DISTRIBUTION,
-        version=version("polewright"),
-    )
+    return environment
 
 
 def headline(checks: Sequence[Check], outcome: str) -> str:
