@@ -8,6 +8,7 @@ time limit, and has it replaced after a failure.  Nothing of it reaches this pro
 from __future__ import annotations
 
 import ctypes.util
+import os
 import re
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
@@ -20,7 +21,10 @@ from numpy.typing import NDArray
 from netlist.ngspice_process import INSTALL, WorkerProcess
 from synth.errors import SimulationFailedError, SimulatorMissingError
 
-__all__ = ["AcResult", "NoiseSpectrum", "Simulator", "TransientResult"]
+__all__ = ["LIBRARY_VARIABLE", "AcResult", "NoiseSpectrum", "Simulator", "TransientResult"]
+
+LIBRARY_VARIABLE = "NGSPICE_LIBRARY_PATH"
+"""Environment variable that names the ngspice library where the system does not find it."""
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -85,7 +89,7 @@ class Simulator:
         time_limit: float = TIME_LIMIT_S,
         memory_limit: int = MEMORY_LIMIT,
     ) -> None:
-        found = library or ctypes.util.find_library("ngspice")
+        found = library or os.environ.get(LIBRARY_VARIABLE) or ctypes.util.find_library("ngspice")
         if found is None:
             raise SimulatorMissingError(f"the ngspice library was not found: {INSTALL}")
         self._time_limit = time_limit

@@ -12,15 +12,10 @@ from __future__ import annotations
 
 import math
 
+from synth.constants import BOLTZMANN, TEMPERATURE
 from synth.parts import OpAmp
 
-__all__ = ["TEMPERATURE", "linear_model", "number", "saturating_model"]
-
-TEMPERATURE = 300.15
-"""Temperature of the simulation [K]."""
-
-BOLTZMANN = 1.380649e-23
-"""[J/K], exact in the SI since 2019."""
+__all__ = ["linear_model", "number", "saturating_model"]
 
 TRANSCONDUCTANCE = 1e-3
 """Of the gain stage [S]; any value gives the same gain."""

@@ -22,7 +22,7 @@ from synth.grid import judged, points_per_decade
 from synth.nodal import compile_circuit
 from synth.results import Design
 
-__all__ = ["Verification", "disagreement", "unrest", "verify"]
+__all__ = ["Verification", "disagreement", "settling", "verify"]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -30,7 +30,7 @@ Complex = NDArray[np.complex128]
 STEP_LIMIT_S = 20.0
 """Time for a step response [s]; a sound board of order 12 takes less than one."""
 
-LARGEST_UNREST = 5.0
+LARGEST_MOVEMENT = 5.0
 """Of the largest swing [%]."""
 
 SMALLEST_COMPARED = 1e-6
@@ -58,7 +58,7 @@ class Verification:
     nodal_disagreement
         Of ngspice and the nodal engine on the same circuit, see `disagreement`.
     checks
-        ``magnitude error`` and ``phase error``, then ``unrest after a step`` where the target
+        ``magnitude error`` and ``phase error``, then ``settling after a step`` where the target
         settles; empty without a response.
     failure
         Why the simulator did not deliver, or None.  What it did not deliver is None above; a
@@ -107,7 +107,7 @@ def disagreement(one: Complex, other: Complex) -> float:
     return float(np.max(np.abs(one - other) / np.maximum(floor, np.finfo(float).tiny)))
 
 
-def unrest(design: Design, step: TransientResult) -> tuple[Check, ...]:
+def settling(design: Design, step: TransientResult) -> tuple[Check, ...]:
     """Whether every op-amp output is at rest at the end of the step response.
 
     A response over frequency shows nothing of an op-amp that oscillates; the saturating models
@@ -124,7 +124,9 @@ def unrest(design: Design, step: TransientResult) -> tuple[Check, ...]:
         return ()
     share = 100 * moved[net] / design.job.board.swing_limit
     return (
-        Check.at_most("unrest after a step", share, LARGEST_UNREST, "%", f"of the swing, at {net}"),
+        Check.at_most(
+            "settling after a step", share, LARGEST_MOVEMENT, "%", f"of the swing, at {net}"
+        ),
     )
 
 
@@ -144,7 +146,7 @@ def _verify(design: Design, decks: Decks, simulator: Simulator) -> Verification:
         noise = simulator.noise(decks.board, out, *band, density)
         so_far = replace(so_far, noise_rms=noise.total_rms)
         step = simulator.transient(decks.step, watched, time_limit=STEP_LIMIT_S)
-        return replace(so_far, step=step, checks=(*so_far.checks, *unrest(design, step)))
+        return replace(so_far, step=step, checks=(*so_far.checks, *settling(design, step)))
     except SimulatorError as problem:
         return replace(so_far, failure=str(problem))
 

@@ -20,13 +20,13 @@ from synth.choosing import Choice, choose_values
 from synth.circuit import Circuit
 from synth.evidence import Check, response_error
 from synth.graph import BlockGraph
+from synth.grid import judging_frequencies
 from synth.job import Job
 from synth.limits import drifts, swing_checks, swings
 from synth.loop import loop_checks, loop_margins
 from synth.nodal import compile_circuit
 from synth.peaks import frequencies_of_interest
 from synth.results import Candidate, Design, LoopResult, NoiseResult, Swing, ToleranceResult
-from synth.sampling import judging_frequencies
 from synth.tolerance import run_boards
 
 __all__ = ["DEFAULT_BOARDS", "DEFAULT_SEED", "compare_forms", "design"]

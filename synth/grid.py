@@ -15,12 +15,12 @@ from numpy.typing import ArrayLike, NDArray
 from synth.errors import JobError
 from synth.transfer import TransferFunction
 
-__all__ = ["band_grid", "judged", "points_per_decade"]
+__all__ = ["band_grid", "judged", "judging_frequencies", "points_per_decade"]
 
 SMALLEST_DENSITY = 50
 LARGEST_DENSITY = 2000
 POINTS_ACROSS_RESONANCE = 8
-FEWEST_INTERVALS = 50
+FEWEST_INTERVALS = 200
 DENSEST_GRID = 100_000
 ON_A_ZERO = 1e-9
 _DECIMALS = re.compile(r"(\d+)(?:\.(\d*))?(?:e([+-]?\d+))?")
@@ -40,12 +40,12 @@ def points_per_decade(
     target
         H(s).
     band_hz
-        Lowest and highest frequency [Hz].  Given, a narrow band still gets 50 intervals.
+        Lowest and highest frequency [Hz].  Given, a band still gets 200 intervals.
 
     Returns
     -------
     int
-        50 to 2000, above that only for a band narrower than 1/40 decade.
+        50 to 2000, above that only for a band narrower than a tenth of a decade.
     """
     zeros = (abs(f.q) for f in target.zero_factors if math.isfinite(f.q))
     sharpest = max(target.largest_q, max(zeros, default=0.5))
@@ -96,6 +96,22 @@ def band_grid(band_hz: tuple[float, float], points_per_decade: int) -> NDArray[n
     factors = np.full(steps + 1, ratio)
     factors[0] = low
     return np.cumprod(factors)
+
+
+def judging_frequencies(
+    target: TransferFunction, band_hz: tuple[float, float]
+) -> NDArray[np.float64]:
+    """The frequencies at which errors over the band are taken, shape (F,) [Hz].
+
+    Those of the simulator's sweep, less the ones on a zero on the imaginary axis.
+
+    Raises
+    ------
+    JobError
+        As `band_grid`.
+    """
+    grid = band_grid(band_hz, points_per_decade(target, band_hz=band_hz))
+    return grid[judged(target, grid)]
 
 
 def judged(target: TransferFunction, frequency_hz: ArrayLike) -> NDArray[np.bool_]:

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
+from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -11,6 +13,7 @@ from netlist.cli.options import as_json, job_file, with_traceback
 from netlist.cli.running import Result
 
 if TYPE_CHECKING:
+    from netlist.ngspice import Simulator
     from netlist.verification import Verification
     from synth.job import Job
     from synth.results import Design
@@ -75,7 +78,7 @@ def _carried_out(
     job is known to be readable."""
     from netlist.cli.progress import progress
 
-    with progress() as report:
+    with progress() as report, _early_simulator() as simulator:
         report("loading", 0, 1)
         from netlist.pack import write_pack
         from netlist.verification import verify
@@ -83,10 +86,26 @@ def _carried_out(
 
         made = design(job, boards=boards, seed=seed, progress=report)
         report("simulating", 0, 1)
-        checked = verify(made)
+        checked = verify(made, simulator=simulator)
         report("writing the pack", 0, 1)
         write_pack(folder, made, checked, job_name=name)
     return made, checked
+
+
+@contextmanager
+def _early_simulator() -> Iterator[Simulator | None]:
+    """The simulator, its process starting while the design is made; None where it is missing,
+    which the verification then says."""
+    from netlist.ngspice import Simulator
+    from synth.errors import SimulatorMissingError
+
+    try:
+        simulator = Simulator()
+    except SimulatorMissingError:
+        yield None
+        return
+    with simulator:
+        yield simulator
 
 
 def default_folder(job_file: Path) -> Path:

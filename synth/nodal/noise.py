@@ -13,15 +13,13 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from synth.constants import BOLTZMANN
 from synth.nodal.adjoint import Adjoint
 from synth.nodal.structure import Structure
 
-__all__ = ["BOLTZMANN", "Noise", "noise_from"]
+__all__ = ["Noise", "noise_from"]
 
 Real = NDArray[np.float64]
-
-BOLTZMANN = 1.380649e-23
-"""[J/K], exact by definition: SI Brochure, 9th edition, table 1."""
 
 
 @dataclass(frozen=True, eq=False)

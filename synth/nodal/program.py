@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from synth.circuit import Circuit
+from synth.constants import TEMPERATURE
 from synth.errors import CircuitError
 from synth.nodal import dense
 from synth.nodal.adjoint import Adjoint, all_voltages, completed
@@ -221,7 +222,7 @@ class NodalProgram:
         self,
         frequency_hz: ArrayLike,
         *,
-        temperature: float = 300.15,
+        temperature: float = TEMPERATURE,
         values: ArrayLike | None = None,
         net: str | None = None,
     ) -> Noise:

@@ -13,6 +13,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
+from synth.constants import BOLTZMANN, TEMPERATURE
 from synth.graph import BlockGraph
 from synth.parts import OpAmp
 from synth.peaks import SignalPeaks
@@ -24,9 +25,6 @@ __all__ = ["current_shares", "noise_power", "response_error_power"]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
-
-BOLTZMANN = 1.380649e-23
-TEMPERATURE = 300.15
 
 
 def inverse_gain(op_amp: OpAmp, s: Complex) -> Complex:

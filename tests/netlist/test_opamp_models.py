@@ -6,8 +6,8 @@ import numpy as np
 import pytest
 
 from netlist.deck import board_deck, step_deck
-from netlist.opamp_models import BOLTZMANN, TEMPERATURE
 from synth.circuit import Circuit
+from synth.constants import BOLTZMANN, TEMPERATURE
 from synth.grid import band_grid
 from tests.circuits import (
     amplifier,

@@ -31,7 +31,7 @@ def verified(design, simulator):
 
 def test_a_good_board_is_verified_with_both_checks(verified, design):
     assert verified.failure is None
-    names = ["magnitude error", "phase error", "unrest after a step"]
+    names = ["magnitude error", "phase error", "settling after a step"]
     assert [(c.name, c.passed) for c in verified.checks] == [(name, True) for name in names]
     low, high = design.job.signal.band_hz
     np.testing.assert_allclose(verified.frequency_hz[[0, -1]], [low, high], rtol=1e-12)
@@ -68,7 +68,7 @@ def test_a_board_that_oscillates_does_not_pass(design, simulator):
     target = TransferFunction.from_factors(w0**2, (), [Factor.pair(w0, 0.7)])
     found = verify(replace(design, circuit=slow, wanted=target), simulator=simulator)
     check = found.checks[-1]
-    assert (check.name, check.passed) == ("unrest after a step", False)
+    assert (check.name, check.passed) == ("settling after a step", False)
     assert check.value > 5.0
 
 

@@ -6,8 +6,8 @@ import numpy as np
 import pytest
 
 from synth.circuit import Circuit
+from synth.constants import BOLTZMANN
 from synth.nodal import compile_circuit
-from synth.nodal.noise import BOLTZMANN
 from tests.synth.nodal.boards import (
     amplifier,
     capacitor,
