@@ -140,7 +140,7 @@ def test_disagreement_is_relative_until_a_millionth_of_the_largest():
 def test_the_decks_are_those_of_the_band_and_the_rails(design):
     decks = decks_of(design)
     low, high = design.job.signal.band_hz
-    assert f".ac dec 50 {low!r} {high!r}\n" in decks.board
+    assert f".ac dec 67 {low!r} {high!r}\n" in decks.board
     assert "saturates at -10.5 V and 10.5 V" in decks.step
     assert decks == decks_of(design)
 
