@@ -108,3 +108,30 @@ def test_peaks_of_a_butterworth_output_are_its_dc_gain() -> None:
     graph = realize(target, "cascade")
     peaks = signal_peaks(graph, target, band_hz=(100, 2e3), swing="sine")
     assert peaks.peak[graph.output] == pytest.approx(1.0, rel=1e-9)
+
+
+@pytest.mark.parametrize("q", [2.0, 100.0])
+def test_the_rate_is_found_at_a_sharp_peak_in_a_wide_band(q: float) -> None:
+    """The largest 2 pi f |G| of every block, against a sweep far denser than the resonance."""
+    f0 = 777.7
+    w0 = 2 * math.pi * f0
+    target = TransferFunction.from_factors(w0 / q, [Factor.real(0)], [Factor.pair(w0, q)])
+    graph = realize(target, "cascade")
+    band = (1.0, 1e6)
+    peaks = signal_peaks(graph, target, band_hz=band, swing="sine")
+    dense = np.union1d(np.geomspace(*band, 4001), f0 * np.linspace(0.9, 1.1, 20_001))
+    signals = graph.signals(2j * np.pi * dense)
+    for name, rate in peaks.rate.items():
+        assert rate == pytest.approx(np.max(2 * np.pi * dense * np.abs(signals[name])), rel=2e-3)
+
+
+def test_peak_and_rate_stop_beside_a_pole_on_the_axis_alike() -> None:
+    """An undamped pair has no largest value: both are those 1 % beside it, whatever the band."""
+    w0 = 2 * math.pi * 100.0
+    target = TransferFunction.from_factors(w0**2, [], [Factor.pair(w0, math.inf)])
+    graph = realize(target, "controllable")
+    for low in (50.0, 99.0, 99.99):
+        peaks = signal_peaks(graph, target, band_hz=(low, 1e3), swing="sine")
+        assert peaks.peak[graph.output] == pytest.approx(1 / (1 - 0.99**2), rel=1e-6)
+        rate = 1.01 * w0 / (1.01**2 - 1)
+        assert peaks.rate[graph.output] == pytest.approx(rate, rel=1e-6)
