@@ -135,3 +135,29 @@ def test_peak_and_rate_stop_beside_a_pole_on_the_axis_alike() -> None:
         assert peaks.peak[graph.output] == pytest.approx(1 / (1 - 0.99**2), rel=1e-6)
         rate = 1.01 * w0 / (1.01**2 - 1)
         assert peaks.rate[graph.output] == pytest.approx(rate, rel=1e-6)
+
+
+def test_the_direct_path_counts_in_the_l1_norm() -> None:
+    """(s + 3)/(s + 1) = 1 + 2/(s + 1): 1 + 2; and 1 - 2/(s + 1), an all-pass, has 3 too."""
+    for zero in (-3.0, 1.0):
+        target = TransferFunction.from_factors(1, [Factor.real(zero)], [Factor.real(-1.0)])
+        graph = realize(target, "controllable")
+        system = StateSpace.of_signals(graph, (graph.output,))
+        assert system.l1_norms()[0] == pytest.approx(3.0, rel=1e-6)
+
+
+def test_l1_norm_is_reached_by_the_worst_input() -> None:
+    """The input that follows the sign of the impulse response turned about drives the output
+    to the norm (scipy's lsim), and no random switching input passes it."""
+    num, den = [0.4, 3.0, 1.0], [1.0, 0.8, 9.0, 2.0]
+    graph = realize(TransferFunction.from_polynomials(num, den), "cascade")
+    norm = StateSpace.of_signals(graph, (graph.output,)).l1_norms()[0]
+    t = np.linspace(0, 60, 60_001)
+    _, impulse = scipy.signal.impulse((num, den), T=t)
+    _, y, _ = scipy.signal.lsim((num, den), np.sign(impulse[::-1]), t, interp=False)
+    assert y[-1] == pytest.approx(norm, rel=2e-3)
+    rng = np.random.default_rng(4)
+    for _ in range(5):
+        u = np.repeat(rng.choice([-1.0, 1.0], 601), 100)[: t.size]
+        _, y, _ = scipy.signal.lsim((num, den), u, t, interp=False)
+        assert np.max(np.abs(y)) < norm
