@@ -38,6 +38,9 @@ Progress = Callable[[str, int, int], None]
 # The search for values sees the response at about this many frequencies.
 FREQUENCIES_OF_THE_SEARCH = 200
 
+# What a level may lack of its maximum and still count as its peak.
+FLAT = 0.01
+
 # 50 times a stray of 2 pF.
 SMALL_CAPACITOR = 100e-12
 
@@ -195,7 +198,9 @@ def _level_limits(sketch: Sketch, job: Job) -> dict[str, tuple[float, float]]:
             job.board.swing_limit / (volts * peaks.peak[cell.block]),
             job.board.op_amp.slew_rate / 2 / (volts * peaks.rate[cell.block]),
         )
-        watch = float(grid[int(np.argmax(np.abs(signals[cell.block])))])
+        # An adder may be flat up to where op-amps end: its peak is where the flat part begins.
+        size = np.abs(signals[cell.block])
+        watch = float(grid[int(np.argmax(size >= (1 - FLAT) * np.max(size)))])
         limits[cell.output] = (watch, rising)
     return limits
 

@@ -12,7 +12,7 @@ from synth.circuit import Amplifier, Circuit
 from synth.evidence import Check
 from synth.job import Job
 from synth.nodal import compile_circuit
-from synth.peaks import frequencies_of_interest
+from synth.peaks import frequencies_of_interest, frequencies_within
 from synth.readback import block_names, graph_of
 from synth.results import Drift, Swing
 from synth.statespace import StateSpace
@@ -38,9 +38,7 @@ def swings(circuit: Circuit, target: TransferFunction, job: Job) -> tuple[Swing,
     everywhere = frequencies_of_interest(target, from_hz=from_hz)
     if from_hz is None:
         everywhere = np.concatenate([[0.0], everywhere])
-    low, high = signal.band_hz
-    within = np.unique(np.concatenate([np.geomspace(low, high, 400), everywhere]))
-    within = within[(within >= low) & (within <= high)]
+    within = frequencies_within(signal.band_hz, target)
     outputs = [a.output for a in circuit.amplifiers]
     program = compile_circuit(circuit)
     volts = signal.input_peak * np.abs(program.solve(everywhere, nets=outputs))

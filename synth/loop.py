@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 
 from synth.evidence import Check
 from synth.job import Loop
+from synth.nyquist import unstable_poles
 from synth.transfer import TransferFunction
 
 __all__ = ["LoopMargins", "loop_checks", "loop_margins", "loop_response"]
@@ -33,21 +34,27 @@ class LoopMargins:
     crossover_hz
         Frequency at which |L| = 1 with the smallest phase margin [Hz].
     phase_margin_deg
-        Smallest distance of the phase of L from -180 deg where |L| = 1, signed, within
-        +-180 deg [deg].
+        Smallest distance of the phase of L from -180 deg where |L| = 1, within +-180 deg,
+        positive in a stable loop [deg].
     gain_margin_db
-        How much the gain may grow until a crossing of -180 deg reaches 1 [dB].
+        How much the gain may change, up or down, until the nearest crossing of -180 deg
+        reaches 1, positive in a stable loop; in any other, how much it would have to grow [dB].
+    gain_may_fall
+        Whether that crossing is met by a gain that falls.
     disk_margin
         1 / max |(S - T) / 2|, S = 1/(1+L), T = L/(1+L): the size of a disk of gains and
-        phases that keeps the loop stable (Seiler, Packard, Gahinet 2020, from memory).
+        phases that keeps the loop stable (Seiler, Packard, Gahinet 2020, from memory); 0 for
+        an unstable one.
     unstable_poles
-        Closed-loop poles in the right half-plane, by the Nyquist criterion; None where L has
-        a pair of poles on the imaginary axis.
+        Closed-loop poles in the right half-plane, by the Nyquist criterion; None where it is
+        not decided: H(s) has a pair of poles on the imaginary axis, of which the board has
+        an image beside it, or a delayed L stays above 1.
     """
 
     crossover_hz: float | None
     phase_margin_deg: float | None
     gain_margin_db: float | None
+    gain_may_fall: bool
     disk_margin: float
     unstable_poles: int | None
 
@@ -86,13 +93,30 @@ def loop_margins(
     response = loop_response(loop, compensator or target.response)
     grid = _grid(loop, target)
     value = response(grid)
+    parts = (loop.plant, target)
+    poles = unstable_poles(
+        parts,
+        response,
+        grid,
+        value,
+        delay=loop.delay,
+        asked=loop_response(loop, target.response)(grid) if compensator else None,
+    )
     crossover, phase_margin = _phase_margin(response, grid, value)
+    origin = sum(tf.poles_at_origin - tf.zeros_at_origin for tf in parts)
+    gain_margin = _gain_margin(response, grid, value, finite_at_dc=origin == 0)
+    falls = gain_margin is not None and gain_margin < 0
+    if poles == 0:
+        # Either way from a stable loop is a distance from instability.
+        phase_margin = None if phase_margin is None else abs(phase_margin)
+        gain_margin = None if gain_margin is None else abs(gain_margin)
     return LoopMargins(
         crossover_hz=crossover,
         phase_margin_deg=phase_margin,
-        gain_margin_db=_gain_margin(response, grid, value),
-        disk_margin=float(1 / np.max(np.abs((1 - value) / (1 + value) / 2))),
-        unstable_poles=_unstable_poles(loop, target, value),
+        gain_margin_db=gain_margin,
+        gain_may_fall=falls,
+        disk_margin=_disk_margin(response, grid, value) if not poles else 0.0,
+        unstable_poles=poles,
     )
 
 
@@ -107,7 +131,7 @@ def loop_checks(loop: Loop, margins: LoopMargins) -> tuple[Check, ...]:
         margins.is_stable,
         "by the Nyquist criterion"
         if unstable is not None
-        else "not decided: L has a pair of poles on the imaginary axis",
+        else "not decided: H(s) has poles on the imaginary axis, or a delayed L stays above 1",
     )
     crossing = "" if margins.crossover_hz is None else f"at {margins.crossover_hz:.4g} Hz"
     return (
@@ -115,7 +139,13 @@ def loop_checks(loop: Loop, margins: LoopMargins) -> tuple[Check, ...]:
         _margin_check(
             "phase margin", margins.phase_margin_deg, loop.phase_margin_deg, "deg", crossing
         ),
-        _margin_check("gain margin", margins.gain_margin_db, loop.gain_margin_db, "dB", ""),
+        _margin_check(
+            "gain margin",
+            margins.gain_margin_db,
+            loop.gain_margin_db,
+            "dB",
+            "of a gain that falls" if margins.gain_may_fall else "",
+        ),
     )
 
 
@@ -146,7 +176,26 @@ def _grid(loop: Loop, target: TransferFunction) -> Real:
     if loop.delay:
         turn = 1 / loop.delay
         points.append(np.arange(0.02, 12, 0.02) * turn)
-    return np.unique(np.concatenate(points))
+    grid = np.unique(np.concatenate(points))
+    for factor in (f for f in factors if math.isinf(f.q)):
+        # Not on a pole on the imaginary axis, where there is no value.
+        grid = grid[np.abs(grid / (factor.natural_frequency / (2 * np.pi)) - 1) > 1e-9]
+    return grid
+
+
+def _disk_margin(response: Response, grid: Real, value: Complex) -> float:
+    """1 / max |(1 - L) / (1 + L) / 2|, its maximum sought between the points of the grid too."""
+
+    def inverse(loop: Complex) -> Real:
+        return np.asarray(np.abs(2 * (1 + loop) / (1 - loop)))
+
+    best = float(np.min(inverse(value)))
+    for _ in range(9):
+        k = int(np.argmin(inverse(value)))
+        grid = np.geomspace(grid[max(k - 1, 0)], grid[min(k + 1, grid.size - 1)], 33)
+        value = response(grid)
+        best = min(best, float(np.min(inverse(value))))
+    return best
 
 
 def _bisected(f: Callable[[float], float], low: float, high: float) -> float:
@@ -154,6 +203,11 @@ def _bisected(f: Callable[[float], float], low: float, high: float) -> float:
     from scipy.optimize import brentq
 
     return float(brentq(f, low, high, xtol=1e-14 * high, rtol=1e-14))
+
+
+def _crossings(value: Real) -> NDArray[np.intp]:
+    """Places after which a function on the grid changes its sign."""
+    return np.flatnonzero((value[:-1] < 0) != (value[1:] < 0))
 
 
 def _phase_margin(
@@ -164,9 +218,8 @@ def _phase_margin(
     def excess(f: float) -> float:
         return math.log(abs(complex(response(np.array([f]))[0])))
 
-    size = np.log(np.abs(value))
     found: list[tuple[float, float]] = []
-    for k in np.flatnonzero(size[:-1] * size[1:] < 0):
+    for k in _crossings(np.log(np.abs(value))):
         crossing = _bisected(excess, float(grid[k]), float(grid[k + 1]))
         phase = math.degrees(float(np.angle(-response(np.array([crossing]))[0])))
         found.append((phase, crossing))
@@ -176,39 +229,27 @@ def _phase_margin(
     return crossing, phase
 
 
-def _gain_margin(response: Response, grid: Real, value: Complex) -> float | None:
-    """20 log10 of the smallest 1 / |L| > 1 where L is negative and real."""
+def _gain_margin(
+    response: Response, grid: Real, value: Complex, *, finite_at_dc: bool
+) -> float | None:
+    """20 log10 of the 1 / |L| nearest to 1 where L is negative and real, DC included [dB]."""
 
     def imaginary(f: float) -> float:
         return float(response(np.array([f]))[0].imag)
 
     # The size between two points of the grid is between theirs, near enough: only the
-    # crossing that may be the largest below 1 is worth finding exactly.
-    k = np.flatnonzero((value.imag[:-1] * value.imag[1:] < 0) & (value.real[:-1] < 0))
-    size = np.sqrt(np.abs(value[k] * value[k + 1]))
-    best: float | None = None
-    for place in k[np.argsort(-size)]:
-        if best is not None and np.max(np.abs(value[place : place + 2])) < 0.9 * best:
+    # crossing that may be the nearest to 1 is worth finding exactly.
+    k = _crossings(value.imag)
+    k = k[value.real[k] < 0]
+    size = np.log(np.abs(value[k] * value[k + 1])) / 2
+    best = math.inf
+    if finite_at_dc and value.real[0] < 0:
+        best = math.log(abs(value.real[0]))
+    for place, rough in sorted(zip(k, size, strict=True), key=lambda pair: abs(pair[1])):
+        if abs(rough) > abs(best) + 0.1:
             break
         crossing = _bisected(imaginary, float(grid[place]), float(grid[place + 1]))
         found = abs(complex(response(np.array([crossing]))[0]))
-        if 0 < found < 1 and (best is None or found > best):
-            best = found
-    return None if best is None else -20 * math.log10(best)
-
-
-def _unstable_poles(loop: Loop, target: TransferFunction, value: Complex) -> int | None:
-    """Closed-loop poles in the right half-plane, from the turning of 1 + L.
-
-    A polynomial of degree n with Z roots in the right half-plane turns by (n - 2 Z) pi/2 from
-    w = 0 to infinity, and one with P there and m at the origin by (n - m - 2 P) pi/2 from
-    0+; 1 + L is the ratio of the closed to the open loop's, so
-    Z = P + m/2 - turn / pi.  A delay adds no poles of its own to a strictly proper L.
-    """
-    poles = [p for tf in (loop.plant, target) for f in tf.pole_factors for p in f.roots]
-    if any(p.real == 0 and p.imag != 0 for p in poles):
-        return None
-    right = sum(p.real > 0 for p in poles)
-    origin = sum(p == 0 for p in poles)
-    turn = float(np.sum(np.angle((1 + value[1:]) / (1 + value[:-1]))))
-    return round(right + origin / 2 - turn / math.pi)
+        if found and abs(math.log(found)) < abs(best):
+            best = math.log(found)
+    return None if math.isinf(best) else -20 * best / math.log(10)

@@ -19,7 +19,7 @@ from synth.graph import BlockGraph
 from synth.statespace import StateSpace
 from synth.transfer import Factor, TransferFunction
 
-__all__ = ["SignalPeaks", "frequencies_of_interest", "signal_peaks"]
+__all__ = ["SignalPeaks", "frequencies_of_interest", "frequencies_within", "signal_peaks"]
 
 Real = NDArray[np.float64]
 
@@ -77,7 +77,7 @@ def signal_peaks(
     from_hz = band_hz[0] if target.poles_at_origin else None
     grid = frequencies_of_interest(target, from_hz=from_hz)
     gains = _gains(graph, grid)
-    within = np.geomspace(*band_hz, 400)
+    within = frequencies_within(band_hz, target)
     rates = {n: float(np.max(2 * np.pi * within * g)) for n, g in _gains(graph, within).items()}
     if swing == "any":
         if np.any(target.poles.real >= 0):
@@ -91,7 +91,7 @@ def signal_peaks(
         return SignalPeaks(
             peak=peak, peak_hz=dict.fromkeys(names), rate=rates, norm="L1", from_hz=None
         )
-    found = _refined(graph, grid, gains)
+    found = _refined(graph, target, grid, gains)
     return SignalPeaks(
         peak={n: v for n, (v, _) in found.items()},
         peak_hz={n: f for n, (_, f) in found.items()},
@@ -115,7 +115,19 @@ def frequencies_of_interest(target: TransferFunction, *, from_hz: float | None =
     points = [np.geomspace(low, high, max(2, round(50 * math.log10(high / low))))]
     points += [_around(p) for p in target.pole_factors if p.degree == 2]
     grid = np.unique(np.concatenate(points))
-    grid = grid[grid >= low]
+    return _beside_the_axis(grid[grid >= low], target)
+
+
+def frequencies_within(band_hz: tuple[float, float], target: TransferFunction) -> Real:
+    """A grid over the band, both ends included, that sees every peak in it, ascending [Hz]."""
+    low, high = band_hz
+    everywhere = frequencies_of_interest(target, from_hz=low)
+    inside = everywhere[(everywhere > low) & (everywhere < high)]
+    return _beside_the_axis(np.union1d(np.geomspace(low, high, 400), inside), target)
+
+
+def _beside_the_axis(grid: Real, target: TransferFunction) -> Real:
+    """The grid without what lies closer than `AXIS_DISTANCE` to a pair of poles on the axis."""
     for pair in (p for p in target.pole_factors if p.degree == 2 and math.isinf(p.q)):
         f0 = pair.natural_frequency / (2 * np.pi)
         grid = grid[np.abs(grid / f0 - 1) >= AXIS_DISTANCE * (1 - 1e-9)]
@@ -136,7 +148,7 @@ def _gains(graph: BlockGraph, frequency_hz: Real) -> dict[str, Real]:
 
 
 def _refined(
-    graph: BlockGraph, grid: Real, gains: dict[str, Real]
+    graph: BlockGraph, target: TransferFunction, grid: Real, gains: dict[str, Real]
 ) -> dict[str, tuple[float, float]]:
     """Largest gain of each block and its frequency, between the neighbours of the grid."""
     best = {n: int(np.argmax(g)) for n, g in gains.items()}
@@ -147,10 +159,10 @@ def _refined(
     found = {n: (float(gains[n][k]), float(grid[k])) for n, k in best.items()}
     for _ in range(3):
         for name, (low, high) in bounds.items():
-            fine = np.geomspace(low, high, 13)
+            fine = _beside_the_axis(np.geomspace(low, high, 13), target)
             gain = _gains(graph, fine)[name]
             k = int(np.argmax(gain))
             if gain[k] > found[name][0]:
                 found[name] = (float(gain[k]), float(fine[k]))
-            bounds[name] = (float(fine[max(k - 1, 0)]), float(fine[min(k + 1, 12)]))
+            bounds[name] = (float(fine[max(k - 1, 0)]), float(fine[min(k + 1, fine.size - 1)]))
     return found

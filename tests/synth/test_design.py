@@ -4,14 +4,17 @@ from __future__ import annotations
 
 import math
 from dataclasses import replace
+from fractions import Fraction
 
 import numpy as np
 import pytest
 
-from synth.design import compare_forms, design
+from synth.candidates import sketch_form
+from synth.design import _level_limits, compare_forms, design
 from synth.errors import JobError, RealizationError
 from synth.evidence import response_error
 from synth.job import Accept, Loop
+from synth.limits import swings
 from synth.nodal import compile_circuit
 from synth.readback import block_names, graph_of
 from synth.transfer import Factor, TransferFunction
@@ -63,6 +66,25 @@ def test_an_output_that_must_clip_fails_its_swing_check() -> None:
     assert failed
     assert all(c.name.startswith(("peak of", "inverter")) for c in failed)
     assert failed[0].value == pytest.approx(20.0, rel=0.05)
+
+
+def test_every_output_is_watched_where_its_op_amp_shows_the_peak() -> None:
+    """The adders behind a lead and a notch pass all high frequencies: their peak is flat up to
+    where no op-amp has any gain left, and is watched where the flat part begins."""
+    target = TransferFunction.from_factors(
+        2.3e7,
+        [Factor.pair(290, 4), Factor.real(-113)],
+        [Factor.pair(290, Fraction(7, 10)), Factor.real(-880), Factor.pair(3270, Fraction(3, 4))],
+    )
+    job = job_for(target, (1.0, 200.0), op_amp="JFET input")
+    sketch = sketch_form(job, "cascade", np.geomspace(1.0, 200.0, 100))
+    program = compile_circuit(sketch.circuit)
+    peaks = {s.net: s.peak for s in swings(sketch.circuit, job.target, job)}
+    watched = _level_limits(sketch, job)
+    assert {"y1", "y1_n", "y2", "y2_n"} < set(watched)
+    for net, (frequency, _) in watched.items():
+        shown = job.signal.input_peak * abs(program.solve([frequency], nets=[net])[0, 0])
+        assert shown == pytest.approx(peaks[net], rel=0.02)
 
 
 def test_pole_at_the_origin_is_allowed_flagged_and_measured_from_the_band() -> None:

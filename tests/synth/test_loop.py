@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import control
 import numpy as np
 import pytest
@@ -9,7 +11,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from synth.job import Loop
-from synth.loop import loop_margins
+from synth.loop import loop_checks, loop_margins
 from synth.transfer import Factor, TransferFunction
 from tests.strategies import random_target
 
@@ -76,3 +78,123 @@ def test_nyquist_count_is_that_of_the_closed_loop_roots(
         return
     found = loop_margins(Loop(plant=plant), ONE)
     assert found.unstable_poles == int(np.sum(roots.real > 0))
+
+
+@pytest.mark.parametrize("gain", [59.99, 59.99999, 60.00001, 60.01])
+def test_a_loop_next_to_its_stability_limit_is_counted_right(gain: float) -> None:
+    """gain / ((s+1)(s+2)(s+3)) is stable below 60 (Routh); the turning of 1 + L is resolved
+    however sharp it is, and the disk margin goes to zero with the gain margin."""
+    found = loop_margins(loop_of([gain], [1, 6, 11, 6]), ONE)
+    assert found.unstable_poles == (0 if gain < 60 else 2)
+    assert found.gain_margin_db == pytest.approx(20 * np.log10(60 / gain), rel=1e-6)
+    assert found.phase_margin_deg * (60 - gain) > 0
+    if gain < 60:
+        # At the crossing L = -gain/60; L passes -1 at a slant, so the least is below.
+        bound = 2 * (60 - gain) / (60 + gain)
+        assert 0.3 * bound < found.disk_margin <= bound * (1 + 1e-6)
+    else:
+        assert found.disk_margin == 0
+
+
+@pytest.mark.parametrize("damping", [1e-2, 1e-3, 1e-5])
+def test_the_disk_margin_of_a_ringing_closed_loop_is_found(damping: float) -> None:
+    """L = 1/(s^2 + 2 damping s + 100): the closed loop rings where L has no pole, at
+    w^2 = 101; against a dense sweep there."""
+    found = loop_margins(loop_of([1], [1, 2 * damping, 100]), ONE)
+    w = np.sqrt(101) * (1 + np.linspace(-20, 20, 400_001) * damping)
+    loop = 1 / (100 - w * w + 2j * damping * w)
+    assert found.disk_margin == pytest.approx(np.min(np.abs(2 * (1 + loop) / (1 - loop))), rel=1e-4)
+
+
+def test_gain_that_may_not_fall_is_a_gain_margin() -> None:
+    """1.2/(s - 1) needs a gain above 1, a drop of 1.58 dB is all it has; and a conditionally
+    stable loop of three integrators may fall by the margin that python-control gives."""
+    found = loop_margins(loop_of([1.2], [1, -1]), ONE)
+    assert found.unstable_poles == 0
+    assert found.gain_may_fall
+    assert found.gain_margin_db == pytest.approx(20 * np.log10(1.2), rel=1e-9)
+    num, den = [4.0, 8.0, 4.0], [0.001, 1.0, 0.0, 0.0, 0.0]
+    found = loop_margins(loop_of(num, den), ONE)
+    assert found.unstable_poles == 0
+    assert found.gain_may_fall
+    gm = control.stability_margins(control.tf(num, den))[0]
+    assert found.gain_margin_db == pytest.approx(-20 * np.log10(gm), rel=1e-6)
+    check = loop_checks(replace(loop_of(num, den), gain_margin_db=20.0), found)[2]
+    assert not check.passed
+    assert check.note == "of a gain that falls"
+
+
+def test_phase_is_a_distance_either_way_in_a_stable_loop() -> None:
+    """A resonance of the plant that crosses 1 at a phase beyond -180 deg, harmless: its
+    distance counts, with no sign against it."""
+    num = list(np.polymul([60.0], [-0.005, 1.0]))
+    den = list(np.polymul([1.0, 10.0, 0.0], [1.0, 0.04, 400.0]))
+    found = loop_margins(loop_of([100 * c for c in num], den), ONE)
+    roots = np.roots(np.polyadd([100 * c for c in num], den))
+    assert found.unstable_poles == int(np.sum(roots.real > 0))
+    pm = control.stability_margins(control.tf([100 * c for c in num], den))[1]
+    expected = abs(pm) if found.unstable_poles == 0 else pm
+    assert found.phase_margin_deg == pytest.approx(expected, rel=1e-6)
+
+
+@settings(deadline=None, derandomize=True, max_examples=40)
+@given(st.integers(1, 4), st.integers(0, 2**32 - 1), st.floats(-1.0, 1.5))
+def test_margins_are_those_of_a_second_library(order: int, seed: int, gain: float) -> None:
+    """python-control takes the crossings nearest to 0 dB and to 0 deg, of either sign."""
+    plant = random_target(np.random.default_rng(seed), order, decades=1.5, from_hz=0.1)
+    zeros = [z for z in plant.zero_factors if z.natural_frequency]
+    poles = [*plant.pole_factors, Factor.real(-20.0)]
+    plant = TransferFunction.from_factors(float(plant.gain) * 10**gain * 20, zeros, poles)
+    num, den = ([float(c) for c in p] for p in (plant.numerator, plant.denominator))
+    found = loop_margins(Loop(plant=plant), ONE)
+    gm, pm, *_ = control.stability_margins(control.tf(num, den))
+    if found.phase_margin_deg is not None:
+        assert abs(found.phase_margin_deg) == pytest.approx(abs(pm), rel=1e-4, abs=1e-4)
+    if found.gain_margin_db is not None:
+        assert found.gain_margin_db == pytest.approx(abs(20 * np.log10(gm)), rel=1e-4) or (
+            found.unstable_poles
+        )
+
+
+@pytest.mark.parametrize("gain", [0.5, 5.0, 500.0])
+@pytest.mark.parametrize("lead", [2.0, -2.0])
+def test_a_plant_that_swings_undamped_is_counted(gain: float, lead: float) -> None:
+    """Poles on the imaginary axis in the plant: damped or driven by the closed loop, as the
+    roots say."""
+    num, den = [gain, gain * lead], [1.0, 40.0, 100.0, 4000.0]
+    roots = np.roots(np.polyadd(num, den))
+    found = loop_margins(loop_of(num, den), ONE)
+    assert found.unstable_poles == int(np.sum(roots.real > 0))
+
+
+@pytest.mark.parametrize("times", [1, 2])
+def test_a_cancelled_pole_at_the_origin_stays_unstable(times: int) -> None:
+    """A plant that blocks DC hides the integrator of H(s) from L, not from the board."""
+    plant = TransferFunction.from_factors(
+        1, [Factor.real(0)] * times, [Factor.real(-3.0)] * (times + 1)
+    )
+    target = TransferFunction.from_factors(1, [Factor.real(-1.0)] * times, [Factor.real(0)] * times)
+    assert loop_margins(Loop(plant=plant), target).unstable_poles == times
+
+
+def test_a_delayed_loop_that_stays_above_one_is_not_called_stable() -> None:
+    """2 exp(-s/1000) (s + 10)/s has unstable poles without end."""
+    target = TransferFunction.from_polynomials([1, 10], [1, 0])
+    found = loop_margins(loop_of([2], [1], delay=1e-3), target)
+    assert found.unstable_poles is None
+    assert not found.is_stable
+
+
+@pytest.mark.parametrize("leak", [1e-7, 1e-4])
+def test_the_board_of_a_double_integrator_is_counted_as_one(leak: float) -> None:
+    """Finite gain moves the two poles at the origin to -leak; the count does not hang on
+    whether the grid reaches below that."""
+    target = TransferFunction.from_polynomials([1, 20, 100], [1, 0, 0])
+    loop = loop_of([10], [1, 1])
+
+    def board(f: np.ndarray) -> np.ndarray:
+        s = 2j * np.pi * f
+        return (s * s + 20 * s + 100) / (s + leak) ** 2
+
+    assert loop_margins(loop, target).unstable_poles == 0
+    assert loop_margins(loop, target, board).unstable_poles == 0

@@ -108,3 +108,56 @@ def test_peaks_of_a_butterworth_output_are_its_dc_gain() -> None:
     graph = realize(target, "cascade")
     peaks = signal_peaks(graph, target, band_hz=(100, 2e3), swing="sine")
     assert peaks.peak[graph.output] == pytest.approx(1.0, rel=1e-9)
+
+
+@pytest.mark.parametrize("q", [2.0, 100.0])
+def test_the_rate_is_found_at_a_sharp_peak_in_a_wide_band(q: float) -> None:
+    """The largest 2 pi f |G| of every block, against a sweep far denser than the resonance."""
+    f0 = 777.7
+    w0 = 2 * math.pi * f0
+    target = TransferFunction.from_factors(w0 / q, [Factor.real(0)], [Factor.pair(w0, q)])
+    graph = realize(target, "cascade")
+    band = (1.0, 1e6)
+    peaks = signal_peaks(graph, target, band_hz=band, swing="sine")
+    dense = np.union1d(np.geomspace(*band, 4001), f0 * np.linspace(0.9, 1.1, 20_001))
+    signals = graph.signals(2j * np.pi * dense)
+    for name, rate in peaks.rate.items():
+        assert rate == pytest.approx(np.max(2 * np.pi * dense * np.abs(signals[name])), rel=2e-3)
+
+
+def test_peak_and_rate_stop_beside_a_pole_on_the_axis_alike() -> None:
+    """An undamped pair has no largest value: both are those 1 % beside it, whatever the band."""
+    w0 = 2 * math.pi * 100.0
+    target = TransferFunction.from_factors(w0**2, [], [Factor.pair(w0, math.inf)])
+    graph = realize(target, "controllable")
+    for low in (50.0, 99.0, 99.99):
+        peaks = signal_peaks(graph, target, band_hz=(low, 1e3), swing="sine")
+        assert peaks.peak[graph.output] == pytest.approx(1 / (1 - 0.99**2), rel=1e-6)
+        rate = 1.01 * w0 / (1.01**2 - 1)
+        assert peaks.rate[graph.output] == pytest.approx(rate, rel=1e-6)
+
+
+def test_the_direct_path_counts_in_the_l1_norm() -> None:
+    """(s + 3)/(s + 1) = 1 + 2/(s + 1): 1 + 2; and 1 - 2/(s + 1), an all-pass, has 3 too."""
+    for zero in (-3.0, 1.0):
+        target = TransferFunction.from_factors(1, [Factor.real(zero)], [Factor.real(-1.0)])
+        graph = realize(target, "controllable")
+        system = StateSpace.of_signals(graph, (graph.output,))
+        assert system.l1_norms()[0] == pytest.approx(3.0, rel=1e-6)
+
+
+def test_l1_norm_is_reached_by_the_worst_input() -> None:
+    """The input that follows the sign of the impulse response turned about drives the output
+    to the norm (scipy's lsim), and no random switching input passes it."""
+    num, den = [0.4, 3.0, 1.0], [1.0, 0.8, 9.0, 2.0]
+    graph = realize(TransferFunction.from_polynomials(num, den), "cascade")
+    norm = StateSpace.of_signals(graph, (graph.output,)).l1_norms()[0]
+    t = np.linspace(0, 60, 60_001)
+    _, impulse = scipy.signal.impulse((num, den), T=t)
+    _, y, _ = scipy.signal.lsim((num, den), np.sign(impulse[::-1]), t, interp=False)
+    assert y[-1] == pytest.approx(norm, rel=2e-3)
+    rng = np.random.default_rng(4)
+    for _ in range(5):
+        u = np.repeat(rng.choice([-1.0, 1.0], 601), 100)[: t.size]
+        _, y, _ = scipy.signal.lsim((num, den), u, t, interp=False)
+        assert np.max(np.abs(y)) < norm

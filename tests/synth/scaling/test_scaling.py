@@ -8,9 +8,9 @@ import pytest
 from synth.errors import RealizationError
 from synth.evidence import response_error
 from synth.forms import FORMS, realize
-from synth.graph import BlockGraph
+from synth.graph import Block, BlockGraph, Term
 from synth.job import Job
-from synth.mapping import map_graph
+from synth.mapping import Sizing, map_graph
 from synth.nodal import compile_circuit
 from synth.parts import PartRule
 from synth.peaks import SignalPeaks, signal_peaks
@@ -18,7 +18,7 @@ from synth.polarity import Polarity, choose_polarity
 from synth.preferred import is_member
 from synth.scaling import Scaled, scale
 from synth.scaling.constraints import ceilings
-from synth.scaling.objectives import noise_power, response_error_power
+from synth.scaling.objectives import current_shares, noise_power, response_error_power
 from synth.scaling.signomial import Signomial
 from synth.scaling.variables import Variables
 from synth.transfer import Factor, TransferFunction
@@ -87,6 +87,74 @@ def test_noise_objective_is_that_of_the_nodal_engine() -> None:
     predicted, _ = noise_power(variables, job.board.op_amp, fine)(v)
     noise = compile_circuit(circuit).noise(fine)
     assert predicted == pytest.approx(np.trapezoid(noise.total, fine), rel=2e-3)
+
+
+def test_predicted_error_counts_an_inverter_at_the_output() -> None:
+    """The board's output may be that of an inverter, whose error is its own; every target of
+    either sign, against the whole circuit solved."""
+    seen = 0
+    for order in (1, 2, 3):
+        for form in FORMS:
+            for target in (butterworth(order, 1e3), butterworth(order, 1e3).negated()):
+                job = job_for(target, BAND)
+                _, polarity, _, scaled = stages(job, form)
+                seen += polarity.output_from_inverter
+                circuit = map_graph(scaled.graph, polarity, scaled.sizing, job)
+                response = compile_circuit(circuit).solve(FREQUENCY)
+                error = response_error(response, target.response(FREQUENCY))
+                assert error.rms == pytest.approx(scaled.predicted_error, rel=0.02)
+    assert seen
+
+
+def test_noise_of_adders_is_that_of_the_nodal_engine() -> None:
+    """An adder behind a lossy integrator, all of them inverting as the signs want it."""
+    x = Block("x1", "integrator", (Term("in", -9e3), Term("x1", -4e3)))
+    y = Block("y", "adder", (Term("x1", -1.7), Term("in", -0.6)))
+    graph = BlockGraph("test", (x, y), "y")
+    polarity = choose_polarity(graph)
+    assert not polarity.inverters
+    job = job_for(
+        butterworth(1, 1e3),
+        BAND,
+        op_amp_figures={"current_noise": 0.0, "gain_bandwidth": 1e10, "open_loop_gain": 1e9},
+    )
+    variables = Variables(graph)
+    fine = np.geomspace(*BAND, 400)
+    for level, c, r in ((1.0, 4.7e-9, 14e3), (0.3, 1e-8, 90e3)):
+        v = np.zeros(variables.count)
+        place = variables.level_place("x1")
+        assert place is not None
+        v[[place, variables.size_place("x1"), variables.size_place("y")]] = np.log([level, c, r])
+        sizing = Sizing(capacitors={"x1": c}, feedback={"y": r}, inverters=1e4)
+        circuit = map_graph(graph.rescaled({"x1": level}), polarity, sizing, job)
+        noise = compile_circuit(circuit).noise(fine)
+        predicted, _ = noise_power(variables, job.board.op_amp, fine)(v)
+        assert predicted == pytest.approx(np.trapezoid(noise.total, fine), rel=2e-3)
+
+
+def test_currents_are_bounded_by_the_sum_of_what_hangs_on_an_output() -> None:
+    """Feedback, reader, capacitor and load by hand, at a level of 0.5."""
+    x = Block("x1", "integrator", (Term("in", -9e3), Term("x1", -3e3)))
+    y = Block("y", "adder", (Term("x1", -2.0),))
+    graph = BlockGraph("test", (x, y), "y")
+    variables = Variables(graph)
+    peaks = SignalPeaks(
+        peak={"x1": 3.0, "y": 6.0},
+        peak_hz={"x1": None, "y": None},
+        rate={"x1": 8e3, "y": 1.6e4},
+        norm="Linf",
+        from_hz=None,
+    )
+    amp = job_for(butterworth(1, 1e3), BAND).board.op_amp
+    first, second = current_shares(variables, peaks, amp, input_peak=2.0, load=5e3)
+    v = np.zeros(variables.count)
+    place = variables.level_place("x1")
+    assert place is not None
+    v[[place, variables.size_place("x1"), variables.size_place("y")]] = np.log([0.5, 1e-8, 2e4])
+    # x1: 3 V, R_f = 1/(3e3 C), the resistor of y = 2e4/(2/0.5), C; y: 12 V, R_f, load.
+    expected = 3.0 * 3e3 * 1e-8 + 3.0 / 5e3 + 2.0 * 0.5 * 8e3 * 1e-8
+    assert first(v)[0] * amp.output_current == pytest.approx(expected, rel=1e-9)
+    assert second(v)[0] * amp.output_current == pytest.approx(12 / 2e4 + 12 / 5e3, rel=1e-9)
 
 
 def test_no_other_level_gives_a_smaller_error_than_allowed() -> None:

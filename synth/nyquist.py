@@ -1,0 +1,106 @@
+"""Closed-loop poles in the right half-plane, counted from the turning of 1 + L.
+
+A polynomial of degree n with Z roots in the right half-plane turns by (n - 2 Z) pi/2 from
+w = 0 to infinity, and one with P there and m at the origin by (n - m - 2 P) pi/2 from 0+;
+1 + L is the ratio of the closed to the open loop's, so Z = P + m/2 - turn / pi.  A pair of
+poles of L at +-j w0 is multiplied away by (s^2 + w0^2) / (s + w0)^2 first.  A delay adds no
+poles of its own to an L that falls below 1.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+
+import numpy as np
+from numpy.typing import NDArray
+
+from synth.transfer import TransferFunction
+
+__all__ = ["unstable_poles"]
+
+Real = NDArray[np.float64]
+Complex = NDArray[np.complex128]
+Response = Callable[[Real], Complex]
+
+# Between neighbours of the grid 1 + L may turn by this much [rad]; where it turns by more, and
+# |L| is large enough to go around -1, points are added until it does not.
+TURN = 1.0
+ROUND = 0.9
+MOST_POINTS = 300_000
+
+# How far (a ratio) the board may be from H(s) at the frequency from which turning is counted.
+LIKE_TARGET = 0.2
+
+
+def unstable_poles(
+    parts: tuple[TransferFunction, TransferFunction],
+    response: Response,
+    grid: Real,
+    value: Complex,
+    *,
+    delay: float = 0.0,
+    asked: Complex | None = None,
+) -> int | None:
+    """How many closed-loop poles lie in the right half-plane; None where that is not decided.
+
+    A pole at the origin that a zero cancels stays in the closed loop, never decays, and counts.
+
+    Parameters
+    ----------
+    parts
+        The plant and H(s), whose poles are those of L.
+    response, grid, value
+        L over frequency, frequencies [Hz] far beyond every root, and L there.
+    delay
+        Of the plant [s].
+    asked
+        L with H(s) itself on the grid, where `response` has a board instead.  The finite gain
+        of op-amps turns a pole at the origin into one close to it; below the frequency from
+        which the board is like H(s) nothing is counted.
+    """
+    poles = [p for tf in parts for p in tf.poles]
+    on_axis = [p.imag for p in poles if p.real == 0 and p.imag > 0]
+    if asked is not None:
+        if np.any((parts[1].poles.real == 0) & (parts[1].poles.imag != 0)):
+            return None
+        alike = np.flatnonzero(np.abs(value / asked - 1) < LIKE_TARGET)
+        start = int(alike[0]) if alike.size and parts[1].poles_at_origin else 0
+        grid, value = grid[start:], value[start:]
+    elif delay and sum(tf.relative_degree for tf in parts) <= 0 and abs(value[-1]) >= 1:
+        return None
+    turn = _turn(response, grid, value, on_axis)
+    if turn is None:
+        return None
+    right = sum(1 for p in poles if p.real > 0)
+    origin = sum(tf.poles_at_origin for tf in parts)
+    cancelled = min(origin, sum(tf.zeros_at_origin for tf in parts))
+    return round(right + (origin + cancelled) / 2 - turn / math.pi)
+
+
+def _turn(response: Response, grid: Real, value: Complex, on_axis: list[float]) -> float | None:
+    """Angle by which 1 + L turns over the grid [rad], without the poles on the axis; None when
+    no reasonable number of points settles it."""
+
+    def without_poles(frequency_hz: Real, loop: Complex) -> Complex:
+        s = 2j * np.pi * frequency_hz
+        product = 1 + loop
+        for w0 in on_axis:
+            product = product * (s * s + w0 * w0) / (s + w0) ** 2
+        return product
+
+    keep = np.isfinite(value)
+    grid, value = grid[keep], value[keep]
+    while True:
+        product = without_poles(grid, value)
+        steps = np.angle(product[1:] / product[:-1])
+        size = np.maximum(np.abs(value[1:]), np.abs(value[:-1]))
+        apart = grid[1:] > grid[:-1] * (1 + 1e-12)
+        wide = np.flatnonzero((np.abs(steps) > TURN) & (size > ROUND) & apart)
+        if not wide.size:
+            return float(np.sum(steps))
+        if grid.size + wide.size > MOST_POINTS:
+            return None
+        middle = np.sqrt(grid[wide] * grid[wide + 1])
+        grid = np.insert(grid, wide + 1, middle)
+        value = np.insert(value, wide + 1, response(middle))

@@ -1,0 +1,113 @@
+"""Swing, slew, current and drift against closed forms in the values of the parts, and against
+independent sweeps."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+import pytest
+
+from synth.candidates import sketch_form
+from synth.circuit import Circuit
+from synth.forms import FORMS
+from synth.job import Job
+from synth.limits import drifts, swing_checks, swings
+from synth.nodal import compile_circuit
+from synth.transfer import Factor, TransferFunction
+from tests.jobs import job_for
+from tests.strategies import butterworth
+
+BAND = (20.0, 30e3)
+W0 = 2 * math.pi * 1e3
+
+
+def built(job: Job, form: str) -> Circuit:
+    return sketch_form(job, form, np.geomspace(*job.signal.band_hz, 100)).circuit
+
+
+def test_peak_slew_and_current_of_a_lossy_integrator() -> None:
+    """v = -k V / (1 + j f/f0): the peak is at DC, the slew rate at the upper edge, and the
+    output feeds R_f, C and the load, the first two into a virtual ground."""
+    target = TransferFunction.from_factors(-3 * W0, [], [Factor.real(-W0)])
+    job = job_for(target, BAND, input_peak=2.0, load=5e3, op_amp_figures={"gain_bandwidth": 1e12})
+    circuit = built(job, "observable")
+    (cell,) = circuit.cells
+    (out,) = swings(circuit, target, job)
+    feedback = next(circuit.by_ref[r].value for r in cell.inputs if "out" in circuit.by_ref[r].nets)
+    capacitor = circuit.by_ref[cell.feedback].value
+    f = np.geomspace(*BAND, 20_001)
+    volts = 6 / np.abs(1 + 1j * f / 1e3)
+    assert out.peak == pytest.approx(6.0, rel=1e-4)
+    assert out.peak_hz == 0
+    assert out.slew == pytest.approx(np.max(2 * np.pi * f * volts), rel=1e-4)
+    current = volts * np.abs(1 / feedback + 1 / 5e3 + 2j * np.pi * f * capacitor)
+    assert out.current == pytest.approx(np.max(current), rel=1e-4)
+    assert out.slew_limit == job.board.op_amp.slew_rate
+    assert out.current_limit == job.board.op_amp.output_current
+    peak, slew, amps = swing_checks((out,), {out.amplifier: "x1"})
+    assert (peak.value, peak.unit, peak.limit) == (out.peak, "V", 10.5)
+    assert (slew.value, slew.unit, slew.limit) == (pytest.approx(out.slew / 1e6), "V/us", 10.0)
+    assert (amps.value, amps.unit, amps.limit) == (
+        pytest.approx(1e3 * out.current),
+        "mA",
+        pytest.approx(20.0),
+    )
+
+
+@pytest.mark.parametrize("form", FORMS)
+def test_peaks_and_rates_are_those_of_a_dense_sweep(form: str) -> None:
+    """Every op-amp output, inverters and internal ones included, of a sharp band-pass."""
+    pairs = [Factor.pair(W0, 30), Factor.pair(1.2 * W0, 5)]
+    target = TransferFunction.from_factors(W0 * W0 / 60, [Factor.real(0)] * 2, pairs)
+    job = job_for(target, BAND, input_peak=0.5)
+    circuit = built(job, form)
+    f = np.union1d(np.geomspace(0.1, 1e7, 20_001), 1e3 * np.linspace(0.7, 1.4, 40_001))
+    nets = [a.output for a in circuit.amplifiers]
+    volts = 0.5 * np.abs(compile_circuit(circuit).solve(f, nets=nets))
+    inside = (f >= BAND[0]) & (f <= BAND[1])
+    for k, swing in enumerate(swings(circuit, target, job)):
+        assert swing.net == nets[k]
+        assert swing.peak == pytest.approx(np.max(volts[:, k]), rel=2e-3)
+        rate = np.max((2 * np.pi * f * volts[:, k])[inside])
+        assert swing.slew == pytest.approx(rate, rel=2e-3)
+
+
+@pytest.mark.parametrize("form", FORMS)
+def test_only_integrators_without_feedback_at_dc_drift(form: str) -> None:
+    """One for every pole at the origin, whatever loops the others stand in, at
+    Vos sum(1/R)/C + Ib/C; a low-pass has none."""
+    assert drifts(built(job_for(butterworth(3, 1e3), BAND), form)) == ()
+    for times in (1, 2):
+        zeros = [Factor.real(-0.2 * W0)] * times
+        poles = [Factor.real(0)] * times + [Factor.pair(W0, 1.5)]
+        target = TransferFunction.from_factors(W0**2, zeros, poles)
+        circuit = built(job_for(target, BAND, input_peak=1e-2), form)
+        found = drifts(circuit)
+        assert len(found) == times
+        for drift in found:
+            cell = circuit.cell_of(drift.amplifier)
+            assert cell is not None
+            conductance = sum(1 / circuit.by_ref[r].value for r in cell.inputs)
+            capacitor = circuit.by_ref[cell.feedback].value
+            assert drift.rate == pytest.approx(1e-3 * conductance / capacitor + 1e-7 / capacitor)
+
+
+def test_an_inverter_in_front_loads_the_source_too() -> None:
+    """With a source resistance the inverter of the input draws current like every resistor
+    on the source's net; the response stays H(s)."""
+    ideal = {"gain_bandwidth": 1e13, "open_loop_gain": 1e12, "slew_rate": 1e12}
+    biproper = TransferFunction.from_factors(1, [Factor.real(-W0)], [Factor.real(-5 * W0)])
+    turned = TransferFunction.from_factors(W0, [Factor.real(W0)], [Factor.pair(W0, 1)])
+    f = np.geomspace(*BAND, 30)
+    seen = set()
+    for form in FORMS:
+        for target in (biproper, turned, turned.negated()):
+            job = job_for(
+                target, BAND, source_resistance=700.0, op_amp_figures=ideal, input_peak=1e-3
+            )
+            circuit = built(job, form)
+            seen |= {c.block for c in circuit.cells if c.kind == "inverter"}
+            response = compile_circuit(circuit).solve(f)
+            np.testing.assert_allclose(response, target.response(f), rtol=1e-6)
+    assert "in" in seen
