@@ -43,6 +43,8 @@ class Passive:
         the source, the load), which then has no tolerance either.
     sets
         What the part sets, in words.
+    fixed
+        Whether the job states the value.
     """
 
     ref: str
@@ -52,11 +54,12 @@ class Passive:
     ideal: float
     rule: PartRule | None
     sets: str = ""
+    fixed: bool = False
 
     @property
     def tolerance(self) -> float:
         """Relative tolerance, 0 for what is not on the board."""
-        return self.rule.tolerance if self.rule else 0.0
+        return self.rule.tolerance_of(self.value) if self.rule else 0.0
 
     @property
     def on_board(self) -> bool:

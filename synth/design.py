@@ -135,6 +135,7 @@ def _choose(sketch: Sketch, job: Job, response: Complex, frequency_hz: Real, see
         sketch.circuit,
         target=response[few],
         frequency_hz=frequency_hz[few],
+        accept=job.accept,
         level_limits=_level_limits(sketch, job),
         seed=seed,
     )

@@ -78,6 +78,12 @@ class Board:
         Name of a realization, or ``"auto"``.
     inverted
         ``"no"``: the output is H(s); ``"yes"``: it is -H(s); ``"either"``: as cheaper.
+    fixed
+        References and the values [ohm], [F] they must have.
+    share_values
+        Whether fewer distinct values are worth a slightly larger error.
+    pairs
+        Whether two resistors may stand for one where one cannot reach the limit.
     """
 
     op_amp: OpAmp
@@ -86,6 +92,9 @@ class Board:
     supply: tuple[float, float] = (-12.0, 12.0)
     form: str = "auto"
     inverted: str = "no"
+    fixed: tuple[tuple[str, float], ...] = ()
+    share_values: bool = False
+    pairs: bool = False
 
     def __post_init__(self) -> None:
         low, high = self.supply

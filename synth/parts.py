@@ -16,7 +16,25 @@ from synth.errors import JobError
 from synth.preferred import decade, series_values
 from synth.quantities import show
 
-__all__ = ["OpAmp", "PartRule"]
+__all__ = ["OpAmp", "PartRule", "StockItem"]
+
+
+@dataclass(frozen=True, kw_only=True)
+class StockItem:
+    """One line of a drawer: a value [ohm] or [F], its relative tolerance, and how many there
+    are (None: enough)."""
+
+    value: float
+    tolerance: float
+    count: int | None = None
+
+    def __post_init__(self) -> None:
+        if not 0 < self.value < math.inf:
+            raise JobError(f"got the value {self.value}, expected a positive number")
+        if not 0 <= self.tolerance < 1:
+            raise JobError(f"got a tolerance of {self.tolerance}, expected 0 to below 100 %")
+        if self.count is not None and self.count < 1:
+            raise JobError(f"got a count of {self.count}, expected 1 or more")
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -33,6 +51,9 @@ class PartRule:
         Relative tolerance of a part, a ratio (0.01 is 1 %).
     smallest, largest
         Allowed range of values [ohm] or [F], both ends included.
+    stock
+        What the drawer holds; when not empty it stands in for the series, and each value has
+        the tolerance of its line, the tightest where a value has several.
     """
 
     kind: str
@@ -40,6 +61,7 @@ class PartRule:
     tolerance: float
     smallest: float
     largest: float
+    stock: tuple[StockItem, ...] = ()
 
     def __post_init__(self) -> None:
         if self.kind not in ("resistor", "capacitor"):
@@ -56,14 +78,33 @@ class PartRule:
             )
         if self.values.size == 0:
             raise JobError(
-                f"got no value of {self.series} from {show(self.smallest, unit)} to "
+                f"got no value of {self.source} from {show(self.smallest, unit)} to "
                 f"{show(self.largest, unit)}, expected a wider range"
             )
 
     @cached_property
     def values(self) -> NDArray[np.float64]:
         """What may be bought, ascending [ohm] or [F]."""
-        return series_values(self.series, self.smallest, self.largest)
+        if not self.stock:
+            return series_values(self.series, self.smallest, self.largest)
+        inside = {i.value for i in self.stock if self.smallest <= i.value <= self.largest}
+        return np.array(sorted(inside))
+
+    @property
+    def source(self) -> str:
+        """Where values come from: the series' name, or ``"stock"``."""
+        return "stock" if self.stock else self.series
+
+    def tolerance_of(self, value: float) -> float:
+        """Relative tolerance of a part of that value."""
+        found = [i.tolerance for i in self.stock if i.value == value]
+        return min(found, default=self.tolerance)
+
+    def count_of(self, value: float) -> int | None:
+        """How many parts of that value there are; None for enough."""
+        counts = [i.count for i in self.stock if i.value == value]
+        known = [c for c in counts if c is not None]
+        return sum(known) if counts and len(known) == len(counts) else None
 
 
 @dataclass(frozen=True, kw_only=True)

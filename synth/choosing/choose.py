@@ -7,16 +7,19 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
+from synth.choosing.certificate import Certificate, certify
 from synth.choosing.grid import ValueGrid
-from synth.choosing.model import LevelLimits, LinearModel, compensation
+from synth.choosing.model import Goal, LevelLimits, LinearModel, compensation
 from synth.choosing.search import search_values
 from synth.circuit import Circuit
-from synth.nodal import compile_circuit
+from synth.job import Accept
+from synth.nodal import NodalProgram, compile_circuit
 
 __all__ = ["DEFAULT_EFFORT", "Choice", "choose_values"]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
+Index = NDArray[np.intp]
 
 # Pairs of steps the search evaluates: about a second on one core.
 DEFAULT_EFFORT = 60_000_000
@@ -37,12 +40,15 @@ class Choice:
         chosen ones with which the circuit, capacitors as chosen, would show the target.
     nearest
         With each ideal value of the start rounded to its nearest neighbour.
+    certificate
+        How much better any other choice could be.
     looked
         How many pairs of steps along the series the search evaluated.
     """
 
     circuit: Circuit
     nearest: Circuit
+    certificate: Certificate
     looked: int
 
 
@@ -51,6 +57,7 @@ def choose_values(
     *,
     target: Complex,
     frequency_hz: Real,
+    accept: Accept | None = None,
     level_limits: dict[str, tuple[float, float]] | None = None,
     seed: int = 1,
     effort: int = DEFAULT_EFFORT,
@@ -65,6 +72,8 @@ def choose_values(
         What the output must show, shape (F,), nowhere zero.
     frequency_hz
         Shape (F,) [Hz].
+    accept
+        Limits that weight magnitude against phase; None weights them alike.
     level_limits
         By op-amp output net: the frequency of its peak [Hz], and the ratio by which the peak
         may still rise.
@@ -75,22 +84,57 @@ def choose_values(
     """
     program = compile_circuit(circuit)
     grid = ValueGrid(circuit.passives)
-    ideal = np.log([p.ideal for p in circuit.passives])
+    goal = Goal(target, frequency_hz)
+    if accept is not None:
+        goal = Goal.within(target, frequency_hz, accept)
+    logs = np.log([p.ideal for p in circuit.passives])
+    ideal = compile_circuit(with_ideal_op_amps(circuit))
+    limits = _limits(circuit, logs, level_limits or {})
     outcome = search_values(
         program,
         grid,
-        start_logs=ideal,
-        target=target,
-        frequency_hz=frequency_hz,
-        limits=_limits(program.circuit, ideal, level_limits or {}),
+        goal,
+        start_logs=logs,
+        ideal=ideal,
+        limits=limits,
         seed=seed,
         effort=effort,
     )
-    chosen = _with(circuit, grid.values_at(outcome.index))
+    index = outcome.index
+    certificate = _certified(program, ideal, grid, goal, index)
+    if certificate.better is not None:
+        # Every choice was looked at: take the best, where the whole circuit confirms it.
+        both = np.array([grid.values_at(k) for k in (index, certificate.better)])
+        squares = goal.mean_squares(program, both)
+        allowed = limits is None or limits.hold(np.log(both[1]))
+        if squares[1] < squares[0] and allowed:
+            index = certificate.better
+            certificate = _certified(program, ideal, grid, goal, index)
+    chosen = _with(circuit, grid.values_at(index))
     return Choice(
-        circuit=_with_ideals(chosen, grid, target, frequency_hz),
-        nearest=_with(circuit, grid.values_at(grid.nearest(ideal))),
+        circuit=_with_ideals(chosen, grid, goal),
+        nearest=_with(circuit, grid.values_at(grid.nearest(logs))),
+        certificate=certificate,
         looked=outcome.looked,
+    )
+
+
+def _certified(
+    program: NodalProgram, ideal: NodalProgram, grid: ValueGrid, goal: Goal, index: Index
+) -> Certificate:
+    """How good the choice is, in the model about itself."""
+    model = LinearModel.about(program, grid.values_at(index), goal, jacobian=ideal)
+    return certify(grid, model, index)
+
+
+def with_ideal_op_amps(circuit: Circuit) -> Circuit:
+    """The same circuit with op-amps whose gain is as good as infinite."""
+    return replace(
+        circuit,
+        amplifiers=tuple(
+            replace(a, figures=replace(a.figures, gain_bandwidth=1e15, open_loop_gain=1e12))
+            for a in circuit.amplifiers
+        ),
     )
 
 
@@ -116,13 +160,13 @@ def _limits(
     return LevelLimits(np.array(rows), np.array(slack), ideal)
 
 
-def _with_ideals(circuit: Circuit, grid: ValueGrid, target: Complex, frequency_hz: Real) -> Circuit:
+def _with_ideals(circuit: Circuit, grid: ValueGrid, goal: Goal) -> Circuit:
     """Each resistor's `ideal` moved to the exact solution nearest to the chosen values."""
     values = np.array([p.value for p in circuit.passives])
     logs = np.log(values)
     free = grid.resistors
     for _ in range(2):
-        model = LinearModel.about(compile_circuit(circuit), np.exp(logs), target, frequency_hz)
+        model = LinearModel.about(compile_circuit(circuit), np.exp(logs), goal)
         logs[free] -= compensation(model.matrix[:, free], IDEAL_RIDGE) @ model.offset
     return replace(
         circuit,

@@ -20,9 +20,6 @@ __all__ = ["Neighbourhood"]
 Real = NDArray[np.float64]
 Index = NDArray[np.intp]
 
-# A step that is not there costs so much that no pair with it is ever taken.
-_FORBIDDEN = 1e6
-
 
 @dataclass(frozen=True, eq=False)
 class Neighbourhood:
@@ -49,10 +46,6 @@ class Neighbourhood:
     def _step(self) -> Index:
         return np.tile(self._steps, len(self.grid.parts))
 
-    @cached_property
-    def _same_part(self) -> NDArray[np.bool_]:
-        return np.equal.outer(self._part, self._part)
-
     @property
     def pairs(self) -> int:
         """Pairs of steps one look evaluates, the quads counted as such."""
@@ -78,53 +71,64 @@ class Neighbourhood:
         return float(residual @ residual)
 
     def _best_move(self, index: Index, cost: float) -> Index | None:
-        effects = self._effects(index)
+        steps = self._steps_from(index)
+        if steps.part.size < 2:
+            return None
         residual = self.model.residual(self.grid.logs_at(index))
-        gram = effects.T @ effects
-        single = 2 * (residual @ effects) + np.diagonal(gram)
+        gram = steps.effects.T @ steps.effects
+        single = 2 * (residual @ steps.effects) + np.diagonal(gram)
         pair = 2 * gram + single[:, None] + single[None, :]
-        pair[self._same_part] = _FORBIDDEN
+        pair[np.equal.outer(steps.part, steps.part)] = np.inf
         alone, both = int(np.argmin(single)), int(np.argmin(pair))
         gain = -1e-12 * max(cost, 1e-18)
         if single[alone] <= pair.flat[both] and single[alone] < gain:
-            return self._moved(index, (alone,))
+            return steps.taken(index, alone)
         if pair.flat[both] < gain:
-            return self._moved(index, divmod(both, self._part.size))
-        return self._best_quad(index, effects, pair, residual, gain) if self.quads else None
+            return steps.taken(index, *divmod(both, steps.part.size))
+        return self._best_quad(index, steps, pair, gain) if self.quads else None
 
-    def _best_quad(
-        self, index: Index, effects: Real, pair: Real, residual: Real, gain: float
-    ) -> Index | None:
+    def _best_quad(self, index: Index, steps: _Steps, pair: Real, gain: float) -> Index | None:
         """The best two of the cheapest pairs together, on four different parts."""
-        rows, columns = np.triu_indices(self._part.size, k=1)
+        rows, columns = np.triu_indices(steps.part.size, k=1)
         costs = pair[rows, columns]
+        allowed = np.isfinite(costs)
+        rows, columns, costs = rows[allowed], columns[allowed], costs[allowed]
+        if costs.size < 2:
+            return None
         count = min(self.quads, costs.size - 1)
         chosen = np.argpartition(costs, count)[:count]
         a, b = rows[chosen], columns[chosen]
-        joint = effects[:, a] + effects[:, b]
+        joint = steps.effects[:, a] + steps.effects[:, b]
         total = 2 * (joint.T @ joint) + costs[chosen][:, None] + costs[chosen][None, :]
-        pa, pb = self._part[a], self._part[b]
-        for left in (pa, pb):
-            for right in (pa, pb):
-                total[left[:, None] == right[None, :]] = _FORBIDDEN
+        for left in (steps.part[a], steps.part[b]):
+            for right in (steps.part[a], steps.part[b]):
+                total[np.equal.outer(left, right)] = np.inf
         best = int(np.argmin(total))
-        if total.flat[best] >= gain:
+        if not total.flat[best] < gain:
             return None
         i, j = divmod(best, count)
-        return self._moved(index, (a[i], b[i], a[j], b[j]))
+        return steps.taken(index, int(a[i]), int(b[i]), int(a[j]), int(b[j]))
 
-    def _effects(self, index: Index) -> Real:
-        """What each step does to the residual, shape (K, steps)."""
+    def _steps_from(self, index: Index) -> _Steps:
+        """The steps that stay within the lists of values, and what each does."""
         target = index[self._part] + self._step
         inside = (target >= 0) & (target < self.grid.counts[self._part])
-        safe = np.where(inside, target, index[self._part])
-        change = self.grid.logs[self._part, safe] - self.grid.logs_at(index)[self._part]
-        effects = self.model.matrix[:, self._part] * change
-        effects[0, ~inside] = _FORBIDDEN
-        return effects
+        part, step, target = self._part[inside], self._step[inside], target[inside]
+        change = self.grid.logs[part, target] - self.grid.logs_at(index)[part]
+        return _Steps(part, step, self.model.matrix[:, part] * change)
 
-    def _moved(self, index: Index, moves: tuple[int, ...]) -> Index:
+
+@dataclass(frozen=True, eq=False)
+class _Steps:
+    """Possible steps: of which part, how many places, and the change of the residual (K, n)."""
+
+    part: Index
+    step: Index
+    effects: Real
+
+    def taken(self, index: Index, *moves: int) -> Index:
+        """`index` after some of the steps, each of another part."""
         out = index.copy()
         for move in moves:
-            out[self._part[move]] += self._step[move]
+            out[self.part[move]] += self.step[move]
         return out

@@ -20,7 +20,8 @@ Index = NDArray[np.intp]
 class ValueGrid:
     """Allowed values of the parts of a circuit.
 
-    A part that is not bought (source resistance, load) has its one value.  Index vectors have
+    A part that is not bought (source resistance, load) or whose value the job states has its
+    one value.  Index vectors have
     shape (P,), one index per part, into its own ascending list.
     """
 
@@ -30,7 +31,8 @@ class ValueGrid:
     def values(self) -> tuple[Real, ...]:
         """Allowed values of each part, ascending [ohm] or [F]."""
         return tuple(
-            np.array([part.value]) if part.rule is None else part.rule.values for part in self.parts
+            np.array([part.value]) if part.fixed or part.rule is None else part.rule.values
+            for part in self.parts
         )
 
     @cached_property
@@ -54,7 +56,9 @@ class ValueGrid:
     @cached_property
     def resistors(self) -> NDArray[np.bool_]:
         """Which parts are resistors with a choice, shape (P,)."""
-        return np.array([p.kind == "resistor" and p.rule is not None for p in self.parts])
+        return np.array(
+            [p.kind == "resistor" and p.rule is not None and not p.fixed for p in self.parts]
+        )
 
     def nearest(self, logs: Real) -> Index:
         """Index of the value nearest to each part's logarithm, shape (P,)."""

@@ -14,9 +14,11 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from synth.evidence import DB_PER_NEPER
+from synth.job import Accept
 from synth.nodal import NodalProgram
 
-__all__ = ["LevelLimits", "LinearModel", "compensation", "mean_square_error"]
+__all__ = ["Goal", "LevelLimits", "LinearModel", "compensation"]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -34,6 +36,46 @@ def compensation(matrix: Real, ridge: float = RIDGE) -> Real:
     """G so that d = -G r makes |matrix d + r|^2 + (ridge |d|)^2 least, shape (P, K)."""
     left, singular, right = np.linalg.svd(matrix, full_matrices=False)
     return np.asarray((right.T * (singular / (singular**2 + ridge**2))) @ left.T)
+
+
+@dataclass(frozen=True, eq=False)
+class Goal:
+    """The response the output must show, and how an error of it counts.
+
+    Parameters
+    ----------
+    target
+        Shape (F,), nowhere zero.
+    frequency_hz
+        Shape (F,).
+    magnitude_weight, phase_weight
+        Factors of the real and the imaginary part of the error of ln H.
+    """
+
+    target: Complex
+    frequency_hz: Real
+    magnitude_weight: float = 1.0
+    phase_weight: float = 1.0
+
+    @classmethod
+    def within(cls, target: Complex, frequency_hz: Real, accept: Accept) -> Goal:
+        """Magnitude and phase weighted by the inverse of their limits, so that equal shares of
+        a limit count the same; the mean of the squared weights is 1."""
+        magnitude = DB_PER_NEPER / accept.magnitude_db
+        phase = 180 / np.pi / accept.phase_deg
+        scale = float(np.sqrt(2 / (magnitude**2 + phase**2)))
+        return cls(target, frequency_hz, magnitude * scale, phase * scale)
+
+    def split(self, error: Complex) -> Real:
+        """Errors of ln H, shape (..., F), as weighted real and imaginary parts, (..., 2 F),
+        scaled so that the sum of squares is the mean square over frequency."""
+        parts = (self.magnitude_weight * error.real, self.phase_weight * error.imag)
+        return np.asarray(np.concatenate(parts, axis=-1) / np.sqrt(self.frequency_hz.size))
+
+    def mean_squares(self, program: NodalProgram, values: Real) -> Real:
+        """Weighted mean square of the error of ln H of each board, values (boards, P)."""
+        response = program.solve(self.frequency_hz, values=values)
+        return np.asarray(np.sum(self.split(np.log(response / self.target)) ** 2, axis=-1))
 
 
 @dataclass(frozen=True, eq=False)
@@ -57,15 +99,25 @@ class LinearModel:
 
     @classmethod
     def about(
-        cls, program: NodalProgram, values: Real, target: Complex, frequency_hz: Real
+        cls,
+        program: NodalProgram,
+        values: Real,
+        goal: Goal,
+        *,
+        jacobian: NodalProgram | None = None,
     ) -> LinearModel:
-        """The model about `values` (P,), for a target response (F,) at `frequency_hz` (F,)."""
-        found = program.sensitivities(frequency_hz, values=values)
-        error = np.log(found.response / target)
-        scale = 1 / np.sqrt(frequency_hz.size)
-        jacobian = np.concatenate([found.passives.real, found.passives.imag]) * scale
-        residual = np.concatenate([error.real, error.imag]) * scale
-        left, singular, right = np.linalg.svd(jacobian, full_matrices=False)
+        """The model about `values` (P,).
+
+        The error is that of `program`; the slopes are those of `jacobian` where given, such as
+        the same circuit with ideal op-amps, whose rank is that of what the parts really set.
+        """
+        found = (jacobian or program).sensitivities(goal.frequency_hz, values=values)
+        response = found.response
+        if jacobian is not None:
+            response = program.solve(goal.frequency_hz, values=values)
+        residual = goal.split(np.log(response / goal.target))
+        slopes = goal.split(found.passives.T).T
+        left, singular, right = np.linalg.svd(slopes, full_matrices=False)
         keep = singular > NEGLIGIBLE * singular[0]
         offset = left[:, keep].T @ residual
         floor = max(float(residual @ residual - offset @ offset), 0.0)
@@ -100,11 +152,3 @@ class LevelLimits:
     def hold(self, logs: Real) -> bool:
         """Whether every output stays below its ceiling at ln p = `logs`."""
         return bool(np.all(self.excess(logs) <= 1e-12))
-
-
-def mean_square_error(
-    program: NodalProgram, values: Real, target: Complex, frequency_hz: Real
-) -> Real:
-    """Mean square of |ln(H/target)| of each board, values (boards, P), shape (boards,)."""
-    response = program.solve(frequency_hz, values=values)
-    return np.asarray(np.mean(np.abs(np.log(response / target)) ** 2, axis=-1))

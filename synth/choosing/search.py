@@ -1,10 +1,12 @@
 """The joint search: kicks along the free scales, compensation, rounding, descent.
 
-In every round the response is linear about the best values so far.  A kick moves a random
-part of the values, capacitors go to standard ones, the resistors make up for the error by
-the smallest change, everything is rounded, and the descent follows.  The best candidates of
-a round are judged by the nodal engine on the whole circuit, and the best of them is the
-reference of the next round.  Deterministic for a seed; no result depends on the clock.
+In every round the response is linear about the best values so far.  A kick either moves a
+random part of the values, or gives the parts that bind (see `synth.choosing.binding`) one of
+the sets of values that hurt least; capacitors go to standard values, the resistors make up for
+the error by the smallest change, everything is rounded, and the descent follows.  The best
+candidates of a round are judged by the nodal engine on the whole circuit, and the best of
+them is the reference of the next round.  Deterministic for a seed; no result depends on the
+clock.
 """
 
 from __future__ import annotations
@@ -15,20 +17,15 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from synth.choosing.binding import Frontier, binding_order
 from synth.choosing.descent import Neighbourhood
 from synth.choosing.grid import ValueGrid
-from synth.choosing.model import (
-    LevelLimits,
-    LinearModel,
-    compensation,
-    mean_square_error,
-)
+from synth.choosing.model import Goal, LevelLimits, LinearModel, compensation
 from synth.nodal import NodalProgram
 
 __all__ = ["SearchOutcome", "search_values"]
 
 Real = NDArray[np.float64]
-Complex = NDArray[np.complex128]
 Index = NDArray[np.intp]
 
 # Size of the kicks in each round, as a ratio of the value.
@@ -39,6 +36,12 @@ HEADROOM = 0.02
 
 # What a kick costs beside the neighbourhoods it leads to, in pairs of steps.
 PAIRS_PER_KICK = 10_000
+
+# Share of the kicks that start from values of the binding parts, and how many sets of these
+# are kept.
+BINDING_SHARE = 0.5
+BINDING_STARTS = 400
+BINDING_BEAM = 4000
 
 # How many candidates of a round the nodal engine judges.
 CANDIDATES = 24
@@ -83,10 +86,10 @@ class _Pool:
 def search_values(
     program: NodalProgram,
     grid: ValueGrid,
+    goal: Goal,
     *,
     start_logs: Real,
-    target: Complex,
-    frequency_hz: Real,
+    ideal: NodalProgram,
     limits: LevelLimits | None,
     seed: int,
     effort: int,
@@ -95,38 +98,68 @@ def search_values(
 
     Parameters
     ----------
+    goal
+        The response to be shown.
     start_logs
         ln of the ideal values, shape (P,): where the search starts.
-    target, frequency_hz
-        Target response and frequencies [Hz], shape (F,).
+    ideal
+        The same circuit with ideal op-amps.
     limits
         How far op-amp outputs may rise; a candidate beyond them is not taken.
     effort
         Pairs of steps to be evaluated in all rounds together, about; the search stops by
-        this count alone.
+        this count alone, or when rounds no longer gain.
     """
     rng = np.random.default_rng(seed)
     best = grid.nearest(start_logs)
-    best_square = float(
-        mean_square_error(program, grid.values_at(best)[None, :], target, frequency_hz)[0]
-    )
+    best_square = float(goal.mean_squares(program, grid.values_at(best)[None, :])[0])
     reference = np.exp(start_logs)
     looked = 0
     for kick in KICKS:
-        model = LinearModel.about(program, reference, target, frequency_hz)
-        one = _Round(grid, model, limits, rng, kick)
+        model = LinearModel.about(program, reference, goal)
+        skeleton = LinearModel.about(program, reference, goal, jacobian=ideal)
+        starts = binding_starts(grid, skeleton)
+        one = _Round(grid, model, limits=limits, starts=starts, kick=kick, rng=rng)
         pool = one.run(best, effort // len(KICKS))
         looked += one.looked
         members = pool.members()
         if not members:
             continue
-        values = np.array([grid.values_at(m) for m in members])
-        squares = mean_square_error(program, values, target, frequency_hz)
+        squares = goal.mean_squares(program, np.array([grid.values_at(m) for m in members]))
         k = int(np.argmin(squares))
         if squares[k] < best_square:
             best, best_square = members[k], float(squares[k])
         reference = grid.values_at(best)
     return SearchOutcome(index=best, rms=float(np.sqrt(best_square)), looked=looked)
+
+
+@dataclass(frozen=True, eq=False)
+class BindingStarts:
+    """Sets of values of the parts that bind, those first whose bound is lowest.
+
+    `parts` (n,), `index` (n, N) into the grid.
+    """
+
+    parts: Index
+    index: Index
+
+
+def binding_starts(grid: ValueGrid, skeleton: LinearModel) -> BindingStarts | None:
+    """Values of the binding parts, grown set by set; None where no part binds.
+
+    Of equal bounds, as decades repeat them, those nearest to the reference come first.
+    """
+    order, binding = binding_order(skeleton.matrix, grid)
+    frontier = Frontier.start(skeleton, grid)
+    for place, part in enumerate(order[:binding]):
+        columns = skeleton.matrix[:, order[place + 1 :]]
+        grown = frontier.grown(part, columns, below=np.inf, largest=400 * BINDING_BEAM)
+        if grown is None:
+            return None
+        frontier = grown.best(columns, BINDING_BEAM)
+    if not frontier.parts:
+        return None
+    return BindingStarts(np.array(frontier.parts), frontier.chosen[:, :BINDING_STARTS])
 
 
 class _Round:
@@ -136,12 +169,14 @@ class _Round:
         self,
         grid: ValueGrid,
         model: LinearModel,
+        *,
         limits: LevelLimits | None,
-        rng: np.random.Generator,
+        starts: BindingStarts | None,
         kick: float,
+        rng: np.random.Generator,
     ) -> None:
         self.grid, self.model, self.limits = grid, model, limits
-        self.rng, self.kick = rng, kick
+        self.starts, self.kick, self.rng = starts, kick, rng
         self.coarse = Neighbourhood(grid, model)
         self.fine = Neighbourhood(grid, model, quads=160)
         free = grid.resistors
@@ -181,6 +216,8 @@ class _Round:
 
     def _kicked(self, index: Index) -> Index:
         """`index` with a random part of the values moved and the resistors making up for it."""
+        if self.starts is not None and self.rng.random() < BINDING_SHARE:
+            return self._bound(index, self.starts)
         count = index.size
         moved = self.rng.random(count) < self.rng.uniform(0.1, 0.6)
         logs = self.grid.logs_at(index) + moved * self.rng.normal(0.0, self.kick, count)
@@ -188,6 +225,21 @@ class _Round:
         logs = np.where(self.grid.capacitors, standard, logs)
         logs = logs - self.compensation @ self.model.residual(logs)
         return self.grid.nearest(self._below_ceilings(logs))
+
+    def _bound(self, index: Index, starts: BindingStarts) -> Index:
+        """`index` with the binding parts at one of their sets of values, better ones more
+        often, and all other resistors making up for it."""
+        sets = starts.index.shape[1]
+        chosen = int(sets * self.rng.random() ** 3)
+        logs = self.grid.logs_at(index)
+        given = self.grid.logs[starts.parts, starts.index[:, chosen]]
+        logs[starts.parts] = given
+        others = self.grid.resistors.copy()
+        others[starts.parts] = False
+        logs[others] -= compensation(self.model.matrix[:, others]) @ self.model.residual(logs)
+        out = self.grid.nearest(self._below_ceilings(logs))
+        out[starts.parts] = starts.index[:, chosen]
+        return out
 
     def _below_ceilings(self, logs: Real) -> Real:
         """The nearest values with the same response whose op-amp outputs have room left."""

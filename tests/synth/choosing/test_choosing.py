@@ -11,7 +11,7 @@ from synth.candidates import sketch_form
 from synth.choosing import choose_values
 from synth.choosing.descent import Neighbourhood
 from synth.choosing.grid import ValueGrid
-from synth.choosing.model import LinearModel, mean_square_error
+from synth.choosing.model import Goal, LinearModel
 from synth.evidence import response_error
 from synth.nodal import compile_circuit
 from synth.preferred import is_member
@@ -76,7 +76,7 @@ def test_small_circuit_gets_the_best_values_there_are() -> None:
     # Only combinations whose corner and gain are within 15 % can be best.
     r_in, r_loss, c = (every[:, k] for k in range(3))
     near = (np.abs(1 / (r_loss * c) / 3e3 - 1) < 0.15) & (np.abs(1 / (r_in * c) / 2e3 - 1) < 0.15)
-    best = np.sqrt(np.min(mean_square_error(program, every[near], response, FREQUENCY)))
+    best = np.sqrt(np.min(Goal(response, FREQUENCY).mean_squares(program, every[near])))
     assert chosen <= best * (1 + 1e-9)
 
 
@@ -86,11 +86,11 @@ def test_linear_model_is_the_response_error_near_its_reference() -> None:
     circuit, target = sketched(3, "controllable")
     program = compile_circuit(circuit)
     values = np.array([p.value for p in circuit.passives])
-    model = LinearModel.about(program, values, target, FREQUENCY)
+    model = LinearModel.about(program, values, Goal(target, FREQUENCY))
     rng = np.random.default_rng(4)
     for _ in range(5):
         logs = np.log(values) + rng.normal(0, 0.01, values.size)
-        (square,) = mean_square_error(program, np.exp(logs)[None], target, FREQUENCY)
+        (square,) = Goal(target, FREQUENCY).mean_squares(program, np.exp(logs)[None])
         assert model.mean_square(logs) == pytest.approx(square, rel=0.1)
     cell = next(c for c in circuit.cells if c.kind == "integrator")
     logs = np.log(values)
@@ -99,7 +99,7 @@ def test_linear_model_is_the_response_error_near_its_reference() -> None:
             logs[k] += 0.7
         if part.ref == cell.feedback:
             logs[k] -= 0.7
-    (square,) = mean_square_error(program, np.exp(logs)[None], target, FREQUENCY)
+    (square,) = Goal(target, FREQUENCY).mean_squares(program, np.exp(logs)[None])
     assert np.sqrt(model.mean_square(logs)) == pytest.approx(np.sqrt(square), abs=3e-4)
 
 
@@ -108,7 +108,7 @@ def test_descent_ends_where_no_pair_of_steps_gains() -> None:
     circuit, target = sketched(2, "cascade", "E24")
     program = compile_circuit(circuit)
     values = np.array([p.value for p in circuit.passives])
-    model = LinearModel.about(program, values, target, FREQUENCY)
+    model = LinearModel.about(program, values, Goal(target, FREQUENCY))
     grid = ValueGrid(circuit.passives)
     index, cost, _ = Neighbourhood(grid, model, reach=(1,)).descend(grid.nearest(np.log(values)))
     moves = [(k, m) for k in range(index.size) for m in (-1, 1)]
