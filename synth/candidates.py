@@ -134,7 +134,10 @@ def choose_form(
             sketches.append(sketch)
             candidates.append(sketch.candidate)
     if not sketches:
-        reasons = "; ".join(f"{c.form}: {c.reason}" for c in candidates)
+        forms: dict[str, list[str]] = {}
+        for c in candidates:
+            forms.setdefault(c.reason, []).append(c.form)
+        reasons = "; ".join(f"{', '.join(names)}: {reason}" for reason, names in forms.items())
         raise RealizationError(f"board.form: no form fits the parts: {reasons}")
 
     def spread(sketch: Sketch) -> tuple[float, int]:
