@@ -88,6 +88,7 @@ def design_record(design: Design, verification: Verification) -> dict[str, Json]
         },
         **_loop(design),
         "swing": [asdict(s) for s in design.swings],
+        "offset_v": design.offset,
         "drift": [asdict(d) for d in design.drifts],
         "forms": candidate_records(design.candidates),
         "simulation": _simulation(verification),

@@ -30,6 +30,9 @@ Complex = NDArray[np.complex128]
 STEP_LIMIT_S = 20.0
 """Time for a step response [s]; a sound board of order 12 takes less than one."""
 
+LARGEST_DISAGREEMENT = 1e-6
+"""Of ngspice and the nodal engine, relative to |H|: more is a defect of one of them."""
+
 LARGEST_MOVEMENT = 5.0
 """Of the largest swing [%]."""
 
@@ -58,8 +61,8 @@ class Verification:
     nodal_disagreement
         Of ngspice and the nodal engine on the same circuit, see `disagreement`.
     checks
-        ``magnitude error`` and ``phase error``, then ``settling after a step`` where the target
-        settles; empty without a response.
+        ``magnitude error`` and ``phase error``, the difference of the two analyses, then
+        ``settling after a step`` where the target settles; empty without a response.
     failure
         Why the simulator did not deliver, or None.  What it did not deliver is None above; a
         response may be there although a later analysis failed.
@@ -156,11 +159,19 @@ def _compared(design: Design, frequency_hz: Real, simulated: Complex) -> Verific
     frequency_hz, simulated = frequency_hz[keep], simulated[keep]
     target = design.wanted.response(frequency_hz)
     nodal = compile_circuit(design.circuit).solve(frequency_hz)
+    differing = disagreement(simulated, nodal)
+    agreement = Check.at_most(
+        "difference of the two analyses",
+        1e6 * differing,
+        1e6 * LARGEST_DISAGREEMENT,
+        "ppm",
+        "ngspice against the nodal engine",
+    )
     return Verification(
         frequency_hz=frequency_hz,
         simulated=simulated,
         target=target,
         error=response_error(simulated, target),
-        nodal_disagreement=disagreement(simulated, nodal),
-        checks=compare(frequency_hz, simulated, target, design.job.accept),
+        nodal_disagreement=differing,
+        checks=(*compare(frequency_hz, simulated, target, design.job.accept), agreement),
     )

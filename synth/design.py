@@ -29,7 +29,7 @@ from synth.peaks import frequencies_of_interest
 from synth.results import Candidate, Design, LoopResult, NoiseResult, Swing, ToleranceResult
 from synth.tolerance import run_boards
 
-__all__ = ["DEFAULT_BOARDS", "DEFAULT_SEED", "compare_forms", "design"]
+__all__ = ["DEFAULT_BOARDS", "DEFAULT_SEED", "compare_forms", "design", "level_limits"]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -123,6 +123,7 @@ def design(
         drifts=drifts(circuit),
         candidates=candidates,
         checks=_checks(job, circuit, tolerance, swing, loop),
+        offset=_offset(circuit),
         loop=loop,
         notices=(*job.notices, *_notices(circuit, job, swing)),
     )
@@ -136,7 +137,7 @@ def _choose(sketch: Sketch, job: Job, response: Complex, frequency_hz: Real, see
         target=response[few],
         frequency_hz=frequency_hz[few],
         accept=job.accept,
-        level_limits=_level_limits(sketch, job),
+        level_limits=level_limits(sketch, job),
         seed=seed,
     )
 
@@ -183,7 +184,7 @@ def _loop(job: Job, circuit: Circuit, *, inverted: bool) -> LoopResult | None:
     )
 
 
-def _level_limits(sketch: Sketch, job: Job) -> dict[str, tuple[float, float]]:
+def level_limits(sketch: Sketch, job: Job) -> dict[str, tuple[float, float]]:
     """For each op-amp output but the board's: where it peaks [Hz], and by what ratio the peak
     may rise before it meets the rail or half the slew rate."""
     peaks = sketch.peaks
@@ -257,6 +258,14 @@ def _yield_check(tolerance: ToleranceResult, job: Job) -> Check:
     )
     percent = 100 * tolerance.share
     return Check.at_least("yield", percent, None if limit is None else 100 * limit, "%", note)
+
+
+def _offset(circuit: Circuit) -> float | None:
+    """Largest offset of the output [V], None where it drifts instead."""
+    if drifts(circuit):
+        return None
+    found = compile_circuit(circuit).dc_offsets()
+    return float(found.worst[found.nets.index(circuit.output_net)])
 
 
 def _noise(circuit: Circuit, frequency_hz: Real) -> NoiseResult:

@@ -163,6 +163,9 @@ class Design:
         nearest neighbour, computed with the job's op-amp; shape (F,).
     tolerance, noise, swings, drifts
         The evidence.
+    offset
+        Largest offset of the output at DC from offsets and bias currents of the op-amps, of any
+        sign [V]; None where an integrator drifts.
     loop
         Margins, where the job names a plant.
     candidates
@@ -188,5 +191,6 @@ class Design:
     drifts: tuple[Drift, ...]
     candidates: tuple[Candidate, ...]
     checks: tuple[Check, ...]
+    offset: float | None = None
     loop: LoopResult | None = None
     notices: tuple[str, ...] = field(default=())

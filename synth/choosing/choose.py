@@ -24,6 +24,10 @@ Index = NDArray[np.intp]
 # Pairs of steps the search evaluates: about a second on one core.
 DEFAULT_EFFORT = 60_000_000
 
+# The search leaves the impedance of each cell within this ratio of where the scaling put it,
+# either way: the response does not show it, but noise, offset and currents do.
+SIZE_RANGE = 2.5
+
 # Ideal values stay near the chosen ones: what finite op-amp gain would only let through by
 # large changes of the values is left.
 IDEAL_RIDGE = 0.03
@@ -83,7 +87,7 @@ def choose_values(
         Pairs of steps the search evaluates; more take longer and find better values.
     """
     program = compile_circuit(circuit)
-    grid = ValueGrid(circuit.passives)
+    grid = ValueGrid(circuit.passives, _sizes(circuit))
     goal = Goal(target, frequency_hz)
     if accept is not None:
         goal = Goal.within(target, frequency_hz, accept)
@@ -117,6 +121,14 @@ def choose_values(
         certificate=certificate,
         looked=outcome.looked,
     )
+
+
+def _sizes(circuit: Circuit) -> dict[str, float]:
+    """The parts that set the impedance of a cell, and how far each may leave where the scaling
+    put it: capacitors, feedback resistors, and both resistors of an inverter."""
+    refs = [c.feedback for c in circuit.cells]
+    refs += [r for c in circuit.cells if c.kind == "inverter" for r in c.inputs]
+    return dict.fromkeys(refs, SIZE_RANGE)
 
 
 def _certified(

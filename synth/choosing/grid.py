@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import dataclass, field
 from functools import cached_property
 
 import numpy as np
@@ -21,19 +22,27 @@ class ValueGrid:
     """Allowed values of the parts of a circuit.
 
     A part that is not bought (source resistance, load) or whose value the job states has its
-    one value.  Index vectors have
-    shape (P,), one index per part, into its own ascending list.
+    one value.  A part named in `near` has the values within that ratio of its ideal one, or all
+    where there is none.  Index vectors have shape (P,), one index per part, into its own
+    ascending list.
     """
 
     parts: tuple[Passive, ...]
+    near: Mapping[str, float] = field(default_factory=dict)
 
     @cached_property
     def values(self) -> tuple[Real, ...]:
         """Allowed values of each part, ascending [ohm] or [F]."""
-        return tuple(
-            np.array([part.value]) if part.fixed or part.rule is None else part.rule.values
-            for part in self.parts
-        )
+        return tuple(self._offered(part) for part in self.parts)
+
+    def _offered(self, part: Passive) -> Real:
+        if part.fixed or part.rule is None:
+            return np.array([part.value])
+        values = part.rule.values
+        if part.ref not in self.near:
+            return values
+        close = np.abs(np.log(values / part.ideal)) <= np.log(self.near[part.ref])
+        return values[close] if np.any(close) else values
 
     @cached_property
     def counts(self) -> Index:

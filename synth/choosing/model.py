@@ -133,16 +133,22 @@ class LinearModel:
         return float(residual @ residual) + self.floor
 
 
+# How far (a ratio) a level may fall below where the scaling put it.  The response does not show
+# it, but noise and offsets do.
+LOWEST_FALL = 0.6
+
+
 @dataclass(frozen=True, eq=False)
 class Ceilings:
-    """How large the gain to each op-amp output may be at the frequency of its peak.
+    """Between which bounds the gain to each op-amp output stays, at the frequency of its peak.
 
-    `nets` with `peak_hz` (U,) [Hz] and `highest` (U,), a ratio.
+    `nets` with `peak_hz` (U,) [Hz], `highest` and `lowest` (U,), ratios.
     """
 
     nets: tuple[str, ...]
     peak_hz: Real
     highest: Real
+    lowest: Real
 
     @classmethod
     def of(
@@ -150,12 +156,15 @@ class Ceilings:
     ) -> Ceilings | None:
         """From the peak's frequency and the ratio by which each may rise above what it is with
         `values` (P,).  One already above its ceiling must not be pushed further; that it
-        cannot be brought below by the values is for the swing check to say."""
+        cannot be brought below by the values is for the swing check to say.  None may fall
+        below `LOWEST_FALL` of what it is."""
         if not levels:
             return None
         peak_hz, ratios = (np.array(column) for column in zip(*levels.values(), strict=True))
-        found = cls(tuple(levels), peak_hz, np.maximum(ratios, 1.0))
-        return replace(found, highest=found.highest * found._gains(program, values[None, :])[0])
+        one = np.ones(len(levels))
+        found = cls(tuple(levels), peak_hz, np.maximum(ratios, 1.0), LOWEST_FALL * one)
+        gains = found._gains(program, values[None, :])[0]
+        return replace(found, highest=found.highest * gains, lowest=found.lowest * gains)
 
     def _gains(self, program: NodalProgram, values: Real) -> Real:
         """Gain to each output at its peak, values (boards, P), shape (boards, U)."""
@@ -163,26 +172,33 @@ class Ceilings:
         return np.abs(np.diagonal(gains, axis1=1, axis2=2))
 
     def keep(self, program: NodalProgram, values: Real) -> NDArray[np.bool_]:
-        """Which boards stay below every ceiling, values (boards, P), shape (boards,)."""
-        kept = self._gains(program, values) <= self.highest * (1 + 1e-9)
-        return np.asarray(np.all(kept, axis=1))
+        """Which boards stay within every bound, values (boards, P), shape (boards,)."""
+        gains = self._gains(program, values)
+        below = gains <= self.highest * (1 + 1e-9)
+        above = gains >= self.lowest * (1 - 1e-9)
+        return np.asarray(np.all(below & above, axis=1))
 
     def about(self, program: NodalProgram, values: Real) -> LevelLimits:
         """The same as linear limits about `values` (P,)."""
-        rows = [
-            program.sensitivities([peak_hz], values=values, net=net).passives[0].real
-            for net, peak_hz in zip(self.nets, self.peak_hz, strict=True)
-        ]
-        slack = np.log(self.highest / self._gains(program, values[None, :])[0])
-        return LevelLimits(np.array(rows), slack, np.log(values))
+        rows = np.array(
+            [
+                program.sensitivities([peak_hz], values=values, net=net).passives[0].real
+                for net, peak_hz in zip(self.nets, self.peak_hz, strict=True)
+            ]
+        )
+        gains = self._gains(program, values[None, :])[0]
+        rise, fall = np.log(self.highest / gains), np.log(gains / self.lowest)
+        return LevelLimits(
+            np.concatenate([rows, -rows]), np.concatenate([rise, fall]), np.log(values)
+        )
 
 
 @dataclass(frozen=True, eq=False)
 class LevelLimits:
-    """How far the peaks of the op-amp outputs may rise: matrix (ln p - reference) <= slack.
+    """How far the op-amp outputs may rise and fall: matrix (ln p - reference) <= slack.
 
-    `matrix` (U, P) holds the sensitivities of the ln of each output's gain at the frequency of
-    its peak, `slack` (U,) the ln of how far it may rise.
+    `matrix` (2 U, P) holds the sensitivities of the ln of each output's gain at the frequency
+    of its peak, then their negatives; `slack` (2 U,) the ln of how far it may rise, then fall.
     """
 
     matrix: Real
@@ -190,9 +206,9 @@ class LevelLimits:
     reference: Real
 
     def excess(self, logs: Real) -> Real:
-        """By how much the ln of each output's peak passes its ceiling, negative below it."""
+        """By how much the ln of each output's gain passes its bounds, negative within them."""
         return np.asarray(self.matrix @ (logs - self.reference) - self.slack)
 
     def hold(self, logs: Real) -> bool:
-        """Whether every output stays below its ceiling at ln p = `logs`."""
+        """Whether every output stays within its bounds at ln p = `logs`."""
         return bool(np.all(self.excess(logs) <= 1e-9))

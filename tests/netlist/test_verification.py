@@ -31,7 +31,12 @@ def verified(design, simulator):
 
 def test_a_good_board_is_verified_with_both_checks(verified, design):
     assert verified.failure is None
-    names = ["magnitude error", "phase error", "settling after a step"]
+    names = [
+        "magnitude error",
+        "phase error",
+        "difference of the two analyses",
+        "settling after a step",
+    ]
     assert [(c.name, c.passed) for c in verified.checks] == [(name, True) for name in names]
     low, high = design.job.signal.band_hz
     np.testing.assert_allclose(verified.frequency_hz[[0, -1]], [low, high], rtol=1e-12)

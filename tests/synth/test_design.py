@@ -10,7 +10,7 @@ import numpy as np
 import pytest
 
 from synth.candidates import sketch_form
-from synth.design import _level_limits, compare_forms, design
+from synth.design import compare_forms, design, level_limits
 from synth.errors import JobError, RealizationError
 from synth.evidence import response_error
 from synth.job import Accept, Loop
@@ -80,7 +80,7 @@ def test_every_output_is_watched_where_its_op_amp_shows_the_peak() -> None:
     sketch = sketch_form(job, "cascade", np.geomspace(1.0, 200.0, 100))
     program = compile_circuit(sketch.circuit)
     peaks = {s.net: s.peak for s in swings(sketch.circuit, job.target, job)}
-    watched = _level_limits(sketch, job)
+    watched = level_limits(sketch, job)
     assert {"y1", "y1_n", "y2", "y2_n"} < set(watched)
     for net, (frequency, _) in watched.items():
         shown = job.signal.input_peak * abs(program.solve([frequency], nets=[net])[0, 0])

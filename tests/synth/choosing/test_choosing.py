@@ -12,7 +12,7 @@ from synth.choosing import choose_values
 from synth.choosing.descent import Neighbourhood
 from synth.choosing.grid import ValueGrid
 from synth.choosing.model import Goal, LinearModel
-from synth.design import design
+from synth.design import design, level_limits
 from synth.evidence import response_error
 from synth.nodal import compile_circuit
 from synth.preferred import is_member
@@ -150,3 +150,36 @@ def test_outputs_that_hang_on_small_differences_stay_below_the_rails(series: str
     )
     inner = [s for s in design(job, boards=5).swings if s.net != "out"]
     assert max(s.peak for s in inner) <= inner[0].peak_limit
+
+
+@pytest.mark.parametrize("series", ["E3", "E24", "E96"])
+def test_levels_and_impedances_stay_where_the_scaling_put_them(series: str) -> None:
+    """The response does not show the free scales, but noise and offset do: no internal level
+    falls below 0.6 of what it was, no capacitor, feedback or inverter resistor leaves a range
+    of 2.5 either way, and the noise at the output at most doubles."""
+    job = job_for(
+        butterworth(3, 1e3),
+        BAND,
+        form="cascade",
+        resistors=resistor_rule(series),
+    )
+    sketch = sketch_form(job, "cascade", FREQUENCY)
+    choice = choose_values(
+        sketch.circuit,
+        target=job.target.response(FREQUENCY),
+        frequency_hz=FREQUENCY,
+        level_limits=level_limits(sketch, job),
+        effort=10_000_000,
+    )
+    before, after = compile_circuit(sketch.circuit), compile_circuit(choice.circuit)
+    nets = [c.output for c in sketch.circuit.cells if c.output != "out"]
+    ratio = np.abs(after.solve(FREQUENCY, nets=nets) / before.solve(FREQUENCY, nets=nets))
+    assert np.min(ratio) > 0.55
+    for cell in sketch.circuit.cells:
+        refs = [cell.feedback, *(cell.inputs if cell.kind == "inverter" else ())]
+        for ref in refs:
+            moved = choice.circuit.by_ref[ref].value / sketch.circuit.by_ref[ref].ideal
+            assert 1 / 2.51 < moved < 2.51
+    fine = np.geomspace(*BAND, 200)
+    noise = [np.trapezoid(p.noise(fine).total, fine) for p in (before, after)]
+    assert noise[1] < 4 * noise[0]
