@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 from synth.choosing.certificate import Certificate, certify
 from synth.choosing.grid import ValueGrid
 from synth.choosing.model import Ceilings, Goal, LinearModel, compensation
-from synth.choosing.search import search_values
+from synth.choosing.search import SearchOutcome, search_values
 from synth.circuit import Circuit
 from synth.job import Accept
 from synth.nodal import NodalProgram, compile_circuit
@@ -94,16 +94,24 @@ def choose_values(
     logs = np.log([p.ideal for p in circuit.passives])
     ideal = compile_circuit(with_ideal_op_amps(circuit))
     ceilings = Ceilings.of(program, np.exp(logs), level_limits or {})
-    outcome = search_values(
-        program,
-        grid,
-        goal,
-        start_logs=logs,
-        ideal=ideal,
-        ceilings=ceilings,
-        seed=seed,
-        effort=effort,
-    )
+
+    def searched(grid: ValueGrid, ceilings: Ceilings | None) -> SearchOutcome:
+        return search_values(
+            program,
+            grid,
+            goal,
+            start_logs=logs,
+            ideal=ideal,
+            ceilings=ceilings,
+            seed=seed,
+            effort=effort,
+        )
+
+    outcome = searched(grid, ceilings)
+    if ceilings is not None and not ceilings.keep(program, grid.values_at(outcome.index)[None])[0]:
+        # Nothing was found between ceilings and floors: the rails come first.
+        grid, ceilings = ValueGrid(circuit.passives), ceilings.without_floors()
+        outcome = searched(grid, ceilings)
     index = outcome.index
     certificate = _certified(program, ideal, grid, goal, index)
     if certificate.better is not None:

@@ -69,6 +69,13 @@ class ValueGrid:
             [p.kind == "resistor" and p.rule is not None and not p.fixed for p in self.parts]
         )
 
+    @cached_property
+    def resistor_step(self) -> float:
+        """Median step of the resistors along their series, in ln; 0 without a choice."""
+        steps = [np.diff(np.log(v)) for v, r in zip(self.values, self.resistors, strict=True) if r]
+        every = np.concatenate([np.zeros(0), *steps])
+        return float(np.median(every)) if every.size else 0.0
+
     def nearest(self, logs: Real) -> Index:
         """Index of the value nearest to each part's logarithm, shape (P,)."""
         distance = np.abs(self.logs - logs[:, None])

@@ -137,6 +137,15 @@ class LinearModel:
 # it, but noise and offsets do.
 LOWEST_FALL = 0.6
 
+# An output that moves faster than this with a part, ln by ln, hangs on a small difference: its
+# level is no free scale, and has no floor.
+FIRM_SLOPE = 2.5
+
+# A sharp peak moves with the values: it is looked for this far around where it was, and this
+# much room is left for what falls between.
+AROUND_PEAK = np.linspace(0.98, 1.02, 5)
+PEAK_MARGIN = 0.01
+
 
 @dataclass(frozen=True, eq=False)
 class Ceilings:
@@ -155,21 +164,37 @@ class Ceilings:
         cls, program: NodalProgram, values: Real, levels: dict[str, tuple[float, float]]
     ) -> Ceilings | None:
         """From the peak's frequency and the ratio by which each may rise above what it is with
-        `values` (P,).  One already above its ceiling must not be pushed further; that it
-        cannot be brought below by the values is for the swing check to say.  None may fall
-        below `LOWEST_FALL` of what it is."""
+        `values` (P,), or must fall where that is below 1.  None may fall
+        below `LOWEST_FALL` of what it is, or of its ceiling where that is lower, unless it hangs on
+        a small difference."""
         if not levels:
             return None
         peak_hz, ratios = (np.array(column) for column in zip(*levels.values(), strict=True))
-        one = np.ones(len(levels))
-        found = cls(tuple(levels), peak_hz, np.maximum(ratios, 1.0), LOWEST_FALL * one)
+        ratios = ratios * (1 - PEAK_MARGIN)
+        found = cls(tuple(levels), peak_hz, ratios, LOWEST_FALL * np.minimum(ratios, 1.0))
         gains = found._gains(program, values[None, :])[0]
-        return replace(found, highest=found.highest * gains, lowest=found.lowest * gains)
+        firm = np.max(np.abs(found._slopes(program, values)), axis=1) <= FIRM_SLOPE
+        return replace(found, highest=found.highest * gains, lowest=firm * found.lowest * gains)
+
+    def without_floors(self) -> Ceilings:
+        """The same ceilings, with every level free to fall."""
+        return replace(self, lowest=np.zeros(self.lowest.size))
+
+    def _slopes(self, program: NodalProgram, values: Real) -> Real:
+        """d ln(gain) / d ln(part) of each output at its peak, shape (U, P)."""
+        return np.array(
+            [
+                program.sensitivities([peak_hz], values=values, net=net).passives[0].real
+                for net, peak_hz in zip(self.nets, self.peak_hz, strict=True)
+            ]
+        )
 
     def _gains(self, program: NodalProgram, values: Real) -> Real:
-        """Gain to each output at its peak, values (boards, P), shape (boards, U)."""
-        gains = program.solve(self.peak_hz, values=values, nets=self.nets)
-        return np.abs(np.diagonal(gains, axis1=1, axis2=2))
+        """Largest gain to each output around its peak, values (boards, P), shape (boards, U)."""
+        around = np.multiply.outer(AROUND_PEAK, self.peak_hz)
+        gains = program.solve(around.ravel(), values=values, nets=self.nets)
+        shaped = gains.reshape(len(values), *around.shape, len(self.nets))
+        return np.asarray(np.abs(np.diagonal(shaped, axis1=2, axis2=3)).max(axis=1))
 
     def keep(self, program: NodalProgram, values: Real) -> NDArray[np.bool_]:
         """Which boards stay within every bound, values (boards, P), shape (boards,)."""
@@ -180,14 +205,10 @@ class Ceilings:
 
     def about(self, program: NodalProgram, values: Real) -> LevelLimits:
         """The same as linear limits about `values` (P,)."""
-        rows = np.array(
-            [
-                program.sensitivities([peak_hz], values=values, net=net).passives[0].real
-                for net, peak_hz in zip(self.nets, self.peak_hz, strict=True)
-            ]
-        )
+        rows = self._slopes(program, values)
         gains = self._gains(program, values[None, :])[0]
-        rise, fall = np.log(self.highest / gains), np.log(gains / self.lowest)
+        rise = np.log(self.highest / gains)
+        fall = np.log(gains / np.maximum(self.lowest, np.finfo(float).tiny))
         return LevelLimits(
             np.concatenate([rows, -rows]), np.concatenate([rise, fall]), np.log(values)
         )

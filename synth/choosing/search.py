@@ -31,7 +31,8 @@ Index = NDArray[np.intp]
 # Size of the kicks in each round, as a ratio of the value.
 KICKS = (0.25, 0.12, 0.06, 0.04)
 
-# Room below the ceilings that a kick leaves for the descent, in ln.
+# Room below the ceilings that a kick leaves for the descent, in ln; half a step of a coarse
+# series is more.
 HEADROOM = 0.02
 
 # What a kick costs beside the neighbourhoods it leads to, in pairs of steps.
@@ -42,6 +43,9 @@ PAIRS_PER_KICK = 10_000
 BINDING_SHARE = 0.5
 BINDING_STARTS = 400
 BINDING_BEAM = 4000
+
+# Added to the mean square error of values with an output out of its bounds.
+OUT_OF_BOUNDS = 1e3
 
 # How many candidates of a round the nodal engine judges.
 CANDIDATES = 24
@@ -143,13 +147,13 @@ def _judged(
     ceilings: Ceilings | None,
     candidates: list[Index],
 ) -> Real:
-    """Mean square error of each by the nodal engine, infinite with an output above its
-    ceiling, which the linear limits of a round may miss."""
+    """Mean square error of each by the nodal engine, worse than any other where an output leaves
+    its bounds, which the linear limits of a round may miss."""
     values = np.array([grid.values_at(k) for k in candidates])
     squares = goal.mean_squares(program, values)
     if ceilings is None:
         return squares
-    return np.where(ceilings.keep(program, values), squares, np.inf)
+    return np.where(ceilings.keep(program, values), squares, squares + OUT_OF_BOUNDS)
 
 
 @dataclass(frozen=True, eq=False)
@@ -201,6 +205,7 @@ class _Round:
         free = grid.resistors
         self.compensation = np.zeros((free.size, model.offset.size))
         self.compensation[free] = compensation(model.matrix[:, free])
+        self.headroom = max(HEADROOM, grid.resistor_step / 2)
         self.looked = 0
 
     def run(self, start: Index, effort: int) -> _Pool:
@@ -265,7 +270,7 @@ class _Round:
         if self.limits is None:
             return logs
         for _ in range(3):
-            excess = self.limits.excess(logs) + HEADROOM
+            excess = self.limits.excess(logs) + self.headroom
             over = excess > 0
             if not np.any(over):
                 break

@@ -127,7 +127,11 @@ def test_a_failure_after_the_response_keeps_the_response(design):
     assert found.failure == "ngspice failed: timestep too small"
     assert found.step is None
     assert found.noise_rms is not None
-    assert [c.name for c in found.checks] == ["magnitude error", "phase error"]
+    assert [c.name for c in found.checks] == [
+        "magnitude error",
+        "phase error",
+        "difference of the two analyses",
+    ]
 
 
 def test_a_verification_without_checks_needs_a_failure():
