@@ -153,10 +153,7 @@ def binding_starts(grid: ValueGrid, skeleton: LinearModel) -> BindingStarts | No
     frontier = Frontier.start(skeleton, grid)
     for place, part in enumerate(order[:binding]):
         columns = skeleton.matrix[:, order[place + 1 :]]
-        grown = frontier.grown(part, columns, below=np.inf, largest=400 * BINDING_BEAM)
-        if grown is None:
-            return None
-        frontier = grown.best(columns, BINDING_BEAM)
+        frontier = frontier.grown_best(part, columns, count=BINDING_BEAM)
     if not frontier.parts:
         return None
     return BindingStarts(np.array(frontier.parts), frontier.chosen[:, :BINDING_STARTS])
