@@ -11,13 +11,16 @@ Everything here is computed; the simulator's opinion is asked for outside.
 from __future__ import annotations
 
 from collections.abc import Callable
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
+from synth.allowance import op_amp_allowance
 from synth.candidates import Sketch, choose_form
-from synth.choosing import Choice, choose_values
+from synth.choosing import DEFAULT_EFFORT, Choice, choose_values, with_ideal_op_amps
 from synth.circuit import Circuit
+from synth.errors import JobError
 from synth.evidence import Check, response_error
 from synth.graph import BlockGraph
 from synth.grid import judging_frequencies
@@ -27,7 +30,7 @@ from synth.loop import loop_checks, loop_margins
 from synth.nodal import compile_circuit
 from synth.peaks import frequencies_of_interest
 from synth.results import Candidate, Design, LoopResult, NoiseResult, Swing, ToleranceResult
-from synth.tolerance import run_boards
+from synth.tolerance import error_budget, run_boards
 
 __all__ = ["DEFAULT_BOARDS", "DEFAULT_SEED", "compare_forms", "design"]
 
@@ -65,6 +68,7 @@ def design(
     *,
     boards: int = DEFAULT_BOARDS,
     seed: int = DEFAULT_SEED,
+    effort: int = 1,
     progress: Progress | None = None,
 ) -> Design:
     """Carry a job through every stage.
@@ -75,6 +79,8 @@ def design(
         How many boards the tolerance run draws, at least 1.
     seed
         Of the choice of values and of the boards; the same seed gives the same design.
+    effort
+        Multiple of the default work that the search for values is given, at least 1.
     progress
         Called with the stage's name, and how much of how much of it is done.
 
@@ -83,6 +89,8 @@ def design(
     JobError, RealizationError
         The job contradicts itself, or no circuit within its rules exists.
     """
+    if effort < 1:
+        raise JobError(f"got the effort {effort}, expected 1 or more", key="effort")
     say = progress or (lambda stage, done, total: None)
     frequency = judging_frequencies(job.target, job.signal.band_hz)
     sketch, candidates = choose_form(
@@ -90,8 +98,11 @@ def design(
     )
     wanted = job.target.negated() if sketch.polarity.output_inverted else job.target
     response = wanted.response(frequency)
-    say("values", 0, 1)
-    choice = _choose(sketch, job, response, frequency, seed)
+    search = _Search(sketch, job, response, frequency, seed, effort * DEFAULT_EFFORT)
+    say("values", 0, 2)
+    unaware = search.choice(with_ideal_op_amps(sketch.circuit))
+    say("values", 1, 2)
+    choice = search.choice(sketch.circuit, known=unaware.circuit)
     circuit = choice.circuit
     program = compile_circuit(circuit)
     tolerance = run_boards(
@@ -107,6 +118,7 @@ def design(
     say("limits", 0, 1)
     swing = swings(circuit, wanted, job)
     loop = _loop(job, circuit, inverted=sketch.polarity.output_inverted)
+    nominal = response_error(program.solve(frequency), response)
     return Design(
         job=job,
         form=sketch.form,
@@ -115,7 +127,7 @@ def design(
         graph=_as_chosen(sketch, circuit, frequency),
         circuit=circuit,
         frequency_hz=frequency,
-        nominal=response_error(program.solve(frequency), response),
+        nominal=nominal,
         nearest=response_error(compile_circuit(choice.nearest).solve(frequency), response),
         tolerance=tolerance,
         noise=_noise(circuit, frequency),
@@ -123,22 +135,41 @@ def design(
         drifts=drifts(circuit),
         candidates=candidates,
         checks=_checks(job, circuit, tolerance, swing, loop),
+        certificate=choice.certificate,
+        allowance=op_amp_allowance(circuit, unaware.circuit, response, frequency),
+        budget=error_budget(program, circuit, nominal, frequency, accept=job.accept, seed=seed),
+        effort=effort,
         loop=loop,
         notices=(*job.notices, *_notices(circuit, job, swing)),
     )
 
 
-def _choose(sketch: Sketch, job: Job, response: Complex, frequency_hz: Real, seed: int) -> Choice:
-    """Standard values, on at most about `FREQUENCIES_OF_THE_SEARCH` of the frequencies."""
-    few = slice(None, None, max(1, frequency_hz.size // FREQUENCIES_OF_THE_SEARCH))
-    return choose_values(
-        sketch.circuit,
-        target=response[few],
-        frequency_hz=frequency_hz[few],
-        accept=job.accept,
-        level_limits=_level_limits(sketch, job),
-        seed=seed,
-    )
+@dataclass(frozen=True, eq=False)
+class _Search:
+    """What a choice of values for one sketch is asked, whatever its op-amps."""
+
+    sketch: Sketch
+    job: Job
+    response: Complex
+    frequency_hz: Real
+    seed: int
+    effort: int
+
+    def choice(self, circuit: Circuit, *, known: Circuit | None = None) -> Choice:
+        """Standard values for `circuit`, the sketch's own or one like it, better than those of
+        `known`, on at most about `FREQUENCIES_OF_THE_SEARCH` of the frequencies."""
+        count = self.frequency_hz.size
+        few = slice(None, None, max(1, count // FREQUENCIES_OF_THE_SEARCH))
+        return choose_values(
+            circuit,
+            target=self.response[few],
+            frequency_hz=self.frequency_hz[few],
+            accept=self.job.accept,
+            level_limits=_level_limits(self.sketch, self.job),
+            known=known,
+            seed=self.seed,
+            effort=self.effort,
+        )
 
 
 def _checks(
