@@ -99,10 +99,7 @@ def design(
     wanted = job.target.negated() if sketch.polarity.output_inverted else job.target
     response = wanted.response(frequency)
     search = _Search(sketch, job, response, frequency, seed, effort * DEFAULT_EFFORT)
-    say("values", 0, 2)
-    unaware = search.choice(with_ideal_op_amps(sketch.circuit))
-    say("values", 1, 2)
-    choice = search.choice(sketch.circuit, known=unaware.circuit)
+    choice, unaware = search.both(say)
     circuit = choice.circuit
     program = compile_circuit(circuit)
     tolerance = run_boards(
@@ -154,6 +151,13 @@ class _Search:
     frequency_hz: Real
     seed: int
     effort: int
+
+    def both(self, say: Progress) -> tuple[Choice, Choice]:
+        """For the job's op-amps, and as if they were ideal; the one improves on the other."""
+        say("values", 0, 2)
+        unaware = self.choice(with_ideal_op_amps(self.sketch.circuit))
+        say("values", 1, 2)
+        return self.choice(self.sketch.circuit, known=unaware.circuit), unaware
 
     def choice(self, circuit: Circuit, *, known: Circuit | None = None) -> Choice:
         """Standard values for `circuit`, the sketch's own or one like it, better than those of
