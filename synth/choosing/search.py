@@ -12,7 +12,7 @@ clock.
 from __future__ import annotations
 
 import heapq
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
@@ -20,7 +20,7 @@ from numpy.typing import NDArray
 from synth.choosing.binding import Frontier, binding_order
 from synth.choosing.descent import Neighbourhood
 from synth.choosing.grid import ValueGrid
-from synth.choosing.model import Goal, LevelLimits, LinearModel, compensation
+from synth.choosing.model import Ceilings, Goal, LevelLimits, LinearModel, compensation
 from synth.nodal import NodalProgram
 
 __all__ = ["SearchOutcome", "search_values"]
@@ -91,7 +91,7 @@ def search_values(
     *,
     start_logs: Real,
     ideal: NodalProgram,
-    limits: LevelLimits | None,
+    ceilings: Ceilings | None,
     known: Index | None = None,
     seed: int,
     effort: int,
@@ -106,43 +106,64 @@ def search_values(
         ln of the ideal values, shape (P,): where the search starts.
     ideal
         The same circuit with ideal op-amps.
-    limits
-        How far op-amp outputs may rise; a candidate beyond them is not taken.
+    ceilings
+        How far op-amp outputs may rise; a candidate beyond them is not taken while there is
+        another.
     known
-        A choice to be improved on in rounds of its own, half as many; dropped where it is
-        beyond the limits.
+        A choice to be improved on in rounds of its own, half as many.
     effort
         Pairs of steps to be evaluated in all rounds together, about; the search stops by
         this count alone, or when rounds no longer gain.
     """
     rng = np.random.default_rng(seed)
 
-    def climbed(start: Index, reference: Real, kicks: tuple[float, ...]) -> SearchOutcome:
+    def climbed(
+        start: Index, reference: Real, kicks: tuple[float, ...]
+    ) -> tuple[Index, float, int]:
         best, looked = start, 0
-        best_square = float(goal.mean_squares(program, grid.values_at(best)[None, :])[0])
+        best_square = float(_judged(program, grid, goal, ceilings, [best])[0])
         for kick in kicks:
             model = LinearModel.about(program, reference, goal)
             skeleton = LinearModel.about(program, reference, goal, jacobian=ideal)
             starts = binding_starts(grid, skeleton)
+            limits = None if ceilings is None else ceilings.about(program, reference)
             one = _Round(grid, model, limits=limits, starts=starts, kick=kick, rng=rng)
             pool = one.run(best, effort // len(KICKS))
             looked += one.looked
             members = pool.members()
             if not members:
                 continue
-            squares = goal.mean_squares(program, np.array([grid.values_at(m) for m in members]))
+            squares = _judged(program, grid, goal, ceilings, members)
             k = int(np.argmin(squares))
             if squares[k] < best_square:
                 best, best_square = members[k], float(squares[k])
             reference = grid.values_at(best)
-        return SearchOutcome(index=best, rms=float(np.sqrt(best_square)), looked=looked)
+        return best, best_square, looked
 
-    found = climbed(grid.nearest(start_logs), np.exp(start_logs), KICKS)
-    if known is None or not (limits is None or limits.hold(grid.logs_at(known))):
-        return found
-    other = climbed(known, grid.values_at(known), KICKS_ABOUT_KNOWN)
-    better = min(found, other, key=lambda o: o.rms)
-    return replace(better, looked=found.looked + other.looked)
+    best, square, looked = climbed(grid.nearest(start_logs), np.exp(start_logs), KICKS)
+    if known is not None:
+        other = climbed(known, grid.values_at(known), KICKS_ABOUT_KNOWN)
+        looked += other[2]
+        if other[1] < square:
+            best = other[0]
+    (square,) = goal.mean_squares(program, grid.values_at(best)[None, :])
+    return SearchOutcome(index=best, rms=float(np.sqrt(square)), looked=looked)
+
+
+def _judged(
+    program: NodalProgram,
+    grid: ValueGrid,
+    goal: Goal,
+    ceilings: Ceilings | None,
+    candidates: list[Index],
+) -> Real:
+    """Mean square error of each by the nodal engine, infinite with an output above its
+    ceiling, which the linear limits of a round may miss."""
+    values = np.array([grid.values_at(k) for k in candidates])
+    squares = goal.mean_squares(program, values)
+    if ceilings is None:
+        return squares
+    return np.where(ceilings.keep(program, values), squares, np.inf)
 
 
 @dataclass(frozen=True, eq=False)
