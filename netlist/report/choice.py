@@ -5,7 +5,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable
 
-from netlist.report.wording import decibel, number, percent, quantity, stated
+from netlist.report.wording import decibel, percent, quantity, stated
 from synth.choosing.certificate import PROVEN_RATIO, Certificate
 from synth.circuit import Circuit
 from synth.results import Design, ErrorBudget, ErrorFigures, OpAmpAllowance, Tightened
@@ -53,7 +53,7 @@ def proof_line(found: Certificate) -> str:
         )
     return (
         f"Its rms error is {reached}; no choice of values on offer gets below {bound}. Whether "
-        "one lies between the two is not known."
+        "any lies between the two is not known."
     )
 
 
@@ -83,8 +83,8 @@ def allowance_rows(found: OpAmpAllowance) -> list[Row]:
     return [
         row("values as chosen, for the op-amps of the job", found.with_allowance),
         row("values chosen as if op-amps were ideal", found.without_allowance),
-        row(off.format(number(found.slower_factor, 2)), found.slower),
-        row(off.format(number(found.faster_factor, 2)), found.faster),
+        row(off.format(f"{found.slower_factor:g}"), found.slower),
+        row(off.format(f"{found.faster_factor:g}"), found.faster),
     ]
 
 
@@ -96,8 +96,7 @@ def budget_lines(found: ErrorBudget) -> list[str]:
         f"{found.quantity} at {quantity(found.frequency_hz, 'Hz')}: the nominal board is off by "
         f"{_with(abs(found.nominal), unit)}, and part tolerance spreads boards around it with a "
         f"standard deviation of {_with(found.spread, unit)}. Of the mean square error of a board "
-        f"there, {percent(found.values_share, 2)} is the choice of values and "
-        f"{percent(found.tolerance_share, 2)} is part tolerance."
+        f"there, {_division(found)}."
     ]
     if found.part is None:
         lines.append("No part has a tighter grade that is commonly sold.")
@@ -142,6 +141,15 @@ def shown(design: Design) -> dict[str, object]:
         "budget": budget_lines(budget) if budget else [],
         "shares": budget_rows(budget, design.circuit) if budget else [],
     }
+
+
+def _division(found: ErrorBudget) -> str:
+    """The smaller share in digits, the larger as the rest."""
+    if found.values_share <= found.tolerance_share:
+        share = percent(found.values_share, 2)
+        return f"{share} is the choice of values and the rest part tolerance"
+    share = percent(found.tolerance_share, 2)
+    return f"{share} is part tolerance and the rest the choice of values"
 
 
 def _gains(tighter: Tightened, found: ErrorBudget) -> str:
