@@ -4,7 +4,8 @@ Finite gain-bandwidth and open-loop gain bend a response; values chosen against 
 with these op-amps make up for it.  Beside them stand values chosen the same way, same seed and
 effort, as if op-amps were ideal, both judged on the circuit with the job's op-amps; and the
 chosen values once more with every gain-bandwidth off by half, as the figure of a real part
-may be.  The search with op-amps knows the values found without and improves on them.
+may be.  The search with op-amps then also works on from the values found without, half as long
+again.
 """
 
 from __future__ import annotations

@@ -92,8 +92,9 @@ def budget_lines(found: ErrorBudget) -> list[str]:
     """Where the budget is tightest, how it divides there, and what would help, in sentences."""
     unit = found.unit
     lines = [
-        f"The error comes closest to its limit of {stated(found.limit, unit)} in "
-        f"{found.quantity} at {quantity(found.frequency_hz, 'Hz')}: the nominal board is off by "
+        f"A limit is used up most by the {found.quantity} at "
+        f"{quantity(found.frequency_hz, 'Hz')}, where {stated(found.limit, unit)} are allowed: "
+        f"the nominal board is off by "
         f"{_with(abs(found.nominal), unit)}, and part tolerance spreads boards around it with a "
         f"standard deviation of {_with(found.spread, unit)}. Of the mean square error of a board "
         f"there, {_division(found)}."

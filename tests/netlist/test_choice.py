@@ -99,7 +99,8 @@ def test_allowance_has_a_line_for_each_circuit() -> None:
 
 def test_budget_names_the_part_and_what_its_grade_gives() -> None:
     first, second, *kinds = (plain(line) for line in budget_lines(MADE.budget))
-    assert "closest to its limit of 0.5 dB in magnitude" in first
+    assert first.startswith("A limit is used up most by the magnitude at ")
+    assert "where 0.5 dB are allowed" in first
     ref = MADE.budget.part.refs[0]
     assert second.startswith(f"The part whose tighter grade helps most is {ref}: from 5 % to 2 %")
     assert kinds[0].startswith("With all resistors at their next grade: from 1 % to 0.5 %")
