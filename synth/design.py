@@ -19,7 +19,7 @@ from numpy.typing import NDArray
 from synth.allowance import op_amp_allowance
 from synth.candidates import Sketch, choose_form
 from synth.choosing import DEFAULT_EFFORT, Choice, choose_values, with_ideal_op_amps
-from synth.circuit import Circuit
+from synth.circuit import Cell, Circuit
 from synth.errors import JobError
 from synth.evidence import Check, response_error
 from synth.graph import BlockGraph
@@ -229,9 +229,7 @@ def _level_limits(sketch: Sketch, job: Job) -> dict[str, tuple[float, float]]:
         if cell.output == sketch.circuit.output_net:
             continue
         if cell.block not in signals:  # the inverter of the input: the same gain everywhere
-            inverter = [sketch.circuit.by_ref[r].ideal for r in (*cell.inputs, cell.feedback)]
-            highest = job.signal.input_peak * inverter[1] / inverter[0]
-            limits[cell.output] = (job.signal.band_hz[0], job.board.swing_limit / highest)
+            limits[cell.output] = (job.signal.band_hz[0], _input_inverter_may(sketch, job, cell))
             continue
         volts = job.signal.input_peak * sketch.levels[cell.block]
         rising = min(
@@ -241,8 +239,26 @@ def _level_limits(sketch: Sketch, job: Job) -> dict[str, tuple[float, float]]:
         # An adder may be flat up to where op-amps end: its peak is where the flat part begins.
         size = np.abs(signals[cell.block])
         watch = float(grid[int(np.argmax(size >= (1 - FLAT) * np.max(size)))])
-        limits[cell.output] = (watch, rising)
+        # One already above its ceiling must not be pushed further; that values cannot bring it
+        # below is for the swing check to say.
+        limits[cell.output] = (watch, max(rising, 1.0))
     return limits
+
+
+def _input_inverter_may(sketch: Sketch, job: Job, cell: Cell) -> float:
+    """By what ratio the inverter of the input may rise, or must fall: it can, where the
+    resistors it drives can fall with it."""
+    circuit = sketch.circuit
+    (source,) = (circuit.by_ref[r].ideal for r in cell.inputs)
+    feedback = circuit.by_ref[cell.feedback].ideal
+    ratio = job.board.swing_limit / (job.signal.input_peak * feedback / source)
+    driven = [
+        p.ideal
+        for p in circuit.bought
+        if cell.output in p.nets and p.kind == "resistor" and p.ref != cell.feedback
+    ]
+    within = min(driven, default=np.inf) * ratio > job.board.resistors.smallest
+    return ratio if within else max(ratio, 1.0)
 
 
 def _notices(circuit: Circuit, job: Job, swing: tuple[Swing, ...]) -> tuple[str, ...]:

@@ -149,12 +149,11 @@ class Ceilings:
         cls, program: NodalProgram, values: Real, levels: dict[str, tuple[float, float]]
     ) -> Ceilings | None:
         """From the peak's frequency and the ratio by which each may rise above what it is with
-        `values` (P,).  One already above its ceiling must not be pushed further; that it
-        cannot be brought below by the values is for the swing check to say."""
+        `values` (P,), or below 1 must fall."""
         if not levels:
             return None
         peak_hz, ratios = (np.array(column) for column in zip(*levels.values(), strict=True))
-        found = cls(tuple(levels), peak_hz, np.maximum(ratios, 1.0))
+        found = cls(tuple(levels), peak_hz, ratios)
         return replace(found, highest=found.highest * found._gains(program, values[None, :])[0])
 
     def _gains(self, program: NodalProgram, values: Real) -> Real:

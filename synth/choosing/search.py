@@ -35,6 +35,9 @@ KICKS_ABOUT_KNOWN = (0.06, 0.04)
 # Room below the ceilings that a kick leaves for the descent, in ln.
 HEADROOM = 0.02
 
+# Added to the mean square of what is above a ceiling: far more than any error there is.
+BEYOND = 1e9
+
 # What a kick costs beside the neighbourhoods it leads to, in pairs of steps.
 PAIRS_PER_KICK = 10_000
 
@@ -157,13 +160,13 @@ def _judged(
     ceilings: Ceilings | None,
     candidates: list[Index],
 ) -> Real:
-    """Mean square error of each by the nodal engine, infinite with an output above its
+    """Mean square error of each by the nodal engine, behind all others with an output above its
     ceiling, which the linear limits of a round may miss."""
     values = np.array([grid.values_at(k) for k in candidates])
     squares = goal.mean_squares(program, values)
     if ceilings is None:
         return squares
-    return np.where(ceilings.keep(program, values), squares, np.inf)
+    return np.where(ceilings.keep(program, values), squares, squares + BEYOND)
 
 
 @dataclass(frozen=True, eq=False)
