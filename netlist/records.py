@@ -18,7 +18,7 @@ from dataclasses import asdict
 from typing import TYPE_CHECKING, TypeAlias
 
 from synth.evidence import Check, verdict
-from synth.results import Candidate, Design
+from synth.results import Candidate, Design, ErrorFigures
 
 if TYPE_CHECKING:
     from netlist.verification import Verification
@@ -82,6 +82,9 @@ def design_record(design: Design, verification: Verification) -> dict[str, Json]
             "rms_error": design.nominal.rms,
             "nearest_rms_error": design.nearest.rms,
         },
+        **_choice(design),
+        **_allowance(design),
+        **_budget(design),
         "noise": {
             "band_hz": list(job.signal.band_hz),
             "output_rms_v": design.noise.output_rms,
@@ -169,6 +172,61 @@ def _yield(design: Design) -> dict[str, object]:
         "error_95_db": run.error_95_db,
         "seed": run.seed,
     }
+
+
+def _choice(design: Design) -> dict[str, object]:
+    """How good the choice of values is against any other, in the measure of the search."""
+    found = design.certificate
+    if found is None:
+        return {}
+    return {
+        "choice": {
+            "rms_error": found.rms,
+            "lower_bound": found.lower_bound,
+            "gap": found.gap,
+            "proven": found.proven,
+            "exhausted": found.exhausted,
+            "binding": [{"refs": list(b.refs), "rms_error": b.rms} for b in found.bottlenecks],
+            "effort": design.effort,
+        }
+    }
+
+
+def _allowance(design: Design) -> dict[str, object]:
+    """Errors with values chosen for the op-amps and without, and with op-amps off their figure."""
+    found = design.allowance
+    if found is None:
+        return {}
+    return {
+        "op_amp_allowance": {
+            "with": _figures(found.with_allowance),
+            "without": _figures(found.without_allowance),
+            "gain_bandwidth_off": [
+                {"factor": found.slower_factor, **_figures(found.slower)},
+                {"factor": found.faster_factor, **_figures(found.faster)},
+            ],
+        }
+    }
+
+
+def _figures(error: ErrorFigures) -> dict[str, object]:
+    return {
+        "rms_error": error.rms,
+        "largest_db": error.largest_db,
+        "largest_deg": error.largest_deg,
+    }
+
+
+def _budget(design: Design) -> dict[str, object]:
+    """What the choice of values and what part tolerance take of the error."""
+    found = design.budget
+    if found is None:
+        return {}
+    record = asdict(found)
+    record["shares"] = [{"ref": ref, "share": share} for ref, share in found.shares]
+    record["tighter_part"], record["tighter_kinds"] = record.pop("part"), record.pop("kinds")
+    record |= {"values_share": found.values_share, "tolerance_share": found.tolerance_share}
+    return {"budget": record}
 
 
 def _loop(design: Design) -> dict[str, object]:

@@ -11,13 +11,16 @@ Everything here is computed; the simulator's opinion is asked for outside.
 from __future__ import annotations
 
 from collections.abc import Callable
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
+from synth.allowance import op_amp_allowance
 from synth.candidates import Sketch, choose_form
-from synth.choosing import Choice, choose_values
-from synth.circuit import Circuit
+from synth.choosing import DEFAULT_EFFORT, Choice, choose_values, with_ideal_op_amps
+from synth.circuit import Cell, Circuit
+from synth.errors import JobError
 from synth.evidence import Check, response_error
 from synth.graph import BlockGraph
 from synth.grid import judging_frequencies
@@ -27,7 +30,7 @@ from synth.loop import loop_checks, loop_margins
 from synth.nodal import compile_circuit
 from synth.peaks import frequencies_of_interest
 from synth.results import Candidate, Design, LoopResult, NoiseResult, Swing, ToleranceResult
-from synth.tolerance import run_boards
+from synth.tolerance import error_budget, run_boards
 
 __all__ = ["DEFAULT_BOARDS", "DEFAULT_SEED", "compare_forms", "design", "level_limits"]
 
@@ -65,6 +68,7 @@ def design(
     *,
     boards: int = DEFAULT_BOARDS,
     seed: int = DEFAULT_SEED,
+    effort: int = 1,
     progress: Progress | None = None,
 ) -> Design:
     """Carry a job through every stage.
@@ -75,6 +79,8 @@ def design(
         How many boards the tolerance run draws, at least 1.
     seed
         Of the choice of values and of the boards; the same seed gives the same design.
+    effort
+        Multiple of the default work that the search for values is given, at least 1.
     progress
         Called with the stage's name, and how much of how much of it is done.
 
@@ -83,6 +89,8 @@ def design(
     JobError, RealizationError
         The job contradicts itself, or no circuit within its rules exists.
     """
+    if effort < 1:
+        raise JobError(f"got the effort {effort}, expected 1 or more", key="effort")
     say = progress or (lambda stage, done, total: None)
     frequency = judging_frequencies(job.target, job.signal.band_hz)
     sketch, candidates = choose_form(
@@ -90,8 +98,8 @@ def design(
     )
     wanted = job.target.negated() if sketch.polarity.output_inverted else job.target
     response = wanted.response(frequency)
-    say("values", 0, 1)
-    choice = _choose(sketch, job, response, frequency, seed)
+    search = _Search(sketch, job, response, frequency, seed, effort * DEFAULT_EFFORT)
+    choice, unaware = search.both(say)
     circuit = choice.circuit
     program = compile_circuit(circuit)
     tolerance = run_boards(
@@ -107,6 +115,7 @@ def design(
     say("limits", 0, 1)
     swing = swings(circuit, wanted, job)
     loop = _loop(job, circuit, inverted=sketch.polarity.output_inverted)
+    nominal = response_error(program.solve(frequency), response)
     return Design(
         job=job,
         form=sketch.form,
@@ -115,7 +124,7 @@ def design(
         graph=_as_chosen(sketch, circuit, frequency),
         circuit=circuit,
         frequency_hz=frequency,
-        nominal=response_error(program.solve(frequency), response),
+        nominal=nominal,
         nearest=response_error(compile_circuit(choice.nearest).solve(frequency), response),
         tolerance=tolerance,
         noise=_noise(circuit, frequency),
@@ -124,22 +133,48 @@ def design(
         candidates=candidates,
         checks=_checks(job, circuit, tolerance, swing, loop),
         offset=_offset(circuit),
+        certificate=choice.certificate,
+        allowance=op_amp_allowance(circuit, unaware.circuit, response, frequency),
+        budget=error_budget(program, circuit, nominal, frequency, accept=job.accept, seed=seed),
+        effort=effort,
         loop=loop,
         notices=(*job.notices, *_notices(circuit, job, swing)),
     )
 
 
-def _choose(sketch: Sketch, job: Job, response: Complex, frequency_hz: Real, seed: int) -> Choice:
-    """Standard values, on at most about `FREQUENCIES_OF_THE_SEARCH` of the frequencies."""
-    few = slice(None, None, max(1, frequency_hz.size // FREQUENCIES_OF_THE_SEARCH))
-    return choose_values(
-        sketch.circuit,
-        target=response[few],
-        frequency_hz=frequency_hz[few],
-        accept=job.accept,
-        level_limits=level_limits(sketch, job),
-        seed=seed,
-    )
+@dataclass(frozen=True, eq=False)
+class _Search:
+    """What a choice of values for one sketch is asked, whatever its op-amps."""
+
+    sketch: Sketch
+    job: Job
+    response: Complex
+    frequency_hz: Real
+    seed: int
+    effort: int
+
+    def both(self, say: Progress) -> tuple[Choice, Choice]:
+        """For the job's op-amps, and as if they were ideal; the one improves on the other."""
+        say("values", 0, 2)
+        unaware = self.choice(with_ideal_op_amps(self.sketch.circuit))
+        say("values", 1, 2)
+        return self.choice(self.sketch.circuit, known=unaware.circuit), unaware
+
+    def choice(self, circuit: Circuit, *, known: Circuit | None = None) -> Choice:
+        """Standard values for `circuit`, the sketch's own or one like it, better than those of
+        `known`, on at most about `FREQUENCIES_OF_THE_SEARCH` of the frequencies."""
+        count = self.frequency_hz.size
+        few = slice(None, None, max(1, count // FREQUENCIES_OF_THE_SEARCH))
+        return choose_values(
+            circuit,
+            target=self.response[few],
+            frequency_hz=self.frequency_hz[few],
+            accept=self.job.accept,
+            level_limits=level_limits(self.sketch, self.job),
+            known=known,
+            seed=self.seed,
+            effort=self.effort,
+        )
 
 
 def _checks(
@@ -195,9 +230,7 @@ def level_limits(sketch: Sketch, job: Job) -> dict[str, tuple[float, float]]:
         if cell.output == sketch.circuit.output_net:
             continue
         if cell.block not in signals:  # the inverter of the input: the same gain everywhere
-            inverter = [sketch.circuit.by_ref[r].ideal for r in (*cell.inputs, cell.feedback)]
-            highest = job.signal.input_peak * inverter[1] / inverter[0]
-            limits[cell.output] = (job.signal.band_hz[0], job.board.swing_limit / highest)
+            limits[cell.output] = (job.signal.band_hz[0], _input_inverter_may(sketch, job, cell))
             continue
         volts = job.signal.input_peak * sketch.levels[cell.block]
         rising = min(
@@ -207,8 +240,26 @@ def level_limits(sketch: Sketch, job: Job) -> dict[str, tuple[float, float]]:
         # An adder may be flat up to where op-amps end: its peak is where the flat part begins.
         size = np.abs(signals[cell.block])
         watch = float(grid[int(np.argmax(size >= (1 - FLAT) * np.max(size)))])
-        limits[cell.output] = (watch, rising)
+        # One already above its ceiling must not be pushed further; that values cannot bring it
+        # below is for the swing check to say.
+        limits[cell.output] = (watch, max(rising, 1.0))
     return limits
+
+
+def _input_inverter_may(sketch: Sketch, job: Job, cell: Cell) -> float:
+    """By what ratio the inverter of the input may rise, or must fall: it can, where the
+    resistors it drives can fall with it."""
+    circuit = sketch.circuit
+    (source,) = (circuit.by_ref[r].ideal for r in cell.inputs)
+    feedback = circuit.by_ref[cell.feedback].ideal
+    ratio = job.board.swing_limit / (job.signal.input_peak * feedback / source)
+    driven = [
+        p.ideal
+        for p in circuit.bought
+        if cell.output in p.nets and p.kind == "resistor" and p.ref != cell.feedback
+    ]
+    within = min(driven, default=np.inf) * ratio > job.board.resistors.smallest
+    return ratio if within else max(ratio, 1.0)
 
 
 def _notices(circuit: Circuit, job: Job, swing: tuple[Swing, ...]) -> tuple[str, ...]:

@@ -10,6 +10,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from synth.choosing.certificate import Certificate
 from synth.circuit import Circuit
 from synth.evidence import Check, ResponseError
 from synth.graph import BlockGraph
@@ -17,7 +18,19 @@ from synth.job import Job
 from synth.loop import LoopMargins
 from synth.transfer import TransferFunction
 
-__all__ = ["Candidate", "Design", "Drift", "LoopResult", "NoiseResult", "Swing", "ToleranceResult"]
+__all__ = [
+    "Candidate",
+    "Design",
+    "Drift",
+    "ErrorBudget",
+    "ErrorFigures",
+    "LoopResult",
+    "NoiseResult",
+    "OpAmpAllowance",
+    "Swing",
+    "Tightened",
+    "ToleranceResult",
+]
 
 Real = NDArray[np.float64]
 
@@ -118,6 +131,113 @@ class ToleranceResult:
 
 
 @dataclass(frozen=True, kw_only=True)
+class ErrorFigures:
+    """A response error in three numbers: rms of |ln(H/T)|, a ratio, and the largest [dB],
+    [deg] over the band."""
+
+    rms: float
+    largest_db: float
+    largest_deg: float
+
+
+@dataclass(frozen=True, kw_only=True)
+class OpAmpAllowance:
+    """What values gain that are chosen for the op-amps there are.
+
+    Parameters
+    ----------
+    with_allowance, without_allowance
+        Errors on the circuit with the job's op-amps: of the chosen values, and of values
+        chosen the same way as if op-amps were ideal.
+    slower, faster
+        Errors of the chosen values with the gain-bandwidth of all op-amps at `slower_factor`
+        and `faster_factor` times its figure.
+    """
+
+    with_allowance: ErrorFigures
+    without_allowance: ErrorFigures
+    slower_factor: float
+    slower: ErrorFigures
+    faster_factor: float
+    faster: ErrorFigures
+
+
+@dataclass(frozen=True, kw_only=True)
+class Tightened:
+    """What tighter parts are predicted to give, to first order.
+
+    Parameters
+    ----------
+    kind
+        ``"part"``: one part; ``"resistor"``, ``"capacitor"``: all of a kind.
+    refs
+        The parts with a tighter grade.
+    tolerance, grade
+        Tolerance now, and of the next tighter grade, ratios; of the coarsest where they differ.
+    spread
+        Standard deviation at the frequency of the budget, in its unit.
+    error_95_db, limit_share_95
+        As in `ErrorBudget`.
+    """
+
+    kind: str
+    refs: tuple[str, ...]
+    tolerance: float
+    grade: float
+    spread: float
+    error_95_db: float
+    limit_share_95: float
+
+
+@dataclass(frozen=True, kw_only=True)
+class ErrorBudget:
+    """How the error divides between the choice of values and part tolerance, to first order.
+
+    Parameters
+    ----------
+    quantity, unit, limit
+        ``"magnitude"`` in ``"dB"`` or ``"phase"`` in ``"deg"``, whichever is used up more.
+    frequency_hz
+        Where |nominal error| + `sigmas` standard deviations is the largest share of the limit.
+    nominal, spread
+        Error of the nominal board and standard deviation from tolerance there, in `unit`.
+    shares
+        By falling share: parts and their shares of the variance there, ratios.
+    error_95_db, limit_share_95
+        95th percentiles over boards: of the largest dB error over the band, and of the largest
+        share of a limit, magnitude or phase.
+    part, kinds
+        The part whose next grade lowers `limit_share_95` most, and all parts of a kind; none
+        where no tighter grade is sold.
+    """
+
+    quantity: str
+    unit: str
+    limit: float
+    frequency_hz: float
+    nominal: float
+    spread: float
+    sigmas: float
+    shares: tuple[tuple[str, float], ...]
+    error_95_db: float
+    limit_share_95: float
+    part: Tightened | None
+    kinds: tuple[Tightened, ...]
+
+    @property
+    def values_share(self) -> float:
+        """Share of the choice of values in a board's mean square error there, a ratio."""
+        both = self.nominal**2 + self.spread**2
+        return self.nominal**2 / both if both else 0.0
+
+    @property
+    def tolerance_share(self) -> float:
+        """Share of part tolerance in it, a ratio."""
+        both = self.nominal**2 + self.spread**2
+        return self.spread**2 / both if both else 0.0
+
+
+@dataclass(frozen=True, kw_only=True)
 class Candidate:
     """A form that was considered.
 
@@ -166,6 +286,14 @@ class Design:
     offset
         Largest offset of the output at DC from offsets and bias currents of the op-amps, of any
         sign [V]; None where an integrator drifts.
+    certificate
+        How good any choice of values could be.
+    allowance
+        What it brings that values are chosen for the job's op-amps.
+    budget
+        What of the error is the choice of values and what is tolerance.
+    effort
+        Multiple of the default work that the search for values was given.
     loop
         Margins, where the job names a plant.
     candidates
@@ -192,5 +320,9 @@ class Design:
     candidates: tuple[Candidate, ...]
     checks: tuple[Check, ...]
     offset: float | None = None
+    certificate: Certificate | None = None
+    allowance: OpAmpAllowance | None = None
+    budget: ErrorBudget | None = None
+    effort: int = 1
     loop: LoopResult | None = None
     notices: tuple[str, ...] = field(default=())

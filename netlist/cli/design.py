@@ -45,9 +45,19 @@ __all__ = ["command", "default_folder"]
     show_default=True,
     help="Seed of the random numbers: the same seed gives the same pack.",
 )
+@click.option(
+    "--effort",
+    metavar="N",
+    type=click.IntRange(1, 1000),
+    default=1,
+    show_default=True,
+    help="Search for values N times as long as usual.",
+)
 @as_json
 @with_traceback
-def command(job_file: Path, into: Path | None, boards: int, seed: int, as_json: bool) -> Result:
+def command(
+    job_file: Path, *, into: Path | None, boards: int, seed: int, effort: int, as_json: bool
+) -> Result:
     """Design a board for JOB.toml, verify it in ngspice and write its pack.
 
     The pack is a folder with the report, the decks, the parts list and the drawings.  It is
@@ -59,7 +69,9 @@ def command(job_file: Path, into: Path | None, boards: int, seed: int, as_json: 
     folder = default_folder(job_file) if into is None else into
     job = read_job(job_file)
     check_pack_folder(folder)
-    made, checked = _carried_out(job, folder, boards=boards, seed=seed, name=job_file.name)
+    made, checked = _carried_out(
+        job, folder, boards=boards, seed=seed, effort=effort, name=job_file.name
+    )
 
     from netlist.cli.summary import EXIT_CODES, summary, warn
     from netlist.records import design_record, record_text, verdict_of
@@ -72,7 +84,7 @@ def command(job_file: Path, into: Path | None, boards: int, seed: int, as_json: 
 
 
 def _carried_out(
-    job: Job, folder: Path, *, boards: int, seed: int, name: str
+    job: Job, folder: Path, *, boards: int, seed: int, effort: int, name: str
 ) -> tuple[Design, Verification]:
     """Design, verify and write, with progress; what is slow to load is loaded here, once the
     job is known to be readable."""
@@ -84,7 +96,7 @@ def _carried_out(
         from netlist.verification import verify
         from synth.design import design
 
-        made = design(job, boards=boards, seed=seed, progress=report)
+        made = design(job, boards=boards, seed=seed, effort=effort, progress=report)
         report("simulating", 0, 1)
         checked = verify(made, simulator=simulator)
         report("writing the pack", 0, 1)

@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING
 
 from netlist.partslist import PartLine, packages
 from netlist.records import all_checks, verdict_of
-from netlist.report import asked, found, wording
+from netlist.report import asked, choice, found, wording
 from netlist.svg import prefix_ids
 from synth.evidence import Check
 from synth.results import Design
@@ -87,6 +87,7 @@ def report_page(
             forms=found.form_rows(design.candidates, design.form),
             swings=found.swing_rows(design.swings, design.circuit),
             values=found.value_rows(design.circuit),
+            choice=choice.shown(design),
             loop=found.loop_rows(design.loop),
             noise_parts=found.largest_noise(design),
             drifts=found.drift_rows(design.drifts),
@@ -179,4 +180,5 @@ def _command(design: Design, job_name: str) -> str:
     """The command that makes this pack again."""
     name = shlex.quote(job_name or "JOB.toml")
     run = design.tolerance
-    return f"polewright design {name} --boards {run.boards} --seed {run.seed}"
+    effort = f" --effort {design.effort}" if design.effort != 1 else ""
+    return f"polewright design {name} --boards {run.boards} --seed {run.seed}{effort}"

@@ -5,6 +5,6 @@ may rise.  Output: the same circuit with values from its series, and one with ev
 rounded to its nearest neighbour, to compare with.  Called by `synth.design` only.
 """
 
-from synth.choosing.choose import Choice, choose_values
+from synth.choosing.choose import DEFAULT_EFFORT, Choice, choose_values, with_ideal_op_amps
 
-__all__ = ["Choice", "choose_values"]
+__all__ = ["DEFAULT_EFFORT", "Choice", "choose_values", "with_ideal_op_amps"]

@@ -17,13 +17,17 @@ from numpy.typing import NDArray
 from synth.choosing.grid import ValueGrid
 from synth.choosing.model import LinearModel
 
-__all__ = ["Frontier", "binding_order", "outside"]
+__all__ = ["Frontier", "binding_groups", "binding_order", "outside"]
 
 Real = NDArray[np.float64]
 Index = NDArray[np.intp]
 
 # A direction counts as spanned when a column reaches it by more than this.
 RANK_TOLERANCE = 1e-7
+
+# Rows of a null space are dependent below this: far above what rounding leaves of a direction
+# spanned by columns of RANK_TOLERANCE, far below what independent ones of parts have.
+DEPENDENT = 1e-5
 
 
 @dataclass(frozen=True, eq=False)
@@ -65,17 +69,6 @@ class Frontier:
         """Lower bounds of the mean square with the columns of the open parts, shape (N,)."""
         return np.asarray(np.sum((outside(open_columns) @ self.residuals) ** 2, axis=0))
 
-    def best(self, open_columns: Real, count: int) -> Frontier:
-        """The `count` assignments with the lowest bounds, those far from the reference ranked as
-        if their bound were larger by a tenth per unit of ln."""
-        bounds = np.sqrt(self.bounds(open_columns))
-        parts = np.array(self.parts)
-        logs = self.grid.logs[parts[:, None], self.chosen]
-        logs = logs - self.model.reference[parts][:, None]
-        distance = np.sqrt(np.sum(logs**2, axis=0))
-        order = np.argsort(bounds * (1 + 0.1 * distance), kind="stable")[:count]
-        return replace(self, chosen=self.chosen[:, order], residuals=self.residuals[:, order])
-
     def grown(
         self, part: int, open_columns: Real, *, below: float, largest: int
     ) -> Frontier | None:
@@ -83,44 +76,88 @@ class Frontier:
 
         None when more than `largest` assignments would remain.
         """
-        grid, model = self.grid, self.model
-        changes = grid.logs[part, : grid.counts[part]] - model.reference[part]
-        if self.count * changes.size > 8 * largest:
+        if self.count * int(self.grid.counts[part]) > 8 * largest:
             return None
-        away = outside(open_columns)
-        column = model.matrix[:, part]
-        before = away @ self.residuals
-        steps = np.outer(away @ column, changes)
-        squares = np.sum((before[:, :, None] + steps[:, None, :]) ** 2, axis=0)
-        kept, value = np.nonzero(squares < below)
+        kept, value = np.nonzero(self._squares(part, open_columns) < below)
         if kept.size > largest:
             return None
+        return self._with(part, kept, value)
+
+    def grown_best(self, part: int, open_columns: Real, *, count: int) -> Frontier:
+        """With `part` at each of its values, the `count` assignments with the lowest bounds,
+        those far from the reference ranked as if their bound were larger by a tenth per unit
+        of ln."""
+        parts = np.array(self.parts, dtype=np.intp)
+        logs = self.grid.logs[parts[:, None], self.chosen]
+        before = np.sum((logs - self.model.reference[parts][:, None]) ** 2, axis=0)
+        distance = np.sqrt(np.add.outer(before, self._changes(part) ** 2))
+        rank = np.sqrt(self._squares(part, open_columns)) * (1 + 0.1 * distance)
+        kept, value = np.unravel_index(_lowest(rank.ravel(), count), rank.shape)
+        return self._with(part, kept, value)
+
+    def _changes(self, part: int) -> Real:
+        """Each value of `part` against the reference, in ln."""
+        changes: Real = self.grid.logs[part, : self.grid.counts[part]] - self.model.reference[part]
+        return changes
+
+    def _squares(self, part: int, open_columns: Real) -> Real:
+        """Bounds with `part` at each of its values, shape (N, values): what lies across the
+        part's own direction, and what its value leaves along it."""
+        away = outside(open_columns)
+        before, along = away @ self.residuals, away @ self.model.matrix[:, part]
+        length = float(along @ along)
+        if length <= RANK_TOLERANCE**2:
+            along, length = np.zeros_like(along), 1.0
+        wanted = -(along @ before) / length
+        across = np.sum((before + np.outer(along, wanted)) ** 2, axis=0)
+        miss = np.subtract.outer(wanted, self._changes(part))
+        return np.asarray(across[:, None] + float(along @ along) * miss**2)
+
+    def _with(self, part: int, kept: Index, value: Index) -> Frontier:
+        """The assignments `kept` with `part` at its values `value`."""
+        column = self.model.matrix[:, part]
         return replace(
             self,
             parts=(*self.parts, part),
             chosen=np.concatenate([self.chosen[:, kept], value[None, :]]),
-            residuals=self.residuals[:, kept] + np.outer(column, changes[value]),
+            residuals=self.residuals[:, kept] + np.outer(column, self._changes(part)[value]),
         )
 
 
-def binding_order(matrix: Real, grid: ValueGrid) -> tuple[list[int], int]:
-    """All parts with a choice, in the order in which they bind, and how many of them bind.
+def binding_groups(matrix: Real, grid: ValueGrid) -> list[tuple[int, ...]]:
+    """The sets of one, two and three parts that bind, smaller ones first: the columns of all
+    others span less than the whole, and no smaller set within has this property.
 
-    A set of parts binds when the columns of all others span less than the whole; sets of one,
-    two and three parts are found by trying all.  The others follow by falling influence.
+    A set binds when some change of the response needs a part of it: some row of the matrix
+    vanishes outside the set.  Rows are what is orthogonal to the null space, so the null
+    space, restricted to the set, has dependent rows.
     """
-    free = [int(k) for k in np.flatnonzero(grid.counts > 1)]
-    rank = _rank(matrix[:, free])
-    order: list[int] = []
+    free = np.flatnonzero(grid.counts > 1)
+    null = outside(matrix[:, free].T).T
+    gram = null @ null.T
+    found: list[tuple[int, ...]] = []
     for size in (1, 2, 3):
-        for group in itertools.combinations(free, size):
-            new = [k for k in group if k not in order]
-            if len(new) < min(size, 2):
-                continue
-            if _rank(matrix[:, [k for k in free if k not in group]]) < rank:
-                order += new
+        groups = np.array(list(itertools.combinations(range(free.size), size)), dtype=np.intp)
+        if groups.size == 0:
+            break
+        smallest = np.linalg.eigvalsh(gram[groups[:, :, None], groups[:, None, :]])[:, 0]
+        for group in groups[smallest < DEPENDENT**2]:
+            parts = tuple(int(free[k]) for k in group)
+            if not any(set(g) <= set(parts) for g in found):
+                found.append(parts)
+    return found
+
+
+def binding_order(matrix: Real, grid: ValueGrid) -> tuple[list[int], int]:
+    """All parts with a choice, in the order in which they bind, and how many of them bind; the
+    others follow by falling influence."""
+    order: list[int] = []
+    for group in binding_groups(matrix, grid):
+        new = [k for k in group if k not in order]
+        if len(new) >= min(len(group), 2):
+            order += new
     binding = len(order)
-    rest = [k for k in free if k not in order]
+    rest = [int(k) for k in np.flatnonzero(grid.counts > 1) if k not in order]
     order += sorted(rest, key=lambda k: -float(np.linalg.norm(matrix[:, k])))
     return order, binding
 
@@ -135,7 +172,9 @@ def outside(columns: Real) -> Real:
     return np.asarray(left[:, rank:].T)
 
 
-def _rank(columns: Real) -> int:
-    if columns.shape[1] == 0:
-        return 0
-    return int(np.linalg.matrix_rank(columns, tol=RANK_TOLERANCE))
+def _lowest(rank: Real, count: int) -> Index:
+    """Where the `count` lowest numbers are, ascending."""
+    if rank.size <= count:
+        return np.argsort(rank, kind="stable")
+    lowest = np.sort(np.argpartition(rank, count)[:count])
+    return np.asarray(lowest[np.argsort(rank[lowest], kind="stable")], dtype=np.intp)

@@ -16,6 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.choosing.binding import Frontier, binding_order
+from synth.choosing.bottlenecks import Bottleneck, bottlenecks
 from synth.choosing.grid import ValueGrid
 from synth.choosing.model import LinearModel
 
@@ -46,6 +47,8 @@ class Certificate:
         Whether every choice was either dropped for its bound or looked at.
     assigned
         The parts that were assigned, in the order they bind.
+    bottlenecks
+        Sets of parts whose values on offer alone leave an error, the largest first.
     better
         A choice better than the incumbent, where every one was looked at: an index vector.
     """
@@ -55,6 +58,7 @@ class Certificate:
     proven: bool
     exhausted: bool
     assigned: tuple[str, ...]
+    bottlenecks: tuple[Bottleneck, ...] = ()
     better: Index | None = None
 
     @property
@@ -103,6 +107,8 @@ def certify(
             better = incumbent.copy()
             better[list(frontier.parts)] = frontier.chosen[:, best]
     rms, lower = float(np.sqrt(square + model.floor)), float(np.sqrt(bound + model.floor))
+    sets = bottlenecks(grid, model)
+    lower = min(rms, max(lower, *(b.rms for b in sets)) if sets else lower)
     exhausted = complete or frontier.count == 0
     return Certificate(
         rms=rms,
@@ -110,5 +116,6 @@ def certify(
         proven=better is None and (exhausted or lower >= rms * (1 - PROVEN_RATIO)),
         exhausted=exhausted,
         assigned=tuple(grid.parts[k].ref for k in frontier.parts),
+        bottlenecks=sets,
         better=better,
     )

@@ -15,7 +15,7 @@ from synth.circuit import Circuit
 from synth.job import Accept
 from synth.nodal import NodalProgram, compile_circuit
 
-__all__ = ["DEFAULT_EFFORT", "Choice", "choose_values"]
+__all__ = ["DEFAULT_EFFORT", "Choice", "choose_values", "with_ideal_op_amps"]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -63,6 +63,7 @@ def choose_values(
     frequency_hz: Real,
     accept: Accept | None = None,
     level_limits: dict[str, tuple[float, float]] | None = None,
+    known: Circuit | None = None,
     seed: int = 1,
     effort: int = DEFAULT_EFFORT,
 ) -> Choice:
@@ -81,6 +82,9 @@ def choose_values(
     level_limits
         By op-amp output net: the frequency of its peak [Hz], and the ratio by which the peak
         may still rise.
+    known
+        The same parts with values from the series, to be improved on: the choice is never
+        worse than these, as long as they keep the level limits.
     seed
         Of the random kicks.
     effort
@@ -96,6 +100,9 @@ def choose_values(
     ceilings = Ceilings.of(program, np.exp(logs), level_limits or {})
 
     def searched(grid: ValueGrid, ceilings: Ceilings | None) -> SearchOutcome:
+        start = None
+        if known is not None:
+            start = grid.nearest(np.log([p.value for p in known.passives]))
         return search_values(
             program,
             grid,
@@ -103,6 +110,7 @@ def choose_values(
             start_logs=logs,
             ideal=ideal,
             ceilings=ceilings,
+            known=start,
             seed=seed,
             effort=effort,
         )

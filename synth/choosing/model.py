@@ -170,7 +170,9 @@ class Ceilings:
         if not levels:
             return None
         peak_hz, ratios = (np.array(column) for column in zip(*levels.values(), strict=True))
-        ratios = ratios * (1 - PEAK_MARGIN)
+        # One that may not rise at all keeps the room that the choice of values takes by itself.
+        roomy = np.maximum(ratios * (1 - PEAK_MARGIN), 1 + PEAK_MARGIN)
+        ratios = np.where(ratios >= 1, roomy, ratios)
         found = cls(tuple(levels), peak_hz, ratios, LOWEST_FALL * np.minimum(ratios, 1.0))
         gains = found._gains(program, values[None, :])[0]
         firm = np.max(np.abs(found._slopes(program, values)), axis=1) <= FIRM_SLOPE

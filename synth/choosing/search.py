@@ -30,10 +30,14 @@ Index = NDArray[np.intp]
 
 # Size of the kicks in each round, as a ratio of the value.
 KICKS = (0.25, 0.12, 0.06, 0.04)
+KICKS_ABOUT_KNOWN = (0.06, 0.04)
 
 # Room below the ceilings that a kick leaves for the descent, in ln; half a step of a coarse
 # series is more.
 HEADROOM = 0.02
+
+# Added to the mean square of what is above a ceiling: far more than any error there is.
+BEYOND = 1e9
 
 # What a kick costs beside the neighbourhoods it leads to, in pairs of steps.
 PAIRS_PER_KICK = 10_000
@@ -43,9 +47,6 @@ PAIRS_PER_KICK = 10_000
 BINDING_SHARE = 0.5
 BINDING_STARTS = 400
 BINDING_BEAM = 4000
-
-# Added to the mean square error of values with an output out of its bounds.
-OUT_OF_BOUNDS = 1e3
 
 # How many candidates of a round the nodal engine judges.
 CANDIDATES = 24
@@ -95,6 +96,7 @@ def search_values(
     start_logs: Real,
     ideal: NodalProgram,
     ceilings: Ceilings | None,
+    known: Index | None = None,
     seed: int,
     effort: int,
 ) -> SearchOutcome:
@@ -111,31 +113,43 @@ def search_values(
     ceilings
         How far op-amp outputs may rise; a candidate beyond them is not taken while there is
         another.
+    known
+        A choice to be improved on in rounds of its own, half as many.
     effort
         Pairs of steps to be evaluated in all rounds together, about; the search stops by
         this count alone, or when rounds no longer gain.
     """
     rng = np.random.default_rng(seed)
-    best = grid.nearest(start_logs)
-    best_square = float(_judged(program, grid, goal, ceilings, [best])[0])
-    reference = np.exp(start_logs)
-    looked = 0
-    for kick in KICKS:
-        model = LinearModel.about(program, reference, goal)
-        skeleton = LinearModel.about(program, reference, goal, jacobian=ideal)
-        starts = binding_starts(grid, skeleton)
-        limits = None if ceilings is None else ceilings.about(program, reference)
-        one = _Round(grid, model, limits=limits, starts=starts, kick=kick, rng=rng)
-        pool = one.run(best, effort // len(KICKS))
-        looked += one.looked
-        members = pool.members()
-        if not members:
-            continue
-        squares = _judged(program, grid, goal, ceilings, members)
-        k = int(np.argmin(squares))
-        if squares[k] < best_square:
-            best, best_square = members[k], float(squares[k])
-        reference = grid.values_at(best)
+
+    def climbed(
+        start: Index, reference: Real, kicks: tuple[float, ...]
+    ) -> tuple[Index, float, int]:
+        best, looked = start, 0
+        best_square = float(_judged(program, grid, goal, ceilings, [best])[0])
+        for kick in kicks:
+            model = LinearModel.about(program, reference, goal)
+            skeleton = LinearModel.about(program, reference, goal, jacobian=ideal)
+            starts = binding_starts(grid, skeleton)
+            limits = None if ceilings is None else ceilings.about(program, reference)
+            one = _Round(grid, model, limits=limits, starts=starts, kick=kick, rng=rng)
+            pool = one.run(best, effort // len(KICKS))
+            looked += one.looked
+            members = pool.members()
+            if not members:
+                continue
+            squares = _judged(program, grid, goal, ceilings, members)
+            k = int(np.argmin(squares))
+            if squares[k] < best_square:
+                best, best_square = members[k], float(squares[k])
+            reference = grid.values_at(best)
+        return best, best_square, looked
+
+    best, square, looked = climbed(grid.nearest(start_logs), np.exp(start_logs), KICKS)
+    if known is not None:
+        other = climbed(known, grid.values_at(known), KICKS_ABOUT_KNOWN)
+        looked += other[2]
+        if other[1] < square:
+            best = other[0]
     (square,) = goal.mean_squares(program, grid.values_at(best)[None, :])
     return SearchOutcome(index=best, rms=float(np.sqrt(square)), looked=looked)
 
@@ -153,7 +167,7 @@ def _judged(
     squares = goal.mean_squares(program, values)
     if ceilings is None:
         return squares
-    return np.where(ceilings.keep(program, values), squares, squares + OUT_OF_BOUNDS)
+    return np.where(ceilings.keep(program, values), squares, squares + BEYOND)
 
 
 @dataclass(frozen=True, eq=False)
@@ -176,10 +190,7 @@ def binding_starts(grid: ValueGrid, skeleton: LinearModel) -> BindingStarts | No
     frontier = Frontier.start(skeleton, grid)
     for place, part in enumerate(order[:binding]):
         columns = skeleton.matrix[:, order[place + 1 :]]
-        grown = frontier.grown(part, columns, below=np.inf, largest=400 * BINDING_BEAM)
-        if grown is None:
-            return None
-        frontier = grown.best(columns, BINDING_BEAM)
+        frontier = frontier.grown_best(part, columns, count=BINDING_BEAM)
     if not frontier.parts:
         return None
     return BindingStarts(np.array(frontier.parts), frontier.chosen[:, :BINDING_STARTS])

@@ -1,6 +1,8 @@
-"""What part tolerance does: runs of boards, first-order spread, intervals of a yield."""
+"""What part tolerance does: runs of boards, first-order spread, intervals of a yield, and
+the error budget that names whose tighter grade would help most."""
 
 from synth.tolerance.boards import drawn_values, run_boards, tolerances_of
+from synth.tolerance.budget import error_budget, next_grade
 from synth.tolerance.interval import clopper_pearson
 from synth.tolerance.spread import Spread, predicted_spread
 
@@ -8,6 +10,8 @@ __all__ = [
     "Spread",
     "clopper_pearson",
     "drawn_values",
+    "error_budget",
+    "next_grade",
     "predicted_spread",
     "run_boards",
     "tolerances_of",

@@ -11,6 +11,9 @@ import numpy as np
 from netlist.drawings import Drawings
 from netlist.ngspice import TransientResult
 from netlist.verification import Verification
+from synth.allowance import op_amp_allowance
+from synth.choosing.bottlenecks import Bottleneck
+from synth.choosing.certificate import Certificate
 from synth.circuit import Amplifier, Cell, Circuit, Passive
 from synth.evidence import Check, response_error
 from synth.graph import Block, BlockGraph, Term
@@ -19,6 +22,7 @@ from synth.nodal import compile_circuit
 from synth.op_amps import op_amp_class
 from synth.parts import PartRule
 from synth.results import Candidate, Design, Drift, NoiseResult, Swing, ToleranceResult
+from synth.tolerance import error_budget
 from synth.transfer import Factor, TransferFunction
 
 RESISTORS = PartRule(kind="resistor", series="E96", tolerance=0.01, smallest=1e3, largest=1e6)
@@ -136,6 +140,16 @@ def design(
         nominal=nominal,
         nearest=replace(nominal, magnitude_db=5 * nominal.magnitude_db),
         tolerance=tolerance(made, asked, frequency, boards),
+        certificate=Certificate(
+            rms=2e-3,
+            lower_bound=1.6e-3,
+            proven=False,
+            exhausted=False,
+            assigned=("R2", "C1"),
+            bottlenecks=(Bottleneck(refs=("R2", "C1"), rms=1.6e-3),),
+        ),
+        allowance=op_amp_allowance(made, made.with_values({"R4": 15.8e3}), target, frequency),
+        budget=error_budget(program, made, nominal, frequency, accept=asked.accept, seed=1),
         noise=NoiseResult(
             frequency_hz=frequency,
             density=noise.density,

@@ -10,6 +10,7 @@ import os
 import pty
 import subprocess
 import sys
+from dataclasses import replace
 from pathlib import Path
 from types import ModuleType
 
@@ -40,14 +41,17 @@ def stages(monkeypatch, tmp_path):
         failure: str | None = None
         checks = boards.LIMITS
         boards = 1000
+        effort = 1
 
         @property
         def made(self):
-            return boards.design(checks=self.checks, boards=self.boards)
+            made = boards.design(checks=self.checks, boards=self.boards)
+            return replace(made, effort=self.effort)
 
     stages = Stages()
 
-    def design(job, *, boards=1000, seed=1, progress=None):
+    def design(job, *, boards=1000, seed=1, effort=1, progress=None):
+        stages.effort = effort
         progress("drawing boards", 1, 2)
         if stages.raises is not None:
             raise stages.raises
@@ -152,6 +156,8 @@ def test_traceback_shows_where_a_defect_is(stages, capsys):
         ["design"],
         ["design", "x.toml", "--boards", "0"],
         ["design", "x.toml", "--seed", "-1"],
+        ["design", "x.toml", "--effort", "0"],
+        ["design", "x.toml", "--effort", "1.5"],
         ["design", "x.toml", "--nonsense"],
         ["design", "x.toml", "y.toml"],
         ["--nonsense"],
@@ -163,6 +169,13 @@ def test_a_slip_on_the_command_line_is_2_and_one_line(arguments, capsys):
     assert out == ""
     assert len(err.splitlines()) == 1
     assert "--help" in err
+
+
+def test_effort_reaches_the_search_and_the_command_that_repeats_it(stages, tmp_path, capsys):
+    assert run(["design", "x.toml", "--effort", "4"]) == 0
+    assert json.loads((tmp_path / "x" / "design.json").read_text())["choice"]["effort"] == 4
+    assert "--effort 4" in (tmp_path / "x" / "report.html").read_text()
+    capsys.readouterr()
 
 
 def test_json_is_the_content_of_design_json_and_nothing_else(stages, capsys):

@@ -1,0 +1,171 @@
+"""What is known of the choice of values, ready for the page: how good any choice could be, what
+it brings to choose for the op-amps there are, and the error budget."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+
+from netlist.report.wording import decibel, percent, quantity, stated
+from synth.choosing.certificate import PROVEN_RATIO, Certificate
+from synth.circuit import Circuit
+from synth.results import Design, ErrorBudget, ErrorFigures, OpAmpAllowance, Tightened
+
+__all__ = [
+    "allowance_rows",
+    "binding_lines",
+    "budget_lines",
+    "budget_rows",
+    "proof_line",
+    "shown",
+]
+
+Row = dict[str, object]
+
+# Beyond this many times its bound an error is called unknown against the best, not close to it.
+USEFUL_RATIO = 2.0
+
+# Lines of the table of shares, and the least share of the sets of parts that bind, against
+# the bound, that is worth a line.
+LARGEST_SHARES = 8
+WORTH_NAMING = 0.5
+
+_NOUNS = {"resistor": "all resistors", "capacitor": "all capacitors"}
+
+
+def proof_line(found: Certificate) -> str:
+    """How the choice stands against the best there could be, in one or two sentences."""
+    reached, bound = percent(found.rms), percent(found.lower_bound)
+    if found.proven and found.exhausted:
+        return (
+            f"Proven best: its rms error is {reached}, and every other choice of values on offer "
+            "was tried or excluded by a bound."
+        )
+    if found.proven:
+        return (
+            f"Proven best to within {percent(PROVEN_RATIO, 1)}: its rms error is {reached}, and "
+            f"no choice of values on offer gets below {bound}."
+        )
+    if found.lower_bound * USEFUL_RATIO >= found.rms:
+        above = percent(found.rms / found.lower_bound - 1, 2)
+        return (
+            f"At most {above} above the best any choice could be: its rms error is {reached}, "
+            f"and no choice of values on offer gets below {bound}."
+        )
+    return (
+        f"Its rms error is {reached}; no choice of values on offer gets below {bound}. Whether "
+        "any lies between the two is not known."
+    )
+
+
+def binding_lines(found: Certificate, circuit: Circuit) -> list[str]:
+    """Sets of parts that bind: what their values on offer leave undone on their own."""
+    return [
+        f"{_listed(f'{ref} ({circuit.by_ref[ref].sets})' for ref in b.refs)}: whatever values "
+        f"all other parts had, those on offer for {'this part' if len(b.refs) == 1 else 'these'} "
+        f"leave {percent(b.rms)}."
+        for b in found.bottlenecks
+        if b.rms >= WORTH_NAMING * found.lower_bound
+    ][:3]
+
+
+def allowance_rows(found: OpAmpAllowance) -> list[Row]:
+    """Errors on the circuit with the job's op-amps."""
+
+    def row(name: str, error: ErrorFigures) -> Row:
+        return {
+            "name": name,
+            "rms": percent(error.rms),
+            "db": decibel(error.largest_db),
+            "deg": decibel(error.largest_deg),
+        }
+
+    off = "values as chosen, gain-bandwidth of all op-amps at {} times its figure"
+    return [
+        row("values as chosen, for the op-amps of the job", found.with_allowance),
+        row("values chosen as if op-amps were ideal", found.without_allowance),
+        row(off.format(f"{found.slower_factor:g}"), found.slower),
+        row(off.format(f"{found.faster_factor:g}"), found.faster),
+    ]
+
+
+def budget_lines(found: ErrorBudget) -> list[str]:
+    """Where the budget is tightest, how it divides there, and what would help, in sentences."""
+    unit = found.unit
+    lines = [
+        f"A limit is used up most by the {found.quantity} at "
+        f"{quantity(found.frequency_hz, 'Hz')}, where {stated(found.limit, unit)} are allowed: "
+        f"the nominal board is off by "
+        f"{_with(abs(found.nominal), unit)}, and part tolerance spreads boards around it with a "
+        f"standard deviation of {_with(found.spread, unit)}. Of the mean square error of a board "
+        f"there, {_division(found)}."
+    ]
+    if found.part is None:
+        lines.append("No part has a tighter grade that is commonly sold.")
+    else:
+        lines.append(
+            f"The part whose tighter grade helps most is {found.part.refs[0]}: "
+            f"{_gains(found.part, found)}."
+        )
+    lines += [
+        f"With {_NOUNS[t.kind]} at their next grade: {_gains(t, found)}."
+        for t in found.kinds
+        if len(t.refs) > 1
+    ]
+    return lines
+
+
+def budget_rows(found: ErrorBudget, circuit: Circuit) -> list[Row]:
+    """The parts with the largest shares of the variance, and the rest as one line."""
+    rows: list[Row] = [
+        {
+            "ref": ref,
+            "share": percent(share, 2),
+            "tolerance": stated(circuit.by_ref[ref].tolerance, "%"),
+            "sets": circuit.by_ref[ref].sets,
+        }
+        for ref, share in found.shares[:LARGEST_SHARES]
+    ]
+    rest = [share for _, share in found.shares[LARGEST_SHARES:]]
+    if rest:
+        name = f"{len(rest)} other{'' if len(rest) == 1 else 's'}"
+        rows.append({"ref": name, "share": percent(sum(rest), 2), "tolerance": "", "sets": ""})
+    return rows
+
+
+def shown(design: Design) -> dict[str, object]:
+    """Everything the page says of the choice; empty where nothing is known of it."""
+    certificate, allowance, budget = design.certificate, design.allowance, design.budget
+    return {
+        "proof": proof_line(certificate) if certificate else "",
+        "binding": binding_lines(certificate, design.circuit) if certificate else [],
+        "allowance": allowance_rows(allowance) if allowance else [],
+        "budget": budget_lines(budget) if budget else [],
+        "shares": budget_rows(budget, design.circuit) if budget else [],
+    }
+
+
+def _division(found: ErrorBudget) -> str:
+    """The smaller share in digits, the larger as the rest."""
+    if found.values_share <= found.tolerance_share:
+        share = percent(found.values_share, 2)
+        return f"{share} is the choice of values and the rest part tolerance"
+    share = percent(found.tolerance_share, 2)
+    return f"{share} is part tolerance and the rest the choice of values"
+
+
+def _gains(tighter: Tightened, found: ErrorBudget) -> str:
+    return (
+        f"from {stated(tighter.tolerance, '%')} to {stated(tighter.grade, '%')} the standard "
+        f"deviation there falls to {_with(tighter.spread, found.unit)}, and on 95 of 100 boards "
+        f"the largest magnitude error stays below {_with(tighter.error_95_db, 'dB')} instead of "
+        f"{_with(found.error_95_db, 'dB')}"
+    )
+
+
+def _with(value: float, unit: str) -> str:
+    return f"{decibel(value)}\N{NO-BREAK SPACE}{unit}"
+
+
+def _listed(words: Iterable[str]) -> str:
+    *first, last = words
+    return f"{', '.join(first)} and {last}" if first else last

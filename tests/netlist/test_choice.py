@@ -1,0 +1,171 @@
+"""What report and record say of the choice of values is what is known of it, and no more."""
+
+from __future__ import annotations
+
+import json
+import re
+from dataclasses import replace
+
+import pytest
+
+from netlist.partslist import parts_list
+from netlist.records import design_record, record_text
+from netlist.report.choice import (
+    allowance_rows,
+    binding_lines,
+    budget_lines,
+    budget_rows,
+    proof_line,
+)
+from netlist.report.page import report_page
+from synth.choosing.bottlenecks import Bottleneck
+from tests.netlist import boards
+
+MADE = boards.design()
+BARE = replace(MADE, certificate=None, allowance=None, budget=None)
+
+
+def page(design) -> str:
+    text = report_page(
+        design,
+        boards.verification(design),
+        drawings=boards.drawings(),
+        lines=parts_list(design.circuit, supply=design.job.board.supply),
+        job_name="low-pass.toml",
+    )
+    return re.sub(r"\s+", " ", re.sub(r"<[^>]+>", " ", text)).replace("\xa0", " ")
+
+
+def plain(text: str) -> str:
+    return text.replace("\xa0", " ")
+
+
+@pytest.mark.parametrize(
+    ("changes", "said", "not_said"),
+    [
+        (
+            {"proven": True, "exhausted": True, "lower_bound": 2e-3},
+            "Proven best: its rms error is 0.200 %, and every other choice",
+            "within",
+        ),
+        (
+            {"proven": True, "exhausted": False, "lower_bound": 1.999e-3},
+            "Proven best to within 0.1 %",
+            "every other choice",
+        ),
+        ({}, "At most 25 % above the best any choice could be", "Proven"),
+        (
+            {"lower_bound": 0.2e-3},
+            "no choice of values on offer gets below 0.0200 %. Whether any lies between",
+            "At most",
+        ),
+        ({"lower_bound": 0.0}, "gets below 0 %", "At most"),
+    ],
+)
+def test_the_proof_is_worded_as_strong_as_it_is(changes, said, not_said) -> None:
+    line = plain(proof_line(replace(MADE.certificate, **changes)))
+    assert said in line
+    assert not_said not in line
+
+
+def test_parts_that_bind_are_named_with_what_they_set() -> None:
+    """Sets that leave much less than the bound are no reason for it."""
+    weak = Bottleneck(refs=("R1", "C2"), rms=0.1e-3)
+    found = replace(MADE.certificate, bottlenecks=(*MADE.certificate.bottlenecks, weak))
+    (line,) = binding_lines(found, MADE.circuit)
+    assert plain(line) == (
+        "R2 (damping of x1) and C1 (time constant of x1): whatever values all other parts had, "
+        "those on offer for these leave 0.160 %."
+    )
+
+
+def test_a_bound_of_nothing_names_no_parts() -> None:
+    found = replace(MADE.certificate, lower_bound=0.0, bottlenecks=())
+    assert binding_lines(found, MADE.circuit) == []
+
+
+def test_allowance_has_a_line_for_each_circuit() -> None:
+    rows = allowance_rows(MADE.allowance)
+    assert [r["name"].split(",")[0] for r in rows] == [
+        "values as chosen",
+        "values chosen as if op-amps were ideal",
+        "values as chosen",
+        "values as chosen",
+    ]
+    assert "at 0.5 times" in rows[2]["name"]
+    assert "at 1.5 times" in rows[3]["name"]
+    assert plain(rows[0]["rms"]) == f"{100 * MADE.nominal.rms:.3f} %"
+
+
+def test_budget_names_the_part_and_what_its_grade_gives() -> None:
+    first, second, *kinds = (plain(line) for line in budget_lines(MADE.budget))
+    assert first.startswith("A limit is used up most by the magnitude at ")
+    assert "where 0.5 dB are allowed" in first
+    ref = MADE.budget.part.refs[0]
+    assert second.startswith(f"The part whose tighter grade helps most is {ref}: from 5 % to 2 %")
+    assert kinds[0].startswith("With all resistors at their next grade: from 1 % to 0.5 %")
+    assert kinds[1].startswith("With all capacitors at their next grade: from 5 % to 2 %")
+
+
+def test_budget_gives_the_smaller_share_in_digits() -> None:
+    """100 % beside 0.02 % would be one too many."""
+    small = replace(MADE.budget, nominal=0.01, spread=0.1)
+    large = replace(MADE.budget, nominal=0.1, spread=0.01)
+    assert "0.99 % is the choice of values and the rest part tolerance" in plain(
+        budget_lines(small)[0]
+    )
+    assert "0.99 % is part tolerance and the rest the choice of values" in plain(
+        budget_lines(large)[0]
+    )
+
+
+def test_without_a_tighter_grade_the_budget_says_so() -> None:
+    found = replace(MADE.budget, part=None, kinds=())
+    assert budget_lines(found)[1:] == ["No part has a tighter grade that is commonly sold."]
+
+
+def test_shares_in_the_table_add_up() -> None:
+    """The largest by name, all others in one line."""
+    many = tuple((f"R{k % 6 + 1}", 0.1) for k in range(10))
+    rows = budget_rows(replace(MADE.budget, shares=many), MADE.circuit)
+    assert len(rows) == 9
+    assert rows[-1]["ref"] == "2 others"
+    assert plain(rows[-1]["share"]) == "20 %"
+
+
+def test_the_page_says_all_of_it_and_leaves_out_what_is_not_known() -> None:
+    text, bare = page(MADE), page(BARE)
+    for heading in ("How good any choice could be", "Allowance for the op-amps", "Error budget"):
+        assert heading in text
+        assert heading not in bare
+
+
+def test_the_command_that_repeats_the_design_has_its_effort() -> None:
+    assert "--seed 1 --effort 4 " in page(replace(MADE, effort=4))
+    assert "--effort" not in page(MADE)
+
+
+def test_the_record_holds_the_same_for_programs() -> None:
+    record = json.loads(record_text(design_record(MADE, boards.verification(MADE))))
+    assert record["choice"] == {
+        "rms_error": 2e-3,
+        "lower_bound": 1.6e-3,
+        "gap": pytest.approx(0.2),
+        "proven": False,
+        "exhausted": False,
+        "binding": [{"refs": ["R2", "C1"], "rms_error": 1.6e-3}],
+        "effort": 1,
+    }
+    allowance = record["op_amp_allowance"]
+    assert allowance["with"]["rms_error"] == pytest.approx(MADE.nominal.rms, rel=1e-9)
+    assert [o["factor"] for o in allowance["gain_bandwidth_off"]] == [0.5, 1.5]
+    budget = record["budget"]
+    assert budget["values_share"] + budget["tolerance_share"] == pytest.approx(1)
+    assert sum(s["share"] for s in budget["shares"]) == pytest.approx(1)
+    assert budget["tighter_part"]["refs"] == list(MADE.budget.part.refs)
+    assert [k["kind"] for k in budget["tighter_kinds"]] == ["resistor", "capacitor"]
+
+
+def test_the_record_leaves_out_what_is_not_known() -> None:
+    record = design_record(BARE, boards.verification(BARE))
+    assert not {"choice", "op_amp_allowance", "budget"} & record.keys()
