@@ -17,6 +17,7 @@ from numpy.typing import NDArray
 
 from synth.candidates import Sketch, choose_form
 from synth.choosing import Choice, choose_values
+from synth.choosing.supply import allotted
 from synth.circuit import Circuit
 from synth.evidence import Check, response_error
 from synth.graph import BlockGraph
@@ -92,7 +93,7 @@ def design(
     response = wanted.response(frequency)
     say("values", 0, 1)
     choice = _choose(sketch, job, response, frequency, seed)
-    circuit = choice.circuit
+    circuit = allotted(choice.circuit)
     program = compile_circuit(circuit)
     tolerance = run_boards(
         program,

@@ -11,6 +11,7 @@ from synth.choosing.certificate import Certificate, certify
 from synth.choosing.grid import ValueGrid
 from synth.choosing.model import Goal, LevelLimits, LinearModel, compensation
 from synth.choosing.search import search_values
+from synth.choosing.supply import Supply, check_supply
 from synth.circuit import Circuit
 from synth.job import Accept
 from synth.nodal import NodalProgram, compile_circuit
@@ -81,7 +82,13 @@ def choose_values(
         Of the random kicks.
     effort
         Pairs of steps the search evaluates; more take longer and find better values.
+
+    Raises
+    ------
+    RealizationError
+        The stock has fewer parts than the circuit needs.
     """
+    check_supply(circuit.passives)
     program = compile_circuit(circuit)
     grid = ValueGrid(circuit.passives)
     goal = Goal(target, frequency_hz)
@@ -90,6 +97,7 @@ def choose_values(
     logs = np.log([p.ideal for p in circuit.passives])
     ideal = compile_circuit(with_ideal_op_amps(circuit))
     limits = _limits(circuit, logs, level_limits or {})
+    supply = Supply.of(grid)
     outcome = search_values(
         program,
         grid,
@@ -97,6 +105,7 @@ def choose_values(
         start_logs=logs,
         ideal=ideal,
         limits=limits,
+        supply=supply,
         seed=seed,
         effort=effort,
     )
@@ -107,6 +116,7 @@ def choose_values(
         both = np.array([grid.values_at(k) for k in (index, certificate.better)])
         squares = goal.mean_squares(program, both)
         allowed = limits is None or limits.hold(np.log(both[1]))
+        allowed = allowed and (supply is None or supply.suffices(certificate.better))
         if squares[1] < squares[0] and allowed:
             index = certificate.better
             certificate = _certified(program, ideal, grid, goal, index)

@@ -21,6 +21,7 @@ from synth.choosing.binding import Frontier, binding_order
 from synth.choosing.descent import Neighbourhood
 from synth.choosing.grid import ValueGrid
 from synth.choosing.model import Goal, LevelLimits, LinearModel, compensation
+from synth.choosing.supply import Supply
 from synth.nodal import NodalProgram
 
 __all__ = ["SearchOutcome", "search_values"]
@@ -91,6 +92,7 @@ def search_values(
     start_logs: Real,
     ideal: NodalProgram,
     limits: LevelLimits | None,
+    supply: Supply | None,
     seed: int,
     effort: int,
 ) -> SearchOutcome:
@@ -106,12 +108,16 @@ def search_values(
         The same circuit with ideal op-amps.
     limits
         How far op-amp outputs may rise; a candidate beyond them is not taken.
+    supply
+        How many parts of every value there are; None for enough.
     effort
         Pairs of steps to be evaluated in all rounds together, about; the search stops by
         this count alone, or when rounds no longer gain.
     """
     rng = np.random.default_rng(seed)
     best = grid.nearest(start_logs)
+    if supply is not None:
+        best = supply.repaired(best, LinearModel.about(program, np.exp(start_logs), goal))
     best_square = float(goal.mean_squares(program, grid.values_at(best)[None, :])[0])
     reference = np.exp(start_logs)
     looked = 0
@@ -119,7 +125,7 @@ def search_values(
         model = LinearModel.about(program, reference, goal)
         skeleton = LinearModel.about(program, reference, goal, jacobian=ideal)
         starts = binding_starts(grid, skeleton)
-        one = _Round(grid, model, limits=limits, starts=starts, kick=kick, rng=rng)
+        one = _Round(grid, model, limits=limits, supply=supply, starts=starts, kick=kick, rng=rng)
         pool = one.run(best, effort // len(KICKS))
         looked += one.looked
         members = pool.members()
@@ -171,14 +177,15 @@ class _Round:
         model: LinearModel,
         *,
         limits: LevelLimits | None,
+        supply: Supply | None,
         starts: BindingStarts | None,
         kick: float,
         rng: np.random.Generator,
     ) -> None:
-        self.grid, self.model, self.limits = grid, model, limits
+        self.grid, self.model, self.limits, self.supply = grid, model, limits, supply
         self.starts, self.kick, self.rng = starts, kick, rng
-        self.coarse = Neighbourhood(grid, model)
-        self.fine = Neighbourhood(grid, model, quads=160)
+        self.coarse = Neighbourhood(grid, model, supply=supply)
+        self.fine = Neighbourhood(grid, model, quads=160, supply=supply)
         free = grid.resistors
         self.compensation = np.zeros((free.size, model.offset.size))
         self.compensation[free] = compensation(model.matrix[:, free])
@@ -204,6 +211,8 @@ class _Round:
         return pool
 
     def _descend(self, neighbourhood: Neighbourhood, index: Index) -> tuple[Index, float]:
+        if self.supply is not None:
+            index = self.supply.repaired(index, self.model)
         index, cost, looked = neighbourhood.descend(index)
         self.looked += looked * neighbourhood.pairs
         return index, cost
