@@ -10,7 +10,7 @@ them by kappa = 1 - Rs G_ideal, restores every weight exactly.
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 from synth.cells import (
     BuiltCell,
@@ -27,7 +27,7 @@ from synth.graph import INPUT, Block, BlockGraph
 from synth.job import Job
 from synth.polarity import Polarity
 
-__all__ = ["Sizing", "map_graph"]
+__all__ = ["Sizing", "input_factor", "map_graph"]
 
 LOAD_REF = "RLOAD"
 SOURCE_REF = "RSOURCE"
@@ -37,12 +37,18 @@ SOURCE_REF = "RSOURCE"
 class Sizing:
     """The impedance of every cell.
 
-    `capacitors` [F] by integrator, `feedback` [ohm] by adder, `inverters` [ohm] for all.
+    `capacitors` [F] by integrator, `feedback` [ohm] by adder, `inverters` [ohm] for all but
+    those in `own_inverters`, by their source.
     """
 
     capacitors: Mapping[str, float]
     feedback: Mapping[str, float]
     inverters: float
+    own_inverters: Mapping[str, float] = field(default_factory=dict)
+
+    def inverter(self, source: str) -> float:
+        """Resistance of the inverter of a source [ohm]."""
+        return self.own_inverters.get(source, self.inverters)
 
 
 def map_graph(graph: BlockGraph, polarity: Polarity, sizing: Sizing, job: Job) -> Circuit:
@@ -55,7 +61,7 @@ def map_graph(graph: BlockGraph, polarity: Polarity, sizing: Sizing, job: Job) -
     """
     board, signal = job.board, job.signal
     rules = CellRules(resistors=board.resistors, capacitors=board.capacitors, op_amp=board.op_amp)
-    wiring = _Wiring(graph, polarity, sizing, _input_factor(graph, polarity, sizing, job))
+    wiring = _Wiring(graph, polarity, sizing, input_factor(graph, polarity, sizing, job))
     wiring.source_net = "src" if signal.source_resistance else "in"
     numbering = Numbering()
     built: list[BuiltCell] = []
@@ -145,7 +151,7 @@ class _Wiring:
 
     def inverter(self, numbering: Numbering, source: str, rules: CellRules) -> BuiltCell:
         net = self.direct_net(source)
-        value = self.sizing.inverters
+        value = self.sizing.inverter(source)
         return inverter_cell(
             numbering,
             block=source,
@@ -163,12 +169,18 @@ def _ideal_resistance(block: Block, weight: float, sizing: Sizing) -> float:
     return sizing.feedback[block.name] / abs(weight)
 
 
-def _input_factor(graph: BlockGraph, polarity: Polarity, sizing: Sizing, job: Job) -> float:
-    """kappa, by which the resistors on the source's net are multiplied."""
+def input_factor(graph: BlockGraph, polarity: Polarity, sizing: Sizing, job: Job) -> float:
+    """kappa, by which the resistors on the source's net are multiplied.
+
+    Raises
+    ------
+    RealizationError
+        The source resistance is too large for them.
+    """
     resistance = job.signal.source_resistance
     if not resistance:
         return 1.0
-    conductance = 1 / sizing.inverters if INPUT in polarity.inverters else 0.0
+    conductance = 1 / sizing.inverter(INPUT) if INPUT in polarity.inverters else 0.0
     for block, term in graph.readers(INPUT):
         if polarity.direct(block.name, INPUT, float(term.weight)):
             conductance += 1 / _ideal_resistance(block, float(term.weight), sizing)
