@@ -32,6 +32,9 @@ Index = NDArray[np.intp]
 # Size of the kicks in each round, as a ratio of the value.
 KICKS = (0.25, 0.12, 0.06, 0.04)
 
+# Where the steps between values are coarser than this, in ln, kicks are no smaller than they.
+COARSE_STEP = 0.15
+
 # Room below the ceilings that a kick leaves for the descent, in ln.
 HEADROOM = 0.02
 
@@ -43,6 +46,10 @@ PAIRS_PER_KICK = 10_000
 BINDING_SHARE = 0.5
 BINDING_STARTS = 400
 BINDING_BEAM = 4000
+
+# Steps along the list of values; from a stock, also over values that are used up.
+REACH = (1, 2, 3)
+REACH_OF_STOCK = (1, 2, 3, 4, 6)
 
 # How many candidates of a round the nodal engine judges.
 CANDIDATES = 24
@@ -121,7 +128,8 @@ def search_values(
     best_square = float(goal.mean_squares(program, grid.values_at(best)[None, :])[0])
     reference = np.exp(start_logs)
     looked = 0
-    for kick in KICKS:
+    least = coarse_step(grid)
+    for kick in (max(k, least) for k in KICKS):
         model = LinearModel.about(program, reference, goal)
         skeleton = LinearModel.about(program, reference, goal, jacobian=ideal)
         starts = binding_starts(grid, skeleton)
@@ -137,6 +145,13 @@ def search_values(
             best, best_square = members[k], float(squares[k])
         reference = grid.values_at(best)
     return SearchOutcome(index=best, rms=float(np.sqrt(best_square)), looked=looked)
+
+
+def coarse_step(grid: ValueGrid) -> float:
+    """The median step between values of the resistors, in ln, where it is coarse; else 0."""
+    lists = [v for v, free in zip(grid.values, grid.resistors, strict=True) if free and v.size > 1]
+    steps = [float(np.median(np.diff(np.log(values)))) for values in lists]
+    return max((s for s in steps if s > COARSE_STEP), default=0.0)
 
 
 @dataclass(frozen=True, eq=False)
@@ -184,8 +199,9 @@ class _Round:
     ) -> None:
         self.grid, self.model, self.limits, self.supply = grid, model, limits, supply
         self.starts, self.kick, self.rng = starts, kick, rng
-        self.coarse = Neighbourhood(grid, model, supply=supply)
-        self.fine = Neighbourhood(grid, model, quads=160, supply=supply)
+        reach = REACH if supply is None else REACH_OF_STOCK
+        self.coarse = Neighbourhood(grid, model, reach, supply=supply)
+        self.fine = Neighbourhood(grid, model, reach, quads=160, supply=supply)
         free = grid.resistors
         self.compensation = np.zeros((free.size, model.offset.size))
         self.compensation[free] = compensation(model.matrix[:, free])
