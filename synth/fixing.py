@@ -3,9 +3,10 @@
 References follow from the form alone, not from any value: a circuit of unit impedances tells
 which part a reference names.  A fixed capacitor or feedback resistor sets the size of its
 block, a fixed input resistor the resistance of one term, a resistor of an inverter both
-resistors of it.  Behind a source resistance the resistance of a term is that of its part
-over the factor kappa of `synth.mapping`, which the scaling decides; so the caller scales,
-reads kappa, and scales again.
+resistors of it; where both are fixed and differ, the resistors around make up for it.  Behind
+a source resistance the resistance of a term is that of its part over the factor kappa of
+`synth.mapping`, which the scaling decides; so the caller scales, reads kappa, and scales
+again.
 """
 
 from __future__ import annotations
@@ -23,6 +24,9 @@ from synth.polarity import Polarity
 __all__ = ["FixedParts", "fixed_parts", "unit_circuit"]
 
 
+Place = tuple[str, int]
+
+
 @dataclass(frozen=True, kw_only=True)
 class FixedParts:
     """The fixed values of one form.
@@ -34,7 +38,10 @@ class FixedParts:
     terms
         Resistance [ohm] by block and place among its terms, before kappa.
     inverters
-        Resistance [ohm] by the source that is inverted, before kappa.
+        Input (before kappa) and feedback resistance [ohm] by the source that is inverted.
+    factors
+        By block and place: what the resistance of a term is multiplied by for inverters whose
+        two resistors differ.
     refs
         Reference by block, or by block and place, for messages.
     values
@@ -44,9 +51,10 @@ class FixedParts:
     """
 
     sizes: Mapping[str, float] = field(default_factory=dict)
-    terms: Mapping[tuple[str, int], float] = field(default_factory=dict)
-    inverters: Mapping[str, float] = field(default_factory=dict)
-    refs: Mapping[str | tuple[str, int], str] = field(default_factory=dict)
+    terms: Mapping[Place, float] = field(default_factory=dict)
+    inverters: Mapping[str, tuple[float, float]] = field(default_factory=dict)
+    factors: Mapping[Place, float] = field(default_factory=dict)
+    refs: Mapping[str | Place, str] = field(default_factory=dict)
     values: Mapping[str, float] = field(default_factory=dict)
     behind_source: frozenset[str] = frozenset()
 
@@ -78,13 +86,12 @@ def fixed_parts(circuit: Circuit, job: Job, *, factor: float = 1.0) -> FixedPart
     Raises
     ------
     JobError
-        A reference the circuit does not have; the two resistors of an inverter fixed at
-        different values.
+        A reference the circuit does not have.
     """
     sizes: dict[str, float] = {}
-    terms: dict[tuple[str, int], float] = {}
-    inverters: dict[str, tuple[str, float]] = {}
-    refs: dict[str | tuple[str, int], str] = {}
+    terms: dict[Place, float] = {}
+    ends: dict[str, dict[str, float]] = {}
+    refs: dict[str | Place, str] = {}
     behind: set[str] = set()
     for ref, value in job.board.fixed:
         cell = _cell_of(circuit, ref)
@@ -93,29 +100,56 @@ def fixed_parts(circuit: Circuit, job: Job, *, factor: float = 1.0) -> FixedPart
             behind.add(ref)
         ideal = value / factor if ref in behind else value
         if cell.kind == "inverter":
-            other, stated = inverters.setdefault(cell.block, (ref, value))
-            if stated != value:
-                raise JobError(
-                    f"got {value:g} ohm beside {other} = {stated:g} ohm, expected equal values: "
-                    f"they are the two resistors of the inverter of {cell.block}",
-                    key=f"board.fixed.{ref}",
-                )
+            ends.setdefault(cell.block, {})["back" if ref == cell.feedback else "in"] = ideal
         elif ref == cell.feedback:
             sizes[cell.block], refs[cell.block] = ideal, ref
         else:
             place = (cell.block, cell.inputs.index(ref))
             terms[place], refs[place] = ideal, ref
+    # One fixed resistor of an inverter sets both.
+    inverters = {
+        block: (found.get("in", found.get("back", 0.0)), found.get("back", found.get("in", 0.0)))
+        for block, found in ends.items()
+    }
     return FixedParts(
         sizes=sizes,
         terms=terms,
-        inverters={
-            block: value / factor if ref in behind else value
-            for block, (ref, value) in inverters.items()
-        },
+        inverters=inverters,
+        factors=_factors(circuit, inverters),
         refs=refs,
         values=dict(job.board.fixed),
         behind_source=frozenset(behind),
     )
+
+
+def _factors(circuit: Circuit, inverters: Mapping[str, tuple[float, float]]) -> dict[Place, float]:
+    """What the resistances are multiplied by for inverters of a gain other than -1.
+
+    What reads the inverter of a source sees its signal times the gain.  Where the output of the
+    board comes from an inverter, the block before it is lower by the gain: resistors into it are
+    larger, those that read it directly smaller.
+    """
+    gains = {source: back / inward for source, (inward, back) in inverters.items()}
+    gains = {source: gain for source, gain in gains.items() if gain != 1.0}
+    if not gains:
+        return {}
+    inverted = {c.output: c.block for c in circuit.cells if c.kind == "inverter"}
+    direct = {c.output: c.block for c in circuit.cells if c.kind != "inverter"}
+    last = inverted.get(circuit.output_net, "")
+    factors: dict[Place, float] = {}
+    for cell in circuit.cells:
+        if cell.kind == "inverter":
+            continue
+        for place, ref in enumerate(cell.inputs):
+            net = circuit.by_ref[ref].nets[0]
+            factor = gains.get(inverted.get(net, ""), 1.0)
+            before = last in (direct.get(net), inverted.get(net))
+            if last and before:
+                factor /= gains.get(last, 1.0)
+            if last and cell.block == last:
+                factor *= gains.get(last, 1.0)
+            factors[cell.block, place] = factor
+    return factors
 
 
 def _cell_of(circuit: Circuit, ref: str) -> Cell:

@@ -146,6 +146,7 @@ def region(variables: Variables, job: Job, peaks: SignalPeaks, held: FixedParts)
                 fixed[len(rows)] = held.refs[block.name, place]
                 low = high = math.log(held.terms[block.name, place])
             r, exponents = variables.resistance(block, term)
+            r *= held.factors.get((block.name, place), 1.0)
             add(exponents, low - math.log(r), high - math.log(r), f"{block.name} {term.source}")
     marks = np.array([k in fixed for k in range(len(rows))])
     return Region(np.array(rows), np.array(lower), np.array(upper), tuple(names), marks, fixed)

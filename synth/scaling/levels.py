@@ -120,6 +120,7 @@ def scale(
             feedback=feedback,
             inverters=_inverter_value(job),
             own_inverters=held.inverters,
+            factors=held.factors,
         ),
         predicted_error=math.sqrt(max(problem.error(v)[0], 0.0)),
     )
