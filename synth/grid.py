@@ -83,7 +83,7 @@ def band_grid(band_hz: tuple[float, float], points_per_decade: int) -> NDArray[n
         )
     if high / low < 1 + NARROWEST_BAND:
         raise JobError(
-            f"got {low!r} Hz to {high!r} Hz, expected the highest at least "
+            f"got {band_hz[0]!r} Hz to {band_hz[1]!r} Hz, expected the highest at least "
             f"{100 * NARROWEST_BAND:g} % above the lowest",
             key="signal.band",
         )

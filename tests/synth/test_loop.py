@@ -125,16 +125,15 @@ def test_gain_that_may_not_fall_is_a_gain_margin() -> None:
 
 
 def test_phase_is_a_distance_either_way_in_a_stable_loop() -> None:
-    """A resonance of the plant that crosses 1 at a phase beyond -180 deg, harmless: its
-    distance counts, with no sign against it."""
-    num = list(np.polymul([60.0], [-0.005, 1.0]))
-    den = list(np.polymul([1.0, 10.0, 0.0], [1.0, 0.04, 400.0]))
-    found = loop_margins(loop_of([100 * c for c in num], den), ONE)
-    roots = np.roots(np.polyadd([100 * c for c in num], den))
-    assert found.unstable_poles == int(np.sum(roots.real > 0))
-    pm = control.stability_margins(control.tf([100 * c for c in num], den))[1]
-    expected = abs(pm) if found.unstable_poles == 0 else pm
-    assert found.phase_margin_deg == pytest.approx(expected, rel=1e-6)
+    """A delayed resonance that crosses 1 on its way up at -202 deg and turns through -360 deg
+    harmlessly: 22 deg of lead, not of lag, would be too much, and they are its margin."""
+    loop = loop_of([0.1], [1, 0.02, 1], delay=np.radians(200.0))
+    found = loop_margins(loop, ONE)
+    assert found.unstable_poles == 0
+    s = 2j * np.pi * found.crossover_hz
+    phase = np.angle(-0.1 * np.exp(-s * loop.delay) / (s * s + 0.02 * s + 1), deg=True)
+    assert -30 < phase < -5
+    assert found.phase_margin_deg == pytest.approx(-phase, rel=1e-6)
 
 
 @settings(deadline=None, derandomize=True, max_examples=40)
