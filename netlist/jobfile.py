@@ -12,15 +12,17 @@ import tomllib
 from collections.abc import Mapping
 from dataclasses import replace
 from decimal import Decimal
+from functools import partial
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from netlist.jobvalues import unknown_key
+from netlist.jobvalues import read_fixed, unknown_key
 from netlist.mistakes import Mistakes
+from netlist.textfile import read_text_file
 from synth.errors import JobError
 from synth.job import Accept, Board, Job, Loop, Signal
 from synth.op_amps import DEFAULT_CLASS, op_amp_class
-from synth.parts import OpAmp, PartRule
+from synth.parts import OpAmp, PartRule, StockItem
 from synth.quantities import what_came
 
 if TYPE_CHECKING:
@@ -52,21 +54,17 @@ def read_job(path: str | Path) -> Job:
         The file cannot be read, or what `parse_job` refuses.
     """
     file = Path(path)
-    data = _bytes_of(file)
-    if len(data) > LARGEST_FILE:
-        raise JobError(f"{file}: got more than {LARGEST_FILE} bytes, expected a job file")
-    try:
-        text = data.decode("utf-8-sig")
-    except UnicodeDecodeError as error:
-        raise JobError(
-            f"{file}: got a byte {data[error.start]:#04x} at position {error.start}, "
-            "expected text in UTF-8"
-        ) from None
-    return parse_job(text, name=str(file))
+    text = read_text_file(file, largest=LARGEST_FILE, expected="a job file", kind=" in TOML")
+    return parse_job(text, name=str(file), folder=file.parent)
 
 
-def parse_job(text: str, *, name: str = "job") -> Job:
+def parse_job(text: str, *, name: str = "job", folder: str | Path | None = None) -> Job:
     """The job a TOML text states; `name` stands for the file in messages.
+
+    Parameters
+    ----------
+    folder
+        Where the files the job names lie; without one, a job that names a file is refused.
 
     Raises
     ------
@@ -79,7 +77,7 @@ def parse_job(text: str, *, name: str = "job") -> Job:
     if table is None:
         mistakes.stop()
     signal = mistakes.attempt("signal", lambda: Signal(**table.signal.given()))
-    board = _board(table.board, mistakes)
+    board = _board(table.board, mistakes, None if folder is None else Path(folder))
     accept = mistakes.attempt("accept", lambda: Accept(**table.accept.given()))
     loop = None
     if (plant := table.loop) is not None:
@@ -98,23 +96,6 @@ def parse_job(text: str, *, name: str = "job") -> Job:
         notices=notices,
         **named,
     )
-
-
-def _bytes_of(file: Path) -> bytes:
-    """The content of a file, cut off when it is far too long for a job."""
-    try:
-        kind = "a folder" if file.is_dir() else "no regular file"
-        regular = file.is_file() or not file.exists()
-        if regular:
-            with file.open("rb") as stream:
-                return stream.read(LARGEST_FILE + 1)
-    except FileNotFoundError:
-        raise JobError(f"{file}: no such file, expected a job file in TOML") from None
-    except OSError as error:
-        raise JobError(f"{what_came(str(file))}: cannot be read: {error.strerror}") from None
-    except ValueError as error:
-        raise JobError(f"{what_came(str(file))}: cannot be read: {error}") from None
-    raise JobError(f"{file}: got {kind}, expected a job file")
 
 
 def _parsed(text: str, name: str) -> dict[str, Any]:
@@ -169,26 +150,62 @@ def _problem(
     return f"got {what_came(error['input'])}, expected a table [{'.'.join(path)}]"
 
 
-def _board(table: BoardTable, mistakes: Mistakes) -> Board | None:
+def _board(table: BoardTable, mistakes: Mistakes, folder: Path | None) -> Board | None:
     """The board with the defaults of everything not stated."""
+    stock = mistakes.attempt("board.stock", lambda: _stock(table.stock, folder))
+    held: Mapping[str, tuple[StockItem, ...]] = stock or {}
     resistors = mistakes.attempt(
-        "board.resistors", lambda: replace(DEFAULT_RESISTORS, **table.resistors.given())
+        "board.resistors",
+        lambda: _rule(DEFAULT_RESISTORS, table.resistors.given(), held),
     )
     capacitors = mistakes.attempt(
-        "board.capacitors", lambda: replace(DEFAULT_CAPACITORS, **table.capacitors.given())
+        "board.capacitors",
+        lambda: _rule(DEFAULT_CAPACITORS, table.capacitors.given(), held),
     )
+    fixed = [
+        mistakes.attempt(f"board.fixed.{ref}", partial(read_fixed, ref, value))
+        for ref, value in table.fixed.items()
+    ]
     op_amp = mistakes.attempt("board.op_amp", lambda: _op_amp(table.op_amp.given()))
-    rest = {k: v for k, v in table.given().items() if k in ("supply", "form", "inverted")}
+    plain = ("supply", "form", "inverted", "share_values", "pairs")
+    rest = {k: v for k, v in table.given().items() if k in plain}
     if "form" in rest:
         from synth.forms import check_form_name
 
         mistakes.attempt("board.form", lambda: check_form_name(rest["form"]))
-    if resistors is None or capacitors is None or op_amp is None:
+    if resistors is None or capacitors is None or op_amp is None or stock is None:
         return None
     return mistakes.attempt(
         "board",
-        lambda: Board(op_amp=op_amp, resistors=resistors, capacitors=capacitors, **rest),
+        lambda: Board(
+            op_amp=op_amp,
+            resistors=resistors,
+            capacitors=capacitors,
+            fixed=tuple(pair for pair in fixed if pair),
+            **rest,
+        ),
     )
+
+
+def _stock(stated: str | None, folder: Path | None) -> dict[str, tuple[StockItem, ...]]:
+    """What the drawer holds, by kind; nothing without one."""
+    if stated is None:
+        return {}
+    if folder is None:
+        raise JobError(
+            f"got {what_came(stated)}, but this job comes without a folder to look in; "
+            "expected a job read from a file"
+        )
+    from netlist.stockfile import read_stock
+
+    return read_stock(folder / stated)
+
+
+def _rule(
+    default: PartRule, given: dict[str, Any], stock: Mapping[str, tuple[StockItem, ...]]
+) -> PartRule:
+    """A rule as stated; a stock of its kind stands in for the series."""
+    return replace(default, stock=stock.get(default.kind, ()), **given)
 
 
 def _op_amp(given: dict[str, Any]) -> OpAmp:

@@ -157,6 +157,12 @@ class BoardTable(Table):
     supply: Rails = None
     form: Text = None
     inverted: Text = None
+    stock: Text = None
+    fixed: Annotated[Mapping[str, object], PlainValidator(jobvalues.read_table)] = Field(
+        default_factory=dict
+    )
+    share_values: Annotated[bool, PlainValidator(jobvalues.read_switch)] = False
+    pairs: Annotated[bool, PlainValidator(jobvalues.read_switch)] = False
     resistors: ResistorTable = ResistorTable()
     capacitors: CapacitorTable = CapacitorTable()
     op_amp: OpAmpTable = OpAmpTable()

@@ -8,31 +8,37 @@ from __future__ import annotations
 
 import difflib
 import math
+import re
 from collections.abc import Callable, Iterable, Mapping
 from fractions import Fraction
 from typing import TypeVar
 
 from synth.errors import JobError
-from synth.quantities import parse, parse_exact, parse_rails, what_came
+from synth.quantities import marking, parse, parse_exact, parse_rails, what_came
 
 __all__ = [
     "RootEntry",
     "read_band",
     "read_coefficients",
     "read_expression",
+    "read_fixed",
     "read_gain",
     "read_gain_at",
     "read_parameters",
+    "read_part_value",
     "read_quantity",
     "read_rails",
     "read_roots",
     "read_switch",
+    "read_table",
     "read_text",
     "unknown_key",
 ]
 
 LONGEST_TEXT = 200  # characters of a title or a name
 MOST_ENTRIES = 33  # of a list: far above any order that can be built, few enough to be fast
+
+_FIXABLE = re.compile(r"[RC][1-9][0-9]{0,4}")
 
 T = TypeVar("T")
 RootEntry = tuple[Fraction, Fraction | float | None]
@@ -121,6 +127,33 @@ def read_parameters(value: object) -> dict[str, Fraction | str]:
         except JobError as error:
             raise JobError(f"{what_came(name)}: {error.problem} or an expression") from None
     return out
+
+
+def read_table(value: object) -> Mapping[str, object]:
+    """A table whose keys are names of the user's own."""
+    if not isinstance(value, Mapping):
+        raise JobError(f"got {what_came(value)}, expected a table such as {{C1 = '10 nF'}}")
+    return value
+
+
+def read_part_value(value: object, kind: str) -> float:
+    """A resistance [ohm] or a capacitance [F] a part can have: positive, of at most four digits,
+    as many as a part is marked with."""
+    number = parse(value, "ohm" if kind == "resistor" else "F")
+    if number == 0:
+        raise JobError(f"got {what_came(value)}, expected a value above 0")
+    try:
+        marking(number, kind)
+    except JobError:
+        raise JobError(f"got {what_came(value)}, expected at most four digits") from None
+    return number
+
+
+def read_fixed(ref: str, value: object) -> tuple[str, float]:
+    """A reference and the value of its part: ohm behind an R, farad behind a C."""
+    if not _FIXABLE.fullmatch(ref):
+        raise JobError(f"got the reference {what_came(ref)}, expected one such as 'R3' or 'C1'")
+    return ref, read_part_value(value, "resistor" if ref.startswith("R") else "capacitor")
 
 
 def unknown_key(name: str, known: Iterable[str], *, elsewhere: Iterable[str] = ()) -> str:

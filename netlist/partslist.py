@@ -51,7 +51,7 @@ class PartLine:
     marking
         Value code, then dielectric and rating; or the class of an op-amp.
     series
-        Of preferred numbers, or ``""``.
+        Of preferred numbers, ``"stock"``, ``"fixed"`` for a value by hand of no series, or ``""``.
     tolerance
         A ratio, or None.
     note
@@ -129,8 +129,8 @@ def _grouped(parts: tuple[Passive, ...], across: float) -> Iterator[PartLine]:
     """Identical resistors, then identical capacitors, by rising value."""
     groups: dict[tuple[str, float, str, float], list[str]] = {}
     for part in parts:
-        series = part.rule.series if part.rule else ""
-        groups.setdefault((part.kind, part.value, series, part.tolerance), []).append(part.ref)
+        key = part.kind, part.value, part.source, part.tolerance
+        groups.setdefault(key, []).append(part.ref)
     for kind in ("resistor", "capacitor"):
         for key in sorted(k for k in groups if k[0] == kind):
             _, value, series, tolerance = key

@@ -117,8 +117,9 @@ def _components(design: Design) -> list[dict[str, object]]:
             "kind": p.kind,
             "value": p.value,
             "ideal": p.ideal,
-            "series": p.rule.series if p.rule else None,
+            "series": p.source or None,
             "tolerance": p.tolerance,
+            "fixed": p.fixed,
             "nets": list(p.nets),
             "sets": p.sets,
         }
@@ -132,6 +133,7 @@ def _components(design: Design) -> list[dict[str, object]]:
             "ideal": None,
             "series": None,
             "tolerance": None,
+            "fixed": False,
             "nets": [a.plus, a.minus, a.output],
             "sets": a.sets,
         }

@@ -8,22 +8,28 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from synth.choosing.supply import check_supply
 from synth.circuit import Circuit
-from synth.errors import RealizationError
+from synth.errors import JobError, RealizationError
+from synth.fixing import fixed_parts, unit_circuit
 from synth.forms import FORMS, check_form_name, realize
 from synth.graph import BlockGraph
 from synth.job import Job
-from synth.mapping import map_graph
+from synth.mapping import input_factor, map_graph
 from synth.nodal import compile_circuit
 from synth.peaks import SignalPeaks, signal_peaks
 from synth.polarity import Polarity, choose_polarity
 from synth.results import Candidate
-from synth.scaling import scale
+from synth.scaling import Scaled, scale
 from synth.tolerance import predicted_spread
 
 __all__ = ["Sketch", "choose_form", "sketch_form"]
 
 Real = NDArray[np.float64]
+
+# Fixed resistors behind a source resistance: scalings until its factor settles this closely.
+FACTOR_ROUNDS = 5
+FACTOR_SETTLED = 1e-4
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -71,14 +77,15 @@ def sketch_form(job: Job, form: str, frequency_hz: Real) -> Sketch:
     ------
     RealizationError
         The form does not exist for this target or does not fit the parts.
+    JobError
+        The job fixes a part this form does not have.
     """
     graph = realize(job.target, form)
     polarity = choose_polarity(graph, inverted=job.board.inverted)
     peaks = signal_peaks(graph, job.target, band_hz=job.signal.band_hz, swing=job.signal.swing)
     # Levels see the response at a part of the frequencies, the spread needs every peak of it.
     few = frequency_hz[:: max(1, frequency_hz.size // 200)]
-    scaled = scale(graph, polarity, job, peaks, few)
-    circuit = map_graph(scaled.graph, polarity, scaled.sizing, job)
+    scaled, circuit = _scaled(graph, polarity, job, peaks, few)
     tolerances = np.array([p.tolerance for p in circuit.passives])
     sensitivities = compile_circuit(circuit).sensitivities(frequency_hz)
     spread = predicted_spread(sensitivities, tolerances)
@@ -94,6 +101,24 @@ def sketch_form(job: Job, form: str, frequency_hz: Real) -> Sketch:
     )
 
 
+def _scaled(
+    graph: BlockGraph, polarity: Polarity, job: Job, peaks: SignalPeaks, frequency_hz: Real
+) -> tuple[Scaled, Circuit]:
+    """Levels and impedances with the values the job fixes, and the circuit with ideal values."""
+    units = unit_circuit(graph, polarity, job)
+    factor = 1.0
+    held = fixed_parts(units, job)
+    check_supply(held.marked(units).passives)
+    for _ in range(FACTOR_ROUNDS):
+        scaled = scale(graph, polarity, job, peaks, frequency_hz, held=held)
+        before = factor
+        factor = input_factor(scaled.graph, polarity, scaled.sizing, job)
+        if not held.behind_source or abs(factor / before - 1) < FACTOR_SETTLED:
+            break
+        held = fixed_parts(units, job, factor=factor)
+    return scaled, held.marked(map_graph(scaled.graph, polarity, scaled.sizing, job))
+
+
 def choose_form(
     job: Job, frequency_hz: Real, *, progress: Callable[[int, int], None] | None = None
 ) -> tuple[Sketch, tuple[Candidate, ...]]:
@@ -104,7 +129,7 @@ def choose_form(
     Raises
     ------
     JobError
-        The job names a form that does not exist.
+        The job names a form that does not exist, or fixes a part that no form has.
     RealizationError
         The form the job names does not fit, or none does; the message has each reason.
     """
@@ -112,14 +137,17 @@ def choose_form(
     names = list(FORMS) if job.board.form == "auto" else [job.board.form]
     sketches: list[Sketch] = []
     candidates: list[Candidate] = []
+    unreadable: list[JobError] = []
     for k, name in enumerate(names):
         if progress is not None:
             progress(k, len(names))
         try:
             sketch = sketch_form(job, name, frequency_hz)
-        except RealizationError as error:
+        except (JobError, RealizationError) as error:
             if len(names) == 1:
                 raise
+            if isinstance(error, JobError):
+                unreadable.append(error)
             candidates.append(
                 Candidate(
                     form=name,
@@ -138,6 +166,8 @@ def choose_form(
         for c in candidates:
             forms.setdefault(c.reason, []).append(c.form)
         reasons = "; ".join(f"{', '.join(names)}: {reason}" for reason, names in forms.items())
+        if len(unreadable) == len(candidates):
+            raise JobError(reasons, key="board.form")
         raise RealizationError(f"board.form: no form fits the parts: {reasons}")
 
     def spread(sketch: Sketch) -> tuple[float, int]:

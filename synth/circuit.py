@@ -45,6 +45,9 @@ class Passive:
         What the part sets, in words.
     fixed
         Whether the job states the value.
+    grade
+        Relative tolerance of this very part, where the stock holds its value in several; None:
+        that of the rule.
     """
 
     ref: str
@@ -55,11 +58,23 @@ class Passive:
     rule: PartRule | None
     sets: str = ""
     fixed: bool = False
+    grade: float | None = None
 
     @property
     def tolerance(self) -> float:
         """Relative tolerance, 0 for what is not on the board."""
+        if self.grade is not None:
+            return self.grade
         return self.rule.tolerance_of(self.value) if self.rule else 0.0
+
+    @property
+    def source(self) -> str:
+        """Where the value comes from: a series, ``"stock"``, ``"fixed"`` for one stated in the
+        job that is of no such series; ``""`` for what is not on the board."""
+        if self.rule is None:
+            return ""
+        stray = self.fixed and not bool((self.rule.values == self.value).any())
+        return "fixed" if stray else self.rule.source
 
     @property
     def on_board(self) -> bool:
@@ -222,7 +237,7 @@ class Circuit:
         return replace(
             self,
             passives=tuple(
-                replace(p, value=float(values[p.ref])) if p.ref in values else p
+                replace(p, value=float(values[p.ref]), grade=None) if p.ref in values else p
                 for p in self.passives
             ),
         )

@@ -19,6 +19,7 @@ from numpy.typing import NDArray
 from synth.allowance import op_amp_allowance
 from synth.candidates import Sketch, choose_form
 from synth.choosing import DEFAULT_EFFORT, Choice, choose_values, with_ideal_op_amps
+from synth.choosing.supply import allotted
 from synth.circuit import Cell, Circuit
 from synth.errors import JobError
 from synth.evidence import Check, response_error
@@ -100,7 +101,7 @@ def design(
     response = wanted.response(frequency)
     search = _Search(sketch, job, response, frequency, seed, effort * DEFAULT_EFFORT)
     choice, unaware = search.both(say)
-    circuit = choice.circuit
+    circuit = allotted(choice.circuit)
     program = compile_circuit(circuit)
     tolerance = run_boards(
         program,

@@ -7,13 +7,19 @@ Hz and carry ``_hz`` in their name.
 from __future__ import annotations
 
 import math
+import re
+from collections import Counter
 from dataclasses import dataclass, field
 
 from synth.errors import JobError
 from synth.parts import OpAmp, PartRule
+from synth.preferred import nearest
+from synth.quantities import show
 from synth.transfer import TransferFunction
 
 __all__ = ["Accept", "Board", "Job", "Loop", "Signal"]
+
+_FIXABLE = re.compile(r"[RC][1-9][0-9]{0,4}")
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -79,7 +85,8 @@ class Board:
     inverted
         ``"no"``: the output is H(s); ``"yes"``: it is -H(s); ``"either"``: as cheaper.
     fixed
-        References and the values [ohm], [F] they must have.
+        References and the values [ohm], [F] they must have: within the range of their kind and,
+        where there is a stock, in it; of a series they need not be.
     share_values
         Whether fewer distinct values are worth a slightly larger error.
     pairs
@@ -112,6 +119,42 @@ class Board:
         if self.inverted not in ("no", "yes", "either"):
             raise JobError(
                 f"got {self.inverted!r}, expected 'no', 'yes' or 'either'", key="board.inverted"
+            )
+        for ref, value in self.fixed:
+            self._check_fixed(ref, value)
+        used = Counter((ref[0], value) for ref, value in self.fixed)
+        for (letter, value), wanted in used.items():
+            count = self.rule_of(letter).count_of(value)
+            if count is not None and wanted > count:
+                refs = ", ".join(r for r, v in self.fixed if v == value and r[0] == letter)
+                raise JobError(
+                    f"got {refs} of {show(value, 'F' if letter == 'C' else 'ohm')}, expected at "
+                    f"most the {count} in the stock",
+                    key="board.fixed",
+                )
+
+    def rule_of(self, ref: str) -> PartRule:
+        """The rule for a part by its reference, ``"R7"`` or ``"C1"``."""
+        return self.capacitors if ref.startswith("C") else self.resistors
+
+    def _check_fixed(self, ref: str, value: float) -> None:
+        key = f"board.fixed.{ref}"
+        if not _FIXABLE.fullmatch(ref):
+            raise JobError(f"got {ref!r}, expected a reference such as 'R3' or 'C1'", key=key)
+        if [r for r, _ in self.fixed].count(ref) > 1:
+            raise JobError("got two values, expected one", key=key)
+        rule, unit = self.rule_of(ref), "F" if ref.startswith("C") else "ohm"
+        if not rule.smallest * (1 - 1e-9) <= value <= rule.largest * (1 + 1e-9):
+            raise JobError(
+                f"got {show(value, unit)}, expected {show(rule.smallest, unit)} to "
+                f"{show(rule.largest, unit)}, the range of {rule.kind}s",
+                key=key,
+            )
+        if rule.stock and not rule.lines_of(value):
+            near = show(nearest(rule.values, value), unit)
+            raise JobError(
+                f"got {show(value, unit)}, expected a value in the stock; the nearest is {near}",
+                key=key,
             )
 
     @property

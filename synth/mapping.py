@@ -10,7 +10,7 @@ them by kappa = 1 - Rs G_ideal, restores every weight exactly.
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 from synth.cells import (
     BuiltCell,
@@ -27,7 +27,7 @@ from synth.graph import INPUT, Block, BlockGraph
 from synth.job import Job
 from synth.polarity import Polarity
 
-__all__ = ["Sizing", "map_graph"]
+__all__ = ["Sizing", "input_factor", "map_graph"]
 
 LOAD_REF = "RLOAD"
 SOURCE_REF = "RSOURCE"
@@ -37,12 +37,30 @@ SOURCE_REF = "RSOURCE"
 class Sizing:
     """The impedance of every cell.
 
-    `capacitors` [F] by integrator, `feedback` [ohm] by adder, `inverters` [ohm] for all.
+    `capacitors` [F] by integrator, `feedback` [ohm] by adder, `inverters` [ohm] for all but
+    those in `own_inverters`, which has input and feedback resistance by the source.  Where
+    these differ, `factors` has what the resistance of a term, by block and place, is
+    multiplied by to make up for it.
     """
 
     capacitors: Mapping[str, float]
     feedback: Mapping[str, float]
     inverters: float
+    own_inverters: Mapping[str, tuple[float, float]] = field(default_factory=dict)
+    factors: Mapping[tuple[str, int], float] = field(default_factory=dict)
+
+    def inverter(self, source: str) -> tuple[float, float]:
+        """Input and feedback resistance of the inverter of a source [ohm]."""
+        return self.own_inverters.get(source, (self.inverters, self.inverters))
+
+    def resistance(self, block: Block, place: int) -> float:
+        """Resistance of a block's term [ohm], without a source resistance."""
+        weight = abs(float(block.terms[place].weight))
+        if block.is_integrator:
+            ideal = 1 / (weight * self.capacitors[block.name])
+        else:
+            ideal = self.feedback[block.name] / weight
+        return ideal * self.factors.get((block.name, place), 1.0)
 
 
 def map_graph(graph: BlockGraph, polarity: Polarity, sizing: Sizing, job: Job) -> Circuit:
@@ -55,7 +73,7 @@ def map_graph(graph: BlockGraph, polarity: Polarity, sizing: Sizing, job: Job) -
     """
     board, signal = job.board, job.signal
     rules = CellRules(resistors=board.resistors, capacitors=board.capacitors, op_amp=board.op_amp)
-    wiring = _Wiring(graph, polarity, sizing, _input_factor(graph, polarity, sizing, job))
+    wiring = _Wiring(graph, polarity, sizing, input_factor(graph, polarity, sizing, job))
     wiring.source_net = "src" if signal.source_resistance else "in"
     numbering = Numbering()
     built: list[BuiltCell] = []
@@ -112,11 +130,11 @@ class _Wiring:
 
     def inputs(self, block: Block) -> list[CellInput]:
         out: list[CellInput] = []
-        for term in block.terms:
+        for place, term in enumerate(block.terms):
             weight = float(term.weight)
             direct = self.polarity.direct(block.name, term.source, weight)
             net = self.direct_net(term.source) if direct else self.inverted_net(term.source)
-            ideal = self.resistance(net, _ideal_resistance(block, weight, self.sizing))
+            ideal = self.resistance(net, self.sizing.resistance(block, place))
             out.append(CellInput(net, ideal, term.sets))
         return out
 
@@ -145,33 +163,35 @@ class _Wiring:
 
     def inverter(self, numbering: Numbering, source: str, rules: CellRules) -> BuiltCell:
         net = self.direct_net(source)
-        value = self.sizing.inverters
+        inward, back = self.sizing.inverter(source)
         return inverter_cell(
             numbering,
             block=source,
-            source=CellInput(net, self.resistance(net, value), f"inverter of {source}"),
+            source=CellInput(net, self.resistance(net, inward), f"inverter of {source}"),
             output=self.inverted_net(source),
-            feedback=value,
+            feedback=back,
             rules=rules,
             polarity=-self.polarity.of(source),
         )
 
 
-def _ideal_resistance(block: Block, weight: float, sizing: Sizing) -> float:
-    if block.is_integrator:
-        return 1 / (abs(weight) * sizing.capacitors[block.name])
-    return sizing.feedback[block.name] / abs(weight)
+def input_factor(graph: BlockGraph, polarity: Polarity, sizing: Sizing, job: Job) -> float:
+    """kappa, by which the resistors on the source's net are multiplied.
 
-
-def _input_factor(graph: BlockGraph, polarity: Polarity, sizing: Sizing, job: Job) -> float:
-    """kappa, by which the resistors on the source's net are multiplied."""
+    Raises
+    ------
+    RealizationError
+        The source resistance is too large for them.
+    """
     resistance = job.signal.source_resistance
     if not resistance:
         return 1.0
-    conductance = 1 / sizing.inverters if INPUT in polarity.inverters else 0.0
-    for block, term in graph.readers(INPUT):
-        if polarity.direct(block.name, INPUT, float(term.weight)):
-            conductance += 1 / _ideal_resistance(block, float(term.weight), sizing)
+    conductance = 1 / sizing.inverter(INPUT)[0] if INPUT in polarity.inverters else 0.0
+    for block in graph.blocks:
+        for place, term in enumerate(block.terms):
+            direct = polarity.direct(block.name, term.source, float(term.weight))
+            if term.source == INPUT and direct:
+                conductance += 1 / sizing.resistance(block, place)
     factor = 1 - resistance * conductance
     if factor <= 0:
         raise RealizationError(

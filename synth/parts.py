@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.errors import JobError
-from synth.preferred import decade, series_values
+from synth.preferred import decade, nearest, series_values
 from synth.quantities import show
 
 __all__ = ["OpAmp", "PartRule", "StockItem"]
@@ -68,7 +68,6 @@ class PartRule:
             raise JobError(f"got kind {self.kind!r}, expected 'resistor' or 'capacitor'")
         if not (math.isfinite(self.tolerance) and 0 <= self.tolerance < 1):
             raise JobError(f"got a tolerance of {self.tolerance}, expected 0 to below 100 %")
-        unit = "ohm" if self.kind == "resistor" else "F"
         decade(self.series, key="series")
         unit = "ohm" if self.kind == "resistor" else "F"
         if not (0 < self.smallest < self.largest < math.inf):
@@ -95,16 +94,38 @@ class PartRule:
         """Where values come from: the series' name, or ``"stock"``."""
         return "stock" if self.stock else self.series
 
+    @property
+    def ends(self) -> tuple[float, float]:
+        """Between which values a part may lie: those of the range, or the outermost ones of the
+        stock within it."""
+        if not self.stock:
+            return self.smallest, self.largest
+        return float(self.values[0]), float(self.values[-1])
+
+    def lines_of(self, value: float) -> tuple[StockItem, ...]:
+        """The lines of the stock with that value, the tightest first; none without a stock."""
+        return self._lines.get(value, ())
+
     def tolerance_of(self, value: float) -> float:
-        """Relative tolerance of a part of that value."""
-        found = [i.tolerance for i in self.stock if i.value == value]
-        return min(found, default=self.tolerance)
+        """Relative tolerance of a part of that value; for a value the stock does not hold, that
+        of the nearest one it does."""
+        if not self.stock:
+            return self.tolerance
+        lines = self.lines_of(value) or self.lines_of(nearest(self.values, value))
+        return lines[0].tolerance
 
     def count_of(self, value: float) -> int | None:
         """How many parts of that value there are; None for enough."""
-        counts = [i.count for i in self.stock if i.value == value]
+        counts = [i.count for i in self.lines_of(value)]
         known = [c for c in counts if c is not None]
         return sum(known) if counts and len(known) == len(counts) else None
+
+    @cached_property
+    def _lines(self) -> dict[float, tuple[StockItem, ...]]:
+        found: dict[float, list[StockItem]] = {}
+        for item in sorted(self.stock, key=lambda i: i.tolerance):
+            found.setdefault(item.value, []).append(item)
+        return {value: tuple(items) for value, items in found.items()}
 
 
 @dataclass(frozen=True, kw_only=True)

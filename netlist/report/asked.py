@@ -109,13 +109,23 @@ def requirements(job: Job) -> list[Row]:
         ("sign of the output", signs[board.inverted]),
         ("resistors", _rule(board.resistors, "Ω")),
         ("capacitors", _rule(board.capacitors, "F")),
+        *([("values fixed by hand", _fixed(board.fixed))] if board.fixed else []),
         (f"op-amp ({spelled(board.op_amp.kind)}, typical figures)", _figures(board.op_amp)),
     ]
 
 
 def _rule(rule: PartRule, unit: str) -> str:
     limits = f"{stated(rule.smallest, unit)} to {stated(rule.largest, unit)}"
+    if rule.stock:
+        held = sorted({i.tolerance for i in rule.stock})
+        grades = " to ".join(stated(t, "%") for t in dict.fromkeys((held[0], held[-1])))
+        values = f"{rule.values.size} value{'' if rule.values.size == 1 else 's'}"
+        return f"from stock: {values}, {grades}, {limits}"
     return f"{rule.series}, {stated(rule.tolerance, '%')}, {limits}"
+
+
+def _fixed(fixed: Sequence[tuple[str, float]]) -> str:
+    return ", ".join(f"{ref} = {stated(v, 'F' if ref[0] == 'C' else 'Ω')}" for ref, v in fixed)
 
 
 def _figures(amp: OpAmp) -> str:

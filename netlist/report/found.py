@@ -7,7 +7,7 @@ from collections.abc import Iterable
 
 from netlist.partslist import PartLine
 from netlist.report.wording import NONE, decibel, number, percent, quantity, spelled, stated
-from synth.circuit import Circuit
+from synth.circuit import Circuit, Passive
 from synth.evidence import Check
 from synth.loop import LoopMargins
 from synth.results import Candidate, Design, Drift, LoopResult, Swing
@@ -150,10 +150,16 @@ def value_rows(circuit: Circuit) -> list[Row]:
                 "ideal": quantity(part.ideal, unit, 5),
                 "value": stated(part.value, unit),
                 "off": percent(part.value / part.ideal - 1, 2),
-                "rule": f"{part.rule.series}, {stated(part.tolerance, '%')}" if part.rule else NONE,
+                "rule": _rule(part),
             }
         )
     return rows
+
+
+def _rule(part: Passive) -> str:
+    """Where a value comes from and how close the part is to it."""
+    by_hand = ", by hand" if part.fixed and part.source != "fixed" else ""
+    return f"{part.source}, {stated(part.tolerance, '%')}{by_hand}" if part.on_board else NONE
 
 
 def largest_noise(design: Design, count: int = 8) -> list[Row]:

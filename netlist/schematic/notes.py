@@ -110,6 +110,6 @@ def _entries(
 
 
 def _rules(parts: Iterable[Passive]) -> str:
-    """Series and tolerances, as they occur."""
-    rules = dict.fromkeys((p.rule.series, p.tolerance) for p in parts if p.rule)
+    """Series (or stock) and tolerances, as they occur."""
+    rules = dict.fromkeys((p.source, p.tolerance) for p in parts)
     return "; ".join(f"{series}, {show(tolerance, '%')}" for series, tolerance in rules)

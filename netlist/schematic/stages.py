@@ -108,7 +108,7 @@ def _label(part: Passive) -> str:
 
 
 def _hint(part: Passive) -> str:
-    rule = f", {part.rule.series} {100 * part.tolerance:g} %" if part.rule else ""
+    rule = f", {part.source} {100 * part.tolerance:g} %" if part.on_board else ""
     return f"{_label(part)}{rule}" + (f": sets {part.sets}" if part.sets else "")
 
 

@@ -11,6 +11,7 @@ from synth.choosing.certificate import Certificate, certify
 from synth.choosing.grid import ValueGrid
 from synth.choosing.model import Ceilings, Goal, LinearModel, compensation
 from synth.choosing.search import SearchOutcome, search_values
+from synth.choosing.supply import Supply, check_supply
 from synth.circuit import Circuit
 from synth.job import Accept
 from synth.nodal import NodalProgram, compile_circuit
@@ -89,9 +90,14 @@ def choose_values(
         Of the random kicks.
     effort
         Pairs of steps the search evaluates; more take longer and find better values.
+
+    Raises
+    ------
+    RealizationError
+        The stock has fewer parts than the circuit needs.
     """
+    check_supply(circuit.passives)
     program = compile_circuit(circuit)
-    grid = ValueGrid(circuit.passives, _sizes(circuit))
     goal = Goal(target, frequency_hz)
     if accept is not None:
         goal = Goal.within(target, frequency_hz, accept)
@@ -110,49 +116,64 @@ def choose_values(
             start_logs=logs,
             ideal=ideal,
             ceilings=ceilings,
+            supply=Supply.of(grid),
             known=start,
             seed=seed,
             effort=effort,
         )
 
-    outcome = searched(grid, ceilings)
-    if ceilings is not None and not ceilings.keep(program, grid.values_at(outcome.index)[None])[0]:
+    near, everything = ValueGrid(circuit.passives, _sizes(circuit)), ValueGrid(circuit.passives)
+    outcome = searched(near, ceilings)
+    chosen = near.values_at(outcome.index)
+    if ceilings is not None and not ceilings.keep(program, chosen[None])[0]:
         # Nothing was found between ceilings and floors: the rails come first.
-        grid, ceilings = ValueGrid(circuit.passives), ceilings.without_floors()
-        outcome = searched(grid, ceilings)
-    index = outcome.index
-    certificate = _certified(program, ideal, grid, goal, index)
-    if certificate.better is not None:
+        near, ceilings = everything, ceilings.without_floors()
+        outcome = searched(near, ceilings)
+        chosen = near.values_at(outcome.index)
+    certificate = _certified(program, ideal, everything, goal, chosen)
+    other = None if certificate.better is None else everything.values_at(certificate.better)
+    if other is not None and _may_replace(other, near, ceilings, program):
         # Every choice was looked at: take the best, where the whole circuit confirms it.
-        both = np.array([grid.values_at(k) for k in (index, certificate.better)])
-        squares = goal.mean_squares(program, both)
-        allowed = ceilings is None or bool(ceilings.keep(program, both[1:])[0])
-        if squares[1] < squares[0] and allowed:
-            index = certificate.better
-            certificate = _certified(program, ideal, grid, goal, index)
-    chosen = _with(circuit, grid.values_at(index))
+        squares = goal.mean_squares(program, np.array([chosen, other]))
+        if squares[1] < squares[0]:
+            chosen = other
+            certificate = _certified(program, ideal, everything, goal, chosen)
     return Choice(
-        circuit=_with_ideals(chosen, grid, goal),
-        nearest=_with(circuit, grid.values_at(grid.nearest(logs))),
+        circuit=_with_ideals(_with(circuit, chosen), everything, goal),
+        nearest=_with(circuit, everything.values_at(everything.nearest(logs))),
         certificate=certificate,
         looked=outcome.looked,
     )
 
 
+def _may_replace(
+    values: Real, near: ValueGrid, ceilings: Ceilings | None, program: NodalProgram
+) -> bool:
+    """Whether values found outside the search are such as it might have taken."""
+    supply = Supply.of(near)
+    if not near.holds(values):
+        return False
+    if supply is not None and not supply.suffices(near.nearest(np.log(values))):
+        return False
+    return ceilings is None or bool(ceilings.keep(program, values[None])[0])
+
+
 def _sizes(circuit: Circuit) -> dict[str, float]:
     """The parts that set the impedance of a cell, and how far each may leave where the scaling
-    put it: capacitors, feedback resistors, and both resistors of an inverter."""
+    put it: capacitors, feedback resistors, and both resistors of an inverter.  A drawer holds
+    too few values to be choosy."""
     refs = [c.feedback for c in circuit.cells]
     refs += [r for c in circuit.cells if c.kind == "inverter" for r in c.inputs]
-    return dict.fromkeys(refs, SIZE_RANGE)
+    parts = (circuit.by_ref[r] for r in refs)
+    return {p.ref: SIZE_RANGE for p in parts if p.rule is not None and not p.rule.stock}
 
 
 def _certified(
-    program: NodalProgram, ideal: NodalProgram, grid: ValueGrid, goal: Goal, index: Index
+    program: NodalProgram, ideal: NodalProgram, grid: ValueGrid, goal: Goal, values: Real
 ) -> Certificate:
     """How good the choice is, in the model about itself."""
-    model = LinearModel.about(program, grid.values_at(index), goal, jacobian=ideal)
-    return certify(grid, model, index)
+    model = LinearModel.about(program, values, goal, jacobian=ideal)
+    return certify(grid, model, grid.nearest(np.log(values)))
 
 
 def with_ideal_op_amps(circuit: Circuit) -> Circuit:

@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 
 from synth.choosing.grid import ValueGrid
 from synth.choosing.model import LinearModel
+from synth.choosing.supply import Supply
 
 __all__ = ["Neighbourhood"]
 
@@ -26,13 +27,14 @@ class Neighbourhood:
     """Steps of every part by `reach` places along its series, either way.
 
     `quads` pairs of steps with the lowest cost are also tried two at a time when no pair
-    gains; 0 leaves that out.
+    gains; 0 leaves that out.  With a `supply`, no step asks for more parts than there are.
     """
 
     grid: ValueGrid
     model: LinearModel
     reach: tuple[int, ...] = (1, 2, 3)
     quads: int = 0
+    supply: Supply | None = None
 
     @cached_property
     def _steps(self) -> Index:
@@ -79,6 +81,11 @@ class Neighbourhood:
         single = 2 * (residual @ steps.effects) + np.diagonal(gram)
         pair = 2 * gram + single[:, None] + single[None, :]
         pair[np.equal.outer(steps.part, steps.part)] = np.inf
+        if self.supply is not None:
+            target = index[steps.part] + steps.step
+            fits, both_fit = self.supply.steps(index, steps.part, target)
+            single = np.where(fits, single, np.inf)
+            pair = np.where(both_fit, pair, np.inf)
         alone, both = int(np.argmin(single)), int(np.argmin(pair))
         gain = -1e-12 * max(cost, 1e-18)
         if single[alone] <= pair.flat[both] and single[alone] < gain:
@@ -107,7 +114,9 @@ class Neighbourhood:
         if not total.flat[best] < gain:
             return None
         i, j = divmod(best, count)
-        return steps.taken(index, int(a[i]), int(b[i]), int(a[j]), int(b[j]))
+        moved = steps.taken(index, int(a[i]), int(b[i]), int(a[j]), int(b[j]))
+        enough = self.supply is None or self.supply.suffices(moved)
+        return moved if enough else None
 
     def _steps_from(self, index: Index) -> _Steps:
         """The steps that stay within the lists of values, and what each does."""

@@ -81,6 +81,10 @@ class ValueGrid:
         distance = np.abs(self.logs - logs[:, None])
         return np.asarray(np.nanargmin(distance, axis=1), dtype=np.intp)
 
+    def holds(self, values: Real) -> bool:
+        """Whether every part may have its value."""
+        return all(bool(np.any(v == x)) for v, x in zip(self.values, values, strict=True))
+
     def logs_at(self, index: Index) -> Real:
         """ln of the values at an index vector."""
         return self.logs[np.arange(index.size), index]

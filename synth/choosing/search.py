@@ -21,6 +21,7 @@ from synth.choosing.binding import Frontier, binding_order
 from synth.choosing.descent import Neighbourhood
 from synth.choosing.grid import ValueGrid
 from synth.choosing.model import Ceilings, Goal, LevelLimits, LinearModel, compensation
+from synth.choosing.supply import Supply
 from synth.nodal import NodalProgram
 
 __all__ = ["SearchOutcome", "search_values"]
@@ -31,6 +32,9 @@ Index = NDArray[np.intp]
 # Size of the kicks in each round, as a ratio of the value.
 KICKS = (0.25, 0.12, 0.06, 0.04)
 KICKS_ABOUT_KNOWN = (0.06, 0.04)
+
+# Where the steps between values are coarser than this, in ln, kicks are no smaller than they.
+COARSE_STEP = 0.15
 
 # Room below the ceilings that a kick leaves for the descent, in ln; half a step of a coarse
 # series is more.
@@ -47,6 +51,10 @@ PAIRS_PER_KICK = 10_000
 BINDING_SHARE = 0.5
 BINDING_STARTS = 400
 BINDING_BEAM = 4000
+
+# Steps along the list of values; from a stock, also over values that are used up.
+REACH = (1, 2, 3)
+REACH_OF_STOCK = (1, 2, 3, 4, 6)
 
 # How many candidates of a round the nodal engine judges.
 CANDIDATES = 24
@@ -96,6 +104,7 @@ def search_values(
     start_logs: Real,
     ideal: NodalProgram,
     ceilings: Ceilings | None,
+    supply: Supply | None,
     known: Index | None = None,
     seed: int,
     effort: int,
@@ -113,6 +122,8 @@ def search_values(
     ceilings
         How far op-amp outputs may rise; a candidate beyond them is not taken while there is
         another.
+    supply
+        How many parts of every value there are; None for enough.
     known
         A choice to be improved on in rounds of its own, half as many.
     effort
@@ -120,18 +131,27 @@ def search_values(
         this count alone, or when rounds no longer gain.
     """
     rng = np.random.default_rng(seed)
+    least = coarse_step(grid)
 
     def climbed(
         start: Index, reference: Real, kicks: tuple[float, ...]
     ) -> tuple[Index, float, int]:
         best, looked = start, 0
+        if supply is not None:
+            best = supply.repaired(best, LinearModel.about(program, reference, goal))
         best_square = float(_judged(program, grid, goal, ceilings, [best])[0])
-        for kick in kicks:
+        for kick in (max(k, least) for k in kicks):
             model = LinearModel.about(program, reference, goal)
             skeleton = LinearModel.about(program, reference, goal, jacobian=ideal)
-            starts = binding_starts(grid, skeleton)
-            limits = None if ceilings is None else ceilings.about(program, reference)
-            one = _Round(grid, model, limits=limits, starts=starts, kick=kick, rng=rng)
+            one = _Round(
+                grid,
+                model,
+                limits=None if ceilings is None else ceilings.about(program, reference),
+                supply=supply,
+                starts=binding_starts(grid, skeleton),
+                kick=kick,
+                rng=rng,
+            )
             pool = one.run(best, effort // len(KICKS))
             looked += one.looked
             members = pool.members()
@@ -170,6 +190,13 @@ def _judged(
     return np.where(ceilings.keep(program, values), squares, squares + BEYOND)
 
 
+def coarse_step(grid: ValueGrid) -> float:
+    """The median step between values of the resistors, in ln, where it is coarse; else 0."""
+    lists = [v for v, free in zip(grid.values, grid.resistors, strict=True) if free and v.size > 1]
+    steps = [float(np.median(np.diff(np.log(values)))) for values in lists]
+    return max((s for s in steps if s > COARSE_STEP), default=0.0)
+
+
 @dataclass(frozen=True, eq=False)
 class BindingStarts:
     """Sets of values of the parts that bind, those first whose bound is lowest.
@@ -205,14 +232,16 @@ class _Round:
         model: LinearModel,
         *,
         limits: LevelLimits | None,
+        supply: Supply | None,
         starts: BindingStarts | None,
         kick: float,
         rng: np.random.Generator,
     ) -> None:
-        self.grid, self.model, self.limits = grid, model, limits
+        self.grid, self.model, self.limits, self.supply = grid, model, limits, supply
         self.starts, self.kick, self.rng = starts, kick, rng
-        self.coarse = Neighbourhood(grid, model)
-        self.fine = Neighbourhood(grid, model, quads=160)
+        reach = REACH if supply is None else REACH_OF_STOCK
+        self.coarse = Neighbourhood(grid, model, reach, supply=supply)
+        self.fine = Neighbourhood(grid, model, reach, quads=160, supply=supply)
         free = grid.resistors
         self.compensation = np.zeros((free.size, model.offset.size))
         self.compensation[free] = compensation(model.matrix[:, free])
@@ -239,6 +268,8 @@ class _Round:
         return pool
 
     def _descend(self, neighbourhood: Neighbourhood, index: Index) -> tuple[Index, float]:
+        if self.supply is not None:
+            index = self.supply.repaired(index, self.model)
         index, cost, looked = neighbourhood.descend(index)
         self.looked += looked * neighbourhood.pairs
         return index, cost

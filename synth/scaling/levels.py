@@ -4,11 +4,12 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
+from synth.fixing import FixedParts
 from synth.graph import BlockGraph
 from synth.job import Job
 from synth.mapping import Sizing
@@ -18,12 +19,15 @@ from synth.preferred import nearest
 from synth.scaling.constraints import Region, refuse, region
 from synth.scaling.objectives import current_shares, noise_power, response_error_power
 from synth.scaling.signomial import Signomial
+from synth.scaling.standard import room_for, with_standard_capacitors
 from synth.scaling.variables import Variables
 
 __all__ = ["Scaled", "scale"]
 
 Real = NDArray[np.float64]
 Smooth = Callable[[Real], tuple[float, Real]]
+
+NOTHING_FIXED = FixedParts()
 
 # Comfortable sizes (common practice), the weight of leaving them per decade squared.
 COMFORTABLE_R = 14e3
@@ -60,6 +64,8 @@ def scale(
     job: Job,
     peaks: SignalPeaks,
     frequency_hz: Real,
+    *,
+    held: FixedParts = NOTHING_FIXED,
 ) -> Scaled:
     """Levels, capacitors and feedback resistors for `graph`.
 
@@ -67,17 +73,21 @@ def scale(
     ----------
     frequency_hz
         Where the response error and the noise are judged, ascending, shape (F,) [Hz].
+    held
+        The values the job fixes.
 
     Raises
     ------
     RealizationError
-        No choice fits the ranges of the parts; the message has the numbers.
+        No choice fits the ranges of the parts, or the fixed values; the message has the
+        numbers.
     """
     variables = Variables(graph)
-    limits = region(variables, job, peaks)
-    start, margin = limits.start()
+    limits = region(variables, job, peaks, held)
+    start, margin = limits.without_fixed().start()
     if margin < -1e-9:
         raise refuse(variables, job, start)
+    eased, start = room_for(variables, limits, start, held)
     problem = _Problem(
         variables,
         error=response_error_power(variables, polarity, job.board.op_amp, frequency_hz),
@@ -91,8 +101,8 @@ def scale(
         ),
         allowed_error=ERROR_SHARE * job.accept.magnitude_db / 8.686,
     )
-    v = problem.solve(limits, start)
-    limits, v = _with_standard_capacitors(variables, job, limits, v)
+    v = problem.solve(eased, start)
+    limits, v = with_standard_capacitors(variables, job, limits, v, held)
     v = problem.solve(limits, v)
     sizes = variables.sizes_of(v)
     capacitors = {
@@ -100,11 +110,18 @@ def scale(
         for b in graph.blocks
         if b.is_integrator
     }
+    capacitors |= {name: held.sizes[name] for name in capacitors if name in held.sizes}
     feedback = {b.name: sizes[b.name] for b in graph.adders}
     return Scaled(
         graph=graph.rescaled(variables.levels_of(v)),
         levels={graph.output: 1.0, **variables.levels_of(v)},
-        sizing=Sizing(capacitors=capacitors, feedback=feedback, inverters=_inverter_value(job)),
+        sizing=Sizing(
+            capacitors=capacitors,
+            feedback=feedback,
+            inverters=_inverter_value(job),
+            own_inverters=held.inverters,
+            factors=held.factors,
+        ),
         predicted_error=math.sqrt(max(problem.error(v)[0], 0.0)),
     )
 
@@ -112,44 +129,6 @@ def scale(
 def _inverter_value(job: Job) -> float:
     """The standard value next to 10 kohm (common practice)."""
     return nearest(job.board.resistors.values, 10e3)
-
-
-def _with_standard_capacitors(
-    variables: Variables, job: Job, limits: Region, v: Real
-) -> tuple[Region, Real]:
-    """The region with every capacitor fixed at a standard value, and a point inside.
-
-    Each takes the value nearest to where it stands; one that then leaves no room is moved
-    along the series, nearest first.
-    """
-    offered = np.log(job.board.capacitors.values)
-    fixed = limits
-    point = v
-    for block in (b for b in variables.graph.blocks if b.is_integrator):
-        row = limits.names.index(f"capacitor of {block.name}")
-        here = v[variables.size_place(block.name)]
-        best: tuple[float, Region, Real] | None = None
-        for value in offered[np.argsort(np.abs(offered - here), kind="stable")]:
-            lower, upper = fixed.lower.copy(), fixed.upper.copy()
-            lower[row] = upper[row] = value
-            trial = replace(fixed, lower=lower, upper=upper)
-            # Equal bounds leave no margin: judge the others with this row widened by nothing.
-            start, _ = trial.start()
-            excess = float(np.max(trial.excess(start)))
-            if best is None or excess < best[0] - 1e-12:
-                best = (excess, trial, start)
-            if excess < 1e-7:
-                break
-        assert best is not None
-        if best[0] >= 1e-7:
-            raise refuse(variables, job, best[2])
-        fixed, point = best[1], best[2]
-    # Start from the unrounded optimum where it still fits, else from inside the region.
-    moved = v.copy()
-    for block in (b for b in variables.graph.blocks if b.is_integrator):
-        k = variables.size_place(block.name)
-        moved[k] = fixed.lower[limits.names.index(f"capacitor of {block.name}")]
-    return fixed, moved if float(np.max(fixed.excess(moved))) < 1e-7 else point
 
 
 @dataclass(frozen=True, eq=False)

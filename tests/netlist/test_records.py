@@ -57,6 +57,7 @@ def test_components_describe_every_part_of_the_board_and_nothing_else():
         "ideal": MADE.circuit.by_ref["R4"].ideal,
         "series": "E96",
         "tolerance": 0.01,
+        "fixed": False,
         "nets": ["x1", "x2_s"],
         "sets": "coupling from x1 into x2",
     }

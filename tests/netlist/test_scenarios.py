@@ -25,7 +25,17 @@ FOLDER = Path(__file__).resolve().parents[2] / "scenarios"
 SCENARIOS = sorted(path.stem for path in FOLDER.glob("*.toml"))
 
 KEYS = {"format", "title", "form", "inverted", "target", "components", "checks", "verdict"}
-COMPONENT_KEYS = {"ref", "kind", "value", "ideal", "series", "tolerance", "nets", "sets"}
+COMPONENT_KEYS = {
+    "ref",
+    "kind",
+    "value",
+    "ideal",
+    "series",
+    "tolerance",
+    "fixed",
+    "nets",
+    "sets",
+}
 # Of what `ngspice -b` prints: seven digits.
 PRINTED = 2e-6
 
