@@ -15,7 +15,14 @@ from synth.circuit import Circuit
 from synth.job import Accept
 from synth.nodal import NodalProgram, compile_circuit
 
-__all__ = ["DEFAULT_EFFORT", "Choice", "choose_values"]
+__all__ = [
+    "DEFAULT_EFFORT",
+    "Choice",
+    "choose_values",
+    "level_limits_of",
+    "with_ideal_op_amps",
+    "with_ideals",
+]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -89,7 +96,7 @@ def choose_values(
         goal = Goal.within(target, frequency_hz, accept)
     logs = np.log([p.ideal for p in circuit.passives])
     ideal = compile_circuit(with_ideal_op_amps(circuit))
-    limits = _limits(circuit, logs, level_limits or {})
+    limits = level_limits_of(circuit, logs, level_limits or {})
     outcome = search_values(
         program,
         grid,
@@ -112,7 +119,7 @@ def choose_values(
             certificate = _certified(program, ideal, grid, goal, index)
     chosen = _with(circuit, grid.values_at(index))
     return Choice(
-        circuit=_with_ideals(chosen, grid, goal),
+        circuit=with_ideals(chosen, grid, goal),
         nearest=_with(circuit, grid.values_at(grid.nearest(logs))),
         certificate=certificate,
         looked=outcome.looked,
@@ -143,7 +150,7 @@ def _with(circuit: Circuit, values: Real) -> Circuit:
     return circuit.with_values(dict(zip(refs, map(float, values), strict=True)))
 
 
-def _limits(
+def level_limits_of(
     circuit: Circuit, ideal: Real, levels: dict[str, tuple[float, float]]
 ) -> LevelLimits | None:
     """Ceilings as linear limits in the ln of the parts."""
@@ -160,7 +167,7 @@ def _limits(
     return LevelLimits(np.array(rows), np.array(slack), ideal)
 
 
-def _with_ideals(circuit: Circuit, grid: ValueGrid, goal: Goal) -> Circuit:
+def with_ideals(circuit: Circuit, grid: ValueGrid, goal: Goal) -> Circuit:
     """Each resistor's `ideal` moved to the exact solution nearest to the chosen values."""
     values = np.array([p.value for p in circuit.passives])
     logs = np.log(values)
