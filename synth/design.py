@@ -16,7 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.candidates import Sketch, choose_form
-from synth.choosing import Choice, choose_values
+from synth.choosing import Choice, Task, refine
 from synth.circuit import Circuit
 from synth.evidence import Check, response_error
 from synth.graph import BlockGraph
@@ -124,21 +124,22 @@ def design(
         candidates=candidates,
         checks=_checks(job, circuit, tolerance, swing, loop),
         loop=loop,
-        notices=(*job.notices, *_notices(circuit, job, swing)),
+        notices=(*job.notices, *choice.notices, *_notices(circuit, job, swing)),
     )
 
 
 def _choose(sketch: Sketch, job: Job, response: Complex, frequency_hz: Real, seed: int) -> Choice:
     """Standard values, on at most about `FREQUENCIES_OF_THE_SEARCH` of the frequencies."""
     few = slice(None, None, max(1, frequency_hz.size // FREQUENCIES_OF_THE_SEARCH))
-    return choose_values(
-        sketch.circuit,
+    task = Task(
+        circuit=sketch.circuit,
         target=response[few],
         frequency_hz=frequency_hz[few],
         accept=job.accept,
         level_limits=_level_limits(sketch, job),
         seed=seed,
     )
+    return refine(task, task.choose(), job.board)
 
 
 def _checks(

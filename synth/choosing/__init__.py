@@ -6,5 +6,7 @@ rounded to its nearest neighbour, to compare with.  Called by `synth.design` onl
 """
 
 from synth.choosing.choose import Choice, choose_values
+from synth.choosing.refine import refine
+from synth.choosing.task import Task
 
-__all__ = ["Choice", "choose_values"]
+__all__ = ["Choice", "Task", "choose_values", "refine"]

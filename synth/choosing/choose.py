@@ -51,12 +51,15 @@ class Choice:
         How much better any other choice could be.
     looked
         How many pairs of steps along the series the search evaluated.
+    notices
+        What the user should know of the choice, one sentence each.
     """
 
     circuit: Circuit
     nearest: Circuit
     certificate: Certificate
     looked: int
+    notices: tuple[str, ...] = ()
 
 
 def choose_values(

@@ -26,7 +26,7 @@ class Neighbourhood:
     """Steps of every part by `reach` places along its series, either way.
 
     `quads` pairs of steps with the lowest cost are also tried two at a time when no pair
-    gains; 0 leaves that out.
+    gains; 0 leaves that out.  Parts with a list as good as continuous take no steps.
     """
 
     grid: ValueGrid
@@ -113,6 +113,7 @@ class Neighbourhood:
         """The steps that stay within the lists of values, and what each does."""
         target = index[self._part] + self._step
         inside = (target >= 0) & (target < self.grid.counts[self._part])
+        inside &= ~self.grid.fine[self._part]
         part, step, target = self._part[inside], self._step[inside], target[inside]
         change = self.grid.logs[part, target] - self.grid.logs_at(index)[part]
         return _Steps(part, step, self.model.matrix[:, part] * change)

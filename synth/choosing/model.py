@@ -9,7 +9,7 @@ A singular value decomposition keeps the few directions that matter.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -126,6 +126,16 @@ class LinearModel:
     def residual(self, logs: Real) -> Real:
         """matrix d + offset at ln p = `logs`, shape (K,)."""
         return self.matrix @ (logs - self.reference) + self.offset
+
+    def without(self, parts: NDArray[np.intp]) -> LinearModel:
+        """The model in which some parts take up whatever they can, whatever the others do."""
+        left, singular, _ = np.linalg.svd(self.matrix[:, parts], full_matrices=False)
+        taken = left[:, singular > RIDGE]
+        return replace(
+            self,
+            matrix=self.matrix - taken @ (taken.T @ self.matrix),
+            offset=self.offset - taken @ (taken.T @ self.offset),
+        )
 
     def mean_square(self, logs: Real) -> float:
         """Predicted mean square error at ln p = `logs`."""

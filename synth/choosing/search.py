@@ -177,8 +177,10 @@ class _Round:
     ) -> None:
         self.grid, self.model, self.limits = grid, model, limits
         self.starts, self.kick, self.rng = starts, kick, rng
-        self.coarse = Neighbourhood(grid, model)
-        self.fine = Neighbourhood(grid, model, quads=160)
+        self.continuous = np.flatnonzero(grid.fine)
+        others = model.without(self.continuous) if self.continuous.size else model
+        self.coarse = Neighbourhood(grid, others)
+        self.fine = Neighbourhood(grid, others, quads=160)
         free = grid.resistors
         self.compensation = np.zeros((free.size, model.offset.size))
         self.compensation[free] = compensation(model.matrix[:, free])
@@ -206,6 +208,12 @@ class _Round:
     def _descend(self, neighbourhood: Neighbourhood, index: Index) -> tuple[Index, float]:
         index, cost, looked = neighbourhood.descend(index)
         self.looked += looked * neighbourhood.pairs
+        if self.continuous.size:
+            logs, free = self.grid.logs_at(index), self.continuous
+            logs[free] -= compensation(self.model.matrix[:, free]) @ self.model.residual(logs)
+            index = self.grid.nearest(logs)
+            residual = self.model.residual(self.grid.logs_at(index))
+            cost = float(residual @ residual)
         return index, cost
 
     def _offer(self, pool: _Pool, index: Index, cost: float) -> bool:

@@ -9,6 +9,7 @@ Deterministic, and bounded: no step looks at more than `LARGEST_OPTIONS` sets of
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
@@ -132,7 +133,7 @@ def _options(task: Task, used: ValueSet) -> list[ValueSet]:
             )
         )
         free = sorted(value for k, value in used - needed if k == kind)
-        for low, high in zip(free[:-1], free[1:], strict=True):
+        for low, high in pairwise(free):
             first = max(int(np.searchsorted(offered, low)) - 1, 0)
             last = int(np.searchsorted(offered, high)) + 2
             between = offered[first:last]

@@ -130,7 +130,7 @@ def test_no_value_is_used_more_often_than_the_drawer_holds_it() -> None:
     )
     task = task_of(butterworth(3, 1e3), "cascade", resistors=rule)
     choice = task.choose()
-    most = max(list(p.value for p in choice.circuit.bought).count(v.value) for v in stock)
+    most = max([p.value for p in choice.circuit.bought].count(v.value) for v in stock)
     found = share_values(task, choice)
     values = [p.value for p in found.choice.circuit.bought]
     assert max(values.count(item.value) for item in stock) <= max(2, most)
