@@ -108,6 +108,9 @@ def choose_with_pairs(task: Task, plain: Choice) -> Pairing:
         return found
     for refs in _promising(task, plain):
         trial = _tried(task, plain, refs)
+        values = np.array([p.value for p in trial.choice.circuit.passives])
+        if not trial.task.stock_holds(values):
+            continue
         if trial.share_after < WORTHWHILE * found.share_after:
             found = replace(trial, share_before=share)
         if found.pairs and _satisfied(found.task, found.choice, found.share_after):

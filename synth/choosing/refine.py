@@ -48,7 +48,7 @@ def _of_pairs(found: Pairing) -> list[str]:
             "one bring it no nearer"
         ]
     return [
-        f"{_words(found.pairs)}: with single parts the error reaches {before}, so "
+        f"{_words(found.pairs)}: with single parts the error reaches {before}, with these "
         f"{found.share_after:.2g} times"
     ]
 

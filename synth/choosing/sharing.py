@@ -98,20 +98,24 @@ def _step(task: Task, values: Real, most: float, worst: float) -> tuple[Real, fl
     `most` is the allowed mean square, `worst` the allowed share of the limits.
     """
     model = LinearModel.about(task.program, values, task.goal)
+    limits = None if task.ceilings is None else task.ceilings.about(task.program, values)
     used = _in_use(task, values)
-    found: dict[tuple[float, ...], float] = {}
+    found: dict[tuple[float, ...], tuple[bool, float]] = {}
     for option in _options(task, used):
         trial = _searched(task, model, values, option)
         if trial is None or len(_in_use(task, trial)) >= len(used):
             continue
-        if task.levels_hold(trial) and _stock_holds(task.circuit, trial):
-            found[tuple(trial.tolist())] = model.mean_square(np.log(trial))
-    # The linear model ranks, the engine decides.
+        if task.stock_holds(trial):
+            logs = np.log(trial)
+            above = limits is not None and not limits.hold(logs)
+            found[tuple(trial.tolist())] = above, model.mean_square(logs)
+    # The linear models rank, the engine decides.
     boards = np.array(sorted(found, key=lambda key: (found[key], key))[:JUDGED])
     if not boards.size:
         return None
     squares = task.mean_squares(boards)
-    squares = np.where(task.shares(boards) <= worst, squares, np.inf)
+    kept = (task.shares(boards) <= worst) & task.levels_hold(boards)
+    squares = np.where(kept, squares, np.inf)
     k = int(np.argmin(squares))
     return (boards[k], float(squares[k])) if squares[k] <= most else None
 
@@ -172,15 +176,3 @@ def _limited(part: Passive, option: ValueSet) -> Passive | None:
         if kind == part.kind and value in offered
     )
     return replace(part, rule=replace(part.rule, stock=items)) if items else None
-
-
-def _stock_holds(circuit: Circuit, values: Real) -> bool:
-    """Whether the drawers hold as many parts of each value as are asked for."""
-    asked: dict[tuple[str, float], int] = {}
-    for part, value in zip(circuit.passives, values.tolist(), strict=True):
-        if part.rule is not None:
-            asked[part.kind, value] = asked.get((part.kind, value), 0) + 1
-            count = part.rule.count_of(value)
-            if count is not None and asked[part.kind, value] > count:
-                return False
-    return True

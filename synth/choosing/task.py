@@ -13,9 +13,9 @@ from functools import cached_property
 import numpy as np
 from numpy.typing import NDArray
 
-from synth.choosing.choose import DEFAULT_EFFORT, Choice, choose_values, level_limits_of
+from synth.choosing.choose import DEFAULT_EFFORT, Choice, choose_values
 from synth.choosing.grid import ValueGrid
-from synth.choosing.model import Goal, LevelLimits
+from synth.choosing.model import Ceilings, Goal
 from synth.circuit import Circuit
 from synth.evidence import DB_PER_NEPER, response_error
 from synth.job import Accept
@@ -88,10 +88,10 @@ class Task:
         return Goal.within(self.target, self.frequency_hz, self.accept)
 
     @cached_property
-    def ceilings(self) -> LevelLimits | None:
-        """How far op-amp outputs may rise, in the ln of the parts."""
-        logs = np.log([p.ideal for p in self.circuit.passives])
-        return level_limits_of(self.circuit, logs, dict(self.level_limits))
+    def ceilings(self) -> Ceilings | None:
+        """How large the op-amp outputs may be."""
+        ideal = np.array([p.ideal for p in self.circuit.passives])
+        return Ceilings.of(self.program, ideal, dict(self.level_limits))
 
     @property
     def limit_rms(self) -> float:
@@ -109,9 +109,24 @@ class Task:
         phase = np.max(np.abs(error.phase_deg), axis=-1) / self.accept.phase_deg
         return np.asarray(np.maximum(magnitude, phase))
 
-    def levels_hold(self, values: Real) -> bool:
-        """Whether every op-amp output stays below its ceiling with `values`, shape (P,)."""
-        return self.ceilings is None or self.ceilings.hold(np.log(values))
+    def levels_hold(self, values: Real) -> NDArray[np.bool_]:
+        """Whether every op-amp output stays below its ceiling, values (boards, P), (boards,)."""
+        boards = np.atleast_2d(values)
+        if self.ceilings is None:
+            return np.ones(boards.shape[0], dtype=bool)
+        return self.ceilings.keep(self.program, boards)
+
+    def stock_holds(self, values: Real) -> bool:
+        """Whether the drawers hold as many parts of each value as `values` (P,) ask for."""
+        asked: dict[tuple[str, float], int] = {}
+        for part, value in zip(self.circuit.passives, values.tolist(), strict=True):
+            if part.rule is None:
+                continue
+            asked[part.kind, value] = asked.get((part.kind, value), 0) + 1
+            count = part.rule.count_of(value)
+            if count is not None and asked[part.kind, value] > count:
+                return False
+        return True
 
     def mean_squares(self, values: Real) -> Real:
         """Weighted mean square error of each board, values (boards, P), op-amps included."""
