@@ -9,7 +9,7 @@ others; afterwards it becomes two parts.
 
 from __future__ import annotations
 
-import itertools
+from collections.abc import Iterator
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -40,8 +40,8 @@ WORTHWHILE = 0.8
 WIDEST = 10.0
 CLOSEST = 2e-4
 
-# Sets of resistors of one size that are looked at.
-MOST_SETS = 400
+# Sets of resistors of one size from which larger ones are made.
+BEAM = 8
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -210,24 +210,24 @@ def _satisfied(task: Task, choice: Choice, share: float) -> bool:
     return share <= 1 and bound <= BINDING_SHARE
 
 
-def _promising(task: Task, plain: Choice) -> list[tuple[str, ...]]:
+def _promising(task: Task, plain: Choice) -> Iterator[tuple[str, ...]]:
     """For one, two, ... pairs the resistors whose continuous values would gain most, where
-    that is worth while."""
+    that is worth while; larger sets grow from the `BEAM` best smaller ones."""
     grid, goal = task.grid, task.goal
     values = np.array([p.value for p in plain.circuit.passives])
     ideal = compile_circuit(with_ideal_op_amps(task.circuit))
     model = LinearModel.about(task.program, values, goal, jacobian=ideal)
     start = grid.nearest(np.log(values))
     inputs = {ref for cell in task.circuit.cells for ref in cell.inputs}
-    free = [k for k in np.flatnonzero(grid.resistors) if grid.parts[k].ref in inputs]
-    sets: list[tuple[str, ...]] = []
-    for size in range(1, min(MOST_PAIRS, len(free)) + 1):
-        groups = [np.array(g) for g in itertools.combinations(free, size)][:MOST_SETS]
-        costs = [_continuous(task, model, start, group) for group in groups]
-        if min(costs) < WORTHWHILE**2 * model.mean_square(np.log(values)):
-            best = groups[int(np.argmin(costs))]
-            sets.append(tuple(grid.parts[k].ref for k in best))
-    return sets
+    free = [int(k) for k in np.flatnonzero(grid.resistors) if grid.parts[k].ref in inputs]
+    best: list[tuple[int, ...]] = [()]
+    for _ in range(min(MOST_PAIRS, len(free))):
+        groups = sorted({tuple(sorted({*g, k})) for g in best for k in free if k not in g})
+        costs = [_continuous(task, model, start, np.array(group)) for group in groups]
+        order = np.argsort(costs, kind="stable")
+        best = [groups[k] for k in order[:BEAM]]
+        if costs[order[0]] < WORTHWHILE**2 * model.mean_square(np.log(values)):
+            yield tuple(grid.parts[k].ref for k in best[0])
 
 
 def _continuous(task: Task, model: LinearModel, start: Index, parts: Index) -> float:
