@@ -195,3 +195,16 @@ def test_progress_is_told_stage_by_stage() -> None:
     stages = list(dict.fromkeys(stage for stage, _, _ in told))
     assert stages == ["forms", "values", "boards", "limits"]
     assert all(0 <= done <= total for _, done, total in told)
+
+
+def test_the_loop_of_an_inverting_board_is_that_of_h() -> None:
+    """A board of -H stands in a loop that inverts once more: its margins are those of H(s)."""
+    plant = TransferFunction.from_polynomials([3e5], [1, 2e3, 0])
+    job = job_for(PI, (10.0, 5e3), input_peak=0.1, inverted="yes")
+    found = design(replace(job, loop=Loop(plant=plant)), boards=10)
+    assert found.inverted
+    assert found.loop.target.unstable_poles == 0
+    assert found.loop.nominal.unstable_poles == 0
+    assert found.loop.nominal.phase_margin_deg == pytest.approx(
+        found.loop.target.phase_margin_deg, abs=1.0
+    )

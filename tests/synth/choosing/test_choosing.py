@@ -150,3 +150,17 @@ def test_outputs_that_hang_on_small_differences_stay_below_the_rails(series: str
     )
     inner = [s for s in design(job, boards=5).swings if s.net != "out"]
     assert max(s.peak for s in inner) <= inner[0].peak_limit
+
+
+def test_ideal_values_are_those_with_which_the_circuit_shows_the_target() -> None:
+    """With every resistor at its `ideal` and the capacitors as chosen, what is left of the
+    error is far below that of the chosen values, and near them."""
+    circuit, target = sketched(3, "cascade", "E24")
+    choice = choose_values(circuit, target=target, frequency_hz=FREQUENCY, effort=2_000_000)
+    exact = choice.circuit.with_values({p.ref: p.ideal for p in choice.circuit.passives})
+    chosen, ideal = (
+        response_error(compile_circuit(c).solve(FREQUENCY), target).rms
+        for c in (choice.circuit, exact)
+    )
+    assert ideal < chosen / 5
+    assert all(abs(p.value / p.ideal - 1) < 0.1 for p in choice.circuit.passives)
