@@ -15,7 +15,7 @@ from functools import cached_property
 from synth.errors import CircuitError
 from synth.parts import OpAmp, PartRule
 
-__all__ = ["GROUND", "Amplifier", "Cell", "Circuit", "Passive"]
+__all__ = ["GROUND", "Amplifier", "Branch", "Cell", "Circuit", "Passive"]
 
 GROUND = "0"
 _REFERENCE = re.compile(r"[A-Z][A-Z0-9_]{0,15}")
@@ -111,6 +111,9 @@ class Cell:
         References of the input resistors, from their source nets to `summing`.
     feedback
         Reference of the part from `output` to `summing`.
+    series
+        Pairs of references: an input resistor that is one of two in series, and the other,
+        which joins it to its source net through a net of their own.
     summing, output
         Nets.
     polarity
@@ -126,6 +129,26 @@ class Cell:
     summing: str
     output: str
     polarity: int
+    series: tuple[tuple[str, str], ...] = ()
+
+    @property
+    def refs(self) -> tuple[str, ...]:
+        """References of its resistors and capacitors."""
+        return (*self.inputs, *(behind for _, behind in self.series), self.feedback)
+
+
+@dataclass(frozen=True)
+class Branch:
+    """What joins a source net to a summing node: resistors in series, from the source on, and
+    their resistance [ohm]."""
+
+    net: str
+    parts: tuple[Passive, ...]
+
+    @property
+    def resistance(self) -> float:
+        """Of all together."""
+        return sum(part.value for part in self.parts)
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -158,9 +181,11 @@ class Circuit:
         self._check_names()
         self._check_nets()
         for cell in self.cells:
-            for ref in (*cell.inputs, cell.feedback):
+            for ref in cell.refs:
                 if ref not in self.by_ref:
                     raise CircuitError(f"cell {cell.block}: unknown part {ref!r}")
+            for ref, behind in cell.series:
+                self._check_series(cell, ref, behind)
 
     def _check_names(self) -> None:
         refs = [p.ref for p in self.passives] + [a.ref for a in self.amplifiers]
@@ -190,6 +215,15 @@ class Circuit:
             if driven.count(net) > 1:
                 raise CircuitError(f"net {net!r} is driven twice")
 
+    def _check_series(self, cell: Cell, ref: str, behind: str) -> None:
+        """Two in series have a net of their own between them, and nothing else is on it."""
+        middle = _far_net(self.by_ref[ref], cell.summing)
+        if ref not in cell.inputs or set(self.connections[middle]) != {ref, behind}:
+            raise CircuitError(
+                f"cell {cell.block}: got {behind} and {ref} in series, expected an input "
+                "resistor and one more, with a net of their own between them"
+            )
+
     @cached_property
     def connections(self) -> dict[str, tuple[str, ...]]:
         """References on each net."""
@@ -215,9 +249,23 @@ class Circuit:
     def cell_of(self, ref: str) -> Cell | None:
         """The cell a part or op-amp belongs to."""
         for cell in self.cells:
-            if ref in (*cell.inputs, cell.feedback, cell.amplifier):
+            if ref == cell.amplifier or ref in cell.refs:
                 return cell
         return None
+
+    def branch(self, cell: Cell, ref: str) -> Branch:
+        """The input resistor `ref` of a cell with what is in series with it."""
+        part = self.by_ref[ref]
+        net = _far_net(part, cell.summing)
+        behind = dict(cell.series).get(ref)
+        if behind is None:
+            return Branch(net, (part,))
+        first = self.by_ref[behind]
+        return Branch(_far_net(first, net), (first, part))
+
+    def branches(self) -> Iterator[Branch]:
+        """Every input of every cell."""
+        return (self.branch(cell, ref) for cell in self.cells for ref in cell.inputs)
 
     def signal_nets(self) -> Iterator[str]:
         """Nets of the op-amp outputs, in order of the op-amps."""
@@ -241,3 +289,7 @@ class Circuit:
                 for p in self.passives
             ),
         )
+
+
+def _far_net(part: Passive, near: str) -> str:
+    return part.nets[1] if part.nets[0] == near else part.nets[0]

@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 
 from synth.allowance import op_amp_allowance
 from synth.candidates import Sketch, choose_form
-from synth.choosing import DEFAULT_EFFORT, Choice, choose_values, with_ideal_op_amps
+from synth.choosing import DEFAULT_EFFORT, Choice, Task, refine, with_ideal_op_amps
 from synth.choosing.supply import allotted
 from synth.circuit import Cell, Circuit
 from synth.errors import JobError
@@ -139,7 +139,7 @@ def design(
         budget=error_budget(program, circuit, nominal, frequency, accept=job.accept, seed=seed),
         effort=effort,
         loop=loop,
-        notices=(*job.notices, *_notices(circuit, job, swing)),
+        notices=(*job.notices, *choice.notices, *_notices(circuit, job, swing)),
     )
 
 
@@ -155,24 +155,29 @@ class _Search:
     effort: int
 
     def both(self, say: Progress) -> tuple[Choice, Choice]:
-        """For the job's op-amps, and as if they were ideal; the one improves on the other."""
-        say("values", 0, 2)
-        unaware = self.choice(with_ideal_op_amps(self.sketch.circuit))
-        say("values", 1, 2)
-        return self.choice(self.sketch.circuit, known=unaware.circuit), unaware
+        """For the job's op-amps, and as if they were ideal; the one improves on the other.
 
-    def choice(self, circuit: Circuit, *, known: Circuit | None = None) -> Choice:
-        """Standard values for `circuit`, the sketch's own or one like it, better than those of
-        `known`, on at most about `FREQUENCIES_OF_THE_SEARCH` of the frequencies."""
+        What the job asks beyond the least error, pairs and few values, is done for the first
+        alone.
+        """
+        say("values", 0, 2)
+        unaware = self.task(with_ideal_op_amps(self.sketch.circuit)).choose()
+        say("values", 1, 2)
+        task = self.task(self.sketch.circuit)
+        choice = refine(task, task.choose(known=unaware.circuit), self.job.board)
+        return choice, unaware
+
+    def task(self, circuit: Circuit) -> Task:
+        """Standard values for `circuit`, the sketch's own or one like it, on at most about
+        `FREQUENCIES_OF_THE_SEARCH` of the frequencies."""
         count = self.frequency_hz.size
         few = slice(None, None, max(1, count // FREQUENCIES_OF_THE_SEARCH))
-        return choose_values(
-            circuit,
+        return Task(
+            circuit=circuit,
             target=self.response[few],
             frequency_hz=self.frequency_hz[few],
             accept=self.job.accept,
             level_limits=level_limits(self.sketch, self.job),
-            known=known,
             seed=self.seed,
             effort=self.effort,
         )

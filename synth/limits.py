@@ -76,7 +76,9 @@ def _any_input_peaks(circuit: Circuit, input_peak: float) -> dict[str, float]:
 def _output_admittance(circuit: Circuit, amplifier: Amplifier, frequency_hz: Real) -> Real:
     """|Y| of the parts on an op-amp output, their far ends at ground or a virtual ground [S]."""
     on_net = [p for p in circuit.passives if amplifier.output in p.nets]
-    conductance = sum(1 / p.value for p in on_net if p.kind == "resistor")
+    in_series = {p.ref: b.resistance for b in circuit.branches() for p in b.parts}
+    resistances = [in_series.get(p.ref, p.value) for p in on_net if p.kind == "resistor"]
+    conductance = sum(1 / r for r in resistances)
     capacitance = sum(p.value for p in on_net if p.kind == "capacitor")
     return np.hypot(conductance, 2 * np.pi * frequency_hz * capacitance)
 
@@ -123,7 +125,7 @@ def drifts(circuit: Circuit) -> tuple[Drift, ...]:
             continue
         figures = amplifiers[cell.amplifier].figures
         capacitance = circuit.by_ref[cell.feedback].value
-        conductance = sum(1 / circuit.by_ref[r].value for r in cell.inputs)
+        conductance = sum(1 / circuit.branch(cell, r).resistance for r in cell.inputs)
         rate = (figures.offset * conductance + figures.bias_current) / capacitance
         out.append(Drift(amplifier=cell.amplifier, net=cell.output, rate=rate))
     return tuple(out)

@@ -8,7 +8,7 @@ what the mathematics meant.
 
 from __future__ import annotations
 
-from synth.circuit import Cell, Circuit, Passive
+from synth.circuit import Circuit
 from synth.errors import CircuitError
 from synth.graph import INPUT, Block, BlockGraph, Term
 
@@ -38,11 +38,11 @@ def graph_of(circuit: Circuit) -> BlockGraph:
         is_integrator = feedback.kind == "capacitor"
         weights: dict[str, float] = {}
         for ref in cell.inputs:
-            resistor = circuit.by_ref[ref]
-            net = _other_net(resistor, cell)
-            weight = -1 / (resistor.value * feedback.value)
+            branch = circuit.branch(cell, ref)
+            net = branch.net
+            weight = -1 / (branch.resistance * feedback.value)
             if not is_integrator:
-                weight = -feedback.value / resistor.value
+                weight = -feedback.value / branch.resistance
             if net in names:
                 source = names[net]
             else:
@@ -54,10 +54,6 @@ def graph_of(circuit: Circuit) -> BlockGraph:
     return BlockGraph("readback", tuple(blocks), names[circuit.output_net])
 
 
-def _other_net(part: Passive, cell: Cell) -> str:
-    return part.nets[0] if part.nets[1] == cell.summing else part.nets[1]
-
-
 def _source_drop(circuit: Circuit) -> float:
     """Voltage at the cells' input net over that of the source: 1 / (1 + Rs G)."""
     series = [p for p in circuit.passives if not p.on_board and circuit.input_net in p.nets]
@@ -65,5 +61,5 @@ def _source_drop(circuit: Circuit) -> float:
         return 1.0
     (source,) = series
     net = source.nets[0] if source.nets[1] == circuit.input_net else source.nets[1]
-    conductance = sum(1 / p.value for p in circuit.bought if net in p.nets)
+    conductance = sum(1 / b.resistance for b in circuit.branches() if b.net == net)
     return 1 / (1 + source.value * conductance)

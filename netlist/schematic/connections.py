@@ -98,7 +98,7 @@ def read_connections(circuit: Circuit) -> Connections:
     readers: dict[str, list[Reader]] = {net: [] for net in drivers}
     for k, cell in enumerate(circuit.cells):
         for ref in cell.inputs:
-            net = _far_net(circuit.by_ref[ref], cell.summing)
+            net = circuit.branch(cell, ref).net
             if net not in drivers:
                 raise CircuitError(f"{ref}: got the net {net!r}, which no cell drives")
             readers[net].append(Reader(k, ref))
@@ -108,13 +108,9 @@ def read_connections(circuit: Circuit) -> Connections:
     return Connections(circuit, signals, source, loads, entry, output_cell, main)
 
 
-def _far_net(part: Passive, near: str) -> str:
-    return part.nets[1] if part.nets[0] == near else part.nets[0]
-
-
 def _fixtures(circuit: Circuit) -> tuple[Passive | None, tuple[Passive, ...]]:
     """Source resistor and loads."""
-    inside = {r for c in circuit.cells for r in (*c.inputs, c.feedback)}
+    inside = {r for c in circuit.cells for r in c.refs}
     outside = [p for p in circuit.passives if p.ref not in inside]
     outputs = {c.output for c in circuit.cells}
     summing = {c.summing for c in circuit.cells}

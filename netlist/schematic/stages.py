@@ -14,7 +14,7 @@ of the op-amp's output::
                ground
 
 The first resistor lies on the line of the output, so that a chain of stages is a straight
-line; the others hang below it at a constant pitch.
+line; the others hang below it at a constant pitch.  Two in series lie in line.
 """
 
 from __future__ import annotations
@@ -25,9 +25,18 @@ from types import MappingProxyType
 
 from netlist.schematic import lettering
 from netlist.schematic.geometry import Box, Point, Sheet, Symbol, Text
-from synth.circuit import GROUND, Amplifier, Cell, Circuit, Passive
+from synth.circuit import GROUND, Amplifier, Branch, Cell, Circuit, Passive
 
-__all__ = ["PITCH", "STAGES", "TEE", "Stage", "draw_ground", "draw_resistor", "resistor_length"]
+__all__ = [
+    "PITCH",
+    "STAGES",
+    "TEE",
+    "Stage",
+    "branch_length",
+    "draw_ground",
+    "draw_resistor",
+    "resistor_length",
+]
 
 PITCH = 30.0  # from one input resistor to the next
 TEE = 105.0  # where the feedback meets the output
@@ -70,6 +79,11 @@ def resistor_length(part: Passive) -> float:
     """Length of a lying resistor with its leads, so that its label fits between its ends."""
     w = lettering.width(_label(part), 10.0)
     return 10.0 * max(6, int((w + 8) / 10) + 1)
+
+
+def branch_length(branch: Branch) -> float:
+    """Length of the resistors of one input in line."""
+    return sum(resistor_length(part) for part in branch.parts)
 
 
 def draw_resistor(
@@ -130,10 +144,8 @@ def _draw_inverting(
     x, y = at
     top, last = y + _OVER, y + (len(stack) - 1) * PITCH
     for k, ref in enumerate(stack):
-        part = circuit.by_ref[ref]
-        far = part.nets[1] if part.nets[0] == cell.summing else part.nets[0]
-        place = (x - lead, y + k * PITCH)
-        draw_resistor(sheet, part, place, lead, (far, cell.summing), heavy=ref == main)
+        branch = circuit.branch(cell, ref)
+        _draw_branch(sheet, branch, (x, y + k * PITCH), lead, cell.summing, heavy=ref == main)
     _draw_bus(sheet, cell, at, last, y + PITCH * stack.index(main) if main else None)
     feedback = circuit.by_ref[cell.feedback]
     middle = x + TEE / 2
@@ -147,6 +159,20 @@ def _draw_inverting(
     sheet.wire(GROUND, (x + _BACK, y + _PLUS), (x + _GROUND_X, y + _PLUS))
     sheet.wire(GROUND, (x + _GROUND_X, y + _PLUS), (x + _GROUND_X, y + _PLUS + 7))
     draw_ground(sheet, (x + _GROUND_X, y + _PLUS + 7))
+
+
+def _draw_branch(
+    sheet: Sheet, branch: Branch, right: Point, lead: float, summing: str, *, heavy: bool
+) -> None:
+    """The resistors of one input in line, over `lead` to `right`; the first takes the slack."""
+    x, y = right
+    net = summing
+    for k, part in reversed(list(enumerate(branch.parts))):
+        length = resistor_length(part) if k else x - right[0] + lead
+        far = part.nets[1] if part.nets[0] == net else part.nets[0]
+        x -= length
+        draw_resistor(sheet, part, (x, y), length, (far, net), heavy=heavy)
+        net = far
 
 
 def _draw_bus(sheet: Sheet, cell: Cell, at: Point, last: float, entry: float | None) -> None:

@@ -16,7 +16,13 @@ from synth.circuit import Circuit
 from synth.job import Accept
 from synth.nodal import NodalProgram, compile_circuit
 
-__all__ = ["DEFAULT_EFFORT", "Choice", "choose_values", "with_ideal_op_amps"]
+__all__ = [
+    "DEFAULT_EFFORT",
+    "Choice",
+    "choose_values",
+    "with_ideal_op_amps",
+    "with_ideals",
+]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -49,12 +55,15 @@ class Choice:
         How much better any other choice could be.
     looked
         How many pairs of steps along the series the search evaluated.
+    notices
+        What the user should know of the choice, one sentence each.
     """
 
     circuit: Circuit
     nearest: Circuit
     certificate: Certificate
     looked: int
+    notices: tuple[str, ...] = ()
 
 
 def choose_values(
@@ -139,7 +148,7 @@ def choose_values(
             chosen = other
             certificate = _certified(program, ideal, everything, goal, chosen)
     return Choice(
-        circuit=_with_ideals(_with(circuit, chosen), everything, goal),
+        circuit=with_ideals(_with(circuit, chosen), everything, goal),
         nearest=_with(circuit, everything.values_at(everything.nearest(logs))),
         certificate=certificate,
         looked=outcome.looked,
@@ -192,7 +201,7 @@ def _with(circuit: Circuit, values: Real) -> Circuit:
     return circuit.with_values(dict(zip(refs, map(float, values), strict=True)))
 
 
-def _with_ideals(circuit: Circuit, grid: ValueGrid, goal: Goal) -> Circuit:
+def with_ideals(circuit: Circuit, grid: ValueGrid, goal: Goal) -> Circuit:
     """Each resistor's `ideal` moved to the exact solution nearest to the chosen values."""
     values = np.array([p.value for p in circuit.passives])
     logs = np.log(values)

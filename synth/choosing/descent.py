@@ -28,6 +28,7 @@ class Neighbourhood:
 
     `quads` pairs of steps with the lowest cost are also tried two at a time when no pair
     gains; 0 leaves that out.  With a `supply`, no step asks for more parts than there are.
+    Parts with a list as good as continuous take no steps.
     """
 
     grid: ValueGrid
@@ -122,6 +123,7 @@ class Neighbourhood:
         """The steps that stay within the lists of values, and what each does."""
         target = index[self._part] + self._step
         inside = (target >= 0) & (target < self.grid.counts[self._part])
+        inside &= ~self.grid.fine[self._part]
         part, step, target = self._part[inside], self._step[inside], target[inside]
         change = self.grid.logs[part, target] - self.grid.logs_at(index)[part]
         return _Steps(part, step, self.model.matrix[:, part] * change)

@@ -16,6 +16,9 @@ __all__ = ["ValueGrid"]
 Real = NDArray[np.float64]
 Index = NDArray[np.intp]
 
+# A list of values closer together than this, in ln, is as good as continuous; E192 has 0.012.
+FINE_SPACING = 0.002
+
 
 @dataclass(frozen=True, eq=False)
 class ValueGrid:
@@ -76,10 +79,29 @@ class ValueGrid:
         every = np.concatenate([np.zeros(0), *steps])
         return float(np.median(every)) if every.size else 0.0
 
+    @cached_property
+    def fine(self) -> NDArray[np.bool_]:
+        """Which parts have a list as good as continuous, as two resistors for one may have."""
+        steps = [np.diff(np.log(v)) for v in self.values]
+        return np.array([s.size > 0 and float(np.median(s)) < FINE_SPACING for s in steps])
+
     def nearest(self, logs: Real) -> Index:
         """Index of the value nearest to each part's logarithm, shape (P,)."""
-        distance = np.abs(self.logs - logs[:, None])
-        return np.asarray(np.nanargmin(distance, axis=1), dtype=np.intp)
+        out = np.empty(logs.size, dtype=np.intp)
+        coarse, table = self._coarse
+        out[coarse] = np.nanargmin(np.abs(table - logs[coarse, None]), axis=1)
+        for k in np.flatnonzero(self.fine):
+            # Long lists by bisection: the first value not below the middle of its neighbours.
+            row = self.logs[k, : self.counts[k]]
+            out[k] = np.searchsorted((row[1:] + row[:-1]) / 2, logs[k])
+        return out
+
+    @cached_property
+    def _coarse(self) -> tuple[Index, Real]:
+        """The parts with short lists, and the logarithms of these."""
+        rows = np.flatnonzero(~self.fine)
+        longest = int(self.counts[rows].max(initial=1))
+        return rows, self.logs[rows, :longest]
 
     def holds(self, values: Real) -> bool:
         """Whether every part may have its value."""

@@ -127,6 +127,16 @@ class LinearModel:
         """matrix d + offset at ln p = `logs`, shape (K,)."""
         return self.matrix @ (logs - self.reference) + self.offset
 
+    def without(self, parts: NDArray[np.intp]) -> LinearModel:
+        """The model in which some parts take up whatever they can, whatever the others do."""
+        left, singular, _ = np.linalg.svd(self.matrix[:, parts], full_matrices=False)
+        taken = left[:, singular > RIDGE]
+        return replace(
+            self,
+            matrix=self.matrix - taken @ (taken.T @ self.matrix),
+            offset=self.offset - taken @ (taken.T @ self.offset),
+        )
+
     def mean_square(self, logs: Real) -> float:
         """Predicted mean square error at ln p = `logs`."""
         residual = self.residual(logs)

@@ -239,9 +239,11 @@ class _Round:
     ) -> None:
         self.grid, self.model, self.limits, self.supply = grid, model, limits, supply
         self.starts, self.kick, self.rng = starts, kick, rng
+        self.continuous = np.flatnonzero(grid.fine)
+        others = model.without(self.continuous) if self.continuous.size else model
         reach = REACH if supply is None else REACH_OF_STOCK
-        self.coarse = Neighbourhood(grid, model, reach, supply=supply)
-        self.fine = Neighbourhood(grid, model, reach, quads=160, supply=supply)
+        self.coarse = Neighbourhood(grid, others, reach, supply=supply)
+        self.fine = Neighbourhood(grid, others, reach, quads=160, supply=supply)
         free = grid.resistors
         self.compensation = np.zeros((free.size, model.offset.size))
         self.compensation[free] = compensation(model.matrix[:, free])
@@ -272,6 +274,12 @@ class _Round:
             index = self.supply.repaired(index, self.model)
         index, cost, looked = neighbourhood.descend(index)
         self.looked += looked * neighbourhood.pairs
+        if self.continuous.size:
+            logs, free = self.grid.logs_at(index), self.continuous
+            logs[free] -= compensation(self.model.matrix[:, free]) @ self.model.residual(logs)
+            index = self.grid.nearest(logs)
+            residual = self.model.residual(self.grid.logs_at(index))
+            cost = float(residual @ residual)
         return index, cost
 
     def _offer(self, pool: _Pool, index: Index, cost: float) -> bool:

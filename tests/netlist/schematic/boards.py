@@ -7,6 +7,7 @@ from dataclasses import dataclass, field
 
 from hypothesis import strategies as st
 
+from synth.choosing.pairs import Pair, with_pairs
 from synth.circuit import GROUND, Amplifier, Cell, Circuit, Passive
 from synth.forms import realize
 from synth.job import Board, Job, Signal
@@ -106,6 +107,17 @@ def from_cells(
 def first_order() -> Circuit:
     """One leaky integrator."""
     return from_cells({"out": ("integrator", ["in", "out"])})
+
+
+def paired(circuit: Circuit, **how: str) -> Circuit:
+    """The circuit with two resistors in the place of some, in ``"series"`` or ``"parallel"``."""
+    pairs = tuple(
+        Pair(ref=ref, values=(47e3, 10e3), how=each)
+        for ref, each in how.items()
+        if ref in {r for cell in circuit.cells for r in cell.inputs}
+    )
+    assert len(pairs) == len(how)
+    return with_pairs(circuit, pairs)
 
 
 def third_order(*, source: bool = True, load: bool = True) -> Circuit:

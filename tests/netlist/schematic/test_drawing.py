@@ -24,6 +24,12 @@ BOARDS = {
     "chain of order 8": boards.chain(8),
     "chain of order 12": boards.chain(12),
     "cascade of order 12": boards.cascade(6),
+    "two in parallel": boards.paired(boards.third_order(), R1="parallel", R9="parallel"),
+    "two in series": boards.paired(boards.third_order(), R2="series", R5="series"),
+    "all pairs": boards.paired(
+        boards.cascade(3), R1="series", R2="parallel", R4="parallel", R5="series"
+    ),
+    "first order, all pairs": boards.paired(boards.first_order(), R1="series", R2="parallel"),
 }
 
 
@@ -185,7 +191,9 @@ def test_rows_read_from_left_to_right(circuit):
     for cell in circuit.cells:
         x = places[cell.amplifier][0]
         assert all(places[ref][0] < x for ref in cell.inputs)
-        assert len({places[ref][0] for ref in cell.inputs}) == 1
+        behind = dict(cell.series)
+        assert len({places[ref][0] for ref in cell.inputs if ref not in behind}) <= 1
+        assert all(places[behind[ref]][0] < places[ref][0] for ref in behind)
         assert places[cell.feedback][1] < places[cell.amplifier][1]
 
 

@@ -1,0 +1,77 @@
+"""What a job may ask of a choice beyond the least error: pairs, and few distinct values.
+
+Pairs come first, since they decide which parts there are.
+"""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import numpy as np
+
+from synth.choosing.choose import Choice
+from synth.choosing.pairs import Pair, Pairing, choose_with_pairs
+from synth.choosing.sharing import Sharing, share_values
+from synth.choosing.task import Task
+from synth.circuit import Circuit
+from synth.evidence import response_error
+from synth.job import Board
+from synth.nodal import compile_circuit
+
+__all__ = ["refine"]
+
+
+def refine(task: Task, choice: Choice, board: Board) -> Choice:
+    """The choice with what `board` asks for, and notices that say what was done.
+
+    `choice` is what came of `task`.
+    """
+    said: list[str] = []
+    if board.pairs:
+        paired = choose_with_pairs(task, choice)
+        said += _of_pairs(paired)
+        task, choice = paired.task, paired.choice
+    if board.share_values:
+        shared = share_values(task, choice)
+        said.append(_of_sharing(task, choice, shared))
+        choice = shared.choice
+    return replace(choice, notices=(*choice.notices, *said))
+
+
+def _of_pairs(found: Pairing) -> list[str]:
+    if not found.needed:
+        return []
+    before = f"{found.share_before:.2g} times its limit"
+    if not found.pairs:
+        return [
+            f"with single parts the error reaches {before}, and two resistors in the place of "
+            "one bring it no nearer"
+        ]
+    return [
+        f"{_words(found.pairs)}: with single parts the error reaches {before}, with these "
+        f"{found.share_after:.2g} times"
+    ]
+
+
+def _words(pairs: tuple[Pair, ...]) -> str:
+    """ "R1 is two resistors in parallel, R1A and R1B; R4 ..." """
+    return "; ".join(
+        f"{pair.ref} is two resistors in {pair.how}, {pair.refs[0]} and {pair.refs[1]}"
+        for pair in pairs
+    )
+
+
+def _of_sharing(task: Task, choice: Choice, found: Sharing) -> str:
+    fewer = found.before - found.after
+    if not fewer:
+        return f"no fewer than {found.before} distinct values keep the error about where it is"
+    before, after = _rms(task, choice.circuit), _rms(task, found.choice.circuit)
+    return (
+        f"{fewer} fewer distinct values, {found.after} instead of {found.before}: rms error "
+        f"{100 * after:.2g} % instead of {100 * before:.2g} %"
+    )
+
+
+def _rms(task: Task, circuit: Circuit) -> float:
+    response = compile_circuit(circuit).solve(task.frequency_hz)
+    return response_error(np.asarray(response), task.target).rms
