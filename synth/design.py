@@ -17,6 +17,7 @@ from numpy.typing import NDArray
 
 from synth.candidates import Sketch, choose_form
 from synth.choosing import Choice, choose_values
+from synth.choosing.choose import DEFAULT_EFFORT
 from synth.circuit import Circuit
 from synth.evidence import Check, response_error
 from synth.graph import BlockGraph
@@ -28,8 +29,19 @@ from synth.nodal import compile_circuit
 from synth.peaks import frequencies_of_interest
 from synth.results import Candidate, Design, LoopResult, NoiseResult, Swing, ToleranceResult
 from synth.tolerance import run_boards
+from synth.transfer import TransferFunction
 
-__all__ = ["DEFAULT_BOARDS", "DEFAULT_SEED", "compare_forms", "design"]
+__all__ = [
+    "DEFAULT_BOARDS",
+    "DEFAULT_SEED",
+    "compare_forms",
+    "design",
+    "judged_design",
+    "level_ratios",
+    "standard_values",
+    "thinned",
+    "wanted_of",
+]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -88,10 +100,36 @@ def design(
     sketch, candidates = choose_form(
         job, frequency, progress=lambda done, total: say("forms", done, total)
     )
-    wanted = job.target.negated() if sketch.polarity.output_inverted else job.target
-    response = wanted.response(frequency)
     say("values", 0, 1)
-    choice = _choose(sketch, job, response, frequency, seed)
+    choice = standard_values(
+        sketch, job, wanted_of(sketch, job).response(frequency), frequency, seed
+    )
+    return judged_design(
+        job, sketch, candidates, choice, frequency, boards=boards, seed=seed, progress=say
+    )
+
+
+def wanted_of(sketch: Sketch, job: Job) -> TransferFunction:
+    """What the output net must show: H(s) or -H(s)."""
+    return job.target.negated() if sketch.polarity.output_inverted else job.target
+
+
+def judged_design(
+    job: Job,
+    sketch: Sketch,
+    candidates: tuple[Candidate, ...],
+    choice: Choice,
+    frequency: Real,
+    *,
+    boards: int,
+    seed: int,
+    progress: Progress,
+) -> Design:
+    """The design with the chosen values and all that is predicted of it; arguments as those of
+    `design`, errors on the grid `frequency` (F,) [Hz]."""
+    say = progress
+    wanted = wanted_of(sketch, job)
+    response = wanted.response(frequency)
     circuit = choice.circuit
     program = compile_circuit(circuit)
     tolerance = run_boards(
@@ -128,9 +166,22 @@ def design(
     )
 
 
-def _choose(sketch: Sketch, job: Job, response: Complex, frequency_hz: Real, seed: int) -> Choice:
-    """Standard values, on at most about `FREQUENCIES_OF_THE_SEARCH` of the frequencies."""
-    few = slice(None, None, max(1, frequency_hz.size // FREQUENCIES_OF_THE_SEARCH))
+def thinned(frequency_hz: Real) -> slice:
+    """About `FREQUENCIES_OF_THE_SEARCH` of the frequencies."""
+    return slice(None, None, max(1, frequency_hz.size // FREQUENCIES_OF_THE_SEARCH))
+
+
+def standard_values(
+    sketch: Sketch,
+    job: Job,
+    response: Complex,
+    frequency_hz: Real,
+    seed: int,
+    *,
+    effort: int = DEFAULT_EFFORT,
+) -> Choice:
+    """Standard values for the sketch's circuit, for the `response` (F,) of its output."""
+    few = thinned(frequency_hz)
     return choose_values(
         sketch.circuit,
         target=response[few],
@@ -138,6 +189,7 @@ def _choose(sketch: Sketch, job: Job, response: Complex, frequency_hz: Real, see
         accept=job.accept,
         level_limits=_level_limits(sketch, job),
         seed=seed,
+        effort=effort,
     )
 
 
@@ -160,15 +212,20 @@ def _checks(
 def _as_chosen(sketch: Sketch, circuit: Circuit, frequency_hz: Real) -> BlockGraph:
     """The sketch's graph at the levels the chosen values give: the choice moves the scales of
     the states, which H(s) does not see."""
+    return sketch.graph.rescaled(level_ratios(sketch, circuit, frequency_hz))
+
+
+def level_ratios(sketch: Sketch, circuit: Circuit, frequency_hz: Real) -> dict[str, float]:
+    """By block other than the output's: its level in `circuit` over that in the sketch's graph,
+    the mean over the frequencies."""
     signals = sketch.graph.signals(2j * np.pi * frequency_hz)
     cells = [c for c in circuit.cells if c.kind != "inverter"]
     volts = np.abs(compile_circuit(circuit).solve(frequency_hz, nets=[c.output for c in cells]))
-    levels = {
+    return {
         cell.block: float(np.exp(np.mean(np.log(volts[:, k] / np.abs(signals[cell.block])))))
         for k, cell in enumerate(cells)
         if cell.block != sketch.graph.output
     }
-    return sketch.graph.rescaled(levels)
 
 
 def _loop(job: Job, circuit: Circuit, *, inverted: bool) -> LoopResult | None:

@@ -13,7 +13,7 @@ from synth.errors import JobError
 from synth.parts import OpAmp, PartRule
 from synth.transfer import TransferFunction
 
-__all__ = ["Accept", "Board", "Job", "Loop", "Signal"]
+__all__ = ["Accept", "Board", "Job", "JobText", "Loop", "Signal"]
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -169,6 +169,25 @@ class Loop:
 
 
 @dataclass(frozen=True, kw_only=True)
+class JobText:
+    """What a job was read from, so that a pack can carry it.
+
+    Parameters
+    ----------
+    name
+        Name of the file, without its folder.
+    text
+        Its content.
+    files
+        Name, as the job states it, and content of every further file it names.
+    """
+
+    name: str
+    text: str
+    files: tuple[tuple[str, str], ...] = ()
+
+
+@dataclass(frozen=True, kw_only=True)
 class Job:
     """A whole job.
 
@@ -179,6 +198,9 @@ class Job:
     notices
         What the reader of the job should know, one sentence each: a pole and a zero that
         cancelled, a band that misses every root.
+    source
+        The text it was read from, where there is one; two jobs that ask for the same are equal
+        whatever they were read from.
     """
 
     target: TransferFunction
@@ -188,3 +210,4 @@ class Job:
     loop: Loop | None = None
     title: str = "untitled"
     notices: tuple[str, ...] = ()
+    source: JobText | None = field(default=None, compare=False, repr=False)

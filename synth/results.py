@@ -15,6 +15,7 @@ from synth.evidence import Check, ResponseError
 from synth.graph import BlockGraph
 from synth.job import Job
 from synth.loop import LoopMargins
+from synth.shortages import Repick
 from synth.transfer import TransferFunction
 
 __all__ = ["Candidate", "Design", "Drift", "LoopResult", "NoiseResult", "Swing", "ToleranceResult"]
@@ -171,6 +172,8 @@ class Design:
         Predicted checks: yield, swing, slew, current.
     notices
         What the user should know, one sentence each.
+    repick
+        What changed, where this is an earlier design with other values.
     """
 
     job: Job
@@ -190,3 +193,4 @@ class Design:
     checks: tuple[Check, ...]
     loop: LoopResult | None = None
     notices: tuple[str, ...] = field(default=())
+    repick: Repick | None = None

@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.choosing.certificate import Certificate, certify
+from synth.choosing.enumeration import best_of_all
 from synth.choosing.grid import ValueGrid
 from synth.choosing.model import Goal, LevelLimits, LinearModel, compensation
 from synth.choosing.search import search_values
@@ -15,7 +16,7 @@ from synth.circuit import Circuit
 from synth.job import Accept
 from synth.nodal import NodalProgram, compile_circuit
 
-__all__ = ["DEFAULT_EFFORT", "Choice", "choose_values"]
+__all__ = ["DEFAULT_EFFORT", "Choice", "choose_values", "with_ideals"]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -90,7 +91,7 @@ def choose_values(
     logs = np.log([p.ideal for p in circuit.passives])
     ideal = compile_circuit(with_ideal_op_amps(circuit))
     limits = _limits(circuit, logs, level_limits or {})
-    outcome = search_values(
+    outcome = best_of_all(program, grid, goal, limits) or search_values(
         program,
         grid,
         goal,
@@ -112,7 +113,7 @@ def choose_values(
             certificate = _certified(program, ideal, grid, goal, index)
     chosen = _with(circuit, grid.values_at(index))
     return Choice(
-        circuit=_with_ideals(chosen, grid, goal),
+        circuit=with_ideals(chosen, goal),
         nearest=_with(circuit, grid.values_at(grid.nearest(logs))),
         certificate=certificate,
         looked=outcome.looked,
@@ -160,11 +161,11 @@ def _limits(
     return LevelLimits(np.array(rows), np.array(slack), ideal)
 
 
-def _with_ideals(circuit: Circuit, grid: ValueGrid, goal: Goal) -> Circuit:
+def with_ideals(circuit: Circuit, goal: Goal) -> Circuit:
     """Each resistor's `ideal` moved to the exact solution nearest to the chosen values."""
     values = np.array([p.value for p in circuit.passives])
     logs = np.log(values)
-    free = grid.resistors
+    free = ValueGrid(circuit.passives).resistors
     for _ in range(2):
         model = LinearModel.about(compile_circuit(circuit), np.exp(logs), goal)
         logs[free] -= compensation(model.matrix[:, free], IDEAL_RIDGE) @ model.offset

@@ -43,6 +43,9 @@ BINDING_SHARE = 0.5
 BINDING_STARTS = 400
 BINDING_BEAM = 4000
 
+# Pairs of steps that justify keeping one more set: a search of little effort keeps fewer.
+EFFORT_PER_SET = 15_000
+
 # How many candidates of a round the nodal engine judges.
 CANDIDATES = 24
 
@@ -118,7 +121,7 @@ def search_values(
     for kick in KICKS:
         model = LinearModel.about(program, reference, goal)
         skeleton = LinearModel.about(program, reference, goal, jacobian=ideal)
-        starts = binding_starts(grid, skeleton)
+        starts = binding_starts(grid, skeleton, beam=min(BINDING_BEAM, effort // EFFORT_PER_SET))
         one = _Round(grid, model, limits=limits, starts=starts, kick=kick, rng=rng)
         pool = one.run(best, effort // len(KICKS))
         looked += one.looked
@@ -144,10 +147,13 @@ class BindingStarts:
     index: Index
 
 
-def binding_starts(grid: ValueGrid, skeleton: LinearModel) -> BindingStarts | None:
+def binding_starts(
+    grid: ValueGrid, skeleton: LinearModel, *, beam: int = BINDING_BEAM
+) -> BindingStarts | None:
     """Values of the binding parts, grown set by set; None where no part binds.
 
-    Of equal bounds, as decades repeat them, those nearest to the reference come first.
+    After each part the best `beam` sets are kept.  Of equal bounds, as decades repeat them,
+    those nearest to the reference come first.
     """
     order, binding = binding_order(skeleton.matrix, grid)
     frontier = Frontier.start(skeleton, grid)
@@ -156,7 +162,7 @@ def binding_starts(grid: ValueGrid, skeleton: LinearModel) -> BindingStarts | No
         grown = frontier.grown(part, columns, below=np.inf, largest=400 * BINDING_BEAM)
         if grown is None:
             return None
-        frontier = grown.best(columns, BINDING_BEAM)
+        frontier = grown.best(columns, max(beam, 1))
     if not frontier.parts:
         return None
     return BindingStarts(np.array(frontier.parts), frontier.chosen[:, :BINDING_STARTS])
