@@ -18,7 +18,7 @@ from typing import TYPE_CHECKING, Any
 from netlist.jobvalues import unknown_key
 from netlist.mistakes import Mistakes
 from synth.errors import JobError
-from synth.job import Accept, Board, Job, Loop, Signal
+from synth.job import Accept, Board, Job, JobText, Loop, Signal
 from synth.op_amps import DEFAULT_CLASS, op_amp_class
 from synth.parts import OpAmp, PartRule
 from synth.quantities import what_came
@@ -96,6 +96,7 @@ def parse_job(text: str, *, name: str = "job") -> Job:
         accept=accept,
         loop=loop,
         notices=notices,
+        source=JobText(name=Path(name).name, text=text),
         **named,
     )
 
