@@ -75,11 +75,12 @@ def sketch_form(job: Job, form: str, frequency_hz: Real) -> Sketch:
     graph = realize(job.target, form)
     polarity = choose_polarity(graph, inverted=job.board.inverted)
     peaks = signal_peaks(graph, job.target, band_hz=job.signal.band_hz, swing=job.signal.swing)
+    # Levels see the response at a part of the frequencies, the spread needs every peak of it.
     few = frequency_hz[:: max(1, frequency_hz.size // 200)]
     scaled = scale(graph, polarity, job, peaks, few)
     circuit = map_graph(scaled.graph, polarity, scaled.sizing, job)
     tolerances = np.array([p.tolerance for p in circuit.passives])
-    sensitivities = compile_circuit(circuit).sensitivities(few)
+    sensitivities = compile_circuit(circuit).sensitivities(frequency_hz)
     spread = predicted_spread(sensitivities, tolerances)
     return Sketch(
         form=form,
@@ -133,7 +134,10 @@ def choose_form(
             sketches.append(sketch)
             candidates.append(sketch.candidate)
     if not sketches:
-        reasons = "; ".join(f"{c.form}: {c.reason}" for c in candidates)
+        forms: dict[str, list[str]] = {}
+        for c in candidates:
+            forms.setdefault(c.reason, []).append(c.form)
+        reasons = "; ".join(f"{', '.join(names)}: {reason}" for reason, names in forms.items())
         raise RealizationError(f"board.form: no form fits the parts: {reasons}")
 
     def spread(sketch: Sketch) -> tuple[float, int]:

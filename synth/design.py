@@ -248,7 +248,12 @@ def _level_limits(sketch: Sketch, job: Job) -> dict[str, tuple[float, float]]:
     signals = sketch.graph.signals(2j * np.pi * grid)
     limits: dict[str, tuple[float, float]] = {}
     for cell in sketch.circuit.cells:
-        if cell.output == sketch.circuit.output_net or cell.block not in signals:
+        if cell.output == sketch.circuit.output_net:
+            continue
+        if cell.block not in signals:  # the inverter of the input: the same gain everywhere
+            inverter = [sketch.circuit.by_ref[r].ideal for r in (*cell.inputs, cell.feedback)]
+            highest = job.signal.input_peak * inverter[1] / inverter[0]
+            limits[cell.output] = (job.signal.band_hz[0], job.board.swing_limit / highest)
             continue
         volts = job.signal.input_peak * sketch.levels[cell.block]
         rising = min(

@@ -78,8 +78,12 @@ class ExpressionError(TargetError):
     """The expression for H(s) cannot be read.
 
     `text` is the expression and `position` the offending character, counted from 0;
-    `marked` shows both on two lines, the second a caret under the character.
+    `marked` shows both on two lines, the second a caret under the character, of a long
+    expression only what stands around it.
     """
+
+    # Characters of a long expression shown before and behind the offending one.
+    around: ClassVar[int] = 36
 
     def __init__(self, problem: str, *, text: str, position: int, key: str = "") -> None:
         self.text = text
@@ -88,8 +92,12 @@ class ExpressionError(TargetError):
 
     @property
     def marked(self) -> str:
-        """The expression with a caret under the offending character."""
-        return f"{self.text}\n{' ' * self.position}^"
+        """The expression, or what stands around the character, with a caret under it."""
+        start, end = max(self.position - self.around, 0), self.position + self.around
+        before = "..." if start else ""
+        behind = "..." if end < len(self.text) else ""
+        place = " " * (len(before) + self.position - start)
+        return f"{before}{self.text[start:end]}{behind}\n{place}^"
 
 
 class RealizationError(PolewrightError, ValueError):

@@ -22,6 +22,7 @@ LARGEST_DENSITY = 2000
 POINTS_ACROSS_RESONANCE = 8
 FEWEST_INTERVALS = 200
 DENSEST_GRID = 100_000
+NARROWEST_BAND = 1e-6  # A sweep holds its points per decade in 32 bits.
 ON_A_ZERO = 1e-9
 _DECIMALS = re.compile(r"(\d+)(?:\.(\d*))?(?:e([+-]?\d+))?")
 
@@ -79,6 +80,16 @@ def band_grid(band_hz: tuple[float, float], points_per_decade: int) -> NDArray[n
     if low >= high:
         raise JobError(
             f"got {low:g} Hz to {high:g} Hz, expected lowest < highest", key="signal.band"
+        )
+    if high / low < 1 + NARROWEST_BAND:
+        raise JobError(
+            f"got {band_hz[0]!r} Hz to {band_hz[1]!r} Hz, expected the highest at least "
+            f"{100 * NARROWEST_BAND:g} % above the lowest",
+            key="signal.band",
+        )
+    if math.isinf(high / low):
+        raise JobError(
+            f"got {low:g} Hz to {high:g} Hz, expected fewer decades than that", key="signal.band"
         )
     steps = math.floor(abs(math.log10(high / low)) * points_per_decade)
     if steps < 1:

@@ -241,3 +241,6 @@ def test_the_map_for_developers_names_every_module_and_no_other(project):
     everything = {p.name for p in texts(project)}
     for name in re.findall(r"`(?:[\w./]*/)?(\w+\.py)`", guide):
         assert name in everything or name == "NAME.py", f"on the map but not there: {name}"
+    for name in re.findall(r"`((?:[\w.]+/)+)`", guide):
+        bases = (project, *(project / folder for folder in (*PACKAGES, "tests")))
+        assert any((base / name).is_dir() for base in bases), f"on the map but not there: {name}"

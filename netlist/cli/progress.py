@@ -37,8 +37,13 @@ def progress() -> Iterator[Report]:
     with Progress(*columns, console=console, transient=True) as bar:
         task = bar.add_task("starting", total=None)
 
+        shown = ""
+
         def report(stage: str, done: int, total: int) -> None:
+            nonlocal shown
             known = total if total > 1 else None
-            bar.update(task, description=stage, completed=done, total=known)
+            # However short a stage is, its name is seen.
+            bar.update(task, description=stage, completed=done, total=known, refresh=stage != shown)
+            shown = stage
 
         yield report

@@ -26,6 +26,9 @@ __all__ = [
 
 Row = dict[str, object]
 
+# The unit of a check whose value is a count, written without decimals.
+COUNTED = "unstable poles"
+
 
 def margin(check: Check) -> float | None:
     """How far a value is inside its limit, negative outside, in the unit of the check."""
@@ -197,7 +200,10 @@ def part_rows(lines: Iterable[PartLine]) -> list[Row]:
 
 def _with(value: float, unit: str) -> str:
     """A value of a check with its unit, as plain as its table of limits wants it."""
-    text = decibel(value) if unit in ("dB", "deg") else number(value, 4)
+    if unit == COUNTED:
+        text = f"{value:.0f}".replace("-", "−")
+    else:
+        text = decibel(value) if unit in ("dB", "deg") else number(value, 4)
     return f"{text}\N{NO-BREAK SPACE}{unit.replace('us', 'µs')}".strip()
 
 

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 from synth.choosing.certificate import Certificate, certify
 from synth.choosing.enumeration import best_of_all
 from synth.choosing.grid import ValueGrid
-from synth.choosing.model import Goal, LevelLimits, LinearModel, compensation
+from synth.choosing.model import Ceilings, Goal, LinearModel, compensation
 from synth.choosing.search import search_values
 from synth.circuit import Circuit
 from synth.job import Accept
@@ -90,14 +90,14 @@ def choose_values(
         goal = Goal.within(target, frequency_hz, accept)
     logs = np.log([p.ideal for p in circuit.passives])
     ideal = compile_circuit(with_ideal_op_amps(circuit))
-    limits = _limits(circuit, logs, level_limits or {})
-    outcome = best_of_all(program, grid, goal, limits) or search_values(
+    ceilings = Ceilings.of(program, np.exp(logs), level_limits or {})
+    outcome = best_of_all(program, grid, goal, ceilings) or search_values(
         program,
         grid,
         goal,
         start_logs=logs,
         ideal=ideal,
-        limits=limits,
+        ceilings=ceilings,
         seed=seed,
         effort=effort,
     )
@@ -107,7 +107,7 @@ def choose_values(
         # Every choice was looked at: take the best, where the whole circuit confirms it.
         both = np.array([grid.values_at(k) for k in (index, certificate.better)])
         squares = goal.mean_squares(program, both)
-        allowed = limits is None or limits.hold(np.log(both[1]))
+        allowed = ceilings is None or bool(ceilings.keep(program, both[1:])[0])
         if squares[1] < squares[0] and allowed:
             index = certificate.better
             certificate = _certified(program, ideal, grid, goal, index)
@@ -142,23 +142,6 @@ def with_ideal_op_amps(circuit: Circuit) -> Circuit:
 def _with(circuit: Circuit, values: Real) -> Circuit:
     refs = (p.ref for p in circuit.passives)
     return circuit.with_values(dict(zip(refs, map(float, values), strict=True)))
-
-
-def _limits(
-    circuit: Circuit, ideal: Real, levels: dict[str, tuple[float, float]]
-) -> LevelLimits | None:
-    """Ceilings as linear limits in the ln of the parts."""
-    if not levels:
-        return None
-    program = compile_circuit(circuit)
-    rows = [
-        program.sensitivities([peak_hz], values=np.exp(ideal), net=net).passives[0].real
-        for net, (peak_hz, _) in levels.items()
-    ]
-    # An output already above its ceiling must not be pushed further; that it cannot be
-    # brought below by the values is for the swing check to say.
-    slack = [max(float(np.log(ratio)), 0.0) for _, ratio in levels.values()]
-    return LevelLimits(np.array(rows), np.array(slack), ideal)
 
 
 def with_ideals(circuit: Circuit, goal: Goal) -> Circuit:

@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.choosing.grid import ValueGrid
-from synth.choosing.model import Goal, LevelLimits
+from synth.choosing.model import Ceilings, Goal
 from synth.choosing.search import SearchOutcome
 from synth.nodal import NodalProgram
 
@@ -25,13 +25,13 @@ def best_of_all(
     program: NodalProgram,
     grid: ValueGrid,
     goal: Goal,
-    limits: LevelLimits | None = None,
+    ceilings: Ceilings | None = None,
     *,
     largest: int = LARGEST_ENUMERATION,
 ) -> SearchOutcome | None:
     """The choice with the least error of all, or None where there are more than `largest`.
 
-    Choices that raise an op-amp output beyond `limits` count only when every one does.
+    Choices that raise an op-amp output beyond `ceilings` count only when every one does.
     """
     counts = [int(n) for n in grid.counts]
     total = math.prod(counts)
@@ -40,8 +40,8 @@ def best_of_all(
     places = np.stack(np.unravel_index(np.arange(total), counts), axis=1)
     values = np.array([grid.values_at(place) for place in places])
     squares = goal.mean_squares(program, values)
-    if limits is not None:
-        held = np.array([limits.hold(np.log(row)) for row in values])
+    if ceilings is not None:
+        held = ceilings.keep(program, values)
         if np.any(held):
             squares = np.where(held, squares, np.inf)
     best = int(np.argmin(squares))

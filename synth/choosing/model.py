@@ -9,7 +9,7 @@ A singular value decomposition keeps the few directions that matter.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -18,7 +18,7 @@ from synth.evidence import DB_PER_NEPER
 from synth.job import Accept
 from synth.nodal import NodalProgram
 
-__all__ = ["Goal", "LevelLimits", "LinearModel", "compensation"]
+__all__ = ["Ceilings", "Goal", "LevelLimits", "LinearModel", "compensation"]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -134,6 +134,50 @@ class LinearModel:
 
 
 @dataclass(frozen=True, eq=False)
+class Ceilings:
+    """How large the gain to each op-amp output may be at the frequency of its peak.
+
+    `nets` with `peak_hz` (U,) [Hz] and `highest` (U,), a ratio.
+    """
+
+    nets: tuple[str, ...]
+    peak_hz: Real
+    highest: Real
+
+    @classmethod
+    def of(
+        cls, program: NodalProgram, values: Real, levels: dict[str, tuple[float, float]]
+    ) -> Ceilings | None:
+        """From the peak's frequency and the ratio by which each may rise above what it is with
+        `values` (P,).  One already above its ceiling must not be pushed further; that it
+        cannot be brought below by the values is for the swing check to say."""
+        if not levels:
+            return None
+        peak_hz, ratios = (np.array(column) for column in zip(*levels.values(), strict=True))
+        found = cls(tuple(levels), peak_hz, np.maximum(ratios, 1.0))
+        return replace(found, highest=found.highest * found._gains(program, values[None, :])[0])
+
+    def _gains(self, program: NodalProgram, values: Real) -> Real:
+        """Gain to each output at its peak, values (boards, P), shape (boards, U)."""
+        gains = program.solve(self.peak_hz, values=values, nets=self.nets)
+        return np.abs(np.diagonal(gains, axis1=1, axis2=2))
+
+    def keep(self, program: NodalProgram, values: Real) -> NDArray[np.bool_]:
+        """Which boards stay below every ceiling, values (boards, P), shape (boards,)."""
+        kept = self._gains(program, values) <= self.highest * (1 + 1e-9)
+        return np.asarray(np.all(kept, axis=1))
+
+    def about(self, program: NodalProgram, values: Real) -> LevelLimits:
+        """The same as linear limits about `values` (P,)."""
+        rows = [
+            program.sensitivities([peak_hz], values=values, net=net).passives[0].real
+            for net, peak_hz in zip(self.nets, self.peak_hz, strict=True)
+        ]
+        slack = np.log(self.highest / self._gains(program, values[None, :])[0])
+        return LevelLimits(np.array(rows), slack, np.log(values))
+
+
+@dataclass(frozen=True, eq=False)
 class LevelLimits:
     """How far the peaks of the op-amp outputs may rise: matrix (ln p - reference) <= slack.
 
@@ -151,4 +195,4 @@ class LevelLimits:
 
     def hold(self, logs: Real) -> bool:
         """Whether every output stays below its ceiling at ln p = `logs`."""
-        return bool(np.all(self.excess(logs) <= 1e-12))
+        return bool(np.all(self.excess(logs) <= 1e-9))

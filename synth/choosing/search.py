@@ -20,7 +20,7 @@ from numpy.typing import NDArray
 from synth.choosing.binding import Frontier, binding_order
 from synth.choosing.descent import Neighbourhood
 from synth.choosing.grid import ValueGrid
-from synth.choosing.model import Goal, LevelLimits, LinearModel, compensation
+from synth.choosing.model import Ceilings, Goal, LevelLimits, LinearModel, compensation
 from synth.nodal import NodalProgram
 
 __all__ = ["SearchOutcome", "search_values"]
@@ -93,7 +93,7 @@ def search_values(
     *,
     start_logs: Real,
     ideal: NodalProgram,
-    limits: LevelLimits | None,
+    ceilings: Ceilings | None,
     seed: int,
     effort: int,
 ) -> SearchOutcome:
@@ -107,33 +107,52 @@ def search_values(
         ln of the ideal values, shape (P,): where the search starts.
     ideal
         The same circuit with ideal op-amps.
-    limits
-        How far op-amp outputs may rise; a candidate beyond them is not taken.
+    ceilings
+        How far op-amp outputs may rise; a candidate beyond them is not taken while there is
+        another.
     effort
         Pairs of steps to be evaluated in all rounds together, about; the search stops by
         this count alone, or when rounds no longer gain.
     """
     rng = np.random.default_rng(seed)
     best = grid.nearest(start_logs)
-    best_square = float(goal.mean_squares(program, grid.values_at(best)[None, :])[0])
+    best_square = float(_judged(program, grid, goal, ceilings, [best])[0])
     reference = np.exp(start_logs)
     looked = 0
     for kick in KICKS:
         model = LinearModel.about(program, reference, goal)
         skeleton = LinearModel.about(program, reference, goal, jacobian=ideal)
         starts = binding_starts(grid, skeleton, beam=min(BINDING_BEAM, effort // EFFORT_PER_SET))
+        limits = None if ceilings is None else ceilings.about(program, reference)
         one = _Round(grid, model, limits=limits, starts=starts, kick=kick, rng=rng)
         pool = one.run(best, effort // len(KICKS))
         looked += one.looked
         members = pool.members()
         if not members:
             continue
-        squares = goal.mean_squares(program, np.array([grid.values_at(m) for m in members]))
+        squares = _judged(program, grid, goal, ceilings, members)
         k = int(np.argmin(squares))
         if squares[k] < best_square:
             best, best_square = members[k], float(squares[k])
         reference = grid.values_at(best)
-    return SearchOutcome(index=best, rms=float(np.sqrt(best_square)), looked=looked)
+    (square,) = goal.mean_squares(program, grid.values_at(best)[None, :])
+    return SearchOutcome(index=best, rms=float(np.sqrt(square)), looked=looked)
+
+
+def _judged(
+    program: NodalProgram,
+    grid: ValueGrid,
+    goal: Goal,
+    ceilings: Ceilings | None,
+    candidates: list[Index],
+) -> Real:
+    """Mean square error of each by the nodal engine, infinite with an output above its
+    ceiling, which the linear limits of a round may miss."""
+    values = np.array([grid.values_at(k) for k in candidates])
+    squares = goal.mean_squares(program, values)
+    if ceilings is None:
+        return squares
+    return np.where(ceilings.keep(program, values), squares, np.inf)
 
 
 @dataclass(frozen=True, eq=False)

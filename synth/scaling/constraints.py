@@ -14,7 +14,9 @@ from numpy.typing import NDArray
 
 from synth.errors import RealizationError
 from synth.job import Job
+from synth.parts import PartRule
 from synth.peaks import SignalPeaks
+from synth.quantities import show
 from synth.scaling.variables import Variables
 
 __all__ = ["Region", "ceilings", "region"]
@@ -115,13 +117,18 @@ def refuse(variables: Variables, job: Job, v: Real) -> RealizationError:
         if miss > worst:
             worst = miss
             size = math.exp(v[variables.size_place(block.name)])
-            own = f"{size:.3g} F" if block.is_integrator else f"{size:.3g} ohm of feedback"
-            message = (
-                f"{block.kind} {block.name} would need resistors from {low:.3g} to {high:.3g} ohm "
-                f"(with {own})"
-            )
+            own = show(size, "F" if block.is_integrator else "ohm", 3)
+            needed = dict.fromkeys(show(r, "ohm", 3) for r in (low, high))
+            words = f"{'from' if len(needed) > 1 else 'of'} {' to '.join(needed)}"
+            what = "" if block.is_integrator else " of feedback"
+            message = f"{block.kind} {block.name} would need resistors {words} (with {own}{what})"
+    caps = job.board.capacitors
     return RealizationError(
-        f"board.resistors: no scaling of the {variables.graph.form} form fits: {message}, "
-        f"allowed are {rule.smallest:.3g} to {rule.largest:.3g} ohm; widen the range of "
-        "resistors or capacitors, or choose another form"
+        f"board.resistors: no scaling fits: {message}, allowed are {_range(rule)} and "
+        f"{_range(caps)}; widen these ranges, or choose another form or gain"
     )
+
+
+def _range(rule: PartRule) -> str:
+    unit = "ohm" if rule.kind == "resistor" else "F"
+    return f"{show(rule.smallest, unit, 3)} to {show(rule.largest, unit, 3)}"

@@ -601,6 +601,17 @@ def test_the_caret_holds_its_place_in_an_expression_of_several_lines():
     assert lines[2].index("^") == 4 + 7
 
 
+def test_of_a_long_expression_only_what_stands_around_the_character_is_shown():
+    long = "1/(s + 1)" + " + 1/(s + 1)" * 40
+    cut = long[:200] + "?" + long[200:]
+    lines = refusal(short(target=f"[target]\nexpression = '{cut}'")).split("\n")
+    assert len(lines) == 3
+    assert len(lines[1]) < 100
+    assert lines[1].lstrip().startswith("...")
+    assert lines[1].endswith("...")
+    assert lines[1][lines[2].index("^")] == "?"
+
+
 def test_a_parameter_that_does_not_exist_is_refused():
     message = refusal(short(target="[target]\nexpression = '1/(s + wx)'"))
     assert "wx" in message.split("\n")[0]

@@ -10,10 +10,14 @@ from html.parser import HTMLParser
 import pytest
 
 from netlist.partslist import parts_list
-from netlist.report.found import margin
+from netlist.report.found import check_rows, margin
 from netlist.report.page import headline, inlined, report_page
 from netlist.report.wording import decibel, number, quantity, stated
 from synth.evidence import Check
+from synth.job import Loop
+from synth.loop import loop_margins
+from synth.results import LoopResult
+from synth.transfer import TransferFunction
 from tests.netlist import boards
 
 HOSTILE = "<script>alert(1)</script> & \"quotes\" 'single' {{ 7*7 }}\nline\x00\x1b[31m"
@@ -204,3 +208,25 @@ def test_what_fails_stands_at_the_top_of_the_checks():
     found = Page(page(checks=(*boards.LIMITS, missed))).text
     table = found[found.index("limit value margin result") :]
     assert table.index("peak at U9") < table.index("magnitude error")
+
+
+def test_poles_are_counted_in_whole_numbers():
+    (row,) = check_rows([Check("closed loop", 0.0, 106.0, "unstable poles", False)])
+    assert (row["value"], row["margin"]) == ("106\xa0unstable poles", "−106\xa0unstable poles")
+
+
+def test_with_a_loop_the_note_below_the_checks_still_sends_to_the_spread_alone():
+    made = boards.design()
+    plant = TransferFunction.from_polynomials([1000.0], [1.0, 1.0])
+    around = Loop(plant=plant)
+    margins = loop_margins(around, made.job.target)
+    made = replace(
+        made,
+        job=replace(made.job, loop=around),
+        loop=LoopResult(target=margins, nominal=margins),
+    )
+    found = Page(
+        report_page(made, boards.verification(made), drawings=boards.drawings(), lines=())
+    ).text
+    assert "closed-loop poles" in found
+    assert "assumed distributions of part values ( spread )." in found

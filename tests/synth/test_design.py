@@ -87,6 +87,15 @@ def test_every_output_is_watched_where_its_op_amp_shows_the_peak() -> None:
         assert shown == pytest.approx(peaks[net], rel=0.02)
 
 
+@pytest.mark.parametrize("seed", [2, 3])
+def test_an_input_above_the_rails_is_inverted_below_them(seed: int) -> None:
+    """The inverter of the input keeps below its rail whatever values the seed leads to."""
+    target = TransferFunction.from_factors(2000, [], [Factor.real(-6000)])
+    found = design(job_for(target, BAND, input_peak=20.0), boards=10, seed=seed)
+    assert [s.net for s in found.swings] == ["in_n", "out"]
+    assert all(s.peak <= s.peak_limit for s in found.swings)
+
+
 def test_pole_at_the_origin_is_allowed_flagged_and_measured_from_the_band() -> None:
     """The integrator drifts at Vos/(R C) + Ib/C, and peaks are those from the band's edge up."""
     job = job_for(PI, (10.0, 5e3), input_peak=0.1)
@@ -186,3 +195,16 @@ def test_progress_is_told_stage_by_stage() -> None:
     stages = list(dict.fromkeys(stage for stage, _, _ in told))
     assert stages == ["forms", "values", "boards", "limits"]
     assert all(0 <= done <= total for _, done, total in told)
+
+
+def test_the_loop_of_an_inverting_board_is_that_of_h() -> None:
+    """A board of -H stands in a loop that inverts once more: its margins are those of H(s)."""
+    plant = TransferFunction.from_polynomials([3e5], [1, 2e3, 0])
+    job = job_for(PI, (10.0, 5e3), input_peak=0.1, inverted="yes")
+    found = design(replace(job, loop=Loop(plant=plant)), boards=10)
+    assert found.inverted
+    assert found.loop.target.unstable_poles == 0
+    assert found.loop.nominal.unstable_poles == 0
+    assert found.loop.nominal.phase_margin_deg == pytest.approx(
+        found.loop.target.phase_margin_deg, abs=1.0
+    )

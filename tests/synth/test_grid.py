@@ -60,6 +60,8 @@ def test_steps_are_equal_on_a_logarithmic_axis_and_reach_both_ends():
         ((0.0, 1.0), 50, "two positive frequencies"),
         ((1.0, math.nan), 50, "two positive frequencies"),
         ((1e-30, 1e30), 2000, "at most 100000"),
+        ((1e-300, 1e300), 50, "fewer decades"),
+        ((999.9999999, 1000.0), 4_605_170_000_000, "0.0001 % above the lowest"),
     ],
 )
 def test_bands_without_a_grid_are_refused(band, density, told):

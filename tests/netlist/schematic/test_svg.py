@@ -51,7 +51,7 @@ def test_every_wire_and_every_dot_is_drawn_once():
 
 
 def test_rails_op_amp_and_decoupling_are_noted():
-    text = draw_schematic(boards.third_order(), title="Servo", supply=(-5, 15), subtitle="Issue 2")
+    text = draw_schematic(boards.third_order(), title="Servo", supply=(-5, 15), subtitle="Sheet 2")
     for note in (
         "+15 V and −5 V at every op-amp",
         "general purpose, 10 MHz, 10 V/us",
@@ -60,7 +60,7 @@ def test_rails_op_amp_and_decoupling_are_noted():
         "E12, 5 %",
         "5 op-amps, 12 resistors, 3 capacitors",
         "Servo",
-        "Issue 2",
+        "Sheet 2",
     ):
         assert note in text
 

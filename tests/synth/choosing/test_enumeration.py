@@ -11,7 +11,7 @@ import pytest
 from synth.candidates import sketch_form
 from synth.choosing.enumeration import best_of_all
 from synth.choosing.grid import ValueGrid
-from synth.choosing.model import Goal, LevelLimits
+from synth.choosing.model import Ceilings, Goal
 from synth.nodal import compile_circuit
 from tests.jobs import capacitor_rule, job_for, resistor_rule
 from tests.strategies import butterworth
@@ -51,22 +51,23 @@ def test_the_best_of_all_is_the_best_of_a_plain_loop() -> None:
 
 
 def test_a_choice_beyond_the_ceilings_is_not_taken_unless_all_are() -> None:
-    """A ceiling on the value of one part rules out what would be best."""
+    """A ceiling below what the best choice of all reaches rules it out; one below what any
+    choice reaches rules out none."""
     circuit, grid, goal = problem()
     program = compile_circuit(circuit)
     free = best_of_all(program, grid, goal)
     assert free is not None
-    place = [p.ref for p in circuit.passives].index("R1")
-    row = np.zeros((1, len(circuit.passives)))
-    row[0, place] = 1.0
-    reference = grid.logs_at(free.index)
-    below = LevelLimits(row, np.array([-0.1]), reference)
-    held = best_of_all(program, grid, goal, below)
+
+    def ceiling(ratio: float) -> Ceilings:
+        gain = abs(program.solve([500.0], values=grid.values_at(free.index), nets=["out"])[0, 0])
+        return Ceilings(("out",), np.array([500.0]), np.array([ratio * gain]))
+
+    held = best_of_all(program, grid, goal, ceiling(0.98))
     assert held is not None
-    assert held.index[place] < free.index[place]
+    reached = abs(program.solve([500.0], values=grid.values_at(held.index), nets=["out"])[0, 0])
+    assert reached <= ceiling(0.98).highest[0]
     assert held.rms > free.rms
-    nowhere = LevelLimits(row, np.array([-100.0]), reference)
-    fallen_back = best_of_all(program, grid, goal, nowhere)
+    fallen_back = best_of_all(program, grid, goal, ceiling(1e-9))
     assert fallen_back is not None
     np.testing.assert_array_equal(fallen_back.index, free.index)
 

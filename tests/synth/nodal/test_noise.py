@@ -22,7 +22,8 @@ QUIET = {"voltage_noise": 0.0, "current_noise": 0.0}
 
 @pytest.mark.parametrize(("temperature", "density"), [(300.0, 4.0704e-9), (290.0, 4.0019e-9)])
 def test_johnson_noise_of_a_kilohm(temperature, density):
-    """sqrt(4 k T R): 4.0704 nV/rtHz at 300 K, 4.0019 at 290 K (recomputed)."""
+    """Johnson 1928, Nyquist 1928 (from memory): sqrt(4 k T R), 4.0704 nV/rtHz at 300 K, 4.0019
+    at 290 K (recomputed)."""
     circuit = Circuit(passives=(resistor("R1", "in", "out", 1e3),), amplifiers=())
     noise = compile_circuit(circuit).noise([1.0, 1e6], temperature=temperature)
     np.testing.assert_allclose(noise.density, density, rtol=2e-5)

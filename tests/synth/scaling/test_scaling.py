@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
+from synth.candidates import choose_form
 from synth.errors import RealizationError
 from synth.evidence import response_error
 from synth.forms import FORMS, realize
@@ -196,6 +197,17 @@ def test_a_job_that_fits_nowhere_is_refused_with_the_numbers() -> None:
     job = job_for(butterworth(3, 1e3), BAND, resistors=narrow)
     with pytest.raises(RealizationError, match=r"board.resistors: .* would need resistors from"):
         stages(job, "controllable")
+
+
+def test_the_refusal_of_all_forms_for_one_reason_says_it_once() -> None:
+    """A pole at 0.01 Hz: every form is the same integrator, whose parts are named as bought."""
+    target = TransferFunction.from_factors(0.0628, [], [Factor.real(-0.0628)])
+    with pytest.raises(RealizationError) as caught:
+        choose_form(job_for(target, (1e-3, 1.0)), np.geomspace(1e-3, 1.0, 50))
+    said = str(caught.value)
+    assert said.count("would need resistors of") == 1
+    assert "controllable, observable, cascade: " in said
+    assert "allowed are 1 kohm to 1 Mohm and 100 pF to 1 uF" in said
 
 
 def test_internal_outputs_keep_half_the_slew_rate() -> None:

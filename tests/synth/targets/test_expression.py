@@ -212,7 +212,10 @@ def test_every_error_points_at_its_character(text, position, message):
     assert caught.value.position == position
     assert str(caught.value).startswith("target.expression: ")
     assert str(caught.value).endswith(f"at character {position + 1}")
-    assert caught.value.marked.splitlines()[-1] == " " * position + "^"
+    shown, caret = caught.value.marked.splitlines()
+    assert caret == " " * caret.index("^") + "^"
+    if text.isprintable():
+        assert shown[caret.index("^") :][:1] == text[position : position + 1]
 
 
 def test_positions_count_characters_of_a_text_of_several_lines():

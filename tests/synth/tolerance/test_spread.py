@@ -5,10 +5,14 @@ import math
 import numpy as np
 import pytest
 
+from synth.candidates import sketch_form
 from synth.errors import CircuitError
 from synth.evidence import DB_PER_NEPER, response_error
+from synth.grid import judging_frequencies
 from synth.nodal import compile_circuit
 from synth.tolerance import drawn_values, predicted_spread, tolerances_of
+from synth.transfer import Factor, TransferFunction
+from tests.jobs import job_for
 from tests.synth.nodal.boards import chain, integrator, op_amp
 
 
@@ -39,3 +43,16 @@ def test_as_many_tolerances_as_parts_are_expected():
     sensitivities = compile_circuit(integrator(op_amp())).sensitivities([1.0])
     with pytest.raises(CircuitError, match=r"got tolerances of shape \(3,\), expected \(2,\)"):
         predicted_spread(sensitivities, [0.1, 0.1, 0.1])
+
+
+def test_a_sketch_predicts_the_spread_at_a_sharp_resonance_in_a_wide_band():
+    """The largest spread is that over every judged frequency, not over a thinned grid."""
+    w0 = 2 * math.pi * 1e3
+    target = TransferFunction.from_factors(w0 / 50, [Factor.real(0)], [Factor.pair(w0, 50)])
+    job = job_for(target, (10.0, 1e5), input_peak=0.1)
+    sketch = sketch_form(job, "cascade", judging_frequencies(target, job.signal.band_hz))
+    near = 1e3 * np.linspace(0.97, 1.03, 2001)
+    sensitivities = compile_circuit(sketch.circuit).sensitivities(near)
+    spread = predicted_spread(sensitivities, tolerances_of(sketch.circuit))
+    assert sketch.spread_db == pytest.approx(np.max(spread.magnitude_db), rel=0.02)
+    assert sketch.spread_deg == pytest.approx(np.max(spread.phase_deg), rel=0.02)
