@@ -20,7 +20,7 @@ from netlist.jobvalues import read_fixed, unknown_key
 from netlist.mistakes import Mistakes
 from netlist.textfile import read_text_file
 from synth.errors import JobError
-from synth.job import Accept, Board, Job, Loop, Signal
+from synth.job import Accept, Board, Job, JobText, Loop, Signal
 from synth.op_amps import DEFAULT_CLASS, op_amp_class
 from synth.parts import OpAmp, PartRule, StockItem
 from synth.quantities import what_came
@@ -94,6 +94,7 @@ def parse_job(text: str, *, name: str = "job", folder: str | Path | None = None)
         accept=accept,
         loop=loop,
         notices=notices,
+        source=JobText(name=Path(name).name, text=text),
         **named,
     )
 

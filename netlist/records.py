@@ -6,6 +6,9 @@ Numbers are in SI units unless the key ends in another one (``_hz``, ``_db``, ``
 ``components`` are the parts of the signal path on the board; what the job hangs on its
 terminals (source resistance, load) is under ``surroundings``.
 
+``job`` is the text of the job file, with that of every file it names, so that a pack can be
+designed again from itself; ``repick`` is there where a pack was made from an earlier one.
+
 Without a simulation both checks that rest on it stay in the list, with ``"value": null`` and
 ``"passed": false``: a script that asks for them by name finds them, and finds no pass.
 """
@@ -17,7 +20,7 @@ import math
 from dataclasses import asdict
 from typing import TYPE_CHECKING, TypeAlias
 
-from synth.evidence import Check, verdict
+from synth.evidence import Check, ResponseError, verdict
 from synth.results import Candidate, Design, ErrorFigures
 
 if TYPE_CHECKING:
@@ -95,6 +98,8 @@ def design_record(design: Design, verification: Verification) -> dict[str, Json]
         "drift": [asdict(d) for d in design.drifts],
         "forms": candidate_records(design.candidates),
         "simulation": _simulation(verification),
+        **_repick(design),
+        **_source(design),
         "notices": list(dict.fromkeys((*job.notices, *design.notices))),
     }
     return {key: _finite(value) for key, value in record.items()}
@@ -236,6 +241,41 @@ def _loop(design: Design) -> dict[str, object]:
     if design.loop is None:
         return {}
     return {"loop": {"target": asdict(design.loop.target), "nominal": asdict(design.loop.nominal)}}
+
+
+def _source(design: Design) -> dict[str, object]:
+    """What the job was read from, where there is a text of it."""
+    source = design.job.source
+    if source is None:
+        return {}
+    return {"job": {"name": source.name, "text": source.text, "files": dict(source.files)}}
+
+
+def _repick(design: Design) -> dict[str, object]:
+    """What an earlier design had to do without, and what changed."""
+    found = design.repick
+    if found is None:
+        return {}
+    return {
+        "repick": {
+            "without": [asdict(s) for s in found.asked],
+            "already_without": [asdict(s) for s in found.earlier],
+            "bought": list(found.bought),
+            "all_free": found.all_free,
+            "missing": list(found.missing),
+            "changed": [asdict(c) for c in found.changes],
+            "before": _error(found.before),
+            "after": _error(found.after),
+        }
+    }
+
+
+def _error(error: ResponseError) -> dict[str, object]:
+    return {
+        "rms_error": error.rms,
+        "largest_db": error.largest_db,
+        "largest_deg": error.largest_deg,
+    }
 
 
 def _simulation(verification: Verification) -> dict[str, object]:

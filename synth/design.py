@@ -11,39 +11,32 @@ Everything here is computed; the simulator's opinion is asked for outside.
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from synth.allowance import op_amp_allowance
 from synth.candidates import Sketch, choose_form
-from synth.choosing import DEFAULT_EFFORT, Choice, Task, refine, with_ideal_op_amps
+from synth.choosing import DEFAULT_EFFORT, Choice
 from synth.choosing.supply import allotted
-from synth.circuit import Cell, Circuit
+from synth.circuit import Circuit
 from synth.errors import JobError
 from synth.evidence import Check, response_error
-from synth.graph import BlockGraph
 from synth.grid import judging_frequencies
 from synth.job import Job
 from synth.limits import drifts, swing_checks, swings
 from synth.loop import loop_checks, loop_margins
 from synth.nodal import compile_circuit
-from synth.peaks import frequencies_of_interest
 from synth.results import Candidate, Design, LoopResult, NoiseResult, Swing, ToleranceResult
 from synth.tolerance import error_budget, run_boards
+from synth.values import ValueSearch, level_ratios, wanted_of
 
-__all__ = ["DEFAULT_BOARDS", "DEFAULT_SEED", "compare_forms", "design", "level_limits"]
+__all__ = ["DEFAULT_BOARDS", "DEFAULT_SEED", "compare_forms", "design", "judged_design"]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
 Progress = Callable[[str, int, int], None]
-
-# The search for values sees the response at about this many frequencies.
-FREQUENCIES_OF_THE_SEARCH = 200
-
-# What a level may lack of its maximum and still count as its peak.
-FLAT = 0.01
 
 # 50 times a stray of 2 pF.
 SMALL_CAPACITOR = 100e-12
@@ -97,10 +90,34 @@ def design(
     sketch, candidates = choose_form(
         job, frequency, progress=lambda done, total: say("forms", done, total)
     )
-    wanted = job.target.negated() if sketch.polarity.output_inverted else job.target
-    response = wanted.response(frequency)
-    search = _Search(sketch, job, response, frequency, seed, effort * DEFAULT_EFFORT)
+    response = wanted_of(sketch, job).response(frequency)
+    search = ValueSearch(sketch, job, response, frequency, seed, effort * DEFAULT_EFFORT)
     choice, unaware = search.both(say)
+    made = judged_design(
+        job, sketch, candidates, choice, frequency, boards=boards, seed=seed, progress=say
+    )
+    return replace(
+        made,
+        allowance=op_amp_allowance(made.circuit, unaware.circuit, response, frequency),
+        effort=effort,
+    )
+
+
+def judged_design(
+    job: Job,
+    sketch: Sketch,
+    candidates: tuple[Candidate, ...],
+    choice: Choice,
+    frequency: Real,
+    *,
+    boards: int,
+    seed: int,
+    progress: Progress,
+) -> Design:
+    """The design with the chosen values and all that is predicted of it; arguments as those of
+    `design`, errors on the grid `frequency` (F,) [Hz]."""
+    wanted = wanted_of(sketch, job)
+    response = wanted.response(frequency)
     circuit = allotted(choice.circuit)
     program = compile_circuit(circuit)
     tolerance = run_boards(
@@ -111,9 +128,9 @@ def design(
         accept=job.accept,
         boards=boards,
         seed=seed,
-        progress=lambda done, total: say("boards", done, total),
+        progress=lambda done, total: progress("boards", done, total),
     )
-    say("limits", 0, 1)
+    progress("limits", 0, 1)
     swing = swings(circuit, wanted, job)
     loop = _loop(job, circuit, inverted=sketch.polarity.output_inverted)
     nominal = response_error(program.solve(frequency), response)
@@ -122,7 +139,7 @@ def design(
         form=sketch.form,
         inverted=sketch.polarity.output_inverted,
         wanted=wanted,
-        graph=_as_chosen(sketch, circuit, frequency),
+        graph=sketch.graph.rescaled(level_ratios(sketch, circuit, frequency)),
         circuit=circuit,
         frequency_hz=frequency,
         nominal=nominal,
@@ -135,52 +152,10 @@ def design(
         checks=_checks(job, circuit, tolerance, swing, loop),
         offset=_offset(circuit),
         certificate=choice.certificate,
-        allowance=op_amp_allowance(circuit, unaware.circuit, response, frequency),
         budget=error_budget(program, circuit, nominal, frequency, accept=job.accept, seed=seed),
-        effort=effort,
         loop=loop,
         notices=(*job.notices, *choice.notices, *_notices(circuit, job, swing)),
     )
-
-
-@dataclass(frozen=True, eq=False)
-class _Search:
-    """What a choice of values for one sketch is asked, whatever its op-amps."""
-
-    sketch: Sketch
-    job: Job
-    response: Complex
-    frequency_hz: Real
-    seed: int
-    effort: int
-
-    def both(self, say: Progress) -> tuple[Choice, Choice]:
-        """For the job's op-amps, and as if they were ideal; the one improves on the other.
-
-        What the job asks beyond the least error, pairs and few values, is done for the first
-        alone.
-        """
-        say("values", 0, 2)
-        unaware = self.task(with_ideal_op_amps(self.sketch.circuit)).choose()
-        say("values", 1, 2)
-        task = self.task(self.sketch.circuit)
-        choice = refine(task, task.choose(known=unaware.circuit), self.job.board)
-        return choice, unaware
-
-    def task(self, circuit: Circuit) -> Task:
-        """Standard values for `circuit`, the sketch's own or one like it, on at most about
-        `FREQUENCIES_OF_THE_SEARCH` of the frequencies."""
-        count = self.frequency_hz.size
-        few = slice(None, None, max(1, count // FREQUENCIES_OF_THE_SEARCH))
-        return Task(
-            circuit=circuit,
-            target=self.response[few],
-            frequency_hz=self.frequency_hz[few],
-            accept=self.job.accept,
-            level_limits=level_limits(self.sketch, self.job),
-            seed=self.seed,
-            effort=self.effort,
-        )
 
 
 def _checks(
@@ -199,20 +174,6 @@ def _checks(
     )
 
 
-def _as_chosen(sketch: Sketch, circuit: Circuit, frequency_hz: Real) -> BlockGraph:
-    """The sketch's graph at the levels the chosen values give: the choice moves the scales of
-    the states, which H(s) does not see."""
-    signals = sketch.graph.signals(2j * np.pi * frequency_hz)
-    cells = [c for c in circuit.cells if c.kind != "inverter"]
-    volts = np.abs(compile_circuit(circuit).solve(frequency_hz, nets=[c.output for c in cells]))
-    levels = {
-        cell.block: float(np.exp(np.mean(np.log(volts[:, k] / np.abs(signals[cell.block])))))
-        for k, cell in enumerate(cells)
-        if cell.block != sketch.graph.output
-    }
-    return sketch.graph.rescaled(levels)
-
-
 def _loop(job: Job, circuit: Circuit, *, inverted: bool) -> LoopResult | None:
     """Margins of the job's loop; an inverted board is taken to be inverted once more."""
     if job.loop is None:
@@ -223,49 +184,6 @@ def _loop(job: Job, circuit: Circuit, *, inverted: bool) -> LoopResult | None:
         target=loop_margins(job.loop, job.target),
         nominal=loop_margins(job.loop, job.target, lambda f: sign * program.solve(f)),
     )
-
-
-def level_limits(sketch: Sketch, job: Job) -> dict[str, tuple[float, float]]:
-    """For each op-amp output but the board's: where it peaks [Hz], and by what ratio the peak
-    may rise before it meets the rail or half the slew rate."""
-    peaks = sketch.peaks
-    grid = frequencies_of_interest(job.target, from_hz=peaks.from_hz)
-    signals = sketch.graph.signals(2j * np.pi * grid)
-    limits: dict[str, tuple[float, float]] = {}
-    for cell in sketch.circuit.cells:
-        if cell.output == sketch.circuit.output_net:
-            continue
-        if cell.block not in signals:  # the inverter of the input: the same gain everywhere
-            limits[cell.output] = (job.signal.band_hz[0], _input_inverter_may(sketch, job, cell))
-            continue
-        volts = job.signal.input_peak * sketch.levels[cell.block]
-        rising = min(
-            job.board.swing_limit / (volts * peaks.peak[cell.block]),
-            job.board.op_amp.slew_rate / 2 / (volts * peaks.rate[cell.block]),
-        )
-        # An adder may be flat up to where op-amps end: its peak is where the flat part begins.
-        size = np.abs(signals[cell.block])
-        watch = float(grid[int(np.argmax(size >= (1 - FLAT) * np.max(size)))])
-        # One already above its ceiling must not be pushed further; that values cannot bring it
-        # below is for the swing check to say.
-        limits[cell.output] = (watch, max(rising, 1.0))
-    return limits
-
-
-def _input_inverter_may(sketch: Sketch, job: Job, cell: Cell) -> float:
-    """By what ratio the inverter of the input may rise, or must fall: it can, where the
-    resistors it drives can fall with it."""
-    circuit = sketch.circuit
-    (source,) = (circuit.by_ref[r].ideal for r in cell.inputs)
-    feedback = circuit.by_ref[cell.feedback].ideal
-    ratio = job.board.swing_limit / (job.signal.input_peak * feedback / source)
-    driven = [
-        p.ideal
-        for p in circuit.bought
-        if cell.output in p.nets and p.kind == "resistor" and p.ref != cell.feedback
-    ]
-    within = min(driven, default=np.inf) * ratio > job.board.resistors.smallest
-    return ratio if within else max(ratio, 1.0)
 
 
 def _notices(circuit: Circuit, job: Job, swing: tuple[Swing, ...]) -> tuple[str, ...]:

@@ -17,7 +17,7 @@ from synth.preferred import nearest
 from synth.quantities import show
 from synth.transfer import TransferFunction
 
-__all__ = ["Accept", "Board", "Job", "Loop", "Signal"]
+__all__ = ["Accept", "Board", "Job", "JobText", "Loop", "Signal"]
 
 _FIXABLE = re.compile(r"[RC][1-9][0-9]{0,4}")
 
@@ -212,6 +212,25 @@ class Loop:
 
 
 @dataclass(frozen=True, kw_only=True)
+class JobText:
+    """What a job was read from, so that a pack can carry it.
+
+    Parameters
+    ----------
+    name
+        Name of the file, without its folder.
+    text
+        Its content.
+    files
+        Name, as the job states it, and content of every further file it names.
+    """
+
+    name: str
+    text: str
+    files: tuple[tuple[str, str], ...] = ()
+
+
+@dataclass(frozen=True, kw_only=True)
 class Job:
     """A whole job.
 
@@ -222,6 +241,9 @@ class Job:
     notices
         What the reader of the job should know, one sentence each: a pole and a zero that
         cancelled, a band that misses every root.
+    source
+        The text it was read from, where there is one; two jobs that ask for the same are equal
+        whatever they were read from.
     """
 
     target: TransferFunction
@@ -231,3 +253,4 @@ class Job:
     loop: Loop | None = None
     title: str = "untitled"
     notices: tuple[str, ...] = ()
+    source: JobText | None = field(default=None, compare=False, repr=False)

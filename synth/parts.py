@@ -54,6 +54,8 @@ class PartRule:
     stock
         What the drawer holds; when not empty it stands in for the series, and each value has
         the tolerance of its line, the tightest where a value has several.
+    without
+        Values that cannot be had although the series or the drawer has them.
     """
 
     kind: str
@@ -62,6 +64,7 @@ class PartRule:
     smallest: float
     largest: float
     stock: tuple[StockItem, ...] = ()
+    without: tuple[float, ...] = ()
 
     def __post_init__(self) -> None:
         if self.kind not in ("resistor", "capacitor"):
@@ -85,9 +88,11 @@ class PartRule:
     def values(self) -> NDArray[np.float64]:
         """What may be bought, ascending [ohm] or [F]."""
         if not self.stock:
-            return series_values(self.series, self.smallest, self.largest)
-        inside = {i.value for i in self.stock if self.smallest <= i.value <= self.largest}
-        return np.array(sorted(inside))
+            every = series_values(self.series, self.smallest, self.largest)
+        else:
+            inside = {i.value for i in self.stock if self.smallest <= i.value <= self.largest}
+            every = np.array(sorted(inside))
+        return every[~np.isin(every, self.without)]
 
     @property
     def source(self) -> str:

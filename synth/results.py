@@ -16,6 +16,7 @@ from synth.evidence import Check, ResponseError
 from synth.graph import BlockGraph
 from synth.job import Job
 from synth.loop import LoopMargins
+from synth.shortages import Repick
 from synth.transfer import TransferFunction
 
 __all__ = [
@@ -302,6 +303,8 @@ class Design:
         Predicted checks: yield, swing, slew, current.
     notices
         What the user should know, one sentence each.
+    repick
+        What changed, where this is an earlier design with other values.
     """
 
     job: Job
@@ -326,3 +329,4 @@ class Design:
     effort: int = 1
     loop: LoopResult | None = None
     notices: tuple[str, ...] = field(default=())
+    repick: Repick | None = None

@@ -10,6 +10,7 @@ __all__ = ["polewright"]
 
 COMMANDS = {
     "design": "Design a board, verify it in ngspice and write its pack.",
+    "repick": "Choose other values where a pack's are out of stock; write a new pack.",
     "forms": "Compare the realizations for a job; write nothing.",
 }
 

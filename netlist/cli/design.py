@@ -2,20 +2,17 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
-from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 import click
 
+from netlist.cli.carrying import carry_out
 from netlist.cli.options import as_json, job_file, with_traceback
 from netlist.cli.running import Result
 
 if TYPE_CHECKING:
-    from netlist.ngspice import Simulator
-    from netlist.verification import Verification
-    from synth.job import Job
+    from netlist.cli.progress import Report
     from synth.results import Design
 
 __all__ = ["command", "default_folder"]
@@ -69,55 +66,13 @@ def command(
     folder = default_folder(job_file) if into is None else into
     job = read_job(job_file)
     check_pack_folder(folder)
-    made, checked = _carried_out(
-        job, folder, boards=boards, seed=seed, effort=effort, name=job_file.name
-    )
 
-    from netlist.cli.summary import EXIT_CODES, summary, warn
-    from netlist.records import design_record, record_text, verdict_of
-
-    warn(made, checked)
-    code = EXIT_CODES[verdict_of(made, checked)]
-    if as_json:
-        return Result(code, record_text(design_record(made, checked)))
-    return Result(code, summary(made, checked, folder=folder))
-
-
-def _carried_out(
-    job: Job, folder: Path, *, boards: int, seed: int, effort: int, name: str
-) -> tuple[Design, Verification]:
-    """Design, verify and write, with progress; what is slow to load is loaded here, once the
-    job is known to be readable."""
-    from netlist.cli.progress import progress
-
-    with progress() as report, _early_simulator() as simulator:
-        report("loading", 0, 1)
-        from netlist.pack import write_pack
-        from netlist.verification import verify
+    def make(report: Report) -> Design:
         from synth.design import design
 
-        made = design(job, boards=boards, seed=seed, effort=effort, progress=report)
-        report("simulating", 0, 1)
-        checked = verify(made, simulator=simulator)
-        report("writing the pack", 0, 1)
-        write_pack(folder, made, checked, job_name=name)
-    return made, checked
+        return design(job, boards=boards, seed=seed, effort=effort, progress=report)
 
-
-@contextmanager
-def _early_simulator() -> Iterator[Simulator | None]:
-    """The simulator, its process starting while the design is made; None where it is missing,
-    which the verification then says."""
-    from netlist.ngspice import Simulator
-    from synth.errors import SimulatorMissingError
-
-    try:
-        simulator = Simulator()
-    except SimulatorMissingError:
-        yield None
-        return
-    with simulator:
-        yield simulator
+    return carry_out(make, folder, job_name=job_file.name, as_json=as_json)
 
 
 def default_folder(job_file: Path) -> Path:

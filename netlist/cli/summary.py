@@ -13,6 +13,7 @@ from netlist.cli.progress import colour_on
 from netlist.cli.running import say
 from netlist.partslist import packages
 from netlist.records import all_checks, verdict_of
+from netlist.report.changes import change_errors, change_rows
 from netlist.report.found import check_rows, form_rows
 from netlist.report.page import LOW_YIELD
 from netlist.report.wording import percent, spelled, stated
@@ -54,6 +55,7 @@ def summary(design: Design, verification: Verification, *, folder: Path) -> str:
         *(f"  {name:<9}{text}" for name, text in facts),
         "",
         *_table(("check", "limit", "value", "result", ""), rows),
+        *_repicked(design),
         "",
         f"  pack     {_printable(str(folder))}",
     ]
@@ -88,6 +90,22 @@ def warn(design: Design, verification: Verification) -> None:
     if verification.failure is not None:
         say(f"not verified: {verification.failure}")
         say("the pack is written and marked unverified; repeat the command once ngspice runs")
+
+
+def _repicked(design: Design) -> list[str]:
+    """What changed against an earlier design."""
+    found = design.repick
+    if found is None:
+        return []
+    rows = [(str(r["ref"]), str(r["before"]), str(r["after"]), str(r["by"]), str(r["sets"]))
+            for r in change_rows(found)]  # fmt: skip
+    errors = [(str(r["name"]), str(r["before"]), str(r["after"])) for r in change_errors(found)]
+    return [
+        "",
+        *_table(("changed", "from", "to", "by", "sets"), rows),
+        "",
+        *_table(("nominal error", "before", "after"), errors),
+    ]
 
 
 def _table(header: Sequence[str], rows: Sequence[Sequence[str]]) -> list[str]:

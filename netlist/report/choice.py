@@ -64,7 +64,8 @@ def binding_lines(found: Certificate, circuit: Circuit) -> list[str]:
         f"all other parts had, those on offer for {'this part' if len(b.refs) == 1 else 'these'} "
         f"leave {percent(b.rms)}."
         for b in found.bottlenecks
-        if b.rms >= WORTH_NAMING * found.lower_bound
+        # A resistor that became a pair no longer binds under its own name.
+        if b.rms >= WORTH_NAMING * found.lower_bound and circuit.by_ref.keys() >= set(b.refs)
     ][:3]
 
 

@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING
 
 from netlist.partslist import PartLine, packages
 from netlist.records import all_checks, verdict_of
-from netlist.report import asked, choice, found, wording
+from netlist.report import asked, changes, choice, found, wording
 from netlist.svg import prefix_ids
 from synth.evidence import Check
 from synth.results import Design
@@ -84,6 +84,8 @@ def report_page(
                 sorted(checks, key=lambda c: c.passed)
             ),  # what fails comes first
             low_yield=job.accept.yield_share is None and design.tolerance.share < LOW_YIELD,
+            changes=changes.change_rows(design.repick) if design.repick else [],
+            change_errors=changes.change_errors(design.repick) if design.repick else [],
             forms=found.form_rows(design.candidates, design.form),
             swings=found.swing_rows(design.swings, design.circuit),
             values=found.value_rows(design.circuit),
@@ -178,6 +180,8 @@ def _readout(design: Design, verification: Verification) -> dict[str, list[float
 
 def _command(design: Design, job_name: str) -> str:
     """The command that makes this pack again."""
+    if design.repick is not None:
+        return f"polewright repick PACK {shlex.join(changes.repick_options(design.repick))}"
     name = shlex.quote(job_name or "JOB.toml")
     run = design.tolerance
     effort = f" --effort {design.effort}" if design.effort != 1 else ""

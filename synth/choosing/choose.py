@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.choosing.certificate import Certificate, certify
+from synth.choosing.enumeration import best_of_all
 from synth.choosing.grid import ValueGrid
 from synth.choosing.model import Ceilings, Goal, LinearModel, compensation
 from synth.choosing.search import SearchOutcome, search_values
@@ -118,14 +119,16 @@ def choose_values(
         start = None
         if known is not None:
             start = grid.nearest(np.log([p.value for p in known.passives]))
-        return search_values(
+        supply = Supply.of(grid)
+        few = best_of_all(program, grid, goal, ceilings) if supply is None else None
+        return few or search_values(
             program,
             grid,
             goal,
             start_logs=logs,
             ideal=ideal,
             ceilings=ceilings,
-            supply=Supply.of(grid),
+            supply=supply,
             known=start,
             seed=seed,
             effort=effort,
@@ -139,20 +142,37 @@ def choose_values(
         near, ceilings = everything, ceilings.without_floors()
         outcome = searched(near, ceilings)
         chosen = near.values_at(outcome.index)
-    certificate = _certified(program, ideal, everything, goal, chosen)
-    other = None if certificate.better is None else everything.values_at(certificate.better)
-    if other is not None and _may_replace(other, near, ceilings, program):
-        # Every choice was looked at: take the best, where the whole circuit confirms it.
-        squares = goal.mean_squares(program, np.array([chosen, other]))
-        if squares[1] < squares[0]:
-            chosen = other
-            certificate = _certified(program, ideal, everything, goal, chosen)
+    chosen, certificate = _proven(chosen, (program, ideal), goal, (near, everything), ceilings)
     return Choice(
-        circuit=with_ideals(_with(circuit, chosen), everything, goal),
+        circuit=with_ideals(_with(circuit, chosen), goal),
         nearest=_with(circuit, everything.values_at(everything.nearest(logs))),
         certificate=certificate,
         looked=outcome.looked,
     )
+
+
+def _proven(
+    chosen: Real,
+    programs: tuple[NodalProgram, NodalProgram],
+    goal: Goal,
+    grids: tuple[ValueGrid, ValueGrid],
+    ceilings: Ceilings | None,
+) -> tuple[Real, Certificate]:
+    """The chosen values, or better ones where the proof came upon them, and the proof.
+
+    `programs` are those of the circuit and of the same with ideal op-amps, `grids` that of the
+    search and that of everything there is.
+    """
+    (program, ideal), (near, everything) = programs, grids
+    certificate = _certified(program, ideal, everything, goal, chosen)
+    other = None if certificate.better is None else everything.values_at(certificate.better)
+    if other is None or not _may_replace(other, near, ceilings, program):
+        return chosen, certificate
+    # Every choice was looked at: take the best, where the whole circuit confirms it.
+    squares = goal.mean_squares(program, np.array([chosen, other]))
+    if squares[1] >= squares[0]:
+        return chosen, certificate
+    return other, _certified(program, ideal, everything, goal, other)
 
 
 def _may_replace(
@@ -201,11 +221,11 @@ def _with(circuit: Circuit, values: Real) -> Circuit:
     return circuit.with_values(dict(zip(refs, map(float, values), strict=True)))
 
 
-def with_ideals(circuit: Circuit, grid: ValueGrid, goal: Goal) -> Circuit:
+def with_ideals(circuit: Circuit, goal: Goal) -> Circuit:
     """Each resistor's `ideal` moved to the exact solution nearest to the chosen values."""
     values = np.array([p.value for p in circuit.passives])
     logs = np.log(values)
-    free = grid.resistors
+    free = ValueGrid(circuit.passives).resistors
     for _ in range(2):
         model = LinearModel.about(compile_circuit(circuit), np.exp(logs), goal)
         logs[free] -= compensation(model.matrix[:, free], IDEAL_RIDGE) @ model.offset

@@ -52,6 +52,9 @@ BINDING_SHARE = 0.5
 BINDING_STARTS = 400
 BINDING_BEAM = 4000
 
+# Pairs of steps that justify keeping one more set: a search of little effort keeps fewer.
+EFFORT_PER_SET = 15_000
+
 # Steps along the list of values; from a stock, also over values that are used up.
 REACH = (1, 2, 3)
 REACH_OF_STOCK = (1, 2, 3, 4, 6)
@@ -132,6 +135,7 @@ def search_values(
     """
     rng = np.random.default_rng(seed)
     least = coarse_step(grid)
+    beam = min(BINDING_BEAM, effort // EFFORT_PER_SET)
 
     def climbed(
         start: Index, reference: Real, kicks: tuple[float, ...]
@@ -148,7 +152,7 @@ def search_values(
                 model,
                 limits=None if ceilings is None else ceilings.about(program, reference),
                 supply=supply,
-                starts=binding_starts(grid, skeleton),
+                starts=binding_starts(grid, skeleton, beam=beam),
                 kick=kick,
                 rng=rng,
             )
@@ -208,16 +212,19 @@ class BindingStarts:
     index: Index
 
 
-def binding_starts(grid: ValueGrid, skeleton: LinearModel) -> BindingStarts | None:
+def binding_starts(
+    grid: ValueGrid, skeleton: LinearModel, *, beam: int = BINDING_BEAM
+) -> BindingStarts | None:
     """Values of the binding parts, grown set by set; None where no part binds.
 
-    Of equal bounds, as decades repeat them, those nearest to the reference come first.
+    After each part the best `beam` sets are kept.  Of equal bounds, as decades repeat them,
+    those nearest to the reference come first.
     """
     order, binding = binding_order(skeleton.matrix, grid)
     frontier = Frontier.start(skeleton, grid)
     for place, part in enumerate(order[:binding]):
         columns = skeleton.matrix[:, order[place + 1 :]]
-        frontier = frontier.grown_best(part, columns, count=BINDING_BEAM)
+        frontier = frontier.grown_best(part, columns, count=max(beam, 1))
     if not frontier.parts:
         return None
     return BindingStarts(np.array(frontier.parts), frontier.chosen[:, :BINDING_STARTS])

@@ -76,7 +76,7 @@ def share_values(task: Task, choice: Choice) -> Sharing:
         refs = (p.ref for p in choice.circuit.passives)
         circuit = choice.circuit.with_values(dict(zip(refs, shared.tolist(), strict=True)))
         certificate = replace(choice.certificate, rms=rms_after, proven=False, better=None)
-        circuit = with_ideals(circuit, task.grid, task.goal)
+        circuit = with_ideals(circuit, task.goal)
         choice = replace(choice, circuit=circuit, certificate=certificate)
     return Sharing(
         choice=choice,

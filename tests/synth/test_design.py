@@ -10,7 +10,7 @@ import numpy as np
 import pytest
 
 from synth.candidates import sketch_form
-from synth.design import compare_forms, design, level_limits
+from synth.design import compare_forms, design
 from synth.errors import JobError, RealizationError
 from synth.evidence import response_error
 from synth.job import Accept, Loop
@@ -18,6 +18,7 @@ from synth.limits import swings
 from synth.nodal import compile_circuit
 from synth.readback import block_names, graph_of
 from synth.transfer import Factor, TransferFunction
+from synth.values import level_limits
 from tests.jobs import capacitor_rule, job_for
 from tests.strategies import butterworth
 

@@ -12,11 +12,12 @@ from synth.choosing import choose_values
 from synth.choosing.descent import Neighbourhood
 from synth.choosing.grid import ValueGrid
 from synth.choosing.model import Goal, LinearModel
-from synth.design import design, level_limits
+from synth.design import design
 from synth.evidence import response_error
 from synth.nodal import compile_circuit
 from synth.preferred import is_member
 from synth.transfer import Factor, TransferFunction
+from synth.values import level_limits
 from tests.jobs import capacitor_rule, job_for, resistor_rule
 from tests.strategies import butterworth
 

@@ -1,0 +1,166 @@
+"""A pack read back gives what was recorded, and whatever is wrong with it is said in one line."""
+
+from __future__ import annotations
+
+import json
+from dataclasses import replace
+
+import pytest
+
+from netlist.jobfile import parse_job
+from netlist.packfile import read_pack
+from netlist.records import design_record, record_text
+from synth.errors import JobError
+from synth.evidence import response_error
+from synth.job import JobText
+from synth.shortages import Change, Repick, Shortage
+from tests.netlist import boards
+
+JOB = """
+title = "Low-pass"
+[target]
+numerator = [39478417.6]
+denominator = [1, 6981.317, 39478417.6]
+[signal]
+band = ["10 Hz", "10 kHz"]
+"""
+GONE = Shortage(kind="resistor", value=15800.0, ref="R1")
+NEXT = Shortage(kind="capacitor", value=1e-8, source="E12")
+
+
+def made(**changes):
+    """A design that was read from a text."""
+    asked = replace(parse_job(JOB, name="some/where/low-pass.toml"), title="Low-pass")
+    return replace(boards.design(), job=asked, **changes)
+
+
+@pytest.fixture
+def written(tmp_path):
+    """Writes a record as a pack and returns its folder."""
+
+    def write(record: object) -> str:
+        folder = tmp_path / "pack"
+        folder.mkdir(exist_ok=True)
+        text = record if isinstance(record, str) else json.dumps(record)
+        (folder / "design.json").write_text(text, encoding="utf-8")
+        return str(folder)
+
+    return write
+
+
+def record_of(design) -> dict:
+    return json.loads(record_text(design_record(design, boards.verification(design))))
+
+
+def test_what_was_written_is_read_back(written) -> None:
+    """The job, its text, form, values, nets, boards and seed."""
+    design = made()
+    found = read_pack(written(record_of(design)))
+    assert found.job == design.job
+    assert found.job.source == JobText(name="low-pass.toml", text=JOB)
+    assert (found.form, found.boards, found.seed) == ("controllable", 60, 1)
+    assert found.shortages == ()
+    assert [(p.ref, p.kind, p.nets, p.value) for p in found.parts] == [
+        (p.ref, p.kind, p.nets, p.value) for p in design.circuit.bought
+    ]
+
+
+def test_the_text_in_the_record_names_no_folder(written) -> None:
+    """The same job from another folder gives the same bytes."""
+    record = record_of(made())
+    assert record["job"] == {"name": "low-pass.toml", "text": JOB, "files": {}}
+
+
+def test_what_was_out_of_stock_is_read_back_with_what_was_so_before(written) -> None:
+    """A second repick knows of the first."""
+    error = response_error(*(2 * (boards.design().wanted.response([10.0, 100.0]),)))
+    repick = Repick(
+        asked=(NEXT,),
+        earlier=(GONE,),
+        bought=("R2",),
+        all_free=False,
+        missing=("C1", "C2"),
+        changes=(Change(ref="C1", kind="capacitor", before=1e-8, after=1.2e-8),),
+        before=error,
+        after=error,
+    )
+    record = record_of(made(repick=repick))
+    assert record["repick"]["changed"][0]["after"] == 1.2e-8
+    assert read_pack(written(record)).shortages == (GONE, NEXT)
+
+
+def test_a_folder_that_is_no_pack_is_refused(tmp_path) -> None:
+    """Nothing there, a file, a folder without a record."""
+    for path, message in (
+        (tmp_path / "none", "does not exist, expected the folder of a pack"),
+        (tmp_path, "holds no design.json, expected the folder of a pack"),
+        (tmp_path / "file", "is a file, expected the folder of a pack"),
+    ):
+        (tmp_path / "file").write_text("x")
+        with pytest.raises(JobError, match=message):
+            read_pack(path)
+
+
+@pytest.mark.parametrize(
+    ("text", "message"),
+    [
+        ("", r"design\.json:1: got no JSON at column 1; the file is damaged"),
+        ('{"format": 1,', r"got no JSON at column \d+; the file is damaged"),
+        ('{"format": NaN}', "got no JSON; the file is damaged"),
+        ("[" * 200_000, "got no JSON; the file is damaged"),
+        ("[1, 2]", "got a list of 2, expected the record of a design"),
+        ("{}", "format: is missing; the file is damaged"),
+        ('{"format": 2}', "format: got 2, expected 1"),
+        ('{"format": 1}', "job: is missing: an earlier version wrote this pack"),
+    ],
+)
+def test_a_file_that_is_no_record_is_refused(written, text, message) -> None:
+    """One line with the file and the place."""
+    with pytest.raises(JobError, match=message) as caught:
+        read_pack(written(text))
+    assert "\n" not in str(caught.value)
+
+
+@pytest.mark.parametrize(
+    ("path", "value", "message"),
+    [
+        (("job",), 3, "job: got 3, expected an object"),
+        (("job", "text"), None, "job.text: got nothing, expected a text"),
+        (("job", "text"), "[target]\nx = 1", "low-pass.toml:2: target.x: "),
+        (("job", "files"), [], "job.files: got a list of 0, expected an object"),
+        (("job", "files"), {"drawer.csv": 1}, "job.files.drawer.csv: got 1, expected a text"),
+        (("form",), "ladderish", "form: got 'ladderish'"),
+        (("components",), {}, "components: got a table, expected a list of objects"),
+        (("components", 0), 1, "components: got a list of 11, expected a list of objects"),
+        (("components", 0, "value"), "4k7", r"components[0].value: got '4k7', expected a positive"),
+        (("components", 2, "value"), -1.0, r"components[2].value: got -1.0, expected a positive"),
+        (("components", 1, "value"), True, r"components[1].value: got true, expected a positive"),
+        (("components", 0, "nets"), ["in"], r"components[0].nets: got a list of 1, expected two"),
+        (("yield", "boards"), 0, "yield.boards: got 0, expected a whole number from 1"),
+        (("yield", "seed"), 1.5, "yield.seed: got 1.5, expected a whole number from 0"),
+    ],
+)
+def test_a_damaged_record_is_refused_with_the_key(written, path, value, message) -> None:
+    """The path of the key, what came, what was expected."""
+    record = record_of(made())
+    place = record
+    for step in path[:-1]:
+        place = place[step]
+    place[path[-1]] = value
+    with pytest.raises(JobError) as caught:
+        read_pack(written(record))
+    assert message in str(caught.value)
+
+
+@pytest.mark.parametrize(
+    "path", [("yield",), ("form",), ("components",), ("job", "name"), ("components", 0, "ref")]
+)
+def test_a_missing_key_is_named(written, path) -> None:
+    """Every key that is read."""
+    record = record_of(made())
+    place = record
+    for step in path[:-1]:
+        place = place[step]
+    del place[path[-1]]
+    with pytest.raises(JobError, match=f"{path[-1]}: is missing; the file is damaged"):
+        read_pack(written(record))
