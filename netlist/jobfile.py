@@ -18,6 +18,7 @@ from typing import TYPE_CHECKING, Any
 
 from netlist.jobvalues import read_fixed, unknown_key
 from netlist.mistakes import Mistakes
+from netlist.namedfiles import NamedFiles
 from netlist.textfile import read_text_file
 from synth.errors import JobError
 from synth.job import Accept, Board, Job, JobText, Loop, Signal
@@ -58,13 +59,21 @@ def read_job(path: str | Path) -> Job:
     return parse_job(text, name=str(file), folder=file.parent)
 
 
-def parse_job(text: str, *, name: str = "job", folder: str | Path | None = None) -> Job:
+def parse_job(
+    text: str,
+    *,
+    name: str = "job",
+    folder: str | Path | None = None,
+    files: Mapping[str, str] | None = None,
+) -> Job:
     """The job a TOML text states; `name` stands for the file in messages.
 
     Parameters
     ----------
     folder
         Where the files the job names lie; without one, a job that names a file is refused.
+    files
+        In place of a folder: the text of each file, by its name as the job states it.
 
     Raises
     ------
@@ -77,7 +86,8 @@ def parse_job(text: str, *, name: str = "job", folder: str | Path | None = None)
     if table is None:
         mistakes.stop()
     signal = mistakes.attempt("signal", lambda: Signal(**table.signal.given()))
-    board = _board(table.board, mistakes, None if folder is None else Path(folder))
+    named = NamedFiles(folder=None if folder is None else Path(folder), texts=files)
+    board = _board(table.board, mistakes, named)
     accept = mistakes.attempt("accept", lambda: Accept(**table.accept.given()))
     loop = None
     if (plant := table.loop) is not None:
@@ -86,7 +96,7 @@ def parse_job(text: str, *, name: str = "job", folder: str | Path | None = None)
     if mistakes.found or signal is None or board is None or accept is None or target is None:
         mistakes.stop()
     transfer, notices = target
-    named = {"title": table.title} if table.title else {}
+    titled = {"title": table.title} if table.title else {}
     return Job(
         target=transfer,
         signal=signal,
@@ -94,8 +104,8 @@ def parse_job(text: str, *, name: str = "job", folder: str | Path | None = None)
         accept=accept,
         loop=loop,
         notices=notices,
-        source=JobText(name=Path(name).name, text=text),
-        **named,
+        source=JobText(name=Path(name).name, text=text, files=named.taken),
+        **titled,
     )
 
 
@@ -151,9 +161,9 @@ def _problem(
     return f"got {what_came(error['input'])}, expected a table [{'.'.join(path)}]"
 
 
-def _board(table: BoardTable, mistakes: Mistakes, folder: Path | None) -> Board | None:
+def _board(table: BoardTable, mistakes: Mistakes, files: NamedFiles) -> Board | None:
     """The board with the defaults of everything not stated."""
-    stock = mistakes.attempt("board.stock", lambda: _stock(table.stock, folder))
+    stock = mistakes.attempt("board.stock", lambda: _stock(table.stock, files))
     held: Mapping[str, tuple[StockItem, ...]] = stock or {}
     resistors = mistakes.attempt(
         "board.resistors",
@@ -188,18 +198,14 @@ def _board(table: BoardTable, mistakes: Mistakes, folder: Path | None) -> Board 
     )
 
 
-def _stock(stated: str | None, folder: Path | None) -> dict[str, tuple[StockItem, ...]]:
+def _stock(stated: str | None, files: NamedFiles) -> dict[str, tuple[StockItem, ...]]:
     """What the drawer holds, by kind; nothing without one."""
     if stated is None:
         return {}
-    if folder is None:
-        raise JobError(
-            f"got {what_came(stated)}, but this job comes without a folder to look in; "
-            "expected a job read from a file"
-        )
-    from netlist.stockfile import read_stock
+    from netlist.stockfile import parse_stock, read_stock_text
 
-    return read_stock(folder / stated)
+    text, name = files.take(stated, read_stock_text)
+    return parse_stock(text, name=name)
 
 
 def _rule(

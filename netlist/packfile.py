@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING, NoReturn
 from netlist.jobfile import parse_job
 from netlist.records import FORMAT
 from synth.errors import JobError
-from synth.job import Job, JobText
+from synth.job import JobText
 from synth.quantities import what_came
 from synth.shortages import Shortage
 
@@ -51,7 +51,7 @@ def read_pack(folder: str | Path) -> Earlier:
     files = source.table("files")
     texts = {each: files.text(each) for each in files.content}
     title = f"{name}: {source.text('name')}"
-    job = _job(source.text("text"), title, texts)
+    job = parse_job(source.text("text"), name=title, files=texts)
     try:
         check_form_name(top.text("form"))
     except JobError as error:
@@ -80,11 +80,6 @@ def read_pack(folder: str | Path) -> Earlier:
         seed=drawn.count("seed", least=0),
         shortages=_shortages(top) if "repick" in record else (),
     )
-
-
-def _job(text: str, name: str, files: dict[str, str]) -> Job:
-    """The job a text states, every file it names taken from `files`."""
-    return parse_job(text, name=name)
 
 
 def _shortages(top: _Table) -> tuple[Shortage, ...]:

@@ -26,7 +26,7 @@ from synth.errors import JobError
 from synth.parts import StockItem
 from synth.quantities import parse, what_came
 
-__all__ = ["parse_stock", "read_stock"]
+__all__ = ["parse_stock", "read_stock", "read_stock_text"]
 
 LARGEST_FILE = 1_000_000  # bytes
 MOST_LINES = 2000
@@ -50,8 +50,18 @@ def read_stock(path: str | Path) -> Stock:
         The file cannot be read, or what `parse_stock` refuses.
     """
     file = Path(path)
-    text = read_text_file(file, largest=LARGEST_FILE, expected="a stock file", kind=" in CSV")
-    return parse_stock(text, name=str(file))
+    return parse_stock(read_stock_text(file), name=str(file))
+
+
+def read_stock_text(file: Path) -> str:
+    """The text of a stock file.
+
+    Raises
+    ------
+    JobError
+        The file cannot be read.
+    """
+    return read_text_file(file, largest=LARGEST_FILE, expected="a stock file", kind=" in CSV")
 
 
 def parse_stock(text: str, *, name: str = "stock") -> Stock:

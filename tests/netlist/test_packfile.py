@@ -89,6 +89,54 @@ def test_what_was_out_of_stock_is_read_back_with_what_was_so_before(written) -> 
     assert read_pack(written(record)).shortages == (GONE, NEXT)
 
 
+DRAWER = "kind,value,tolerance,count\r\nresistor,10k,1 %,3\r\nresistor,15.8k,1 %,\r\n"
+
+
+def drawn(folder) -> dict:
+    """The record of a design from a drawer beside its job; the drawer is gone afterwards."""
+    file = folder / "drawer.csv"
+    file.write_text(DRAWER, encoding="utf-8", newline="")
+    text = JOB + '[board]\nstock = "drawer.csv"\n'
+    job = parse_job(text, name="low-pass.toml", folder=folder)
+    file.unlink()
+    return record_of(replace(boards.design(), job=job))
+
+
+def test_the_drawer_comes_with_the_pack(written, tmp_path) -> None:
+    """Its text is in the record, and the job is the same with the file gone."""
+    record = drawn(tmp_path)
+    assert record["job"]["files"] == {"drawer.csv": DRAWER}
+    found = read_pack(written(record)).job
+    assert found.source is not None
+    assert found.source.files == (("drawer.csv", DRAWER),)
+    assert [(i.value, i.count) for i in found.board.resistors.stock] == [(1e4, 3), (15.8e3, None)]
+
+
+@pytest.mark.parametrize(
+    ("files", "message"),
+    [
+        ({}, "got 'drawer.csv', expected one of the files that come with the job: none"),
+        ({"a.csv": ""}, "expected one of the files that come with the job: 'a.csv'"),
+        (
+            {"drawer.csv": "kind,value,tolerance\ncoil,1,1 %\n"},
+            "drawer.csv:2: column 1 (kind): got",
+        ),
+    ],
+)
+def test_a_pack_without_its_drawer_is_refused(written, tmp_path, files, message) -> None:
+    """Nothing is looked for in any folder."""
+    record = drawn(tmp_path)
+    record["job"]["files"] = files
+    (tmp_path / "pack").mkdir()
+    for folder in (tmp_path, tmp_path / "pack"):
+        (folder / "drawer.csv").write_text(DRAWER, encoding="utf-8")
+    with pytest.raises(JobError) as caught:
+        read_pack(written(record))
+    assert message in str(caught.value)
+    assert "low-pass.toml:9: board.stock: " in str(caught.value)
+    assert "\n" not in str(caught.value)
+
+
 def test_a_folder_that_is_no_pack_is_refused(tmp_path) -> None:
     """Nothing there, a file, a folder without a record."""
     for path, message in (
