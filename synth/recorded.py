@@ -7,12 +7,13 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+from synth.choosing.pairs import Pair, with_pairs
 from synth.circuit import Circuit
 from synth.errors import JobError
 from synth.job import Job
 from synth.shortages import SAME_VALUE, Shortage
 
-__all__ = ["Earlier", "RecordedPart", "rebuilt"]
+__all__ = ["Earlier", "RecordedPart", "paired", "rebuilt"]
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -38,6 +39,26 @@ class Earlier:
     boards: int
     seed: int
     shortages: tuple[Shortage, ...] = ()
+
+
+def paired(circuit: Circuit, parts: Sequence[RecordedPart]) -> Circuit:
+    """`circuit` with two resistors for one wherever `parts` have them.
+
+    R4A and R4B stand for an input resistor R4 that is not recorded itself: in parallel where
+    both have the same nets, in series otherwise.  Whether everything fits is for `rebuilt` to
+    say.
+    """
+    found = {p.ref: p for p in parts}
+    inputs = {ref for cell in circuit.cells for ref in cell.inputs}
+    pairs: list[Pair] = []
+    for part in circuit.bought:
+        first, second = found.get(f"{part.ref}A"), found.get(f"{part.ref}B")
+        if first is None or second is None or part.ref in found:
+            continue
+        if part.ref in inputs and not part.fixed:
+            how = "parallel" if first.nets == second.nets else "series"
+            pairs.append(Pair(ref=part.ref, values=(first.value, second.value), how=how))
+    return with_pairs(circuit, tuple(pairs))
 
 
 def rebuilt(circuit: Circuit, parts: Sequence[RecordedPart]) -> Circuit:

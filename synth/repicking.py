@@ -24,13 +24,13 @@ from synth.choosing.grid import ValueGrid
 from synth.choosing.model import Goal, LinearModel, compensation
 from synth.circuit import Circuit, Passive
 from synth.design import judged_design
-from synth.errors import JobError
+from synth.errors import JobError, RealizationError
 from synth.evidence import ResponseError, response_error
 from synth.grid import judging_frequencies
 from synth.job import Job
 from synth.limits import swings
 from synth.nodal import compile_circuit
-from synth.recorded import Earlier, rebuilt
+from synth.recorded import Earlier, paired, rebuilt
 from synth.results import Design, ToleranceResult
 from synth.shortages import Change, Repick, Shortage
 from synth.tolerance import run_boards
@@ -86,7 +86,8 @@ def repick(earlier: Earlier, request: Request, *, progress: Progress | None = No
     frequency = judging_frequencies(job.target, job.signal.band_hz)
     say("rebuilding", 0, 1)
     sketch, candidates = choose_form(job, frequency)
-    circuit = rebuilt(sketch.circuit, earlier.parts)
+    drawn = paired(sketch.circuit, earlier.parts) if job.board.pairs else sketch.circuit
+    circuit = rebuilt(drawn, earlier.parts)
     wanted = _checked_request(circuit, job, earlier, request)
     say("values", 0, 1)
     work = _Repicking(_at(sketch, circuit, frequency), job, earlier, wanted, frequency)
@@ -203,10 +204,14 @@ class _Repicking:
         """The best choice with the fewest parts freed."""
         if self.all_free:
             return self._restored(self._chosen(self.loose))
-        least = self._chosen(self.missing)
-        if len(self.missing) == len(self.loose) or self._meets(least.circuit):
+        if len(self.missing) == len(self.loose):
+            return self._restored(self._chosen(self.loose))
+        least = self._possible(self.missing)
+        if least is not None and self._meets(least.circuit):
             return self._restored(least)
         most = self._chosen(self.loose)
+        if least is None:
+            return self._restored(self._fewest(most) if self._meets(most.circuit) else most)
         if not self._meets(most.circuit):
             reached = [self._share_of_limits(c.circuit) for c in (least, most)]
             return self._restored(least if reached[0] <= AS_GOOD * reached[1] else most)
@@ -231,8 +236,8 @@ class _Repicking:
             changed = self._changed(choice)
             if ref in self.missing or ref not in changed:
                 continue
-            without = self._chosen([*self.missing, *(r for r in changed if r != ref)])
-            if self._meets(without.circuit):
+            without = self._possible([*self.missing, *(r for r in changed if r != ref)])
+            if without is not None and self._meets(without.circuit):
                 choice = without
         return choice
 
@@ -279,6 +284,13 @@ class _Repicking:
             self.earlier.seed,
             effort=round(share * EFFORT),
         )
+
+    def _possible(self, free: Collection[str]) -> Choice | None:
+        """The same; None where the stock has nothing left for them beside what all others keep."""
+        try:
+            return self._chosen(free)
+        except RealizationError:
+            return None
 
     def _restored(self, choice: Choice) -> Choice:
         """`choice` with the rules of the job on every part, and the ideal values that follow."""

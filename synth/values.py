@@ -148,7 +148,8 @@ def _input_inverter_may(sketch: Sketch, job: Job, cell: Cell) -> float:
     """By what ratio the inverter of the input may rise, or must fall: it can, where the
     resistors it drives can fall with it."""
     circuit = sketch.circuit
-    (source,) = (circuit.by_ref[r].ideal for r in cell.inputs)
+    branches = [circuit.branch(cell, ref) for ref in cell.inputs]
+    source = 1 / sum(1 / sum(p.ideal for p in branch.parts) for branch in branches)
     feedback = circuit.by_ref[cell.feedback].ideal
     ratio = job.board.swing_limit / (job.signal.input_peak * feedback / source)
     driven = [

@@ -89,15 +89,39 @@ class Supply:
         fits = room[:, None] + freed - shared >= 1
         return room >= 1, fits & fits.T
 
+    def _short(self, index: Index) -> str:
+        """What a choice with too few parts lacks."""
+        slots = self.at(index)
+        first = int(np.flatnonzero(self.spare(index)[slots] < 0)[0])
+        refs = ", ".join(
+            p.ref for p, s in zip(self.grid.parts, slots, strict=True) if s == slots[first]
+        )
+        part = self.grid.parts[first]
+        value = float(self.grid.values[first][index[first]])
+        unit = "ohm" if part.kind == "resistor" else "F"
+        return (
+            f"board.stock: got {refs} of {show(value, unit)}, expected at most the "
+            f"{self.counts[slots[first]]} in the stock, and what all others leave of it is "
+            "nothing for them"
+        )
+
     def repaired(self, index: Index, model: LinearModel) -> Index:
         """The choice with parts moved from slots that have too few to slots with some left, each
-        by the move that costs least.  There must be parts enough in all (`check_supply`)."""
+        by the move that costs least.
+
+        Raises
+        ------
+        RealizationError
+            No part that is short can move: what all others leave is too little.
+        """
         index = index.copy()
         movable = self.grid.counts > 1
         while np.any((spare := self.spare(index)) < 0):
             short = movable & (spare[self.at(index)] < 0)
             parts, targets = np.nonzero(short[:, None] & (self.slots >= 0))
             free = spare[self.slots[parts, targets]] > 0
+            if not np.any(free):
+                raise RealizationError(self._short(index))
             parts, targets = parts[free], targets[free]
             logs = self.grid.logs_at(index)
             change = self.grid.logs[parts, targets] - logs[parts]
@@ -108,7 +132,7 @@ class Supply:
 
 
 def check_supply(parts: Sequence[Passive]) -> None:
-    """Refuse a circuit that needs more parts than there are.
+    """Refuse a circuit that needs more parts than there are, of all the values any may have.
 
     Raises
     ------
@@ -116,16 +140,15 @@ def check_supply(parts: Sequence[Passive]) -> None:
         With both numbers.
     """
     for kind in ("resistor", "capacitor"):
-        needed = [p for p in parts if p.kind == kind and p.rule is not None]
-        rule = next((p.rule for p in needed), None)
-        if rule is None or not rule.stock:
+        rules = [p.rule for p in parts if p.kind == kind and p.rule is not None]
+        if not rules or not rules[0].stock:
             continue
-        counts = [rule.count_of(float(value)) for value in rule.values]
-        there = sum(ENOUGH if c is None else c for c in counts)
-        if there < len(needed):
+        counts = {value: rule.count_of(value) for rule in rules for value in rule.values.tolist()}
+        there = sum(ENOUGH if c is None else c for c in counts.values())
+        if there < len(rules):
             raise RealizationError(
-                f"board.stock: the circuit needs {len(needed)} {kind}s, the stock has {there} "
-                f"{_between(rule)}; expected more of them, or another form"
+                f"board.stock: the circuit needs {len(rules)} {kind}s, the stock has {there} "
+                f"{_between(rules[0])}; expected more of them, or another form"
             )
 
 
