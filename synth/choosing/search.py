@@ -43,6 +43,9 @@ HEADROOM = 0.02
 # Added to the mean square of what is above a ceiling: far more than any error there is.
 BEYOND = 1e9
 
+# A round ends when it has not gained for this share of the work it may do.
+STALLED = 0.6
+
 # What a kick costs beside the neighbourhoods it leads to, in pairs of steps.
 PAIRS_PER_KICK = 10_000
 
@@ -262,7 +265,8 @@ class _Round:
         here, cost = self._descend(self.coarse, start)
         self._offer(pool, here, cost)
         best, best_cost = here, cost
-        while self.looked < effort:
+        gained = self.looked
+        while self.looked < effort and self.looked - gained < STALLED * effort:
             self.looked += PAIRS_PER_KICK
             base = best if self.rng.random() < 0.6 else here
             trial, cost_trial = self._descend(self.coarse, self._kicked(base))
@@ -273,7 +277,7 @@ class _Round:
             if cost_trial < 1.5 * cost:
                 here, cost = trial, cost_trial
             if cost_trial < best_cost:
-                best, best_cost = trial, cost_trial
+                best, best_cost, gained = trial, cost_trial, self.looked
         return pool
 
     def _descend(self, neighbourhood: Neighbourhood, index: Index) -> tuple[Index, float]:

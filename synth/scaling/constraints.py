@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 
 from synth.errors import RealizationError
 from synth.fixing import FixedParts
+from synth.graph import INPUT, BlockGraph
 from synth.job import Job
 from synth.parts import PartRule
 from synth.peaks import SignalPeaks
@@ -113,6 +114,13 @@ def ceilings(job: Job, peaks: SignalPeaks) -> dict[str, float]:
     return out
 
 
+def least_on_source(graph: BlockGraph, job: Job) -> float:
+    """Least resistance of a resistor on the net of the source [ohm], so that all of them
+    together, an inverter's too, draw at most half of its voltage."""
+    readers = len(graph.readers(INPUT)) + 1
+    return max(2 * readers * job.signal.source_resistance, job.board.resistors.smallest)
+
+
 def region(variables: Variables, job: Job, peaks: SignalPeaks, held: FixedParts) -> Region:
     """Ceilings, the ranges of every resistor and capacitor, and the values in `held`."""
     graph, board = variables.graph, job.board
@@ -142,6 +150,8 @@ def region(variables: Variables, job: Job, peaks: SignalPeaks, held: FixedParts)
         add(variables.size(block.name), low, high, f"{what} of {block.name}")
         for place, term in enumerate(block.terms):
             low, high = map(math.log, board.resistors.ends)
+            if term.source == INPUT:
+                low = max(low, min(high, math.log(least_on_source(graph, job))))
             if (block.name, place) in held.terms:
                 fixed[len(rows)] = held.refs[block.name, place]
                 low = high = math.log(held.terms[block.name, place])

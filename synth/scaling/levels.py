@@ -10,13 +10,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.fixing import FixedParts
-from synth.graph import BlockGraph
+from synth.graph import INPUT, BlockGraph
 from synth.job import Job
 from synth.mapping import Sizing
 from synth.peaks import SignalPeaks
 from synth.polarity import Polarity
 from synth.preferred import nearest
-from synth.scaling.constraints import Region, refuse, region
+from synth.scaling.constraints import Region, least_on_source, refuse, region
 from synth.scaling.objectives import current_shares, noise_power, response_error_power
 from synth.scaling.signomial import Signomial
 from synth.scaling.standard import room_for, with_standard_capacitors
@@ -119,11 +119,18 @@ def scale(
             capacitors=capacitors,
             feedback=feedback,
             inverters=_inverter_value(job),
-            own_inverters=held.inverters,
+            own_inverters={INPUT: _input_inverter(graph, job), **held.inverters},
             factors=held.factors,
         ),
         predicted_error=math.sqrt(max(problem.error(v)[0], 0.0)),
     )
+
+
+def _input_inverter(graph: BlockGraph, job: Job) -> tuple[float, float]:
+    """The same for the inverter of the input, which must not load the source."""
+    least = least_on_source(graph, job) if job.signal.source_resistance else 0.0
+    value = nearest(job.board.resistors.values, max(10e3, least))
+    return value, value
 
 
 def _inverter_value(job: Job) -> float:

@@ -92,3 +92,17 @@ def test_nets_and_references_follow_the_conventions() -> None:
         assert cell.summing == cell.block + suffix
         for ref in cell.inputs:
             assert circuit.by_ref[ref].sets
+
+
+def test_a_weak_source_is_met_with_larger_resistors() -> None:
+    """10 kohm: the resistors on the source's net draw at most half its voltage, the inverter of
+    the input included, and the response is still the target."""
+    target = butterworth(2, 1e3)
+    job = job_for(target, (100, 2e3), source_resistance=10e3, op_amp="wideband")
+    for form in FORMS:
+        circuit = sketch_form(job, form, FREQUENCY).circuit
+        drawn = sum(1 / p.value for p in circuit.bought if "src" in p.nets)
+        assert 10e3 * drawn <= 1.001
+        near = FREQUENCY[FREQUENCY < 2e3]
+        response = compile_circuit(circuit).solve(near)
+        np.testing.assert_allclose(response, target.response(near), rtol=2e-3)
