@@ -48,6 +48,8 @@ def read_shortage(text: str, kinds: Mapping[str, str], *, key: str = "--without"
             raise JobError(f"got the part {what_came(ref)}, expected one of {known}", key=key)
         unit = UNITS[kinds[ref]]
         return Shortage(kind=kinds[ref], value=_positive(value, unit, key=key), ref=ref)
+    if ref.upper() in kinds:
+        raise JobError(f"got {what_came(text)} without a value, {EXPECTED}", key=key)
     first, _, rest = text.strip().partition(" ")
     source = SOURCES.get(first.casefold(), "")
     if not source:

@@ -68,8 +68,10 @@ def command(
     shortages = tuple(read_shortage(text, kinds) for text in without)
     kept = read_references(" ".join(bought))
     folder = new_folder(pack) if into is None else into
-    if os.path.realpath(folder) == os.path.realpath(pack):
-        raise JobError(f"got {folder}, the old pack, expected another folder", key="--into")
+    new, old = Path(os.path.realpath(folder)), Path(os.path.realpath(pack))
+    if new.is_relative_to(old):
+        place = "the old pack" if new == old else "inside the old pack"
+        raise JobError(f"got {folder}, {place}, expected another folder", key="--into")
     check_pack_folder(folder)
 
     def make(report: Report) -> Design:

@@ -29,11 +29,28 @@ USEFUL_RATIO = 2.0
 LARGEST_SHARES = 8
 WORTH_NAMING = 0.5
 
+# References of parts that were no choice are listed up to this many.
+MOST_NAMED = 4
+
 _NOUNS = {"resistor": "all resistors", "capacitor": "all capacitors"}
 
 
 def proof_line(found: Certificate) -> str:
-    """How the choice stands against the best there could be, in one or two sentences."""
+    """How the choice stands against the best there could be, in up to three sentences."""
+    return _standing(found) + _held(found)
+
+
+def _held(found: Certificate) -> str:
+    """Among what the choice was, where it was not free; nothing where it was."""
+    if not found.held:
+        return ""
+    if len(found.held) == 1:
+        return f" All this is said of choices that leave {found.held[0]} as it is."
+    which = _listed(found.held) if len(found.held) <= MOST_NAMED else f"{len(found.held)} parts"
+    return f" All this is said of choices that leave {which} as they are."
+
+
+def _standing(found: Certificate) -> str:
     reached, bound = percent(found.rms), percent(found.lower_bound)
     if found.proven and found.exhausted:
         return (
@@ -59,9 +76,10 @@ def proof_line(found: Certificate) -> str:
 
 def binding_lines(found: Certificate, circuit: Circuit) -> list[str]:
     """Sets of parts that bind: what their values on offer leave undone on their own."""
+    others = "all other parts that were free" if found.held else "all other parts"
     return [
         f"{_listed(f'{ref} ({circuit.by_ref[ref].sets})' for ref in b.refs)}: whatever values "
-        f"all other parts had, those on offer for {'this part' if len(b.refs) == 1 else 'these'} "
+        f"{others} had, those on offer for {'this part' if len(b.refs) == 1 else 'these'} "
         f"leave {percent(b.rms)}."
         for b in found.bottlenecks
         # A resistor that became a pair no longer binds under its own name.

@@ -51,6 +51,8 @@ class Certificate:
         Sets of parts whose values on offer alone leave an error, the largest first.
     better
         A choice better than the incumbent, where every one was looked at: an index vector.
+    held
+        Parts whose values were no choice: fixed by the job, or kept from an earlier design.
     """
 
     rms: float
@@ -60,6 +62,7 @@ class Certificate:
     assigned: tuple[str, ...]
     bottlenecks: tuple[Bottleneck, ...] = ()
     better: Index | None = None
+    held: tuple[str, ...] = ()
 
     @property
     def gap(self) -> float:
@@ -106,6 +109,8 @@ def certify(
         if complete:
             better = incumbent.copy()
             better[list(frontier.parts)] = frontier.chosen[:, best]
+            if np.array_equal(better, incumbent):  # Itself, kept by a rounding of its bound.
+                better = None
     rms, lower = float(np.sqrt(square + model.floor)), float(np.sqrt(bound + model.floor))
     sets = bottlenecks(grid, model)
     lower = min(rms, max(lower, *(b.rms for b in sets)) if sets else lower)
@@ -118,4 +123,5 @@ def certify(
         assigned=tuple(grid.parts[k].ref for k in frontier.parts),
         bottlenecks=sets,
         better=better,
+        held=tuple(p.ref for p in grid.parts if p.fixed and p.on_board),
     )

@@ -220,7 +220,7 @@ class Ceilings:
         rows = self._slopes(program, values)
         gains = self._gains(program, values[None, :])[0]
         rise = np.log(self.highest / gains)
-        fall = np.log(gains / np.maximum(self.lowest, np.finfo(float).tiny))
+        fall = np.log(gains) - np.log(np.maximum(self.lowest, np.finfo(float).tiny))
         return LevelLimits(
             np.concatenate([rows, -rows]), np.concatenate([rise, fall]), np.log(values)
         )

@@ -68,6 +68,18 @@ def test_the_proof_is_worded_as_strong_as_it_is(changes, said, not_said) -> None
     assert not_said not in line
 
 
+def test_the_proof_says_which_parts_were_no_choice() -> None:
+    """Their values are neither tried nor excluded, so nothing is said of others for them."""
+    found = replace(MADE.certificate, held=("R1", "C2"))
+    assert "choices that leave R1 and C2 as they are." in plain(proof_line(found))
+    assert (
+        "whatever values all other parts that were free had"
+        in binding_lines(found, MADE.circuit)[0]
+    )
+    many = replace(found, held=("R1", "R2", "R3", "C1", "C2"))
+    assert "choices that leave 5 parts as they are." in plain(proof_line(many))
+
+
 def test_parts_that_bind_are_named_with_what_they_set() -> None:
     """Sets that leave much less than the bound are no reason for it."""
     weak = Bottleneck(refs=("R1", "C2"), rms=0.1e-3)

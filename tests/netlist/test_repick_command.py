@@ -144,6 +144,18 @@ def test_the_old_pack_is_never_the_new_one(packed) -> None:
     assert contents(packed / "smooth") == before
 
 
+def test_the_new_pack_is_not_put_into_the_old_one(packed) -> None:
+    """Nothing is written there."""
+    value = values(record(packed / "smooth"))["R1"]
+    before = contents(packed / "smooth")
+    done = polewright(
+        packed, "repick", "smooth", "--without", f"R1={value:g}", "--into", "smooth/new"
+    )
+    assert done.returncode == 2
+    assert "inside the old pack, expected another folder" in done.stderr
+    assert contents(packed / "smooth") == before
+
+
 def test_the_new_pack_stands_beside_the_old_one(tmp_path, monkeypatch) -> None:
     """However the old one is named."""
     (tmp_path / "servo" / "inner").mkdir(parents=True)

@@ -59,3 +59,9 @@ def test_references_stand_between_spaces_or_commas() -> None:
     """In any case, each once."""
     assert read_references(" r1,R2  C3,R1 ") == ("R1", "R2", "C3")
     assert read_references("") == ()
+
+
+def test_a_reference_alone_is_no_value() -> None:
+    """``R7`` would be 0.7 ohm."""
+    with pytest.raises(JobError, match="got 'r7' without a value, expected"):
+        read_shortage("r7", {"R7": "resistor"})

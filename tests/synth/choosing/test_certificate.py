@@ -195,3 +195,14 @@ def test_fixed_values_are_kept_and_the_rest_makes_up_for_them() -> None:
     for before, after in zip(fixed, choice.circuit.passives, strict=True):
         if before.fixed:
             assert after.value == before.value
+
+
+def test_a_choice_without_a_choice_is_proven() -> None:
+    """Every part fixed: nothing is better, whatever rounding makes of the bound."""
+    circuit, target = small(2, "controllable")
+    passives = tuple(replace(p, fixed=True) for p in circuit.passives)
+    grid, model, index = models(replace(circuit, passives=passives), target)
+    found = certify(grid, model, index)
+    assert found.proven
+    assert found.better is None
+    assert set(found.held) == {p.ref for p in passives if p.on_board}
