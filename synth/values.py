@@ -131,6 +131,8 @@ def level_limits(sketch: Sketch, job: Job) -> dict[str, tuple[float, float]]:
             limits[cell.output] = (job.signal.band_hz[0], _input_inverter_may(sketch, job, cell))
             continue
         volts = job.signal.input_peak * sketch.levels[cell.block]
+        if cell.kind == "inverter":  # of a gain other than -1 where values were chosen before
+            volts *= _inverter_gain(sketch.circuit, cell)
         rising = min(
             job.board.swing_limit / (volts * peaks.peak[cell.block]),
             job.board.op_amp.slew_rate / 2 / (volts * peaks.rate[cell.block]),
@@ -144,14 +146,18 @@ def level_limits(sketch: Sketch, job: Job) -> dict[str, tuple[float, float]]:
     return limits
 
 
+def _inverter_gain(circuit: Circuit, cell: Cell) -> float:
+    """Size of the gain of an inverter with its ideal values."""
+    branches = [circuit.branch(cell, ref) for ref in cell.inputs]
+    conductance = sum(1 / sum(p.ideal for p in branch.parts) for branch in branches)
+    return circuit.by_ref[cell.feedback].ideal * conductance
+
+
 def _input_inverter_may(sketch: Sketch, job: Job, cell: Cell) -> float:
     """By what ratio the inverter of the input may rise, or must fall: it can, where the
     resistors it drives can fall with it."""
     circuit = sketch.circuit
-    branches = [circuit.branch(cell, ref) for ref in cell.inputs]
-    source = 1 / sum(1 / sum(p.ideal for p in branch.parts) for branch in branches)
-    feedback = circuit.by_ref[cell.feedback].ideal
-    ratio = job.board.swing_limit / (job.signal.input_peak * feedback / source)
+    ratio = job.board.swing_limit / (job.signal.input_peak * _inverter_gain(circuit, cell))
     driven = [
         p.ideal
         for p in circuit.bought
