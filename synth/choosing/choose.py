@@ -29,8 +29,8 @@ Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
 Index = NDArray[np.intp]
 
-# Pairs of steps the search evaluates: about a second on one core.
-DEFAULT_EFFORT = 60_000_000
+# Pairs of steps the search evaluates: a second or two on one core.
+DEFAULT_EFFORT = 100_000_000
 
 # The search leaves the impedance of each cell within this ratio of where the scaling put it,
 # either way: the response does not show it, but noise, offset and currents do.
