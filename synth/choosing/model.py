@@ -156,6 +156,11 @@ FIRM_SLOPE = 2.5
 AROUND_PEAK = np.linspace(0.98, 1.02, 5)
 PEAK_MARGIN = 0.01
 
+# Where an output hangs on a small difference, its peak may come to lie somewhere else: so many
+# frequencies are watched from this factor below the lowest peak to as far above the highest.
+WATCHED_BETWEEN = 40
+BEYOND_PEAKS = 10.0
+
 
 @dataclass(frozen=True, eq=False)
 class Ceilings:
@@ -202,11 +207,13 @@ class Ceilings:
         )
 
     def _gains(self, program: NodalProgram, values: Real) -> Real:
-        """Largest gain to each output around its peak, values (boards, P), shape (boards, U)."""
-        around = np.multiply.outer(AROUND_PEAK, self.peak_hz)
-        gains = program.solve(around.ravel(), values=values, nets=self.nets)
-        shaped = gains.reshape(len(values), *around.shape, len(self.nets))
-        return np.asarray(np.abs(np.diagonal(shaped, axis1=2, axis2=3)).max(axis=1))
+        """Largest gain to each output around the peaks of all and at a few frequencies between
+        and beyond, values (boards, P), shape (boards, U)."""
+        around = np.multiply.outer(AROUND_PEAK, np.unique(self.peak_hz)).ravel()
+        low, high = np.min(around) / BEYOND_PEAKS, np.max(around) * BEYOND_PEAKS
+        watched = np.concatenate([around, np.geomspace(low, high, WATCHED_BETWEEN)])
+        gains = program.solve(watched, values=values, nets=self.nets)
+        return np.asarray(np.abs(gains).max(axis=1))
 
     def keep(self, program: NodalProgram, values: Real) -> NDArray[np.bool_]:
         """Which boards stay within every bound, values (boards, P), shape (boards,)."""
