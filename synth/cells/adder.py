@@ -4,8 +4,14 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 
-from synth.cells.common import BuiltCell, CellInput, CellRules, Numbering, inverting_cell
-from synth.circuit import Passive
+from synth.cells.common import (
+    BuiltCell,
+    CellInput,
+    CellRules,
+    Numbering,
+    feedback_part,
+    inverting_cell,
+)
 
 __all__ = ["adder_cell"]
 
@@ -24,15 +30,6 @@ def adder_cell(
 
     An input of weight k has the resistance R_f / |k|.
     """
-    resistor = Passive(
-        ref="R",
-        kind="resistor",
-        nets=("", ""),
-        value=feedback,
-        ideal=feedback,
-        rule=rules.resistors,
-        sets=f"level of {block}",
-    )
     return inverting_cell(
         numbering,
         kind="adder",
@@ -40,7 +37,7 @@ def adder_cell(
         output=output,
         summing=f"{block}_s",
         inputs=inputs,
-        feedback=resistor,
+        feedback=feedback_part("resistor", feedback, rules, f"level of {block}"),
         rules=rules,
         polarity=polarity,
     )

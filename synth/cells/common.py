@@ -8,7 +8,7 @@ from dataclasses import dataclass, field, replace
 from synth.circuit import GROUND, Amplifier, Cell, Passive
 from synth.parts import OpAmp, PartRule
 
-__all__ = ["BuiltCell", "CellInput", "CellRules", "Numbering", "inverting_cell"]
+__all__ = ["BuiltCell", "CellInput", "CellRules", "Numbering", "feedback_part", "inverting_cell"]
 
 
 @dataclass
@@ -48,6 +48,20 @@ class BuiltCell:
     cell: Cell
     passives: tuple[Passive, ...]
     amplifier: Amplifier
+
+
+def feedback_part(kind: str, value: float, rules: CellRules, sets: str) -> Passive:
+    """A resistor or capacitor yet without reference and nets, for `inverting_cell`."""
+    rule = rules.capacitors if kind == "capacitor" else rules.resistors
+    return Passive(
+        ref=kind[0].upper(),
+        kind=kind,
+        nets=("", ""),
+        value=value,
+        ideal=value,
+        rule=rule,
+        sets=sets,
+    )
 
 
 def inverting_cell(

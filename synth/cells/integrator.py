@@ -4,8 +4,14 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 
-from synth.cells.common import BuiltCell, CellInput, CellRules, Numbering, inverting_cell
-from synth.circuit import Passive
+from synth.cells.common import (
+    BuiltCell,
+    CellInput,
+    CellRules,
+    Numbering,
+    feedback_part,
+    inverting_cell,
+)
 
 __all__ = ["integrator_cell"]
 
@@ -24,15 +30,6 @@ def integrator_cell(
 
     An input of weight w [1/s] has the resistance 1 / (|w| C).
     """
-    capacitor = Passive(
-        ref="C",
-        kind="capacitor",
-        nets=("", ""),
-        value=capacitance,
-        ideal=capacitance,
-        rule=rules.capacitors,
-        sets=f"rate of {block}",
-    )
     return inverting_cell(
         numbering,
         kind="integrator",
@@ -40,7 +37,7 @@ def integrator_cell(
         output=output,
         summing=f"{block}_s",
         inputs=inputs,
-        feedback=capacitor,
+        feedback=feedback_part("capacitor", capacitance, rules, f"rate of {block}"),
         rules=rules,
         polarity=polarity,
     )

@@ -2,8 +2,14 @@
 
 from __future__ import annotations
 
-from synth.cells.common import BuiltCell, CellInput, CellRules, Numbering, inverting_cell
-from synth.circuit import Passive
+from synth.cells.common import (
+    BuiltCell,
+    CellInput,
+    CellRules,
+    Numbering,
+    feedback_part,
+    inverting_cell,
+)
 
 __all__ = ["inverter_cell"]
 
@@ -19,15 +25,6 @@ def inverter_cell(
     polarity: int,
 ) -> BuiltCell:
     """The cell that inverts the signal of `block` from net ``source.net`` onto `output`."""
-    resistor = Passive(
-        ref="R",
-        kind="resistor",
-        nets=("", ""),
-        value=feedback,
-        ideal=feedback,
-        rule=rules.resistors,
-        sets=f"inverter of {block}",
-    )
     return inverting_cell(
         numbering,
         kind="inverter",
@@ -35,7 +32,7 @@ def inverter_cell(
         output=output,
         summing=f"{block}_ns",
         inputs=(source,),
-        feedback=resistor,
+        feedback=feedback_part("resistor", feedback, rules, f"inverter of {block}"),
         rules=rules,
         polarity=polarity,
     )
