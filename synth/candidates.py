@@ -122,7 +122,8 @@ def _scaled(
 def choose_form(
     job: Job, frequency_hz: Real, *, progress: Callable[[int, int], None] | None = None
 ) -> tuple[Sketch, tuple[Candidate, ...]]:
-    """The form the job names, or the one with the smallest predicted spread.
+    """The form the job names, or the one with the smallest predicted spread, and every form
+    considered, the best first and those that do not fit last.
 
     The spread compared is the larger of magnitude and phase, each over its limit.
 
@@ -177,4 +178,6 @@ def choose_form(
         # Forms whose spreads agree to three digits are the same circuit; fewer op-amps win.
         return float(f"{share:.3g}"), len(sketch.circuit.amplifiers)
 
-    return min(sketches, key=spread), tuple(candidates)
+    ranked = sorted(sketches, key=spread)
+    refused = [c for c in candidates if not c.possible]
+    return ranked[0], (*(sketch.candidate for sketch in ranked), *refused)
