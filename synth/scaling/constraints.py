@@ -203,9 +203,12 @@ def refuse(variables: Variables, job: Job, v: Real) -> RealizationError:
             what = "" if block.is_integrator else " of feedback"
             message = f"{block.kind} {block.name} would need resistors {words} (with {own}{what})"
     caps = job.board.capacitors
+    key, advice = "board.resistors", "widen these ranges"
+    if job.board.resistors.stock or caps.stock:
+        key, advice = "board.stock", "add values to the drawer"
     return RealizationError(
-        f"board.resistors: no scaling fits: {message}, allowed are {_range(job.board.resistors)} "
-        f"and {_range(caps)}; widen these ranges, or choose another form or gain"
+        f"{key}: no scaling fits: {message}, allowed are {_range(job.board.resistors)} "
+        f"and {_range(caps)}; {advice}, or choose another form or gain"
     )
 
 

@@ -13,7 +13,7 @@ from synth.graph import Block, BlockGraph, Term
 from synth.job import Job
 from synth.mapping import Sizing, map_graph
 from synth.nodal import compile_circuit
-from synth.parts import PartRule
+from synth.parts import PartRule, StockItem
 from synth.peaks import SignalPeaks, signal_peaks
 from synth.polarity import Polarity, choose_polarity
 from synth.preferred import is_member
@@ -218,3 +218,14 @@ def test_internal_outputs_keep_half_the_slew_rate() -> None:
     for block in graph.blocks:
         if block.name != graph.output:
             assert scaled.levels[block.name] * peaks.rate[block.name] <= 1e4 * 1.001
+
+
+def test_a_drawer_that_fits_nowhere_is_named_as_such() -> None:
+    """The key is that of the drawer, and the advice too."""
+    stock = (StockItem(value=10e3, tolerance=0.01), StockItem(value=11e3, tolerance=0.01))
+    drawer = PartRule(
+        kind="resistor", series="E96", tolerance=0.01, smallest=1e3, largest=1e6, stock=stock
+    )
+    job = job_for(butterworth(3, 1e3), BAND, resistors=drawer)
+    with pytest.raises(RealizationError, match=r"board.stock: no scaling fits: .* to the drawer"):
+        stages(job, "controllable")
