@@ -1,13 +1,14 @@
 """Realizations of H(s) as block graphs, one form a file, and the table of them.
 
 A form takes a `TransferFunction` and returns a `BlockGraph` that equals it, with exact
-rational weights.  A form that cannot realise a target raises `RealizationError` with the
-reason.
+rational weights where the form has them.  A form that cannot realise a target raises
+`RealizationError` with the reason, one line.
 """
 
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
+from dataclasses import dataclass
 from types import MappingProxyType
 
 from synth.errors import JobError
@@ -17,13 +18,38 @@ from synth.forms.observable import observable
 from synth.graph import BlockGraph
 from synth.transfer import TransferFunction
 
-__all__ = ["FORMS", "check_form_name", "realize"]
+__all__ = ["FORMS", "Form", "check_form_name", "realize"]
 
-FORMS: Mapping[str, Callable[[TransferFunction], BlockGraph]] = MappingProxyType(
+
+@dataclass(frozen=True, kw_only=True)
+class Form:
+    """A realization as the table knows it.
+
+    Parameters
+    ----------
+    build
+        From a proper H(s) to its block graph.
+    exact
+        Whether the weights are rationals that give H(s) identically, where its factors do;
+        otherwise they are doubles.
+    structural_zeros
+        Whether zeros at the origin come from the structure; otherwise from sums that cancel,
+        which every part's tolerance disturbs.
+    everywhere
+        Whether the form exists for every proper H(s).
+    """
+
+    build: Callable[[TransferFunction], BlockGraph]
+    exact: bool = True
+    structural_zeros: bool = True
+    everywhere: bool = True
+
+
+FORMS: Mapping[str, Form] = MappingProxyType(
     {
-        "controllable": controllable,
-        "observable": observable,
-        "cascade": cascade,
+        "controllable": Form(build=controllable),
+        "observable": Form(build=observable),
+        "cascade": Form(build=cascade),
     }
 )
 
@@ -54,4 +80,4 @@ def realize(target: TransferFunction, form: str) -> BlockGraph:
         The form does not exist for this target.
     """
     check_form_name(form)
-    return FORMS[form](target)
+    return FORMS[form].build(target)

@@ -13,6 +13,7 @@ from synth.candidates import sketch_form
 from synth.design import compare_forms, design
 from synth.errors import JobError, RealizationError
 from synth.evidence import response_error
+from synth.forms import FORMS
 from synth.job import Accept, Loop
 from synth.limits import swings
 from synth.nodal import compile_circuit
@@ -37,7 +38,7 @@ def test_a_design_holds_together() -> None:
     assert found.nominal.rms < found.nearest.rms
     assert found.tolerance.low <= found.tolerance.share <= found.tolerance.high
     assert all(c.passed for c in found.checks)
-    assert {c.form for c in found.candidates} == {"controllable", "observable", "cascade"}
+    assert {c.form for c in found.candidates} == set(FORMS)
     names = block_names(found.circuit)
     built = graph_of(found.circuit)
     for cell in found.circuit.cells:

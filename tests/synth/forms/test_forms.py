@@ -12,7 +12,7 @@ import scipy.signal
 import sympy
 from hypothesis import given, settings
 
-from synth.errors import JobError
+from synth.errors import JobError, RealizationError
 from synth.forms import FORMS, realize
 from synth.forms.cascade import sections
 from synth.graph import BlockGraph
@@ -44,6 +44,31 @@ def rational_target(order: int) -> TransferFunction:
     return TransferFunction.from_factors(F(7, 3), kept, picked)
 
 
+def realized(target: TransferFunction, form: str) -> BlockGraph:
+    """The graph; the test is skipped where the form does not exist for this target."""
+    try:
+        return realize(target, form)
+    except RealizationError:
+        if FORMS[form].everywhere:
+            raise
+        pytest.skip(f"no {form} form of this target")
+
+
+def error_of(graph: BlockGraph, target: TransferFunction, s: np.ndarray) -> np.ndarray:
+    """|graph - H| relative to |H|, or where zeros come from sums that cancel relative to the
+    largest summand of the output, as rounding leaves it."""
+    wanted = target.at(s)
+    size = np.abs(wanted)
+    if not FORMS[graph.form].structural_zeros:
+        signals = {"in": np.ones_like(s), **graph.signals(s)}
+        output = graph.by_name[graph.output]
+        if not output.is_integrator:
+            parts = [np.abs(float(t.weight) * signals[t.source]) for t in output.terms]
+            size = np.maximum(size, np.max(parts, axis=0))
+    size = np.where(size > 0, size, 1.0)
+    return np.asarray(np.abs(graph.at(s) - wanted) / size)
+
+
 def exact_transfer_function(graph: BlockGraph) -> sympy.Expr:
     """D + C (sI - A)^-1 B in exact rationals, by C adj(sI-A) B = det(sI-A+BC) - det(sI-A)."""
     s = sympy.Symbol("s")
@@ -61,7 +86,7 @@ def exact_transfer_function(graph: BlockGraph) -> sympy.Expr:
     return exact(direct) + (q - p) / p
 
 
-@pytest.mark.parametrize("form", FORMS)
+@pytest.mark.parametrize("form", [name for name, form in FORMS.items() if form.exact])
 @pytest.mark.parametrize("order", range(1, 7))
 def test_graph_is_the_target_in_exact_rationals(form: str, order: int) -> None:
     """The rational function of the graph equals H(s) identically."""
@@ -75,7 +100,7 @@ def test_graph_is_the_target_in_exact_rationals(form: str, order: int) -> None:
         sympy.Rational(c.numerator, c.denominator) * s**k
         for k, c in enumerate(reversed(target.denominator))
     )
-    difference = sympy.cancel(exact_transfer_function(realize(target, form)) - num / den)
+    difference = sympy.cancel(exact_transfer_function(realized(target, form)) - num / den)
     assert difference == 0
 
 
@@ -88,10 +113,7 @@ def test_graph_is_the_target_in_numbers_over_six_decades(form: str, order: int) 
     s = 2j * np.pi * np.geomspace(0.01, 1e7, 150)
     for _ in range(5):
         target = random_target(rng, order)
-        wanted = target.at(s)
-        keep = np.abs(wanted) > 0
-        got = realize(target, form).at(s)
-        assert np.max(np.abs(got[keep] / wanted[keep] - 1)) < 1e-9
+        assert np.max(error_of(realized(target, form), target, s)) < 1e-9
 
 
 @settings(deadline=None, derandomize=True, max_examples=60)
@@ -99,8 +121,13 @@ def test_graph_is_the_target_in_numbers_over_six_decades(form: str, order: int) 
 def test_random_stable_targets_come_back_from_every_form(target: TransferFunction) -> None:
     """Orders 1 to 8: the graph gives H(s) back, at real and complex frequencies."""
     s = np.array([1j, 30j, 1e3j, 2e4j, 100 + 500j, 3e3])
-    for form in FORMS:
-        np.testing.assert_allclose(realize(target, form).at(s), target.at(s), rtol=1e-9)
+    for name, form in FORMS.items():
+        try:
+            graph = realize(target, name)
+        except RealizationError:
+            assert not form.everywhere
+            continue
+        assert np.max(error_of(graph, target, s)) < 1e-9
 
 
 def test_controllable_form_of_third_order_has_the_matrices_of_the_textbook() -> None:
@@ -149,19 +176,19 @@ def test_companion_matrices_agree_with_python_control(form: str, kind: str) -> N
 def test_response_agrees_with_scipy_state_space(form: str) -> None:
     """scipy.signal.tf2ss of the same coefficients has the same frequency response."""
     num, den = [1.0, 3.0, 2.0, 8.0], [2.0, 5.0, 9.0, 4.0]
-    graph = realize(TransferFunction.from_polynomials(num, den), form)
+    graph = realized(TransferFunction.from_polynomials(num, den), form)
     A, B, C, D = scipy.signal.tf2ss(num, den)
     w = np.geomspace(0.05, 50, 40)
     _, theirs = scipy.signal.freqresp(scipy.signal.StateSpace(A, B, C, D), w)
     np.testing.assert_allclose(graph.at(1j * w), theirs, rtol=1e-9)
 
 
-@pytest.mark.parametrize("form", FORMS)
+@pytest.mark.parametrize("form", [n for n, form in FORMS.items() if form.structural_zeros])
 def test_zeros_at_the_origin_come_from_the_structure(form: str) -> None:
     """With every weight off by up to 2 %, a fourth-order high-pass still falls by 80 dB a
     decade three decades below its corner: no small difference of large terms is involved."""
     target = butterworth(4, 1e3, highpass=True)
-    graph = realize(target, form)
+    graph = realized(target, form)
     rng = np.random.default_rng(3)
     blocks = tuple(
         replace(
@@ -178,7 +205,7 @@ def test_zeros_at_the_origin_come_from_the_structure(form: str) -> None:
     assert np.max(np.abs(error_db)) < 2.0
 
 
-@pytest.mark.parametrize("form", FORMS)
+@pytest.mark.parametrize("form", ["controllable", "observable", "cascade"])
 def test_no_adder_where_an_integrator_is_the_output(form: str) -> None:
     """A low-pass has as many blocks as poles: its output is an integrator."""
     graph = realize(butterworth(4, 1e3), form)
