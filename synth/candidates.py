@@ -1,8 +1,8 @@
-"""One form carried from H(s) to a circuit with ideal values, and the choice among forms."""
+"""One form carried from H(s) to a circuit with ideal values."""
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -12,7 +12,7 @@ from synth.choosing.supply import check_supply
 from synth.circuit import Circuit
 from synth.errors import JobError, RealizationError
 from synth.fixing import fixed_parts, unit_circuit
-from synth.forms import FORMS, check_form_name, realize
+from synth.forms import realize
 from synth.graph import BlockGraph
 from synth.job import Job
 from synth.mapping import input_factor, map_graph
@@ -23,7 +23,7 @@ from synth.results import Candidate
 from synth.scaling import Scaled, scale
 from synth.tolerance import predicted_spread
 
-__all__ = ["Sketch", "choose_form", "sketch_form"]
+__all__ = ["Sketch", "refused", "sketch_form"]
 
 Real = NDArray[np.float64]
 
@@ -119,65 +119,13 @@ def _scaled(
     return scaled, held.marked(map_graph(scaled.graph, polarity, scaled.sizing, job))
 
 
-def choose_form(
-    job: Job, frequency_hz: Real, *, progress: Callable[[int, int], None] | None = None
-) -> tuple[Sketch, tuple[Candidate, ...]]:
-    """The form the job names, or the one with the smallest predicted spread, and every form
-    considered, the best first and those that do not fit last.
-
-    The spread compared is the larger of magnitude and phase, each over its limit.
-
-    Raises
-    ------
-    JobError
-        The job names a form that does not exist, or fixes a part that no form has.
-    RealizationError
-        The form the job names does not fit, or none does; the message has each reason.
-    """
-    check_form_name(job.board.form)
-    names = list(FORMS) if job.board.form == "auto" else [job.board.form]
-    sketches: list[Sketch] = []
-    candidates: list[Candidate] = []
-    unreadable: list[JobError] = []
-    for k, name in enumerate(names):
-        if progress is not None:
-            progress(k, len(names))
-        try:
-            sketch = sketch_form(job, name, frequency_hz)
-        except (JobError, RealizationError) as error:
-            if len(names) == 1:
-                raise
-            if isinstance(error, JobError):
-                unreadable.append(error)
-            candidates.append(
-                Candidate(
-                    form=name,
-                    possible=False,
-                    op_amps=None,
-                    spread_db=None,
-                    spread_deg=None,
-                    reason=str(error),
-                )
-            )
-        else:
-            sketches.append(sketch)
-            candidates.append(sketch.candidate)
-    if not sketches:
-        forms: dict[str, list[str]] = {}
-        for c in candidates:
-            forms.setdefault(c.reason, []).append(c.form)
-        reasons = "; ".join(f"{', '.join(names)}: {reason}" for reason, names in forms.items())
-        if len(unreadable) == len(candidates):
-            raise JobError(reasons, key="board.form")
-        raise RealizationError(f"board.form: no form fits the parts: {reasons}")
-
-    def spread(sketch: Sketch) -> tuple[float, int]:
-        share = max(
-            sketch.spread_db / job.accept.magnitude_db, sketch.spread_deg / job.accept.phase_deg
-        )
-        # Forms whose spreads agree to three digits are the same circuit; fewer op-amps win.
-        return float(f"{share:.3g}"), len(sketch.circuit.amplifiers)
-
-    ranked = sorted(sketches, key=spread)
-    refused = [c for c in candidates if not c.possible]
-    return ranked[0], (*(sketch.candidate for sketch in ranked), *refused)
+def refused(found: Sequence[tuple[Candidate, JobError | None]]) -> JobError | RealizationError:
+    """The error for a job that no form fits: every reason, with the forms it holds for; of the
+    job, where each form finds it unreadable."""
+    forms: dict[str, list[str]] = {}
+    for candidate, _ in found:
+        forms.setdefault(candidate.reason, []).append(candidate.form)
+    reasons = "; ".join(f"{', '.join(names)}: {reason}" for reason, names in forms.items())
+    if all(error is not None for _, error in found):
+        return JobError(reasons, key="board.form")
+    return RealizationError(f"board.form: no form fits the parts: {reasons}")

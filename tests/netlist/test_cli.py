@@ -50,7 +50,7 @@ def stages(monkeypatch, tmp_path):
 
     stages = Stages()
 
-    def design(job, *, boards=1000, seed=1, effort=1, progress=None):
+    def design(job, *, boards=1000, seed=1, effort=1, progress=None, mapper=None):
         stages.effort = effort
         progress("drawing boards", 1, 2)
         if stages.raises is not None:
@@ -60,7 +60,7 @@ def stages(monkeypatch, tmp_path):
     replaced = {
         "synth.design": {
             "design": design,
-            "compare_forms": lambda job: ("controllable", stages.made.candidates),
+            "compare_forms": lambda job, **options: ("controllable", stages.made.candidates),
         },
         "netlist.verification": {
             "verify": lambda made, *, simulator=None: boards.verification(
