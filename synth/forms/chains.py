@@ -125,7 +125,7 @@ def search_frequencies(target: TransferFunction) -> Real:
     low, high = min(corners) / below, max(corners) * BEYOND_ROOTS
     grid = frequencies_of_interest(target, from_hz=low)
     grid = grid[grid <= high]
-    thinned = grid[:: max(1, grid.size // FEW_FREQUENCIES)]
+    thinned = grid[:: max(1, round(grid.size / FEW_FREQUENCIES))]
     middles = [p.natural_frequency / (2 * np.pi) for p in target.pole_factors if p.degree == 2]
     # Out of the grid, which keeps away from pairs on the imaginary axis.
     nearest = [grid[np.argmin(np.abs(grid - f))] for f in middles]
