@@ -121,14 +121,16 @@ def _canonical(factor: Factor) -> tuple[object, ...]:
 
 
 def _within_limit(target: TransferFunction) -> tuple[list[_Item], list[Factor]]:
-    """Items and free zeros, with as many real zeros fixed to real poles as it takes."""
+    """Items and free zeros, with as many real zeros fixed to real poles as it takes.
+
+    Of the real poles enough stay free for pairs of zeros to join, since H is proper.
+    """
     items = [_Item(p) for p in sorted(target.pole_factors, key=_canonical)]
     zeros = sorted(target.zero_factors, key=_canonical)
-    for_pairs = 2 * max(0, _pairs_without_poles(target))
     while _table_size(items, zeros) > LARGEST_TABLE:
         poles = [i for i in items if i.pole.degree == 1 and not i.zeros]
         single = [z for z in zeros if z.degree == 1]
-        if not single or len(poles) <= for_pairs:
+        if not single or not poles:
             break
         item, zero = min(
             ((i, z) for i in poles for z in single), key=lambda p: _distance(p[0].pole, p[1])
