@@ -12,6 +12,7 @@ peak of output k, over that of the output, if what follows it may amplify nothin
 c_k is the chain's peak.  Its noise is the sum over the outputs of the mean of n_k^2 over
 frequency, up to the highest root, or ten times it where H does not fall beyond its roots.  A
 form knows no band, so maxima and means are over `search_frequencies`, which the roots decide.
+(Lueder 1970 and Halfin 1970 search for flat partial products in a given band; from memory.)
 """
 
 from __future__ import annotations
