@@ -153,15 +153,18 @@ def test_a_root_at_the_origin_is_exact():
     assert polynomials.simple_roots(_from_roots(0, -3)) == [0, -3]
 
 
-def test_wilkinsons_polynomial_moves_as_published():
-    """J. H. Wilkinson: a19 changed by -2^-23 moves a pair to 16.7307 +- 2.8126j (from memory)."""
+@pytest.mark.parametrize("scale", [Fraction(1), Fraction(-1), Fraction(-6283), Fraction(-1, 50)])
+def test_wilkinsons_polynomial_moves_as_published(scale: Fraction):
+    """J. H. Wilkinson: a19 changed by -2^-23 moves a pair to 16.7307 +- 2.8126j (from memory);
+    as poles too, negated and at any frequency: the roots of p(s / scale)."""
     p = list(_from_roots(*range(1, 21)))
     p[1] -= Fraction(1, 2**23)
-    found = polynomials.simple_roots(tuple(p))
+    moved = tuple(c * scale**k for k, c in enumerate(p))
+    found = [z / float(scale) for z in polynomials.simple_roots(moved)]
     pair = min(found, key=lambda z: abs(z - (16.7307 + 2.8126j)))
     assert pair == pytest.approx(16.7307 + 2.8126j, abs=1e-4)
     # Independently, by sympy's own isolation of the real roots.
-    assert sum(not z.imag for z in found) == sympy.count_roots(_poly(tuple(p)))
+    assert sum(not z.imag for z in found) == sympy.count_roots(_poly(moved))
 
 
 def test_roots_agree_with_numpy_where_numpy_is_accurate():

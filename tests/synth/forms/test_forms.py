@@ -14,7 +14,6 @@ from hypothesis import given, settings
 
 from synth.errors import JobError, RealizationError
 from synth.forms import FORMS, realize
-from synth.forms.cascade import sections
 from synth.graph import BlockGraph
 from synth.transfer import Factor, TransferFunction
 from tests.strategies import butterworth, random_target, targets
@@ -217,12 +216,3 @@ def test_unknown_form_names_those_that_exist() -> None:
     """The message lists the forms."""
     with pytest.raises(JobError, match=r"board.form: got 'diagonal', expected auto, controllable"):
         realize(butterworth(2, 1.0), "diagonal")
-
-
-def test_sections_stand_by_rising_q_with_the_zeros_next_to_their_poles() -> None:
-    """Three pairs and a real pole; each zero with the pole that is nearest in octaves."""
-    poles = [Factor.pair(1e3, 8), Factor.pair(5e4, 0.6), Factor.real(-40.0), Factor.pair(9e3, 2)]
-    zeros = [Factor.pair(8e3, 20), Factor.real(-55.0), Factor.real(-700.0)]
-    found = sections(TransferFunction.from_factors(1, zeros, poles))
-    assert [s.poles for s in found] == [[poles[2]], [poles[1]], [poles[3]], [poles[0]]]
-    assert [s.zeros for s in found] == [[zeros[1]], [], [zeros[0]], [zeros[2]]]
