@@ -12,6 +12,7 @@ from dataclasses import dataclass
 from types import MappingProxyType
 
 from synth.errors import JobError
+from synth.forms.balanced import balanced
 from synth.forms.cascade import cascade
 from synth.forms.controllable import controllable
 from synth.forms.observable import observable
@@ -52,6 +53,7 @@ FORMS: Mapping[str, Form] = MappingProxyType(
         "observable": Form(build=observable),
         "cascade": Form(build=cascade),
         "parallel": Form(build=parallel, structural_zeros=False),
+        "balanced": Form(build=balanced, exact=False, structural_zeros=False, everywhere=False),
     }
 )
 
