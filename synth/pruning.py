@@ -39,14 +39,18 @@ CORRECTION_STEPS = 10
 LARGEST_STEP = 0.5
 
 # A coefficient stays if the first-order change of the others, as a norm of their relative
-# changes, exceeds one: slopes say nothing so far out.
-LARGEST_CHANGE = 1.0
+# changes, exceeds this: slopes say nothing so far out.
+LARGEST_CHANGE = 2.0
 
 # Noise and sensitivity of a balanced realization are the least there are; pruning may give
-# away this share of each.  On low-passes and band-passes of order 3 to 8, 5 % leaves a third
-# to a half of the coefficients and the scatter from part tolerance where it was; 20 % saves
-# one or two more.
+# away this share of each.  On low-passes and band-passes of order 3 to 8, 5 % leaves half
+# to two thirds of the coefficients and the scatter from part tolerance where it was; 20 %
+# saves one or two more.
 GIVEN_AWAY = 0.05
+
+# Balanced realizations are symmetric, so choices come in pairs of equal merit: logarithms are
+# compared to this many digits and the first of equals is taken, whatever rounding says.
+EQUAL_DIGITS = 6
 
 # Angles tried for the rotation of two states, over half a turn.
 ANGLES = np.linspace(0, np.pi, 60, endpoint=False)
@@ -124,9 +128,8 @@ def pruned(system: StateSpace, wanted: Wanted) -> StateSpace:
     # In order: largest error, noise and sensitivity.
     most = (1 + GIVEN_AWAY) * np.array(_costs(matrix, kept, wanted))
     limits = np.array([max(CORRECTED, 4 * miss), *most])
-    tried = np.zeros_like(kept)
     while True:
-        removed = _one_less(matrix, kept, tried, wanted, limits)
+        removed = _one_less(matrix, kept, wanted, limits)
         if removed is None:
             return _system(matrix)
         matrix, kept = removed
@@ -151,7 +154,7 @@ def turned(system: StateSpace, wanted: Wanted, pairs: list[tuple[int, int]]) -> 
             ]
             matrix, x, y = min(
                 (_rotated(matrix, x, y, (i, j), float(a)) for a in (*ANGLES, *special)),
-                key=lambda trial: _weight(*trial),
+                key=lambda trial: round(math.log(_weight(*trial)), EQUAL_DIGITS),
             )
         if _weight(matrix, x, y) > before * (1 - GAIN_OF_SWEEP):
             break
@@ -178,11 +181,9 @@ def _states(matrix: Real, s: Complex) -> tuple[Complex, Complex]:
     return np.concatenate([x, one], axis=1), np.concatenate([y, one], axis=1)
 
 
-def _one_less(
-    matrix: Real, kept: Mask, tried: Mask, wanted: Wanted, limits: Real
-) -> tuple[Real, Mask] | None:
+def _one_less(matrix: Real, kept: Mask, wanted: Wanted, limits: Real) -> tuple[Real, Mask] | None:
     """Without the coefficient that is missed least, the others corrected; None if each is
-    needed.  What is needed is marked in `tried`."""
+    needed."""
     _, slopes = wanted._error_and_slopes(matrix)
     _, _, rows = _decomposed(slopes, kept)
     # N = 1 - V V^T projects on the changes the response does not see.  The least one that
@@ -190,8 +191,8 @@ def _one_less(
     free = np.maximum(1 - np.sum(rows**2, axis=0), 1e-300)
     change = np.full(matrix.shape, np.inf)
     change[kept] = (1 - free) / free
-    change[tried] = np.inf
-    for place in np.argsort(change, axis=None):
+    rank = np.round(np.log(np.maximum(change, 1e-300)), EQUAL_DIGITS)
+    for place in np.argsort(rank, axis=None, kind="stable"):
         k = np.unravel_index(place, matrix.shape)
         if not change[k] < LARGEST_CHANGE**2:
             return None
@@ -200,7 +201,6 @@ def _one_less(
         found, miss = _corrected(np.where(fewer | ~kept, matrix, 0.0), fewer, wanted)
         if miss < limits[0] and bool(np.all(np.array(_costs(found, fewer, wanted)) <= limits[1:])):
             return found, fewer
-        tried[k] = True
     return None
 
 

@@ -152,7 +152,7 @@ def _too_wide(hankel: Real) -> RealizationError:
 def _even(target: TransferFunction, w0: float) -> StateSpace:
     """A cascade with signals of even size, in units of 1 / w0."""
     graph = cascade(target)
-    s = 1j * _points(target, BEYOND, POINTS_PER_DECADE)
+    s = 1j * _points(target, 1.0, POINTS_PER_DECADE)[1:]
     peaks = {name: float(np.max(np.abs(v))) for name, v in graph.signals(s).items()}
     levels = {name: 1 / peak for name, peak in peaks.items() if name != graph.output and peak}
     system = StateSpace.of_signals(graph.rescaled(levels), (graph.output,))
