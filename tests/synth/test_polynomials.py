@@ -10,7 +10,7 @@ from fractions import Fraction
 import numpy as np
 import pytest
 import sympy
-from hypothesis import given, settings
+from hypothesis import assume, given, settings
 from hypothesis import strategies as st
 
 from synth import polynomials
@@ -193,3 +193,17 @@ def test_the_arithmetic_loads_no_mpmath_until_roots_are_sought():
         [sys.executable, "-c", script], capture_output=True, text=True, check=True
     )
     assert shown.stdout.split() == ["False", "False"]
+
+
+@settings(deadline=None, derandomize=True, max_examples=60)
+@given(coefficients, nonzero)
+def test_an_inverse_modulo_a_polynomial_is_that_of_sympy(
+    p: polynomials.Polynomial, modulus: polynomials.Polynomial
+) -> None:
+    """Of lower degree than the modulus, and p times it leaves the remainder one."""
+    assume(len(modulus) > 1 and len(polynomials.greatest_common_divisor(p, modulus)) == 1)
+    found = polynomials.inverse_modulo(p, modulus)
+    assert len(found) < len(modulus)
+    _, rest = polynomials.divide(polynomials.multiply(found, p), modulus)
+    assert rest == (1,)
+    assert _poly(found) == sympy.invert(_poly(p), _poly(modulus))
