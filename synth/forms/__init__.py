@@ -12,9 +12,11 @@ from dataclasses import dataclass
 from types import MappingProxyType
 
 from synth.errors import JobError
+from synth.forms.balanced import balanced
 from synth.forms.cascade import cascade
 from synth.forms.controllable import controllable
 from synth.forms.observable import observable
+from synth.forms.parallel import parallel
 from synth.graph import BlockGraph
 from synth.transfer import TransferFunction
 
@@ -50,6 +52,8 @@ FORMS: Mapping[str, Form] = MappingProxyType(
         "controllable": Form(build=controllable),
         "observable": Form(build=observable),
         "cascade": Form(build=cascade),
+        "parallel": Form(build=parallel, structural_zeros=False),
+        "balanced": Form(build=balanced, exact=False, structural_zeros=False, everywhere=False),
     }
 )
 
