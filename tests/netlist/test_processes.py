@@ -7,6 +7,7 @@ import signal
 import subprocess
 import sys
 import time
+from pathlib import Path
 
 import pytest
 
@@ -57,7 +58,7 @@ def test_processes_end_when_the_command_is_killed(tmp_path) -> None:
         process.send_signal(signal.SIGKILL)
         process.wait()
     for _ in range(100):
-        if not os.path.exists(f"/proc/{inner}"):
+        if not Path(f"/proc/{inner}").exists():
             break
         time.sleep(0.05)
     else:

@@ -77,8 +77,8 @@ def test_there_are_at_least_four():
 @pytest.mark.parametrize("scenario", SCENARIOS)
 def test_ngspice_accepts_every_form_and_agrees_at_every_net(scenario, form, simulator):
     """Magnitude, phase, settling, swing, slew and current within their limits; noise within half
-    a percent of ngspice; the nodal engine within 1e-6 of ngspice at every op-amp output, down to a millionth of its largest voltage;
-    nothing overlaps in the schematic."""
+    a percent of ngspice; the nodal engine within 1e-6 of it at every op-amp output, down to a
+    millionth of its largest voltage; nothing overlaps in the schematic."""
     job = read_job(FOLDER / f"{scenario}.toml")
     try:
         made = design(replace(job, board=replace(job.board, form=form)), boards=20)

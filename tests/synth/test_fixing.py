@@ -7,13 +7,14 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
-from synth.candidates import choose_form, sketch_form
+from synth.candidates import sketch_form
 from synth.design import design
 from synth.errors import JobError, RealizationError
 from synth.forms import FORMS
 from synth.job import Job
 from synth.nodal import compile_circuit
 from synth.parts import StockItem
+from synth.ranking import rank_forms
 from synth.readback import graph_of
 from synth.transfer import Factor, TransferFunction
 from tests.jobs import capacitor_rule, job_for
@@ -122,7 +123,7 @@ def test_a_reference_no_form_has_is_refused_with_those_there_are() -> None:
     with pytest.raises(JobError, match=r"board.fixed.R77: got a reference .*, expected R1 to R\d"):
         sketch_form(fixing(fixed={"R77": 1e4}), "cascade", FREQUENCY)
     with pytest.raises(JobError, match=r"board.fixed.C3: got a reference .*, expected C1 to C2"):
-        choose_form(fixing(fixed={"C3": 1e-9}), FREQUENCY)
+        rank_forms(fixing(fixed={"C3": 1e-9}), FREQUENCY, seed=1)
 
 
 def test_a_form_without_the_reference_is_not_possible_and_another_is_taken() -> None:
@@ -130,9 +131,9 @@ def test_a_form_without_the_reference_is_not_possible_and_another_is_taken() -> 
     counts = {f: sum(p.kind == "resistor" for p in parts_of(f, target).bought) for f in FORMS}
     most = max(counts.values())
     assert min(counts.values()) < most
-    sketch, candidates = choose_form(fixing(target, fixed={f"R{most}": 12e3}), FREQUENCY)
-    assert sketch.circuit.by_ref[f"R{most}"].value == 12e3
-    for candidate in candidates:
+    found = rank_forms(fixing(target, fixed={f"R{most}": 12e3}), FREQUENCY, seed=1)
+    assert found.sketch.circuit.by_ref[f"R{most}"].value == 12e3
+    for candidate in found.candidates:
         assert candidate.possible == (counts[candidate.form] == most)
         assert candidate.possible or f"R{most}: got a reference" in candidate.reason
 

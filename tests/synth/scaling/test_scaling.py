@@ -5,7 +5,6 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from synth.candidates import choose_form
 from synth.errors import RealizationError
 from synth.evidence import response_error
 from synth.forms import FORMS, realize
@@ -17,6 +16,7 @@ from synth.parts import PartRule, StockItem
 from synth.peaks import SignalPeaks, signal_peaks
 from synth.polarity import Polarity, choose_polarity
 from synth.preferred import is_member
+from synth.ranking import rank_forms
 from synth.scaling import Scaled, scale
 from synth.scaling.constraints import ceilings
 from synth.scaling.objectives import current_shares, noise_power, response_error_power
@@ -212,7 +212,7 @@ def test_the_refusal_of_all_forms_for_one_reason_says_it_once() -> None:
     """A pole at 0.01 Hz: every form is the same integrator, whose parts are named as bought."""
     target = TransferFunction.from_factors(0.0628, [], [Factor.real(-0.0628)])
     with pytest.raises(RealizationError) as caught:
-        choose_form(job_for(target, (1e-3, 1.0)), np.geomspace(1e-3, 1.0, 50))
+        rank_forms(job_for(target, (1e-3, 1.0)), np.geomspace(1e-3, 1.0, 50), seed=1)
     said = str(caught.value)
     assert said.count("would need resistors of") == 1
     assert f"{', '.join(FORMS)}: " in said
