@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from dataclasses import dataclass
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -16,8 +16,9 @@ from synth.forms import FORMS, check_form_name, realize
 from synth.graph import BlockGraph
 from synth.job import Job
 from synth.mapping import input_factor, map_graph
+from synth.merging import merge_adders
 from synth.nodal import compile_circuit
-from synth.peaks import SignalPeaks, signal_peaks
+from synth.peaks import SignalPeaks, frequencies_of_interest, signal_peaks
 from synth.polarity import Polarity, choose_polarity
 from synth.results import Candidate
 from synth.scaling import Scaled, scale
@@ -30,6 +31,9 @@ Real = NDArray[np.float64]
 # Fixed resistors behind a source resistance: scalings until its factor settles this closely.
 FACTOR_ROUNDS = 5
 FACTOR_SETTLED = 1e-4
+
+# The cost of folding an adder is looked at at every fourth frequency that sees all peaks.
+FOLDS_LOOK_AT_EVERY = 4
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -73,6 +77,8 @@ class Sketch:
 def sketch_form(job: Job, form: str, frequency_hz: Real) -> Sketch:
     """Realise, sign, scale and map the job's target in one form.
 
+    Adders are folded where that saves op-amps and the result fits.
+
     Raises
     ------
     RealizationError
@@ -80,25 +86,76 @@ def sketch_form(job: Job, form: str, frequency_hz: Real) -> Sketch:
     JobError
         The job fixes a part this form does not have.
     """
-    graph = realize(job.target, form)
-    polarity = choose_polarity(graph, inverted=job.board.inverted)
-    peaks = signal_peaks(graph, job.target, band_hz=job.signal.band_hz, swing=job.signal.swing)
     # Levels see the response at a part of the frequencies, the spread needs every peak of it.
     few = frequency_hz[:: max(1, frequency_hz.size // 200)]
-    scaled, circuit = _scaled(graph, polarity, job, peaks, few)
+    fitted = _fitted(realize(job.target, form), job, few)
+    circuit = fitted.circuit
     tolerances = np.array([p.tolerance for p in circuit.passives])
     sensitivities = compile_circuit(circuit).sensitivities(frequency_hz)
     spread = predicted_spread(sensitivities, tolerances)
     return Sketch(
         form=form,
-        graph=scaled.graph,
-        levels=scaled.levels,
-        polarity=polarity,
-        peaks=peaks,
+        graph=fitted.scaled.graph,
+        levels=fitted.scaled.levels,
+        polarity=fitted.polarity,
+        peaks=fitted.peaks,
         circuit=circuit,
         spread_db=float(np.max(spread.magnitude_db)),
         spread_deg=float(np.max(spread.phase_deg)),
     )
+
+
+@dataclass(frozen=True, kw_only=True)
+class _Fitted:
+    """A graph with signs, levels and impedances within the job's rules, and its circuit."""
+
+    polarity: Polarity
+    peaks: SignalPeaks
+    scaled: Scaled
+    circuit: Circuit
+
+
+def _fitted(graph: BlockGraph, job: Job, frequency_hz: Real) -> _Fitted:
+    """The first that fits: adders folded, or the graph as it is.
+
+    Which of them does not depend on what the job fixes: references are those of the circuit
+    one gets, and sees, with nothing fixed.
+    """
+    free = replace(job, board=replace(job.board, fixed=()))
+    refusals: dict[BlockGraph, RealizationError] = {}
+    for trial in _variants(graph, job):
+        try:
+            fitted = _fit(trial, free, frequency_hz)
+        except RealizationError as refusal:
+            refusals[trial] = refusal
+            continue
+        if job.board.fixed:
+            fitted = _fit(trial, job, frequency_hz)
+        return fitted
+    if job.board.fixed:
+        return _fit(graph, job, frequency_hz)
+    raise refusals[graph]
+
+
+def _variants(graph: BlockGraph, job: Job) -> Iterator[BlockGraph]:
+    """Graphs equal to `graph`, in the order in which they are tried."""
+    looked_at = frequencies_of_interest(job.target)[::FOLDS_LOOK_AT_EVERY]
+    merged = merge_adders(graph, looked_at, inverted=job.board.inverted)
+    yield merged
+    if merged is not graph:
+        yield graph
+
+
+def _peaks(graph: BlockGraph, job: Job) -> SignalPeaks:
+    return signal_peaks(graph, job.target, band_hz=job.signal.band_hz, swing=job.signal.swing)
+
+
+def _fit(graph: BlockGraph, job: Job, frequency_hz: Real) -> _Fitted:
+    """Signs, levels, impedances and the circuit of one graph."""
+    polarity = choose_polarity(graph, inverted=job.board.inverted)
+    peaks = _peaks(graph, job)
+    scaled, circuit = _scaled(graph, polarity, job, peaks, frequency_hz)
+    return _Fitted(polarity=polarity, peaks=peaks, scaled=scaled, circuit=circuit)
 
 
 def _scaled(
