@@ -22,6 +22,7 @@ from synth.peaks import SignalPeaks, frequencies_of_interest, signal_peaks
 from synth.polarity import Polarity, choose_polarity
 from synth.results import Candidate
 from synth.scaling import Scaled, scale
+from synth.splitting import added_stages, split_graphs
 from synth.tolerance import predicted_spread
 
 __all__ = ["Sketch", "choose_form", "sketch_form"]
@@ -51,6 +52,8 @@ class Sketch:
     spread_db, spread_deg
         Predicted standard deviation of magnitude and phase from part tolerance, the largest
         over the band.
+    notices
+        What the user should know of how the form became a circuit.
     """
 
     form: str
@@ -61,6 +64,7 @@ class Sketch:
     circuit: Circuit
     spread_db: float
     spread_deg: float
+    notices: tuple[str, ...] = ()
 
     @property
     def candidate(self) -> Candidate:
@@ -77,7 +81,8 @@ class Sketch:
 def sketch_form(job: Job, form: str, frequency_hz: Real) -> Sketch:
     """Realise, sign, scale and map the job's target in one form.
 
-    Adders are folded where that saves op-amps and the result fits.
+    Adders are folded where that saves op-amps and the result fits; where even the form as it is
+    does not fit the parts, gains are split over more stages.
 
     Raises
     ------
@@ -102,6 +107,7 @@ def sketch_form(job: Job, form: str, frequency_hz: Real) -> Sketch:
         circuit=circuit,
         spread_db=float(np.max(spread.magnitude_db)),
         spread_deg=float(np.max(spread.phase_deg)),
+        notices=fitted.notices,
     )
 
 
@@ -113,10 +119,11 @@ class _Fitted:
     peaks: SignalPeaks
     scaled: Scaled
     circuit: Circuit
+    notices: tuple[str, ...] = ()
 
 
 def _fitted(graph: BlockGraph, job: Job, frequency_hz: Real) -> _Fitted:
-    """The first that fits: adders folded, or the graph as it is.
+    """The first that fits: adders folded, the graph as it is, gains split over more stages.
 
     Which of them does not depend on what the job fixes: references are those of the circuit
     one gets, and sees, with nothing fixed.
@@ -131,7 +138,7 @@ def _fitted(graph: BlockGraph, job: Job, frequency_hz: Real) -> _Fitted:
             continue
         if job.board.fixed:
             fitted = _fit(trial, job, frequency_hz)
-        return fitted
+        return replace(fitted, notices=_notices(trial, graph, refusals.get(graph)))
     if job.board.fixed:
         return _fit(graph, job, frequency_hz)
     raise refusals[graph]
@@ -144,6 +151,18 @@ def _variants(graph: BlockGraph, job: Job) -> Iterator[BlockGraph]:
     yield merged
     if merged is not graph:
         yield graph
+    yield from split_graphs(graph, job, _peaks(graph, job))
+
+
+def _notices(
+    fitted: BlockGraph, graph: BlockGraph, refusal: RealizationError | None
+) -> tuple[str, ...]:
+    """What is said of stages that were added."""
+    stages = added_stages(fitted, graph)
+    if not stages:
+        return ()
+    names = ", ".join(b.name for b in stages)
+    return (f"{names}: stages added to split gains; without them, {refusal}",)
 
 
 def _peaks(graph: BlockGraph, job: Job) -> SignalPeaks:

@@ -366,3 +366,4 @@ def test_what_does_not_scale_folded_is_taken_as_it_is() -> None:
     )
     assert len(wide.graph.blocks) < len(graph.blocks)
     assert [b.name for b in tight.graph.blocks] == [b.name for b in graph.blocks]
+    assert tight.notices == ()
