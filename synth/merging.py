@@ -4,7 +4,8 @@ Every cell sums, so an adder can go if each of its readers takes the adder's ter
 multiplied, and merges them with its own.  H(s) stays what it was, and so does every other
 signal.  Of all subsets of the adders, the output left out, the one with the fewest op-amps,
 that is blocks and inverters by `synth.polarity`, is taken; then the one with the fewest
-resistors; then the one with the fewest folds.
+resistors; then the one with the fewest folds.  Beyond `MOST_ENUMERATED` adders the search is
+greedy, by the same measure.
 
 What a fold costs.  Term t of block i contributes S_t = g_i w_t v_t / H to ln H, with g_i the
 transfer from i's summing node to the output: a weight off by a part in a hundred moves ln H by
@@ -47,9 +48,10 @@ Real = NDArray[np.float64]
 # less than one form differs from the next, and most adders that can go at all go within it.
 LARGEST_GROWTH = 1.1
 
-# Up to this many adders all subsets are tried, 256; beyond, the best single fold is taken again
-# and again.  A subset costs a choice of signs, about a millisecond.
-MOST_ENUMERATED = 8
+# Up to this many adders all subsets are tried, at most 64; beyond, the best single fold is taken
+# again and again, which may end above the least.  A subset costs a choice of signs, up to ten
+# milliseconds where many terms cross, so this keeps the search well below a second.
+MOST_ENUMERATED = 6
 
 # Weights that merge to less than this share of their sizes have cancelled but for rounding: no
 # part could carry what is left.
@@ -105,7 +107,7 @@ def merge_adders(
     search = _Search(graph, s, inverted, largest_growth)
     if len(adders) > MOST_ENUMERATED:
         return search.greedy(adders).graph
-    sizes = range(len(adders), -1, -1)
+    sizes = range(len(adders), 0, -1)
     return search.best(c for k in sizes for c in itertools.combinations(adders, k)).graph
 
 
@@ -135,24 +137,22 @@ class _Search:
         return self.largest_growth * _exposure(self.graph, *self._sizes, self.s)
 
     def best(self, subsets: Iterator[tuple[str, ...]]) -> _Folded:
-        """The cheapest of the subsets, which come with the largest first and end with none."""
-        best: _Folded | None = None
+        """The cheapest of the subsets, which come with the largest first, and of no fold."""
+        best = self.costed(())
         count = len(self.graph.blocks)
         for names in subsets:
             # Without a single inverter this many op-amps are left, and all that follow have more.
-            if best is not None and count - len(names) > best.cost[0]:
+            if count - len(names) > best.cost[0]:
                 break
             found = self.fold(names)
-            if found is not None and (best is None or found.cost < best.cost):
+            if found is not None and found.cost < best.cost:
                 best = found
-        assert best is not None  # folding none is always possible
         return best
 
     def greedy(self, adders: tuple[str, ...]) -> _Folded:
         """One fold more at a time, the cheapest, while it gets cheaper."""
         names: tuple[str, ...] = ()
-        best = self.fold(names)
-        assert best is not None
+        best = self.costed(names)
         while True:
             trials = [(self.fold((*names, a)), (*names, a)) for a in adders if a not in names]
             found = [(f, more) for f, more in trials if f is not None and f.cost < best.cost]
@@ -161,13 +161,18 @@ class _Search:
             best, names = min(found, key=lambda pair: pair[0].cost)
 
     def fold(self, names: tuple[str, ...]) -> _Folded | None:
-        """The graph without these adders; None where that costs accuracy."""
+        """The graph without these adders; None where that costs accuracy or cannot be."""
         try:
-            graph = folded(self.graph, names)
+            found = folded(self.graph, names)
         except GraphError:
             return None
-        if names and np.any(_exposure(graph, *self._sizes, self.s) > self._allowed):
+        if np.any(_exposure(found, *self._sizes, self.s) > self._allowed):
             return None
+        return self.costed(names, found)
+
+    def costed(self, names: tuple[str, ...], graph: BlockGraph | None = None) -> _Folded:
+        """The graph after folding `names`, by default none, with what it costs."""
+        graph = self.graph if graph is None else graph
         inverters = len(choose_polarity(graph, inverted=self.inverted).inverters)
         resistors = sum(len(b.terms) for b in graph.blocks) + len(graph.adders) + 2 * inverters
         return _Folded(graph, (len(graph.blocks) + inverters, resistors, len(names)))
