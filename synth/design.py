@@ -188,7 +188,7 @@ def judged_design(
         certificate=choice.certificate,
         budget=error_budget(program, circuit, nominal, frequency, accept=job.accept, seed=seed),
         loop=loop,
-        notices=(*job.notices, *choice.notices, *_notices(circuit, job, swing)),
+        notices=(*job.notices, *sketch.notices, *choice.notices, *_notices(circuit, job, swing)),
     )
 
 
