@@ -130,7 +130,8 @@ def choose_form(
     Raises
     ------
     JobError
-        The job names a form that does not exist, or fixes a part that no form has.
+        The job names a form that does not exist, or fixes a part that none has of the forms
+        that fit.
     RealizationError
         The form the job names does not fit, or none does; the message has each reason.
     """
@@ -167,7 +168,7 @@ def choose_form(
         for c in candidates:
             forms.setdefault(c.reason, []).append(c.form)
         reasons = "; ".join(f"{', '.join(names)}: {reason}" for reason, names in forms.items())
-        if len(unreadable) == len(candidates):
+        if unreadable:
             raise JobError(reasons, key="board.form")
         raise RealizationError(f"board.form: no form fits the parts: {reasons}")
 

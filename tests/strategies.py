@@ -8,9 +8,11 @@ from fractions import Fraction
 import numpy as np
 from hypothesis import strategies as st
 
+from synth.errors import RealizationError
+from synth.forms import FORMS, realize
 from synth.transfer import Factor, TransferFunction
 
-__all__ = ["butterworth", "random_target", "targets"]
+__all__ = ["butterworth", "exists", "random_target", "targets"]
 
 
 def butterworth(order: int, corner_hz: float, *, highpass: bool = False) -> TransferFunction:
@@ -25,6 +27,16 @@ def butterworth(order: int, corner_hz: float, *, highpass: bool = False) -> Tran
     if highpass:
         return TransferFunction.from_factors(1, [Factor.real(0)] * order, poles)
     return TransferFunction.from_factors(Fraction(w0) ** order, [], poles)
+
+
+def exists(form: str, target: TransferFunction) -> bool:
+    """Whether the target has that form; only one said not to be everywhere may be missing."""
+    try:
+        realize(target, form)
+    except RealizationError:
+        assert not FORMS[form].everywhere
+        return False
+    return True
 
 
 def random_target(

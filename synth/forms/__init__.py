@@ -15,6 +15,7 @@ from synth.errors import JobError
 from synth.forms.cascade import cascade
 from synth.forms.controllable import controllable
 from synth.forms.observable import observable
+from synth.forms.schwarz import schwarz
 from synth.graph import BlockGraph
 from synth.transfer import TransferFunction
 
@@ -35,6 +36,9 @@ class Form:
     structural_zeros
         Whether zeros at the origin come from the structure; otherwise from sums that cancel,
         which every part's tolerance disturbs.
+    summed_zeros
+        Whether zeros elsewhere come from such sums: these cancel in part where roots lie
+        decades apart, and the numbers are then as accurate as the summands.
     everywhere
         Whether the form exists for every proper H(s).
     """
@@ -42,6 +46,7 @@ class Form:
     build: Callable[[TransferFunction], BlockGraph]
     exact: bool = True
     structural_zeros: bool = True
+    summed_zeros: bool = False
     everywhere: bool = True
 
 
@@ -50,6 +55,7 @@ FORMS: Mapping[str, Form] = MappingProxyType(
         "controllable": Form(build=controllable),
         "observable": Form(build=observable),
         "cascade": Form(build=cascade),
+        "schwarz": Form(build=schwarz, summed_zeros=True, everywhere=False),
     }
 )
 

@@ -16,7 +16,7 @@ from netlist.blocks.buses import Link, buses
 from netlist.blocks.numbers import gain_text
 from netlist.blocks.order import ordered, sections
 from netlist.blocks.shapes import DOT_RADIUS, SUM_RADIUS
-from synth.forms import realize
+from synth.forms import FORMS, realize
 from synth.graph import Block, BlockGraph, Term
 from synth.transfer import Factor, TransferFunction
 from tests.netlist.block_reader import (
@@ -28,9 +28,9 @@ from tests.netlist.block_reader import (
     read_drawing,
     read_graph,
 )
+from tests.strategies import exists
 
 ORDERS = (1, 2, 3, 5, 6, 8, 12)
-FORMS = ("controllable", "observable", "cascade")
 
 
 def target(kind: str, order: int) -> TransferFunction:
@@ -79,6 +79,7 @@ GRAPHS = {
     for form in FORMS
     for kind in ("low-pass", "high-pass", "biproper")
     for order in ORDERS
+    if exists(form, target(kind, order))
 }
 RANDOM = {
     f"random, {n} integrators, {m} adders, density {density}": (n, m, density, n + 10 * m)

@@ -15,7 +15,7 @@ from synth.nodal import compile_circuit
 from synth.readback import graph_of
 from synth.transfer import TransferFunction
 from tests.jobs import job_for
-from tests.strategies import butterworth, targets
+from tests.strategies import butterworth, exists, targets
 
 FREQUENCY = np.geomspace(10, 1e4, 40)
 
@@ -48,6 +48,8 @@ def test_parts_read_back_as_the_target(target: TransferFunction, form: str, inve
     """The graph read off the values, signs included, is H(s) (or -H(s) where allowed)."""
     from dataclasses import replace
 
+    if not exists(form, target):
+        return
     job = ideal_job(target)
     job = replace(job, board=replace(job.board, inverted=inverted))
     sketch = sketch_form(job, form, FREQUENCY)

@@ -59,7 +59,8 @@ def error_of(graph: BlockGraph, target: TransferFunction, s: np.ndarray) -> np.n
     largest summand of the output, as rounding leaves it."""
     wanted = target.at(s)
     size = np.abs(wanted)
-    if not FORMS[graph.form].structural_zeros:
+    form = FORMS[graph.form]
+    if form.summed_zeros or not form.structural_zeros:
         signals = {"in": np.ones_like(s), **graph.signals(s)}
         output = graph.by_name[graph.output]
         if not output.is_integrator:
