@@ -14,6 +14,7 @@ from types import MappingProxyType
 from synth.errors import JobError
 from synth.forms.cascade import cascade
 from synth.forms.controllable import controllable
+from synth.forms.leapfrog import leapfrog
 from synth.forms.observable import observable
 from synth.forms.schwarz import schwarz
 from synth.graph import BlockGraph
@@ -56,6 +57,7 @@ FORMS: Mapping[str, Form] = MappingProxyType(
         "observable": Form(build=observable),
         "cascade": Form(build=cascade),
         "schwarz": Form(build=schwarz, summed_zeros=True, everywhere=False),
+        "leapfrog": Form(build=leapfrog, exact=False, everywhere=False),
     }
 )
 
