@@ -197,11 +197,11 @@ def _scaled(
 
 def refused(found: Sequence[tuple[Candidate, JobError | None]]) -> JobError | RealizationError:
     """The error for a job that no form fits: every reason, with the forms it holds for; of the
-    job, where each form finds it unreadable."""
+    job, where a form finds it unreadable."""
     forms: dict[str, list[str]] = {}
     for candidate, _ in found:
         forms.setdefault(candidate.reason, []).append(candidate.form)
     reasons = "; ".join(f"{', '.join(names)}: {reason}" for reason, names in forms.items())
-    if all(error is not None for _, error in found):
+    if any(error is not None for _, error in found):
         return JobError(reasons, key="board.form")
     return RealizationError(f"board.form: no form fits the parts: {reasons}")

@@ -22,7 +22,7 @@ from synth.checks import board_checks, loop_of_board
 from synth.choosing import DEFAULT_EFFORT
 from synth.choosing.supply import allotted
 from synth.circuit import Circuit
-from synth.errors import JobError, RealizationError
+from synth.errors import JobError, NumericalError, RealizationError
 from synth.evidence import Check, response_error
 from synth.forms import FORMS
 from synth.job import Job
@@ -118,7 +118,7 @@ def _assess(job: Job, form: str, *, frequency_hz: Real, seed: int) -> Assessed:
         response = wanted_of(sketch, job).response(frequency_hz)
         effort = int(EFFORT_SHARE * DEFAULT_EFFORT)
         choice = standard_values(sketch, job, response, frequency_hz, seed, effort=effort)
-    except (JobError, RealizationError) as error:
+    except (JobError, RealizationError, NumericalError) as error:
         return Assessed(
             candidate=Candidate(
                 form=form,

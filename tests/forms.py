@@ -49,6 +49,7 @@ def sizes_of_response(
 ) -> NDArray[np.float64]:
     """What an error of the response is relative to: the response itself, or where zeros come
     from sums that cancel the largest summand of the output, as rounding leaves it."""
-    if FORMS[graph.form].structural_zeros:
+    form = FORMS[graph.form]
+    if form.structural_zeros and not form.summed_zeros:
         return np.abs(response)
     return np.maximum(np.abs(response), largest_summand(graph, s))

@@ -157,8 +157,8 @@ class _Problem:
 
         def room(v: Real) -> tuple[float, Real]:
             value, gradient = self.error(v)
-            value = max(value, 1e-300)
-            return math.log(allowed / value), -gradient / value
+            value = min(max(value, 1e-300), 1e300)
+            return math.log(allowed) - math.log(value), -gradient / value
 
         second = _minimise(self._of_noise, limits, first, room)
         within = room(second)[0] > -1e-6 and float(np.max(limits.excess(second))) < 1e-6

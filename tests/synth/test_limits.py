@@ -64,6 +64,8 @@ def test_peaks_and_rates_are_those_of_a_dense_sweep(form: str) -> None:
     """Every op-amp output, inverters and internal ones included, of a sharp band-pass."""
     pairs = [Factor.pair(W0, 30), Factor.pair(1.2 * W0, 5)]
     target = TransferFunction.from_factors(W0 * W0 / 60, [Factor.real(0)] * 2, pairs)
+    if not exists(form, target):
+        target = TransferFunction.from_factors(W0**4 / 30, [], pairs)
     job = job_for(target, BAND, input_peak=0.5)
     circuit = built(job, form)
     f = np.union1d(np.geomspace(0.1, 1e7, 20_001), 1e3 * np.linspace(0.7, 1.4, 40_001))
@@ -108,7 +110,8 @@ def test_an_inverter_in_front_loads_the_source_too() -> None:
     f = np.geomspace(*BAND, 30)
     seen = set()
     for form in FORMS:
-        for target in (biproper, turned, turned.negated()):
+        some = (biproper, turned, turned.negated())
+        for target in (t for t in some if exists(form, t)):
             job = job_for(
                 target, BAND, source_resistance=700.0, op_amp_figures=ideal, input_peak=1e-3
             )

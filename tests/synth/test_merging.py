@@ -21,6 +21,7 @@ from synth.merging import LARGEST_GROWTH, exposure, folded, merge_adders
 from synth.peaks import frequencies_of_interest
 from synth.polarity import choose_polarity, inverter_count
 from synth.transfer import Factor, TransferFunction
+from tests.forms import realized
 from tests.jobs import job_for, resistor_rule
 from tests.strategies import butterworth, random_target
 
@@ -213,7 +214,7 @@ def test_folding_an_adder_that_is_read_once_never_costs_accuracy(graph: BlockGra
 def test_merging_keeps_zeros_at_the_origin_in_the_structure(form: str) -> None:
     """With every weight off by up to 2 % the high-pass falls by 80 dB a decade as before."""
     target = butterworth(4, 1e3, highpass=True)
-    graph = merge_adders(realize(target, form), frequencies_of_interest(target))
+    graph = merge_adders(realized(target, form), frequencies_of_interest(target))
     s = 2j * np.pi * np.array([1.0, 10.0])
     off = perturbed(graph, np.random.default_rng(3))
     assert np.max(np.abs(20 * np.log10(np.abs(off.at(s) / target.at(s))))) < 2.0
@@ -353,11 +354,11 @@ def test_weights_that_cancel_but_for_rounding_are_no_part() -> None:
 
 
 def test_what_does_not_scale_folded_is_taken_as_it_is() -> None:
-    """Resistors of 10 to 30 kohm: the level of the adder is the freedom that makes them fit."""
-    zeros = [Factor.real(-191189.0), Factor.real(-6624.0)]
-    poles = [Factor.real(-231085.0), Factor.real(-9993.0), Factor.real(-5966.0)]
-    target = TransferFunction.from_factors(5264, zeros, poles)
-    narrow = replace(resistor_rule(), smallest=1e4, largest=3e4)
+    """Resistors of 10 to 20 kohm: the level of the adder is the freedom that makes them fit."""
+    zeros = [Factor.real(-18149.7), Factor.real(-5909.6), Factor.real(-41694.1)]
+    poles = [Factor.real(-18054.1), Factor.real(-54257.3), Factor.real(-21124.3)]
+    target = TransferFunction.from_factors(2, zeros, poles)
+    narrow = replace(resistor_rule(), smallest=1e4, largest=2e4)
     frequency = np.geomspace(10, 1e4, 30)
     graph = realize(target, "cascade")
     wide, tight = (

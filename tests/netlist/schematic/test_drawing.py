@@ -12,6 +12,7 @@ from netlist.schematic.geometry import Wire
 from netlist.schematic.lettering import value_text
 from netlist.schematic.svg import print_scale
 from synth.circuit import Circuit
+from synth.forms import FORMS
 from tests.netlist.schematic import boards
 from tests.netlist.schematic.drawn import Groups, collisions, overlapping_wires, read_nets
 
@@ -95,9 +96,7 @@ def test_any_wiring_of_cells_is_drawn_as_it_is(circuit):
     assert overlapping_wires(drawing.sheet) == []
 
 
-MAPPED = [
-    (form, order) for form in ("controllable", "observable", "cascade") for order in (1, 4, 8)
-]
+MAPPED = [(form, order) for form in FORMS for order in (1, 4, 8)]
 
 
 @pytest.mark.parametrize(("form", "order"), MAPPED)
