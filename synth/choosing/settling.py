@@ -27,8 +27,7 @@ Real = NDArray[np.float64]
 Index = NDArray[np.intp]
 
 # About so many choices the model is made anew, at most, after the last one that gained.
-PATIENCE = 3
-MOST_ROUNDS = 12
+PATIENCE = 16
 
 # A gain smaller than this, as a ratio of the rms error, is none.
 LEAST_GAIN = 1e-4
@@ -99,29 +98,31 @@ def settle(
     """The best choice found from `start` (P,) on, what is known of it, and the work done, in
     pairs of steps of the search.
 
-    `effort` bounds the work of choosing some parts at a time, and how much is held to choose
-    all of them.  A start that does not keep the limits is only improved on by choices that do.
+    `effort` bounds the work, that of choosing all parts and that of choosing some at a time
+    each, and how much is held to choose all.  A start that does not keep the limits is only improved on by choices that do.
     """
     held = max(1, min(LARGEST_FRONTIER, effort // EFFORT_PER_ASSIGNMENT))
-    best, certificate, looked = _exact_rounds(problem, start, held)
+    best, certificate, looked = _exact_rounds(problem, start, held, effort)
     if certificate.exhausted or certificate.proven:
         return best, certificate, looked
     improved, more = _by_subsets(problem, best, rng, effort)
     looked += more
     if not np.array_equal(improved, best):
-        best, certificate, more = _exact_rounds(problem, improved, held)
+        best, certificate, more = _exact_rounds(problem, improved, held, effort)
         looked += more
     return best, certificate, looked
 
 
-def _exact_rounds(problem: Problem, start: Index, held: int) -> tuple[Index, Certificate, int]:
+def _exact_rounds(
+    problem: Problem, start: Index, held: int, effort: int
+) -> tuple[Index, Certificate, int]:
     """Exact searches about one choice after the other, holding so many assignments, and the
-    certificate of the best."""
+    certificate of the best; no further one when the work reaches `effort`."""
     best, best_square = start, float(problem.judged(start[None])[0])
     seen: dict[tuple[int, ...], float] = {tuple(map(int, start)): best_square}
     used: set[tuple[int, ...]] = set()
     about, certificate, looked, patience = start, None, 0, PATIENCE
-    for _ in range(MOST_ROUNDS):
+    while True:
         used.add(tuple(map(int, about)))
         found = _certified(problem, about, held)
         looked += PAIRS_PER_ASSIGNMENT * found.looked
@@ -141,7 +142,7 @@ def _exact_rounds(problem: Problem, start: Index, held: int) -> tuple[Index, Cer
             best, best_square, certificate = np.array(leader), seen[leader], None
             patience = PATIENCE
         fresh = [k for k in seen if k not in used and seen[k] < np.inf]
-        if patience < 0 or not fresh:
+        if patience < 0 or not fresh or looked >= effort:
             break
         about = np.array(min(fresh, key=lambda k: (seen[k], k)))
     return best, certificate or _certified(problem, best, held), looked
