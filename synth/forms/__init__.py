@@ -14,7 +14,10 @@ from types import MappingProxyType
 from synth.errors import JobError
 from synth.forms.cascade import cascade
 from synth.forms.controllable import controllable
+from synth.forms.khn import khn
+from synth.forms.normal import normal
 from synth.forms.observable import observable
+from synth.forms.tow_thomas import tow_thomas
 from synth.graph import BlockGraph
 from synth.transfer import TransferFunction
 
@@ -50,6 +53,9 @@ FORMS: Mapping[str, Form] = MappingProxyType(
         "controllable": Form(build=controllable),
         "observable": Form(build=observable),
         "cascade": Form(build=cascade),
+        "tow_thomas": Form(build=tow_thomas),
+        "khn": Form(build=khn),
+        "normal": Form(build=normal, structural_zeros=False),
     }
 )
 

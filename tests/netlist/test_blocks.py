@@ -30,7 +30,7 @@ from tests.netlist.block_reader import (
 )
 
 ORDERS = (1, 2, 3, 5, 6, 8, 12)
-FORMS = ("controllable", "observable", "cascade")
+FORMS = ("controllable", "observable", "cascade", "tow_thomas", "khn", "normal")
 
 
 def target(kind: str, order: int) -> TransferFunction:

@@ -56,15 +56,16 @@ def realized(target: TransferFunction, form: str) -> BlockGraph:
 
 def error_of(graph: BlockGraph, target: TransferFunction, s: np.ndarray) -> np.ndarray:
     """|graph - H| relative to |H|, or where zeros come from sums that cancel relative to the
-    largest summand of the output, as rounding leaves it."""
+    largest summand of any adder as it arrives at the output, as rounding leaves it."""
     wanted = target.at(s)
     size = np.abs(wanted)
     if not FORMS[graph.form].structural_zeros:
         signals = {"in": np.ones_like(s), **graph.signals(s)}
-        output = graph.by_name[graph.output]
-        if not output.is_integrator:
-            parts = [np.abs(float(t.weight) * signals[t.source]) for t in output.terms]
-            size = np.maximum(size, np.max(parts, axis=0))
+        injections = graph.injections(s)
+        for adder in graph.adders:
+            for term in adder.terms:
+                part = float(term.weight) * signals[term.source] * injections[adder.name]
+                size = np.maximum(size, np.abs(part))
     size = np.where(size > 0, size, 1.0)
     return np.asarray(np.abs(graph.at(s) - wanted) / size)
 

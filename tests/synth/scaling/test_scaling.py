@@ -206,7 +206,7 @@ def test_the_refusal_of_all_forms_for_one_reason_says_it_once() -> None:
         choose_form(job_for(target, (1e-3, 1.0)), np.geomspace(1e-3, 1.0, 50))
     said = str(caught.value)
     assert said.count("would need resistors of") == 1
-    assert "controllable, observable, cascade: " in said
+    assert f"{', '.join(FORMS)}: " in said
     assert "allowed are 1 kohm to 1 Mohm and 100 pF to 1 uF" in said
 
 
