@@ -39,7 +39,7 @@ def _section(of: Biquad) -> tuple[list[Block], str]:
     summer += of.term(x1, -a1 / w, f"damping, {x1} into {h}")
     summer += of.term(x2, -a0 / (w * k), f"frequency, {x2} into {h}")
     blocks = [
-        Block(h, "adder", tuple(summer)),
+        Block(h, "adder", tuple(summer), both_signs=True),
         Block(x1, "integrator", tuple(of.term(h, w, f"frequency, {h} into {x1}"))),
     ]
     if a0 or of.b[0]:
@@ -48,4 +48,4 @@ def _section(of: Biquad) -> tuple[list[Block], str]:
         return blocks, taps[0][0]
     y = f"y{of.number}"
     total = [t for name, c, power in taps for t in of.term(name, c, f"b{power}, {name} to {y}")]
-    return [*blocks, Block(y, "adder", tuple(total))], y
+    return [*blocks, Block(y, "adder", tuple(total), both_signs=True)], y
