@@ -136,7 +136,8 @@ def current_shares(
     input_peak: float,
     load: float | None,
 ) -> list[Signomial]:
-    """Peak output current of each block over the op-amp's limit, an upper bound.
+    """Peak output current of each block over the op-amp's limit, an upper bound where all of its
+    readers have virtual grounds.
 
     The peak over every resistor that reads the block, its own feedback, and the load.
     """
