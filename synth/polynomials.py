@@ -16,6 +16,7 @@ __all__ = [
     "derivative",
     "divide",
     "greatest_common_divisor",
+    "inverse_modulo",
     "multiply",
     "product",
     "simple_roots",
@@ -91,6 +92,27 @@ def greatest_common_divisor(p: Polynomial, q: Polynomial) -> Polynomial:
     while b:
         a, b = b, _primitive(_pseudo_remainder(a, b))
     return tuple(Fraction(c, a[0]) for c in a)
+
+
+def inverse_modulo(p: Polynomial, modulus: Polynomial) -> Polynomial:
+    """The q of lower degree than `modulus` with p q = 1 modulo `modulus`, p coprime to it.
+
+    Extended Euclid with monic remainders, which keeps the rationals short.
+
+    >>> from fractions import Fraction as F
+    >>> inverse_modulo((F(1), F(2)), (F(1), F(0), F(1)))
+    (Fraction(-1, 5), Fraction(2, 5))
+    """
+    _, remainder = divide(p, modulus)
+    before, now = modulus, remainder
+    factor_before: Polynomial = ()
+    factor: Polynomial = (Fraction(1),)
+    while len(now) > 1:
+        quotient, rest = divide(before, now)
+        step = subtract(factor_before, multiply(quotient, factor))
+        before, factor_before = now, factor
+        now, factor = tuple(c / rest[0] for c in rest), tuple(c / rest[0] for c in step)
+    return tuple(c / now[0] for c in factor)
 
 
 def _primitive(p: Sequence[Fraction | int]) -> tuple[int, ...]:

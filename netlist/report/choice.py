@@ -32,6 +32,9 @@ WORTH_NAMING = 0.5
 # References of parts that were no choice are listed up to this many.
 MOST_NAMED = 4
 
+# What a choice is compared with.
+_OTHERS = "choice of values on offer that keeps the levels and impedances"
+
 _NOUNS = {"resistor": "all resistors", "capacitor": "all capacitors"}
 
 
@@ -54,23 +57,23 @@ def _standing(found: Certificate) -> str:
     reached, bound = percent(found.rms), percent(found.lower_bound)
     if found.proven and found.exhausted:
         return (
-            f"Proven best: its rms error is {reached}, and every other choice of values on offer "
-            "was tried or excluded by a bound."
+            f"Proven best: its rms error is {reached}, and every other {_OTHERS} was tried or "
+            "excluded by a bound."
         )
     if found.proven:
         return (
             f"Proven best to within {percent(PROVEN_RATIO, 1)}: its rms error is {reached}, and "
-            f"no choice of values on offer gets below {bound}."
+            f"no {_OTHERS} gets below {bound}."
         )
     if found.lower_bound * USEFUL_RATIO >= found.rms:
         above = percent(found.rms / found.lower_bound - 1, 2)
         return (
             f"At most {above} above the best any choice could be: its rms error is {reached}, "
-            f"and no choice of values on offer gets below {bound}."
+            f"and no {_OTHERS} gets below {bound}."
         )
     return (
-        f"Its rms error is {reached}; no choice of values on offer gets below {bound}. Whether "
-        "any lies between the two is not known."
+        f"Its rms error is {reached}; no {_OTHERS} gets below {bound}. Whether any lies between "
+        "the two is not known."
     )
 
 

@@ -7,15 +7,16 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from synth.choosing.certificate import Certificate, certify
+from synth.choosing.certificate import Certificate
 from synth.choosing.enumeration import best_of_all
 from synth.choosing.grid import ValueGrid
 from synth.choosing.model import Ceilings, Goal, LinearModel, compensation
 from synth.choosing.search import SearchOutcome, search_values
+from synth.choosing.settling import Problem, settle
 from synth.choosing.supply import Supply, check_supply
 from synth.circuit import Circuit
 from synth.job import Accept
-from synth.nodal import NodalProgram, compile_circuit
+from synth.nodal import compile_circuit
 
 __all__ = [
     "DEFAULT_EFFORT",
@@ -31,6 +32,9 @@ Index = NDArray[np.intp]
 
 # Pairs of steps the search evaluates: a second or two on one core.
 DEFAULT_EFFORT = 100_000_000
+
+# Share of the effort for choosing parts exactly, some at a time, after the search.
+SETTLING_SHARE = 0.6
 
 # The search leaves the impedance of each cell within this ratio of where the scaling put it,
 # either way: the response does not show it, but noise, offset and currents do.
@@ -107,84 +111,61 @@ def choose_values(
         The stock has fewer parts than the circuit needs.
     """
     check_supply(circuit.passives)
-    program = compile_circuit(circuit)
     goal = Goal(target, frequency_hz)
     if accept is not None:
         goal = Goal.within(target, frequency_hz, accept)
+    program = compile_circuit(circuit)
     logs = np.log([p.ideal for p in circuit.passives])
-    ideal = compile_circuit(with_ideal_op_amps(circuit))
-    ceilings = Ceilings.of(program, np.exp(logs), level_limits or {})
-
-    def searched(grid: ValueGrid, ceilings: Ceilings | None) -> SearchOutcome:
-        start = None
-        if known is not None:
-            start = grid.nearest(np.log([p.value for p in known.passives]))
-        supply = Supply.of(grid)
-        few = best_of_all(program, grid, goal, ceilings) if supply is None else None
-        return few or search_values(
-            program,
-            grid,
-            goal,
-            start_logs=logs,
-            ideal=ideal,
-            ceilings=ceilings,
-            supply=supply,
-            known=start,
-            seed=seed,
-            effort=effort,
-        )
-
     near, everything = ValueGrid(circuit.passives, _sizes(circuit)), ValueGrid(circuit.passives)
-    outcome = searched(near, ceilings)
-    chosen = near.values_at(outcome.index)
-    if ceilings is not None and not ceilings.keep(program, chosen[None])[0]:
+    problem = Problem(
+        program=program,
+        ideal=compile_circuit(with_ideal_op_amps(circuit)),
+        goal=goal,
+        grid=near,
+        ceilings=Ceilings.of(program, np.exp(logs), level_limits or {}),
+        supply=Supply.of(near),
+    )
+    start = None if known is None else np.log([p.value for p in known.passives])
+    outcome = _searched(problem, logs, start, seed, effort)
+    if not np.isfinite(problem.judged(outcome.index[None])[0]):
         # Nothing was found between ceilings and floors: the rails come first.
-        near, ceilings = everything, ceilings.without_floors()
-        outcome = searched(near, ceilings)
-        chosen = near.values_at(outcome.index)
-    chosen, certificate = _proven(chosen, (program, ideal), goal, (near, everything), ceilings)
+        problem = problem.eased(everything)
+        outcome = _searched(problem, logs, start, seed, effort)
+    best, certificate, more = settle(
+        problem,
+        outcome.index,
+        rng=np.random.default_rng(seed),
+        effort=int(SETTLING_SHARE * effort),
+    )
     return Choice(
-        circuit=with_ideals(_with(circuit, chosen), goal),
+        circuit=with_ideals(_with(circuit, problem.grid.values_at(best)), goal),
         nearest=_with(circuit, everything.values_at(everything.nearest(logs))),
         certificate=certificate,
-        looked=outcome.looked,
+        looked=outcome.looked + more,
     )
 
 
-def _proven(
-    chosen: Real,
-    programs: tuple[NodalProgram, NodalProgram],
-    goal: Goal,
-    grids: tuple[ValueGrid, ValueGrid],
-    ceilings: Ceilings | None,
-) -> tuple[Real, Certificate]:
-    """The chosen values, or better ones where the proof came upon them, and the proof.
-
-    `programs` are those of the circuit and of the same with ideal op-amps, `grids` that of the
-    search and that of everything there is.
-    """
-    (program, ideal), (near, everything) = programs, grids
-    certificate = _certified(program, ideal, everything, goal, chosen)
-    other = None if certificate.better is None else everything.values_at(certificate.better)
-    if other is None or not _may_replace(other, near, ceilings, program):
-        return chosen, certificate
-    # Every choice was looked at: take the best, where the whole circuit confirms it.
-    squares = goal.mean_squares(program, np.array([chosen, other]))
-    if squares[1] >= squares[0]:
-        return chosen, certificate
-    return other, _certified(program, ideal, everything, goal, other)
-
-
-def _may_replace(
-    values: Real, near: ValueGrid, ceilings: Ceilings | None, program: NodalProgram
-) -> bool:
-    """Whether values found outside the search are such as it might have taken."""
-    supply = Supply.of(near)
-    if not near.holds(values):
-        return False
-    if supply is not None and not supply.suffices(near.nearest(np.log(values))):
-        return False
-    return ceilings is None or bool(ceilings.keep(program, values[None])[0])
+def _searched(
+    problem: Problem, logs: Real, known: Real | None, seed: int, effort: int
+) -> SearchOutcome:
+    """The outcome of the search from the ideal values, `logs` their ln; `known` is that of a
+    choice to be improved on."""
+    if problem.supply is None:
+        few = best_of_all(problem.program, problem.grid, problem.goal, problem.ceilings)
+        if few is not None:
+            return few
+    return search_values(
+        problem.program,
+        problem.grid,
+        problem.goal,
+        start_logs=logs,
+        ideal=problem.ideal,
+        ceilings=problem.ceilings,
+        supply=problem.supply,
+        known=None if known is None else problem.grid.nearest(known),
+        seed=seed,
+        effort=effort,
+    )
 
 
 def _sizes(circuit: Circuit) -> dict[str, float]:
@@ -196,14 +177,6 @@ def _sizes(circuit: Circuit) -> dict[str, float]:
     refs += [r for c in circuit.cells if c.kind == "inverter" for r in c.inputs]
     parts = (circuit.by_ref[r] for r in refs)
     return {p.ref: SIZE_RANGE for p in parts if p.rule is not None and not p.rule.stock}
-
-
-def _certified(
-    program: NodalProgram, ideal: NodalProgram, grid: ValueGrid, goal: Goal, values: Real
-) -> Certificate:
-    """How good the choice is, in the model about itself."""
-    model = LinearModel.about(program, values, goal, jacobian=ideal)
-    return certify(grid, model, grid.nearest(np.log(values)))
 
 
 def with_ideal_op_amps(circuit: Circuit) -> Circuit:

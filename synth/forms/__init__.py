@@ -12,11 +12,13 @@ from dataclasses import dataclass
 from types import MappingProxyType
 
 from synth.errors import JobError
+from synth.forms.balanced import balanced
 from synth.forms.cascade import cascade
 from synth.forms.controllable import controllable
 from synth.forms.khn import khn
 from synth.forms.normal import normal
 from synth.forms.observable import observable
+from synth.forms.parallel import parallel
 from synth.forms.tow_thomas import tow_thomas
 from synth.graph import BlockGraph
 from synth.transfer import TransferFunction
@@ -56,6 +58,8 @@ FORMS: Mapping[str, Form] = MappingProxyType(
         "tow_thomas": Form(build=tow_thomas),
         "khn": Form(build=khn),
         "normal": Form(build=normal, structural_zeros=False),
+        "parallel": Form(build=parallel, structural_zeros=False),
+        "balanced": Form(build=balanced, exact=False, structural_zeros=False, everywhere=False),
     }
 )
 

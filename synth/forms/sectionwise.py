@@ -1,6 +1,6 @@
 """Cascades of sections of any kind, and what the kinds of sections share.
 
-The sections and their order are those of `synth.forms.cascade`; how a section of second order is
+The sections and their order are those of `synth.forms.pairing`; how a section of second order is
 built is each form's own.  One of first order is the short observable chain in all of them.  The
 gain of H(s) stands in the first section; scaling spreads it afterwards.
 """
@@ -13,8 +13,8 @@ from dataclasses import dataclass
 from fractions import Fraction
 
 from synth import polynomials
-from synth.forms.cascade import sections
 from synth.forms.observable import observable_section
+from synth.forms.pairing import sections
 from synth.graph import INPUT, Block, BlockGraph, Term
 from synth.transfer import TransferFunction
 
@@ -70,11 +70,12 @@ def rational_root(square: Fraction) -> Fraction:
 def in_cascade(
     form: str,
     target: TransferFunction,
-    section: Callable[[Biquad], tuple[list[Block], str]],
+    section: Callable[[Biquad], tuple[list[Block], str]] | None = None,
 ) -> BlockGraph:
     """The cascade of a proper H(s) whose sections of second order `section` builds.
 
-    `section` returns the blocks and the name of the one that is the section's output.
+    `section` returns the blocks and the name of the one that is the section's output; without it
+    every section is an observable chain.
     """
     blocks: list[Block] = []
     source, first = INPUT, 1
@@ -84,7 +85,7 @@ def in_cascade(
         numerator = polynomials.product([(gain,), *(z.coefficients for z in each.zeros)])
         a = tuple(reversed(denominator))
         b = (*reversed(numerator), *[Fraction(0)] * (len(a) - len(numerator)))
-        if len(a) == 3:
+        if section is not None and len(a) == 3:
             built, source = section(
                 Biquad(
                     b=(b[0], b[1], b[2]),

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -202,7 +203,7 @@ class _Problem:
                 slope = slope + 40 * over * gradient / value
         return total, slope
 
-    @property
+    @cached_property
     def _comfort_rows(self) -> tuple[Real, Real]:
         rows: list[Real] = []
         centres: list[float] = []

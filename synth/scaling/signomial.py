@@ -16,6 +16,10 @@ __all__ = ["Signomial"]
 
 Real = NDArray[np.float64]
 
+# A trial step this far out (in ln) is worse than any point of interest; beyond it the value
+# stands still instead of overflowing.
+LARGEST_EXPONENT = 300.0
+
 
 @dataclass(frozen=True, eq=False)
 class Signomial:
@@ -41,5 +45,5 @@ class Signomial:
 
     def __call__(self, v: Real) -> tuple[float, Real]:
         """Value and gradient, shape (V,), at `v`."""
-        parts = self.coefficients * np.exp(self.exponents @ v)
+        parts = self.coefficients * np.exp(np.minimum(self.exponents @ v, LARGEST_EXPONENT))
         return float(parts.sum()), parts @ self.exponents

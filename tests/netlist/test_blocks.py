@@ -6,6 +6,7 @@ import math
 import os
 import subprocess
 import sys
+from functools import cache
 from itertools import combinations
 
 import numpy as np
@@ -16,9 +17,10 @@ from netlist.blocks.buses import Link, buses
 from netlist.blocks.numbers import gain_text
 from netlist.blocks.order import ordered, sections
 from netlist.blocks.shapes import DOT_RADIUS, SUM_RADIUS
-from synth.forms import realize
+from synth.forms import FORMS, realize
 from synth.graph import Block, BlockGraph, Term
 from synth.transfer import Factor, TransferFunction
+from tests.forms import realized
 from tests.netlist.block_reader import (
     bounds,
     inside,
@@ -30,7 +32,6 @@ from tests.netlist.block_reader import (
 )
 
 ORDERS = (1, 2, 3, 5, 6, 8, 12)
-FORMS = ("controllable", "observable", "cascade", "tow_thomas", "khn", "normal")
 
 
 def target(kind: str, order: int) -> TransferFunction:
@@ -86,11 +87,16 @@ RANDOM = {
 }
 
 
+@cache
+def of_form(form: str, kind: str, order: int) -> BlockGraph:
+    return scaled(realized(target(kind, order), form))
+
+
 @pytest.fixture(params=[*GRAPHS, *RANDOM])
 def graph(request) -> BlockGraph:
     if request.param in GRAPHS:
         form, kind, order = GRAPHS[request.param]
-        return scaled(realize(target(kind, order), form))
+        return of_form(form, kind, order)
     return random_graph(*RANDOM[request.param])
 
 

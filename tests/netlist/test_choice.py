@@ -56,7 +56,7 @@ def plain(text: str) -> str:
         ({}, "At most 25 % above the best any choice could be", "Proven"),
         (
             {"lower_bound": 0.2e-3},
-            "no choice of values on offer gets below 0.0200 %. Whether any lies between",
+            "that keeps the levels and impedances gets below 0.0200 %. Whether any lies between",
             "At most",
         ),
         ({"lower_bound": 0.0}, "gets below 0 %", "At most"),

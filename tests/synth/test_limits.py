@@ -15,6 +15,7 @@ from synth.job import Job
 from synth.limits import drifts, swing_checks, swings
 from synth.nodal import compile_circuit
 from synth.transfer import Factor, TransferFunction
+from tests.forms import exists
 from tests.jobs import job_for
 from tests.strategies import butterworth
 
@@ -85,6 +86,8 @@ def test_only_integrators_without_feedback_at_dc_drift(form: str) -> None:
         zeros = [Factor.real(-0.2 * W0)] * times
         poles = [Factor.real(0)] * times + [Factor.pair(W0, 1.5)]
         target = TransferFunction.from_factors(W0**2, zeros, poles)
+        if not exists(form, target):
+            continue
         circuit = built(job_for(target, BAND, input_peak=1e-2), form)
         found = drifts(circuit)
         assert len(found) == times

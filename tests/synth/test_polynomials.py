@@ -10,7 +10,7 @@ from fractions import Fraction
 import numpy as np
 import pytest
 import sympy
-from hypothesis import given, settings
+from hypothesis import assume, given, settings
 from hypothesis import strategies as st
 
 from synth import polynomials
@@ -153,15 +153,18 @@ def test_a_root_at_the_origin_is_exact():
     assert polynomials.simple_roots(_from_roots(0, -3)) == [0, -3]
 
 
-def test_wilkinsons_polynomial_moves_as_published():
-    """J. H. Wilkinson: a19 changed by -2^-23 moves a pair to 16.7307 +- 2.8126j (from memory)."""
+@pytest.mark.parametrize("scale", [Fraction(1), Fraction(-1), Fraction(-6283), Fraction(-1, 50)])
+def test_wilkinsons_polynomial_moves_as_published(scale: Fraction):
+    """J. H. Wilkinson: a19 changed by -2^-23 moves a pair to 16.7307 +- 2.8126j (from memory);
+    as poles too, negated and at any frequency: the roots of p(s / scale)."""
     p = list(_from_roots(*range(1, 21)))
     p[1] -= Fraction(1, 2**23)
-    found = polynomials.simple_roots(tuple(p))
+    moved = tuple(c * scale**k for k, c in enumerate(p))
+    found = [z / float(scale) for z in polynomials.simple_roots(moved)]
     pair = min(found, key=lambda z: abs(z - (16.7307 + 2.8126j)))
     assert pair == pytest.approx(16.7307 + 2.8126j, abs=1e-4)
     # Independently, by sympy's own isolation of the real roots.
-    assert sum(not z.imag for z in found) == sympy.count_roots(_poly(tuple(p)))
+    assert sum(not z.imag for z in found) == sympy.count_roots(_poly(moved))
 
 
 def test_roots_agree_with_numpy_where_numpy_is_accurate():
@@ -190,3 +193,17 @@ def test_the_arithmetic_loads_no_mpmath_until_roots_are_sought():
         [sys.executable, "-c", script], capture_output=True, text=True, check=True
     )
     assert shown.stdout.split() == ["False", "False"]
+
+
+@settings(deadline=None, derandomize=True, max_examples=60)
+@given(coefficients, nonzero)
+def test_an_inverse_modulo_a_polynomial_is_that_of_sympy(
+    p: polynomials.Polynomial, modulus: polynomials.Polynomial
+) -> None:
+    """Of lower degree than the modulus, and p times it leaves the remainder one."""
+    assume(len(modulus) > 1 and len(polynomials.greatest_common_divisor(p, modulus)) == 1)
+    found = polynomials.inverse_modulo(p, modulus)
+    assert len(found) < len(modulus)
+    _, rest = polynomials.divide(polynomials.multiply(found, p), modulus)
+    assert rest == (1,)
+    assert _poly(found) == sympy.invert(_poly(p), _poly(modulus))

@@ -78,9 +78,9 @@ def test_no_choice_is_below_the_bound_and_the_proof_finds_the_best(
     assert found.lower_bound <= best * (1 + 1e-9)
     assert found.exhausted
     if found.better is not None:
-        reached = float(np.sqrt(model.mean_square(grid.logs_at(found.better))))
+        reached = float(np.sqrt(model.mean_square(grid.logs_at(found.better[0]))))
         assert reached == pytest.approx(best, rel=1e-9)
-        again = certify(grid, model, found.better)
+        again = certify(grid, model, found.better[0])
         assert again.proven
         assert again.gap == pytest.approx(0.0, abs=1e-9)
     else:
@@ -145,7 +145,7 @@ def test_integer_programme_of_the_linear_model_has_the_same_optimum() -> None:
     circuit, target = small(1, "observable", "E12")
     grid, model, start = models(circuit, target)
     found = certify(grid, model, start)
-    best = start if found.better is None else found.better
+    best = start if found.better is None else found.better[0]
     counts = [int(n) for n in grid.counts]
     total = sum(counts)
     offsets = np.concatenate([[0], np.cumsum(counts)])

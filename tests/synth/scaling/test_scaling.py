@@ -192,6 +192,15 @@ def test_signomial_gradient_is_the_slope_of_its_value() -> None:
         assert gradient[k] == pytest.approx(slope, rel=1e-6, abs=1e-9)
 
 
+def test_a_signomial_far_out_is_large_and_finite() -> None:
+    """Where the exponentials would overflow the value is still a number above all others."""
+    f = Signomial(np.array([1.0, 1.0]), np.array([[1.0], [-1.0]]))
+    value, gradient = f(np.array([1e4]))
+    assert np.isfinite(value)
+    assert value > 1e100
+    assert gradient[0] > 0
+
+
 def test_a_job_that_fits_nowhere_is_refused_with_the_numbers() -> None:
     """A range of two values leaves no room, whatever the levels."""
     narrow = PartRule(kind="resistor", series="E96", tolerance=0.01, smallest=9.9e3, largest=10.3e3)
