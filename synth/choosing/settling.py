@@ -99,7 +99,8 @@ def settle(
     pairs of steps of the search.
 
     `effort` bounds the work, that of choosing all parts and that of choosing some at a time
-    each, and how much is held to choose all.  A start that does not keep the limits is only improved on by choices that do.
+    each, and how much is held to choose all.  A start that does not keep the limits is only
+    improved on by choices that do.
     """
     held = max(1, min(LARGEST_FRONTIER, effort // EFFORT_PER_ASSIGNMENT))
     best, certificate, looked = _exact_rounds(problem, start, held, effort)

@@ -15,10 +15,13 @@ from synth.errors import JobError
 from synth.forms.balanced import balanced
 from synth.forms.cascade import cascade
 from synth.forms.controllable import controllable
+from synth.forms.khn import khn
 from synth.forms.leapfrog import leapfrog
+from synth.forms.normal import normal
 from synth.forms.observable import observable
 from synth.forms.parallel import parallel
 from synth.forms.schwarz import schwarz
+from synth.forms.tow_thomas import tow_thomas
 from synth.graph import BlockGraph
 from synth.transfer import TransferFunction
 
@@ -58,6 +61,9 @@ FORMS: Mapping[str, Form] = MappingProxyType(
         "controllable": Form(build=controllable),
         "observable": Form(build=observable),
         "cascade": Form(build=cascade),
+        "tow_thomas": Form(build=tow_thomas),
+        "khn": Form(build=khn),
+        "normal": Form(build=normal, structural_zeros=False),
         "parallel": Form(build=parallel, structural_zeros=False),
         "balanced": Form(build=balanced, exact=False, structural_zeros=False, everywhere=False),
         "schwarz": Form(build=schwarz, summed_zeros=True, everywhere=False),

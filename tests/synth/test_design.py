@@ -40,6 +40,10 @@ def test_a_design_holds_together() -> None:
     assert [c.form for c in found.candidates] == ["controllable"]
     names = block_names(found.circuit)
     built = graph_of(found.circuit)
+    # A form with more weights than H(s) and the levels decide leaves some to the choice of values.
+    terms = sum(len(b.terms) for b in found.graph.blocks)
+    decided = len(found.graph.blocks) - 1 + job.target.order + 1
+    rtol = 0.05 if terms == decided else 0.15
     for cell in found.circuit.cells:
         if cell.kind == "inverter":
             continue
@@ -48,7 +52,7 @@ def test_a_design_holds_together() -> None:
         inverters = {names[c.output] for c in found.circuit.cells if c.kind == "inverter"}
         if any(t.source in inverters for t in direct):
             continue
-        np.testing.assert_allclose(sorted(abs(float(t.weight)) for t in direct), weights, rtol=0.05)
+        np.testing.assert_allclose(sorted(abs(float(t.weight)) for t in direct), weights, rtol=rtol)
 
 
 def test_same_seed_same_design_and_another_seed_other_boards() -> None:

@@ -171,3 +171,16 @@ def test_a_fixed_value_must_be_in_the_stock() -> None:
         replace(board, resistors=rule, fixed=(("R1", 1e4), ("R2", 12e3)))
     with pytest.raises(JobError, match="got R1, R2 of 10 kohm, expected at most the 1"):
         replace(board, resistors=rule, fixed=(("R1", 1e4), ("R2", 1e4)))
+
+
+def test_every_part_of_a_cell_at_both_inputs_can_be_fixed_but_what_balances_them() -> None:
+    """That one follows from the others; the message says so."""
+    target = butterworth(2, 1e3)
+    circuit = parts_of("khn", target)
+    cell = next(c for c in circuit.cells if c.kind == "difference")
+    for ref in (*cell.inputs, cell.feedback):
+        value = float(f"{circuit.by_ref[ref].ideal * 1.3:.2g}")
+        check_ideal("khn", {ref: value}, 0.0, target)
+        check_ideal("khn", {ref: value}, 200.0, target)
+    with pytest.raises(JobError, match=rf"board.fixed.{cell.balance}: .* balances the two inputs"):
+        sketch_form(fixing(target, "khn", fixed={cell.balance: 1e4}), "khn", FREQUENCY)

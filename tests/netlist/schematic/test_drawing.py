@@ -30,6 +30,11 @@ BOARDS = {
     "all pairs": boards.paired(
         boards.cascade(3), R1="series", R2="parallel", R4="parallel", R5="series"
     ),
+    "state variable": boards.state_variable(1),
+    "state variable, three sections": boards.state_variable(3),
+    "state variable, pairs": boards.paired(
+        boards.state_variable(2), R1="series", R2="parallel", R3="series"
+    ),
     "first order, all pairs": boards.paired(boards.first_order(), R1="series", R2="parallel"),
 }
 
