@@ -126,7 +126,7 @@ def _assess(job: Job, form: str, *, frequency_hz: Real, seed: int) -> Assessed:
                 op_amps=None,
                 spread_db=None,
                 spread_deg=None,
-                reason=str(error),
+                reason=str(error).removeprefix("board.form: "),
             ),
             unreadable=error if isinstance(error, JobError) else None,
         )

@@ -16,7 +16,7 @@ from netlist.records import all_checks, verdict_of
 from netlist.report.changes import change_errors, change_rows
 from netlist.report.found import check_rows, form_rows
 from netlist.report.page import LOW_YIELD
-from netlist.report.wording import percent, spelled, stated
+from netlist.report.wording import percent, stated
 from synth.results import Candidate, Design
 
 if TYPE_CHECKING:
@@ -38,7 +38,7 @@ def summary(design: Design, verification: Verification, *, folder: Path) -> str:
     facts = (
         ("verdict", _coloured(outcome.upper(), _COLOURS[outcome])
          + f", {percent(run.share, 4)} of boards within limits"),
-        ("form", spelled(design.form) + (", output inverted" if design.inverted else "")),
+        ("form", design.form + (", output inverted" if design.inverted else "")),
         ("op-amps", f"{len(circuit.amplifiers)} in {_counted(len(chips), 'package')}"),
         ("parts", f"{_counted(kinds.count('resistor'), 'resistor')}, "
          f"{_counted(kinds.count('capacitor'), 'capacitor')}"),
@@ -87,7 +87,7 @@ def forms_table(chosen: str, candidates: Iterable[Candidate]) -> str:
     shown = [[str(r[key]) for key in FORM_COLUMNS] for r in rows if r["possible"]]
     width = max(len(str(r["form"])) for r in rows)
     lines = _table(tuple(FORM_COLUMNS.values()), shown)
-    lines += ["", f"  {spelled(chosen).ljust(width)}  chosen"]
+    lines += ["", f"  {chosen.ljust(width)}  chosen"]
     for row in rows:
         if not row["chosen"]:
             words = "" if row["possible"] else "not possible: "

@@ -70,7 +70,7 @@ def form_rows(candidates: Iterable[Candidate], chosen: str) -> list[Row]:
     """The forms considered; figures where values were chosen for more than the one taken."""
     return [
         {
-            "form": spelled(c.form),
+            "form": c.form,
             "chosen": c.form == chosen,
             "possible": c.possible,
             "op_amps": NONE if c.op_amps is None else str(c.op_amps),

@@ -49,8 +49,8 @@ FACTOR_STEPS = 300
 # An imaginary part this small, relative to the root, is that of a real root found in doubles.
 REAL = 1e-5
 NOT_FOUND = (
-    "leapfrog: the reflection of the ladder was not found; expected zeros of "
-    "|H|max^2 - |H|^2 that are told apart"
+    "board.form: the reflection of the leapfrog's ladder was not found; expected zeros of "
+    "|H|max^2 - |H|^2 that are told apart, or another form"
 )
 
 
@@ -85,11 +85,15 @@ def leapfrog(target: TransferFunction) -> BlockGraph:
     zeros = len(target.numerator) - 1
     if zeros:
         have = "a zero" if zeros == 1 else f"{zeros} zeros"
-        raise RealizationError(f"leapfrog: needs an all-pole low-pass H(s); this one has {have}")
+        raise RealizationError(
+            f"board.form: the leapfrog needs an all-pole low-pass H(s), got one with {have}; "
+            "expected another form"
+        )
     if np.any(target.poles.real >= 0):
         where = "in the right half-plane" if np.any(target.poles.real > 0) else "on the axis"
         raise RealizationError(
-            f"leapfrog: needs poles in the left half-plane; this H(s) has poles {where}"
+            f"board.form: the leapfrog needs poles in the left half-plane, got poles {where}; "
+            "expected another form"
         )
     ladder = matched_ladder(target.denominator)
     n = target.order
@@ -349,7 +353,10 @@ def _continued_fraction(d: Sequence[Mp], f: Sequence[Mp]) -> tuple[list[Mp], Mp]
     for k in range(n):
         g = upper[-1] / lower[-1]
         if g <= 0:
-            raise RealizationError("leapfrog: an element of the ladder is not positive")
+            raise RealizationError(
+                "board.form: an element of the leapfrog's ladder is not positive; "
+                "expected another form"
+            )
         elements.append(g)
         rest = [upper[0], *(a - g * b for a, b in zip(upper[1:], lower, strict=True))]
         # Its two highest powers have cancelled, or of the last one the highest.

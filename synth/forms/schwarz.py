@@ -146,8 +146,8 @@ def _quotient(before: _Row, row: _Row, power_before: int, power: int) -> Fractio
     """The coefficient that removes one end of `before`."""
     if not before[power_before] or not row[power]:
         raise RealizationError(
-            "schwarz: poles in the right half-plane make a quotient of the ladder zero; "
-            "expected poles in the left half-plane or on the imaginary axis"
+            "board.form: poles in the right half-plane make a quotient of the schwarz ladder "
+            "zero; expected poles in the left half-plane or on the imaginary axis, or another form"
         )
     return before[power_before] / row[power]
 
@@ -260,7 +260,10 @@ class _Wiring:
             store = Term(f"w{j + 1}", _ONE, f"w{j + 1} into x{j}")
             return (store, *self._after(j + 1, name, _ONE))
         if not self.branches[j - 2].coupled:
-            raise RealizationError("schwarz: the ladder has a coupling of zero to divide by")
+            raise RealizationError(
+                "board.form: the schwarz ladder has a coupling of zero to divide by; "
+                "expected another form"
+            )
         store = Term(f"w{j - 1}", -_ONE, f"w{j - 1} into x{j}")
         return (*self._before(j - 1, name), store)
 

@@ -41,6 +41,9 @@ COMFORT_WEIGHT = 0.3
 ERROR_RATIO = 1.1
 ERROR_SHARE = 0.02
 
+# A mean square error as good as none.
+NO_ERROR = 1e-40
+
 # Largest share of the output current the parts around an output may take.
 CURRENT_SHARE = 0.7
 
@@ -171,7 +174,7 @@ class _Problem:
 
         def room(v: Real) -> tuple[float, Real]:
             value, gradient = self.error(v)
-            value = min(max(value, 1e-300), 1e300)
+            value = min(max(value, NO_ERROR), 1e300)
             return math.log(allowed) - math.log(value), -gradient / value
 
         second = _minimise(self._of_noise, limits, first, (*self.rooms, room))
@@ -180,7 +183,7 @@ class _Problem:
 
     def _of_error(self, v: Real) -> tuple[float, Real]:
         value, gradient = self.error(v)
-        value = max(value, 1e-300)
+        value = max(value, NO_ERROR)
         comfort, slope = self._comfort(v)
         return math.log(value) + 0.01 * comfort, gradient / value + 0.01 * slope
 

@@ -214,9 +214,9 @@ def test_alternate_states_are_inverted(order: int, inverters: int) -> None:
 @pytest.mark.parametrize(
     ("numerator", "denominator", "message"),
     [
-        ([1, 0], [1, 1, 1], "needs an all-pole low-pass H.s.; this one has a zero"),
-        ([1, 0, 4], [1, 3, 3, 1], "this one has 2 zeros"),
-        ([1], [1, 1, 0], "poles in the left half-plane; this H.s. has poles on the axis"),
+        ([1, 0], [1, 1, 1], "needs an all-pole low-pass H.s., got one with a zero"),
+        ([1, 0, 4], [1, 3, 3, 1], "got one with 2 zeros"),
+        ([1], [1, 1, 0], "poles in the left half-plane, got poles on the axis"),
         ([1], [1, 0, 1], "poles on the axis"),
         ([1], [1, -1, 1], "poles in the right half-plane"),
     ],
@@ -224,5 +224,5 @@ def test_alternate_states_are_inverted(order: int, inverters: int) -> None:
 def test_anything_else_is_refused_with_the_reason(
     numerator: list[int], denominator: list[int], message: str
 ) -> None:
-    with pytest.raises(RealizationError, match=rf"^leapfrog: .*{message}"):
+    with pytest.raises(RealizationError, match=rf"^board.form: the leapfrog .*{message}"):
         realize(TransferFunction.from_polynomials(numerator, denominator), "leapfrog")
