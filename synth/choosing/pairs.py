@@ -23,7 +23,15 @@ from synth.circuit import Cell, Circuit, Passive
 from synth.nodal import compile_circuit
 from synth.parts import PartRule, StockItem
 
-__all__ = ["Pair", "Pairing", "choose_with_pairs", "pair_values", "with_pairs"]
+__all__ = [
+    "BINDING_SHARE",
+    "WORTHWHILE",
+    "Pair",
+    "Pairing",
+    "choose_with_pairs",
+    "pair_values",
+    "with_pairs",
+]
 
 Real = NDArray[np.float64]
 Index = NDArray[np.intp]
