@@ -87,7 +87,7 @@ def repick(earlier: Earlier, request: Request, *, progress: Progress | None = No
     say("rebuilding", 0, 1)
     sketch, candidates = choose_form(job, frequency)
     drawn = paired(sketch.circuit, earlier.parts) if job.board.pairs else sketch.circuit
-    circuit = rebuilt(drawn, earlier.parts)
+    circuit = rebuilt(drawn, earlier.parts, name=earlier.name)
     wanted = _checked_request(circuit, job, earlier, request)
     say("values", 0, 1)
     work = _Repicking(_at(sketch, circuit, frequency), job, earlier, wanted, frequency)

@@ -72,10 +72,13 @@ def test_what_is_no_pair_of_the_circuit_is_refused() -> None:
     parts = {p.ref: p for p in records}
     first, second = parts[f"{ref}A"], parts[f"{ref}B"]
     for message, found in (
-        (f"{ref}A is not in", [p for p in parts.values() if p is not second]),
-        ("R77A is not in", [*parts.values(), replace(first, ref="R77A")]),
-        (f"{ref}A is not in", [*parts.values(), replace(first, ref=ref)]),
-        (f"{ref}A: got nets a b", [replace(p, nets=("a", "b")) for p in (first, second)]),
+        (f"{ref}A.ref: got '{ref}A', expected", [p for p in parts.values() if p is not second]),
+        ("R77A.ref: got 'R77A', expected", [*parts.values(), replace(first, ref="R77A")]),
+        (f"{ref}A.ref: got '{ref}A', expected", [*parts.values(), replace(first, ref=ref)]),
+        (
+            f"{ref}A.nets: {ref}A has 'a b', expected",
+            [replace(p, nets=("a", "b")) for p in (first, second)],
+        ),
     ):
         given = found if len(found) > 2 else [*{**parts, **{p.ref: p for p in found}}.values()]
         with pytest.raises(JobError, match=message):

@@ -254,12 +254,22 @@ def test_a_record_that_is_not_the_circuit_of_the_job_is_refused() -> None:
             rebuilt(found.circuit, records)
 
     extra = replace(parts["R1"], ref="R77")
-    refused("R77 is not in the circuit", *parts.values(), extra)
-    refused("R1 is missing", *(p for p in parts.values() if p.ref != "R1"))
+    refused("^R77.ref: got 'R77', expected one of R1, ", *parts.values(), extra)
+    lost = "^components: R1 is missing, which the job's circuit has$"
+    refused(lost, *(p for p in parts.values() if p.ref != "R1"))
     for message, record in (
-        ("R1: got kind capacitor", replace(parts["R1"], kind="capacitor")),
-        ("R1: got nets a b", replace(parts["R1"], nets=("a", "b"))),
-        ("R1: got the value 1234", replace(parts["R1"], value=1234.0)),
+        (
+            "^R1.kind: R1 has 'capacitor', expected 'resistor' as in the job$",
+            replace(parts["R1"], kind="capacitor"),
+        ),
+        (
+            r"^components\[3\].nets: R1 has 'a b', expected 'in x2_s' as in the job$",
+            replace(parts["R1"], nets=("a", "b"), place="components[3]"),
+        ),
+        (
+            "^R1.value: R1 has 1.234 kohm, expected one of E24 from ",
+            replace(parts["R1"], value=1234.0),
+        ),
     ):
         refused(message, *{**parts, "R1": record}.values())
     assert rebuilt(found.circuit, tuple(parts.values())).by_ref["R1"].value == parts["R1"].value
