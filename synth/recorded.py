@@ -14,7 +14,7 @@ from synth.job import Job
 from synth.quantities import show, what_came
 from synth.shortages import SAME_VALUE, Shortage
 
-__all__ = ["Earlier", "RecordedPart", "paired", "rebuilt"]
+__all__ = ["Earlier", "RecordedPart", "paired", "rebuilt", "recorded_pairs"]
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -47,7 +47,12 @@ class Earlier:
 
 
 def paired(circuit: Circuit, parts: Sequence[RecordedPart]) -> Circuit:
-    """`circuit` with two resistors for one wherever `parts` have them.
+    """`circuit` with two resistors for one wherever `parts` have them."""
+    return with_pairs(circuit, recorded_pairs(circuit, parts))
+
+
+def recorded_pairs(circuit: Circuit, parts: Sequence[RecordedPart]) -> tuple[Pair, ...]:
+    """The pairs of resistors that `parts` have for one of `circuit`.
 
     R4A and R4B stand for an input resistor R4 that is not recorded itself: in parallel where
     both have the same nets, in series otherwise.  Whether everything fits is for `rebuilt` to
@@ -63,7 +68,7 @@ def paired(circuit: Circuit, parts: Sequence[RecordedPart]) -> Circuit:
         if part.ref in inputs and not part.fixed:
             how = "parallel" if first.nets == second.nets else "series"
             pairs.append(Pair(ref=part.ref, values=(first.value, second.value), how=how))
-    return with_pairs(circuit, tuple(pairs))
+    return tuple(pairs)
 
 
 def rebuilt(circuit: Circuit, parts: Sequence[RecordedPart], *, name: str = "") -> Circuit:
