@@ -76,7 +76,7 @@ def test_the_proof_says_which_parts_were_no_choice() -> None:
         "whatever values all other parts that were free had"
         in binding_lines(found, MADE.circuit)[0]
     )
-    many = replace(found, held=("R1", "R2", "R3", "C1", "C2"))
+    many = replace(found, held=("R91", "R92", "R93", "C91", "C92"))
     assert "choices that leave 5 parts as they are." in plain(proof_line(many, MADE.circuit))
     but_two = tuple(p.ref for p in MADE.circuit.bought if p.ref not in ("R1", "C2"))
     few = plain(proof_line(replace(found, held=but_two), MADE.circuit))
@@ -170,6 +170,7 @@ def test_the_record_holds_the_same_for_programs() -> None:
         "gap": pytest.approx(0.2),
         "proven": False,
         "exhausted": False,
+        "held": [],
         "binding": [{"refs": ["R2", "C1"], "rms_error": 1.6e-3}],
         "effort": 1,
     }
