@@ -61,14 +61,15 @@ def _held(found: Certificate, circuit: Circuit) -> str:
 
 def _standing(found: Certificate) -> str:
     reached, bound = percent(found.rms), percent(found.lower_bound)
+    proven = "Proven best in the linear model"
     if found.proven and found.exhausted:
         return (
-            f"Proven best: its rms error is {reached}, and every other {_OTHERS} was tried or "
+            f"{proven}: its rms error is {reached}, and every other {_OTHERS} was tried or "
             "excluded by a bound."
         )
     if found.proven:
         return (
-            f"Proven best to within {percent(PROVEN_RATIO, 1)}: its rms error is {reached}, and "
+            f"{proven} to within {percent(PROVEN_RATIO, 1)}: its rms error is {reached}, and "
             f"no {_OTHERS} gets below {bound}."
         )
     if found.lower_bound * USEFUL_RATIO >= found.rms:

@@ -92,7 +92,7 @@ def _figures(candidate: Candidate) -> Row:
         return dict.fromkeys((*names, *more), NONE)
     assert candidate.op_amps is not None
     return {
-        "packages": f"{-(-candidate.op_amps // 4)} quad, {-(-candidate.op_amps // 2)} dual",
+        "packages": f"{-(-candidate.op_amps // 4)} quad or {-(-candidate.op_amps // 2)} dual",
         "resistors": str(found.resistors),
         "capacitors": str(found.capacitors),
         "ratio": number(found.value_ratio),

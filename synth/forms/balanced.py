@@ -211,14 +211,14 @@ def _graph(system: StateSpace, w0: float) -> BlockGraph:
     names = [f"x{k + 1}" for k in range(system.order)]
     blocks = []
     for i, name in enumerate(names, start=1):
-        terms = [Term(INPUT, float(w0 * system.B[i - 1]), f"B{i}, input into {name}")]
+        terms = [Term(INPUT, float(w0 * system.B[i - 1]), f"B({i}), input into {name}")]
         terms += [
-            Term(source, float(w0 * a), f"A{i},{j}, {source} into {name}")
+            Term(source, float(w0 * a), f"A({i},{j}), {source} into {name}")
             for j, (source, a) in enumerate(zip(names, system.A[i - 1], strict=True), start=1)
         ]
         blocks.append(Block(name, "integrator", tuple(t for t in terms if t.weight)))
     output = [
-        Term(name, float(c), f"C{j}, {name} to output")
+        Term(name, float(c), f"C({j}), {name} to output")
         for j, (name, c) in enumerate(zip(names, system.C[0], strict=True), start=1)
     ]
     output.append(Term(INPUT, float(system.D[0]), "D, input to output"))

@@ -45,12 +45,12 @@ def plain(text: str) -> str:
     [
         (
             {"proven": True, "exhausted": True, "lower_bound": 2e-3},
-            "Proven best: its rms error is 0.200 %, and every other choice",
+            "Proven best in the linear model: its rms error is 0.200 %, and every other choice",
             "within",
         ),
         (
             {"proven": True, "exhausted": False, "lower_bound": 1.999e-3},
-            "Proven best to within 0.1 %",
+            "Proven best in the linear model to within 0.1 %",
             "every other choice",
         ),
         ({}, "At most 25 % above the best any choice could be", "Proven"),
