@@ -22,10 +22,11 @@ __all__ = ["gain_bandwidth_needed"]
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
 
-# How far from the figure of the job it is looked for, as a factor either way, and in how many
+# How far below and above the figure of the job it is looked for, as factors, and in how many
 # steps; twice more between the two neighbours of the limit, which leaves a tenth of a percent.
-FARTHEST = 1e4
-STEPS = 41
+SLOWEST = 1e-8
+FASTEST = 1e4
+STEPS = 61
 REFINEMENTS = 2
 
 
@@ -62,9 +63,9 @@ def gain_bandwidth_needed(
         return np.asarray(magnitude & phase)
 
     if kept(np.ones(1))[0]:
-        factors = np.geomspace(1.0, 1 / FARTHEST, STEPS)
+        factors = np.geomspace(1.0, SLOWEST, STEPS)
     else:
-        factors = np.geomspace(FARTHEST, 1.0, STEPS)
+        factors = np.geomspace(FASTEST, 1.0, STEPS)
         held = np.flatnonzero(kept(factors))
         if held.size == 0:
             return None
