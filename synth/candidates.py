@@ -21,7 +21,7 @@ from synth.peaks import SignalPeaks, signal_peaks
 from synth.polarity import Polarity, choose_polarity
 from synth.results import Candidate
 from synth.scaling import Scaled, scale
-from synth.tolerance import predicted_spread
+from synth.tolerance import check_networks, predicted_spread
 
 __all__ = ["Sketch", "choose_form", "sketch_form"]
 
@@ -78,7 +78,7 @@ def sketch_form(job: Job, form: str, frequency_hz: Real) -> Sketch:
     RealizationError
         The form does not exist for this target or does not fit the parts.
     JobError
-        The job fixes a part this form does not have.
+        The job fixes or matches a part this form does not have.
     """
     graph = realize(job.target, form)
     polarity = choose_polarity(graph, inverted=job.board.inverted)
@@ -86,6 +86,7 @@ def sketch_form(job: Job, form: str, frequency_hz: Real) -> Sketch:
     # Levels see the response at a part of the frequencies, the spread needs every peak of it.
     few = frequency_hz[:: max(1, frequency_hz.size // 200)]
     scaled, circuit = _scaled(graph, polarity, job, peaks, few)
+    check_networks(circuit, job.board.population)
     tolerances = np.array([p.tolerance for p in circuit.passives])
     sensitivities = compile_circuit(circuit).sensitivities(frequency_hz)
     spread = predicted_spread(sensitivities, tolerances)

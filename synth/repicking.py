@@ -330,6 +330,7 @@ class _Repicking:
             accept=self.job.accept,
             boards=self.earlier.boards,
             seed=self.earlier.seed,
+            population=self.job.board.population,
         )
 
     def _share_of_limits(self, circuit: Circuit) -> float:
