@@ -45,7 +45,7 @@ def driver_chart(
         No drivers.
     """
     from matplotlib.figure import Figure
-    from matplotlib.ticker import MaxNLocator, PercentFormatter
+    from matplotlib.ticker import FuncFormatter, MaxNLocator
 
     if not drivers:
         raise ValueError("got no drivers, expected at least one")
@@ -59,21 +59,22 @@ def driver_chart(
         axes.barh(range(len(shown)), shares, height=0.62, color=style.FOUND, linewidth=0)
         for k, share in enumerate(shares):
             remark = remarks[k] if k < len(remarks) else ""
-            axes.text(
-                1.02,
-                k,
-                f"{share:.2g} %" + (f"  {remark}" if remark else ""),
-                transform=axes.get_yaxis_transform(),
-                va="center",
-                size=8,
-                color=style.INK,
-            )
+            for place, text in ((1.02, f"{share:.2g} %"), (1.16, remark)):
+                axes.text(
+                    place,
+                    k,
+                    text,
+                    transform=axes.get_yaxis_transform(),
+                    va="center",
+                    size=8,
+                    color=style.INK,
+                )
         axes.set_ylim(len(shown) - 0.5, -0.5)
         axes.set_xlim(0, 1.05 * max(shares))
         axes.set_yticks(range(len(shown)), [driver_name(d) for d in shown])
         axes.tick_params(axis="y", length=0)
         axes.xaxis.set_major_locator(MaxNLocator(5))
-        axes.xaxis.set_major_formatter(PercentFormatter(decimals=None))
+        axes.xaxis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:g} %"))
         axes.set_xlabel("share of the variance of the error")
         axes.grid(visible=True, axis="x")
         return style.svg_text(figure, prefix)

@@ -16,8 +16,8 @@ __all__ = ["assumptions", "driver_remarks", "failure_lines", "left_out", "popula
 # References of a network are listed up to this many.
 MOST_NAMED = 6
 
-# How much of a coefficient's description stands beside its bar.
-LONGEST_REMARK = 38
+# How much of what a part sets stands beside its bar, in characters.
+LONGEST_REMARK = 36
 
 
 def assumptions(population: Population) -> list[str]:
@@ -84,10 +84,9 @@ def driver_remarks(drivers: Iterable[Driver], circuit: Circuit) -> list[str]:
             remarks.append("gain-bandwidth")
             continue
         part = circuit.by_ref[driver.refs[0]]
-        text = f"{stated(part.tolerance, '%')}, {part.sets}" if part.sets else ""
-        text = text or stated(part.tolerance, "%")
-        short = len(text) <= LONGEST_REMARK
-        remarks.append(text if short else text[: LONGEST_REMARK - 1].rstrip(" ,") + "…")
+        short = len(part.sets) <= LONGEST_REMARK
+        words = part.sets if short else part.sets[: LONGEST_REMARK - 1].rstrip(" ,") + "…"
+        remarks.append(f"±{stated(part.tolerance, '%')}{', ' if words else ''}{words}")
     return remarks
 
 
@@ -167,7 +166,7 @@ def _warmth(population: Population) -> list[str]:
 
 def _first(found: LimitFailures, failing: int) -> str:
     """Where boards fail at one limit."""
-    share = "All" if found.boards == failing else f"{found.boards}"
+    share = "All" if found.boards == failing else f"{found.boards} of them"
     text = f"{share} by the {found.quantity} first"
     low, middle, high = (
         quantity(f, "Hz") for f in (found.low_hz, found.frequency_hz, found.high_hz)
