@@ -10,6 +10,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from synth.boardruns import ToleranceResult
 from synth.choosing.certificate import Certificate
 from synth.circuit import Circuit
 from synth.evidence import Check, ResponseError
@@ -23,11 +24,9 @@ __all__ = [
     "Candidate",
     "Design",
     "Drift",
-    "Driver",
     "ErrorBudget",
     "ErrorFigures",
-    "Failures",
-    "LimitFailures",
+    "FormFigures",
     "LoopResult",
     "NoiseResult",
     "OpAmpAllowance",
@@ -95,109 +94,6 @@ class NoiseResult:
 
 
 @dataclass(frozen=True, kw_only=True)
-class LimitFailures:
-    """The boards that fail at one limit first.
-
-    Parameters
-    ----------
-    quantity
-        ``"magnitude"`` or ``"phase"``.
-    boards
-        How many boards miss this limit by more, in shares of the limit, than the other.
-    frequency_hz, low_hz, high_hz
-        Where their error is the largest: median, 5th and 95th percentile over these boards [Hz];
-        None without any.
-    """
-
-    quantity: str
-    boards: int
-    frequency_hz: float | None = None
-    low_hz: float | None = None
-    high_hz: float | None = None
-
-
-@dataclass(frozen=True, kw_only=True)
-class Failures:
-    """The boards of a run that miss a limit.
-
-    Were the deviations of a board to grow from nothing in proportion, the limit it reaches first,
-    to first order, is the one of which its error is the largest share; `first` counts by these,
-    the most frequent first.  `both` counts boards beyond both limits.
-    """
-
-    boards: int
-    both: int
-    first: tuple[LimitFailures, ...]
-
-
-@dataclass(frozen=True, kw_only=True)
-class Driver:
-    """A part whose deviation drives the error of the boards.
-
-    Parameters
-    ----------
-    refs
-        One resistor or capacitor, or the op-amps of one package.
-    kind
-        ``"resistor"``, ``"capacitor"`` or ``"op_amp"``.
-    share
-        Squared correlation, over all boards, of its deviation with the error where boards fail: a
-        ratio, the share of the variance that a straight line in this part explains.  Those of
-        independent parts add up to at most about 1.
-    """
-
-    refs: tuple[str, ...]
-    kind: str
-    share: float
-
-
-@dataclass(frozen=True, kw_only=True)
-class ToleranceResult:
-    """A run of boards with parts drawn within their tolerance.
-
-    Parameters
-    ----------
-    boards, passed
-        How many were drawn, and how many meet both limits over the band.
-    low, high
-        Clopper-Pearson interval of the yield at `confidence`, ratios.
-    frequency_hz
-        Shape (F,) [Hz].
-    magnitude_5, magnitude_95, phase_5, phase_95
-        Percentiles over the boards of the signed error at each frequency, shape (F,)
-        [dB], [deg].
-    error_95_db
-        95th percentile over the boards of the largest absolute dB error over the band.
-    seed
-        Of the random generator.
-    failures
-        Which limit fails first, and where; None where that was not counted.
-    drivers
-        The parts that drive the error, by falling share; none with too few boards to tell.
-    """
-
-    boards: int
-    passed: int
-    low: float
-    high: float
-    confidence: float
-    frequency_hz: Real
-    magnitude_5: Real
-    magnitude_95: Real
-    phase_5: Real
-    phase_95: Real
-    error_95_db: float
-    seed: int
-    failures: Failures | None = None
-    drivers: tuple[Driver, ...] = ()
-
-    @property
-    def share(self) -> float:
-        """Share of the boards that pass, a ratio."""
-        return self.passed / self.boards
-
-
-@dataclass(frozen=True, kw_only=True)
 class ErrorFigures:
     """A response error in three numbers: rms of |ln(H/T)|, a ratio, and the largest [dB],
     [deg] over the band."""
@@ -205,6 +101,11 @@ class ErrorFigures:
     rms: float
     largest_db: float
     largest_deg: float
+
+    @classmethod
+    def of(cls, error: ResponseError) -> ErrorFigures:
+        """From the error over frequency."""
+        return cls(rms=error.rms, largest_db=error.largest_db, largest_deg=error.largest_deg)
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -305,12 +206,63 @@ class ErrorBudget:
 
 
 @dataclass(frozen=True, kw_only=True)
+class FormFigures:
+    """What a form comes to with standard values.
+
+    Parameters
+    ----------
+    resistors, capacitors
+        How many are bought.
+    value_ratio
+        Largest over smallest value of a kind, resistors or capacitors, the larger of the two.
+    nominal
+        Error of the nominal board.
+    boards, passed, low, high
+        The run of boards, as in `ToleranceResult`.
+    error_95_db
+        95th percentile over boards of the largest dB error over the band.
+    noise_rms
+        At the output over the band [V].
+    dynamic_range_db
+        Largest sine at the output before any op-amp output meets its limit, rms, over the noise.
+    peak, hottest
+        Largest peak among the op-amp outputs at the stated input [V], and which op-amp has it.
+    gain_bandwidth_needed
+        Smallest with which the nominal board keeps its limits [Hz]; None where none does.
+    missed
+        What the nominal board misses, in words; empty where it keeps every limit.
+    """
+
+    resistors: int
+    capacitors: int
+    value_ratio: float
+    nominal: ErrorFigures
+    boards: int
+    passed: int
+    low: float
+    high: float
+    error_95_db: float
+    noise_rms: float
+    dynamic_range_db: float
+    peak: float
+    hottest: str
+    gain_bandwidth_needed: float | None
+    missed: tuple[str, ...] = ()
+
+    @property
+    def share(self) -> float:
+        """Share of the boards that pass, a ratio."""
+        return self.passed / self.boards
+
+
+@dataclass(frozen=True, kw_only=True)
 class Candidate:
     """A form that was considered.
 
     `spread_db` and `spread_deg` are the predicted spreads of magnitude and phase from part
     tolerance (one standard deviation, largest over the band) [dB], [deg]; None with a
-    `reason` where the form could not be built.
+    `reason` where the form could not be built.  `figures` is there where its values were
+    chosen; `verdict` is then ``"pass"`` or ``"fail"``, and `reason` says why it was not taken.
     """
 
     form: str
@@ -319,6 +271,8 @@ class Candidate:
     spread_db: float | None
     spread_deg: float | None
     reason: str = ""
+    figures: FormFigures | None = None
+    verdict: str = ""
 
 
 @dataclass(frozen=True, kw_only=True)

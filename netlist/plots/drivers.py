@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 
 from netlist.plots import style
-from synth.results import Driver
+from synth.boardruns import Driver
 
 __all__ = ["MOST_DRIVERS", "driver_chart", "driver_name"]
 

@@ -6,10 +6,11 @@ from __future__ import annotations
 from collections.abc import Iterable
 
 from netlist.report.wording import listed, quantity, stated
+from synth.boardruns import Driver, LimitFailures, ToleranceResult
 from synth.circuit import Circuit
 from synth.job import Job
 from synth.population import Network, PartSpread, Population
-from synth.results import Design, Driver, LimitFailures, ToleranceResult
+from synth.results import Design
 
 __all__ = ["assumptions", "driver_remarks", "failure_lines", "left_out", "population_rows", "shown"]
 

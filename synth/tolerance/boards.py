@@ -18,13 +18,13 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from synth.boardruns import Driver, ToleranceResult
 from synth.circuit import Circuit
 from synth.errors import CircuitError, JobError
 from synth.evidence import DB_PER_NEPER
 from synth.job import Accept
 from synth.nodal import NodalProgram
 from synth.population import Population
-from synth.results import Driver, ToleranceResult
 from synth.tolerance.drawing import BoardSource, Drawn
 from synth.tolerance.failures import DriverTally, FailureTally, Place
 from synth.tolerance.interval import clopper_pearson
@@ -37,7 +37,7 @@ Complex = NDArray[np.complex128]
 BLOCK = 500
 """Boards run at once."""
 
-STORE = 170_000_000
+STORE = 140_000_000
 """Bytes that hold errors until their percentiles are taken."""
 
 

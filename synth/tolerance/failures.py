@@ -15,9 +15,9 @@ from typing import ClassVar
 import numpy as np
 from numpy.typing import NDArray
 
+from synth.boardruns import Driver, Failures, LimitFailures
 from synth.circuit import Circuit
 from synth.job import Accept
-from synth.results import Driver, Failures, LimitFailures
 from synth.tolerance.drawing import Drawn, packages_of
 
 __all__ = ["DriverTally", "FailureTally", "Place"]

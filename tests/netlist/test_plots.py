@@ -15,8 +15,9 @@ import pytest
 from netlist.plots import bode_plot, driver_chart, noise_plot, step_plot, style, swing_chart
 from netlist.plots.bode import magnitude_range, unwrapped_deg
 from netlist.svg import escape, prefix_ids
+from synth.boardruns import Driver, ToleranceResult
 from synth.job import Accept
-from synth.results import Driver, Swing, ToleranceResult
+from synth.results import Swing
 from synth.transfer import Factor, TransferFunction
 
 W = 2 * math.pi
