@@ -135,9 +135,9 @@ def coverage() -> Iterator[Row]:
     """How often the printed interval of the yield holds the yield of a million other boards."""
     plain, lots = Population(), PartSpread(distribution="normal", lot=0.5)
     for name, population, limit in (
-        ("uniform", plain, 0.8),
-        ("uniform, few fail", plain, 1.2),
-        ("normal, capacitors of one lot", Population(capacitors=lots), 0.8),
+        ("uniform", plain, 0.5),
+        ("uniform, few fail", plain, 0.8),
+        ("normal, capacitors of one lot", Population(capacitors=lots), 0.6),
     ):
         truth = _run(population, limit, boards=REFERENCE_BOARDS, seed=COVERAGE_RUNS).share
         runs = [

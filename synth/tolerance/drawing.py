@@ -67,13 +67,18 @@ class BoardSource:
     circuit
         Nominal values and tolerances.
     population
-        Where parts come from; references it names must be in the circuit (`check_networks`).
+        Where parts come from.  A ratio tolerance above the tolerance of the parts (a stock may
+        hold tighter ones than were thought of) says nothing beyond that.
     seed
         Of all boards.
+
+    Raises
+    ------
+    JobError
+        A network of a part that the circuit does not have.
     """
 
     def __init__(self, circuit: Circuit, population: Population, seed: int) -> None:
-        check_networks(circuit, population)
         self._population = population
         self._nominal = np.array([p.value for p in circuit.passives], dtype=float)
         self._bought = np.array([p.on_board for p in circuit.passives], dtype=bool)
@@ -83,9 +88,10 @@ class BoardSource:
         self._normal = np.array([s.distribution == "normal" for s in spreads], dtype=bool)
         self._coefficient = np.array([s.temperature_coefficient for s in spreads], dtype=float)
         # Places among the bought parts: of each network, and of each lot.
+        index = {p.ref: k for k, p in enumerate(parts)}
         self._networks = [
-            (np.array([k for k, p in enumerate(parts) if _is_in(network, p, circuit)]), network)
-            for network in population.networks
+            (np.array([index[p.ref] for p in members], dtype=np.intp), network)
+            for _, network, members in _matched_parts(circuit, population)
         ]
         matched = {int(k) for places, _ in self._networks for k in places}
         self._lots = _lots(parts, spreads, matched)
@@ -121,8 +127,9 @@ class BoardSource:
         if self._networks:
             common = self._numbers("networks", own.shape[0], len(self._networks))
             for (places, network), number in zip(self._networks, common.T, strict=True):
-                h = network.half_tolerance
-                w = (self._tolerance[places].min() - h) / (1 + h)
+                tightest = self._tolerance[places].min()
+                h = min(network.half_tolerance, tightest)
+                w = (tightest - h) / (1 + h)
                 together = _shaped(number[:, None], self._normal[places[:1]])
                 deviation[:, places] = (1 + w * together) * (1 + h * shaped[:, places]) - 1
         return deviation
@@ -184,8 +191,24 @@ def check_networks(circuit: Circuit, population: Population) -> None:
     JobError
         A reference the circuit does not have, or a ratio tolerance above that of the parts.
     """
+    for key, network, parts in _matched_parts(circuit, population):
+        worst = min(parts, key=lambda p: p.tolerance)
+        if network.tolerance > worst.tolerance * (1 + 1e-9):
+            raise JobError(
+                f"got {show(network.tolerance, '%')} between parts, expected at most the "
+                f"{show(worst.tolerance, '%')} of {worst.ref} itself",
+                key=f"{key}.tolerance",
+            )
+
+
+def _matched_parts(
+    circuit: Circuit, population: Population
+) -> list[tuple[str, Network, list[Passive]]]:
+    """Key, network and parts of each network, or the error with the references there are."""
+    out = []
     for number, network in enumerate(population.networks, start=1):
         key = f"board.networks[{number}]"
+        parts: list[Passive] = []
         for ref in network.refs:
             found = [p for p in circuit.bought if _belongs(p.ref, ref, circuit)]
             if not found:
@@ -194,13 +217,9 @@ def check_networks(circuit: Circuit, population: Population) -> None:
                     f"{circuit.references_like(ref)}",
                     key=f"{key}.refs",
                 )
-            worst = min(p.tolerance for p in found)
-            if network.tolerance > worst * (1 + 1e-9):
-                raise JobError(
-                    f"got {show(network.tolerance, '%')} between parts, expected at most the "
-                    f"{show(worst, '%')} of {ref} itself",
-                    key=f"{key}.tolerance",
-                )
+            parts += found
+        out.append((key, network, parts))
+    return out
 
 
 def _shaped(own: Real, normal: NDArray[np.bool_]) -> Real:
@@ -221,10 +240,6 @@ def _lots(
         if spread.lot and k not in matched:
             lots.setdefault((part.kind, part.value, part.tolerance), []).append(k)
     return [np.array(places, dtype=np.intp) for places in lots.values()]
-
-
-def _is_in(network: Network, part: Passive, circuit: Circuit) -> bool:
-    return any(_belongs(part.ref, ref, circuit) for ref in network.refs)
 
 
 def _belongs(ref: str, stated: str, circuit: Circuit) -> bool:

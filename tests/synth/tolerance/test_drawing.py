@@ -18,7 +18,7 @@ from synth.circuit import Circuit
 from synth.errors import JobError
 from synth.nodal import compile_circuit
 from synth.population import Network, PartSpread, Population
-from synth.tolerance import BoardSource
+from synth.tolerance import BoardSource, check_networks
 from synth.tolerance.drawing import packages_of, within_tolerance
 from tests.synth.nodal.boards import amplifier, capacitor, chain, op_amp, resistor
 
@@ -277,7 +277,17 @@ def test_a_network_stands_for_both_resistors_of_a_pair():
 )
 def test_a_network_that_does_not_fit_the_circuit_is_refused(network, message):
     with pytest.raises(JobError, match=message):
-        BoardSource(ladder(), Population(networks=(network,)), 1)
+        check_networks(ladder(), Population(networks=(network,)))
+
+
+def test_a_part_tighter_than_its_network_keeps_its_tolerance():
+    """As a stock may have it: known only once values are chosen."""
+    network = Network(refs=("R1", "R2"), tolerance=0.05)
+    found = deviations(Population(networks=(network,)), boards=2000)
+    assert np.abs(found["R1"]).max() <= 0.01 + 1e-12
+    assert abs(correlation(found["R1"], found["R2"])) < 0.1
+    with pytest.raises(JobError, match="got R9"):
+        BoardSource(ladder(), Population(networks=(Network(refs=("R9", "R8"), tolerance=0),)), 1)
 
 
 @pytest.mark.parametrize(
