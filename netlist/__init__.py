@@ -5,7 +5,7 @@ A script does what ``polewright design`` does in four calls::
     from netlist import design, read_job, verify, write_pack
 
     job = read_job("servo.toml")
-    board = design(job, boards=1000, seed=1)
+    board = design(job, boards=10_000, seed=1)
     proof = verify(board)
     write_pack("servo", board, proof)
 

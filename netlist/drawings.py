@@ -31,6 +31,7 @@ class Drawings:
     noise: str = ""
     step: str = ""
     swings: str = ""
+    drivers: str = ""
 
     def by_name(self) -> dict[str, str]:
         """The drawings by name, in the order of the attributes."""
@@ -41,6 +42,7 @@ class Drawings:
             "noise": self.noise,
             "step": self.step,
             "swings": self.swings,
+            "drivers": self.drivers,
         }
 
 
@@ -66,6 +68,7 @@ def draw_all(design: Design, verification: Verification) -> Drawings:
         ),
         step=_step(design, verification),
         swings=swing_chart(design.swings) if design.swings else "",
+        drivers=_drivers(design),
     )
 
 
@@ -101,6 +104,14 @@ def _bode(design: Design, verification: Verification, title: str) -> str:
         title=title,
         predicted=target * ratio,
     )
+
+
+def _drivers(design: Design) -> str:
+    from netlist.plots import driver_chart
+    from netlist.report.boards import driver_remarks
+
+    found = design.tolerance.drivers
+    return driver_chart(found, remarks=driver_remarks(found, design.circuit)) if found else ""
 
 
 def _step(design: Design, verification: Verification) -> str:

@@ -16,6 +16,7 @@ from functools import partial
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+from netlist.jobpopulation import purchase_keys, read_population
 from netlist.jobvalues import read_fixed, unknown_key
 from netlist.mistakes import Mistakes
 from netlist.namedfiles import NamedFiles
@@ -142,15 +143,27 @@ def _checked(document: Mapping[str, Any], mistakes: Mistakes) -> JobTable | None
     except ValidationError as invalid:
         keys = dict(keys_of(JobTable))
         for error in invalid.errors(include_url=False):
-            path = tuple(str(part) for part in error["loc"])
+            path = _path(error["loc"])
             mistakes.add(path, _problem(path, error, keys))
         return None
+
+
+def _path(places: tuple[int | str, ...]) -> tuple[str, ...]:
+    """The key path of a finding; a table of an array bears its number, counted from 1."""
+    path: list[str] = []
+    for place in places:
+        if isinstance(place, int):
+            path[-1] += f"[{place + 1}]"
+        else:
+            path.append(place)
+    return tuple(path)
 
 
 def _problem(
     path: tuple[str, ...], error: ErrorDetails, keys: Mapping[tuple[str, ...], str]
 ) -> str:
     """What to say of one finding of the schema."""
+    path = tuple(part.partition("[")[0] for part in path)
     if error["type"] == "missing":
         return f"is missing, expected {keys[path]}"
     if error["type"] == "extra_forbidden":
@@ -158,7 +171,8 @@ def _problem(
         return unknown_key(path[-1], siblings, elsewhere=[".".join(key) for key in keys])
     if isinstance(known := error.get("ctx", {}).get("error"), JobError):
         return known.problem
-    return f"got {what_came(error['input'])}, expected a table [{'.'.join(path)}]"
+    name = f"[[{'.'.join(path)}]]" if path == ("board", "networks") else f"[{'.'.join(path)}]"
+    return f"got {what_came(error['input'])}, expected a table {name}"
 
 
 def _board(table: BoardTable, mistakes: Mistakes, files: NamedFiles) -> Board | None:
@@ -167,17 +181,18 @@ def _board(table: BoardTable, mistakes: Mistakes, files: NamedFiles) -> Board | 
     held: Mapping[str, tuple[StockItem, ...]] = stock or {}
     resistors = mistakes.attempt(
         "board.resistors",
-        lambda: _rule(DEFAULT_RESISTORS, table.resistors.given(), held),
+        lambda: _rule(DEFAULT_RESISTORS, purchase_keys(table.resistors), held),
     )
     capacitors = mistakes.attempt(
         "board.capacitors",
-        lambda: _rule(DEFAULT_CAPACITORS, table.capacitors.given(), held),
+        lambda: _rule(DEFAULT_CAPACITORS, purchase_keys(table.capacitors), held),
     )
     fixed = [
         mistakes.attempt(f"board.fixed.{ref}", partial(read_fixed, ref, value))
         for ref, value in table.fixed.items()
     ]
-    op_amp = mistakes.attempt("board.op_amp", lambda: _op_amp(table.op_amp.given()))
+    op_amp = mistakes.attempt("board.op_amp", lambda: _op_amp(purchase_keys(table.op_amp)))
+    population = read_population(table, mistakes)
     plain = ("supply", "form", "inverted", "share_values", "pairs")
     rest = {k: v for k, v in table.given().items() if k in plain}
     if "form" in rest:
@@ -186,6 +201,8 @@ def _board(table: BoardTable, mistakes: Mistakes, files: NamedFiles) -> Board | 
         mistakes.attempt("board.form", lambda: check_form_name(rest["form"]))
     if resistors is None or capacitors is None or op_amp is None or stock is None:
         return None
+    if population is None:
+        return None
     return mistakes.attempt(
         "board",
         lambda: Board(
@@ -193,6 +210,7 @@ def _board(table: BoardTable, mistakes: Mistakes, files: NamedFiles) -> Board | 
             resistors=resistors,
             capacitors=capacitors,
             fixed=tuple(pair for pair in fixed if pair),
+            population=population,
             **rest,
         ),
     )

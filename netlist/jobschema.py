@@ -23,6 +23,7 @@ __all__ = [
     "BoardTable",
     "JobTable",
     "LoopTable",
+    "NetworkTable",
     "OpAmpTable",
     "SignalTable",
     "Table",
@@ -45,6 +46,9 @@ VoltPerSecond = Annotated[float | None, PlainValidator(read_quantity("V/s"))]
 VoltNoise = Annotated[float | None, PlainValidator(read_quantity("V/rtHz"))]
 AmpereNoise = Annotated[float | None, PlainValidator(read_quantity("A/rtHz"))]
 Ratio = Annotated[float | None, PlainValidator(read_quantity("ratio"))]
+PerKelvin = Annotated[float | None, PlainValidator(read_quantity("ppm/K"))]
+Temperatures = Annotated[tuple[float, float] | None, PlainValidator(jobvalues.read_temperatures)]
+References = Annotated[tuple[str, ...], PlainValidator(jobvalues.read_references)]
 Band = Annotated[tuple[float, float], PlainValidator(jobvalues.read_band)]
 Rails = Annotated[tuple[float, float] | None, PlainValidator(jobvalues.read_rails)]
 Coefficients = Annotated[tuple[Fraction, ...], PlainValidator(jobvalues.read_coefficients)]
@@ -125,6 +129,9 @@ class ResistorTable(Table):
     tolerance: Share = None
     smallest: Ohm = None
     largest: Ohm = None
+    distribution: Text = None
+    lot: Share = None
+    temperature_coefficient: PerKelvin = None
 
 
 class CapacitorTable(Table):
@@ -134,6 +141,9 @@ class CapacitorTable(Table):
     tolerance: Share = None
     smallest: Farad = None
     largest: Farad = None
+    distribution: Text = None
+    lot: Share = None
+    temperature_coefficient: PerKelvin = None
 
 
 class OpAmpTable(Table):
@@ -141,6 +151,7 @@ class OpAmpTable(Table):
 
     kind: Text = None
     gain_bandwidth: Hertz = None
+    gain_bandwidth_spread: Share = None
     slew_rate: VoltPerSecond = None
     open_loop_gain: Ratio = None
     offset: Volt = None
@@ -150,6 +161,16 @@ class OpAmpTable(Table):
     swing_headroom: Volt = None
     output_current: Ampere = None
     supply_current: Ampere = None
+
+
+class NetworkTable(Table):
+    """Parts that are matched."""
+
+    refs: References = Field(description="a list of references such as ['R3', 'R4']")
+    tolerance: Annotated[float, PlainValidator(read_quantity("%"))] = Field(
+        description="the tolerance of the ratio of any two of the parts, such as '0.1 %'"
+    )
+    tracking: PerKelvin = None
 
 
 class BoardTable(Table):
@@ -167,6 +188,8 @@ class BoardTable(Table):
     resistors: ResistorTable = ResistorTable()
     capacitors: CapacitorTable = CapacitorTable()
     op_amp: OpAmpTable = OpAmpTable()
+    temperature: Temperatures = None
+    networks: list[NetworkTable] = Field(default_factory=list)
 
 
 class AcceptTable(Table):

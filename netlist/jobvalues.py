@@ -29,9 +29,11 @@ __all__ = [
     "read_part_value",
     "read_quantity",
     "read_rails",
+    "read_references",
     "read_roots",
     "read_switch",
     "read_table",
+    "read_temperatures",
     "read_text",
     "unknown_key",
 ]
@@ -101,6 +103,22 @@ def read_band(value: object) -> tuple[float, float]:
         )
     low, high = (parse(v, "Hz") for v in value)
     return low, high
+
+
+def read_temperatures(value: object) -> tuple[float, float]:
+    """The lowest and the highest temperature [deg C]."""
+    if not isinstance(value, list) or len(value) != 2:
+        raise JobError(
+            f"got {what_came(value)}, expected the lowest and the highest temperature "
+            "such as ['0 degC', '60 degC']"
+        )
+    low, high = (parse(v, "degC", signed=True) for v in value)
+    return low, high
+
+
+def read_references(value: object) -> tuple[str, ...]:
+    """References of parts; that they make sense together is checked by `synth.population`."""
+    return _entries(value, read_text, "references such as ['R3', 'R4']")
 
 
 def read_gain(value: object) -> Fraction:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+from collections import Counter
 from collections.abc import Callable
 from typing import NoReturn, TypeVar
 
@@ -38,7 +39,8 @@ class Mistakes:
         """Note that the key at `path` is wrong."""
         key = ".".join(p if _BARE.fullmatch(p) else what_came(p) for p in path)
         plain = tuple(p.partition("[")[0] for p in path)
-        known = (self._lines.get(plain[:n]) for n in range(len(plain), 0, -1))
+        near = [at[:n] for n in range(len(path), 0, -1) for at in (path, plain)]
+        known = (self._lines.get(at) for at in near)
         line = next((n for n in known if n), None)
         place = f"{self.name}:{line}" if line else self.name
         self.found.append((key, f"{place}: {key}: {problem}"))
@@ -71,16 +73,22 @@ class Mistakes:
 def lines_of_keys(text: str) -> dict[tuple[str, ...], int]:
     """The line, counted from 1, on which each table and key of a TOML text is first named.
 
-    Keys inside inline tables are left out; the key that holds the table is there.
+    Keys inside inline tables are left out; the key that holds the table is there.  The tables of
+    an array bear their number, ``networks[2]``, counted from 1.
 
     >>> lines_of_keys("title = 'x'\\n[board.op_amp]\\nkind = 'precision'")
     {('title',): 1, ('board',): 2, ('board', 'op_amp'): 2, ('board', 'op_amp', 'kind'): 3}
     """
     lines: dict[tuple[str, ...], int] = {}
     table: tuple[str, ...] = ()
+    counts: Counter[tuple[str, ...]] = Counter()
     for number, line in enumerate(text.split("\n"), start=1):
         if header := _HEADER.fullmatch(line.rstrip("\r")):
             table = path = _parts(header[1])
+            if line.lstrip().startswith("[["):
+                counts[path] += 1
+                lines.setdefault(path, number)
+                table = path = (*path[:-1], f"{path[-1]}[{counts[path]}]")
         elif assignment := _ASSIGNMENT.match(line):
             path = table + _parts(assignment[1])
         else:

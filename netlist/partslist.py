@@ -23,6 +23,7 @@ from collections.abc import Iterable, Iterator
 from dataclasses import dataclass
 
 from synth.circuit import Amplifier, Circuit, Passive
+from synth.parts import OP_AMPS_PER_PACKAGE
 from synth.quantities import marking
 
 __all__ = ["Package", "PartLine", "dielectric", "packages", "parts_list", "rated_voltage"]
@@ -107,9 +108,9 @@ def packages(amplifiers: Iterable[Amplifier], *, taken: Iterable[str] = ()) -> t
     names = _free("IC", {*refs, *taken})
     spares = _free("U", {*refs, *taken})
     out: list[Package] = []
-    for start in range(0, len(refs), 4):
-        held = tuple(refs[start : start + 4])
-        size = 2 if len(held) <= 2 else 4
+    for start in range(0, len(refs), OP_AMPS_PER_PACKAGE):
+        held = tuple(refs[start : start + OP_AMPS_PER_PACKAGE])
+        size = 2 if len(held) <= 2 else OP_AMPS_PER_PACKAGE
         idle = tuple(next(spares) for _ in range(size - len(held)))
         out.append(Package(ref=next(names), op_amps=held, spares=idle))
     return tuple(out)

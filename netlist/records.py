@@ -21,7 +21,7 @@ from dataclasses import asdict
 from typing import TYPE_CHECKING, TypeAlias
 
 from synth.evidence import Check, ResponseError, verdict
-from synth.results import Candidate, Design, ErrorFigures
+from synth.results import Candidate, Design, ErrorFigures, ToleranceResult
 
 if TYPE_CHECKING:
     from netlist.verification import Verification
@@ -219,6 +219,22 @@ def _yield(design: Design) -> dict[str, object]:
         "confidence": run.confidence,
         "error_95_db": run.error_95_db,
         "seed": run.seed,
+        **_failures(run),
+        "drivers": [asdict(d) for d in run.drivers],
+    }
+
+
+def _failures(run: ToleranceResult) -> dict[str, object]:
+    """Which limit the boards that fail reach first, and where."""
+    found = run.failures
+    if found is None:
+        return {}
+    return {
+        "failures": {
+            "boards": found.boards,
+            "both": found.both,
+            "first": [asdict(f) for f in found.first],
+        }
     }
 
 

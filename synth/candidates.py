@@ -23,7 +23,7 @@ from synth.polarity import Polarity, choose_polarity
 from synth.results import Candidate
 from synth.scaling import Scaled, scale
 from synth.splitting import added_stages, split_graphs
-from synth.tolerance import predicted_spread
+from synth.tolerance import check_networks, predicted_spread
 
 __all__ = ["Sketch", "refused", "sketch_form"]
 
@@ -89,12 +89,13 @@ def sketch_form(job: Job, form: str, frequency_hz: Real) -> Sketch:
     RealizationError
         The form does not exist for this target or does not fit the parts.
     JobError
-        The job fixes a part this form does not have.
+        The job fixes or matches a part this form does not have.
     """
     # Levels see the response at a part of the frequencies, the spread needs every peak of it.
     few = frequency_hz[:: max(1, frequency_hz.size // 200)]
     fitted = _fitted(realize(job.target, form), job, few)
     circuit = fitted.circuit
+    check_networks(circuit, job.board.population)
     tolerances = np.array([p.tolerance for p in circuit.passives])
     sensitivities = compile_circuit(circuit).sensitivities(frequency_hz)
     spread = predicted_spread(sensitivities, tolerances)

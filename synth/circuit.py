@@ -266,6 +266,13 @@ class Circuit:
                 return cell
         return None
 
+    def references_like(self, ref: str) -> str:
+        """Which references of the kind of `ref` there are, in words: ``"R1 to R9"``."""
+        there = [p.ref for p in self.bought if p.ref[0] == ref[0]]
+        if len(there) > 1:
+            return f"{there[0]} to {there[-1]}"
+        return there[0] if there else f"no {ref[0]} at all"
+
     def branch(self, cell: Cell, ref: str) -> Branch:
         """The input resistor `ref` of a cell with what is in series with it."""
         part = self.by_ref[ref]

@@ -43,7 +43,7 @@ Progress = Callable[[str, int, int], None]
 # 50 times a stray of 2 pF.
 SMALL_CAPACITOR = 100e-12
 
-DEFAULT_BOARDS = 1000
+DEFAULT_BOARDS = 10_000
 DEFAULT_SEED = 1
 
 
@@ -162,6 +162,7 @@ def judged_design(
         accept=job.accept,
         boards=boards,
         seed=seed,
+        population=job.board.population,
         progress=lambda done, total: progress("boards", done, total),
     )
     progress("limits", 0, 1)

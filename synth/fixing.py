@@ -163,12 +163,8 @@ def _cell_of(circuit: Circuit, ref: str) -> Cell:
     cell = circuit.cell_of(ref)
     if cell is not None:
         return cell
-    there = [p.ref for p in circuit.bought if p.ref[0] == ref[0]]
-    if len(there) > 1:
-        known = f"{there[0]} to {there[-1]}"
-    else:
-        known = there[0] if there else f"no {ref[0]} at all"
     raise JobError(
-        f"got a reference that does not exist in this form, expected {known}",
+        f"got a reference that does not exist in this form, expected "
+        f"{circuit.references_like(ref)}",
         key=f"board.fixed.{ref}",
     )

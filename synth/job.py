@@ -13,6 +13,7 @@ from dataclasses import dataclass, field
 
 from synth.errors import JobError
 from synth.parts import OpAmp, PartRule
+from synth.population import Population
 from synth.preferred import nearest
 from synth.quantities import show
 from synth.transfer import TransferFunction
@@ -91,6 +92,8 @@ class Board:
         Whether fewer distinct values are worth a slightly larger error.
     pairs
         Whether two resistors may stand for one where one cannot reach the limit.
+    population
+        From what population the parts of the boards come.
     """
 
     op_amp: OpAmp
@@ -102,6 +105,7 @@ class Board:
     fixed: tuple[tuple[str, float], ...] = ()
     share_values: bool = False
     pairs: bool = False
+    population: Population = field(default_factory=Population)
 
     def __post_init__(self) -> None:
         low, high = self.supply

@@ -16,7 +16,10 @@ from synth.errors import JobError
 from synth.preferred import decade, nearest, series_values
 from synth.quantities import show
 
-__all__ = ["OpAmp", "PartRule", "StockItem"]
+__all__ = ["OP_AMPS_PER_PACKAGE", "OpAmp", "PartRule", "StockItem"]
+
+OP_AMPS_PER_PACKAGE = 4
+"""Of the largest package; those of a board fill packages in order of their references."""
 
 
 @dataclass(frozen=True, kw_only=True)

@@ -8,8 +8,8 @@ Conventions
 - ``M`` is mega and ``m`` is milli, always.  ``meg``, ``Meg`` and ``MEG`` are mega too, since
   they can mean nothing else; ``K`` is kilo.  Only prefixes in use with a unit are read with it:
   a capacitance knows f to m, a resistance m to G.
-- A plain number is in the SI unit (a rate in V/s, a percentage as a ratio), a level in dB and
-  an angle in degrees.
+- A plain number is in the SI unit (a rate in V/s, a percentage as a ratio, a temperature
+  coefficient in 1/K), a level in dB, an angle in degrees, a temperature in degrees Celsius.
 - The micro sign, the Greek mu, ``Ω``, ``°``, ``√Hz`` and the minus sign U+2212 are read as
   ``u``, ``ohm``, ``deg``, ``rtHz`` and ``-``.
 - Values are computed in rationals, so ``"10.2 kohm"`` is the double 10200.0 exactly.
@@ -77,6 +77,11 @@ _KINDS: Mapping[str, _Quantity] = {
     "%": _Quantity(
         "a percentage such as '1 %' or a plain ratio such as 0.01", {"%": Fraction(1, 100)}
     ),
+    "ppm/K": _Quantity(
+        "a temperature coefficient such as '50 ppm/K'",
+        dict.fromkeys(("ppm/K", "ppm/degC"), Fraction(1, 10**6)),
+    ),
+    "degC": _Quantity("a temperature such as '25 degC'", _plain("degC")),
     "dB": _Quantity("a level such as '0.5 dB'", _plain("dB")),
     "deg": _Quantity("an angle such as '3 deg'", _plain("deg")),
     "V/s": _RATE,
@@ -181,7 +186,7 @@ def show(value: float, unit: str, digits: int = 4) -> str:
     name = "" if unit == "ratio" else f" {unit}"
     if not math.isfinite(value):
         return f"{value}{name}"
-    factor = {"%": 100.0, "V/us": 1e-6}.get(unit, 1.0)
+    factor = {"%": 100.0, "V/us": 1e-6, "ppm/K": 1e6}.get(unit, 1.0)
     rounded = Decimal(f"{value * factor:.{digits - 1}e}")
     if rounded == 0:
         return f"0{name}"

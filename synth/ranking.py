@@ -153,6 +153,7 @@ def _figures(
         accept=job.accept,
         boards=RANKED_BOARDS,
         seed=seed,
+        population=job.board.population,
     )
     swing = swings(circuit, wanted, job)
     nominal = ErrorFigures.of(response_error(program.solve(frequency_hz), response))

@@ -47,7 +47,6 @@ from synth.values import level_ratios, standard_values, thinned, wanted_of
 __all__ = ["Request", "repick"]
 
 Real = NDArray[np.float64]
-Complex = NDArray[np.complex128]
 Progress = Callable[[str, int, int], None]
 
 # Sets of one and of two further parts, and how many of each are tried on the whole circuit.
@@ -377,6 +376,7 @@ class _Repicking:
             accept=self.job.accept,
             boards=self.earlier.boards,
             seed=self.earlier.seed,
+            population=self.job.board.population,
         )
 
     def _share_of_limits(self, circuit: Circuit) -> float:

@@ -10,6 +10,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from synth.boardruns import ToleranceResult
 from synth.choosing.certificate import Certificate
 from synth.circuit import Circuit
 from synth.evidence import Check, ResponseError
@@ -90,46 +91,6 @@ class NoiseResult:
     density: Real
     output_rms: float
     shares: dict[str, float]
-
-
-@dataclass(frozen=True, kw_only=True)
-class ToleranceResult:
-    """A run of boards with parts drawn within their tolerance.
-
-    Parameters
-    ----------
-    boards, passed
-        How many were drawn, and how many meet both limits over the band.
-    low, high
-        Clopper-Pearson interval of the yield at `confidence`, ratios.
-    frequency_hz
-        Shape (F,) [Hz].
-    magnitude_5, magnitude_95, phase_5, phase_95
-        Percentiles over the boards of the signed error at each frequency, shape (F,)
-        [dB], [deg].
-    error_95_db
-        95th percentile over the boards of the largest absolute dB error over the band.
-    seed
-        Of the random generator.
-    """
-
-    boards: int
-    passed: int
-    low: float
-    high: float
-    confidence: float
-    frequency_hz: Real
-    magnitude_5: Real
-    magnitude_95: Real
-    phase_5: Real
-    phase_95: Real
-    error_95_db: float
-    seed: int
-
-    @property
-    def share(self) -> float:
-        """Share of the boards that pass, a ratio."""
-        return self.passed / self.boards
 
 
 @dataclass(frozen=True, kw_only=True)

@@ -1,8 +1,9 @@
 """The benchmark: speed, memory and quality of values, as one table.
 
 ``sh tests/run bench`` prints it; ``python -m tests.bench values`` one part alone (parts:
-commands, engine, memory, ranking, values).  Nothing here passes or fails: the aims stand beside the
-figures.  Ratios are taken within one run, so that a slow or busy machine does not blur them.
+commands, engine, memory, coverage, ranking, values).  Nothing here passes or fails: the aims
+stand beside the figures.  Ratios are taken within one run, so that a slow or busy machine does
+not blur them.
 """
 
 from __future__ import annotations
@@ -21,16 +22,21 @@ from pathlib import Path
 import numpy as np
 
 from netlist.processes import workers
+from synth.boardruns import ToleranceResult
 from synth.candidates import sketch_form
 from synth.choosing import choose_values
 from synth.design import compare_forms
 from synth.evidence import response_error
 from synth.forms import FORMS
+from synth.job import Accept
 from synth.nodal import compile_circuit
+from synth.population import PartSpread, Population
+from synth.tolerance import run_boards
 from tests.bench_nodal import bench as bench_engine
 from tests.forms import exists
 from tests.jobs import capacitor_rule, job_for, resistor_rule
 from tests.strategies import butterworth
+from tests.synth.nodal.boards import tow_thomas
 
 __all__ = ["PARTS", "main"]
 
@@ -51,13 +57,17 @@ band = ["100 Hz", "2 kHz"]
 """
 
 BOARDS_IN_A_CHILD = """
-import re, sys
+import re, sys, time
 from pathlib import Path
 from netlist.jobfile import read_job
 from synth.design import design
-found = design(read_job(sys.argv[1]), boards=int(sys.argv[2]))
+moments = {}
+def seen(stage, done, total):
+    moments[stage] = time.perf_counter(), moments.get(stage, (0, time.perf_counter()))[1]
+found = design(read_job(sys.argv[1]), boards=int(sys.argv[2]), progress=seen)
 peak = re.search(r"VmHWM:\\s*(\\d+) kB", Path("/proc/self/status").read_text())
-print(int(peak[1]) / 1024, found.frequency_hz.size)
+took = moments["limits"][1] - moments["boards"][1]
+print(int(peak[1]) / 1024, found.frequency_hz.size, took)
 """
 
 
@@ -96,9 +106,9 @@ def engine() -> Iterator[Row]:
 
 
 def memory() -> Iterator[Row]:
-    """Peak memory of a process that designs and draws many boards."""
+    """Peak memory of a process that designs and draws many boards, and the time they take."""
     job = SCENARIOS / "servo_lead_lag.toml"
-    for boards in (1_000, 100_000):
+    for boards in (10_000, 100_000, 1_000_000):
         found = subprocess.run(
             [sys.executable, "-c", BOARDS_IN_A_CHILD, str(job), str(boards)],
             check=True,
@@ -106,10 +116,57 @@ def memory() -> Iterator[Row]:
             text=True,
             env={**os.environ, "PYTHONPATH": str(SCENARIOS.parent)},
         )
-        megabytes, frequencies = found.stdout.split()
-        aim = "400 MB" if boards == 100_000 else ""
+        megabytes, frequencies, seconds = found.stdout.split()
+        aim = "300 MB" if boards == 1_000_000 else ""
         name = f"peak memory, {boards} boards at {frequencies} frequencies"
         yield name, f"{float(megabytes):.0f} MB", aim
+        each = 1e6 * float(seconds) / boards
+        yield f"time after the first block, {boards} boards", f"{each:.0f} us a board", ""
+
+
+# Of the coverage: runs, boards of each, and boards of the run that stands for the truth, whose
+# own error is a thirtieth of that of a run.
+COVERAGE_RUNS = 200
+COVERAGE_BOARDS = 1_000
+REFERENCE_BOARDS = 1_000_000
+
+
+def coverage() -> Iterator[Row]:
+    """How often the printed interval of the yield holds the yield of a million other boards."""
+    plain, lots = Population(), PartSpread(distribution="normal", lot=0.5)
+    for name, population, limit in (
+        ("uniform", plain, 0.5),
+        ("uniform, few fail", plain, 0.8),
+        ("normal, capacitors of one lot", Population(capacitors=lots), 0.6),
+    ):
+        truth = _run(population, limit, boards=REFERENCE_BOARDS, seed=COVERAGE_RUNS).share
+        runs = [
+            _run(population, limit, boards=COVERAGE_BOARDS, seed=k) for k in range(COVERAGE_RUNS)
+        ]
+        held = sum(r.low <= truth <= r.high for r in runs)
+        yield (
+            f"{name}: yield {100 * truth:.2f} %",
+            f"{held} of {COVERAGE_RUNS} intervals of {COVERAGE_BOARDS} boards hold it: "
+            f"{100 * held / COVERAGE_RUNS:.1f} %",
+            "95 %",
+        )
+
+
+def _run(population: Population, limit_db: float, *, boards: int, seed: int) -> ToleranceResult:
+    """Boards of a two-integrator loop."""
+    circuit, band = tow_thomas(), np.geomspace(1e3, 30e3, 21)
+    program = compile_circuit(circuit)
+    accept = Accept(magnitude_db=limit_db, phase_deg=20.0)
+    return run_boards(
+        program,
+        circuit,
+        program.solve(band),
+        band,
+        accept=accept,
+        boards=boards,
+        seed=seed,
+        population=population,
+    )
 
 
 # What is aimed at in the choice of values, rms of ln H [%], with E6 capacitors: the goal of a
@@ -229,6 +286,7 @@ PARTS: Mapping[str, Callable[[], Iterator[Row]]] = {
     "commands": commands,
     "engine": engine,
     "memory": memory,
+    "coverage": coverage,
     "ranking": ranking,
     "values": values,
 }

@@ -31,7 +31,7 @@ __all__ = ["command", "default_folder"]
     "--boards",
     metavar="N",
     type=click.IntRange(1, MOST_BOARDS),
-    default=1000,
+    default=10_000,
     show_default=True,
     help="How many boards to draw for the yield.",
 )

@@ -1,1 +1,1 @@
-"""The report of a design: `page` renders it, `asked`, `found` and `choice` word what it says."""
+"""The report of a design: `page` renders it; `asked`, `found`, `choice` and `boards` word it."""

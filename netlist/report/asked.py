@@ -7,6 +7,7 @@ import math
 from collections.abc import Iterable, Sequence
 from fractions import Fraction
 
+from netlist.report.boards import population_rows
 from netlist.report.wording import decibel, number, quantity, scientific, spelled, stated
 from synth.job import Job
 from synth.parts import OpAmp, PartRule
@@ -110,6 +111,7 @@ def requirements(job: Job) -> list[Row]:
         ("resistors", _rule(board.resistors, "Ω")),
         ("capacitors", _rule(board.capacitors, "F")),
         *([("values fixed by hand", _fixed(board.fixed))] if board.fixed else []),
+        *population_rows(job),
         (f"op-amp ({spelled(board.op_amp.kind)}, typical figures)", _figures(board.op_amp)),
     ]
 

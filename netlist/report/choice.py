@@ -3,9 +3,7 @@ it brings to choose for the op-amps there are, and the error budget."""
 
 from __future__ import annotations
 
-from collections.abc import Iterable
-
-from netlist.report.wording import decibel, percent, quantity, stated
+from netlist.report.wording import decibel, listed, percent, quantity, stated
 from synth.choosing.certificate import PROVEN_RATIO, Certificate
 from synth.circuit import Circuit
 from synth.results import Design, ErrorBudget, ErrorFigures, OpAmpAllowance, Tightened
@@ -50,11 +48,11 @@ def _held(found: Certificate, circuit: Circuit) -> str:
     if len(found.held) == 1:
         return f" All this is said of choices that leave {found.held[0]} as it is."
     if len(found.held) <= MOST_NAMED:
-        return f" All this is said of choices that leave {_listed(found.held)} as they are."
+        return f" All this is said of choices that leave {listed(found.held)} as they are."
     free = [p.ref for p in circuit.bought if p.ref not in found.held]
     if 0 < len(free) <= MOST_NAMED:
         return (
-            f" All this is said of choices of {_listed(free)} that leave every other part as it is."
+            f" All this is said of choices of {listed(free)} that leave every other part as it is."
         )
     return f" All this is said of choices that leave {len(found.held)} parts as they are."
 
@@ -88,7 +86,7 @@ def binding_lines(found: Certificate, circuit: Circuit) -> list[str]:
     """Sets of parts that bind: what their values on offer leave undone on their own."""
     others = "all other parts that were free" if found.held else "all other parts"
     return [
-        f"{_listed(f'{ref} ({circuit.by_ref[ref].sets})' for ref in b.refs)}: whatever values "
+        f"{listed(f'{ref} ({circuit.by_ref[ref].sets})' for ref in b.refs)}: whatever values "
         f"{others} had, those on offer for {'this part' if len(b.refs) == 1 else 'these'} "
         f"leave {percent(b.rms)}."
         for b in found.bottlenecks
@@ -193,8 +191,3 @@ def _gains(tighter: Tightened, found: ErrorBudget) -> str:
 
 def _with(value: float, unit: str) -> str:
     return f"{decibel(value)}\N{NO-BREAK SPACE}{unit}"
-
-
-def _listed(words: Iterable[str]) -> str:
-    *first, last = words
-    return f"{', '.join(first)} and {last}" if first else last

@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING
 
 from netlist.partslist import PartLine, packages
 from netlist.records import all_checks, verdict_of
-from netlist.report import asked, changes, choice, found, wording
+from netlist.report import asked, boards, changes, choice, found, wording
 from netlist.svg import prefix_ids
 from synth.evidence import Check
 from synth.ranking import RANKED_BOARDS
@@ -34,9 +34,6 @@ LOW_YIELD = 0.9
 
 NO_VOLTAGE = 1e-6
 """An operating point this close to ground [V] is not worth a line."""
-
-DISTRIBUTION = "each part is drawn on its own, uniformly within its tolerance."
-"""What the boards of the tolerance run assume, beside every number that rests on it."""
 
 _HERE = Path(__file__).parent
 _CONTROL = re.compile(r"[^\t\n\x20-\x7e\xa0-\ud7ff\ue000-\ufffd\U00010000-\U0010ffff]")
@@ -105,7 +102,7 @@ def report_page(
             drawings={name: inlined(svg, name) for name, svg in drawings.by_name().items() if svg},
             readout=_readout(design, verification),
             command=_command(design, job_name),
-            distribution=DISTRIBUTION,
+            boards=boards.shown(design),
             version=version("polewright"),
         )
     )

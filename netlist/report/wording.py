@@ -4,8 +4,19 @@ line of their number."""
 from __future__ import annotations
 
 import math
+from collections.abc import Iterable
 
-__all__ = ["NONE", "decibel", "number", "percent", "quantity", "scientific", "spelled", "stated"]
+__all__ = [
+    "NONE",
+    "decibel",
+    "listed",
+    "number",
+    "percent",
+    "quantity",
+    "scientific",
+    "spelled",
+    "stated",
+]
 
 NONE = "–"
 _SPACE = "\N{NO-BREAK SPACE}"
@@ -113,6 +124,12 @@ def scientific(value: float, digits: int = 6) -> tuple[str, int]:
     if "." in mantissa:
         mantissa = mantissa.rstrip("0").rstrip(".")
     return mantissa.replace("-", _MINUS), int(exponent)
+
+
+def listed(words: Iterable[str]) -> str:
+    """Words as a list is read: ``"R1, R2 and R3"``."""
+    *first, last = words
+    return f"{', '.join(first)} and {last}" if first else last
 
 
 def spelled(name: str) -> str:

@@ -1,12 +1,13 @@
-"""Monte Carlo: many boards with parts drawn within their tolerance.
+"""Monte Carlo: many boards with parts drawn from a population.
 
-A bought part is uniform within +-tolerance of its value: pessimistic, since real lots crowd around
-a mean, and common practice where nothing is known of the lot.  What is not on the board (the
-resistance of the source, the load) stays as it is, and so do the op-amps.
+What is not on the board (the resistance of the source, the load) stays as it is.  Without more
+being stated each bought part is uniform within +-tolerance of its value: pessimistic, since real
+lots crowd around a mean, and common practice where nothing is known of the lot; op-amps have
+their figures.
 
-Board k of a seed is the same whatever the number of boards and the size of the blocks: parts are
-drawn board by board from one generator.  Memory is bounded: errors are kept in single precision
-for as many frequencies as fit, and further frequencies are run again with the same boards.
+Board k of a seed is the same whatever the number of boards and the size of the blocks.  Memory is
+bounded: errors are kept in single precision for as many frequencies as fit, and further
+frequencies are run again with the same boards.
 """
 
 from __future__ import annotations
@@ -17,12 +18,15 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from synth.boardruns import Driver, ToleranceResult
 from synth.circuit import Circuit
 from synth.errors import CircuitError, JobError
 from synth.evidence import DB_PER_NEPER
 from synth.job import Accept
 from synth.nodal import NodalProgram
-from synth.results import ToleranceResult
+from synth.population import Population
+from synth.tolerance.drawing import BoardSource, Drawn
+from synth.tolerance.failures import DriverTally, FailureTally, Place
 from synth.tolerance.interval import clopper_pearson
 
 __all__ = ["drawn_values", "run_boards", "tolerances_of"]
@@ -33,7 +37,7 @@ Complex = NDArray[np.complex128]
 BLOCK = 500
 """Boards run at once."""
 
-STORE = 170_000_000
+STORE = 140_000_000
 """Bytes that hold errors until their percentiles are taken."""
 
 
@@ -42,17 +46,11 @@ def tolerances_of(circuit: Circuit) -> Real:
     return np.array([p.tolerance for p in circuit.passives], dtype=float)
 
 
-def drawn_values(circuit: Circuit, boards: int, generator: np.random.Generator) -> Real:
-    """Values of the passives of so many boards, shape (boards, P) [ohm], [F].
-
-    Draws one number per bought part, board by board.
-    """
-    nominal = np.array([p.value for p in circuit.passives], dtype=float)
-    bought = np.array([p.on_board for p in circuit.passives], dtype=bool)
-    values = np.tile(nominal, (boards, 1))
-    deviation = generator.uniform(-1.0, 1.0, (boards, int(bought.sum())))
-    values[:, bought] *= 1.0 + deviation * tolerances_of(circuit)[bought]
-    return values
+def drawn_values(
+    circuit: Circuit, boards: int, seed: int, population: Population | None = None
+) -> Real:
+    """Values of the passives of the first so many boards, shape (boards, P) [ohm], [F]."""
+    return BoardSource(circuit, population or Population(), seed).draw(boards).values
 
 
 def run_boards(
@@ -64,6 +62,7 @@ def run_boards(
     accept: Accept,
     boards: int,
     seed: int,
+    population: Population | None = None,
     progress: Callable[[int, int], None] | None = None,
     confidence: float = 0.95,
 ) -> ToleranceResult:
@@ -83,6 +82,8 @@ def run_boards(
         The limits; the phase is compared modulo 360 deg.
     seed
         Of ``numpy.random.default_rng``.
+    population
+        Where the parts come from; None: each uniform within its tolerance.
     progress
         Called with (boards done, boards) as the run goes on.
     confidence
@@ -91,7 +92,8 @@ def run_boards(
     Raises
     ------
     JobError
-        A number of boards below 1, or a negative seed.
+        A number of boards below 1, a negative seed, or a network of parts the circuit does not
+        have.
     CircuitError
         A program of another circuit, or a target of another shape.
     NumericalError
@@ -103,26 +105,26 @@ def run_boards(
     if seed < 0:
         raise JobError(f"got the seed {seed}, expected 0 or more", key="seed")
     clopper_pearson(0, boards, confidence)
-    run = _Run(program, circuit, frequency, target, boards, seed)
+    run = _Run(program, circuit, frequency, target, population or Population(), boards, seed)
     at_once = max(1, STORE // (8 * boards))
     percentiles = np.empty((4, frequency.size))
-    worst_db, worst_deg = np.empty(boards), np.empty(boards)
+    tally = FailureTally(frequency, accept)
+    worst_db = np.empty(boards)
     for first in range(0, frequency.size, at_once):
         kept = slice(first, min(first + at_once, frequency.size))
         store = np.empty((2, kept.stop - first, boards), dtype=np.float32)
         for start, stop, db, deg in run.errors(slice(None) if first == 0 else kept):
-            if first == 0:
-                worst_db[start:stop] = np.abs(db).max(axis=1)
-                worst_deg[start:stop] = np.abs(deg).max(axis=1)
-                if progress is not None:
-                    progress(stop, boards)
             width = store.shape[1]
             store[0, :, start:stop] = db[:, :width].T
             store[1, :, start:stop] = deg[:, :width].T
+            if first == 0:
+                worst_db[start:stop] = tally.add(db, deg)
+                if progress is not None:
+                    progress(stop, boards)
         for quantity in (0, 1):
             percentiles[2 * quantity : 2 * quantity + 2, kept] = _percentiles(store[quantity])
         del store
-    passed = int(((worst_db <= accept.magnitude_db) & (worst_deg <= accept.phase_deg)).sum())
+    passed = boards - tally.failed
     low, high = clopper_pearson(passed, boards, confidence)
     return ToleranceResult(
         boards=boards,
@@ -137,6 +139,8 @@ def run_boards(
         phase_95=percentiles[3],
         error_95_db=float(np.percentile(worst_db, 95)),
         seed=seed,
+        failures=tally.failures(),
+        drivers=run.drivers(tally.places()),
     )
 
 
@@ -146,19 +150,37 @@ class _Run:
     circuit: Circuit
     frequency: Real
     target: Complex
+    population: Population
     boards: int
     seed: int
 
     def errors(self, kept: slice) -> Iterator[tuple[int, int, Real, Real]]:
         """(first board, last + 1, dB, deg) block by block, shapes (block, frequencies kept)."""
-        generator = np.random.default_rng(self.seed)
-        with np.errstate(divide="ignore"):
-            inverse_target = 1.0 / self.target[kept]
+        for start, stop, drawn in self._blocks():
+            yield start, stop, *self._errors_of(drawn, kept)
+
+    def drivers(self, places: tuple[Place, ...]) -> tuple[Driver, ...]:
+        """The parts that drive the errors at these places: the same boards once more."""
+        tally = DriverTally(self.circuit, places)
+        if not places or self.boards < DriverTally.LEAST_BOARDS:
+            return ()
+        for _, _, drawn in self._blocks():
+            tally.add(drawn, *self._errors_of(drawn, [p.index for p in places]))
+        return tally.drivers()
+
+    def _blocks(self) -> Iterator[tuple[int, int, Drawn]]:
+        source = BoardSource(self.circuit, self.population, self.seed)
         for start in range(0, self.boards, BLOCK):
             stop = min(start + BLOCK, self.boards)
-            values = drawn_values(self.circuit, stop - start, generator)
-            ratio = self.program.solve(self.frequency[kept], values=values)
-            yield start, stop, *_errors(np.multiply(ratio, inverse_target, out=ratio))
+            yield start, stop, source.draw(stop - start)
+
+    def _errors_of(self, drawn: Drawn, kept: slice | list[int]) -> tuple[Real, Real]:
+        with np.errstate(divide="ignore"):
+            inverse_target = 1.0 / self.target[kept]
+        ratio = self.program.solve(
+            self.frequency[kept], values=drawn.values, gain_bandwidth=drawn.gain_bandwidth
+        )
+        return _errors(np.multiply(ratio, inverse_target, out=ratio))
 
 
 def _errors(ratio: Complex) -> tuple[Real, Real]:

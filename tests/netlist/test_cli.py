@@ -16,7 +16,7 @@ from types import ModuleType
 
 import pytest
 
-from netlist.cli.design import default_folder
+from netlist.cli.design import command, default_folder
 from netlist.cli.running import run
 from synth.errors import (
     ExpressionError,
@@ -310,3 +310,10 @@ def test_the_version_is_that_of_the_distribution():
     from importlib.metadata import version
 
     assert polewright("--version").stdout == f"polewright {version('polewright')}\n"
+
+
+def test_the_command_draws_as_many_boards_as_the_library_does():
+    from synth.design import DEFAULT_BOARDS
+
+    (option,) = (p for p in command.params if p.name == "boards")
+    assert option.default == DEFAULT_BOARDS == 10_000

@@ -12,11 +12,12 @@ import xml.etree.ElementTree as ET
 import numpy as np
 import pytest
 
-from netlist.plots import bode_plot, noise_plot, step_plot, style, swing_chart
+from netlist.plots import bode_plot, driver_chart, noise_plot, step_plot, style, swing_chart
 from netlist.plots.bode import magnitude_range, unwrapped_deg
 from netlist.svg import escape, prefix_ids
+from synth.boardruns import Driver, ToleranceResult
 from synth.job import Accept
-from synth.results import Swing, ToleranceResult
+from synth.results import Swing
 from synth.transfer import Factor, TransferFunction
 
 W = 2 * math.pi
@@ -90,6 +91,14 @@ def swings() -> tuple[Swing, ...]:
     )
 
 
+def drivers() -> tuple[Driver, ...]:
+    return (
+        Driver(refs=("C3",), kind="capacitor", share=0.42),
+        Driver(refs=("U1", "U2", "U3"), kind="op_amp", share=0.105),
+        *(Driver(refs=(f"R{k}",), kind="resistor", share=0.01 / k) for k in range(1, 15)),
+    )
+
+
 def all_plots() -> list[str]:
     voltages = {"x1": 2 * np.sin(900 * TIME), "out": 10 * (1 - np.exp(-2000 * TIME))}
     return [
@@ -97,6 +106,7 @@ def all_plots() -> list[str]:
         step_plot(TIME, voltages, rails=(-12, 12), output_net="out", title="Step of 1 V"),
         noise_plot(F, 1e-7 / (1 + F / 300), title="Noise at the output"),
         swing_chart(swings()),
+        driver_chart(drivers(), remarks=("±5 %, rate of x1",)),
     ]
 
 
@@ -216,6 +226,24 @@ def test_an_output_over_its_limit_stands_out():
     assert swing_chart(swings()[:2]).count(f"fill: {style.LIMIT}") == 0
 
 
+def test_drivers_are_ranked_bars_as_long_as_their_shares():
+    """Read back from the SVG: widths stand in the ratio of the shares; no more than a dozen."""
+    svg = driver_chart(drivers(), remarks=("±5 %, rate of x1",))
+    shown = texts(svg)
+    for text in ("C3", "U1 to U3", "42 %", "10 %", "±5 %, rate of x1", "R10"):
+        assert text in shown
+    assert "R11" not in shown
+    boxes = [
+        np.array(re.findall(r"-?\d+(?:\.\d+)?", el.get("d")), dtype=float).reshape(-1, 2)
+        for el in ET.fromstring(svg).iter()
+        if el.tag.endswith("}path") and f"fill: {style.FOUND}" in (el.get("style") or "")
+    ]
+    widths = [np.ptp(box[:, 0]) for box in boxes]
+    assert len(widths) == 12
+    assert widths[0] / widths[1] == pytest.approx(0.42 / 0.105, rel=0.01)
+    assert widths == sorted(widths, reverse=True)
+
+
 def test_ids_are_unique_over_a_page_and_every_reference_is_met():
     plots = all_plots()
     ids = [i for svg in plots for i in re.findall(r'\sid="([^"]+)"', svg)]
@@ -250,6 +278,8 @@ def test_bad_arrays_are_refused():
         noise_plot(F, F[1:], title="")
     with pytest.raises(ValueError, match="got no swings"):
         swing_chart(())
+    with pytest.raises(ValueError, match="got no drivers"):
+        driver_chart(())
     with pytest.raises(ValueError, match="got the prefix '1 x'"):
         prefix_ids("<svg/>", "1 x")
 

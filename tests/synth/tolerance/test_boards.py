@@ -43,7 +43,7 @@ def test_count_and_percentiles_equal_those_of_a_plain_loop_over_boards():
     result = run(circuit, boards=120)
     target = compile_circuit(circuit).solve(BAND)
     refs = [p.ref for p in circuit.passives]
-    values = drawn_values(circuit, 120, np.random.default_rng(3))
+    values = drawn_values(circuit, 120, 3)
     errors = [
         response_error(
             compile_circuit(circuit.with_values(dict(zip(refs, v, strict=True)))).solve(BAND),
@@ -81,8 +81,8 @@ def test_neither_block_size_nor_memory_limit_changes_the_result(monkeypatch):
 
 def test_a_seed_means_one_sequence_of_boards():
     circuit = chain(2, op_amp())
-    few = drawn_values(circuit, 5, np.random.default_rng(8))
-    many = drawn_values(circuit, 50, np.random.default_rng(8))
+    few = drawn_values(circuit, 5, 8)
+    many = drawn_values(circuit, 50, 8)
     np.testing.assert_array_equal(many[:5], few)
     assert run(circuit, seed=8).passed == run(circuit, seed=8).passed
     assert run(circuit, seed=8).error_95_db != run(circuit, seed=9).error_95_db
@@ -91,7 +91,7 @@ def test_a_seed_means_one_sequence_of_boards():
 def test_parts_are_uniform_within_tolerance_and_fixtures_stay():
     circuit = chain(2, op_amp(), source=50.0, load=1e3)
     nominal = np.array([p.value for p in circuit.passives])
-    deviation = drawn_values(circuit, 4000, np.random.default_rng(1)) / nominal - 1
+    deviation = drawn_values(circuit, 4000, 1) / nominal - 1
     tolerance = tolerances_of(circuit)
     fixed = np.array([not p.on_board for p in circuit.passives])
     np.testing.assert_array_equal(deviation[:, fixed], 0.0)
@@ -117,7 +117,7 @@ def test_corner_of_an_rc_reaches_its_published_extremes():
 
 def test_no_drawn_board_lies_beyond_the_extremes_of_its_corner():
     program = compile_circuit(low_pass())
-    values = drawn_values(low_pass(), 5000, np.random.default_rng(5))
+    values = drawn_values(low_pass(), 5000, 5)
     corner = 1000.0 / (1 / program.solve([1000.0], values=values)[:, 0]).imag
     percent = 100 * (corner * 2 * np.pi * 10e3 * 10e-9 - 1)
     assert -5.705 < percent.min() < -5.2
