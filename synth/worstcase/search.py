@@ -1,0 +1,400 @@
+"""The worst board of all: climbs for what is reached, branch and bound for what cannot be passed.
+
+Parts that share no term of numerator or denominator do so in groups (`synth.worstcase.groups`):
+ln H is a sum over groups, and so are its bounds.  Every pair of a frequency and a sign of the
+error starts with the whole box of each group.  Of the pair with the highest sum of bounds, the
+group whose bound is farthest from what it is known to reach is taken up: parts with a slope of one
+sign over the whole box are set to the end that is worse, otherwise the part that adds most to the
+doubt is cut in half.  The search is done once no sum is more than `CLOSE` above what is reached.
+When the work is used up, the highest sum still holds; it is just wider.
+
+Errors are taken at the given frequencies alone; between two of them the bound says nothing.
+"""
+
+from __future__ import annotations
+
+import heapq
+import math
+from collections.abc import Callable
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from synth.circuit import Circuit
+from synth.errors import CircuitError
+from synth.evidence import DB_PER_NEPER
+from synth.worstcase.ascent import climb, follow
+from synth.worstcase.enclosure import MOST_CORNERS, Enclosure, enclose
+from synth.worstcase.expansion import Expansion, Parts
+from synth.worstcase.groups import independent_groups
+from synth.worstcase.result import WorstCase, WorstError
+
+__all__ = ["DEFAULT_WORK", "worst_case"]
+
+Real = NDArray[np.float64]
+Complex = NDArray[np.complex128]
+Box = tuple[Real, Real]
+
+DEFAULT_WORK = 2_000_000
+"""Work for the bound of each of magnitude and phase, in entries of arrays: a second at most."""
+
+BOX_WORK = 600
+"""Work of a box beside its arrays."""
+
+CLOSE = 0.02
+"""Relative distance of bound and reached at which the search is done."""
+
+BATCH = 64
+"""Boxes enclosed at once."""
+
+ENTRIES = 200_000
+"""Entries of the largest array of a batch."""
+
+CLIMBS = 6
+"""Climbs from first-order corners, at different frequencies, and as many from random boards."""
+
+RIDGES = 4
+"""Boards from which ridges are followed."""
+
+NEAR = 3
+"""Frequencies on either side of the best one that are tried from its board."""
+
+SEED = 1
+"""Of the random boards."""
+
+DIRECTIONS = {"dB": (1.0, -1.0), "deg": (-1.0j, 1.0j)}
+
+
+def worst_case(
+    circuit: Circuit,
+    target_response: ArrayLike,
+    frequency_hz: ArrayLike,
+    *,
+    work: int = DEFAULT_WORK,
+) -> WorstCase:
+    """Largest errors of magnitude and phase over all boards within tolerance.
+
+    Parameters
+    ----------
+    circuit
+        Values and tolerances; parts without a tolerance and op-amps stay as they are.
+    target_response
+        What the output should show, complex, shape (F,).
+    frequency_hz
+        Where it is compared [Hz], shape (F,).
+    work
+        See `DEFAULT_WORK`; the bound is valid whatever it is.
+
+    Raises
+    ------
+    CircuitError
+        A target of another shape.
+    NumericalError
+        The equations are singular on a board.
+    """
+    frequency = np.asarray(frequency_hz, dtype=float)
+    target = np.asarray(target_response, dtype=complex)
+    if frequency.ndim != 1 or not frequency.size or target.shape != frequency.shape:
+        raise CircuitError(
+            f"got a target of shape {target.shape} at frequencies of shape {frequency.shape}, "
+            "expected one value at each of one or more frequencies"
+        )
+    parts = Parts.of(circuit)
+    start = _Start.of(parts, 2j * np.pi * frequency)
+    found, boxes = {}, 0
+    for unit in DIRECTIONS:
+        search = _Search(start, target, unit)
+        search.climb()
+        bound = search.bound(work)
+        found[unit] = _worst_error(search, bound, frequency)
+        boxes += search.enclosed
+    return WorstCase(
+        magnitude_db=found["dB"],
+        phase_deg=found["deg"],
+        frequencies=frequency.size,
+        boxes=boxes,
+    )
+
+
+@dataclass(frozen=True, eq=False)
+class _Start:
+    """The whole box, expanded about its centre at every frequency."""
+
+    parts: Parts
+    s: Complex
+    box: Box
+    expansion: Expansion
+    groups: tuple[NDArray[np.intp], ...]
+
+    @classmethod
+    def of(cls, parts: Parts, s: Complex) -> _Start:
+        low, high = parts.box
+        step = _at_once(parts.active.size**2)
+        chunks = [
+            parts.expand(s[k : k + step], np.tile((low + high) / 2, (s[k : k + step].size, 1)))
+            for k in range(0, s.size, step)
+        ]
+        joined = (
+            np.concatenate([getattr(c, name) for c in chunks])
+            for name in ("response", "denominator", "numerator")
+        )
+        expansion = Expansion(*joined)
+        return cls(parts, s, (low, high), expansion, independent_groups(expansion))
+
+    def box_of(self, group: int) -> Box:
+        """The whole box of one group, all other parts in the middle."""
+        low, high = self.box
+        own = np.zeros(low.size, dtype=bool)
+        own[self.groups[group]] = True
+        middle = (low + high) / 2
+        return np.where(own, low, middle), np.where(own, high, middle)
+
+
+@dataclass(eq=False)
+class _Search:
+    """Search for the largest error of one kind; errors in [Np] or [rad] until they leave."""
+
+    start: _Start
+    target: Complex
+    unit: str
+    reached: float = -math.inf
+    board: Real = field(default_factory=lambda: np.zeros(0))
+    place: int = 0
+    sign: int = 0
+    enclosed: int = 0
+    _pairs: list[_Pair] = field(default_factory=list)
+
+    def climb(self) -> None:
+        """Set `reached` by climbs from the corners of first order and from random boards."""
+        parts, (low, high) = self.start.parts, self.start.box
+        count, centre = self.start.s.size, (low + high) / 2
+        x, y = (
+            np.diagonal(m, axis1=1, axis2=2)
+            for m in (self.start.expansion.denominator, self.start.expansion.numerator)
+        )
+        sign = np.repeat([0, 1], count)
+        place = np.tile(np.arange(count), 2)
+        c = np.array(DIRECTIONS[self.unit])[sign]
+        with np.errstate(all="ignore"):
+            slope = (c[:, None] * (y - x)[place]).real
+            corners = np.where(slope > 0, high, low)
+            slope *= (high - low) / 2 / centre
+            error = (c * np.log(self.start.expansion.response / self.target)[place]).real
+        likely = np.nan_to_num(error + np.abs(slope).sum(axis=1), nan=0.0)
+        chosen = _apart(likely, place)
+        generator = np.random.default_rng(SEED)
+        random = generator.uniform(low, high, (CLIMBS, low.size))
+        again = chosen[np.arange(CLIMBS) % chosen.size]
+        chosen, boards = np.append(chosen, again), np.vstack([corners[chosen], random])
+        place, sign = place[chosen], sign[chosen]
+        error, boards = self._climbed(climb, place, sign, boards)
+        # At a corner that climbs end in, all slopes point outward; ridges lead elsewhere.
+        inside = np.flatnonzero(((boards > low) & (boards < high)).any(axis=1))
+        best = inside[np.argsort(-error[inside], kind="stable")[:RIDGES]]
+        if best.size:
+            self._climbed(follow, place[best], sign[best], boards[best])
+        # The frequencies about the best one, from where it got to.
+        near = np.clip(self.place + np.arange(-NEAR, NEAR + 1), 0, count - 1)
+        again = np.tile(self.board, (near.size, 1))
+        self._climbed(follow if best.size else climb, near, np.full(near.size, self.sign), again)
+
+    def _climbed(
+        self,
+        method: Callable[..., tuple[Real, Real]],
+        place: NDArray[np.intp],
+        sign: NDArray[np.intp],
+        boards: Real,
+    ) -> tuple[Real, Real]:
+        c = np.array(DIRECTIONS[self.unit], dtype=complex)[sign]
+        found = method(self.start.parts, self.start.s[place], self.target[place], c, boards)
+        self._note(found[0], place, sign, found[1])
+        return found
+
+    def _note(
+        self, error: Real, place: NDArray[np.intp], sign: NDArray[np.intp], boards: Real
+    ) -> None:
+        best = int(np.argmax(np.nan_to_num(error, nan=-np.inf)))
+        if error[best] > self.reached:
+            self.reached, self.board = float(error[best]), boards[best]
+            self.place, self.sign = int(place[best]), int(sign[best])
+
+    def bound(self, work: int) -> float:
+        """Enclose boxes until bound and reached are close or the work is done [Np], [rad]."""
+        self._enclose_whole()
+        ranked = [(-pair.total, k) for k, pair in enumerate(self._pairs)]
+        heapq.heapify(ranked)
+        while -ranked[0][0] > (1 + CLOSE) * self.reached and work > 0:
+            batch = [heapq.heappop(ranked)[1]]
+            while ranked and len(batch) < BATCH and -ranked[0][0] > (1 + CLOSE) * self.reached:
+                batch.append(heapq.heappop(ranked)[1])
+            work -= self._enclose([self._pairs[k] for k in batch])
+            for k in batch:
+                heapq.heappush(ranked, (-self._pairs[k].total, k))
+        found = max(self.reached, -ranked[0][0])
+        # A phase error is taken modulo a turn: half a turn is always a bound.
+        return min(found, math.pi) if self.unit == "deg" else found
+
+    def _enclose_whole(self) -> None:
+        """The whole box of every group at every frequency, both ways."""
+        start = self.start
+        low, high = start.box
+        count, own = start.s.size, start.expansion
+        step = _at_once(low.size**2)
+        for sign, c in enumerate(DIRECTIONS[self.unit]):
+            with np.errstate(all="ignore"):
+                offset = (c * np.log(own.response / self.target)).real
+            bounds = np.empty((count, len(start.groups)))
+            for first in range(0, count, step):
+                kept = slice(first, first + step)
+                part = Expansion(own.response[kept], own.denominator[kept], own.numerator[kept])
+                size = part.response.size
+                for g, group in enumerate(start.groups):
+                    tau = np.zeros((size, low.size))
+                    tau[:, group] = ((high - low) / (high + low))[group]
+                    found = enclose(
+                        part, part.response, np.full(size, c), tau, cubic=False, corners=False
+                    )
+                    bounds[kept, g] = found.bound
+            self._pairs += [
+                _Pair(k, sign, float(offset[k]), start, bounds[k].tolist()) for k in range(count)
+            ]
+
+    def _enclose(self, pairs: list[_Pair]) -> int:
+        """Take up the most doubtful box of each pair; the work it took."""
+        start = self.start
+        taken = [pair.take() for pair in pairs]
+        place = np.array([pair.place for pair in pairs])
+        low = np.stack([box[0] for _, _, box in taken])
+        high = np.stack([box[1] for _, _, box in taken])
+        c = np.array(DIRECTIONS[self.unit], dtype=complex)[[pair.sign for pair in pairs]]
+        centre = (low + high) / 2
+        widest = int((high > low).sum(axis=1).max())
+        entries = max(widest**3, 2**widest if widest <= MOST_CORNERS else 0)
+        step = _at_once(entries)
+        for first in range(0, len(pairs), step):
+            kept = slice(first, first + step)
+            expansion = start.parts.expand(start.s[place[kept]], centre[kept])
+            found = enclose(
+                expansion,
+                start.expansion.response[place[kept]],
+                c[kept],
+                ((high - low) / (high + low))[kept],
+            )
+            for k, (pair, (group, bound, _)) in enumerate(
+                zip(pairs[kept], taken[kept], strict=True)
+            ):
+                here = min(bound, float(found.bound[k]))
+                j = first + k
+                for box in _divided(low[j], high[j], found, k):
+                    pair.put(group, here, box)
+                pair.note(group, float(found.centre[k]), centre[j])
+                self._combine(pair)
+        self.enclosed += len(pairs)
+        return len(pairs) * (BOX_WORK + entries)
+
+    def _combine(self, pair: _Pair) -> None:
+        """Note the board that is put together of the best of every group."""
+        best = pair.offset + sum(pair.best)
+        if not self.reached < best <= (math.inf if self.unit == "dB" else math.pi):
+            return
+        board = sum(self.start.box) / 2
+        for group, own in zip(self.start.groups, pair.boards, strict=True):
+            board[group] = own[group]
+        self.reached, self.board = best, board
+        self.place, self.sign = pair.place, pair.sign
+
+
+class _Pair:
+    """The boxes of every group at one frequency for one sign of the error.
+
+    `offset` is the error of the centre of the whole box, `best` what each group is known to
+    add to it, with a board of its own, and `total` what all together cannot pass.
+    """
+
+    def __init__(
+        self, place: int, sign: int, offset: float, start: _Start, bounds: list[float]
+    ) -> None:
+        self.place, self.sign, self.offset = place, sign, offset
+        low, high = start.box
+        centre = (low + high) / 2
+        self.best = [0.0] * len(bounds)
+        self.boards = [centre] * len(bounds)
+        self._made = 0
+        self._open: list[list[tuple[float, int, Box | None]]] = [[(-b, 0, None)] for b in bounds]
+        self._start = start
+
+    @property
+    def total(self) -> float:
+        found = self.offset + sum(-boxes[0][0] for boxes in self._open)
+        return math.inf if math.isnan(found) else found
+
+    def take(self) -> tuple[int, float, Box]:
+        """Group, bound and box of the most doubtful one, out of the open ones."""
+        gaps = [-boxes[0][0] - best for boxes, best in zip(self._open, self.best, strict=True)]
+        group = int(np.argmax(gaps))
+        bound, _, box = heapq.heappop(self._open[group])
+        return group, -bound, box if box is not None else self._start.box_of(group)
+
+    def put(self, group: int, bound: float, box: Box) -> None:
+        self._made += 1
+        heapq.heappush(self._open[group], (-bound, self._made, box))
+
+    def note(self, group: int, gain: float, board: Real) -> None:
+        if gain > self.best[group]:
+            self.best[group], self.boards[group] = gain, board
+
+
+def _divided(low: Real, high: Real, found: Enclosure, k: int) -> list[Box]:
+    """Smaller boxes that hold the worst board of this one."""
+    slope = np.where(high > low, found.slope[k], 0.0)
+    if slope.any():
+        return [(np.where(slope > 0, high, low), np.where(slope < 0, low, high))]
+    part = int(np.argmax(found.doubt[k]))
+    if not high[part] > low[part]:
+        return [(low, high)]
+    middle = (low[part] + high[part]) / 2
+    below, above = high.copy(), low.copy()
+    below[part] = above[part] = middle
+    return [(low, below), (above, high)]
+
+
+def _apart(likely: Real, place: NDArray[np.intp]) -> NDArray[np.intp]:
+    """The likeliest places to start from, no two next to each other."""
+    distance = max(1, int(place.max()) // 50)
+    chosen: list[int] = []
+    for k in np.argsort(-likely, kind="stable"):
+        if all(abs(place[k] - place[j]) > distance for j in chosen):
+            chosen.append(int(k))
+        if len(chosen) == CLIMBS:
+            break
+    return np.array(chosen, dtype=np.intp)
+
+
+def _at_once(entries: int) -> int:
+    return max(1, ENTRIES // max(1, entries))
+
+
+def _worst_error(search: _Search, bound: float, frequency: Real) -> WorstError:
+    parts, (low, high) = search.start.parts, search.start.box
+    scale = DB_PER_NEPER if search.unit == "dB" else 180 / np.pi
+    columns = parts.varied
+    refs = [parts.structure.refs[k] for k in columns]
+    values, lowest, highest = (parts.values(m)[columns] for m in (search.board, low, high))
+    smallest, largest = np.minimum(lowest, highest), np.maximum(lowest, highest)
+    at_low = np.isclose(values, smallest, rtol=1e-9, atol=0.0)
+    at_high = np.isclose(values, largest, rtol=1e-9, atol=0.0)
+
+    def named(which: NDArray[np.bool_]) -> tuple[str, ...]:
+        return tuple(ref for ref, is_so in zip(refs, which, strict=True) if is_so)
+
+    return WorstError(
+        unit=search.unit,
+        reached=float(scale * search.reached) * (1 if search.sign == 0 else -1),
+        bound=float(scale * bound) if math.isfinite(bound) else None,
+        frequency_hz=float(frequency[search.place]),
+        values=dict(zip(refs, values.tolist(), strict=True)),
+        low=named(at_low),
+        high=named(at_high),
+        between=named(~at_low & ~at_high),
+    )
