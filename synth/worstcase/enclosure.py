@@ -13,7 +13,8 @@ The error is Re(c ln(H/T)); c = 1, -1 for the magnitude up and down [Np], -j, j 
 - Order n of ln det(I + X Delta) is at most trace(Z^n)/n with Z = |X| diag(tau), since every
   product in the trace is; the orders from N on sum to at most trace(Z^N (I - Z)^-1)/N.  The
   series converges when the spectral radius of Z is below 1, which holds when u = (I - Z)^-1 1
-  is positive, for then Z u < u (Collatz 1942, Wielandt 1950, from memory).  Then neither H nor 1/H is 0 in the box.
+  is positive, for then Z u < u (Collatz 1942, Wielandt 1950, from memory).  Then neither H nor
+  1/H is 0 in the box.
 
 The slope along part k, times tau_k, is g_k within sum_j |B_kj| + G_k + [Z^4 (I - Z)^-1]_kk, of
 numerator and denominator: beyond that the error has its extreme at an end of this part,
@@ -197,15 +198,12 @@ def _tail(x: Real, y: Real, power: int) -> tuple[Real, NDArray[np.bool_]]:
     total = np.zeros(x.shape[:2])
     diverges = np.zeros(x.shape[0], dtype=bool)
     identity = np.eye(x.shape[1])
-    for z in (x, y):
-        finite = np.isfinite(z).all(axis=(1, 2))
-        diverges |= ~finite
-        z = np.where(finite[:, None, None], z, 0.0)
+    for found in (x, y):
         # Far from converging, and I - Z may be badly scaled.
-        huge = z.sum(axis=2).max(axis=1) > HOPELESS
-        z = np.where(huge[:, None, None], 0.0, z)
+        hopeless = ~(found.sum(axis=2).max(axis=1) <= HOPELESS)
+        z = np.where(hopeless[:, None, None], 0.0, found)
         inverse = np.linalg.inv(identity - z)
-        diverges |= huge | ~(inverse.sum(axis=2) > 0).all(axis=1)
+        diverges |= hopeless | ~(inverse.sum(axis=2) > 0).all(axis=1)
         squared = z @ z
         powered = squared @ (squared if power == 4 else z)
         total += np.maximum(np.einsum("nij,nji->ni", powered, inverse), 0.0)

@@ -129,6 +129,13 @@ class Parts:
         inverted = self.structure.is_resistor[columns]
         return np.where(inverted, 1 / (1 + t), 1 - t), np.where(inverted, 1 / (1 - t), 1 + t)
 
+    def response(self, s: Complex, multiples: Real) -> Complex:
+        """H of N boards, each at its own `s` (N,) [rad/s], `multiples` (N, V); shape (N,)."""
+        own = self.structure
+        y = dense.admittances(own, s, self.values(multiples))
+        a = dense.inverse_gains(s, own.gain_bandwidth, own.open_loop_gain)
+        return dense.solve_samples(own, y, a)[:, own.output]
+
     def expand(self, s: Complex, multiples: Real) -> Expansion:
         """About N boards, each at its own `s` (N,) [rad/s], `multiples` (N, V).
 
@@ -156,7 +163,7 @@ class Parts:
         alpha, response = solved[:, own.output, :parts], solved[:, own.output, parts]
         with np.errstate(divide="ignore", invalid="ignore"):
             numerator = x - beta[:, :, None] * (alpha / response[:, None])[:, None, :]
-        return Expansion(response, x, numerator)
+        return Expansion(response, x, np.asarray(numerator, dtype=np.complex128))
 
     @property
     def _columns(self) -> Real:

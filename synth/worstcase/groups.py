@@ -34,7 +34,7 @@ def independent_groups(expansion: Expansion) -> tuple[NDArray[np.intp], ...]:
 
 def _cycles(edges: NDArray[np.bool_]) -> NDArray[np.bool_]:
     """Which two variables lie on a common cycle, shape (V, V), of edges (N, V, V) at any sample."""
-    reach = _reach(edges.any(axis=0))
+    reach = _reach(np.any(edges, axis=0))
     return np.asarray(reach & reach.T)
 
 

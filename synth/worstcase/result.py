@@ -19,9 +19,11 @@ class WorstError:
     unit
         ``"dB"`` or ``"deg"``.
     reached
-        Error of the board below, with its sign.
+        Size of the error of the board below.
+    sign
+        Of that error, +1 or -1.
     bound
-        No board has a larger absolute error; None where no bound was found.
+        No board has an error of larger size; None where no bound was found.
     frequency_hz
         Where it is reached [Hz].
     values
@@ -33,6 +35,7 @@ class WorstError:
 
     unit: str
     reached: float
+    sign: int
     bound: float | None
     frequency_hz: float
     values: dict[str, float]
@@ -41,13 +44,15 @@ class WorstError:
     between: tuple[str, ...]
 
     def __post_init__(self) -> None:
-        if self.bound is not None and not abs(self.reached) <= self.bound:
-            raise ValueError(f"got the bound {self.bound}, expected |{self.reached}| or more")
+        if self.sign not in (1, -1) or not self.reached >= 0:
+            raise ValueError(f"got {self.reached} of sign {self.sign}, expected a size and a sign")
+        if self.bound is not None and not self.reached <= self.bound:
+            raise ValueError(f"got the bound {self.bound}, expected {self.reached} or more")
 
     @property
     def meets(self) -> bool:
         """Whether bound and reached are within `MEET` of each other."""
-        return self.bound is not None and self.bound <= (1 + MEET) * abs(self.reached)
+        return self.bound is not None and self.bound <= (1 + MEET) * self.reached
 
 
 @dataclass(frozen=True, kw_only=True)

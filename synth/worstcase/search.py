@@ -25,16 +25,16 @@ from synth.circuit import Circuit
 from synth.errors import CircuitError
 from synth.evidence import DB_PER_NEPER
 from synth.worstcase.ascent import climb, follow
-from synth.worstcase.enclosure import MOST_CORNERS, Enclosure, enclose
+from synth.worstcase.boxes import Pair, Start, at_once, divided
+from synth.worstcase.enclosure import MOST_CORNERS, enclose
 from synth.worstcase.expansion import Expansion, Parts
-from synth.worstcase.groups import independent_groups
 from synth.worstcase.result import WorstCase, WorstError
 
 __all__ = ["DEFAULT_WORK", "worst_case"]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
-Box = tuple[Real, Real]
+Climb = Callable[..., tuple[Real, Real]]
 
 DEFAULT_WORK = 2_000_000
 """Work for the bound of each of magnitude and phase, in entries of arrays: a second at most."""
@@ -48,17 +48,14 @@ CLOSE = 0.02
 BATCH = 64
 """Boxes enclosed at once."""
 
-ENTRIES = 200_000
-"""Entries of the largest array of a batch."""
-
 CLIMBS = 6
 """Climbs from first-order corners, at different frequencies, and as many from random boards."""
 
 RIDGES = 4
 """Boards from which ridges are followed."""
 
-NEAR = 3
-"""Frequencies on either side of the best one that are tried from its board."""
+RETURNS = 4
+"""Times the board reached is looked at over the whole band, to go on where it is worst."""
 
 SEED = 1
 """Of the random boards."""
@@ -101,7 +98,7 @@ def worst_case(
             "expected one value at each of one or more frequencies"
         )
     parts = Parts.of(circuit)
-    start = _Start.of(parts, 2j * np.pi * frequency)
+    start = Start.of(parts, 2j * np.pi * frequency)
     found, boxes = {}, 0
     for unit in DIRECTIONS:
         search = _Search(start, target, unit)
@@ -117,45 +114,11 @@ def worst_case(
     )
 
 
-@dataclass(frozen=True, eq=False)
-class _Start:
-    """The whole box, expanded about its centre at every frequency."""
-
-    parts: Parts
-    s: Complex
-    box: Box
-    expansion: Expansion
-    groups: tuple[NDArray[np.intp], ...]
-
-    @classmethod
-    def of(cls, parts: Parts, s: Complex) -> _Start:
-        low, high = parts.box
-        step = _at_once(parts.active.size**2)
-        chunks = [
-            parts.expand(s[k : k + step], np.tile((low + high) / 2, (s[k : k + step].size, 1)))
-            for k in range(0, s.size, step)
-        ]
-        joined = (
-            np.concatenate([getattr(c, name) for c in chunks])
-            for name in ("response", "denominator", "numerator")
-        )
-        expansion = Expansion(*joined)
-        return cls(parts, s, (low, high), expansion, independent_groups(expansion))
-
-    def box_of(self, group: int) -> Box:
-        """The whole box of one group, all other parts in the middle."""
-        low, high = self.box
-        own = np.zeros(low.size, dtype=bool)
-        own[self.groups[group]] = True
-        middle = (low + high) / 2
-        return np.where(own, low, middle), np.where(own, high, middle)
-
-
 @dataclass(eq=False)
 class _Search:
     """Search for the largest error of one kind; errors in [Np] or [rad] until they leave."""
 
-    start: _Start
+    start: Start
     target: Complex
     unit: str
     reached: float = -math.inf
@@ -163,11 +126,11 @@ class _Search:
     place: int = 0
     sign: int = 0
     enclosed: int = 0
-    _pairs: list[_Pair] = field(default_factory=list)
+    _pairs: list[Pair] = field(default_factory=list)
 
     def climb(self) -> None:
         """Set `reached` by climbs from the corners of first order and from random boards."""
-        parts, (low, high) = self.start.parts, self.start.box
+        low, high = self.start.box
         count, centre = self.start.s.size, (low + high) / 2
         x, y = (
             np.diagonal(m, axis1=1, axis2=2)
@@ -194,14 +157,27 @@ class _Search:
         best = inside[np.argsort(-error[inside], kind="stable")[:RIDGES]]
         if best.size:
             self._climbed(follow, place[best], sign[best], boards[best])
-        # The frequencies about the best one, from where it got to.
-        near = np.clip(self.place + np.arange(-NEAR, NEAR + 1), 0, count - 1)
-        again = np.tile(self.board, (near.size, 1))
-        self._climbed(follow if best.size else climb, near, np.full(near.size, self.sign), again)
+        for _ in range(RETURNS):
+            before = self.reached
+            self._return_to_worst(follow if best.size else climb)
+            if not self.reached > before * (1 + CLOSE / 10):
+                break
+
+    def _return_to_worst(self, method: Climb) -> None:
+        """Go on from the board reached, at the frequencies where it is worst."""
+        start = self.start
+        boards = np.tile(self.board, (start.s.size, 1))
+        with np.errstate(all="ignore"):
+            error = np.log(start.parts.response(start.s, boards) / self.target)
+        c = np.array(DIRECTIONS[self.unit], dtype=complex)
+        size = np.nan_to_num((c[:, None] * error).real, nan=-np.inf).ravel()
+        chosen = _apart(size, np.tile(np.arange(start.s.size), 2))
+        place, sign = chosen % start.s.size, chosen // start.s.size
+        self._climbed(method, place, sign, boards[: chosen.size])
 
     def _climbed(
         self,
-        method: Callable[..., tuple[Real, Real]],
+        method: Climb,
         place: NDArray[np.intp],
         sign: NDArray[np.intp],
         boards: Real,
@@ -224,23 +200,23 @@ class _Search:
         self._enclose_whole()
         ranked = [(-pair.total, k) for k, pair in enumerate(self._pairs)]
         heapq.heapify(ranked)
-        while -ranked[0][0] > (1 + CLOSE) * self.reached and work > 0:
+        # A phase error is taken modulo a turn: half a turn is always a bound.
+        most = math.pi if self.unit == "deg" else math.inf
+        while min(-ranked[0][0], most) > (1 + CLOSE) * self.reached and work > 0:
             batch = [heapq.heappop(ranked)[1]]
             while ranked and len(batch) < BATCH and -ranked[0][0] > (1 + CLOSE) * self.reached:
                 batch.append(heapq.heappop(ranked)[1])
             work -= self._enclose([self._pairs[k] for k in batch])
             for k in batch:
                 heapq.heappush(ranked, (-self._pairs[k].total, k))
-        found = max(self.reached, -ranked[0][0])
-        # A phase error is taken modulo a turn: half a turn is always a bound.
-        return min(found, math.pi) if self.unit == "deg" else found
+        return min(max(self.reached, -ranked[0][0]), most)
 
     def _enclose_whole(self) -> None:
         """The whole box of every group at every frequency, both ways."""
         start = self.start
         low, high = start.box
         count, own = start.s.size, start.expansion
-        step = _at_once(low.size**2)
+        step = at_once(low.size**2)
         for sign, c in enumerate(DIRECTIONS[self.unit]):
             with np.errstate(all="ignore"):
                 offset = (c * np.log(own.response / self.target)).real
@@ -257,10 +233,10 @@ class _Search:
                     )
                     bounds[kept, g] = found.bound
             self._pairs += [
-                _Pair(k, sign, float(offset[k]), start, bounds[k].tolist()) for k in range(count)
+                Pair(k, sign, float(offset[k]), start, bounds[k].tolist()) for k in range(count)
             ]
 
-    def _enclose(self, pairs: list[_Pair]) -> int:
+    def _enclose(self, pairs: list[Pair]) -> int:
         """Take up the most doubtful box of each pair; the work it took."""
         start = self.start
         taken = [pair.take() for pair in pairs]
@@ -271,7 +247,7 @@ class _Search:
         centre = (low + high) / 2
         widest = int((high > low).sum(axis=1).max())
         entries = max(widest**3, 2**widest if widest <= MOST_CORNERS else 0)
-        step = _at_once(entries)
+        step = at_once(entries)
         for first in range(0, len(pairs), step):
             kept = slice(first, first + step)
             expansion = start.parts.expand(start.s[place[kept]], centre[kept])
@@ -286,77 +262,24 @@ class _Search:
             ):
                 here = min(bound, float(found.bound[k]))
                 j = first + k
-                for box in _divided(low[j], high[j], found, k):
+                for box in divided(low[j], high[j], found, k):
                     pair.put(group, here, box)
                 pair.note(group, float(found.centre[k]), centre[j])
                 self._combine(pair)
         self.enclosed += len(pairs)
         return len(pairs) * (BOX_WORK + entries)
 
-    def _combine(self, pair: _Pair) -> None:
+    def _combine(self, pair: Pair) -> None:
         """Note the board that is put together of the best of every group."""
         best = pair.offset + sum(pair.best)
         if not self.reached < best <= (math.inf if self.unit == "dB" else math.pi):
             return
-        board = sum(self.start.box) / 2
+        low, high = self.start.box
+        board = (low + high) / 2
         for group, own in zip(self.start.groups, pair.boards, strict=True):
             board[group] = own[group]
         self.reached, self.board = best, board
         self.place, self.sign = pair.place, pair.sign
-
-
-class _Pair:
-    """The boxes of every group at one frequency for one sign of the error.
-
-    `offset` is the error of the centre of the whole box, `best` what each group is known to
-    add to it, with a board of its own, and `total` what all together cannot pass.
-    """
-
-    def __init__(
-        self, place: int, sign: int, offset: float, start: _Start, bounds: list[float]
-    ) -> None:
-        self.place, self.sign, self.offset = place, sign, offset
-        low, high = start.box
-        centre = (low + high) / 2
-        self.best = [0.0] * len(bounds)
-        self.boards = [centre] * len(bounds)
-        self._made = 0
-        self._open: list[list[tuple[float, int, Box | None]]] = [[(-b, 0, None)] for b in bounds]
-        self._start = start
-
-    @property
-    def total(self) -> float:
-        found = self.offset + sum(-boxes[0][0] for boxes in self._open)
-        return math.inf if math.isnan(found) else found
-
-    def take(self) -> tuple[int, float, Box]:
-        """Group, bound and box of the most doubtful one, out of the open ones."""
-        gaps = [-boxes[0][0] - best for boxes, best in zip(self._open, self.best, strict=True)]
-        group = int(np.argmax(gaps))
-        bound, _, box = heapq.heappop(self._open[group])
-        return group, -bound, box if box is not None else self._start.box_of(group)
-
-    def put(self, group: int, bound: float, box: Box) -> None:
-        self._made += 1
-        heapq.heappush(self._open[group], (-bound, self._made, box))
-
-    def note(self, group: int, gain: float, board: Real) -> None:
-        if gain > self.best[group]:
-            self.best[group], self.boards[group] = gain, board
-
-
-def _divided(low: Real, high: Real, found: Enclosure, k: int) -> list[Box]:
-    """Smaller boxes that hold the worst board of this one."""
-    slope = np.where(high > low, found.slope[k], 0.0)
-    if slope.any():
-        return [(np.where(slope > 0, high, low), np.where(slope < 0, low, high))]
-    part = int(np.argmax(found.doubt[k]))
-    if not high[part] > low[part]:
-        return [(low, high)]
-    middle = (low[part] + high[part]) / 2
-    below, above = high.copy(), low.copy()
-    below[part] = above[part] = middle
-    return [(low, below), (above, high)]
 
 
 def _apart(likely: Real, place: NDArray[np.intp]) -> NDArray[np.intp]:
@@ -369,10 +292,6 @@ def _apart(likely: Real, place: NDArray[np.intp]) -> NDArray[np.intp]:
         if len(chosen) == CLIMBS:
             break
     return np.array(chosen, dtype=np.intp)
-
-
-def _at_once(entries: int) -> int:
-    return max(1, ENTRIES // max(1, entries))
 
 
 def _worst_error(search: _Search, bound: float, frequency: Real) -> WorstError:
@@ -390,8 +309,9 @@ def _worst_error(search: _Search, bound: float, frequency: Real) -> WorstError:
 
     return WorstError(
         unit=search.unit,
-        reached=float(scale * search.reached) * (1 if search.sign == 0 else -1),
-        bound=float(scale * bound) if math.isfinite(bound) else None,
+        reached=float(scale * max(search.reached, 0.0)),
+        sign=1 if search.sign == 0 else -1,
+        bound=float(scale * max(bound, 0.0)) if math.isfinite(bound) else None,
         frequency_hz=float(frequency[search.place]),
         values=dict(zip(refs, values.tolist(), strict=True)),
         low=named(at_low),
