@@ -1,7 +1,7 @@
 """The benchmark: speed, memory and quality of values, as one table.
 
 ``sh tests/run bench`` prints it; ``python -m tests.bench values`` one part alone (parts:
-commands, engine, memory, values).  Nothing here passes or fails: the aims stand beside the
+commands, engine, memory, values, worst).  Nothing here passes or fails: the aims stand beside the
 figures.  Ratios are taken within one run, so that a slow or busy machine does not blur them.
 """
 
@@ -23,7 +23,9 @@ from synth.candidates import sketch_form
 from synth.choosing import choose_values
 from synth.evidence import response_error
 from synth.forms import FORMS
+from synth.grid import judging_frequencies
 from synth.nodal import compile_circuit
+from synth.worstcase import worst_case
 from tests.bench_nodal import bench as bench_engine
 from tests.jobs import capacitor_rule, job_for, resistor_rule
 from tests.strategies import butterworth
@@ -132,6 +134,27 @@ def values() -> Iterator[Row]:
                     yield _best_row(min(found, key=lambda c: c.rms), TRIAL[series][order])
 
 
+def worst() -> Iterator[Row]:
+    """The worst case within tolerance: time, and how much the bound is above what is reached;
+    Butterworth at 1 kHz, 100 Hz to 2 kHz, resistors 1 %, capacitors 5 %."""
+    band = (100.0, 2e3)
+    for order in (2, 3, 4, 6):
+        target = butterworth(order, 1e3)
+        frequency = judging_frequencies(target, band)
+        for form in ("cascade", "controllable"):
+            circuit = sketch_form(job_for(target, band), form, frequency).circuit
+            response = compile_circuit(circuit).solve(frequency)
+            start = time.perf_counter()
+            found = worst_case(circuit, response, frequency)
+            seconds = time.perf_counter() - start
+            name = f"worst case, order {order}, {form}"
+            yield f"{name}: time", f"{seconds:.2f} s", "10 s" if order == 4 else ""
+            for error in (found.magnitude_db, found.phase_deg):
+                over = "none" if error.bound is None else f"{error.bound / error.reached - 1:.1%}"
+                aim = "5 %" if order <= 4 else ""
+                yield f"{name}: bound over {error.reached:.3g} {error.unit}", over, aim
+
+
 @dataclass(frozen=True, kw_only=True)
 class _Chosen:
     """One choice of values: errors in percent, time in seconds."""
@@ -209,6 +232,7 @@ PARTS: Mapping[str, Callable[[], Iterator[Row]]] = {
     "engine": engine,
     "memory": memory,
     "values": values,
+    "worst": worst,
 }
 
 

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import math
+
 from netlist.report.wording import NONE, decibel, quantity, stated
 from synth.circuit import Circuit
 from synth.results import Design
@@ -26,7 +28,7 @@ def worst_rows(found: WorstCase, design: Design) -> list[Row]:
             {
                 "name": f"{name} error, {error.unit}",
                 "reached": decibel(error.reached),
-                "bound": NONE if error.bound is None else decibel(error.bound),
+                "bound": _bound(error),
                 "limit": stated(limit, error.unit),
                 "at": quantity(error.frequency_hz, "Hz"),
             }
@@ -74,7 +76,16 @@ def shown(design: Design) -> dict[str, object]:
 
 
 def _range(error: WorstError) -> str:
-    reached = decibel(error.reached)
+    reached = f"{decibel(error.reached)} {error.unit}"
     if error.bound is None:
-        return f"{reached} {error.unit} or more"
-    return f"{reached} to {decibel(error.bound)} {error.unit}"
+        return f"{reached} or more"
+    return f"{reached} (none above {_bound(error)})"
+
+
+def _bound(error: WorstError) -> str:
+    """The bound to the digits of an error, rounded up."""
+    if error.bound is None:
+        return NONE
+    step = 10.0 ** (math.floor(math.log10(error.bound)) - 2) if error.bound > 0 else 1.0
+    # What rounding alone lifted above a step is not lifted to the next.
+    return decibel(step * math.ceil(error.bound / step - 1e-6))

@@ -23,7 +23,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from synth.circuit import Circuit
 from synth.errors import CircuitError
-from synth.evidence import DB_PER_NEPER
+from synth.evidence import DB_PER_NEPER, response_error
 from synth.worstcase.ascent import climb, follow
 from synth.worstcase.boxes import Pair, Start, at_once, divided
 from synth.worstcase.enclosure import MOST_CORNERS, enclose
@@ -56,6 +56,9 @@ RIDGES = 4
 
 RETURNS = 4
 """Times the board reached is looked at over the whole band, to go on where it is worst."""
+
+NEAR = (-4, -2, -1, 0, 1, 2, 4)
+"""Frequencies beside the worst one that are tried as well, in steps of the grid."""
 
 SEED = 1
 """Of the random boards."""
@@ -98,6 +101,8 @@ def worst_case(
             "expected one value at each of one or more frequencies"
         )
     parts = Parts.of(circuit)
+    if not parts.active.size:
+        return _without_tolerance(parts, target, frequency)
     start = Start.of(parts, 2j * np.pi * frequency)
     found, boxes = {}, 0
     for unit in DIRECTIONS:
@@ -172,8 +177,10 @@ class _Search:
         c = np.array(DIRECTIONS[self.unit], dtype=complex)
         size = np.nan_to_num((c[:, None] * error).real, nan=-np.inf).ravel()
         chosen = _apart(size, np.tile(np.arange(start.s.size), 2))
-        place, sign = chosen % start.s.size, chosen // start.s.size
-        self._climbed(method, place, sign, boards[: chosen.size])
+        near = np.clip(self.place + np.array(NEAR), 0, start.s.size - 1)
+        place = np.append(chosen % start.s.size, near)
+        sign = np.append(chosen // start.s.size, np.full(near.size, self.sign))
+        self._climbed(method, place, sign, np.tile(self.board, (place.size, 1)))
 
     def _climbed(
         self,
@@ -292,6 +299,35 @@ def _apart(likely: Real, place: NDArray[np.intp]) -> NDArray[np.intp]:
         if len(chosen) == CLIMBS:
             break
     return np.array(chosen, dtype=np.intp)
+
+
+def _without_tolerance(parts: Parts, target: Complex, frequency: Real) -> WorstCase:
+    """Of a circuit with one board only."""
+    response = parts.response(
+        np.asarray(2j * np.pi * frequency, dtype=np.complex128), np.empty((frequency.size, 0))
+    )
+    error = response_error(response, target)
+
+    def largest(unit: str, signed: Real) -> WorstError:
+        place = int(np.argmax(np.abs(signed)))
+        return WorstError(
+            unit=unit,
+            reached=abs(float(signed[place])),
+            sign=1 if signed[place] >= 0 else -1,
+            bound=abs(float(signed[place])),
+            frequency_hz=float(frequency[place]),
+            values={},
+            low=(),
+            high=(),
+            between=(),
+        )
+
+    return WorstCase(
+        magnitude_db=largest("dB", error.magnitude_db),
+        phase_deg=largest("deg", error.phase_deg),
+        frequencies=frequency.size,
+        boxes=0,
+    )
 
 
 def _worst_error(search: _Search, bound: float, frequency: Real) -> WorstError:
