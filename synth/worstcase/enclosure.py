@@ -71,14 +71,17 @@ class Enclosure:
     slope
         +1 or -1 where the error rises or falls with a part over the whole box, else 0,
         shape (N, V).
+    best
+        Error of the worst corner, shape (N,); -inf where corners were not gone through.
     corner
-        The end each part takes at the corner that second order prefers, +-1, shape (N, V).
+        The end each part takes there, +-1, shape (N, V).
     doubt
         What each part adds to the distance between the bound and the corner, shape (N, V).
     """
 
     centre: Real
     bound: Real
+    best: Real
     slope: Real
     corner: Real
     doubt: Real
@@ -133,8 +136,9 @@ def _enclosed(
     series = np.minimum(best + leaving.sum(axis=1), spread) + rest
     series = np.where(diverges | np.isnan(series), np.inf, series)
     spread = np.where(diverges | np.isnan(spread), np.inf, spread + rest)
+    reached = np.full(centre.shape, -np.inf)
     if corners and width.shape[1] <= MOST_CORNERS:
-        up, around = _at_corners(x, y, direction)
+        up, around, reached, corner = _at_corners(x, y, direction)
         series, spread = np.minimum(series, up), np.minimum(spread, around)
     bound = centre + series
     # The phase counts modulo a turn: a box that may reach beyond half a turn is not bounded.
@@ -149,9 +153,9 @@ def _enclosed(
     )
     doubt = np.where(width > 0, np.nan_to_num(doubt, nan=1.0, posinf=1e300), -1.0)
     out = [np.zeros_like(tau), np.ones_like(tau), np.full_like(tau, -1.0)]
-    for into, found in zip(out, (slope, np.where(width > 0, corner, 1.0), doubt), strict=True):
+    for into, found in zip(out, (slope, corner, doubt), strict=True):
         np.put_along_axis(into, order, found, axis=1)
-    return Enclosure(centre, bound + ROUNDING * (1 + np.abs(bound)), *out)
+    return Enclosure(centre, bound + ROUNDING * (1 + np.abs(bound)), centre + reached, *out)
 
 
 def _picked(matrix: Complex, order: NDArray[np.intp]) -> Complex:
@@ -210,9 +214,10 @@ def _tail(x: Real, y: Real, power: int) -> tuple[Real, NDArray[np.bool_]]:
     return np.where(diverges[:, None], np.inf, total), diverges
 
 
-def _at_corners(x: Complex, y: Complex, direction: Complex) -> tuple[Real, Real]:
+def _at_corners(x: Complex, y: Complex, direction: Complex) -> tuple[Real, Real, Real, Real]:
     """Largest change of the error from the centre, and of its size either way for the phase,
-    shapes (N,), by the corners of the box; inf where no half-plane was found."""
+    shapes (N,), by the corners of the box; inf where no half-plane was found.  And the change at
+    the worst corner, (N,), with its ends, (N, V)."""
     d, n = _corner_values(x), _corner_values(y)
     magnitude, falls = direction.imag == 0, direction.real < 0
     over, under = np.where(falls[:, None], d, n), np.where(falls[:, None], n, d)
@@ -228,7 +233,11 @@ def _at_corners(x: Complex, y: Complex, direction: Complex) -> tuple[Real, Real]
     held = _in_half_plane(n) & _in_half_plane(d)
     up = np.where(magnitude, np.log(least), np.where(held, high, np.inf))
     around = np.where(magnitude | ~held, np.inf, np.maximum(np.abs(high), np.abs(low)))
-    return np.where(np.isnan(up), np.inf, up), around
+    change = np.where(magnitude[:, None], np.log(size / np.abs(under)), turned.sum(axis=0))
+    change = np.where(np.isfinite(change) & (magnitude | held)[:, None], change, -np.inf)
+    worst = np.argmax(change, axis=1)
+    bits = worst[:, None] >> np.arange(x.shape[1])[::-1] & 1
+    return np.where(np.isnan(up), np.inf, up), around, change.max(axis=1), 2.0 * bits - 1
 
 
 def _in_half_plane(values: Complex) -> NDArray[np.bool_]:

@@ -150,7 +150,17 @@ class _Search:
             slope *= (high - low) / 2 / centre
             error = (c * np.log(self.start.expansion.response / self.target)[place]).real
         likely = np.nan_to_num(error + np.abs(slope).sum(axis=1), nan=0.0)
-        chosen = _apart(likely, place)
+        s = self.start.s[place]
+        step = at_once(low.size * self.start.parts.structure.size)
+        with np.errstate(all="ignore"):
+            there = np.concatenate(
+                [
+                    self.start.parts.response(s[k : k + step], corners[k : k + step])
+                    for k in range(0, s.size, step)
+                ]
+            )
+            actual = np.nan_to_num((c * np.log(there / self.target[place])).real, nan=0.0)
+        chosen = np.append(_apart(likely, place), _apart(actual, place))
         generator = np.random.default_rng(SEED)
         random = generator.uniform(low, high, (CLIMBS, low.size))
         again = chosen[np.arange(CLIMBS) % chosen.size]
@@ -205,6 +215,7 @@ class _Search:
     def bound(self, work: int) -> float:
         """Enclose boxes until bound and reached are close or the work is done [Np], [rad]."""
         self._enclose_whole()
+        before = self.reached
         ranked = [(-pair.total, k) for k, pair in enumerate(self._pairs)]
         heapq.heapify(ranked)
         # A phase error is taken modulo a turn: half a turn is always a bound.
@@ -216,6 +227,8 @@ class _Search:
             work -= self._enclose([self._pairs[k] for k in batch])
             for k in batch:
                 heapq.heappush(ranked, (-self._pairs[k].total, k))
+        if self.reached > before:
+            self._return_to_worst(follow)
         return min(max(self.reached, -ranked[0][0]), most)
 
     def _enclose_whole(self) -> None:
@@ -272,6 +285,8 @@ class _Search:
                 for box in divided(low[j], high[j], found, k):
                     pair.put(group, here, box)
                 pair.note(group, float(found.centre[k]), centre[j])
+                at_corner = np.where(found.corner[k] > 0, high[j], low[j])
+                pair.note(group, float(found.best[k]), at_corner)
                 self._combine(pair)
         self.enclosed += len(pairs)
         return len(pairs) * (BOX_WORK + entries)

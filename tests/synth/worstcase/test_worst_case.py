@@ -66,9 +66,9 @@ def assert_holds(found: WorstCase, circuit: Circuit, values, target, frequency):
         assert error.bound is None or error.reached <= error.bound
         # What is reached is reached by that board, at that frequency, with that sign.
         board = circuit.with_values(error.values)
-        for part in circuit.passives:
-            off = abs(board.by_ref[part.ref].value / part.value - 1)
-            assert off <= part.tolerance * (1 + 1e-9)
+        for one in circuit.passives:
+            off = abs(board.by_ref[one.ref].value / one.value - 1)
+            assert off <= one.tolerance * (1 + 1e-9)
         at = np.flatnonzero(frequency == error.frequency_hz)
         again = response_error(compile_circuit(board).solve(frequency[at]), target[at])
         value = again.magnitude_db if error.unit == "dB" else again.phase_deg
