@@ -174,6 +174,12 @@ def test_bound_and_reached_meet_at_order_four(form, tolerance):
     assert found.magnitude_db.bound <= 1.05 * found.magnitude_db.reached
     assert found.phase_deg.bound <= 1.05 * found.phase_deg.reached
     assert found.magnitude_db.meets and found.phase_deg.meets
+    # Between the frequencies of the grid the worst boards are hardly worse.
+    fine = np.geomspace(*band, 20 * frequency.size)
+    nominal = compile_circuit(circuit).solve(fine)
+    worst = compile_circuit(circuit.with_values(found.magnitude_db.values)).solve(fine)
+    largest = response_error(worst, nominal).largest_db
+    assert largest == pytest.approx(found.magnitude_db.reached, rel=0.01)
     generator = np.random.default_rng(1)
     assert_holds(found, circuit, drawn_values(circuit, 200, generator), wanted, frequency)
 
