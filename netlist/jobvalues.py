@@ -21,6 +21,7 @@ __all__ = [
     "read_band",
     "read_coefficients",
     "read_expression",
+    "read_file_name",
     "read_fixed",
     "read_gain",
     "read_gain_at",
@@ -59,6 +60,17 @@ def read_text(value: object) -> str:
     if not value.isprintable():
         raise JobError(f"got {what_came(value)}, expected one line without control characters")
     return value
+
+
+def read_file_name(value: object) -> str:
+    """The name of a file beside the job."""
+    name = read_text(value)
+    if not name.strip():
+        raise JobError(
+            f"got {what_came(value)}, expected the name of a file; leave the key out where there "
+            "is none"
+        )
+    return name
 
 
 def read_expression(value: object) -> str:

@@ -17,18 +17,20 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.allowance import op_amp_allowance
-from synth.candidates import Sketch, choose_form
+from synth.candidates import Sketch, sketch_form
+from synth.checks import board_checks, loop_of_board, yield_check
 from synth.choosing import DEFAULT_EFFORT, Choice
 from synth.choosing.supply import allotted
 from synth.circuit import Circuit
 from synth.errors import JobError
-from synth.evidence import Check, response_error
+from synth.evidence import response_error
 from synth.grid import judging_frequencies
 from synth.job import Job
-from synth.limits import drifts, swing_checks, swings
-from synth.loop import loop_checks, loop_margins
+from synth.limits import drifts, swings
 from synth.nodal import compile_circuit
-from synth.results import Candidate, Design, LoopResult, NoiseResult, Swing, ToleranceResult
+from synth.noise import output_noise
+from synth.ranking import Mapper, rank_forms
+from synth.results import Candidate, Design, Swing
 from synth.tolerance import error_budget, run_boards
 from synth.values import ValueSearch, level_ratios, wanted_of
 from synth.worstcase import worst_case
@@ -46,16 +48,35 @@ DEFAULT_BOARDS = 1000
 DEFAULT_SEED = 1
 
 
-def compare_forms(job: Job) -> tuple[str, tuple[Candidate, ...]]:
-    """The form `design` would take, and every form considered.
+def compare_forms(
+    job: Job,
+    *,
+    seed: int = DEFAULT_SEED,
+    progress: Progress | None = None,
+    mapper: Mapper | None = None,
+) -> tuple[str, tuple[Candidate, ...]]:
+    """The form `design` would take if the job named none, and every form, the best first.
+
+    Parameters
+    ----------
+    seed, progress, mapper
+        As of `design`.
 
     Raises
     ------
     RealizationError
         No form fits.
     """
-    sketch, candidates = choose_form(job, judging_frequencies(job.target, job.signal.band_hz))
-    return sketch.form, candidates
+    say = progress or (lambda stage, done, total: None)
+    frequency = judging_frequencies(job.target, job.signal.band_hz)
+    ranking = rank_forms(
+        job,
+        frequency,
+        seed=seed,
+        progress=lambda done, total: say("forms", done, total),
+        mapper=mapper,
+    )
+    return ranking.sketch.form, ranking.candidates
 
 
 def design(
@@ -65,6 +86,7 @@ def design(
     seed: int = DEFAULT_SEED,
     effort: int = 1,
     progress: Progress | None = None,
+    mapper: Mapper | None = None,
 ) -> Design:
     """Carry a job through every stage.
 
@@ -78,6 +100,9 @@ def design(
         Multiple of the default work that the search for values is given, at least 1.
     progress
         Called with the stage's name, and how much of how much of it is done.
+    mapper
+        Like ``map``, for the forms to be compared in several processes; see
+        `synth.ranking.rank_forms`.
 
     Raises
     ------
@@ -88,9 +113,18 @@ def design(
         raise JobError(f"got the effort {effort}, expected 1 or more", key="effort")
     say = progress or (lambda stage, done, total: None)
     frequency = judging_frequencies(job.target, job.signal.band_hz)
-    sketch, candidates = choose_form(
-        job, frequency, progress=lambda done, total: say("forms", done, total)
-    )
+    if job.board.form == "auto":
+        ranking = rank_forms(
+            job,
+            frequency,
+            seed=seed,
+            progress=lambda done, total: say("forms", done, total),
+            mapper=mapper,
+        )
+        sketch, candidates = ranking.sketch, ranking.candidates
+    else:
+        sketch = sketch_form(job, job.board.form, frequency)
+        candidates = (sketch.candidate,)
     response = wanted_of(sketch, job).response(frequency)
     search = ValueSearch(sketch, job, response, frequency, seed, effort * DEFAULT_EFFORT)
     choice, unaware = search.both(say)
@@ -135,7 +169,7 @@ def judged_design(
     worst = worst_case(circuit, response, frequency)
     progress("limits", 0, 1)
     swing = swings(circuit, wanted, job)
-    loop = _loop(job, circuit, inverted=sketch.polarity.output_inverted)
+    loop = loop_of_board(job, circuit, inverted=sketch.polarity.output_inverted)
     nominal = response_error(program.solve(frequency), response)
     return Design(
         job=job,
@@ -148,45 +182,17 @@ def judged_design(
         nominal=nominal,
         nearest=response_error(compile_circuit(choice.nearest).solve(frequency), response),
         tolerance=tolerance,
-        noise=_noise(circuit, frequency),
+        noise=output_noise(circuit, frequency),
         swings=swing,
         drifts=drifts(circuit),
         candidates=candidates,
-        checks=_checks(job, circuit, tolerance, swing, loop),
+        checks=(yield_check(tolerance, job), *board_checks(job, circuit, swing, loop)),
         offset=_offset(circuit),
         certificate=choice.certificate,
         budget=error_budget(program, circuit, nominal, frequency, accept=job.accept, seed=seed),
         worst=worst,
         loop=loop,
-        notices=(*job.notices, *choice.notices, *_notices(circuit, job, swing)),
-    )
-
-
-def _checks(
-    job: Job,
-    circuit: Circuit,
-    tolerance: ToleranceResult,
-    swing: tuple[Swing, ...],
-    loop: LoopResult | None,
-) -> tuple[Check, ...]:
-    """Every predicted line of the verdict."""
-    names = {c.amplifier: _cell_name(circuit, c.amplifier) for c in circuit.cells}
-    return (
-        _yield_check(tolerance, job),
-        *(loop_checks(job.loop, loop.nominal) if job.loop and loop else ()),
-        *swing_checks(swing, names),
-    )
-
-
-def _loop(job: Job, circuit: Circuit, *, inverted: bool) -> LoopResult | None:
-    """Margins of the job's loop; an inverted board is taken to be inverted once more."""
-    if job.loop is None:
-        return None
-    program = compile_circuit(circuit)
-    sign = -1.0 if inverted else 1.0
-    return LoopResult(
-        target=loop_margins(job.loop, job.target),
-        nominal=loop_margins(job.loop, job.target, lambda f: sign * program.solve(f)),
+        notices=(*job.notices, *sketch.notices, *choice.notices, *_notices(circuit, job, swing)),
     )
 
 
@@ -221,39 +227,9 @@ def _notices(circuit: Circuit, job: Job, swing: tuple[Swing, ...]) -> tuple[str,
     return tuple(said)
 
 
-def _cell_name(circuit: Circuit, amplifier: str) -> str:
-    cell = circuit.cell_of(amplifier)
-    if cell is None:
-        return amplifier
-    return f"inverter of {cell.block}" if cell.kind == "inverter" else cell.block
-
-
-def _yield_check(tolerance: ToleranceResult, job: Job) -> Check:
-    limit = job.accept.yield_share
-    note = (
-        f"{tolerance.passed} of {tolerance.boards} boards, "
-        f"{100 * tolerance.low:.1f} to {100 * tolerance.high:.1f} % at "
-        f"{100 * tolerance.confidence:.0f} % confidence"
-    )
-    percent = 100 * tolerance.share
-    return Check.at_least("yield", percent, None if limit is None else 100 * limit, "%", note)
-
-
 def _offset(circuit: Circuit) -> float | None:
     """Largest offset of the output [V], None where it drifts instead."""
     if drifts(circuit):
         return None
     found = compile_circuit(circuit).dc_offsets()
     return float(found.worst[found.nets.index(circuit.output_net)])
-
-
-def _noise(circuit: Circuit, frequency_hz: Real) -> NoiseResult:
-    found = compile_circuit(circuit).noise(frequency_hz)
-    power = float(np.trapezoid(found.total, frequency_hz))
-    shares = np.asarray(np.trapezoid(found.power, frequency_hz, axis=0) / power)
-    return NoiseResult(
-        frequency_hz=frequency_hz,
-        density=found.density,
-        output_rms=float(np.sqrt(power)),
-        shares=dict(zip(found.refs, shares.tolist(), strict=True)),
-    )

@@ -26,6 +26,7 @@ __all__ = [
     "Drift",
     "ErrorBudget",
     "ErrorFigures",
+    "FormFigures",
     "LoopResult",
     "NoiseResult",
     "OpAmpAllowance",
@@ -141,6 +142,11 @@ class ErrorFigures:
     largest_db: float
     largest_deg: float
 
+    @classmethod
+    def of(cls, error: ResponseError) -> ErrorFigures:
+        """From the error over frequency."""
+        return cls(rms=error.rms, largest_db=error.largest_db, largest_deg=error.largest_deg)
+
 
 @dataclass(frozen=True, kw_only=True)
 class OpAmpAllowance:
@@ -240,12 +246,63 @@ class ErrorBudget:
 
 
 @dataclass(frozen=True, kw_only=True)
+class FormFigures:
+    """What a form comes to with standard values.
+
+    Parameters
+    ----------
+    resistors, capacitors
+        How many are bought.
+    value_ratio
+        Largest over smallest value of a kind, resistors or capacitors, the larger of the two.
+    nominal
+        Error of the nominal board.
+    boards, passed, low, high
+        The run of boards, as in `ToleranceResult`.
+    error_95_db
+        95th percentile over boards of the largest dB error over the band.
+    noise_rms
+        At the output over the band [V].
+    dynamic_range_db
+        Largest sine at the output before any op-amp output meets its limit, rms, over the noise.
+    peak, hottest
+        Largest peak among the op-amp outputs at the stated input [V], and which op-amp has it.
+    gain_bandwidth_needed
+        Smallest with which the nominal board keeps its limits [Hz]; None where none does.
+    missed
+        What the nominal board misses, in words; empty where it keeps every limit.
+    """
+
+    resistors: int
+    capacitors: int
+    value_ratio: float
+    nominal: ErrorFigures
+    boards: int
+    passed: int
+    low: float
+    high: float
+    error_95_db: float
+    noise_rms: float
+    dynamic_range_db: float
+    peak: float
+    hottest: str
+    gain_bandwidth_needed: float | None
+    missed: tuple[str, ...] = ()
+
+    @property
+    def share(self) -> float:
+        """Share of the boards that pass, a ratio."""
+        return self.passed / self.boards
+
+
+@dataclass(frozen=True, kw_only=True)
 class Candidate:
     """A form that was considered.
 
     `spread_db` and `spread_deg` are the predicted spreads of magnitude and phase from part
     tolerance (one standard deviation, largest over the band) [dB], [deg]; None with a
-    `reason` where the form could not be built.
+    `reason` where the form could not be built.  `figures` is there where its values were
+    chosen; `verdict` is then ``"pass"`` or ``"fail"``, and `reason` says why it was not taken.
     """
 
     form: str
@@ -254,6 +311,8 @@ class Candidate:
     spread_db: float | None
     spread_deg: float | None
     reason: str = ""
+    figures: FormFigures | None = None
+    verdict: str = ""
 
 
 @dataclass(frozen=True, kw_only=True)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import sys
+import textwrap
 from collections.abc import Iterable, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -14,9 +15,10 @@ from netlist.cli.running import say
 from netlist.partslist import packages
 from netlist.records import all_checks, verdict_of
 from netlist.report.changes import change_errors, change_rows
+from netlist.report.choice import proof_line
 from netlist.report.found import check_rows, form_rows
 from netlist.report.page import LOW_YIELD
-from netlist.report.wording import percent, spelled, stated
+from netlist.report.wording import percent, stated
 from netlist.report.worst import worst_line
 from synth.results import Candidate, Design
 
@@ -24,6 +26,9 @@ if TYPE_CHECKING:
     from netlist.verification import Verification
 
 __all__ = ["EXIT_CODES", "forms_table", "summary", "warn"]
+
+WIDTH = 96
+"""Characters in a line of a paragraph."""
 
 EXIT_CODES = {"pass": 0, "fail": 1, "unverified": 3}
 _COLOURS = {"pass": "green", "fail": "red", "unverified": "yellow"}
@@ -39,7 +44,7 @@ def summary(design: Design, verification: Verification, *, folder: Path) -> str:
     facts = (
         ("verdict", _coloured(outcome.upper(), _COLOURS[outcome])
          + f", {percent(run.share, 4)} of boards within limits"),
-        ("form", spelled(design.form) + (", output inverted" if design.inverted else "")),
+        ("form", design.form + (", output inverted" if design.inverted else "")),
         ("op-amps", f"{len(circuit.amplifiers)} in {_counted(len(chips), 'package')}"),
         ("parts", f"{_counted(kinds.count('resistor'), 'resistor')}, "
          f"{_counted(kinds.count('capacitor'), 'capacitor')}"),
@@ -64,22 +69,39 @@ def summary(design: Design, verification: Verification, *, folder: Path) -> str:
     return _plain_spaces("\n".join(lines) + "\n")
 
 
+FORM_COLUMNS = {
+    "form": "form",
+    "op_amps": "op-amps",
+    "packages": "packages",
+    "resistors": "R",
+    "capacitors": "C",
+    "ratio": "ratio",
+    "nominal": "nominal",
+    "yield": "yield",
+    "interval": "95 % confidence",
+    "error_95": "95th pct",
+    "noise": "noise",
+    "range": "range",
+    "peak": "peak",
+    "bandwidth": "GBW needed",
+    "verdict": "verdict",
+}
+
+
 def forms_table(chosen: str, candidates: Iterable[Candidate]) -> str:
-    """The forms side by side."""
-    rows = [
-        (
-            str(r["form"]),
-            "yes" if r["possible"] else "no",
-            str(r["op_amps"]),
-            str(r["spread_db"]),
-            str(r["spread_deg"]),
-            "chosen" if r["chosen"] else "",
-            str(r["reason"]),
-        )
-        for r in form_rows(candidates, chosen)
-    ]
-    header = ("form", "possible", "op-amps", "spread, dB", "spread, deg", "", "reason")
-    return _plain_spaces("\n".join(_table(header, rows)) + "\n")
+    """The forms side by side, then the one to take and why not each other one."""
+    rows = form_rows(candidates, chosen)
+    shown = [[str(r[key]) for key in FORM_COLUMNS] for r in rows if r["possible"]]
+    width = max(len(str(r["form"])) for r in rows)
+    lines = _table(tuple(FORM_COLUMNS.values()), shown)
+    lines += ["", f"  {chosen.ljust(width)}  chosen"]
+    for row in rows:
+        if not row["chosen"]:
+            words = "" if row["possible"] else "not possible: "
+            lines.append(
+                f"  {str(row['form']).ljust(width)}  {words}{_printable(str(row['reason']))}"
+            )
+    return _plain_spaces("\n".join(lines) + "\n")
 
 
 def warn(design: Design, verification: Verification) -> None:
@@ -107,7 +129,16 @@ def _repicked(design: Design) -> list[str]:
         *_table(("changed", "from", "to", "by", "sets"), rows),
         "",
         *_table(("nominal error", "before", "after"), errors),
+        *_proof(design),
     ]
+
+
+def _proof(design: Design) -> list[str]:
+    """How good the choice is against any other of the parts that were free, as a paragraph."""
+    if design.certificate is None:
+        return []
+    text = _plain_spaces(proof_line(design.certificate, design.circuit))
+    return ["", *(f"  {line}" for line in textwrap.wrap(text, WIDTH))]
 
 
 def _table(header: Sequence[str], rows: Sequence[Sequence[str]]) -> list[str]:
