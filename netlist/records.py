@@ -22,6 +22,7 @@ from typing import TYPE_CHECKING, TypeAlias
 
 from synth.evidence import Check, ResponseError, verdict
 from synth.results import Candidate, Design, ErrorFigures, ToleranceResult
+from synth.worstcase import WorstError
 
 if TYPE_CHECKING:
     from netlist.verification import Verification
@@ -88,6 +89,7 @@ def design_record(design: Design, verification: Verification) -> dict[str, Json]
         **_choice(design),
         **_allowance(design),
         **_budget(design),
+        **_worst(design),
         "noise": {
             "band_hz": list(job.signal.band_hz),
             "output_rms_v": design.noise.output_rms,
@@ -292,6 +294,34 @@ def _budget(design: Design) -> dict[str, object]:
     record["tighter_part"], record["tighter_kinds"] = record.pop("part"), record.pop("kinds")
     record |= {"values_share": found.values_share, "tolerance_share": found.tolerance_share}
     return {"budget": record}
+
+
+def _worst(design: Design) -> dict[str, object]:
+    """The worst board within tolerance: what is reached, and what none can pass."""
+    found = design.worst
+    if found is None:
+        return {}
+    return {
+        "worst_case": {
+            "magnitude_db": _worst_error(found.magnitude_db),
+            "phase_deg": _worst_error(found.phase_deg),
+            "frequencies": found.frequencies,
+        }
+    }
+
+
+def _worst_error(error: WorstError) -> dict[str, object]:
+    return {
+        "reached": error.reached,
+        "bound": error.bound,
+        "meet": error.meets,
+        "sign": error.sign,
+        "frequency_hz": error.frequency_hz,
+        "values": error.values,
+        "at_low_end": list(error.low),
+        "at_high_end": list(error.high),
+        "between": list(error.between),
+    }
 
 
 def _loop(design: Design) -> dict[str, object]:

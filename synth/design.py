@@ -3,7 +3,7 @@
 ::
 
     Job -> target -> form -> block graph -> signs -> levels -> circuit -> standard values
-        -> tolerance, noise, swing, drift -> Design
+        -> tolerance, worst case, noise, swing, drift -> Design
 
 Everything here is computed; the simulator's opinion is asked for outside.
 """
@@ -33,6 +33,7 @@ from synth.ranking import Mapper, rank_forms
 from synth.results import Candidate, Design, Swing
 from synth.tolerance import error_budget, run_boards
 from synth.values import ValueSearch, level_ratios, wanted_of
+from synth.worstcase import worst_case
 
 __all__ = ["DEFAULT_BOARDS", "DEFAULT_SEED", "compare_forms", "design", "judged_design"]
 
@@ -165,6 +166,8 @@ def judged_design(
         population=job.board.population,
         progress=lambda done, total: progress("boards", done, total),
     )
+    progress("worst case", 0, 1)
+    worst = worst_case(circuit, response, frequency)
     progress("limits", 0, 1)
     swing = swings(circuit, wanted, job)
     loop = loop_of_board(job, circuit, inverted=sketch.polarity.output_inverted)
@@ -188,6 +191,7 @@ def judged_design(
         offset=_offset(circuit),
         certificate=choice.certificate,
         budget=error_budget(program, circuit, nominal, frequency, accept=job.accept, seed=seed),
+        worst=worst,
         loop=loop,
         notices=(*job.notices, *sketch.notices, *choice.notices, *_notices(circuit, job, swing)),
     )

@@ -19,6 +19,7 @@ from synth.job import Job
 from synth.loop import LoopMargins
 from synth.shortages import Repick
 from synth.transfer import TransferFunction
+from synth.worstcase import WorstCase
 
 __all__ = [
     "Candidate",
@@ -313,6 +314,8 @@ class Design:
         What it brings that values are chosen for the job's op-amps.
     budget
         What of the error is the choice of values and what is tolerance.
+    worst
+        The worst board within tolerance, and what none can pass.
     effort
         Multiple of the default work that the search for values was given.
     loop
@@ -346,6 +349,7 @@ class Design:
     certificate: Certificate | None = None
     allowance: OpAmpAllowance | None = None
     budget: ErrorBudget | None = None
+    worst: WorstCase | None = None
     effort: int = 1
     loop: LoopResult | None = None
     notices: tuple[str, ...] = field(default=())

@@ -1,9 +1,9 @@
 """The benchmark: speed, memory and quality of values, as one table.
 
 ``sh tests/run bench`` prints it; ``python -m tests.bench values`` one part alone (parts:
-commands, engine, memory, coverage, ranking, values).  Nothing here passes or fails: the aims
-stand beside the figures.  Ratios are taken within one run, so that a slow or busy machine does
-not blur them.
+commands, engine, memory, coverage, ranking, values, worst).  Nothing here passes or fails: the
+aims stand beside the figures.  Ratios are taken within one run, so that a slow or busy machine
+does not blur them.
 """
 
 from __future__ import annotations
@@ -28,10 +28,12 @@ from synth.choosing import choose_values
 from synth.design import compare_forms
 from synth.evidence import response_error
 from synth.forms import FORMS
+from synth.grid import judging_frequencies
 from synth.job import Accept
 from synth.nodal import compile_circuit
 from synth.population import PartSpread, Population
 from synth.tolerance import run_boards
+from synth.worstcase import worst_case
 from tests.bench_nodal import bench as bench_engine
 from tests.forms import exists
 from tests.jobs import capacitor_rule, job_for, resistor_rule
@@ -194,6 +196,27 @@ def values() -> Iterator[Row]:
                     yield _best_row(min(found, key=lambda c: c.rms), TRIAL[series][order])
 
 
+def worst() -> Iterator[Row]:
+    """The worst case within tolerance: time, and how much the bound is above what is reached;
+    Butterworth at 1 kHz, 100 Hz to 2 kHz, resistors 1 %, capacitors 5 %."""
+    band = (100.0, 2e3)
+    for order in (2, 3, 4, 6):
+        target = butterworth(order, 1e3)
+        frequency = judging_frequencies(target, band)
+        for form in ("cascade", "controllable"):
+            circuit = sketch_form(job_for(target, band), form, frequency).circuit
+            response = compile_circuit(circuit).solve(frequency)
+            start = time.perf_counter()
+            found = worst_case(circuit, response, frequency)
+            seconds = time.perf_counter() - start
+            name = f"worst case, order {order}, {form}"
+            yield f"{name}: time", f"{seconds:.2f} s", "10 s" if order == 4 else ""
+            for error in (found.magnitude_db, found.phase_deg):
+                over = "none" if error.bound is None else f"{error.bound / error.reached - 1:.1%}"
+                aim = "5 %" if order <= 4 else ""
+                yield f"{name}: bound over {error.reached:.3g} {error.unit}", over, aim
+
+
 @dataclass(frozen=True, kw_only=True)
 class _Chosen:
     """One choice of values: errors in percent, time in seconds."""
@@ -289,6 +312,7 @@ PARTS: Mapping[str, Callable[[], Iterator[Row]]] = {
     "coverage": coverage,
     "ranking": ranking,
     "values": values,
+    "worst": worst,
 }
 
 

@@ -19,6 +19,7 @@ from netlist.report.choice import proof_line
 from netlist.report.found import check_rows, form_rows
 from netlist.report.page import LOW_YIELD
 from netlist.report.wording import percent, stated
+from netlist.report.worst import worst_line
 from synth.results import Candidate, Design
 
 if TYPE_CHECKING:
@@ -50,6 +51,7 @@ def summary(design: Design, verification: Verification, *, folder: Path) -> str:
         ("yield", f"{run.passed} of {run.boards} boards, "
          f"{percent(run.low, 4)} to {percent(run.high, 4)} at {stated(run.confidence, '%')} "
          f"confidence{limit}"),
+        *((("worst", worst_line(design.worst)),) if design.worst else ()),
     )  # fmt: skip
     rows = [
         (str(r["name"]), str(r["limit"]), str(r["value"]), str(r["result"]), str(r["note"]))

@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING
 
 from netlist.partslist import PartLine, packages
 from netlist.records import all_checks, verdict_of
-from netlist.report import asked, boards, changes, choice, found, wording
+from netlist.report import asked, boards, changes, choice, found, wording, worst
 from netlist.svg import prefix_ids
 from synth.evidence import Check
 from synth.ranking import RANKED_BOARDS
@@ -89,6 +89,7 @@ def report_page(
             swings=found.swing_rows(design.swings, design.circuit),
             values=found.value_rows(design.circuit),
             choice=choice.shown(design),
+            worst=worst.shown(design),
             loop=found.loop_rows(design.loop),
             noise_parts=found.largest_noise(design),
             drifts=found.drift_rows(design.drifts),

@@ -198,7 +198,7 @@ def test_progress_is_told_stage_by_stage() -> None:
         progress=lambda stage, done, total: told.append((stage, done, total)),
     )
     stages = list(dict.fromkeys(stage for stage, _, _ in told))
-    assert stages == ["forms", "values", "boards", "limits"]
+    assert stages == ["forms", "values", "boards", "worst case", "limits"]
     assert all(0 <= done <= total for _, done, total in told)
 
 

@@ -1,0 +1,373 @@
+"""The worst board of all: climbs for what is reached, branch and bound for what cannot be passed.
+
+Parts that share no term of numerator or denominator do so in groups (`synth.worstcase.groups`):
+ln H is a sum over groups, and so are its bounds.  Every pair of a frequency and a sign of the
+error starts with the whole box of each group.  Of the pair with the highest sum of bounds, the
+group whose bound is farthest from what it is known to reach is taken up: parts with a slope of one
+sign over the whole box are set to the end that is worse, otherwise the part that adds most to the
+doubt is cut in half.  The search is done once no sum is more than `CLOSE` above what is reached.
+When the work is used up, the highest sum still holds; it is just wider.
+
+Errors are taken at the given frequencies alone; between two of them the bound says nothing.  On
+the grid of `synth.grid`, eight points across the sharpest resonance, the worst boards of the
+scenarios show at most 0.7 % more between its points than on them.
+"""
+
+from __future__ import annotations
+
+import heapq
+import math
+from collections.abc import Callable
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from synth.circuit import Circuit
+from synth.errors import CircuitError
+from synth.evidence import DB_PER_NEPER, response_error
+from synth.worstcase.ascent import climb, follow
+from synth.worstcase.boxes import Pair, Start, at_once, divided
+from synth.worstcase.enclosure import MOST_CORNERS, enclose
+from synth.worstcase.expansion import Expansion, Parts
+from synth.worstcase.result import WorstCase, WorstError
+
+__all__ = ["DEFAULT_WORK", "worst_case"]
+
+Real = NDArray[np.float64]
+Complex = NDArray[np.complex128]
+Climb = Callable[..., tuple[Real, Real]]
+
+DEFAULT_WORK = 2_000_000
+"""Work for the bound of each of magnitude and phase, in entries of arrays: a second at most."""
+
+BOX_WORK = 600
+"""Work of a box beside its arrays."""
+
+CLOSE = 0.02
+"""Relative distance of bound and reached at which the search is done."""
+
+BATCH = 64
+"""Boxes enclosed at once."""
+
+CLIMBS = 6
+"""Climbs from first-order corners, at different frequencies, and as many from random boards."""
+
+RIDGES = 4
+"""Boards from which ridges are followed."""
+
+RETURNS = 4
+"""Times the board reached is looked at over the whole band, to go on where it is worst."""
+
+NEAR = (-4, -2, -1, 0, 1, 2, 4)
+"""Frequencies beside the worst one that are tried as well, in steps of the grid."""
+
+SEED = 1
+"""Of the random boards."""
+
+DIRECTIONS = {"dB": (1.0, -1.0), "deg": (-1.0j, 1.0j)}
+
+
+def worst_case(
+    circuit: Circuit,
+    target_response: ArrayLike,
+    frequency_hz: ArrayLike,
+    *,
+    work: int = DEFAULT_WORK,
+) -> WorstCase:
+    """Largest errors of magnitude and phase over all boards within tolerance.
+
+    Parameters
+    ----------
+    circuit
+        Values and tolerances; parts without a tolerance and op-amps stay as they are.
+    target_response
+        What the output should show, complex, shape (F,).
+    frequency_hz
+        Where it is compared [Hz], shape (F,).
+    work
+        See `DEFAULT_WORK`; the bound is valid whatever it is.
+
+    Raises
+    ------
+    CircuitError
+        A target of another shape.
+    NumericalError
+        The equations are singular on a board.
+    """
+    frequency = np.asarray(frequency_hz, dtype=float)
+    target = np.asarray(target_response, dtype=complex)
+    if frequency.ndim != 1 or not frequency.size or target.shape != frequency.shape:
+        raise CircuitError(
+            f"got a target of shape {target.shape} at frequencies of shape {frequency.shape}, "
+            "expected one value at each of one or more frequencies"
+        )
+    parts = Parts.of(circuit)
+    if not parts.active.size:
+        return _without_tolerance(parts, target, frequency)
+    start = Start.of(parts, 2j * np.pi * frequency)
+    found, boxes = {}, 0
+    for unit in DIRECTIONS:
+        search = _Search(start, target, unit)
+        search.climb()
+        bound = search.bound(work)
+        found[unit] = _worst_error(search, bound, frequency)
+        boxes += search.enclosed
+    return WorstCase(
+        magnitude_db=found["dB"],
+        phase_deg=found["deg"],
+        frequencies=frequency.size,
+        boxes=boxes,
+    )
+
+
+@dataclass(eq=False)
+class _Search:
+    """Search for the largest error of one kind; errors in [Np] or [rad] until they leave."""
+
+    start: Start
+    target: Complex
+    unit: str
+    reached: float = -math.inf
+    board: Real = field(default_factory=lambda: np.zeros(0))
+    place: int = 0
+    sign: int = 0
+    enclosed: int = 0
+    _pairs: list[Pair] = field(default_factory=list)
+
+    def climb(self) -> None:
+        """Set `reached` by climbs from the corners of first order and from random boards."""
+        low, high = self.start.box
+        count, centre = self.start.s.size, (low + high) / 2
+        x, y = (
+            np.diagonal(m, axis1=1, axis2=2)
+            for m in (self.start.expansion.denominator, self.start.expansion.numerator)
+        )
+        sign = np.repeat([0, 1], count)
+        place = np.tile(np.arange(count), 2)
+        c = np.array(DIRECTIONS[self.unit])[sign]
+        with np.errstate(all="ignore"):
+            slope = (c[:, None] * (y - x)[place]).real
+            corners = np.where(slope > 0, high, low)
+            slope *= (high - low) / 2 / centre
+            error = (c * np.log(self.start.expansion.response / self.target)[place]).real
+        likely = np.nan_to_num(error + np.abs(slope).sum(axis=1), nan=0.0)
+        s = self.start.s[place]
+        step = at_once(low.size * self.start.parts.structure.size)
+        with np.errstate(all="ignore"):
+            there = np.concatenate(
+                [
+                    self.start.parts.response(s[k : k + step], corners[k : k + step])
+                    for k in range(0, s.size, step)
+                ]
+            )
+            actual = np.nan_to_num((c * np.log(there / self.target[place])).real, nan=0.0)
+        chosen = np.append(_apart(likely, place), _apart(actual, place))
+        generator = np.random.default_rng(SEED)
+        random = generator.uniform(low, high, (CLIMBS, low.size))
+        again = chosen[np.arange(CLIMBS) % chosen.size]
+        chosen, boards = np.append(chosen, again), np.vstack([corners[chosen], random])
+        place, sign = place[chosen], sign[chosen]
+        error, boards = self._climbed(climb, place, sign, boards)
+        # At a corner that climbs end in, all slopes point outward; ridges lead elsewhere.
+        inside = np.flatnonzero(((boards > low) & (boards < high)).any(axis=1))
+        best = inside[np.argsort(-error[inside], kind="stable")[:RIDGES]]
+        if best.size:
+            self._climbed(follow, place[best], sign[best], boards[best])
+        for _ in range(RETURNS):
+            before = self.reached
+            self._return_to_worst(follow if best.size else climb)
+            if not self.reached > before * (1 + CLOSE / 10):
+                break
+
+    def _return_to_worst(self, method: Climb) -> None:
+        """Go on from the board reached, at the frequencies where it is worst."""
+        start = self.start
+        boards = np.tile(self.board, (start.s.size, 1))
+        with np.errstate(all="ignore"):
+            error = np.log(start.parts.response(start.s, boards) / self.target)
+        c = np.array(DIRECTIONS[self.unit], dtype=complex)
+        size = np.nan_to_num((c[:, None] * error).real, nan=-np.inf).ravel()
+        chosen = _apart(size, np.tile(np.arange(start.s.size), 2))
+        near = np.clip(self.place + np.array(NEAR), 0, start.s.size - 1)
+        place = np.append(chosen % start.s.size, near)
+        sign = np.append(chosen // start.s.size, np.full(near.size, self.sign))
+        self._climbed(method, place, sign, np.tile(self.board, (place.size, 1)))
+
+    def _climbed(
+        self,
+        method: Climb,
+        place: NDArray[np.intp],
+        sign: NDArray[np.intp],
+        boards: Real,
+    ) -> tuple[Real, Real]:
+        c = np.array(DIRECTIONS[self.unit], dtype=complex)[sign]
+        found = method(self.start.parts, self.start.s[place], self.target[place], c, boards)
+        self._note(found[0], place, sign, found[1])
+        return found
+
+    def _note(
+        self, error: Real, place: NDArray[np.intp], sign: NDArray[np.intp], boards: Real
+    ) -> None:
+        best = int(np.argmax(np.nan_to_num(error, nan=-np.inf)))
+        if error[best] > self.reached:
+            self.reached, self.board = float(error[best]), boards[best]
+            self.place, self.sign = int(place[best]), int(sign[best])
+
+    def bound(self, work: int) -> float:
+        """Enclose boxes until bound and reached are close or the work is done [Np], [rad]."""
+        self._enclose_whole()
+        before = self.reached
+        ranked = [(-pair.total, k) for k, pair in enumerate(self._pairs)]
+        heapq.heapify(ranked)
+        # A phase error is taken modulo a turn: half a turn is always a bound.
+        most = math.pi if self.unit == "deg" else math.inf
+        while min(-ranked[0][0], most) > (1 + CLOSE) * self.reached and work > 0:
+            batch = [heapq.heappop(ranked)[1]]
+            while ranked and len(batch) < BATCH and -ranked[0][0] > (1 + CLOSE) * self.reached:
+                batch.append(heapq.heappop(ranked)[1])
+            work -= self._enclose([self._pairs[k] for k in batch])
+            for k in batch:
+                heapq.heappush(ranked, (-self._pairs[k].total, k))
+        if self.reached > before:
+            self._return_to_worst(follow)
+        return min(max(self.reached, -ranked[0][0]), most)
+
+    def _enclose_whole(self) -> None:
+        """The whole box of every group at every frequency, both ways."""
+        start = self.start
+        low, high = start.box
+        count, own = start.s.size, start.expansion
+        step = at_once(low.size**2)
+        for sign, c in enumerate(DIRECTIONS[self.unit]):
+            with np.errstate(all="ignore"):
+                offset = (c * np.log(own.response / self.target)).real
+            bounds = np.empty((count, len(start.groups)))
+            for first in range(0, count, step):
+                kept = slice(first, first + step)
+                part = Expansion(own.response[kept], own.denominator[kept], own.numerator[kept])
+                size = part.response.size
+                for g, group in enumerate(start.groups):
+                    tau = np.zeros((size, low.size))
+                    tau[:, group] = ((high - low) / (high + low))[group]
+                    found = enclose(
+                        part, part.response, np.full(size, c), tau, cubic=False, corners=False
+                    )
+                    bounds[kept, g] = found.bound
+            self._pairs += [
+                Pair(k, sign, float(offset[k]), start, bounds[k].tolist()) for k in range(count)
+            ]
+
+    def _enclose(self, pairs: list[Pair]) -> int:
+        """Take up the most doubtful box of each pair; the work it took."""
+        start = self.start
+        taken = [pair.take() for pair in pairs]
+        place = np.array([pair.place for pair in pairs])
+        low = np.stack([box[0] for _, _, box in taken])
+        high = np.stack([box[1] for _, _, box in taken])
+        c = np.array(DIRECTIONS[self.unit], dtype=complex)[[pair.sign for pair in pairs]]
+        centre = (low + high) / 2
+        widest = int((high > low).sum(axis=1).max())
+        entries = max(widest**3, 2**widest if widest <= MOST_CORNERS else 0)
+        step = at_once(entries)
+        for first in range(0, len(pairs), step):
+            kept = slice(first, first + step)
+            expansion = start.parts.expand(start.s[place[kept]], centre[kept])
+            found = enclose(
+                expansion,
+                start.expansion.response[place[kept]],
+                c[kept],
+                ((high - low) / (high + low))[kept],
+            )
+            for k, (pair, (group, bound, _)) in enumerate(
+                zip(pairs[kept], taken[kept], strict=True)
+            ):
+                here = min(bound, float(found.bound[k]))
+                j = first + k
+                for box in divided(low[j], high[j], found, k):
+                    pair.put(group, here, box)
+                pair.note(group, float(found.centre[k]), centre[j])
+                at_corner = np.where(found.corner[k] > 0, high[j], low[j])
+                pair.note(group, float(found.best[k]), at_corner)
+                self._combine(pair)
+        self.enclosed += len(pairs)
+        return len(pairs) * (BOX_WORK + entries)
+
+    def _combine(self, pair: Pair) -> None:
+        """Note the board that is put together of the best of every group."""
+        best = pair.offset + sum(pair.best)
+        if not self.reached < best <= (math.inf if self.unit == "dB" else math.pi):
+            return
+        low, high = self.start.box
+        board = (low + high) / 2
+        for group, own in zip(self.start.groups, pair.boards, strict=True):
+            board[group] = own[group]
+        self.reached, self.board = best, board
+        self.place, self.sign = pair.place, pair.sign
+
+
+def _apart(likely: Real, place: NDArray[np.intp]) -> NDArray[np.intp]:
+    """The likeliest places to start from, no two next to each other."""
+    distance = max(1, int(place.max()) // 50)
+    chosen: list[int] = []
+    for k in np.argsort(-likely, kind="stable"):
+        if all(abs(place[k] - place[j]) > distance for j in chosen):
+            chosen.append(int(k))
+        if len(chosen) == CLIMBS:
+            break
+    return np.array(chosen, dtype=np.intp)
+
+
+def _without_tolerance(parts: Parts, target: Complex, frequency: Real) -> WorstCase:
+    """Of a circuit with one board only."""
+    response = parts.response(
+        np.asarray(2j * np.pi * frequency, dtype=np.complex128), np.empty((frequency.size, 0))
+    )
+    error = response_error(response, target)
+
+    def largest(unit: str, signed: Real) -> WorstError:
+        place = int(np.argmax(np.abs(signed)))
+        return WorstError(
+            unit=unit,
+            reached=abs(float(signed[place])),
+            sign=1 if signed[place] >= 0 else -1,
+            bound=abs(float(signed[place])),
+            frequency_hz=float(frequency[place]),
+            values={},
+            low=(),
+            high=(),
+            between=(),
+        )
+
+    return WorstCase(
+        magnitude_db=largest("dB", error.magnitude_db),
+        phase_deg=largest("deg", error.phase_deg),
+        frequencies=frequency.size,
+        boxes=0,
+    )
+
+
+def _worst_error(search: _Search, bound: float, frequency: Real) -> WorstError:
+    parts, (low, high) = search.start.parts, search.start.box
+    scale = DB_PER_NEPER if search.unit == "dB" else 180 / np.pi
+    columns = parts.varied
+    refs = [parts.structure.refs[k] for k in columns]
+    values, lowest, highest = (parts.values(m)[columns] for m in (search.board, low, high))
+    smallest, largest = np.minimum(lowest, highest), np.maximum(lowest, highest)
+    at_low = np.isclose(values, smallest, rtol=1e-9, atol=0.0)
+    at_high = np.isclose(values, largest, rtol=1e-9, atol=0.0)
+
+    def named(which: NDArray[np.bool_]) -> tuple[str, ...]:
+        return tuple(ref for ref, is_so in zip(refs, which, strict=True) if is_so)
+
+    return WorstError(
+        unit=search.unit,
+        reached=float(scale * max(search.reached, 0.0)),
+        sign=1 if search.sign == 0 else -1,
+        bound=float(scale * max(bound, 0.0)) if math.isfinite(bound) else None,
+        frequency_hz=float(frequency[search.place]),
+        values=dict(zip(refs, values.tolist(), strict=True)),
+        low=named(at_low),
+        high=named(at_high),
+        between=named(~at_low & ~at_high),
+    )

@@ -1,0 +1,87 @@
+"""The worst board within tolerance: ngspice on that very board, and what pack and page say."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import numpy as np
+import pytest
+
+from netlist.deck import board_deck
+from netlist.records import design_record
+from netlist.report.worst import shown, worst_line, worst_sentence
+from synth.evidence import response_error
+from synth.worstcase import WorstError, worst_case
+from tests.netlist import boards
+
+MADE = boards.design()
+WORST = worst_case(MADE.circuit, MADE.wanted.response(MADE.frequency_hz), MADE.frequency_hz)
+DESIGN = replace(MADE, worst=WORST)
+
+
+@pytest.mark.parametrize("unit", ["dB", "deg"])
+def test_ngspice_finds_the_error_that_is_said_to_be_reached(simulator, unit):
+    error = WORST.magnitude_db if unit == "dB" else WORST.phase_deg
+    low, high = MADE.job.signal.band_hz
+    deck = board_deck(
+        MADE.circuit.with_values(error.values),
+        title="worst",
+        start_hz=low,
+        stop_hz=high,
+        points_per_decade=100,
+    )
+    found = simulator.ac(deck, ["out"])
+    against = response_error(found.voltages["out"], MADE.wanted.response(found.frequency_hz))
+    signed = against.magnitude_db if unit == "dB" else against.phase_deg
+    there = np.interp(np.log(error.frequency_hz), np.log(found.frequency_hz), signed)
+    assert error.sign * there == pytest.approx(error.reached, rel=2e-3)
+    # No frequency of ngspice's own sweep shows more than the bound.
+    assert np.abs(signed).max() <= error.bound * (1 + 2e-3)
+
+
+def test_the_record_holds_reached_and_bound():
+    record = design_record(DESIGN, boards.verification(DESIGN))["worst_case"]
+    for key, error in (("magnitude_db", WORST.magnitude_db), ("phase_deg", WORST.phase_deg)):
+        assert record[key]["reached"] == error.reached
+        assert record[key]["reached"] <= record[key]["bound"] == error.bound
+        assert record[key]["meet"] is True
+        assert set(record[key]["values"]) == {p.ref for p in MADE.circuit.bought}
+    assert record["frequencies"] == MADE.frequency_hz.size
+
+
+def test_every_part_is_named_at_its_end_once():
+    for line, error in zip(
+        shown(DESIGN)["lines"], (WORST.magnitude_db, WORST.phase_deg), strict=True
+    ):
+        named = [word.strip(",;") for word in line.split() if word.strip(",;.") in error.values]
+        assert sorted(named) == sorted(error.values)
+
+
+def one(**changes) -> WorstError:
+    """An error of 0.4 dB."""
+    known = {
+        "unit": "dB",
+        "reached": 0.4,
+        "sign": -1,
+        "bound": 0.40101,
+        "frequency_hz": 1000.0,
+        "values": {"R1": 10e3},
+        "low": (),
+        "high": (),
+        "between": ("R1",),
+    }
+    return WorstError(**(known | changes))
+
+
+def test_a_bound_is_rounded_up_and_a_missing_one_is_told():
+    both = replace(WORST, magnitude_db=one(), phase_deg=one(unit="deg", bound=None))
+    assert worst_line(both) == "0.400 dB (none above 0.402), 0.400 deg or more"
+    told = shown(replace(DESIGN, worst=both))
+    assert told["wide"] == ["phase"]
+    assert told["rows"][1]["bound"] == "–"
+
+
+def test_a_part_between_its_ends_is_told_with_its_value():
+    sentence = worst_sentence("magnitude", one(), MADE.circuit)
+    assert sentence.startswith("The magnitude error of −0.400 dB at 1.00\xa0kHz")
+    assert sentence.endswith("R1 at 10.00\xa0kΩ.")
