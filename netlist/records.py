@@ -178,6 +178,7 @@ def _yield(design: Design) -> dict[str, object]:
         "confidence": run.confidence,
         "error_95_db": run.error_95_db,
         "seed": run.seed,
+        "worst": [{"number": b.number + 1, "limit_share": b.limit_share} for b in run.worst],
     }
 
 
@@ -285,6 +286,7 @@ def _simulation(verification: Verification) -> dict[str, object]:
         "failure": verification.failure,
         "rms_error": verification.error.rms if done and verification.error is not None else None,
         "nodal_disagreement": verification.nodal_disagreement,
+        "worst_boards_disagreement": verification.worst_disagreement,
         "noise_rms_v": verification.noise_rms,
         "operating_point_v": dict(sorted((verification.operating_point or {}).items())),
     }

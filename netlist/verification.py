@@ -36,6 +36,9 @@ LARGEST_DISAGREEMENT = 1e-6
 LARGEST_MOVEMENT = 5.0
 """Of the largest swing [%]."""
 
+AGREEMENT_ON_WORST = "difference on the worst boards"
+"""Name of the check of both analyses on the boards of the run that come out worst."""
+
 SMALLEST_COMPARED = 1e-6
 """Below this share of its largest value a response is compared absolutely."""
 
@@ -60,9 +63,12 @@ class Verification:
         Noise of the output over the band [V].
     nodal_disagreement
         Of ngspice and the nodal engine on the same circuit, see `disagreement`.
+    worst_disagreement
+        The largest on the worst boards of the tolerance run; None where none were kept.
     checks
-        ``magnitude error`` and ``phase error``, the difference of the two analyses, then
-        ``settling after a step`` where the target settles; empty without a response.
+        ``magnitude error`` and ``phase error``, the difference of the two analyses on the
+        nominal board and on the worst ones, then ``settling after a step`` where the target
+        settles; empty without a response.
     failure
         Why the simulator did not deliver, or None.  What it did not deliver is None above; a
         response may be there although a later analysis failed.
@@ -76,6 +82,7 @@ class Verification:
     step: TransientResult | None = None
     noise_rms: float | None = None
     nodal_disagreement: float | None = None
+    worst_disagreement: float | None = None
     checks: tuple[Check, ...] = ()
     failure: str | None = None
 
@@ -145,6 +152,7 @@ def _verify(design: Design, decks: Decks, simulator: Simulator) -> Verification:
     try:
         response = simulator.ac(decks.board, [out])
         so_far = _compared(design, response.frequency_hz, response.voltages[out])
+        so_far = _worst_compared(design, decks, simulator, so_far, response.frequency_hz)
         so_far = replace(so_far, operating_point=simulator.operating_point(decks.board, nets))
         noise = simulator.noise(decks.board, out, *band, density)
         so_far = replace(so_far, noise_rms=noise.total_rms)
@@ -160,12 +168,8 @@ def _compared(design: Design, frequency_hz: Real, simulated: Complex) -> Verific
     target = design.wanted.response(frequency_hz)
     nodal = compile_circuit(design.circuit).solve(frequency_hz)
     differing = disagreement(simulated, nodal)
-    agreement = Check.at_most(
-        "difference of the two analyses",
-        1e6 * differing,
-        1e6 * LARGEST_DISAGREEMENT,
-        "ppm",
-        "ngspice against the nodal engine",
+    agreement = _agreement(
+        "difference of the two analyses", differing, "ngspice against the nodal engine"
     )
     return Verification(
         frequency_hz=frequency_hz,
@@ -175,3 +179,29 @@ def _compared(design: Design, frequency_hz: Real, simulated: Complex) -> Verific
         nodal_disagreement=differing,
         checks=(*compare(frequency_hz, simulated, target, design.job.accept), agreement),
     )
+
+
+def _worst_compared(
+    design: Design, decks: Decks, simulator: Simulator, so_far: Verification, swept_hz: Real
+) -> Verification:
+    """The worst boards of the run in ngspice: the same deck with their values."""
+    circuit, worst = design.circuit, design.tolerance.worst
+    if not worst:
+        return so_far
+    drawn = [dict(zip((p.ref for p in circuit.passives), b.values, strict=True)) for b in worst]
+    found = simulator.alter_ac(decks.board, drawn, circuit.output_net)
+    keep = judged(design.wanted, swept_hz)
+    nodal = compile_circuit(circuit).solve(swept_hz[keep], values=[b.values for b in worst])
+    differing = [disagreement(one[keep], other) for one, other in zip(found, nodal, strict=True)]
+    place = int(np.argmax(differing))
+    largest, which = differing[place], worst[place]
+    note = (
+        f"ngspice against the nodal engine, {len(worst)} of {design.tolerance.boards} boards; "
+        f"largest on number {which.number + 1}"
+    )
+    check = _agreement(AGREEMENT_ON_WORST, largest, note)
+    return replace(so_far, worst_disagreement=largest, checks=(*so_far.checks, check))
+
+
+def _agreement(name: str, differing: float, note: str) -> Check:
+    return Check.at_most(name, 1e6 * differing, 1e6 * LARGEST_DISAGREEMENT, "ppm", note)

@@ -31,6 +31,7 @@ __all__ = [
     "Swing",
     "Tightened",
     "ToleranceResult",
+    "WorstBoard",
 ]
 
 Real = NDArray[np.float64]
@@ -92,6 +93,20 @@ class NoiseResult:
 
 
 @dataclass(frozen=True, kw_only=True)
+class WorstBoard:
+    """A board of a run that comes out far from the target.
+
+    `number` counts from 0 in the run; `limit_share` is its largest error over the band as a
+    share of the limit, of magnitude or phase, whichever is more; `values` are those of the
+    passives in circuit order [ohm], [F].
+    """
+
+    number: int
+    limit_share: float
+    values: tuple[float, ...]
+
+
+@dataclass(frozen=True, kw_only=True)
 class ToleranceResult:
     """A run of boards with parts drawn within their tolerance.
 
@@ -110,6 +125,8 @@ class ToleranceResult:
         95th percentile over the boards of the largest absolute dB error over the band.
     seed
         Of the random generator.
+    worst
+        The boards farthest from the target, the worst first; empty where nobody kept them.
     """
 
     boards: int
@@ -124,6 +141,7 @@ class ToleranceResult:
     phase_95: Real
     error_95_db: float
     seed: int
+    worst: tuple[WorstBoard, ...] = ()
 
     @property
     def share(self) -> float:

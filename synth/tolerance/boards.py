@@ -22,7 +22,7 @@ from synth.errors import CircuitError, JobError
 from synth.evidence import DB_PER_NEPER
 from synth.job import Accept
 from synth.nodal import NodalProgram
-from synth.results import ToleranceResult
+from synth.results import ToleranceResult, WorstBoard
 from synth.tolerance.interval import clopper_pearson
 
 __all__ = ["drawn_values", "run_boards", "tolerances_of"]
@@ -35,6 +35,9 @@ BLOCK = 500
 
 STORE = 170_000_000
 """Bytes that hold errors until their percentiles are taken."""
+
+WORST = 5
+"""Boards whose values are kept, so that the simulator can be asked about them too."""
 
 
 def tolerances_of(circuit: Circuit) -> Real:
@@ -137,6 +140,7 @@ def run_boards(
         phase_95=percentiles[3],
         error_95_db=float(np.percentile(worst_db, 95)),
         seed=seed,
+        worst=run.worst(np.maximum(worst_db / accept.magnitude_db, worst_deg / accept.phase_deg)),
     )
 
 
@@ -151,14 +155,31 @@ class _Run:
 
     def errors(self, kept: slice) -> Iterator[tuple[int, int, Real, Real]]:
         """(first board, last + 1, dB, deg) block by block, shapes (block, frequencies kept)."""
-        generator = np.random.default_rng(self.seed)
         with np.errstate(divide="ignore"):
             inverse_target = 1.0 / self.target[kept]
-        for start in range(0, self.boards, BLOCK):
-            stop = min(start + BLOCK, self.boards)
-            values = drawn_values(self.circuit, stop - start, generator)
+        for start, values in self.drawn():
             ratio = self.program.solve(self.frequency[kept], values=values)
-            yield start, stop, *_errors(np.multiply(ratio, inverse_target, out=ratio))
+            errors = _errors(np.multiply(ratio, inverse_target, out=ratio))
+            yield start, start + len(values), *errors
+
+    def drawn(self) -> Iterator[tuple[int, Real]]:
+        """(first board, values of the block), block by block, shapes (block, P)."""
+        generator = np.random.default_rng(self.seed)
+        for start in range(0, self.boards, BLOCK):
+            count = min(BLOCK, self.boards - start)
+            yield start, drawn_values(self.circuit, count, generator)
+
+    def worst(self, share: Real) -> tuple[WorstBoard, ...]:
+        """The boards with the largest shares of a limit, the worst first; `share` per board."""
+        share = np.nan_to_num(share, nan=np.inf)
+        numbers = np.argsort(-share, kind="stable")[:WORST].tolist()
+        found: dict[int, tuple[float, ...]] = {}
+        for start, values in self.drawn():
+            here = (n for n in numbers if 0 <= n - start < len(values))
+            found |= {n: tuple(values[n - start].tolist()) for n in here}
+        return tuple(
+            WorstBoard(number=n, limit_share=float(share[n]), values=found[n]) for n in numbers
+        )
 
 
 def _errors(ratio: Complex) -> tuple[Real, Real]:

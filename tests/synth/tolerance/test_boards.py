@@ -186,3 +186,23 @@ print(int(re.search(r"VmHWM:\\s*(\\d+) kB", Path("/proc/self/status").read_text(
         [sys.executable, "-c", script], capture_output=True, text=True, check=True, timeout=120
     )
     assert float(done.stdout) < 400
+
+
+@pytest.mark.parametrize("count", [3, 700])
+def test_the_worst_boards_of_a_run_are_kept_with_their_values(count, monkeypatch):
+    """Against all boards drawn at once; neither order nor values hang on the size of a block."""
+    circuit = chain(3, op_amp(), source=100.0)
+    monkeypatch.setattr(boards_module, "BLOCK", 37)
+    program = compile_circuit(circuit)
+    target = program.solve(BAND)
+    found = run(circuit, boards=count).worst
+    values = drawn_values(circuit, count, np.random.default_rng(3))
+    error = response_error(program.solve(BAND, values=values), target)
+    share = np.maximum(
+        np.abs(error.magnitude_db).max(axis=1) / LIMITS.magnitude_db,
+        np.abs(error.phase_deg).max(axis=1) / LIMITS.phase_deg,
+    )
+    expected = np.argsort(-share)[:5]
+    assert [board.number for board in found] == expected.tolist()
+    np.testing.assert_allclose([board.limit_share for board in found], share[expected], rtol=1e-9)
+    np.testing.assert_array_equal([board.values for board in found], values[expected])
