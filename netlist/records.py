@@ -238,10 +238,20 @@ def _budget(design: Design) -> dict[str, object]:
 
 
 def _loop(design: Design) -> dict[str, object]:
-    """Margins of H(s) itself and of the nominal board, where the job names a plant."""
-    if design.loop is None:
+    """Margins of H(s) itself, of the nominal board and over the boards of the run, where the job
+    names a plant."""
+    found = design.loop
+    if found is None:
         return {}
-    return {"loop": {"target": asdict(design.loop.target), "nominal": asdict(design.loop.nominal)}}
+    record: dict[str, object] = {"target": asdict(found.target), "nominal": asdict(found.nominal)}
+    if found.boards is not None:
+        run = found.boards
+        record["boards"] = {
+            **asdict(run),
+            "stable": run.stable / run.boards,
+            "share": run.share,
+        }
+    return {"loop": record}
 
 
 def _source(design: Design) -> dict[str, object]:

@@ -26,10 +26,10 @@ from synth.evidence import Check, response_error
 from synth.grid import judging_frequencies
 from synth.job import Job
 from synth.limits import drifts, swing_checks, swings
-from synth.loop import loop_checks, loop_margins
+from synth.loop import checked_loop, loop_checks, loop_margins
 from synth.nodal import compile_circuit
 from synth.results import Candidate, Design, LoopResult, NoiseResult, Swing, ToleranceResult
-from synth.tolerance import error_budget, run_boards
+from synth.tolerance import error_budget, loop_yield_check, run_boards, run_loops
 from synth.values import ValueSearch, level_ratios, wanted_of
 
 __all__ = ["DEFAULT_BOARDS", "DEFAULT_SEED", "compare_forms", "design", "judged_design"]
@@ -41,6 +41,9 @@ Progress = Callable[[str, int, int], None]
 # 50 times a stray of 2 pF.
 SMALL_CAPACITOR = 100e-12
 
+# Below this share of boards that keep the loop a notice says so.
+LOW_SHARE = 0.9
+
 DEFAULT_BOARDS = 1000
 DEFAULT_SEED = 1
 
@@ -50,9 +53,13 @@ def compare_forms(job: Job) -> tuple[str, tuple[Candidate, ...]]:
 
     Raises
     ------
+    JobError
+        H(s) itself leaves the job's loop unstable.
     RealizationError
         No form fits.
     """
+    if job.loop is not None:
+        checked_loop(job.loop, job.target)
     sketch, candidates = choose_form(job, judging_frequencies(job.target, job.signal.band_hz))
     return sketch.form, candidates
 
@@ -85,6 +92,8 @@ def design(
     """
     if effort < 1:
         raise JobError(f"got the effort {effort}, expected 1 or more", key="effort")
+    if job.loop is not None:
+        checked_loop(job.loop, job.target)
     say = progress or (lambda stage, done, total: None)
     frequency = judging_frequencies(job.target, job.signal.band_hz)
     sketch, candidates = choose_form(
@@ -132,7 +141,7 @@ def judged_design(
     )
     progress("limits", 0, 1)
     swing = swings(circuit, wanted, job)
-    loop = _loop(job, circuit, inverted=sketch.polarity.output_inverted)
+    loop = _loop(job, circuit, sketch.polarity.output_inverted, boards=boards, seed=seed)
     nominal = response_error(program.solve(frequency), response)
     return Design(
         job=job,
@@ -154,7 +163,7 @@ def judged_design(
         certificate=choice.certificate,
         budget=error_budget(program, circuit, nominal, frequency, accept=job.accept, seed=seed),
         loop=loop,
-        notices=(*job.notices, *choice.notices, *_notices(circuit, job, swing)),
+        notices=(*job.notices, *choice.notices, *_notices(circuit, job, swing), *_of_loop(loop)),
     )
 
 
@@ -170,11 +179,14 @@ def _checks(
     return (
         _yield_check(tolerance, job),
         *(loop_checks(job.loop, loop.nominal) if job.loop and loop else ()),
+        *((loop_yield_check(loop.boards),) if loop and loop.boards else ()),
         *swing_checks(swing, names),
     )
 
 
-def _loop(job: Job, circuit: Circuit, *, inverted: bool) -> LoopResult | None:
+def _loop(
+    job: Job, circuit: Circuit, inverted: bool, *, boards: int, seed: int
+) -> LoopResult | None:
     """Margins of the job's loop; an inverted board is taken to be inverted once more."""
     if job.loop is None:
         return None
@@ -183,6 +195,9 @@ def _loop(job: Job, circuit: Circuit, *, inverted: bool) -> LoopResult | None:
     return LoopResult(
         target=loop_margins(job.loop, job.target),
         nominal=loop_margins(job.loop, job.target, lambda f: sign * program.solve(f)),
+        boards=run_loops(
+            program, circuit, job.loop, job.target, inverted=inverted, boards=boards, seed=seed
+        ),
     )
 
 
@@ -215,6 +230,15 @@ def _notices(circuit: Circuit, job: Job, swing: tuple[Swing, ...]) -> tuple[str,
             "the board saturates unless a loop around it holds it"
         )
     return tuple(said)
+
+
+def _of_loop(loop: LoopResult | None) -> tuple[str, ...]:
+    if loop is None or loop.boards is None or loop.boards.share >= LOW_SHARE:
+        return ()
+    return (
+        f"only {loop.boards.passed} of {loop.boards.boards} boards give a stable loop within the "
+        "margins",
+    )
 
 
 def _cell_name(circuit: Circuit, amplifier: str) -> str:

@@ -13,12 +13,13 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from synth.errors import JobError
 from synth.evidence import Check
 from synth.job import Loop
 from synth.nyquist import unstable_poles
 from synth.transfer import TransferFunction
 
-__all__ = ["LoopMargins", "loop_checks", "loop_margins", "loop_response"]
+__all__ = ["LoopMargins", "checked_loop", "loop_checks", "loop_margins", "loop_response"]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -118,6 +119,26 @@ def loop_margins(
         disk_margin=_disk_margin(response, grid, value) if not poles else 0.0,
         unstable_poles=poles,
     )
+
+
+def checked_loop(loop: Loop, target: TransferFunction) -> LoopMargins:
+    """Margins of the loop with H(s) itself.
+
+    Raises
+    ------
+    JobError
+        That loop is unstable: no board could be any better than what was asked.
+    """
+    margins = loop_margins(loop, target)
+    if margins.unstable_poles:
+        poles = margins.unstable_poles
+        raise JobError(
+            f"got a plant around which H(s) itself leaves the closed loop unstable, with {poles} "
+            f"pole{'' if poles == 1 else 's'} in the right half-plane or at the origin; expected "
+            "L = P H that is stable with negative feedback",
+            key="loop",
+        )
+    return margins
 
 
 def loop_checks(loop: Loop, margins: LoopMargins) -> tuple[Check, ...]:

@@ -25,9 +25,11 @@ __all__ = [
     "Drift",
     "ErrorBudget",
     "ErrorFigures",
+    "LoopBoards",
     "LoopResult",
     "NoiseResult",
     "OpAmpAllowance",
+    "Percentiles",
     "Swing",
     "Tightened",
     "ToleranceResult",
@@ -274,11 +276,54 @@ class Candidate:
 
 
 @dataclass(frozen=True, kw_only=True)
+class Percentiles:
+    """Percentiles over boards; None where they fall on boards that have no such number."""
+
+    p5: float | None
+    p50: float | None
+    p95: float | None
+
+
+@dataclass(frozen=True, kw_only=True)
+class LoopBoards:
+    """The loop around each board of a run.
+
+    Parameters
+    ----------
+    boards, stable, passed
+        How many were drawn, how many of them are stable by the Nyquist criterion, and how many
+        of these keep the job's limits on the margins.
+    low, high
+        Clopper-Pearson interval of passed / boards at `confidence`, ratios.
+    phase_margin_deg, gain_margin_db, crossover_hz, disk_margin
+        Percentiles of what `LoopMargins` says of each board.  A margin without a crossing
+        counts as larger than any other, that of an unstable board as negative.
+    """
+
+    boards: int
+    stable: int
+    passed: int
+    low: float
+    high: float
+    confidence: float
+    phase_margin_deg: Percentiles
+    gain_margin_db: Percentiles
+    crossover_hz: Percentiles
+    disk_margin: Percentiles
+
+    @property
+    def share(self) -> float:
+        """Share of the boards that are stable and keep the limits, a ratio."""
+        return self.passed / self.boards
+
+
+@dataclass(frozen=True, kw_only=True)
 class LoopResult:
-    """Margins of the loop with H(s) itself, and with the nominal board in its place."""
+    """Margins of the loop with H(s) itself, with the nominal board, and over a run of boards."""
 
     target: LoopMargins
     nominal: LoopMargins
+    boards: LoopBoards | None = None
 
 
 @dataclass(frozen=True, kw_only=True)

@@ -25,7 +25,7 @@ from synth.nodal import NodalProgram
 from synth.results import ToleranceResult, WorstBoard
 from synth.tolerance.interval import clopper_pearson
 
-__all__ = ["drawn_values", "run_boards", "tolerances_of"]
+__all__ = ["drawn_blocks", "drawn_values", "run_boards", "tolerances_of"]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -56,6 +56,13 @@ def drawn_values(circuit: Circuit, boards: int, generator: np.random.Generator) 
     deviation = generator.uniform(-1.0, 1.0, (boards, int(bought.sum())))
     values[:, bought] *= 1.0 + deviation * tolerances_of(circuit)[bought]
     return values
+
+
+def drawn_blocks(circuit: Circuit, *, boards: int, seed: int) -> Iterator[tuple[int, Real]]:
+    """(first board, values) of a run, block by block, values of shape (block, P) [ohm], [F]."""
+    generator = np.random.default_rng(seed)
+    for start in range(0, boards, BLOCK):
+        yield start, drawn_values(circuit, min(BLOCK, boards - start), generator)
 
 
 def run_boards(
@@ -163,11 +170,7 @@ class _Run:
             yield start, start + len(values), *errors
 
     def drawn(self) -> Iterator[tuple[int, Real]]:
-        """(first board, values of the block), block by block, shapes (block, P)."""
-        generator = np.random.default_rng(self.seed)
-        for start in range(0, self.boards, BLOCK):
-            count = min(BLOCK, self.boards - start)
-            yield start, drawn_values(self.circuit, count, generator)
+        return drawn_blocks(self.circuit, boards=self.boards, seed=self.seed)
 
     def worst(self, share: Real) -> tuple[WorstBoard, ...]:
         """The boards with the largest shares of a limit, the worst first; `share` per board."""
