@@ -107,7 +107,48 @@ def design_record(design: Design, verification: Verification) -> dict[str, Json]
 
 def candidate_records(candidates: tuple[Candidate, ...]) -> list[Json]:
     """The forms considered, as plain dictionaries."""
-    return [_finite(asdict(c)) for c in candidates]
+    return [_finite(_candidate(c)) for c in candidates]
+
+
+def _candidate(candidate: Candidate) -> dict[str, object]:
+    """A form, with its figures where its values were chosen."""
+    record: dict[str, object] = {
+        "form": candidate.form,
+        "possible": candidate.possible,
+        "reason": candidate.reason,
+        "op_amps": candidate.op_amps,
+        "spread_db": candidate.spread_db,
+        "spread_deg": candidate.spread_deg,
+    }
+    found = candidate.figures
+    if found is None:
+        return record
+    assert candidate.op_amps is not None
+    return {
+        **record,
+        "packages_of_2": -(-candidate.op_amps // 2),
+        "packages_of_4": -(-candidate.op_amps // 4),
+        "resistors": found.resistors,
+        "capacitors": found.capacitors,
+        "spread": found.value_ratio,
+        "nominal_rms_error": found.nominal.rms,
+        "nominal_largest_db": found.nominal.largest_db,
+        "nominal_largest_deg": found.nominal.largest_deg,
+        "error_95_db": found.error_95_db,
+        "yield": {
+            "boards": found.boards,
+            "passed": found.passed,
+            "low": found.low,
+            "high": found.high,
+        },
+        "noise_rms_v": found.noise_rms,
+        "dynamic_range_db": found.dynamic_range_db,
+        "peak_v": found.peak,
+        "hottest": found.hottest,
+        "gain_bandwidth_needed_hz": found.gain_bandwidth_needed,
+        "missed": list(found.missed),
+        "verdict": candidate.verdict,
+    }
 
 
 def record_text(record: object) -> str:

@@ -16,7 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.circuit import Circuit
-from synth.evidence import ResponseError, response_error
+from synth.evidence import response_error
 from synth.nodal import compile_circuit
 from synth.results import ErrorFigures, OpAmpAllowance
 
@@ -52,17 +52,13 @@ def op_amp_allowance(
 
     def off(factor: float) -> ErrorFigures:
         response = program.solve(frequency_hz, gain_bandwidth=factor * usual)
-        return _figures(response_error(response, target))
+        return ErrorFigures.of(response_error(response, target))
 
     return OpAmpAllowance(
-        with_allowance=_figures(response_error(program.solve(frequency_hz), target)),
-        without_allowance=_figures(response_error(unaware.solve(frequency_hz), target)),
+        with_allowance=ErrorFigures.of(response_error(program.solve(frequency_hz), target)),
+        without_allowance=ErrorFigures.of(response_error(unaware.solve(frequency_hz), target)),
         slower_factor=1 - GAIN_BANDWIDTH_OFF,
         slower=off(1 - GAIN_BANDWIDTH_OFF),
         faster_factor=1 + GAIN_BANDWIDTH_OFF,
         faster=off(1 + GAIN_BANDWIDTH_OFF),
     )
-
-
-def _figures(error: ResponseError) -> ErrorFigures:
-    return ErrorFigures(rms=error.rms, largest_db=error.largest_db, largest_deg=error.largest_deg)

@@ -101,14 +101,15 @@ class Cell:
     Parameters
     ----------
     kind
-        ``"integrator"``, ``"adder"`` or ``"inverter"``: inverting summing integrator, inverting
-        summing amplifier, inverter.
+        ``"integrator"``, ``"adder"``, ``"inverter"`` or ``"difference"``: inverting summing
+        integrator, inverting summing amplifier, inverter, summing amplifier that uses both inputs
+        of its op-amp.
     block
         The block it realises (of an inverter: the block it inverts, or ``"in"``).
     amplifier
         Reference of the op-amp.
     inputs
-        References of the input resistors, from their source nets to `summing`.
+        References of the input resistors, from their source nets to `summing`, or to `plus`.
     feedback
         Reference of the part from `output` to `summing`.
     series
@@ -119,6 +120,11 @@ class Cell:
     polarity
         +1 when the output net carries the signal of the block, -1 when it carries its
         negative.
+    plus
+        Net of the op-amp's non-inverting input.
+    balance
+        Reference of the resistor from one of the inputs to ground with which the gains come out
+        right, ``""`` for none.
     """
 
     kind: str
@@ -130,11 +136,18 @@ class Cell:
     output: str
     polarity: int
     series: tuple[tuple[str, str], ...] = ()
+    plus: str = GROUND
+    balance: str = ""
 
     @property
     def refs(self) -> tuple[str, ...]:
         """References of its resistors and capacitors."""
-        return (*self.inputs, *(behind for _, behind in self.series), self.feedback)
+        behind = (ref for _, ref in self.series)
+        return (*self.inputs, *behind, *((self.balance,) if self.balance else ()), self.feedback)
+
+    def node_of(self, part: Passive) -> str:
+        """The input of the op-amp that an input resistor, or the balancing one, goes to."""
+        return self.plus if self.plus != GROUND and self.plus in part.nets else self.summing
 
 
 @dataclass(frozen=True)
@@ -217,7 +230,7 @@ class Circuit:
 
     def _check_series(self, cell: Cell, ref: str, behind: str) -> None:
         """Two in series have a net of their own between them, and nothing else is on it."""
-        middle = _far_net(self.by_ref[ref], cell.summing)
+        middle = _far_net(self.by_ref[ref], cell.node_of(self.by_ref[ref]))
         if ref not in cell.inputs or set(self.connections[middle]) != {ref, behind}:
             raise CircuitError(
                 f"cell {cell.block}: got {behind} and {ref} in series, expected an input "
@@ -256,7 +269,7 @@ class Circuit:
     def branch(self, cell: Cell, ref: str) -> Branch:
         """The input resistor `ref` of a cell with what is in series with it."""
         part = self.by_ref[ref]
-        net = _far_net(part, cell.summing)
+        net = _far_net(part, cell.node_of(part))
         behind = dict(cell.series).get(ref)
         if behind is None:
             return Branch(net, (part,))

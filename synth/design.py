@@ -17,19 +17,22 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.allowance import op_amp_allowance
-from synth.candidates import Sketch, choose_form
+from synth.candidates import Sketch, sketch_form
+from synth.checks import board_checks, loop_of_board, yield_check
 from synth.choosing import DEFAULT_EFFORT, Choice
 from synth.choosing.supply import allotted
 from synth.circuit import Circuit
 from synth.errors import JobError
-from synth.evidence import Check, response_error
+from synth.evidence import response_error
 from synth.grid import judging_frequencies
 from synth.job import Job
-from synth.limits import drifts, swing_checks, swings
-from synth.loop import checked_loop, loop_checks, loop_margins
-from synth.nodal import compile_circuit
-from synth.results import Candidate, Design, LoopResult, NoiseResult, Swing, ToleranceResult
-from synth.tolerance import error_budget, loop_yield_check, run_boards, run_loops
+from synth.limits import drifts, swings
+from synth.loop import checked_loop
+from synth.nodal import NodalProgram, compile_circuit
+from synth.noise import output_noise
+from synth.ranking import Mapper, rank_forms
+from synth.results import Candidate, Design, LoopResult, Swing
+from synth.tolerance import error_budget, run_boards, run_loops
 from synth.values import ValueSearch, level_ratios, wanted_of
 
 __all__ = ["DEFAULT_BOARDS", "DEFAULT_SEED", "compare_forms", "design", "judged_design"]
@@ -48,8 +51,19 @@ DEFAULT_BOARDS = 1000
 DEFAULT_SEED = 1
 
 
-def compare_forms(job: Job) -> tuple[str, tuple[Candidate, ...]]:
-    """The form `design` would take, and every form considered.
+def compare_forms(
+    job: Job,
+    *,
+    seed: int = DEFAULT_SEED,
+    progress: Progress | None = None,
+    mapper: Mapper | None = None,
+) -> tuple[str, tuple[Candidate, ...]]:
+    """The form `design` would take if the job named none, and every form, the best first.
+
+    Parameters
+    ----------
+    seed, progress, mapper
+        As of `design`.
 
     Raises
     ------
@@ -60,8 +74,16 @@ def compare_forms(job: Job) -> tuple[str, tuple[Candidate, ...]]:
     """
     if job.loop is not None:
         checked_loop(job.loop, job.target)
-    sketch, candidates = choose_form(job, judging_frequencies(job.target, job.signal.band_hz))
-    return sketch.form, candidates
+    say = progress or (lambda stage, done, total: None)
+    frequency = judging_frequencies(job.target, job.signal.band_hz)
+    ranking = rank_forms(
+        job,
+        frequency,
+        seed=seed,
+        progress=lambda done, total: say("forms", done, total),
+        mapper=mapper,
+    )
+    return ranking.sketch.form, ranking.candidates
 
 
 def design(
@@ -71,6 +93,7 @@ def design(
     seed: int = DEFAULT_SEED,
     effort: int = 1,
     progress: Progress | None = None,
+    mapper: Mapper | None = None,
 ) -> Design:
     """Carry a job through every stage.
 
@@ -84,6 +107,9 @@ def design(
         Multiple of the default work that the search for values is given, at least 1.
     progress
         Called with the stage's name, and how much of how much of it is done.
+    mapper
+        Like ``map``, for the forms to be compared in several processes; see
+        `synth.ranking.rank_forms`.
 
     Raises
     ------
@@ -96,9 +122,18 @@ def design(
         checked_loop(job.loop, job.target)
     say = progress or (lambda stage, done, total: None)
     frequency = judging_frequencies(job.target, job.signal.band_hz)
-    sketch, candidates = choose_form(
-        job, frequency, progress=lambda done, total: say("forms", done, total)
-    )
+    if job.board.form == "auto":
+        ranking = rank_forms(
+            job,
+            frequency,
+            seed=seed,
+            progress=lambda done, total: say("forms", done, total),
+            mapper=mapper,
+        )
+        sketch, candidates = ranking.sketch, ranking.candidates
+    else:
+        sketch = sketch_form(job, job.board.form, frequency)
+        candidates = (sketch.candidate,)
     response = wanted_of(sketch, job).response(frequency)
     search = ValueSearch(sketch, job, response, frequency, seed, effort * DEFAULT_EFFORT)
     choice, unaware = search.both(say)
@@ -141,7 +176,7 @@ def judged_design(
     )
     progress("limits", 0, 1)
     swing = swings(circuit, wanted, job)
-    loop = _loop(job, circuit, sketch.polarity.output_inverted, boards=boards, seed=seed)
+    loop = _loop(job, program, sketch.polarity.output_inverted, boards=boards, seed=seed)
     nominal = response_error(program.solve(frequency), response)
     return Design(
         job=job,
@@ -154,54 +189,41 @@ def judged_design(
         nominal=nominal,
         nearest=response_error(compile_circuit(choice.nearest).solve(frequency), response),
         tolerance=tolerance,
-        noise=_noise(circuit, frequency),
+        noise=output_noise(circuit, frequency),
         swings=swing,
         drifts=drifts(circuit),
         candidates=candidates,
-        checks=_checks(job, circuit, tolerance, swing, loop),
+        checks=(yield_check(tolerance, job), *board_checks(job, circuit, swing, loop)),
         offset=_offset(circuit),
         certificate=choice.certificate,
         budget=error_budget(program, circuit, nominal, frequency, accept=job.accept, seed=seed),
         loop=loop,
-        notices=(*job.notices, *choice.notices, *_notices(circuit, job, swing), *_of_loop(loop)),
-    )
-
-
-def _checks(
-    job: Job,
-    circuit: Circuit,
-    tolerance: ToleranceResult,
-    swing: tuple[Swing, ...],
-    loop: LoopResult | None,
-) -> tuple[Check, ...]:
-    """Every predicted line of the verdict."""
-    names = {c.amplifier: _cell_name(circuit, c.amplifier) for c in circuit.cells}
-    return (
-        _yield_check(tolerance, job),
-        *(loop_checks(job.loop, loop.nominal) if job.loop and loop else ()),
-        *((loop_yield_check(loop.boards),) if loop and loop.boards else ()),
-        *swing_checks(swing, names),
-    )
-
-
-def _loop(
-    job: Job, circuit: Circuit, inverted: bool, *, boards: int, seed: int
-) -> LoopResult | None:
-    """Margins of the job's loop; an inverted board is taken to be inverted once more."""
-    if job.loop is None:
-        return None
-    program = compile_circuit(circuit)
-    sign = -1.0 if inverted else 1.0
-    return LoopResult(
-        target=loop_margins(job.loop, job.target),
-        nominal=loop_margins(job.loop, job.target, lambda f: sign * program.solve(f)),
-        boards=run_loops(
-            program, circuit, job.loop, job.target, inverted=inverted, boards=boards, seed=seed
+        notices=(
+            *job.notices,
+            *sketch.notices,
+            *choice.notices,
+            *_notices(circuit, job, swing, loop),
         ),
     )
 
 
-def _notices(circuit: Circuit, job: Job, swing: tuple[Swing, ...]) -> tuple[str, ...]:
+def _loop(
+    job: Job, program: NodalProgram, inverted: bool, *, boards: int, seed: int
+) -> LoopResult | None:
+    """Margins of the job's loop, those over the run of boards among them."""
+    circuit = program.circuit
+    found = loop_of_board(job, circuit, inverted=inverted)
+    if job.loop is None or found is None:
+        return None
+    run = run_loops(
+        program, circuit, job.loop, job.target, inverted=inverted, boards=boards, seed=seed
+    )
+    return replace(found, boards=run)
+
+
+def _notices(
+    circuit: Circuit, job: Job, swing: tuple[Swing, ...], loop: LoopResult | None
+) -> tuple[str, ...]:
     """What the user should know of the design itself."""
     said: list[str] = []
     stray = [p for p in circuit.bought if p.kind == "capacitor" and p.value < SMALL_CAPACITOR]
@@ -229,34 +251,12 @@ def _notices(circuit: Circuit, job: Job, swing: tuple[Swing, ...]) -> tuple[str,
             "H(s) is unstable by itself: peaks are those of its response to steady sines, and "
             "the board saturates unless a loop around it holds it"
         )
+    run = loop.boards if loop else None
+    if run is not None and run.share < LOW_SHARE:
+        said.append(
+            f"only {run.passed} of {run.boards} boards give a stable loop within the margins"
+        )
     return tuple(said)
-
-
-def _of_loop(loop: LoopResult | None) -> tuple[str, ...]:
-    if loop is None or loop.boards is None or loop.boards.share >= LOW_SHARE:
-        return ()
-    return (
-        f"only {loop.boards.passed} of {loop.boards.boards} boards give a stable loop within the "
-        "margins",
-    )
-
-
-def _cell_name(circuit: Circuit, amplifier: str) -> str:
-    cell = circuit.cell_of(amplifier)
-    if cell is None:
-        return amplifier
-    return f"inverter of {cell.block}" if cell.kind == "inverter" else cell.block
-
-
-def _yield_check(tolerance: ToleranceResult, job: Job) -> Check:
-    limit = job.accept.yield_share
-    note = (
-        f"{tolerance.passed} of {tolerance.boards} boards, "
-        f"{100 * tolerance.low:.1f} to {100 * tolerance.high:.1f} % at "
-        f"{100 * tolerance.confidence:.0f} % confidence"
-    )
-    percent = 100 * tolerance.share
-    return Check.at_least("yield", percent, None if limit is None else 100 * limit, "%", note)
 
 
 def _offset(circuit: Circuit) -> float | None:
@@ -265,15 +265,3 @@ def _offset(circuit: Circuit) -> float | None:
         return None
     found = compile_circuit(circuit).dc_offsets()
     return float(found.worst[found.nets.index(circuit.output_net)])
-
-
-def _noise(circuit: Circuit, frequency_hz: Real) -> NoiseResult:
-    found = compile_circuit(circuit).noise(frequency_hz)
-    power = float(np.trapezoid(found.total, frequency_hz))
-    shares = np.asarray(np.trapezoid(found.power, frequency_hz, axis=0) / power)
-    return NoiseResult(
-        frequency_hz=frequency_hz,
-        density=found.density,
-        output_rms=float(np.sqrt(power)),
-        shares=dict(zip(found.refs, shares.tolist(), strict=True)),
-    )

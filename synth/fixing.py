@@ -101,6 +101,12 @@ def fixed_parts(circuit: Circuit, job: Job, *, factor: float = 1.0) -> FixedPart
         ideal = value / factor if ref in behind else value
         if cell.kind == "inverter":
             ends.setdefault(cell.block, {})["back" if ref == cell.feedback else "in"] = ideal
+        elif ref == cell.balance:
+            raise JobError(
+                "got a value for what balances the two inputs of an op-amp, which follows from "
+                "the other resistors there; expected one of these",
+                key=f"board.fixed.{ref}",
+            )
         elif ref == cell.feedback:
             sizes[cell.block], refs[cell.block] = ideal, ref
         else:

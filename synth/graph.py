@@ -48,17 +48,24 @@ class Term:
 
 @dataclass(frozen=True)
 class Block:
-    """An integrator or an adder with its terms."""
+    """An integrator or an adder with its terms.
+
+    An adder with `both_signs` has a cell that takes terms of either sign, at either input of its
+    op-amp; nothing it reads need be inverted for it.
+    """
 
     name: str
     kind: str
     terms: tuple[Term, ...]
+    both_signs: bool = False
 
     def __post_init__(self) -> None:
         if not _NAME.fullmatch(self.name) or self.name in _RESERVED:
             raise GraphError(f"got the block name {self.name!r}, expected letters and digits")
         if self.kind not in ("integrator", "adder"):
             raise GraphError(f"block {self.name}: got kind {self.kind!r}")
+        if self.both_signs and self.kind != "adder":
+            raise GraphError(f"block {self.name}: got an {self.kind} with terms of both signs")
         if not self.terms:
             raise GraphError(f"block {self.name} has no input")
         sources = [t.source for t in self.terms]

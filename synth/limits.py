@@ -8,10 +8,10 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from synth.circuit import Amplifier, Circuit
+from synth.circuit import GROUND, Amplifier, Circuit
 from synth.evidence import Check
 from synth.job import Job
-from synth.nodal import compile_circuit
+from synth.nodal import NodalProgram, compile_circuit
 from synth.peaks import frequencies_of_interest, frequencies_within
 from synth.readback import block_names, graph_of
 from synth.results import Drift, Swing
@@ -48,7 +48,7 @@ def swings(circuit: Circuit, target: TransferFunction, job: Job) -> tuple[Swing,
     for k, amplifier in enumerate(circuit.amplifiers):
         # The lowest frequency that has the peak: DC where the response is flat from there.
         place = int(np.argmax(volts[:, k] >= np.max(volts[:, k]) * (1 - FLAT)))
-        admittance = _output_admittance(circuit, amplifier, within)
+        amperes = signal.input_peak * _output_currents(program, amplifier, within)
         out.append(
             Swing(
                 amplifier=amplifier.ref,
@@ -58,7 +58,7 @@ def swings(circuit: Circuit, target: TransferFunction, job: Job) -> tuple[Swing,
                 peak_hz=None if bounds else float(everywhere[place]),
                 slew=float(np.max(2 * np.pi * within * in_band[:, k])),
                 slew_limit=amplifier.figures.slew_rate,
-                current=float(np.max(in_band[:, k] * admittance)),
+                current=float(np.max(amperes)),
                 current_limit=amplifier.figures.output_current,
             )
         )
@@ -73,14 +73,19 @@ def _any_input_peaks(circuit: Circuit, input_peak: float) -> dict[str, float]:
     return {net: input_peak * float(v) for net, v in zip(names, norms, strict=True)}
 
 
-def _output_admittance(circuit: Circuit, amplifier: Amplifier, frequency_hz: Real) -> Real:
-    """|Y| of the parts on an op-amp output, their far ends at ground or a virtual ground [S]."""
+def _output_currents(program: NodalProgram, amplifier: Amplifier, frequency_hz: Real) -> Real:
+    """Current of the parts on an op-amp output per volt at the input [A/V], shape (F,)."""
+    circuit = program.circuit
     on_net = [p for p in circuit.passives if amplifier.output in p.nets]
-    in_series = {p.ref: b.resistance for b in circuit.branches() for p in b.parts}
-    resistances = [in_series.get(p.ref, p.value) for p in on_net if p.kind == "resistor"]
-    conductance = sum(1 / r for r in resistances)
-    capacitance = sum(p.value for p in on_net if p.kind == "capacitor")
-    return np.hypot(conductance, 2 * np.pi * frequency_hz * capacitance)
+    far = [p.nets[1] if p.nets[0] == amplifier.output else p.nets[0] for p in on_net]
+    nets = [amplifier.output, *(net for net in dict.fromkeys(far) if net != GROUND)]
+    volts = dict(zip(nets, np.moveaxis(program.solve(frequency_hz, nets=nets), -1, 0), strict=True))
+    total = np.zeros(frequency_hz.size, dtype=np.complex128)
+    for part, net in zip(on_net, far, strict=True):
+        across = volts[amplifier.output] - (0.0 if net == GROUND else volts[net])
+        resistor = part.kind == "resistor"
+        total += across * (1 / part.value if resistor else 2j * np.pi * frequency_hz * part.value)
+    return np.abs(total)
 
 
 def swing_checks(found: tuple[Swing, ...], names: dict[str, str]) -> tuple[Check, ...]:

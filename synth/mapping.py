@@ -10,7 +10,7 @@ them by kappa = 1 - Rs G_ideal, restores every weight exactly.
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 from synth.cells import (
     BuiltCell,
@@ -18,6 +18,8 @@ from synth.cells import (
     CellRules,
     Numbering,
     adder_cell,
+    balance_of,
+    difference_cell,
     integrator_cell,
     inverter_cell,
 )
@@ -129,25 +131,43 @@ class _Wiring:
         return ideal * self.input_factor if net == self.source_net else ideal
 
     def inputs(self, block: Block) -> list[CellInput]:
+        """Without a source resistance."""
         out: list[CellInput] = []
         for place, term in enumerate(block.terms):
             weight = float(term.weight)
             direct = self.polarity.direct(block.name, term.source, weight)
             net = self.direct_net(term.source) if direct else self.inverted_net(term.source)
-            ideal = self.resistance(net, self.sizing.resistance(block, place))
-            out.append(CellInput(net, ideal, term.sets))
+            at_plus = self.polarity.at_plus(block.name, term.source, weight)
+            out.append(CellInput(net, self.sizing.resistance(block, place), term.sets, at_plus))
         return out
+
+    def behind_source(self, inputs: list[CellInput]) -> list[CellInput]:
+        return [replace(i, resistance=self.resistance(i.net, i.resistance)) for i in inputs]
 
     def cell(self, numbering: Numbering, block: Block, rules: CellRules) -> BuiltCell:
         output = self.direct_net(block.name)
         sign = self.polarity.of(block.name)
+        wanted = self.inputs(block)
+        inputs = self.behind_source(wanted)
         if block.is_integrator:
             return integrator_cell(
                 numbering,
                 block=block.name,
                 output=output,
-                inputs=self.inputs(block),
+                inputs=inputs,
                 capacitance=self.sizing.capacitors[block.name],
+                rules=rules,
+                polarity=sign,
+            )
+        feedback = self.sizing.feedback[block.name]
+        if any(each.at_plus for each in inputs):
+            return difference_cell(
+                numbering,
+                block=block.name,
+                output=output,
+                inputs=inputs,
+                balance=balance_of(wanted, feedback),
+                feedback=feedback,
                 rules=rules,
                 polarity=sign,
             )
@@ -155,8 +175,8 @@ class _Wiring:
             numbering,
             block=block.name,
             output=output,
-            inputs=self.inputs(block),
-            feedback=self.sizing.feedback[block.name],
+            inputs=inputs,
+            feedback=feedback,
             rules=rules,
             polarity=sign,
         )
@@ -181,11 +201,13 @@ def input_factor(graph: BlockGraph, polarity: Polarity, sizing: Sizing, job: Job
     Raises
     ------
     RealizationError
-        The source resistance is too large for them.
+        The source resistance is too large for them, or would be shared by a cell without a
+        virtual ground.
     """
     resistance = job.signal.source_resistance
     if not resistance:
         return 1.0
+    _check_shared(graph, polarity)
     conductance = 1 / sizing.inverter(INPUT)[0] if INPUT in polarity.inverters else 0.0
     for block in graph.blocks:
         for place, term in enumerate(block.terms):
@@ -200,3 +222,16 @@ def input_factor(graph: BlockGraph, polarity: Polarity, sizing: Sizing, job: Job
             "expected a smaller source resistance, or a buffer before the board"
         )
     return factor
+
+
+def _check_shared(graph: BlockGraph, polarity: Polarity) -> None:
+    """Refuse a cell that uses both inputs of its op-amp beside another behind the source."""
+    readers = [b for b, _ in graph.readers(INPUT) if b.name in polarity.both_signs]
+    others = len(graph.readers(INPUT)) - 1 + (INPUT in polarity.inverters)
+    for block in readers:
+        sides = {polarity.at_plus(block.name, t.source, float(t.weight)) for t in block.terms}
+        if True in sides and others:
+            raise RealizationError(
+                f"signal.source_resistance: block {block.name} has no virtual ground and shares "
+                "the source with others; expected a buffer before the board, or another form"
+            )

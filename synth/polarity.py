@@ -8,6 +8,10 @@ minimised exactly: all sign choices are enumerated, one block at a time, keeping
 state of the blocks that still have open connections only the cheapest choice so far
 (dynamic programming; an inverter-free choice exists only for a balanced signed graph,
 Harary 1953, from memory).
+
+An adder with `both_signs` reads every source directly: a term that an inverting cell could not
+take goes to the other input of its op-amp.  Among the choices with the fewest inverters, one
+with the fewest such terms is taken.
 """
 
 from __future__ import annotations
@@ -33,12 +37,15 @@ class Polarity:
         Whether the board's output carries -H(s).
     output_from_inverter
         Whether the board's output is the inverted copy of the output block.
+    both_signs
+        The blocks whose cells take terms of either sign.
     """
 
     signs: dict[str, int]
     inverters: tuple[str, ...]
     output_inverted: bool
     output_from_inverter: bool
+    both_signs: frozenset[str] = frozenset()
 
     def of(self, source: str) -> int:
         """Sign at the direct output of a source, +1 for the input."""
@@ -46,7 +53,11 @@ class Polarity:
 
     def direct(self, block: str, source: str, weight: float) -> bool:
         """Whether a term of that weight is wired to the direct output of its source."""
-        return _direct(self.of(block), weight, self.of(source))
+        return block in self.both_signs or _direct(self.of(block), weight, self.of(source))
+
+    def at_plus(self, block: str, source: str, weight: float) -> bool:
+        """Whether a term of that weight goes to the non-inverting input of its cell."""
+        return block in self.both_signs and not _direct(self.of(block), weight, self.of(source))
 
 
 def inverter_count(graph: BlockGraph, signs: dict[str, int], inverted: str) -> int:
@@ -75,6 +86,7 @@ def choose_polarity(graph: BlockGraph, *, inverted: str = "no") -> Polarity:
         inverters=tuple(s for s in (INPUT, *(b.name for b in graph.blocks)) if s in needed),
         output_inverted=inverted == "yes",
         output_from_inverter=signs[graph.output] != wanted,
+        both_signs=frozenset(b.name for b in graph.blocks if b.both_signs),
     )
 
 
@@ -88,7 +100,7 @@ def _needed(graph: BlockGraph, signs: dict[str, int], inverted: str) -> set[str]
         t.source
         for b in graph.blocks
         for t in b.terms
-        if not _direct(signs[b.name], float(t.weight), signs.get(t.source, 1))
+        if not b.both_signs and not _direct(signs[b.name], float(t.weight), signs.get(t.source, 1))
     }
     if signs[graph.output] != (-1 if inverted == "yes" else 1):
         needed.add(graph.output)
@@ -100,6 +112,7 @@ class _Edge:
     source: str
     reader: str
     positive: bool
+    both_signs: bool = False
 
     def conflicts(self, signs: dict[str, int]) -> bool:
         return not _direct(signs[self.reader], 1.0 if self.positive else -1.0, signs[self.source])
@@ -107,7 +120,9 @@ class _Edge:
 
 def _best_signs(graph: BlockGraph, inverted: str) -> dict[str, int]:
     """Dynamic programming over the blocks, exact."""
-    edges = [_Edge(t.source, b.name, t.weight > 0) for b in graph.blocks for t in b.terms]
+    edges = [
+        _Edge(t.source, b.name, t.weight > 0, b.both_signs) for b in graph.blocks for t in b.terms
+    ]
     # The world outside reads the output with a sign of its own: an edge to a fixed reader.
     edges.append(_Edge(graph.output, _WORLD, inverted != "yes"))
     touching: dict[str, list[_Edge]] = {}
@@ -118,9 +133,7 @@ def _best_signs(graph: BlockGraph, inverted: str) -> dict[str, int]:
     # A state is the signs of the assigned names that still have open edges, and which of them
     # already need an inverter; its value is the cost and the signs that led there.
     start: dict[str, int] = {INPUT: 1, _WORLD: -1}
-    states: dict[tuple[object, ...], tuple[int, dict[str, int], frozenset[str]]] = {
-        (): (0, start, frozenset())
-    }
+    states: dict[tuple[object, ...], _State] = {(): ((0, 0), start, frozenset())}
     done: set[str] = set(start)
     for name in _order(graph, touching):
         done.add(name)
@@ -128,14 +141,16 @@ def _best_signs(graph: BlockGraph, inverted: str) -> dict[str, int]:
         open_names = sorted(
             n for n in done if any(not {e.source, e.reader} <= done for e in touching.get(n, ()))
         )
-        following: dict[tuple[object, ...], tuple[int, dict[str, int], frozenset[str]]] = {}
-        for cost, signs, flagged in states.values():
+        following: dict[tuple[object, ...], _State] = {}
+        for (inverters, at_plus), signs, flagged in states.values():
             for sign in (1, -1):
                 trial = {**signs, name: sign}
-                hit = {e.source for e in closing if e.conflicts(trial)} - flagged
+                against = [e for e in closing if e.conflicts(trial)]
+                hit = {e.source for e in against if not e.both_signs} - flagged
+                more = sum(e.both_signs for e in against)
                 flags = flagged | hit
                 key = tuple((trial[n], n in flags) for n in open_names)
-                value = (cost + len(hit), trial, flags)
+                value = ((inverters + len(hit), at_plus + more), trial, flags)
                 if key not in following or value[0] < following[key][0]:
                     following[key] = value
         states = following
@@ -144,6 +159,9 @@ def _best_signs(graph: BlockGraph, inverted: str) -> dict[str, int]:
 
 
 _WORLD = "*"
+
+# (inverters, terms at a non-inverting input), signs, sources that need an inverter.
+_State = tuple[tuple[int, int], dict[str, int], frozenset[str]]
 
 
 def _order(graph: BlockGraph, touching: dict[str, list[_Edge]]) -> list[str]:

@@ -122,8 +122,8 @@ def pruned(system: StateSpace, wanted: Wanted) -> StateSpace:
     matrix, miss = _corrected(matrix, kept, wanted)
     if not miss < ACCEPTED:
         raise NumericalError(
-            f"a realization misses its response by {wanted.error(system):.1e} and a correction "
-            "does not converge; its Hankel singular values may spread too far"
+            f"a realization misses its response by {miss:.1e} and a correction does not converge; "
+            "its Hankel singular values may spread too far"
         )
     # In order: largest error, noise and sensitivity.
     most = (1 + GIVEN_AWAY) * np.array(_costs(matrix, kept, wanted))

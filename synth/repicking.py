@@ -16,7 +16,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from synth.candidates import Sketch, choose_form
+from synth.candidates import Sketch, sketch_form
 from synth.choosing import Choice
 from synth.choosing.choose import DEFAULT_EFFORT, with_ideals
 from synth.choosing.descent import Neighbourhood
@@ -85,7 +85,7 @@ def repick(earlier: Earlier, request: Request, *, progress: Progress | None = No
     job = replace(earlier.job, board=replace(earlier.job.board, form=earlier.form))
     frequency = judging_frequencies(job.target, job.signal.band_hz)
     say("rebuilding", 0, 1)
-    sketch, candidates = choose_form(job, frequency)
+    sketch = sketch_form(job, job.board.form, frequency)
     drawn = paired(sketch.circuit, earlier.parts) if job.board.pairs else sketch.circuit
     circuit = rebuilt(drawn, earlier.parts)
     wanted = _checked_request(circuit, job, earlier, request)
@@ -95,7 +95,7 @@ def repick(earlier: Earlier, request: Request, *, progress: Progress | None = No
     made = judged_design(
         job,
         sketch,
-        candidates,
+        (sketch.candidate,),
         choice,
         frequency,
         boards=earlier.boards,

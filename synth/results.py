@@ -12,10 +12,10 @@ from numpy.typing import NDArray
 
 from synth.choosing.certificate import Certificate
 from synth.circuit import Circuit
-from synth.evidence import Check, ResponseError
+from synth.evidence import Check, ResponseError, WorstBoard
 from synth.graph import BlockGraph
 from synth.job import Job
-from synth.loop import LoopMargins
+from synth.loop import LoopBoards, LoopMargins
 from synth.shortages import Repick
 from synth.transfer import TransferFunction
 
@@ -25,15 +25,13 @@ __all__ = [
     "Drift",
     "ErrorBudget",
     "ErrorFigures",
-    "LoopBoards",
+    "FormFigures",
     "LoopResult",
     "NoiseResult",
     "OpAmpAllowance",
-    "Percentiles",
     "Swing",
     "Tightened",
     "ToleranceResult",
-    "WorstBoard",
 ]
 
 Real = NDArray[np.float64]
@@ -95,20 +93,6 @@ class NoiseResult:
 
 
 @dataclass(frozen=True, kw_only=True)
-class WorstBoard:
-    """A board of a run that comes out far from the target.
-
-    `number` counts from 0 in the run; `limit_share` is its largest error over the band as a
-    share of the limit, of magnitude or phase, whichever is more; `values` are those of the
-    passives in circuit order [ohm], [F].
-    """
-
-    number: int
-    limit_share: float
-    values: tuple[float, ...]
-
-
-@dataclass(frozen=True, kw_only=True)
 class ToleranceResult:
     """A run of boards with parts drawn within their tolerance.
 
@@ -159,6 +143,11 @@ class ErrorFigures:
     rms: float
     largest_db: float
     largest_deg: float
+
+    @classmethod
+    def of(cls, error: ResponseError) -> ErrorFigures:
+        """From the error over frequency."""
+        return cls(rms=error.rms, largest_db=error.largest_db, largest_deg=error.largest_deg)
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -259,12 +248,63 @@ class ErrorBudget:
 
 
 @dataclass(frozen=True, kw_only=True)
+class FormFigures:
+    """What a form comes to with standard values.
+
+    Parameters
+    ----------
+    resistors, capacitors
+        How many are bought.
+    value_ratio
+        Largest over smallest value of a kind, resistors or capacitors, the larger of the two.
+    nominal
+        Error of the nominal board.
+    boards, passed, low, high
+        The run of boards, as in `ToleranceResult`.
+    error_95_db
+        95th percentile over boards of the largest dB error over the band.
+    noise_rms
+        At the output over the band [V].
+    dynamic_range_db
+        Largest sine at the output before any op-amp output meets its limit, rms, over the noise.
+    peak, hottest
+        Largest peak among the op-amp outputs at the stated input [V], and which op-amp has it.
+    gain_bandwidth_needed
+        Smallest with which the nominal board keeps its limits [Hz]; None where none does.
+    missed
+        What the nominal board misses, in words; empty where it keeps every limit.
+    """
+
+    resistors: int
+    capacitors: int
+    value_ratio: float
+    nominal: ErrorFigures
+    boards: int
+    passed: int
+    low: float
+    high: float
+    error_95_db: float
+    noise_rms: float
+    dynamic_range_db: float
+    peak: float
+    hottest: str
+    gain_bandwidth_needed: float | None
+    missed: tuple[str, ...] = ()
+
+    @property
+    def share(self) -> float:
+        """Share of the boards that pass, a ratio."""
+        return self.passed / self.boards
+
+
+@dataclass(frozen=True, kw_only=True)
 class Candidate:
     """A form that was considered.
 
     `spread_db` and `spread_deg` are the predicted spreads of magnitude and phase from part
     tolerance (one standard deviation, largest over the band) [dB], [deg]; None with a
-    `reason` where the form could not be built.
+    `reason` where the form could not be built.  `figures` is there where its values were
+    chosen; `verdict` is then ``"pass"`` or ``"fail"``, and `reason` says why it was not taken.
     """
 
     form: str
@@ -273,48 +313,8 @@ class Candidate:
     spread_db: float | None
     spread_deg: float | None
     reason: str = ""
-
-
-@dataclass(frozen=True, kw_only=True)
-class Percentiles:
-    """Percentiles over boards; None where they fall on boards that have no such number."""
-
-    p5: float | None
-    p50: float | None
-    p95: float | None
-
-
-@dataclass(frozen=True, kw_only=True)
-class LoopBoards:
-    """The loop around each board of a run.
-
-    Parameters
-    ----------
-    boards, stable, passed
-        How many were drawn, how many of them are stable by the Nyquist criterion, and how many
-        of these keep the job's limits on the margins.
-    low, high
-        Clopper-Pearson interval of passed / boards at `confidence`, ratios.
-    phase_margin_deg, gain_margin_db, crossover_hz, disk_margin
-        Percentiles of what `LoopMargins` says of each board.  A margin without a crossing
-        counts as larger than any other, that of an unstable board as negative.
-    """
-
-    boards: int
-    stable: int
-    passed: int
-    low: float
-    high: float
-    confidence: float
-    phase_margin_deg: Percentiles
-    gain_margin_db: Percentiles
-    crossover_hz: Percentiles
-    disk_margin: Percentiles
-
-    @property
-    def share(self) -> float:
-        """Share of the boards that are stable and keep the limits, a ratio."""
-        return self.passed / self.boards
+    figures: FormFigures | None = None
+    verdict: str = ""
 
 
 @dataclass(frozen=True, kw_only=True)

@@ -36,19 +36,24 @@ def realized(target: TransferFunction, form: str) -> BlockGraph:
 
 
 def largest_summand(graph: BlockGraph, s: NDArray[np.complex128]) -> NDArray[np.float64]:
-    """The largest |weight * signal| the output adds up, zero where it is an integrator."""
-    output = graph.by_name[graph.output]
-    if output.is_integrator:
-        return np.zeros(s.shape)
+    """The largest |weight * signal| any adder adds up, as large as it arrives at the output; zero
+    without adders."""
     signals = {"in": np.ones_like(s), **graph.signals(s)}
-    return np.max([np.abs(float(t.weight) * signals[t.source]) for t in output.terms], axis=0)
+    injections = graph.injections(s)
+    largest = np.zeros(s.shape)
+    for adder in graph.adders:
+        for term in adder.terms:
+            part = float(term.weight) * signals[term.source] * injections[adder.name]
+            largest = np.maximum(largest, np.abs(part))
+    return largest
 
 
 def sizes_of_response(
     graph: BlockGraph, response: NDArray[np.complex128], s: NDArray[np.complex128]
 ) -> NDArray[np.float64]:
     """What an error of the response is relative to: the response itself, or where zeros come
-    from sums that cancel the largest summand of the output, as rounding leaves it."""
-    if FORMS[graph.form].structural_zeros:
+    from sums that cancel the largest summand there is, as rounding leaves it."""
+    form = FORMS[graph.form]
+    if form.structural_zeros and not form.summed_zeros:
         return np.abs(response)
     return np.maximum(np.abs(response), largest_summand(graph, s))

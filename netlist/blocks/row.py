@@ -251,7 +251,8 @@ def _columns(tracks: list[Track], place: int, *, entries: bool) -> list[Column]:
 
 def _set_x(made: Row) -> None:
     """Every x, from left to right."""
-    taken = {"above": -1e9, "below": -1e9}
+    # A row that goes on from another is reached from above, at its left edge, and left downwards.
+    taken = {"above": 0.0 if made.places[0].label else -1e9, "below": -1e9}
 
     def put(column: Column, x: float) -> float:
         sides = [(s, getattr(column, s)) for s in ("above", "below")]
@@ -286,7 +287,7 @@ def _set_x(made: Row) -> None:
             cursor += _GAP if place is made.places[0] else LEAD
         for k, column in enumerate(place.taps):
             cursor = put(column, cursor + (_GAP if k else 0))
-    made.width = cursor
+    made.width = max(cursor, taken["below"] + _CLEAR)
 
 
 def _lay_gain(track: Track, made: Row) -> bool:

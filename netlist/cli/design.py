@@ -68,9 +68,13 @@ def command(
     check_pack_folder(folder)
 
     def make(report: Report) -> Design:
+        from netlist.processes import workers
         from synth.design import design
 
-        return design(job, boards=boards, seed=seed, effort=effort, progress=report)
+        with workers() as mapper:
+            return design(
+                job, boards=boards, seed=seed, effort=effort, progress=report, mapper=mapper
+            )
 
     return carry_out(make, folder, job_name=job_file.name, as_json=as_json)
 

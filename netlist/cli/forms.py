@@ -17,18 +17,27 @@ __all__ = ["command"]
 @as_json
 @with_traceback
 def command(job_file: Path, as_json: bool) -> Result:
-    """Compare the realizations for JOB.toml; write nothing.
+    """Rank the realizations for JOB.toml; write nothing.
 
-    Spread is one standard deviation of magnitude and phase from part tolerance, the largest over
-    the band.  Unless the job names a form, the one is chosen whose spread is smallest against
-    the limits, magnitude or phase, whichever is worse.
+    Each form gets standard values and a run of boards.  Among the forms that keep every limit
+    with nominal parts and whose yield is not clearly below the best one's, the one with the
+    fewest op-amps is chosen, then the one with the smallest 95th percentile of the error.
     """
-    from netlist.cli.summary import forms_table
+    from netlist.cli.progress import progress
     from netlist.jobfile import read_job
-    from netlist.records import candidate_records, record_text
-    from synth.design import compare_forms
 
-    chosen, candidates = compare_forms(read_job(job_file))
+    job = read_job(job_file)
+    with progress() as report:
+        report("loading", 0, 1)
+        from netlist.processes import workers
+        from synth.design import compare_forms
+
+        with workers() as mapper:
+            chosen, candidates = compare_forms(job, progress=report, mapper=mapper)
+
+    from netlist.cli.summary import forms_table
+    from netlist.records import candidate_records, record_text
+
     if as_json:
         record = {"chosen": chosen, "forms": candidate_records(candidates)}
         return Result(0, record_text(record))

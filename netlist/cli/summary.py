@@ -16,7 +16,7 @@ from netlist.records import all_checks, verdict_of
 from netlist.report.changes import change_errors, change_rows
 from netlist.report.found import check_rows, form_rows
 from netlist.report.page import LOW_YIELD
-from netlist.report.wording import percent, spelled, stated
+from netlist.report.wording import percent, stated
 from synth.results import Candidate, Design
 
 if TYPE_CHECKING:
@@ -38,7 +38,7 @@ def summary(design: Design, verification: Verification, *, folder: Path) -> str:
     facts = (
         ("verdict", _coloured(outcome.upper(), _COLOURS[outcome])
          + f", {percent(run.share, 4)} of boards within limits"),
-        ("form", spelled(design.form) + (", output inverted" if design.inverted else "")),
+        ("form", design.form + (", output inverted" if design.inverted else "")),
         ("op-amps", f"{len(circuit.amplifiers)} in {_counted(len(chips), 'package')}"),
         ("parts", f"{_counted(kinds.count('resistor'), 'resistor')}, "
          f"{_counted(kinds.count('capacitor'), 'capacitor')}"),
@@ -62,22 +62,39 @@ def summary(design: Design, verification: Verification, *, folder: Path) -> str:
     return _plain_spaces("\n".join(lines) + "\n")
 
 
+FORM_COLUMNS = {
+    "form": "form",
+    "op_amps": "op-amps",
+    "packages": "packages",
+    "resistors": "R",
+    "capacitors": "C",
+    "ratio": "ratio",
+    "nominal": "nominal",
+    "yield": "yield",
+    "interval": "95 % confidence",
+    "error_95": "95th pct",
+    "noise": "noise",
+    "range": "range",
+    "peak": "peak",
+    "bandwidth": "GBW needed",
+    "verdict": "verdict",
+}
+
+
 def forms_table(chosen: str, candidates: Iterable[Candidate]) -> str:
-    """The forms side by side."""
-    rows = [
-        (
-            str(r["form"]),
-            "yes" if r["possible"] else "no",
-            str(r["op_amps"]),
-            str(r["spread_db"]),
-            str(r["spread_deg"]),
-            "chosen" if r["chosen"] else "",
-            str(r["reason"]),
-        )
-        for r in form_rows(candidates, chosen)
-    ]
-    header = ("form", "possible", "op-amps", "spread, dB", "spread, deg", "", "reason")
-    return _plain_spaces("\n".join(_table(header, rows)) + "\n")
+    """The forms side by side, then the one to take and why not each other one."""
+    rows = form_rows(candidates, chosen)
+    shown = [[str(r[key]) for key in FORM_COLUMNS] for r in rows if r["possible"]]
+    width = max(len(str(r["form"])) for r in rows)
+    lines = _table(tuple(FORM_COLUMNS.values()), shown)
+    lines += ["", f"  {chosen.ljust(width)}  chosen"]
+    for row in rows:
+        if not row["chosen"]:
+            words = "" if row["possible"] else "not possible: "
+            lines.append(
+                f"  {str(row['form']).ljust(width)}  {words}{_printable(str(row['reason']))}"
+            )
+    return _plain_spaces("\n".join(lines) + "\n")
 
 
 def warn(design: Design, verification: Verification) -> None:

@@ -9,8 +9,8 @@ from netlist.partslist import PartLine
 from netlist.report.wording import NONE, decibel, number, percent, quantity, spelled, stated
 from synth.circuit import Circuit, Passive
 from synth.evidence import Check
-from synth.loop import LoopMargins
-from synth.results import Candidate, Design, Drift, LoopResult, Percentiles, Swing
+from synth.loop import LoopMargins, Percentiles
+from synth.results import Candidate, Design, Drift, LoopResult, Swing
 
 __all__ = [
     "check_rows",
@@ -25,6 +25,7 @@ __all__ = [
 ]
 
 Row = dict[str, object]
+NBSP = "\N{NO-BREAK SPACE}"
 
 # The unit of a check whose value is a count, written without decimals.
 COUNTED = "unstable poles"
@@ -66,19 +67,45 @@ def check_rows(checks: Iterable[Check]) -> list[Row]:
 
 
 def form_rows(candidates: Iterable[Candidate], chosen: str) -> list[Row]:
-    """The forms considered."""
+    """The forms considered; figures where values were chosen for more than the one taken."""
     return [
         {
-            "form": spelled(c.form),
+            "form": c.form,
             "chosen": c.form == chosen,
             "possible": c.possible,
             "op_amps": NONE if c.op_amps is None else str(c.op_amps),
             "spread_db": decibel(c.spread_db),
             "spread_deg": decibel(c.spread_deg),
             "reason": c.reason,
+            **_figures(c),
         }
         for c in candidates
     ]
+
+
+def _figures(candidate: Candidate) -> Row:
+    """What a form comes to with its values, dashes where none were chosen."""
+    found = candidate.figures
+    if found is None:
+        names = ("packages", "resistors", "capacitors", "ratio", "nominal", "yield", "interval")
+        more = ("error_95", "noise", "range", "peak", "bandwidth", "verdict")
+        return dict.fromkeys((*names, *more), NONE)
+    assert candidate.op_amps is not None
+    return {
+        "packages": f"{-(-candidate.op_amps // 4)} quad, {-(-candidate.op_amps // 2)} dual",
+        "resistors": str(found.resistors),
+        "capacitors": str(found.capacitors),
+        "ratio": number(found.value_ratio),
+        "nominal": percent(found.nominal.rms),
+        "yield": percent(found.share, 4),
+        "interval": f"{percent(found.low, 4)} to {percent(found.high, 4)}",
+        "error_95": f"{decibel(found.error_95_db)}{NBSP}dB",
+        "noise": quantity(found.noise_rms, "V"),
+        "range": f"{number(found.dynamic_range_db)}{NBSP}dB",
+        "peak": f"{quantity(found.peak, 'V')} at {found.hottest}",
+        "bandwidth": quantity(found.gain_bandwidth_needed, "Hz"),
+        "verdict": candidate.verdict,
+    }
 
 
 def swing_rows(swings: Iterable[Swing], circuit: Circuit) -> list[Row]:

@@ -17,6 +17,7 @@ from netlist.records import all_checks, verdict_of
 from netlist.report import asked, changes, choice, found, wording
 from netlist.svg import prefix_ids
 from synth.evidence import Check
+from synth.ranking import RANKED_BOARDS
 from synth.results import Design
 
 if TYPE_CHECKING:
@@ -87,6 +88,7 @@ def report_page(
             changes=changes.change_rows(design.repick) if design.repick else [],
             change_errors=changes.change_errors(design.repick) if design.repick else [],
             forms=found.form_rows(design.candidates, design.form),
+            ranked_boards=RANKED_BOARDS,
             swings=found.swing_rows(design.swings, design.circuit),
             values=found.value_rows(design.circuit),
             choice=choice.shown(design),

@@ -113,7 +113,7 @@ def _fixtures(circuit: Circuit) -> tuple[Passive | None, tuple[Passive, ...]]:
     inside = {r for c in circuit.cells for r in c.refs}
     outside = [p for p in circuit.passives if p.ref not in inside]
     outputs = {c.output for c in circuit.cells}
-    summing = {c.summing for c in circuit.cells}
+    summing = {net for c in circuit.cells for net in (c.summing, c.plus)}
     load_nets = {circuit.output_net, GROUND}
     loads = [p for p in outside if set(p.nets) == load_nets and p.kind == "resistor"]
     sources = [
@@ -136,11 +136,11 @@ def _fixtures(circuit: Circuit) -> tuple[Passive | None, tuple[Passive, ...]]:
 
 
 def _check_cell(circuit: Circuit, cell: Cell) -> None:
-    """Refuse a cell that is not an inverting stage around one op-amp."""
+    """Refuse a cell that is not a stage around one op-amp with feedback to its inverting input."""
     amplifier = next((a for a in circuit.amplifiers if a.ref == cell.amplifier), None)
     if amplifier is None:
         raise CircuitError(f"cell {cell.block}: unknown op-amp {cell.amplifier!r}")
-    wanted = (GROUND, cell.summing, cell.output)
+    wanted = (cell.plus, cell.summing, cell.output)
     got = (amplifier.plus, amplifier.minus, amplifier.output)
     if got != wanted:
         raise CircuitError(
@@ -157,7 +157,7 @@ def _check_cell(circuit: Circuit, cell: Cell) -> None:
         raise CircuitError(f"cell {cell.block}: got no input resistor, expected at least one")
     for ref in cell.inputs:
         part = circuit.by_ref[ref]
-        if part.kind != "resistor" or cell.summing not in part.nets:
+        if part.kind != "resistor" or cell.node_of(part) not in part.nets:
             raise CircuitError(
                 f"cell {cell.block}: got the {part.kind} {ref} between "
                 f"{' and '.join(part.nets)}, expected a resistor into {cell.summing}"

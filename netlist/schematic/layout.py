@@ -19,7 +19,7 @@ from netlist.schematic.geometry import Point, flag_length
 from netlist.schematic.links import NetLinks, choose_links
 from netlist.schematic.outlets import Outlet, measure_outlet
 from netlist.schematic.placement import Placement
-from netlist.schematic.stages import PITCH, STAGES, TEE, branch_length
+from netlist.schematic.stages import PITCH, STAGES, TEE, balance_length, branch_length
 from netlist.schematic.tracks import Tracks, Vertical, lay_tracks
 
 __all__ = ["Layout", "lay_out"]
@@ -84,7 +84,10 @@ def lay_out(connections: Connections, placement: Placement) -> Layout:
     links = choose_links(connections, placement)
     tracks = lay_tracks(connections, placement, links)
     outlets = _outlets(connections, placement, links)
-    lead = max(branch_length(branch) for branch in circuit.branches())
+    lead = max(
+        *(branch_length(branch) for branch in circuit.branches()),
+        *(balance_length(circuit, cell) for cell in circuit.cells),
+    )
     flags = _flag_widths(connections, placement, links)
     buses, channels = _columns(placement, tracks, outlets, flags, lead)
     reach = _Reach(connections, placement, outlets)

@@ -1,4 +1,4 @@
-r"""The inverting stage: one op-amp with + at ground, a feedback part, input resistors.
+r"""The stage: one op-amp, a feedback part to its inverting input, input resistors.
 
 Summing integrators, summing amplifiers and inverters are all this stage; they differ in the
 feedback part and in the caption.  Its own origin lies where the summing bus crosses the line
@@ -15,6 +15,9 @@ of the op-amp's output::
 
 The first resistor lies on the line of the output, so that a chain of stages is a straight
 line; the others hang below it at a constant pitch.  Two in series lie in line.
+
+A difference stage has a second bus, at its other input, to the right of the first; the resistor
+that balances the two inputs hangs lowest, with its own ground.
 """
 
 from __future__ import annotations
@@ -32,6 +35,7 @@ __all__ = [
     "STAGES",
     "TEE",
     "Stage",
+    "balance_length",
     "branch_length",
     "draw_ground",
     "draw_resistor",
@@ -68,7 +72,8 @@ class Stage:
 
     def below(self, cell: Cell) -> float:
         """How far it reaches below its output line [px]."""
-        return max(_CAPTION + 4, (len(cell.inputs) - 1) * PITCH + 8)
+        rows = len(cell.inputs) + bool(cell.balance)
+        return max(_CAPTION + 4, (rows - 1) * PITCH + (12 if cell.balance else 8))
 
     def right(self, cell: Cell) -> float:
         """Where the caption ends [px]."""
@@ -86,16 +91,29 @@ def branch_length(branch: Branch) -> float:
     return sum(resistor_length(part) for part in branch.parts)
 
 
+def balance_length(circuit: Circuit, cell: Cell) -> float:
+    """Length that the resistor which balances a cell takes up, with its ground; 0 for none."""
+    return resistor_length(circuit.by_ref[cell.balance]) + 10 if cell.balance else 0.0
+
+
 def draw_resistor(
-    sheet: Sheet, part: Passive, left: Point, length: float, nets: tuple[str, str], *, heavy: bool
+    sheet: Sheet,
+    part: Passive,
+    left: Point,
+    length: float,
+    nets: tuple[str, str],
+    *,
+    heavy: bool,
+    tail: float = 0.0,
 ) -> None:
-    """A lying resistor with leads from `left` over `length`; `nets` from left to right."""
+    """A lying resistor with leads from `left` over `length`, the right one longer by `tail`;
+    `nets` from left to right."""
     x, y = left
     middle = x + length / 2
     half, _ = _half_size(part)
     _lying(sheet, part, (middle, y))
     sheet.wire(nets[0], left, (middle - half, y), heavy=heavy)
-    sheet.wire(nets[1], (middle + half, y), (x + length, y), heavy=heavy)
+    sheet.wire(nets[1], (middle + half, y), (x + length + tail, y), heavy=heavy)
 
 
 def draw_ground(sheet: Sheet, at: Point) -> None:
@@ -126,7 +144,7 @@ def _hint(part: Passive) -> str:
     return f"{_label(part)}{rule}" + (f": sets {part.sets}" if part.sets else "")
 
 
-def _draw_inverting(
+def _draw_stage(
     sheet: Sheet,
     circuit: Circuit,
     cell: Cell,
@@ -136,33 +154,84 @@ def _draw_inverting(
     lead: float,
     main: str,
 ) -> None:
-    r"""The inverting stage with its bus at `at`.
+    r"""The stage with its bus at `at`.
 
     `stack` are the input resistors from top to bottom, `lead` the length of each, `main` the
     one on the main path or ``""``.  The output ends at the feedback tee.
     """
     x, y = at
-    top, last = y + _OVER, y + (len(stack) - 1) * PITCH
+    rows: dict[str, list[float]] = {cell.summing: [], cell.plus: []}
+    entry: dict[str, float] = {}
+    # The bus at the other input stands right of the first, which the wires to it may cross.
+    tail = {cell.plus: _GROUND_X, cell.summing: 0.0}
     for k, ref in enumerate(stack):
-        branch = circuit.branch(cell, ref)
-        _draw_branch(sheet, branch, (x, y + k * PITCH), lead, cell.summing, heavy=ref == main)
-    _draw_bus(sheet, cell, at, last, y + PITCH * stack.index(main) if main else None)
-    feedback = circuit.by_ref[cell.feedback]
-    middle = x + TEE / 2
-    half, _ = _half_size(feedback)
-    _lying(sheet, feedback, (middle, top))
-    sheet.wire(cell.summing, (x, top), (middle - half, top))
-    sheet.wire(cell.output, (middle + half, top), (x + TEE, top), (x + TEE, y))
+        branch, node = circuit.branch(cell, ref), cell.node_of(circuit.by_ref[ref])
+        row = y + k * PITCH
+        _draw_branch(sheet, branch, (x, row), lead, node, heavy=ref == main, tail=tail[node])
+        rows[node].append(row)
+        if ref == main:
+            entry[node] = row
+    if cell.balance:
+        part, row = circuit.by_ref[cell.balance], y + len(stack) * PITCH
+        node = cell.node_of(part)
+        _draw_leg(sheet, part, (x, row), node, tail=tail[node])
+        rows[node].append(row)
+    last = max(rows[cell.summing], default=y + _MINUS)
+    _draw_bus(sheet, cell, at, last, entry.get(cell.summing))
+    _draw_plus(sheet, cell, at, rows[cell.plus], entry.get(cell.plus))
+    _draw_feedback(sheet, circuit.by_ref[cell.feedback], cell, at)
     amplifier = next(a for a in circuit.amplifiers if a.ref == cell.amplifier)
     _draw_op_amp(sheet, amplifier, (x + _BACK, y), STAGES[cell.kind].caption(cell))
     sheet.wire(cell.output, (x + _TIP, y), (x + TEE, y), heavy=bool(main))
-    sheet.wire(GROUND, (x + _BACK, y + _PLUS), (x + _GROUND_X, y + _PLUS))
-    sheet.wire(GROUND, (x + _GROUND_X, y + _PLUS), (x + _GROUND_X, y + _PLUS + 7))
-    draw_ground(sheet, (x + _GROUND_X, y + _PLUS + 7))
+
+
+def _draw_feedback(sheet: Sheet, part: Passive, cell: Cell, at: Point) -> None:
+    """The part above the op-amp, from the bus to the tee at the output."""
+    x, y = at
+    top, middle = y + _OVER, x + TEE / 2
+    half, _ = _half_size(part)
+    _lying(sheet, part, (middle, top))
+    sheet.wire(cell.summing, (x, top), (middle - half, top))
+    sheet.wire(cell.output, (middle + half, top), (x + TEE, top), (x + TEE, y))
+
+
+def _draw_leg(sheet: Sheet, part: Passive, right: Point, node: str, *, tail: float) -> None:
+    """A resistor from a bus to a ground of its own."""
+    length = resistor_length(part)
+    left = (right[0] - length, right[1])
+    draw_resistor(sheet, part, left, length, (GROUND, node), heavy=False, tail=tail)
+    draw_ground(sheet, left)
+
+
+def _draw_plus(
+    sheet: Sheet, cell: Cell, at: Point, rows: Sequence[float], entry: float | None
+) -> None:
+    """What the non-inverting input hangs on: ground, or the bus of the resistors at `rows`."""
+    x, y = at[0] + _GROUND_X, at[1] + _PLUS
+    sheet.wire(cell.plus, (at[0] + _BACK, y), (x, y), heavy=entry is not None)
+    if not rows:
+        sheet.wire(cell.plus, (x, y), (x, y + 7))
+        draw_ground(sheet, (x, y + 7))
+        return
+    for side in ([r for r in rows if r < y], [r for r in rows if r > y]):
+        end = y
+        if entry in side:
+            sheet.wire(cell.plus, (x, y), (x, entry), heavy=True)
+            end = entry
+        far = max(side, key=lambda r: abs(r - y), default=y)
+        if far != end:
+            sheet.wire(cell.plus, (x, end), (x, far))
 
 
 def _draw_branch(
-    sheet: Sheet, branch: Branch, right: Point, lead: float, summing: str, *, heavy: bool
+    sheet: Sheet,
+    branch: Branch,
+    right: Point,
+    lead: float,
+    summing: str,
+    *,
+    heavy: bool,
+    tail: float,
 ) -> None:
     """The resistors of one input in line, over `lead` to `right`; the first takes the slack."""
     x, y = right
@@ -171,8 +240,8 @@ def _draw_branch(
         length = resistor_length(part) if k else x - right[0] + lead
         far = part.nets[1] if part.nets[0] == net else part.nets[0]
         x -= length
-        draw_resistor(sheet, part, (x, y), length, (far, net), heavy=heavy)
-        net = far
+        draw_resistor(sheet, part, (x, y), length, (far, net), heavy=heavy, tail=tail)
+        net, tail = far, 0.0
 
 
 def _draw_bus(sheet: Sheet, cell: Cell, at: Point, last: float, entry: float | None) -> None:
@@ -224,8 +293,8 @@ def _caption(cell: Cell) -> str:
     return f"{ref}{cell.kind}: {signal}"
 
 
-_INVERTING = Stage(_draw_inverting, _caption)
+_STAGE = Stage(_draw_stage, _caption)
 STAGES: Mapping[str, Stage] = MappingProxyType(
-    {"integrator": _INVERTING, "adder": _INVERTING, "inverter": _INVERTING}
+    {"integrator": _STAGE, "adder": _STAGE, "inverter": _STAGE, "difference": _STAGE}
 )
 """How each kind of cell is drawn."""

@@ -15,6 +15,7 @@ from dataclasses import dataclass, field
 from netlist.schematic.connections import Connections
 from netlist.schematic.links import NetLinks
 from netlist.schematic.placement import Placement
+from synth.circuit import GROUND
 
 __all__ = ["Tracks", "Vertical", "lay_tracks"]
 
@@ -214,14 +215,16 @@ def _stack(
     """Input resistors of a cell from top to bottom; `group` are the verticals beside it.
 
     Wires that come up from the left pass below the left-hand neighbour only, so their resistors
-    stand high; those that come from the right pass below the cell itself.
+    stand high; those that come from the right pass below the cell itself.  Below the first, which
+    lies on the line of the output, resistors into the other input of an op-amp stand lowest.
     """
     hows = {
         k.reader.ref: k.how for each in links.values() for k in each.links if k.reader.cell == cell
     }
     readers = [v for v in group if not v.source]
-    inputs = connections.circuit.cells[cell].inputs
-    return [
+    circuit = connections.circuit
+    inputs, other = circuit.cells[cell].inputs, circuit.cells[cell].plus
+    order = [
         *(ref for ref in inputs if hows[ref] == "straight"),
         *(ref for ref in inputs if hows[ref] == "beside"),
         *(ref for v in reversed(readers) if v.up for ref in v.readers),
@@ -229,3 +232,5 @@ def _stack(
         *(ref for ref in inputs if hows[ref] == "flag"),
         *(ref for v in readers if v.down and not v.from_left for ref in v.readers),
     ]
+    lower = [r for r in order[1:] if other != GROUND and other in circuit.by_ref[r].nets]
+    return [*order[:1], *(r for r in order[1:] if r not in lower), *lower]

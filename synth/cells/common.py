@@ -25,11 +25,13 @@ class Numbering:
 
 @dataclass(frozen=True)
 class CellInput:
-    """One input: the net it comes from, its resistance [ohm] and what it sets."""
+    """One input: the net it comes from, its resistance [ohm], what it sets, and whether it goes
+    to the non-inverting input of the op-amp."""
 
     net: str
     resistance: float
     sets: str
+    at_plus: bool = False
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -75,16 +77,20 @@ def inverting_cell(
     feedback: Passive,
     rules: CellRules,
     polarity: int,
+    plus: str = GROUND,
+    balance: Passive | None = None,
 ) -> BuiltCell:
     """Input resistors into a summing node, an op-amp with + at ground, and a feedback part.
 
-    `feedback` comes with value, rule and provenance; its reference and nets are set here.
+    `feedback` comes with value, rule and provenance; its reference and nets are set here.  With
+    another net `plus` at the non-inverting input, the inputs marked so go there; `balance` is a
+    resistor to ground that comes with its nets.
     """
     resistors = tuple(
         Passive(
             ref=numbering.next("R"),
             kind="resistor",
-            nets=(each.net, summing),
+            nets=(each.net, plus if each.at_plus else summing),
             value=each.resistance,
             ideal=each.resistance,
             rule=rules.resistors,
@@ -92,11 +98,12 @@ def inverting_cell(
         )
         for each in inputs
     )
+    legs = (replace(balance, ref=numbering.next("R")),) if balance else ()
     letter = "C" if feedback.kind == "capacitor" else "R"
     closing = replace(feedback, ref=numbering.next(letter), nets=(summing, output))
     amplifier = Amplifier(
         ref=numbering.next("U"),
-        plus=GROUND,
+        plus=plus,
         minus=summing,
         output=output,
         figures=rules.op_amp,
@@ -111,5 +118,7 @@ def inverting_cell(
         summing=summing,
         output=output,
         polarity=polarity,
+        plus=plus,
+        balance=legs[0].ref if legs else "",
     )
-    return BuiltCell(cell, (*resistors, closing), amplifier)
+    return BuiltCell(cell, (*resistors, *legs, closing), amplifier)

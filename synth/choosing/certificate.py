@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 
 from synth.choosing.binding import Frontier, binding_order
 from synth.choosing.bottlenecks import Bottleneck, bottlenecks
-from synth.choosing.completion import LARGEST_FRONTIER, LARGEST_SUMS, aligned, best_choices
+from synth.choosing.completion import LARGEST_FRONTIER, aligned, best_choices
 from synth.choosing.grid import ValueGrid
 from synth.choosing.model import LevelLimits, LinearModel
 from synth.choosing.supply import Supply
@@ -106,7 +106,6 @@ def certify(
         limits=limits,
         supply=supply,
         largest_frontier=largest_frontier,
-        largest_sums=min(LARGEST_SUMS, 16 * largest_frontier),
     )
     if exact is None:
         frontier = _grown(grid, model, below, largest_frontier)

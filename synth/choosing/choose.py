@@ -170,9 +170,10 @@ def _searched(
 
 def _sizes(circuit: Circuit) -> dict[str, float]:
     """The parts that set the impedance of a cell, and how far each may leave where the scaling
-    put it: capacitors, feedback resistors, and both resistors of an inverter.  A drawer holds
-    too few values to be choosy."""
+    put it: capacitors, feedback resistors, both resistors of an inverter, and what balances the
+    two inputs of an op-amp.  A drawer holds too few values to be choosy."""
     refs = [c.feedback for c in circuit.cells]
+    refs += [c.balance for c in circuit.cells if c.balance]
     refs += [r for c in circuit.cells if c.kind == "inverter" for r in c.inputs]
     parts = (circuit.by_ref[r] for r in refs)
     return {p.ref: SIZE_RANGE for p in parts if p.rule is not None and not p.rule.stock}

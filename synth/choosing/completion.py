@@ -12,6 +12,7 @@ in the order of their error, until one keeps the limits of the levels and the st
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -30,8 +31,9 @@ Index = NDArray[np.intp]
 # ideal leave 1e-6 of a difference, parts with tasks of their own leave a tenth and more.
 PARALLEL = 1e-5
 
-# Most sums that are made and sorted: a second of work and 130 MB.
-LARGEST_SUMS = 6_000_000
+# Most sums that are made and sorted: a hundredth of a second.  Further parts of the class are
+# assigned last, when hardly any assignments are left.
+LARGEST_SUMS = 100_000
 
 # Most partial assignments held at once.
 LARGEST_FRONTIER = 400_000
@@ -75,21 +77,43 @@ class Completion:
     model, grid
         As of the partial assignments; the columns of the class are multiples of `direction`.
     parts
-        The class.
+        Those of the class whose sums are made.
+    others
+        Those of the class that are to be assigned before.
     direction
         Unit vector, shape (K,).
-    sums
-        Effects of every combination of values along `direction`, ascending, shape (N,).
-    places
-        Which combination each sum is: flat index over the lists of values, shape (N,).
     """
 
     model: LinearModel
     grid: ValueGrid
     parts: tuple[int, ...]
+    others: tuple[int, ...]
     direction: Real
-    sums: Real
-    places: Index
+
+    @property
+    def count(self) -> int:
+        """How many combinations of values there are."""
+        return int(_combinations(self.grid, self.parts))
+
+    @property
+    def sums(self) -> Real:
+        """Effects of every combination of values along `direction`, ascending, shape (N,)."""
+        return self._sorted[0]
+
+    @property
+    def places(self) -> Index:
+        """Which combination each sum is: flat index over the lists of values, shape (N,)."""
+        return self._sorted[1]
+
+    @cached_property
+    def _sorted(self) -> tuple[Real, Index]:
+        sums = np.zeros(1)
+        for k in self.parts:
+            change = self.grid.logs[k, : self.grid.counts[k]] - self.model.reference[k]
+            along = float(self.direction @ self.model.matrix[:, k])
+            sums = np.add.outer(sums, along * change).ravel()
+        places = np.argsort(sums, kind="stable")
+        return sums[places], places
 
     @classmethod
     def of(
@@ -101,22 +125,18 @@ class Completion:
         A class with more leaves out those of its parts that have the most values.
         """
         best: tuple[int, ...] = ()
+        others: tuple[int, ...] = ()
         for members in _classes(model.matrix, grid):
             kept = sorted(members, key=lambda k: (grid.counts[k], k))
             while np.prod(grid.counts[kept], dtype=float) > largest:
                 kept.pop()
             if kept and _combinations(grid, kept) > _combinations(grid, best):
                 best = tuple(sorted(kept))
+                others = tuple(k for k in members if k not in kept)
         if not best:
             return None
         column = model.matrix[:, best[0]]
-        direction = column / np.linalg.norm(column)
-        sums = np.zeros(1)
-        for k in best:
-            change = grid.logs[k, : grid.counts[k]] - model.reference[k]
-            sums = np.add.outer(sums, float(direction @ model.matrix[:, k]) * change).ravel()
-        places = np.argsort(sums, kind="stable")
-        return cls(model, grid, best, direction, sums[places], places)
+        return cls(model, grid, best, others, column / np.linalg.norm(column))
 
     def complete(
         self,
@@ -247,8 +267,10 @@ def best_choices(
     completion = Completion.of(model, grid, largest=largest_sums)
     if completion is None:
         return None
-    order = [k for k in binding_order(model.matrix, grid)[0] if k not in completion.parts]
-    frontier, looked = Frontier.start(model, grid), completion.sums.size
+    alike = {*completion.parts, *completion.others}
+    order = [k for k in binding_order(model.matrix, grid)[0] if k not in alike]
+    order += completion.others
+    frontier, looked = Frontier.start(model, grid), completion.count
     for place, part in enumerate(order):
         columns = model.matrix[:, [*order[place + 1 :], *completion.parts]]
         looked += frontier.count * int(grid.counts[part])

@@ -165,11 +165,11 @@ def _with_pair(circuit: Circuit, pair: Pair) -> Circuit:
     one, cell = circuit.by_ref[pair.ref], circuit.cell_of(pair.ref)
     assert cell is not None
     source = circuit.branch(cell, pair.ref).net
-    middle = f"{pair.ref.lower()}_m"
+    node, middle = cell.node_of(one), f"{pair.ref.lower()}_m"
     if pair.how == "parallel":
-        nets = [(source, cell.summing), (source, cell.summing)]
+        nets = [(source, node), (source, node)]
     else:
-        nets = [(source, middle), (middle, cell.summing)]
+        nets = [(source, middle), (middle, node)]
     two = tuple(
         replace(
             one,

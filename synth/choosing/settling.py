@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.choosing.certificate import Certificate, certify
-from synth.choosing.completion import aligned, best_choices
+from synth.choosing.completion import LARGEST_FRONTIER, aligned, best_choices
 from synth.choosing.grid import ValueGrid
 from synth.choosing.model import Ceilings, Goal, LinearModel
 from synth.choosing.supply import Supply
@@ -27,8 +27,7 @@ Real = NDArray[np.float64]
 Index = NDArray[np.intp]
 
 # About so many choices the model is made anew, at most, after the last one that gained.
-PATIENCE = 3
-MOST_ROUNDS = 12
+PATIENCE = 16
 
 # A gain smaller than this, as a ratio of the rms error, is none.
 LEAST_GAIN = 1e-4
@@ -37,7 +36,7 @@ LEAST_GAIN = 1e-4
 # gain, more are mostly too many.
 SUBSET = (6, 9)
 SUBSET_FRONTIER = 40_000
-SUBSET_SUMS = 100_000
+SUBSET_SUMS = 20_000
 
 # Subsets tried about one model, and how many such rounds in a row may bring nothing.
 SUBSETS_PER_ROUND = 16
@@ -48,6 +47,9 @@ FRUITLESS_ROUNDS = 12
 PAIRS_PER_ASSIGNMENT = 4
 PAIRS_PER_SUBSET = 150_000
 PAIRS_PER_BOARD = 2_000
+
+# Effort that justifies holding one more assignment when all parts are chosen.
+EFFORT_PER_ASSIGNMENT = 150
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
@@ -96,29 +98,34 @@ def settle(
     """The best choice found from `start` (P,) on, what is known of it, and the work done, in
     pairs of steps of the search.
 
-    `effort` is the work of choosing some parts at a time; that of choosing all is bounded by
-    itself.  A start that does not keep the limits is only improved on by choices that do.
+    `effort` bounds the work, that of choosing all parts and that of choosing some at a time
+    each, and how much is held to choose all.  A start that does not keep the limits is only
+    improved on by choices that do.
     """
-    best, certificate, looked = _exact_rounds(problem, start)
+    held = max(1, min(LARGEST_FRONTIER, effort // EFFORT_PER_ASSIGNMENT))
+    best, certificate, looked = _exact_rounds(problem, start, held, effort)
     if certificate.exhausted or certificate.proven:
         return best, certificate, looked
     improved, more = _by_subsets(problem, best, rng, effort)
     looked += more
     if not np.array_equal(improved, best):
-        best, certificate, more = _exact_rounds(problem, improved)
+        best, certificate, more = _exact_rounds(problem, improved, held, effort)
         looked += more
     return best, certificate, looked
 
 
-def _exact_rounds(problem: Problem, start: Index) -> tuple[Index, Certificate, int]:
-    """Exact searches about one choice after the other, and the certificate of the best."""
+def _exact_rounds(
+    problem: Problem, start: Index, held: int, effort: int
+) -> tuple[Index, Certificate, int]:
+    """Exact searches about one choice after the other, holding so many assignments, and the
+    certificate of the best; no further one when the work reaches `effort`."""
     best, best_square = start, float(problem.judged(start[None])[0])
     seen: dict[tuple[int, ...], float] = {tuple(map(int, start)): best_square}
     used: set[tuple[int, ...]] = set()
     about, certificate, looked, patience = start, None, 0, PATIENCE
-    for _ in range(MOST_ROUNDS):
+    while True:
         used.add(tuple(map(int, about)))
-        found = _certified(problem, about)
+        found = _certified(problem, about, held)
         looked += PAIRS_PER_ASSIGNMENT * found.looked
         if np.array_equal(about, best):
             certificate = found
@@ -136,13 +143,13 @@ def _exact_rounds(problem: Problem, start: Index) -> tuple[Index, Certificate, i
             best, best_square, certificate = np.array(leader), seen[leader], None
             patience = PATIENCE
         fresh = [k for k in seen if k not in used and seen[k] < np.inf]
-        if patience < 0 or not fresh:
+        if patience < 0 or not fresh or looked >= effort:
             break
         about = np.array(min(fresh, key=lambda k: (seen[k], k)))
-    return best, certificate or _certified(problem, best), looked
+    return best, certificate or _certified(problem, best, held), looked
 
 
-def _certified(problem: Problem, index: Index) -> Certificate:
+def _certified(problem: Problem, index: Index, held: int) -> Certificate:
     """How good a choice is, in the model about itself."""
     values = problem.grid.values_at(index)
     limits = None if problem.ceilings is None else problem.ceilings.about(problem.program, values)

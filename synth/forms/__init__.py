@@ -15,8 +15,13 @@ from synth.errors import JobError
 from synth.forms.balanced import balanced
 from synth.forms.cascade import cascade
 from synth.forms.controllable import controllable
+from synth.forms.khn import khn
+from synth.forms.leapfrog import leapfrog
+from synth.forms.normal import normal
 from synth.forms.observable import observable
 from synth.forms.parallel import parallel
+from synth.forms.schwarz import schwarz
+from synth.forms.tow_thomas import tow_thomas
 from synth.graph import BlockGraph
 from synth.transfer import TransferFunction
 
@@ -37,6 +42,9 @@ class Form:
     structural_zeros
         Whether zeros at the origin come from the structure; otherwise from sums that cancel,
         which every part's tolerance disturbs.
+    summed_zeros
+        Whether zeros elsewhere come from such sums: these cancel in part where roots lie
+        decades apart, and the numbers are then as accurate as the summands.
     everywhere
         Whether the form exists for every proper H(s).
     """
@@ -44,6 +52,7 @@ class Form:
     build: Callable[[TransferFunction], BlockGraph]
     exact: bool = True
     structural_zeros: bool = True
+    summed_zeros: bool = False
     everywhere: bool = True
 
 
@@ -52,8 +61,13 @@ FORMS: Mapping[str, Form] = MappingProxyType(
         "controllable": Form(build=controllable),
         "observable": Form(build=observable),
         "cascade": Form(build=cascade),
+        "tow_thomas": Form(build=tow_thomas),
+        "khn": Form(build=khn),
+        "normal": Form(build=normal, structural_zeros=False),
         "parallel": Form(build=parallel, structural_zeros=False),
         "balanced": Form(build=balanced, exact=False, structural_zeros=False, everywhere=False),
+        "schwarz": Form(build=schwarz, summed_zeros=True, everywhere=False),
+        "leapfrog": Form(build=leapfrog, exact=False, everywhere=False),
     }
 )
 

@@ -96,11 +96,12 @@ def balanced(target: TransferFunction) -> BlockGraph:
     wanted = Wanted.of(found.system, s, target.at(s * w0))
     order = range(target.order)
     near = [(i, j) for i in order for j in order[i + 1 :] if hankel[j] > NEARLY_EQUAL * hankel[i]]
-    system = turned(found.system, wanted, near)
     try:
-        system = pruned(system, wanted)
+        system = pruned(turned(found.system, wanted, near), wanted)
     except NumericalError:
-        raise _inexact(wanted.error(system), hankel) from None
+        raise _inexact(wanted.error(found.system), hankel) from None
+    except np.linalg.LinAlgError:
+        raise _too_wide(hankel) from None
     s = np.asarray(1j * _points(target, CHECKED_BEYOND, CHECKED_PER_DECADE) / w0)
     error = Wanted.of(system, s, target.at(s * w0)).error(system)
     if not error < ACCURACY:

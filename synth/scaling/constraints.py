@@ -34,6 +34,12 @@ CEILING_MARGIN = 0.1
 # A level this far below its ceiling drowns in noise; no scaling goes lower.
 LOWEST_LEVEL = 1e-6
 
+# What a row missed by 1 costs beside a margin of 1: more than it, so that no row is missed for it.
+PER_MISS = 4.0
+
+# A dual value below this, beside those of at least some share of one, is rounding.
+NO_PRICE = 1e-7
+
 # Fixed values that miss what H(s) asks for by more than this, in ln, are refused: a quarter.
 LARGEST_MISS = math.log(1.25)
 
@@ -68,6 +74,31 @@ class Region:
         bounds = [(None, None)] * columns + [(None, math.log(3.0))]
         found = linprog(cost, A_ub=A[keep], b_ub=b[keep], bounds=bounds, method="highs")
         return np.asarray(found.x[:-1]), float(found.x[-1])
+
+    def room(self) -> tuple[float, tuple[str, ...]]:
+        """How much room there is, in ln, and the names of the rows that keep it from being more.
+
+        The room is the margin of `start` where something fits, otherwise the least sum of what
+        the rows miss, times `-PER_MISS`.  By duality no change to any other row gives more.
+        Values the job fixes count as free.
+        """
+        from scipy.optimize import linprog
+
+        rows, columns = self.matrix.shape
+        free = self.without_fixed()
+        margin, missed = np.where(self.fixed, 0.0, 1.0)[:, None], -np.eye(rows)
+        A = np.block([[self.matrix, margin, missed], [-self.matrix, margin, missed]])
+        b = np.concatenate([free.upper, -free.lower])
+        keep = np.isfinite(b)
+        cost = np.concatenate([np.zeros(columns), [-1.0], np.full(rows, PER_MISS)])
+        bounds = [(None, None)] * columns + [(0, math.log(3.0))] + [(0, None)] * rows
+        found = linprog(cost, A_ub=A[keep], b_ub=b[keep], bounds=bounds, method="highs")
+        price = np.zeros(b.size)
+        price[keep] = -found.ineqlin.marginals
+        prices = price[:rows] + price[rows:]
+        return -float(found.fun), tuple(
+            n for n, p in zip(self.names, prices, strict=True) if p > NO_PRICE
+        )
 
     def without_fixed(self) -> Region:
         """The region with every fixed value free within its range."""

@@ -18,6 +18,7 @@ from synth.peaks import SignalPeaks
 from synth.polarity import Polarity
 from synth.preferred import nearest
 from synth.scaling.constraints import Region, least_on_source, refuse, region
+from synth.scaling.crowding import crowded_blocks, rooms_at_both_inputs
 from synth.scaling.objectives import current_shares, noise_power, response_error_power
 from synth.scaling.signomial import Signomial
 from synth.scaling.standard import room_for, with_standard_capacitors
@@ -39,6 +40,9 @@ COMFORT_WEIGHT = 0.3
 # share of the accepted magnitude error, whichever is larger.
 ERROR_RATIO = 1.1
 ERROR_SHARE = 0.02
+
+# A mean square error as good as none.
+NO_ERROR = 1e-40
 
 # Largest share of the output current the parts around an output may take.
 CURRENT_SHARE = 0.7
@@ -92,7 +96,7 @@ def scale(
     problem = _Problem(
         variables,
         error=response_error_power(variables, polarity, job.board.op_amp, frequency_hz),
-        noise=noise_power(variables, job.board.op_amp, frequency_hz),
+        noise=noise_power(variables, polarity, job.board.op_amp, frequency_hz),
         currents=current_shares(
             variables,
             peaks,
@@ -101,6 +105,7 @@ def scale(
             load=job.signal.load,
         ),
         allowed_error=ERROR_SHARE * job.accept.magnitude_db / 8.686,
+        rooms=rooms_at_both_inputs(variables, polarity, job.board.resistors.ends[0]),
     )
     v = problem.solve(eased, start)
     limits, v = with_standard_capacitors(variables, job, limits, v, held)
@@ -123,8 +128,19 @@ def scale(
             own_inverters={INPUT: _input_inverter(graph, job), **held.inverters},
             factors=held.factors,
         ),
-        predicted_error=math.sqrt(max(problem.error(v)[0], 0.0)),
+        predicted_error=_predicted_error(variables, polarity, job, frequency_hz, v),
     )
+
+
+def _predicted_error(
+    variables: Variables, polarity: Polarity, job: Job, frequency_hz: Real, v: Real
+) -> float:
+    """Root mean square of the error of ln H, whatever cells are crowded."""
+    crowded = crowded_blocks(variables, polarity, v)
+    error = response_error_power(
+        variables, polarity, job.board.op_amp, frequency_hz, crowded=crowded
+    )
+    return math.sqrt(max(error(v)[0], 0.0))
 
 
 def _input_inverter(graph: BlockGraph, job: Job) -> tuple[float, float]:
@@ -148,25 +164,26 @@ class _Problem:
     noise: Signomial
     currents: list[Signomial]
     allowed_error: float
+    rooms: tuple[Smooth, ...] = ()
 
     def solve(self, limits: Region, start: Real) -> Real:
         """Least error, then least noise within what may be given up of it."""
-        first = _minimise(self._of_error, limits, start)
+        first = _minimise(self._of_error, limits, start, self.rooms)
         least, _ = self.error(first)
         allowed = max(ERROR_RATIO**2 * least, self.allowed_error**2)
 
         def room(v: Real) -> tuple[float, Real]:
             value, gradient = self.error(v)
-            value = max(value, 1e-300)
-            return math.log(allowed / value), -gradient / value
+            value = min(max(value, NO_ERROR), 1e300)
+            return math.log(allowed) - math.log(value), -gradient / value
 
-        second = _minimise(self._of_noise, limits, first, room)
+        second = _minimise(self._of_noise, limits, first, (*self.rooms, room))
         within = room(second)[0] > -1e-6 and float(np.max(limits.excess(second))) < 1e-6
         return second if within else first
 
     def _of_error(self, v: Real) -> tuple[float, Real]:
         value, gradient = self.error(v)
-        value = max(value, 1e-300)
+        value = max(value, NO_ERROR)
         comfort, slope = self._comfort(v)
         return math.log(value) + 0.01 * comfort, gradient / value + 0.01 * slope
 
@@ -203,8 +220,11 @@ class _Problem:
         return np.array(rows), np.array(centres)
 
 
-def _minimise(objective: Smooth, limits: Region, start: Real, room: Smooth | None = None) -> Real:
-    """A local minimum inside the region, by sequential quadratic programming."""
+def _minimise(
+    objective: Smooth, limits: Region, start: Real, rooms: tuple[Smooth, ...] = ()
+) -> Real:
+    """A local minimum inside the region where all of `rooms` are positive, by sequential
+    quadratic programming; `start` where none is found inside the region."""
     from scipy.optimize import minimize
 
     matrix = np.concatenate([limits.matrix, -limits.matrix])
@@ -212,10 +232,14 @@ def _minimise(objective: Smooth, limits: Region, start: Real, room: Smooth | Non
     keep = np.isfinite(offset)
     matrix, offset = matrix[keep], offset[keep]
     constraints = [{"type": "ineq", "fun": lambda v: matrix @ v + offset, "jac": lambda _: matrix}]
-    if room is not None:
-        constraints.append(
-            {"type": "ineq", "fun": lambda v: room(v)[0], "jac": lambda v: room(v)[1]}
-        )
+    constraints += [
+        {
+            "type": "ineq",
+            "fun": lambda v, room=room: room(v)[0],
+            "jac": lambda v, room=room: room(v)[1],
+        }
+        for room in rooms
+    ]
     found = minimize(
         objective,
         start,

@@ -2,7 +2,8 @@
 
 With the one-pole gain A(s) = A0 / (1 + s A0/wt), a cell with noise gain N multiplies its
 signal by 1 / (1 + N / A), to first order 1 - N / A; N = 1 + sum |w| / s for an integrator,
-1 + sum |k| for an adder, 2 for an inverter.  The error of ln H is the sum of these, each times
+1 + sum |k| for an adder, 2 for an inverter, and what `synth.scaling.crowding` says for a cell that
+uses both inputs.  The error of ln H is the sum of these, each times
 the sensitivity of ln H to the signal of its block, which no scaling changes; so it is a sum of
 exponentials in the logarithms of the levels.  The noise powers of op-amps and resistors at
 the output are too.
@@ -18,6 +19,7 @@ from synth.graph import BlockGraph
 from synth.parts import OpAmp
 from synth.peaks import SignalPeaks
 from synth.polarity import Polarity
+from synth.scaling.crowding import NoiseGains
 from synth.scaling.signomial import Signomial
 from synth.scaling.variables import Variables
 
@@ -33,10 +35,18 @@ def inverse_gain(op_amp: OpAmp, s: Complex) -> Complex:
 
 
 def response_error_power(
-    variables: Variables, polarity: Polarity, op_amp: OpAmp, frequency_hz: Real
+    variables: Variables,
+    polarity: Polarity,
+    op_amp: OpAmp,
+    frequency_hz: Real,
+    *,
+    crowded: frozenset[str] = frozenset(),
 ) -> Signomial:
-    """Mean over `frequency_hz` of |error of ln H|^2, first order in 1/A."""
-    graph = variables.graph
+    """Mean over `frequency_hz` of |error of ln H|^2, first order in 1/A.
+
+    `crowded` are the cells whose noise gain is that of their non-inverting input.
+    """
+    graph, gains = variables.graph, NoiseGains(polarity=polarity, crowded=crowded)
     s = np.asarray(2j * np.pi * frequency_hz, dtype=np.complex128)
     signals, injections = graph.signals(s), graph.injections(s)
     output = signals[graph.output]
@@ -45,8 +55,9 @@ def response_error_power(
     parts: list[tuple[Complex, Real]] = []
     for block in graph.blocks:
         sensitivity = injections[block.name] * signals[block.name] / output
-        fixed -= inverse * sensitivity
-        for term in block.terms:
+        one, terms = gains.of(block)
+        fixed -= one * inverse * sensitivity
+        for term in terms:
             weight, exponents = variables.weight(block, term)
             shape = weight / s if block.is_integrator else np.full(s.size, weight + 0j)
             parts.append((-inverse * sensitivity * shape, exponents))
@@ -80,12 +91,15 @@ def _inverter_sensitivity(
     return total
 
 
-def noise_power(variables: Variables, op_amp: OpAmp, frequency_hz: Real) -> Signomial:
+def noise_power(
+    variables: Variables, polarity: Polarity, op_amp: OpAmp, frequency_hz: Real
+) -> Signomial:
     """Noise power at the output over the band [V^2], from op-amp voltage noise and resistors.
 
-    The noise of inverters, which no scaling changes, is left out.
+    The noise of inverters, which no scaling changes, is left out.  The resistors at each input of
+    a cell that uses both make as much noise as those at the other.
     """
-    graph = variables.graph
+    graph, noise_gains = variables.graph, NoiseGains(polarity=polarity)
     omega = 2 * np.pi * frequency_hz
     injections = graph.injections(1j * omega)
     en2, four_kt = op_amp.voltage_noise**2, 4 * BOLTZMANN * TEMPERATURE
@@ -94,7 +108,7 @@ def noise_power(variables: Variables, op_amp: OpAmp, frequency_hz: Real) -> Sign
         square = np.abs(injections[block.name]) ** 2
         down = variables.level(block.name, -2.0)
         plain = float(np.trapezoid(square, frequency_hz))
-        inputs = [variables.weight(block, t) for t in block.terms]
+        inputs = [variables.weight(block, t) for t in noise_gains.of(block)[1]]
         if block.is_integrator:
             slope = float(np.trapezoid(square / omega**2, frequency_hz))
             terms.append((plain * en2, down))
@@ -106,7 +120,8 @@ def noise_power(variables: Variables, op_amp: OpAmp, frequency_hz: Real) -> Sign
         else:
             gains = [(1.0, np.zeros(variables.count)), *inputs]
             own = variables.size(block.name)
-            terms += [(four_kt * plain * k, down + e + own) for k, e in gains]
+            sides = 2 if noise_gains.uses_both_inputs(block) else 1
+            terms += [(sides * four_kt * plain * k, down + e + own) for k, e in gains]
             terms += [
                 (en2 * plain * k1 * k2, down + e1 + e2) for k1, e1 in gains for k2, e2 in gains
             ]
@@ -121,7 +136,8 @@ def current_shares(
     input_peak: float,
     load: float | None,
 ) -> list[Signomial]:
-    """Peak output current of each block over the op-amp's limit, an upper bound.
+    """Peak output current of each block over the op-amp's limit, an upper bound where all of its
+    readers have virtual grounds.
 
     The peak over every resistor that reads the block, its own feedback, and the load.
     """

@@ -19,10 +19,10 @@ from numpy.typing import ArrayLike, NDArray
 
 from synth.circuit import Circuit
 from synth.errors import CircuitError, JobError
-from synth.evidence import DB_PER_NEPER
+from synth.evidence import DB_PER_NEPER, WorstBoard
 from synth.job import Accept
 from synth.nodal import NodalProgram
-from synth.results import ToleranceResult, WorstBoard
+from synth.results import ToleranceResult
 from synth.tolerance.interval import clopper_pearson
 
 __all__ = ["drawn_blocks", "drawn_values", "run_boards", "tolerances_of"]

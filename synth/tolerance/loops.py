@@ -14,8 +14,8 @@ from numpy.typing import NDArray
 from synth.circuit import Circuit
 from synth.evidence import Check
 from synth.job import Loop
+from synth.loop import LoopBoards, Percentiles
 from synth.nodal import NodalProgram
-from synth.results import LoopBoards, Percentiles
 from synth.tolerance.boards import drawn_blocks
 from synth.tolerance.interval import clopper_pearson
 from synth.tolerance.loopsweep import LoopSweep

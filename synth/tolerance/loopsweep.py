@@ -183,7 +183,7 @@ class LoopSweep:
         poles = np.round(turns_due(self.parts) - np.nan_to_num(steps).sum(axis=1) / math.pi)
         for k in np.flatnonzero(unsettled):
             poles[k] = self._one_by_one(values[k], value[k])
-        return poles
+        return np.asarray(poles)
 
     def _one_by_one(self, values: Real, value: Complex) -> float:
         response = loop_response(

@@ -50,7 +50,7 @@ def stages(monkeypatch, tmp_path):
 
     stages = Stages()
 
-    def design(job, *, boards=1000, seed=1, effort=1, progress=None):
+    def design(job, *, boards=1000, seed=1, effort=1, progress=None, mapper=None):
         stages.effort = effort
         progress("drawing boards", 1, 2)
         if stages.raises is not None:
@@ -60,7 +60,7 @@ def stages(monkeypatch, tmp_path):
     replaced = {
         "synth.design": {
             "design": design,
-            "compare_forms": lambda job: ("controllable", stages.made.candidates),
+            "compare_forms": lambda job, **options: ("controllable", stages.made.candidates),
         },
         "netlist.verification": {
             "verify": lambda made, *, simulator=None: boards.verification(
@@ -189,17 +189,24 @@ def test_json_is_the_content_of_design_json_and_nothing_else(stages, capsys):
 def test_forms_prints_the_comparison_and_writes_nothing(stages, capsys):
     assert run(["forms", "x.toml"]) == 0
     out = capsys.readouterr().out
-    assert [x.split()[0] for x in out.splitlines()] == [
-        "form",
-        "controllable",
-        "observable",
-        "cascade",
+    table, reasons = (part.splitlines() for part in out.split("\n\n"))
+    assert [x.split()[0] for x in table] == ["form", "controllable", "observable"]
+    assert "98.40 % to 99.65 %" in table[1]
+    assert [" ".join(x.split()) for x in reasons] == [
+        "controllable chosen",
+        "observable 4 op-amps, controllable does it with 3",
+        "cascade not possible: no capacitor lets R land within 1 kohm to 1 Mohm",
     ]
     assert run(["forms", "x.toml", "--json"]) == 0
     record = json.loads(capsys.readouterr().out)
     assert record["chosen"] == "controllable"
     assert record["forms"][2]["possible"] is False
     assert record["forms"][2]["spread_db"] is None
+    first = record["forms"][0]
+    assert first["yield"] == {"boards": 1000, "passed": 992, "low": 0.984, "high": 0.9965}
+    assert first["packages_of_4"] == 1
+    assert first["gain_bandwidth_needed_hz"] == 3.1e5
+    assert first["verdict"] == "pass"
     assert list(Path().iterdir()) == []
 
 

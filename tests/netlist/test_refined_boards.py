@@ -57,8 +57,10 @@ def test_ngspice_confirms_what_pairs_gain(tmp_path, simulator, rules, how) -> No
 
 
 def test_shared_values_make_a_shorter_parts_list() -> None:
-    """A Butterworth cascade of order 3: fewer lines of resistors and capacitors, and a notice."""
-    job = job_for(butterworth(3, 1e3), (100.0, 2e3), form="cascade")
+    """A Butterworth of order 3 from E24: fewer lines of resistors and capacitors, and a notice."""
+    job = job_for(
+        butterworth(3, 1e3), (100.0, 2e3), form="controllable", resistors=resistor_rule("E24")
+    )
     plain = design(job, boards=50)
     shared = design(replace(job, board=replace(job.board, share_values=True)), boards=50)
 

@@ -76,9 +76,9 @@ def test_there_are_at_least_four():
 @pytest.mark.parametrize("form", FORMS)
 @pytest.mark.parametrize("scenario", SCENARIOS)
 def test_ngspice_accepts_every_form_and_agrees_at_every_net(scenario, form, simulator):
-    """Magnitude, phase, settling, swing, slew and current within their limits; the nodal engine
-    within 1e-6 of ngspice at every op-amp output, down to a millionth of its largest voltage;
-    nothing overlaps in the schematic."""
+    """Magnitude, phase, settling, swing, slew and current within their limits; noise within half
+    a percent of ngspice; the nodal engine within 1e-6 of it at every op-amp output, down to a
+    millionth of its largest voltage; nothing overlaps in the schematic."""
     job = read_job(FOLDER / f"{scenario}.toml")
     try:
         made = design(replace(job, board=replace(job.board, form=form)), boards=20)
@@ -89,6 +89,7 @@ def test_ngspice_accepts_every_form_and_agrees_at_every_net(scenario, form, simu
     checked = verify(made, simulator=simulator)
     assert checked.failure is None
     assert checked.nodal_disagreement < 1e-6
+    assert checked.noise_rms == pytest.approx(made.noise.output_rms, rel=5e-3)
     missed = [c for c in (*checked.checks, *made.checks) if not c.passed and c.name != "yield"]
     # What a drawer holds need not do for a form whose zeros are sums that cancel.
     if FORMS[form].structural_zeros or not job.board.resistors.stock:

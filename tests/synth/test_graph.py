@@ -105,3 +105,9 @@ def test_small_injections_are_as_accurate_as_large_ones(form: str) -> None:
             for row, block in enumerate(graph.blocks):
                 expected = complex(adjoint[row] * (s if block.is_integrator else 1))
                 assert found[block.name][k] == pytest.approx(expected, rel=1e-10)
+
+
+def test_only_adders_take_terms_of_both_signs() -> None:
+    """An integrator that differences would need equal capacitors."""
+    with pytest.raises(GraphError, match="block x1: got an integrator with terms of both signs"):
+        Block("x1", "integrator", (Term("in", 1.0),), both_signs=True)

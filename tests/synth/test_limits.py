@@ -64,6 +64,8 @@ def test_peaks_and_rates_are_those_of_a_dense_sweep(form: str) -> None:
     """Every op-amp output, inverters and internal ones included, of a sharp band-pass."""
     pairs = [Factor.pair(W0, 30), Factor.pair(1.2 * W0, 5)]
     target = TransferFunction.from_factors(W0 * W0 / 60, [Factor.real(0)] * 2, pairs)
+    if not exists(form, target):
+        target = TransferFunction.from_factors(W0**4 / 30, [], pairs)
     job = job_for(target, BAND, input_peak=0.5)
     circuit = built(job, form)
     f = np.union1d(np.geomspace(0.1, 1e7, 20_001), 1e3 * np.linspace(0.7, 1.4, 40_001))
@@ -108,7 +110,8 @@ def test_an_inverter_in_front_loads_the_source_too() -> None:
     f = np.geomspace(*BAND, 30)
     seen = set()
     for form in FORMS:
-        for target in (biproper, turned, turned.negated()):
+        some = (biproper, turned, turned.negated())
+        for target in (t for t in some if exists(form, t)):
             job = job_for(
                 target, BAND, source_resistance=700.0, op_amp_figures=ideal, input_peak=1e-3
             )
@@ -117,3 +120,25 @@ def test_an_inverter_in_front_loads_the_source_too() -> None:
             response = compile_circuit(circuit).solve(f)
             np.testing.assert_allclose(response, target.response(f), rtol=1e-6)
     assert "in" in seen
+
+
+def test_current_into_a_cell_that_uses_both_inputs_ends_at_no_virtual_ground() -> None:
+    """The summer of a state-variable low-pass feeds its own feedback resistor, whose far end lies
+    at the divider of the other input, and the first integrator."""
+    target = butterworth(2, 1e3)
+    ideal = {"gain_bandwidth": 1e12, "open_loop_gain": 1e9}
+    job = job_for(target, BAND, input_peak=2.0, op_amp_figures=ideal)
+    circuit = built(job, "khn")
+    summer, first, _ = circuit.cells
+    assert summer.kind == "difference"
+    f = np.geomspace(*BAND, 20_001)
+    nets = [summer.output, first.output]
+    v = dict(zip(nets, 2.0 * compile_circuit(circuit).solve(f, nets=nets).T, strict=True))
+    v["in"], v["0"] = np.full(f.size, 2.0 + 0j), np.zeros(f.size, dtype=complex)
+    v["out"] = 2.0 * compile_circuit(circuit).solve(f)
+    hanging = [p for p in circuit.passives if summer.plus in p.nets]
+    at_plus = sum(v[p.nets[0]] / p.value for p in hanging) / sum(1 / p.value for p in hanging)
+    own = (v[summer.output] - at_plus) / circuit.by_ref[summer.feedback].value
+    onward = v[summer.output] / circuit.by_ref[first.inputs[0]].value
+    found = next(s for s in swings(circuit, target, job) if s.amplifier == summer.amplifier)
+    assert found.current == pytest.approx(np.max(np.abs(own + onward)), rel=1e-4)

@@ -10,8 +10,11 @@ from hypothesis import strategies as st
 from synth.candidates import sketch_form
 from synth.errors import RealizationError
 from synth.forms import FORMS
+from synth.graph import Block, BlockGraph, Term
 from synth.job import Job
+from synth.mapping import Sizing, map_graph
 from synth.nodal import compile_circuit
+from synth.polarity import choose_polarity
 from synth.readback import graph_of
 from synth.transfer import TransferFunction
 from tests.forms import exists, sizes_of_response
@@ -81,6 +84,18 @@ def test_a_source_too_weak_for_the_board_is_refused() -> None:
     job = job_for(butterworth(2, 1e3), (100, 2e3), source_resistance=1e7)
     with pytest.raises(RealizationError, match=r"signal.source_resistance: got 1e\+07 ohm"):
         sketch_form(job, "cascade", FREQUENCY)
+
+
+def test_a_cell_at_both_inputs_cannot_share_a_weak_source() -> None:
+    """Alone behind the source it is made up for; beside another resistor the board would not be
+    H(s), whatever the values."""
+    x = Block("x1", "integrator", (Term("in", 9e3), Term("x1", -4e3)))
+    y = Block("y", "adder", (Term("x1", 0.5), Term("in", 0.3)), both_signs=True)
+    graph = BlockGraph("test", (x, y), "y")
+    sizing = Sizing(capacitors={"x1": 1e-8}, feedback={"y": 1e4}, inverters=1e4)
+    job = job_for(butterworth(1, 1e3), (100, 2e3), source_resistance=100.0)
+    with pytest.raises(RealizationError, match=r"signal.source_resistance: block y has no virtual"):
+        map_graph(graph, choose_polarity(graph), sizing, job)
 
 
 def test_nets_and_references_follow_the_conventions() -> None:

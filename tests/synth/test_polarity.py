@@ -29,7 +29,7 @@ def least_by_trying_all(graph: BlockGraph, inverted: str) -> int:
 
 @st.composite
 def graphs(draw: st.DrawFn) -> BlockGraph:
-    """Any small graph of integrators and adders with signed terms."""
+    """Any small graph of integrators and adders with signed terms, some adders for both signs."""
     count = draw(st.integers(1, 7))
     kinds = draw(st.lists(st.sampled_from(["integrator", "adder"]), min_size=count, max_size=count))
     blocks = []
@@ -42,7 +42,8 @@ def graphs(draw: st.DrawFn) -> BlockGraph:
             allowed = [a for a in allowed if a != f"b{k}"]
         sources = draw(st.lists(st.sampled_from(allowed), min_size=1, max_size=4, unique=True))
         terms = tuple(Term(s, draw(st.sampled_from([1.0, -1.0]))) for s in sources)
-        blocks.append(Block(f"b{k}", kind, terms))
+        both = kind == "adder" and draw(st.booleans())
+        blocks.append(Block(f"b{k}", kind, terms, both_signs=both))
     return BlockGraph("any", tuple(blocks), f"b{draw(st.integers(0, count - 1))}")
 
 
@@ -83,3 +84,21 @@ def test_either_takes_the_negative_output_only_when_it_saves_an_inverter() -> No
     either = choose_polarity(graph, inverted="either")
     assert either.output_inverted
     assert either.inverters == ()
+
+
+def test_an_adder_for_both_signs_reads_everything_directly() -> None:
+    """Of x1 it takes what no choice of signs makes inverting; an adder for one sign needs an
+    inverter for that.  Where the signs allow it, nothing goes to the other input."""
+    x = Block("x1", "integrator", (Term("in", 1.0), Term("x1", -1.0)))
+    terms = (Term("x1", 1.0), Term("in", 1.0))
+    plain = BlockGraph("any", (x, Block("y", "adder", terms)), "y")
+    both = BlockGraph("any", (x, Block("y", "adder", terms, both_signs=True)), "y")
+    assert len(choose_polarity(plain).inverters) == 1
+    found = choose_polarity(both)
+    assert found.inverters == ()
+    assert [found.at_plus("y", t.source, 1.0) for t in terms] == [False, True]
+    assert found.direct("y", "in", 1.0) and found.direct("y", "x1", 1.0)
+    turned = choose_polarity(
+        BlockGraph("any", (x, Block("y", "adder", terms[:1], both_signs=True)), "y")
+    )
+    assert not turned.at_plus("y", "x1", 1.0)

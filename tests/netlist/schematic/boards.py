@@ -15,6 +15,7 @@ from synth.mapping import Sizing, map_graph
 from synth.parts import OpAmp, PartRule
 from synth.polarity import choose_polarity
 from synth.transfer import Factor, TransferFunction
+from tests.forms import exists
 
 OP_AMP = OpAmp(
     kind="general purpose",
@@ -55,12 +56,19 @@ class Builder:
         return f"{letter}{n}"
 
     def cell(self, kind: str, output: str, inputs: Sequence[str], polarity: int = 1) -> None:
-        summing = f"{output}_s"
-        refs = tuple(self.part("R", (net, summing)) for net in inputs)
+        """Inputs of a difference with a + before their net go to its other input; ``"0"`` or
+        ``"+0"`` is the resistor that balances the two."""
+        summing, plus = f"{output}_s", f"{output}_p" if kind == "difference" else GROUND
+        joined = {
+            self.part("R", (net.removeprefix("+"), plus if net[0] == "+" else summing)): net
+            for net in inputs
+        }
+        refs = tuple(ref for ref, net in joined.items() if net not in ("0", "+0"))
+        balance = next((ref for ref, net in joined.items() if net in ("0", "+0")), "")
         feedback = self.part("C" if kind == "integrator" else "R", (summing, output))
         amplifier = f"U{len(self.amplifiers) + 1}"
         self.amplifiers.append(
-            Amplifier(ref=amplifier, plus=GROUND, minus=summing, output=output, figures=OP_AMP)
+            Amplifier(ref=amplifier, plus=plus, minus=summing, output=output, figures=OP_AMP)
         )
         self.cells.append(
             Cell(
@@ -72,6 +80,8 @@ class Builder:
                 summing=summing,
                 output=output,
                 polarity=polarity,
+                plus=plus,
+                balance=balance,
             )
         )
 
@@ -99,7 +109,7 @@ def from_cells(
     if load:
         builder.fixture("RLOAD", ("out", GROUND), 1e4)
     for k, (output, (kind, inputs)) in enumerate(cells.items()):
-        nets = [entry if net == "in" else net for net in inputs]
+        nets = [{"in": entry, "+in": f"+{entry}"}.get(net, net) for net in inputs]
         builder.cell(kind, output, nets, polarity=(-1) ** k)
     return builder.circuit()
 
@@ -149,6 +159,21 @@ def cascade(sections: int) -> Circuit:
     return from_cells(cells, load=True)
 
 
+def state_variable(sections: int) -> Circuit:
+    """Summers that use both inputs of their op-amp, two integrators behind each, and the sum of
+    their outputs; what balances the two inputs stands at either, or nowhere."""
+    cells: dict[str, tuple[str, list[str]]] = {}
+    entry = "+in"
+    for k in range(1, sections + 1):
+        end = "out" if k == sections else f"y{k}"
+        cells[f"h{k}"] = ("difference", [entry, f"+a{k}", f"b{k}", *[["+0"], ["0"], []][k % 3]])
+        cells[f"a{k}"] = ("integrator", [f"h{k}"])
+        cells[f"b{k}"] = ("integrator", [f"a{k}"])
+        cells[end] = ("difference", [f"h{k}", f"+a{k}", f"b{k}", "+0"])
+        entry = end if k % 2 else f"+{end}"
+    return from_cells(cells, source=True, load=True)
+
+
 def chain(order: int) -> Circuit:
     """A chain of integrators with an inverter each, all of them read at head and output."""
     cells: dict[str, tuple[str, list[str]]] = {}
@@ -166,10 +191,13 @@ def chain(order: int) -> Circuit:
 
 
 def mapped(form: str, order: int) -> Circuit:
-    """What the mapper makes of repeated lags with a zero each but one, values as they come."""
+    """What the mapper makes of repeated lags with a zero each but one, values as they come; of
+    the lags alone where the form has no zeros."""
     poles = [Factor.real(-1000 * (k + 1)) for k in range(order)]
     zeros = [Factor.real(-700 * (k + 2)) for k in range(order - 1)]
     target = TransferFunction.from_factors(1000, zeros, poles)
+    if not exists(form, target):
+        target = TransferFunction.from_factors(1e3**order, [], poles)
     graph = realize(target, form)
     sizing = Sizing(
         capacitors={b.name: 1e-8 for b in graph.integrators},
@@ -198,12 +226,16 @@ def circuits(draw: st.DrawFn) -> Circuit:
     # Every net needs a reader: each cell reads the one before it, at least.
     cells = {}
     for k, net in enumerate(nets):
-        kind = draw(st.sampled_from(["integrator", "adder", "inverter"]))
+        kind = draw(st.sampled_from(["integrator", "adder", "inverter", "difference"]))
         more = draw(
             st.lists(st.sampled_from(["in", *nets]), max_size=draw(st.sampled_from([3, 12])))
         )
         before = nets[k - 1] if k else "in"
         inputs = [before, *more] if draw(st.booleans()) else [*more, before]
+        if kind == "difference":
+            signs = draw(st.lists(st.booleans(), min_size=len(inputs), max_size=len(inputs)))
+            inputs = [f"+{net}" if plus else net for net, plus in zip(inputs, signs, strict=True)]
+            inputs += [f"+{before}", *draw(st.sampled_from([[], ["0"], ["+0"]]))]
         cells[net] = (kind, inputs)
     cells[nets[0]][1].append(nets[-1])
     return from_cells(cells, source=draw(st.booleans()), load=draw(st.booleans()))

@@ -12,6 +12,7 @@ from netlist.schematic.geometry import Wire
 from netlist.schematic.lettering import value_text
 from netlist.schematic.svg import print_scale
 from synth.circuit import Circuit
+from synth.forms import FORMS
 from tests.netlist.schematic import boards
 from tests.netlist.schematic.drawn import Groups, collisions, overlapping_wires, read_nets
 
@@ -28,6 +29,11 @@ BOARDS = {
     "two in series": boards.paired(boards.third_order(), R2="series", R5="series"),
     "all pairs": boards.paired(
         boards.cascade(3), R1="series", R2="parallel", R4="parallel", R5="series"
+    ),
+    "state variable": boards.state_variable(1),
+    "state variable, three sections": boards.state_variable(3),
+    "state variable, pairs": boards.paired(
+        boards.state_variable(2), R1="series", R2="parallel", R3="series"
     ),
     "first order, all pairs": boards.paired(boards.first_order(), R1="series", R2="parallel"),
 }
@@ -95,9 +101,7 @@ def test_any_wiring_of_cells_is_drawn_as_it_is(circuit):
     assert overlapping_wires(drawing.sheet) == []
 
 
-MAPPED = [
-    (form, order) for form in ("controllable", "observable", "cascade") for order in (1, 4, 8)
-]
+MAPPED = [(form, order) for form in FORMS for order in (1, 4, 8)]
 
 
 @pytest.mark.parametrize(("form", "order"), MAPPED)

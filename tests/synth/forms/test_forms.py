@@ -46,7 +46,7 @@ def rational_target(order: int) -> TransferFunction:
 
 def error_of(graph: BlockGraph, target: TransferFunction, s: np.ndarray) -> np.ndarray:
     """|graph - H| relative to |H|, or where zeros come from sums that cancel relative to the
-    largest summand of the output, as rounding leaves it."""
+    largest summand of any adder as it arrives at the output, as rounding leaves it."""
     wanted = target.at(s)
     size = sizes_of_response(graph, wanted, s)
     size = np.where(size > 0, size, 1.0)

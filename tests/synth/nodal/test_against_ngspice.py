@@ -13,6 +13,7 @@ from netlist.deck import board_deck
 from netlist.ngspice import Simulator
 from synth.nodal import compile_circuit
 from synth.nodal.engine import COMPILE_AFTER
+from tests.synth.forms.biquads import low_pass, unscaled
 from tests.synth.nodal.boards import chain, op_amp, random_circuit, tow_thomas
 
 START, STOP, DENSITY = 1.0, 1e7, 3
@@ -106,7 +107,15 @@ def test_noise_of_random_circuits_agrees(simulator, seed):
     np.testing.assert_allclose(noise.density, spectrum.density, rtol=1e-6)
 
 
-@pytest.mark.parametrize("circuit", [tow_thomas(op_amp()), chain(6, op_amp(), source=50.0)])
+@pytest.mark.parametrize(
+    "circuit",
+    [
+        tow_thomas(op_amp()),
+        chain(6, op_amp(), source=50.0),
+        unscaled(low_pass(5.0), "khn", gain_bandwidth=1e6),
+    ],
+    ids=["two integrators", "chain", "both inputs of an op-amp"],
+)
 def test_noise_of_boards_agrees(simulator, circuit):
     spectrum = simulator.noise(deck_of(circuit), "out", START, STOP, DENSITY)
     noise = compile_circuit(circuit).noise(spectrum.frequency_hz)

@@ -5,7 +5,6 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from synth.candidates import choose_form
 from synth.errors import RealizationError
 from synth.evidence import response_error
 from synth.forms import FORMS, realize
@@ -17,12 +16,15 @@ from synth.parts import PartRule, StockItem
 from synth.peaks import SignalPeaks, signal_peaks
 from synth.polarity import Polarity, choose_polarity
 from synth.preferred import is_member
+from synth.ranking import rank_forms
 from synth.scaling import Scaled, scale
 from synth.scaling.constraints import ceilings
+from synth.scaling.crowding import crowded_blocks, rooms_at_both_inputs
 from synth.scaling.objectives import current_shares, noise_power, response_error_power
 from synth.scaling.signomial import Signomial
 from synth.scaling.variables import Variables
 from synth.transfer import Factor, TransferFunction
+from tests.forms import exists
 from tests.jobs import job_for
 from tests.strategies import butterworth
 
@@ -85,7 +87,7 @@ def test_noise_objective_is_that_of_the_nodal_engine() -> None:
         if place is not None:
             v[place] = np.log(scaled.levels[block.name])
         v[variables.size_place(block.name)] = np.log(scaled.sizing.capacitors[block.name])
-    predicted, _ = noise_power(variables, job.board.op_amp, fine)(v)
+    predicted, _ = noise_power(variables, polarity, job.board.op_amp, fine)(v)
     noise = compile_circuit(circuit).noise(fine)
     assert predicted == pytest.approx(np.trapezoid(noise.total, fine), rel=2e-3)
 
@@ -129,7 +131,7 @@ def test_noise_of_adders_is_that_of_the_nodal_engine() -> None:
         sizing = Sizing(capacitors={"x1": c}, feedback={"y": r}, inverters=1e4)
         circuit = map_graph(graph.rescaled({"x1": level}), polarity, sizing, job)
         noise = compile_circuit(circuit).noise(fine)
-        predicted, _ = noise_power(variables, job.board.op_amp, fine)(v)
+        predicted, _ = noise_power(variables, polarity, job.board.op_amp, fine)(v)
         assert predicted == pytest.approx(np.trapezoid(noise.total, fine), rel=2e-3)
 
 
@@ -212,10 +214,10 @@ def test_the_refusal_of_all_forms_for_one_reason_says_it_once() -> None:
     """A pole at 0.01 Hz: every form is the same integrator, whose parts are named as bought."""
     target = TransferFunction.from_factors(0.0628, [], [Factor.real(-0.0628)])
     with pytest.raises(RealizationError) as caught:
-        choose_form(job_for(target, (1e-3, 1.0)), np.geomspace(1e-3, 1.0, 50))
+        rank_forms(job_for(target, (1e-3, 1.0)), np.geomspace(1e-3, 1.0, 50), seed=1)
     said = str(caught.value)
     assert said.count("would need resistors of") == 1
-    assert f"{', '.join(FORMS)}: " in said
+    assert f"{', '.join(form for form in FORMS if exists(form, target))}: " in said
     assert "allowed are 1 kohm to 1 Mohm and 100 pF to 1 uF" in said
 
 
@@ -238,3 +240,70 @@ def test_a_drawer_that_fits_nowhere_is_named_as_such() -> None:
     job = job_for(butterworth(3, 1e3), BAND, resistors=drawer)
     with pytest.raises(RealizationError, match=r"board.stock: no scaling fits: .* to the drawer"):
         stages(job, "controllable")
+
+
+@pytest.mark.parametrize(("gains", "crowded"), [((0.2, 0.4), False), ((0.2, 4.0), True)])
+def test_error_and_noise_of_a_cell_that_uses_both_inputs(
+    gains: tuple[float, float], crowded: bool
+) -> None:
+    """y = k1 x1 + k2 in behind a lossy integrator, which inverts: against the whole circuit solved,
+    with the noise gain of either input; the room left says which."""
+    x = Block("x1", "integrator", (Term("in", 9e3), Term("x1", -4e3)))
+    terms = (Term("x1", gains[0]), Term("in", gains[1]))
+    graph = BlockGraph("test", (x, Block("y", "adder", terms, both_signs=True)), "y")
+    polarity = choose_polarity(graph, inverted="no")
+    assert [polarity.at_plus("y", t.source, 1.0) for t in terms] == [False, True]
+    quiet = {"current_noise": 0.0}
+    job = job_for(butterworth(1, 1e3), BAND, op_amp_figures=quiet)
+    variables = Variables(graph)
+    v = np.zeros(variables.count)
+    v[[variables.size_place("x1"), variables.size_place("y")]] = np.log([4.7e-9, 14e3])
+    place = variables.level_place("x1")
+    assert place is not None
+    v[place] = np.log(0.7)
+    wanted = frozenset({"y"}) if crowded else frozenset()
+    assert crowded_blocks(variables, polarity, v) == wanted
+    rooms = [room(v)[0] for room in rooms_at_both_inputs(variables, polarity, 1e3)]
+    assert (rooms[0] < 0) == crowded
+    sizing = Sizing(capacitors={"x1": 4.7e-9}, feedback={"y": 14e3}, inverters=1e4)
+    circuit = map_graph(graph.rescaled({"x1": 0.7}), polarity, sizing, job)
+    program = compile_circuit(circuit)
+    error = response_error(program.solve(FREQUENCY), graph.at(2j * np.pi * FREQUENCY))
+    predicted, _ = response_error_power(
+        variables, polarity, job.board.op_amp, FREQUENCY, crowded=wanted
+    )(v)
+    assert error.rms == pytest.approx(np.sqrt(predicted), rel=0.02)
+    if not crowded:
+        fine = np.geomspace(*BAND, 400)
+        power, _ = noise_power(variables, polarity, job.board.op_amp, fine)(v)
+        noise = program.noise(fine)
+        assert power == pytest.approx(np.trapezoid(noise.total, fine), rel=5e-3)
+
+
+def test_rooms_at_both_inputs_have_their_slopes() -> None:
+    """Central differences agree with the gradients."""
+    graph = realize(butterworth(2, 1e3, highpass=True), "khn")
+    variables, polarity = Variables(graph), choose_polarity(graph)
+    rng = np.random.default_rng(4)
+    v = rng.normal(size=variables.count)
+    for room in rooms_at_both_inputs(variables, polarity, 1e3):
+        _, gradient = room(v)
+        for k in range(variables.count):
+            step = np.zeros(variables.count)
+            step[k] = 1e-5
+            slope = (room(v + step)[0] - room(v - step)[0]) / 2e-5
+            assert gradient[k] == pytest.approx(slope, rel=1e-6, abs=1e-8)
+
+
+@pytest.mark.parametrize("highpass", [False, True])
+@pytest.mark.parametrize("order", [2, 4, 5])
+def test_what_balances_two_inputs_is_of_a_usual_size(order: int, highpass: bool) -> None:
+    """It stands at the non-inverting input, within the range of the resistors."""
+    job = job_for(butterworth(order, 1e3, highpass=highpass), BAND)
+    _, polarity, _, scaled = stages(job, "khn")
+    circuit = map_graph(scaled.graph, polarity, scaled.sizing, job)
+    legs = [(c, circuit.by_ref[c.balance]) for c in circuit.cells if c.balance]
+    assert legs
+    for cell, leg in legs:
+        assert leg.nets == ("0", cell.plus)
+        assert 1e3 * 0.999 <= leg.value <= 1e6
