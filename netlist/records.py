@@ -21,6 +21,7 @@ from dataclasses import asdict
 from typing import TYPE_CHECKING, TypeAlias
 
 from synth.evidence import Check, ResponseError, verdict
+from synth.headroom import tightest_limit
 from synth.results import Candidate, Design, ErrorFigures
 
 if TYPE_CHECKING:
@@ -94,6 +95,7 @@ def design_record(design: Design, verification: Verification) -> dict[str, Json]
         },
         **_loop(design),
         "swing": [asdict(s) for s in design.swings],
+        **_tightest(design),
         "offset_v": design.offset,
         "drift": [asdict(d) for d in design.drifts],
         "forms": candidate_records(design.candidates),
@@ -303,6 +305,12 @@ def _source(design: Design) -> dict[str, object]:
     return {"job": {"name": source.name, "text": source.text, "files": dict(source.files)}}
 
 
+def _tightest(design: Design) -> dict[str, object]:
+    """The limit of the op-amps with the least room, where there are op-amps."""
+    found = tightest_limit(design)
+    return {} if found is None else {"tightest_limit": asdict(found)}
+
+
 def _repick(design: Design) -> dict[str, object]:
     """What an earlier design had to do without, and what changed."""
     found = design.repick
@@ -339,7 +347,22 @@ def _simulation(verification: Verification) -> dict[str, object]:
         "nodal_disagreement": verification.nodal_disagreement,
         "worst_boards_disagreement": verification.worst_disagreement,
         "noise_rms_v": verification.noise_rms,
+        "sine": _sine(verification),
         "operating_point_v": dict(sorted((verification.operating_point or {}).items())),
+    }
+
+
+def _sine(verification: Verification) -> dict[str, object] | None:
+    """The sine that showed whether a predicted peak clips."""
+    run = verification.sine
+    if run is None:
+        return None
+    return {
+        "amplifier": run.amplifier,
+        "net": run.net,
+        "frequency_hz": run.frequency_hz,
+        "input_peak_v": run.input_peak,
+        "expected_v": run.expected,
     }
 
 

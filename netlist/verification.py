@@ -12,6 +12,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
+from netlist.clipping import SineRun, sine_check, sine_run
 from netlist.comparison import compare
 from netlist.ngspice import Simulator, TransientResult
 from netlist.stimulus import Decks, decks_of, settling_time
@@ -61,6 +62,8 @@ class Verification:
         input.
     noise_rms
         Noise of the output over the band [V].
+    sine
+        The steady sine that every op-amp output was held against, None where there was none.
     nodal_disagreement
         Of ngspice and the nodal engine on the same circuit, see `disagreement`.
     worst_disagreement
@@ -68,7 +71,8 @@ class Verification:
     checks
         ``magnitude error`` and ``phase error``, the difference of the two analyses on the
         nominal board and on the worst ones, then ``settling after a step`` where the target
-        settles; empty without a response.
+        settles and ``clipping of the largest sine`` where the predicted peaks do not clip; empty
+        without a response.
     failure
         Why the simulator did not deliver, or None.  What it did not deliver is None above; a
         response may be there although a later analysis failed.
@@ -81,6 +85,7 @@ class Verification:
     operating_point: dict[str, float] | None = None
     step: TransientResult | None = None
     noise_rms: float | None = None
+    sine: SineRun | None = None
     nodal_disagreement: float | None = None
     worst_disagreement: float | None = None
     checks: tuple[Check, ...] = ()
@@ -157,7 +162,8 @@ def _verify(design: Design, decks: Decks, simulator: Simulator) -> Verification:
         noise = simulator.noise(decks.board, out, *band, density)
         so_far = replace(so_far, noise_rms=noise.total_rms)
         step = simulator.transient(decks.step, watched, time_limit=STEP_LIMIT_S)
-        return replace(so_far, step=step, checks=(*so_far.checks, *settling(design, step)))
+        so_far = replace(so_far, step=step, checks=(*so_far.checks, *settling(design, step)))
+        return _with_sine(design, simulator, so_far)
     except SimulatorError as problem:
         return replace(so_far, failure=str(problem))
 
@@ -201,6 +207,15 @@ def _worst_compared(
     )
     check = _agreement(AGREEMENT_ON_WORST, largest, note)
     return replace(so_far, worst_disagreement=largest, checks=(*so_far.checks, check))
+
+
+def _with_sine(design: Design, simulator: Simulator, so_far: Verification) -> Verification:
+    """A sine at the hottest output's peak, where every output is predicted to be in its limits."""
+    run = sine_run(design)
+    if run is None:
+        return so_far
+    found = simulator.transient(run.deck, list(run.expected), time_limit=STEP_LIMIT_S)
+    return replace(so_far, sine=run, checks=(*so_far.checks, sine_check(run, found)))
 
 
 def _agreement(name: str, differing: float, note: str) -> Check:

@@ -9,12 +9,14 @@ from netlist.partslist import PartLine
 from netlist.report.wording import NONE, decibel, number, percent, quantity, spelled, stated
 from synth.circuit import Circuit, Passive
 from synth.evidence import Check
+from synth.headroom import tightest_limit
 from synth.loop import LoopMargins, Percentiles
 from synth.results import Candidate, Design, Drift, LoopResult, Swing
 
 __all__ = [
     "check_rows",
     "drift_rows",
+    "first_to_bite",
     "form_rows",
     "largest_noise",
     "loop_rows",
@@ -128,6 +130,20 @@ def swing_rows(swings: Iterable[Swing], circuit: Circuit) -> list[Row]:
         }
         for s in swings
     ]
+
+
+def first_to_bite(design: Design) -> str:
+    """The limit of the op-amps with the least room, in one sentence; empty without op-amps."""
+    found = tightest_limit(design)
+    if found is None:
+        return ""
+    whose = f"the {found.quantity} of {found.amplifier}" if found.amplifier else found.quantity
+    room = "the op-amp has" if found.ratio >= 1 else "the op-amp has only"
+    left = {
+        "gain-bandwidth": "what the limits on the response need",
+        "swing": "what is needed; by that factor the input may grow until it clips",
+    }.get(found.quantity, "what is needed")
+    return f"First to bite: {whose}. There {room} {number(found.ratio)} times {left}."
 
 
 def _where(peak_hz: float | None) -> str:
