@@ -15,13 +15,15 @@ from collections.abc import Callable
 from netlist.opamp_models import linear_model, number, saturating_model
 from synth.circuit import Circuit, Passive
 from synth.errors import CircuitError
-from synth.parts import OpAmp
+from synth.parts import OpAmp, VendorModel
 
-__all__ = ["board_deck", "filtered", "sine_deck", "step_deck"]
+__all__ = ["board_deck", "filtered", "sine_deck", "step_deck", "vendor_deck"]
 
 LONGEST_TEXT = 120
 SOURCE = "Vin"
 _LETTER = {"resistor": "R", "capacitor": "C"}
+# Nets of the rails; no net of a circuit starts with an underscore.
+_RAILS = {"vcc": "_rail_high", "vee": "_rail_low"}
 # Names that a SPICE program gives another meaning.
 _RESERVED_NETS = frozenset({"frequency", "gnd", "null", "time"})
 
@@ -192,6 +194,45 @@ def _transient_deck(
             ".options method=trap reltol=1e-05",
             f".tran {' '.join(number(t) for t in times)}",
             f".print tran v({circuit.input_net}) v({circuit.output_net})",
+        ]
+    )
+
+
+def vendor_deck(
+    circuit: Circuit,
+    model: VendorModel,
+    *,
+    title: str,
+    supply: tuple[float, float],
+    start_hz: float,
+    stop_hz: float,
+    points_per_decade: int,
+) -> str:
+    """The AC deck with a vendor's model for every op-amp, between rails.
+
+    Its statements are those `netlist.vendormodel` let pass.
+
+    Raises
+    ------
+    CircuitError
+        A name that SPICE cannot take.
+    """
+    _check_nets(circuit)
+    lines = [line for part in circuit.passives for line in _passive(part)]
+    for amp in circuit.amplifiers:
+        pins = {"plus": amp.plus, "minus": amp.minus, "out": amp.output, **_RAILS}
+        nets = " ".join(pins[pin] for pin in model.pins)
+        lines.append(f"X{amp.ref} {nets} {model.subcircuit}")
+    return _text(
+        [
+            f"* {filtered(title)}",
+            "* The response with a vendor's model of the op-amp.",
+            f"{SOURCE} {circuit.input_net} 0 DC 0 AC 1",
+            f"Vrail_low {_RAILS['vee']} 0 DC {number(supply[0])}",
+            f"Vrail_high {_RAILS['vcc']} 0 DC {number(supply[1])}",
+            *lines,
+            *model.cards,
+            f".ac dec {points_per_decade:d} {number(start_hz)} {number(stop_hz)}",
         ]
     )
 

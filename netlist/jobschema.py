@@ -45,6 +45,7 @@ VoltNoise = Annotated[float | None, PlainValidator(read_quantity("V/rtHz"))]
 AmpereNoise = Annotated[float | None, PlainValidator(read_quantity("A/rtHz"))]
 Ratio = Annotated[float | None, PlainValidator(read_quantity("ratio"))]
 Band = Annotated[tuple[float, float], PlainValidator(jobvalues.read_band)]
+Texts = Annotated[tuple[str, ...] | None, PlainValidator(jobvalues.read_texts)]
 Rails = Annotated[tuple[float, float] | None, PlainValidator(jobvalues.read_rails)]
 Coefficients = Annotated[tuple[Fraction, ...], PlainValidator(jobvalues.read_coefficients)]
 Roots = Annotated[tuple[RootEntry, ...], PlainValidator(jobvalues.read_roots)]
@@ -149,6 +150,9 @@ class OpAmpTable(Table):
     swing_headroom: Volt = None
     output_current: Ampere = None
     supply_current: Ampere = None
+    model: Text = None
+    subcircuit: Text = None
+    pins: Texts = None
 
 
 class BoardTable(Table):

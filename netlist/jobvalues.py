@@ -61,6 +61,13 @@ def read_text(value: object) -> str:
     return value
 
 
+def read_texts(value: object) -> tuple[str, ...]:
+    """A list of short texts."""
+    if not isinstance(value, list):
+        raise JobError(f"got {what_came(value)}, expected a list of texts in quotes")
+    return tuple(read_text(each) for each in value)
+
+
 def read_expression(value: object) -> str:
     """An expression on one line, each character in its place so that a caret can point at it."""
     if not isinstance(value, str):

@@ -348,8 +348,17 @@ def _simulation(verification: Verification) -> dict[str, object]:
         "worst_boards_disagreement": verification.worst_disagreement,
         "noise_rms_v": verification.noise_rms,
         "sine": _sine(verification),
+        "vendor_model": _vendor(verification),
         "operating_point_v": dict(sorted((verification.operating_point or {}).items())),
     }
+
+
+def _vendor(verification: Verification) -> dict[str, object] | None:
+    """How far the response with the vendor's model is from that with the one-pole model."""
+    if verification.vendor is None and verification.vendor_failure is None:
+        return None
+    error = verification.vendor
+    return {"failure": verification.vendor_failure, "difference": error and _error(error)}
 
 
 def _sine(verification: Verification) -> dict[str, object] | None:

@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 
 from netlist.clipping import SineRun, sine_check, sine_run
 from netlist.comparison import compare
+from netlist.deck import vendor_deck
 from netlist.ngspice import Simulator, TransientResult
 from netlist.stimulus import Decks, decks_of, settling_time
 from synth.circuit import GROUND
@@ -64,6 +65,11 @@ class Verification:
         Noise of the output over the band [V].
     sine
         The steady sine that every op-amp output was held against, None where there was none.
+    vendor
+        Response with the vendor's model of the op-amp against that with the one-pole model, where
+        the job names a model and it could be simulated; no check rests on it.
+    vendor_failure
+        Why it could not be.
     nodal_disagreement
         Of ngspice and the nodal engine on the same circuit, see `disagreement`.
     worst_disagreement
@@ -86,6 +92,8 @@ class Verification:
     step: TransientResult | None = None
     noise_rms: float | None = None
     sine: SineRun | None = None
+    vendor: ResponseError | None = None
+    vendor_failure: str | None = None
     nodal_disagreement: float | None = None
     worst_disagreement: float | None = None
     checks: tuple[Check, ...] = ()
@@ -163,7 +171,8 @@ def _verify(design: Design, decks: Decks, simulator: Simulator) -> Verification:
         so_far = replace(so_far, noise_rms=noise.total_rms)
         step = simulator.transient(decks.step, watched, time_limit=STEP_LIMIT_S)
         so_far = replace(so_far, step=step, checks=(*so_far.checks, *settling(design, step)))
-        return _with_sine(design, simulator, so_far)
+        so_far = _with_sine(design, simulator, so_far)
+        return _with_vendor(design, simulator, so_far)
     except SimulatorError as problem:
         return replace(so_far, failure=str(problem))
 
@@ -216,6 +225,31 @@ def _with_sine(design: Design, simulator: Simulator, so_far: Verification) -> Ve
         return so_far
     found = simulator.transient(run.deck, list(run.expected), time_limit=STEP_LIMIT_S)
     return replace(so_far, sine=run, checks=(*so_far.checks, sine_check(run, found)))
+
+
+def _with_vendor(design: Design, simulator: Simulator, so_far: Verification) -> Verification:
+    """The response with the vendor's model; a model that fails is told, and no more."""
+    model, band = design.job.board.vendor_model, design.job.signal.band_hz
+    if model is None or so_far.simulated is None:
+        return so_far
+    deck = vendor_deck(
+        design.circuit,
+        model,
+        title=design.job.title,
+        supply=design.job.board.supply,
+        start_hz=band[0],
+        stop_hz=band[1],
+        points_per_decade=points_per_decade(design.wanted, band_hz=band),
+    )
+    out = design.circuit.output_net
+    try:
+        found = simulator.ac(deck, [out])
+    except SimulatorError as problem:
+        return replace(so_far, vendor_failure=str(problem))
+    response = found.voltages[out][judged(design.wanted, found.frequency_hz)]
+    if not np.all(np.isfinite(response)):
+        return replace(so_far, vendor_failure="the response is not a number everywhere")
+    return replace(so_far, vendor=response_error(response, so_far.simulated))
 
 
 def _agreement(name: str, differing: float, note: str) -> Check:

@@ -12,7 +12,7 @@ from collections import Counter
 from dataclasses import dataclass, field
 
 from synth.errors import JobError
-from synth.parts import OpAmp, PartRule
+from synth.parts import OpAmp, PartRule, VendorModel
 from synth.preferred import nearest
 from synth.quantities import show
 from synth.transfer import TransferFunction
@@ -91,6 +91,8 @@ class Board:
         Whether fewer distinct values are worth a slightly larger error.
     pairs
         Whether two resistors may stand for one where one cannot reach the limit.
+    vendor_model
+        A model of the op-amp to simulate the response with as well; no check rests on it.
     """
 
     op_amp: OpAmp
@@ -102,6 +104,7 @@ class Board:
     fixed: tuple[tuple[str, float], ...] = ()
     share_values: bool = False
     pairs: bool = False
+    vendor_model: VendorModel | None = None
 
     def __post_init__(self) -> None:
         low, high = self.supply
