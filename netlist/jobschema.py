@@ -31,6 +31,7 @@ __all__ = [
 ]
 
 Text = Annotated[str | None, PlainValidator(jobvalues.read_text)]
+FileName = Annotated[str | None, PlainValidator(jobvalues.read_file_name)]
 Volt = Annotated[float | None, PlainValidator(read_quantity("V"))]
 Ohm = Annotated[float | None, PlainValidator(read_quantity("ohm"))]
 Farad = Annotated[float | None, PlainValidator(read_quantity("F"))]
@@ -150,7 +151,7 @@ class OpAmpTable(Table):
     swing_headroom: Volt = None
     output_current: Ampere = None
     supply_current: Ampere = None
-    model: Text = None
+    model: FileName = None
     subcircuit: Text = None
     pins: Texts = None
 
@@ -161,7 +162,7 @@ class BoardTable(Table):
     supply: Rails = None
     form: Text = None
     inverted: Text = None
-    stock: Text = None
+    stock: FileName = None
     fixed: Annotated[Mapping[str, object], PlainValidator(jobvalues.read_table)] = Field(
         default_factory=dict
     )

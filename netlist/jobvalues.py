@@ -21,6 +21,7 @@ __all__ = [
     "read_band",
     "read_coefficients",
     "read_expression",
+    "read_file_name",
     "read_fixed",
     "read_gain",
     "read_gain_at",
@@ -66,6 +67,17 @@ def read_texts(value: object) -> tuple[str, ...]:
     if not isinstance(value, list):
         raise JobError(f"got {what_came(value)}, expected a list of texts in quotes")
     return tuple(read_text(each) for each in value)
+
+
+def read_file_name(value: object) -> str:
+    """The name of a file beside the job."""
+    name = read_text(value)
+    if not name.strip():
+        raise JobError(
+            f"got {what_came(value)}, expected the name of a file; leave the key out where there "
+            "is none"
+        )
+    return name
 
 
 def read_expression(value: object) -> str:

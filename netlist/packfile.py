@@ -7,14 +7,17 @@ another format is refused in one line that names the file and the key.
 from __future__ import annotations
 
 import json
+import re
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, NoReturn
 
 from netlist.jobfile import parse_job
 from netlist.records import FORMAT
+from synth.constants import LARGEST_SEED, MOST_BOARDS
 from synth.errors import JobError
-from synth.job import JobText
+from synth.job import Job, JobText
+from synth.preferred import SERIES
 from synth.quantities import what_came
 from synth.shortages import Shortage
 
@@ -28,6 +31,11 @@ LARGEST_RECORD = 50_000_000
 
 AGAIN = "make the pack again with polewright design"
 
+KINDS = ("resistor", "capacitor")
+
+_REFERENCE = re.compile(r"[A-Z][A-Z0-9_]{0,15}")
+_BARE = re.compile(r"[A-Za-z0-9_-]+(\.[A-Za-z0-9_-]+)*")
+
 
 def read_pack(folder: str | Path) -> Earlier:
     """The design a pack holds.
@@ -37,67 +45,70 @@ def read_pack(folder: str | Path) -> Earlier:
     JobError
         No pack, one of another format, a damaged one, or one whose job cannot be read.
     """
-    from synth.forms import check_form_name
+    from synth.forms import FORMS
     from synth.recorded import Earlier, RecordedPart
 
     name = Path(folder) / "design.json"
     record = _record(Path(folder), name)
     top = _Table(record, "", str(name))
-    if top.given("format") != FORMAT:
-        top.refuse("format", f"got {what_came(top.given('format'))}, expected {FORMAT}")
+    # A version that is a number at all: true is none, though equal to 1.
+    if top.given("format") != FORMAT or isinstance(top.given("format"), bool):
+        top.unfit("format", f"expected {FORMAT}")
     if "job" not in record:
         top.refuse("job", f"is missing: an earlier version wrote this pack; {AGAIN}")
-    source = top.table("job")
-    files = source.table("files")
-    texts = {each: files.text(each) for each in files.content}
-    title = f"{name}: {source.text('name')}"
-    job = parse_job(source.text("text"), name=title, files=texts)
-    try:
-        check_form_name(top.text("form"))
-    except JobError as error:
-        top.refuse("form", error.problem)
-    parts = [
-        RecordedPart(
-            ref=part.text("ref"),
-            kind=part.text("kind"),
+    job = _job(top.table("job"))
+    form = top.one_of("form", tuple(FORMS))
+    parts: dict[str, RecordedPart] = {}
+    for part in top.tables("components"):
+        kind = part.one_of("kind", (*KINDS, "op_amp"))
+        if kind == "op_amp":
+            continue
+        ref = part.text("ref")
+        if ref in parts:
+            part.unfit("ref", f"expected a reference of its own, as {parts[ref].place} has this")
+        parts[ref] = RecordedPart(
+            ref=ref,
+            kind=kind,
             nets=part.two_texts("nets"),
             value=part.positive("value"),
+            place=part.path,
         )
-        for part in top.tables("components")
-        if part.text("kind") != "op_amp"
-    ]
     drawn = top.table("yield")
     return Earlier(
-        job=replace(
-            job,
-            source=JobText(
-                name=source.text("name"), text=source.text("text"), files=tuple(texts.items())
-            ),
-        ),
-        form=top.text("form"),
-        parts=tuple(parts),
-        boards=drawn.count("boards", least=1),
-        seed=drawn.count("seed", least=0),
+        job=job,
+        form=form,
+        parts=tuple(parts.values()),
+        boards=drawn.count("boards", least=1, most=MOST_BOARDS),
+        seed=drawn.count("seed", least=0, most=LARGEST_SEED),
         shortages=_shortages(top) if "repick" in record else (),
+        name=str(name),
     )
+
+
+def _job(source: _Table) -> Job:
+    """The job in its text and the files that come with it."""
+    name = source.line("name")
+    files = source.table("files")
+    texts = {each: files.text(each) for each in files.content}
+    text = source.text("text")
+    job = parse_job(text, name=f"{source.file}: {source.path}.text: {name}", files=texts)
+    return replace(job, source=JobText(name=name, text=text, files=tuple(texts.items())))
 
 
 def _shortages(top: _Table) -> tuple[Shortage, ...]:
     """What an earlier design already had to do without."""
-    found = []
     told = top.table("repick")
-    for each in (*told.tables("already_without"), *told.tables("without")):
-        if each.text("kind") not in ("resistor", "capacitor"):
-            each.refuse("kind", f"got {what_came(each.text('kind'))}, expected a kind of part")
-        found.append(
-            Shortage(
-                kind=each.text("kind"),
-                value=each.positive("value"),
-                ref=each.text("ref"),
-                source=each.text("source"),
-            )
+    if not told.tables("without"):
+        told.unfit("without", "expected at least one value")
+    return tuple(
+        Shortage(
+            kind=each.one_of("kind", KINDS),
+            value=each.positive("value"),
+            ref=each.reference("ref"),
+            source=each.one_of("source", ("", *SERIES, "stock")),
         )
-    return tuple(found)
+        for each in (*told.tables("already_without"), *told.tables("without"))
+    )
 
 
 def _record(folder: Path, name: Path) -> dict[str, object]:
@@ -143,15 +154,23 @@ class _Table:
     file: str
 
     def _below(self, key: str) -> str:
-        return f"{self.path}.{key}" if self.path else key
+        shown = key if _BARE.fullmatch(key) else what_came(key)
+        return f"{self.path}.{shown}" if self.path else shown
 
     def refuse(self, key: str, problem: str) -> NoReturn:
-        path = self._below(key)
-        raise JobError(f"{self.file}: {path}: {problem}", key=path) from None
+        self._refuse_at(self._below(key), problem)
 
-    def _unfit(self, key: str, expected: str) -> NoReturn:
-        value = self.content[key]
-        self.refuse(key, f"got {'nothing' if value is None else what_came(value)}, {expected}")
+    def unfit(self, key: str, expected: str) -> NoReturn:
+        """Refuse the value of `key`: what came, and what was expected."""
+        self._unfit_at(self._below(key), self.content[key], expected)
+
+    def _unfit_at(self, path: str, value: object, expected: str) -> NoReturn:
+        self._refuse_at(path, f"got {'nothing' if value is None else what_came(value)}, {expected}")
+
+    def _refuse_at(self, path: str, problem: str) -> NoReturn:
+        error = JobError(f"{self.file}: {path}: {problem}")
+        error.key = path
+        raise error
 
     def given(self, key: str) -> object:
         if key not in self.content:
@@ -161,37 +180,66 @@ class _Table:
     def text(self, key: str) -> str:
         value = self.given(key)
         if not isinstance(value, str):
-            self._unfit(key, "expected a text")
+            self.unfit(key, "expected a text")
+        return value
+
+    def line(self, key: str) -> str:
+        """A text on one line."""
+        value = self.text(key)
+        if not value or not value.isprintable():
+            self.unfit(key, "expected one line of text without control characters")
+        return value
+
+    def reference(self, key: str) -> str:
+        """The reference of a part, or an empty text."""
+        value = self.text(key)
+        if value and not _REFERENCE.fullmatch(value):
+            self.unfit(key, "expected the reference of a part, or ''")
+        return value
+
+    def one_of(self, key: str, known: tuple[str, ...]) -> str:
+        """A text that is one of those known."""
+        value = self.text(key)
+        if value not in known:
+            listed = ", ".join(each or "''" for each in known)
+            self.unfit(key, f"expected one of {listed}")
         return value
 
     def two_texts(self, key: str) -> tuple[str, str]:
         value = self.given(key)
-        texts = [v for v in value if isinstance(v, str)] if isinstance(value, list) else []
-        if not isinstance(value, list) or not len(value) == len(texts) == 2:
-            self._unfit(key, "expected two nets")
-        return texts[0], texts[1]
+        if not isinstance(value, list) or len(value) != 2:
+            self.unfit(key, "expected two nets")
+        for place, net in enumerate(value):
+            if not isinstance(net, str):
+                self._unfit_at(f"{self._below(key)}[{place}]", net, "expected the name of a net")
+        return value[0], value[1]
 
     def positive(self, key: str) -> float:
         value = self.given(key)
         if isinstance(value, bool) or not isinstance(value, (int, float)) or not 0 < value < 1e300:
-            self._unfit(key, "expected a positive number")
+            self.unfit(key, "expected a positive number")
         return float(value)
 
-    def count(self, key: str, *, least: int) -> int:
+    def count(self, key: str, *, least: int, most: int) -> int:
         value = self.given(key)
-        if isinstance(value, bool) or not isinstance(value, int) or not least <= value < 2**63:
-            self._unfit(key, f"expected a whole number from {least}")
+        if isinstance(value, bool) or not isinstance(value, int) or not least <= value <= most:
+            self.unfit(key, f"expected a whole number from {least} to {most}")
         return value
 
     def table(self, key: str) -> _Table:
         value = self.given(key)
         if not isinstance(value, dict):
-            self._unfit(key, "expected an object")
+            self.unfit(key, "expected a table")
         return _Table(value, self._below(key), self.file)
 
     def tables(self, key: str) -> list[_Table]:
         value = self.given(key)
-        found = [v for v in value if isinstance(v, dict)] if isinstance(value, list) else []
-        if not isinstance(value, list) or len(found) != len(value):
-            self._unfit(key, "expected a list of objects")
-        return [_Table(v, f"{self._below(key)}[{k}]", self.file) for k, v in enumerate(found)]
+        if not isinstance(value, list):
+            self.unfit(key, "expected a list of tables")
+        found: list[_Table] = []
+        for place, each in enumerate(value):
+            path = f"{self._below(key)}[{place}]"
+            if not isinstance(each, dict):
+                self._unfit_at(path, each, "expected a table")
+            found.append(_Table(each, path, self.file))
+        return found

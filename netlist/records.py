@@ -238,6 +238,7 @@ def _choice(design: Design) -> dict[str, object]:
             "proven": found.proven,
             "exhausted": found.exhausted,
             "binding": [{"refs": list(b.refs), "rms_error": b.rms} for b in found.bottlenecks],
+            "held": list(found.held),
             "effort": design.effort,
         }
     }

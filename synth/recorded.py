@@ -11,26 +11,30 @@ from synth.choosing.pairs import Pair, with_pairs
 from synth.circuit import Circuit
 from synth.errors import JobError
 from synth.job import Job
+from synth.quantities import show, what_came
 from synth.shortages import SAME_VALUE, Shortage
 
-__all__ = ["Earlier", "RecordedPart", "paired", "rebuilt"]
+__all__ = ["Earlier", "RecordedPart", "paired", "rebuilt", "recorded_pairs"]
 
 
 @dataclass(frozen=True, kw_only=True)
 class RecordedPart:
-    """A resistor or capacitor of an earlier design: `value` [ohm] or [F]."""
+    """A resistor or capacitor of an earlier design: `value` [ohm] or [F]; `place` is where in the
+    record it stands."""
 
     ref: str
     kind: str
     nets: tuple[str, str]
     value: float
+    place: str = ""
 
 
 @dataclass(frozen=True, kw_only=True)
 class Earlier:
     """An earlier design, as much of it as is needed to make it again.
 
-    `boards` and `seed` are those of its tolerance run; `shortages` what it had to do without.
+    `boards` and `seed` are those of its tolerance run; `shortages` what it had to do without;
+    `name` is that of the record in messages.
     """
 
     job: Job
@@ -39,10 +43,16 @@ class Earlier:
     boards: int
     seed: int
     shortages: tuple[Shortage, ...] = ()
+    name: str = ""
 
 
 def paired(circuit: Circuit, parts: Sequence[RecordedPart]) -> Circuit:
-    """`circuit` with two resistors for one wherever `parts` have them.
+    """`circuit` with two resistors for one wherever `parts` have them."""
+    return with_pairs(circuit, recorded_pairs(circuit, parts))
+
+
+def recorded_pairs(circuit: Circuit, parts: Sequence[RecordedPart]) -> tuple[Pair, ...]:
+    """The pairs of resistors that `parts` have for one of `circuit`.
 
     R4A and R4B stand for an input resistor R4 that is not recorded itself: in parallel where
     both have the same nets, in series otherwise.  Whether everything fits is for `rebuilt` to
@@ -58,11 +68,16 @@ def paired(circuit: Circuit, parts: Sequence[RecordedPart]) -> Circuit:
         if part.ref in inputs and not part.fixed:
             how = "parallel" if first.nets == second.nets else "series"
             pairs.append(Pair(ref=part.ref, values=(first.value, second.value), how=how))
-    return with_pairs(circuit, tuple(pairs))
+    return tuple(pairs)
 
 
-def rebuilt(circuit: Circuit, parts: Sequence[RecordedPart]) -> Circuit:
+def rebuilt(circuit: Circuit, parts: Sequence[RecordedPart], *, name: str = "") -> Circuit:
     """`circuit` with the values of `parts`, once both are known to be the same circuit.
+
+    Parameters
+    ----------
+    name
+        Of the record, in messages.
 
     Raises
     ------
@@ -70,30 +85,44 @@ def rebuilt(circuit: Circuit, parts: Sequence[RecordedPart]) -> Circuit:
         A part that the job's circuit does not have, or that differs in kind, nets or in what
         values it may take; or one that is not recorded.
     """
-    found = {p.ref: p for p in parts}
-    extra = [p.ref for p in parts if p.ref not in {q.ref for q in circuit.bought}]
-    lost = [p.ref for p in circuit.bought if p.ref not in found]
-    for refs, problem in ((extra, "is not in"), (lost, "is missing, but in")):
-        if refs:
-            raise JobError(f"{refs[0]} {problem} the circuit of the job")
+    found, own = {p.ref: p for p in parts}, {p.ref: p for p in circuit.bought}
+    for record in parts:
+        if record.ref not in own:
+            problem = f"got {what_came(record.ref)}, expected one of {', '.join(own)}"
+            raise _damage(name, record, "ref", problem)
+    for ref in own:
+        if ref not in found:
+            raise JobError(
+                _said(name, "components", f"{ref} is missing, which the job's circuit has")
+            )
     for part in circuit.bought:
         record = found[part.ref]
-        for name in ("kind", "nets"):
-            if getattr(record, name) != getattr(part, name):
-                raise JobError(
-                    f"{part.ref}: got {name} {_plain(getattr(record, name))}, but the circuit of "
-                    f"the job has {_plain(getattr(part, name))}"
+        for what in ("kind", "nets"):
+            came, expected = _plain(getattr(record, what)), _plain(getattr(part, what))
+            if came != expected:
+                raise _damage(
+                    name, record, what, f"{part.ref} has {came}, expected {expected} as in the job"
                 )
         if part.rule is not None and not part.fixed:
             values = part.rule.values
             if not np.any(np.isclose(values, record.value, rtol=SAME_VALUE, atol=0)):
-                raise JobError(
-                    f"{part.ref}: got the value {record.value:g}, expected one of "
-                    f"{part.rule.source} from {values[0]:g} to {values[-1]:g}"
-                )
+                unit = "ohm" if part.kind == "resistor" else "F"
+                came, low, high = (show(v, unit, 6) for v in (record.value, values[0], values[-1]))
+                source = part.rule.source
+                problem = f"{part.ref} has {came}, expected one of {source} from {low} to {high}"
+                raise _damage(name, record, "value", problem)
     at = circuit.with_values({p.ref: p.value for p in parts})
     return replace(at, passives=tuple(replace(p, ideal=p.value) for p in at.passives))
 
 
 def _plain(value: object) -> str:
-    return " ".join(value) if isinstance(value, tuple) else str(value)
+    return what_came(" ".join(value) if isinstance(value, tuple) else value)
+
+
+def _damage(name: str, part: RecordedPart, key: str, problem: str) -> JobError:
+    """What is wrong with the key of a recorded part."""
+    return JobError(_said(name, f"{part.place or part.ref}.{key}", problem))
+
+
+def _said(name: str, path: str, problem: str) -> str:
+    return ": ".join(each for each in (name, path, problem) if each)

@@ -58,10 +58,12 @@ def standard_values(
     seed: int,
     *,
     effort: int = DEFAULT_EFFORT,
+    known: Circuit | None = None,
 ) -> Choice:
-    """Standard values for the sketch's circuit, for the `response` (F,) of its output."""
+    """Standard values for the sketch's circuit, for the `response` (F,) of its output, better
+    than those of `known`."""
     search = ValueSearch(sketch, job, response, frequency_hz, seed, effort)
-    return search.task(sketch.circuit).choose()
+    return search.task(sketch.circuit).choose(known=known)
 
 
 @dataclass(frozen=True, eq=False)

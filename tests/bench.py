@@ -1,12 +1,13 @@
 """The benchmark: speed, memory and quality of values, as one table.
 
 ``sh tests/run bench`` prints it; ``python -m tests.bench values`` one part alone (parts:
-commands, engine, memory, values).  Nothing here passes or fails: the aims stand beside the
+commands, engine, memory, ranking, values).  Nothing here passes or fails: the aims stand beside the
 figures.  Ratios are taken within one run, so that a slow or busy machine does not blur them.
 """
 
 from __future__ import annotations
 
+import math
 import os
 import statistics
 import subprocess
@@ -19,8 +20,10 @@ from pathlib import Path
 
 import numpy as np
 
+from netlist.processes import workers
 from synth.candidates import sketch_form
 from synth.choosing import choose_values
+from synth.design import compare_forms
 from synth.evidence import response_error
 from synth.forms import FORMS
 from synth.nodal import compile_circuit
@@ -206,10 +209,27 @@ def _best_row(best: _Chosen, trial: float) -> Row:
     )
 
 
+def ranking() -> Iterator[Row]:
+    """The whole ranking of a low-pass, every form with values and 1,000 boards, by order."""
+    seconds: dict[int, float] = {}
+    for order in (4, 6, 8, 10):
+        job = job_for(butterworth(order, 1e3), (100.0, 2e3))
+        start = time.perf_counter()
+        with workers() as mapper:
+            chosen, candidates = compare_forms(job, mapper=mapper)
+        seconds[order] = time.perf_counter() - start
+        count = sum(c.possible for c in candidates)
+        aim = "15 s" if order == 6 else ""
+        yield f"order {order}", f"{seconds[order]:.1f} s for {count} forms, {chosen}", aim
+    growth = math.log(seconds[10] / seconds[4]) / math.log(10 / 4)
+    yield "growth from order 4 to 10, a power of the order", f"{growth:.2f}", "2"
+
+
 PARTS: Mapping[str, Callable[[], Iterator[Row]]] = {
     "commands": commands,
     "engine": engine,
     "memory": memory,
+    "ranking": ranking,
     "values": values,
 }
 

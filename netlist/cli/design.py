@@ -10,6 +10,7 @@ import click
 from netlist.cli.carrying import carry_out
 from netlist.cli.options import as_json, job_file, with_traceback
 from netlist.cli.running import Result
+from synth.constants import LARGEST_SEED, MOST_BOARDS
 
 if TYPE_CHECKING:
     from netlist.cli.progress import Report
@@ -29,7 +30,7 @@ __all__ = ["command", "default_folder"]
 @click.option(
     "--boards",
     metavar="N",
-    type=click.IntRange(1, 10_000_000),
+    type=click.IntRange(1, MOST_BOARDS),
     default=1000,
     show_default=True,
     help="How many boards to draw for the yield.",
@@ -37,7 +38,7 @@ __all__ = ["command", "default_folder"]
 @click.option(
     "--seed",
     metavar="N",
-    type=click.IntRange(0, 2**63 - 1),
+    type=click.IntRange(0, LARGEST_SEED),
     default=1,
     show_default=True,
     help="Seed of the random numbers: the same seed gives the same pack.",

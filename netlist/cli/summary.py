@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import sys
+import textwrap
 from collections.abc import Iterable, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -14,6 +15,7 @@ from netlist.cli.running import say
 from netlist.partslist import packages
 from netlist.records import all_checks, verdict_of
 from netlist.report.changes import change_errors, change_rows
+from netlist.report.choice import proof_line
 from netlist.report.found import check_rows, form_rows
 from netlist.report.page import LOW_YIELD
 from netlist.report.wording import percent, stated
@@ -23,6 +25,9 @@ if TYPE_CHECKING:
     from netlist.verification import Verification
 
 __all__ = ["EXIT_CODES", "forms_table", "summary", "warn"]
+
+WIDTH = 96
+"""Characters in a line of a paragraph."""
 
 EXIT_CODES = {"pass": 0, "fail": 1, "unverified": 3}
 _COLOURS = {"pass": "green", "fail": "red", "unverified": "yellow"}
@@ -122,7 +127,16 @@ def _repicked(design: Design) -> list[str]:
         *_table(("changed", "from", "to", "by", "sets"), rows),
         "",
         *_table(("nominal error", "before", "after"), errors),
+        *_proof(design),
     ]
+
+
+def _proof(design: Design) -> list[str]:
+    """How good the choice is against any other of the parts that were free, as a paragraph."""
+    if design.certificate is None:
+        return []
+    text = _plain_spaces(proof_line(design.certificate, design.circuit))
+    return ["", *(f"  {line}" for line in textwrap.wrap(text, WIDTH))]
 
 
 def _table(header: Sequence[str], rows: Sequence[Sequence[str]]) -> list[str]:

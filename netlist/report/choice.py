@@ -29,7 +29,7 @@ USEFUL_RATIO = 2.0
 LARGEST_SHARES = 8
 WORTH_NAMING = 0.5
 
-# References of parts that were no choice are listed up to this many.
+# References of parts that were no choice, or else of those that were, are listed up to this many.
 MOST_NAMED = 4
 
 # What a choice is compared with.
@@ -38,19 +38,25 @@ _OTHERS = "choice of values on offer that keeps the levels and impedances"
 _NOUNS = {"resistor": "all resistors", "capacitor": "all capacitors"}
 
 
-def proof_line(found: Certificate) -> str:
+def proof_line(found: Certificate, circuit: Circuit) -> str:
     """How the choice stands against the best there could be, in up to three sentences."""
-    return _standing(found) + _held(found)
+    return _standing(found) + _held(found, circuit)
 
 
-def _held(found: Certificate) -> str:
+def _held(found: Certificate, circuit: Circuit) -> str:
     """Among what the choice was, where it was not free; nothing where it was."""
     if not found.held:
         return ""
     if len(found.held) == 1:
         return f" All this is said of choices that leave {found.held[0]} as it is."
-    which = _listed(found.held) if len(found.held) <= MOST_NAMED else f"{len(found.held)} parts"
-    return f" All this is said of choices that leave {which} as they are."
+    if len(found.held) <= MOST_NAMED:
+        return f" All this is said of choices that leave {_listed(found.held)} as they are."
+    free = [p.ref for p in circuit.bought if p.ref not in found.held]
+    if 0 < len(free) <= MOST_NAMED:
+        return (
+            f" All this is said of choices of {_listed(free)} that leave every other part as it is."
+        )
+    return f" All this is said of choices that leave {len(found.held)} parts as they are."
 
 
 def _standing(found: Certificate) -> str:
@@ -158,7 +164,7 @@ def shown(design: Design) -> dict[str, object]:
     """Everything the page says of the choice; empty where nothing is known of it."""
     certificate, allowance, budget = design.certificate, design.allowance, design.budget
     return {
-        "proof": proof_line(certificate) if certificate else "",
+        "proof": proof_line(certificate, design.circuit) if certificate else "",
         "binding": binding_lines(certificate, design.circuit) if certificate else [],
         "allowance": allowance_rows(allowance) if allowance else [],
         "budget": budget_lines(budget) if budget else [],

@@ -12,7 +12,7 @@ from synth.choosing.model import Ceilings, Goal
 from synth.choosing.search import SearchOutcome
 from synth.nodal import NodalProgram
 
-__all__ = ["best_of_all"]
+__all__ = ["LARGEST_ENUMERATION", "best_of_all"]
 
 Real = NDArray[np.float64]
 

@@ -23,7 +23,16 @@ from synth.circuit import Cell, Circuit, Passive
 from synth.nodal import compile_circuit
 from synth.parts import PartRule, StockItem
 
-__all__ = ["Pair", "Pairing", "choose_with_pairs", "pair_values", "with_pairs"]
+__all__ = [
+    "BINDING_SHARE",
+    "WORTHWHILE",
+    "Pair",
+    "Pairing",
+    "as_one",
+    "choose_with_pairs",
+    "pair_values",
+    "with_pairs",
+]
 
 Real = NDArray[np.float64]
 Index = NDArray[np.intp]
@@ -118,11 +127,25 @@ def choose_with_pairs(task: Task, plain: Choice) -> Pairing:
     return found
 
 
-def pair_values(rule: PartRule, *, smallest: float, largest: float) -> dict[float, Pair | None]:
+def as_one(
+    part: Passive, rule: PartRule, *, about: float, how: str = ""
+) -> tuple[Passive, dict[float, Pair | None]]:
+    """`part` with a drawer that holds every value two resistors of `rule` can make within
+    `WIDEST` of `about` [ohm], and how each is made; `how` as of `pair_values`."""
+    drawer = pair_values(rule, smallest=about / WIDEST, largest=about * WIDEST, how=how)
+    stock = tuple(StockItem(value=v, tolerance=rule.tolerance) for v in drawer)
+    wide = replace(rule, stock=stock, smallest=stock[0].value / 2, largest=2 * about * WIDEST)
+    return replace(part, rule=wide), drawer
+
+
+def pair_values(
+    rule: PartRule, *, smallest: float, largest: float, how: str = ""
+) -> dict[float, Pair | None]:
     """What one part of `rule` (None) or two can make within a range, by value, ascending.
 
     In parallel up to half of the rule's largest value, in series above.  Of values closer
     than `CLOSEST` one is kept: a single part rather than two, two alike rather than unlike.
+    `how` is ``"parallel"`` or ``"series"`` where only such pairs are wanted, and no single part.
     """
     v = rule.values
     low, high = np.triu_indices(v.size)
@@ -132,11 +155,14 @@ def pair_values(rule: PartRule, *, smallest: float, largest: float) -> dict[floa
         low, high = low[allowed], high[allowed]
     a, b = v[high], v[low]
     unlike = 1 + np.log(a / b)
-    in_series = a + b > v[-1] / 2
+    in_series = np.full(a.size, True) if how == "series" else a + b > v[-1] / 2
     value = np.concatenate([v, a * b / (a + b), (a + b)[in_series]])
     cost = np.concatenate([np.zeros(v.size), unlike, unlike[in_series]])
     # The cheapest of each bin of ln, ascending.
-    inside = np.flatnonzero((value >= smallest) & (value <= largest))
+    kind = np.repeat(["", "parallel", "series"], [v.size, a.size, int(np.sum(in_series))])
+    inside = np.flatnonzero(
+        (value >= smallest) & (value <= largest) & ((kind == how) | np.array(not how))
+    )
     order = inside[np.lexsort((value[inside], cost[inside]))]
     bins = np.floor(np.log(value[order]) / CLOSEST).astype(np.int64)
     order = order[np.unique(bins, return_index=True)[1]]
@@ -144,9 +170,8 @@ def pair_values(rule: PartRule, *, smallest: float, largest: float) -> dict[floa
     second = np.concatenate([v, b, b[in_series]])
     made: dict[float, Pair | None] = {}
     for k in order.tolist():
-        how = "parallel" if k < v.size + a.size else "series"
         both = (float(first[k]), float(second[k]))
-        pair = Pair(ref="R", values=both, how=how)
+        pair = Pair(ref="R", values=both, how=str(kind[k]))
         made[float(value[k]) if k < v.size else pair.value] = None if k < v.size else pair
     return made
 
@@ -244,16 +269,8 @@ def _tried(task: Task, plain: Choice, refs: tuple[str, ...]) -> Pairing:
     for part in task.circuit.passives:
         if part.ref in refs and part.rule is not None:
             about = plain.circuit.by_ref[part.ref].value
-            drawers[part.ref] = pair_values(
-                part.rule, smallest=about / WIDEST, largest=about * WIDEST
-            )
-            stock = tuple(
-                StockItem(value=v, tolerance=part.rule.tolerance) for v in drawers[part.ref]
-            )
-            rule = replace(
-                part.rule, stock=stock, smallest=stock[0].value / 2, largest=2 * about * WIDEST
-            )
-            parts.append(replace(part, rule=rule))
+            one, drawers[part.ref] = as_one(part, part.rule, about=about)
+            parts.append(one)
         else:
             parts.append(part)
     choice = task.with_circuit(replace(task.circuit, passives=tuple(parts))).choose()

@@ -10,7 +10,7 @@ from dataclasses import replace
 import numpy as np
 
 from synth.choosing.choose import Choice
-from synth.choosing.pairs import Pair, Pairing, choose_with_pairs
+from synth.choosing.pairs import BINDING_SHARE, WORTHWHILE, Pair, Pairing, choose_with_pairs
 from synth.choosing.sharing import Sharing, share_values
 from synth.choosing.task import Task
 from synth.circuit import Circuit
@@ -39,13 +39,16 @@ def refine(task: Task, choice: Choice, board: Board) -> Choice:
 
 
 def _of_pairs(found: Pairing) -> list[str]:
-    if not found.needed:
-        return []
     before = f"{found.share_before:.2g} times its limit"
+    if not found.needed:
+        return [
+            f"no resistor became a pair, as single parts suffice: with them the error reaches "
+            f"{before}, and no bound from their series is above {BINDING_SHARE:g} times the limits"
+        ]
     if not found.pairs:
         return [
-            f"with single parts the error reaches {before}, and two resistors in the place of "
-            "one bring it no nearer"
+            f"no resistor became a pair: with single parts the error reaches {before}, and two "
+            f"in the place of one do not bring it below {WORTHWHILE:g} of that"
         ]
     return [
         f"{_words(found.pairs)}: with single parts the error reaches {before}, with these "

@@ -122,6 +122,8 @@ def in_folder(tmp_path, monkeypatch):
         ("stock = 'drawer.csv'", "kind,value,tolerance\n", "drawer.csv: got no parts"),
         ("stock = 'drawer.csv'", "kind,value,tolerance\nresistor,1x,1 %\n", ":2: column 2 (value)"),
         ("stock = 'gone.csv'", DRAWER, "gone.csv: no such file"),
+        ("stock = ''", DRAWER, "board.stock: got '', expected the name of a file; leave the key"),
+        ("stock = ' '", DRAWER, "board.stock: got ' ', expected the name of a file; leave the"),
         ("stock = 'drawer.csv'", "kind,value,tolerance\nresistor,1,1 %\n", "no value of stock"),
         (
             "stock = 'drawer.csv'",

@@ -63,7 +63,7 @@ def plain(text: str) -> str:
     ],
 )
 def test_the_proof_is_worded_as_strong_as_it_is(changes, said, not_said) -> None:
-    line = plain(proof_line(replace(MADE.certificate, **changes)))
+    line = plain(proof_line(replace(MADE.certificate, **changes), MADE.circuit))
     assert said in line
     assert not_said not in line
 
@@ -71,13 +71,18 @@ def test_the_proof_is_worded_as_strong_as_it_is(changes, said, not_said) -> None
 def test_the_proof_says_which_parts_were_no_choice() -> None:
     """Their values are neither tried nor excluded, so nothing is said of others for them."""
     found = replace(MADE.certificate, held=("R1", "C2"))
-    assert "choices that leave R1 and C2 as they are." in plain(proof_line(found))
+    assert "choices that leave R1 and C2 as they are." in plain(proof_line(found, MADE.circuit))
     assert (
         "whatever values all other parts that were free had"
         in binding_lines(found, MADE.circuit)[0]
     )
-    many = replace(found, held=("R1", "R2", "R3", "C1", "C2"))
-    assert "choices that leave 5 parts as they are." in plain(proof_line(many))
+    many = replace(found, held=("R91", "R92", "R93", "C91", "C92"))
+    assert "choices that leave 5 parts as they are." in plain(proof_line(many, MADE.circuit))
+    but_two = tuple(p.ref for p in MADE.circuit.bought if p.ref not in ("R1", "C2"))
+    few = plain(proof_line(replace(found, held=but_two), MADE.circuit))
+    assert "choices of R1 and C2 that leave every other part as it is." in few
+    record = design_record(replace(MADE, certificate=found), boards.verification(MADE))
+    assert record["choice"]["held"] == ["R1", "C2"]
 
 
 def test_parts_that_bind_are_named_with_what_they_set() -> None:
@@ -165,6 +170,7 @@ def test_the_record_holds_the_same_for_programs() -> None:
         "gap": pytest.approx(0.2),
         "proven": False,
         "exhausted": False,
+        "held": [],
         "binding": [{"refs": ["R2", "C1"], "rms_error": 1.6e-3}],
         "effort": 1,
     }

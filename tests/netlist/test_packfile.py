@@ -13,6 +13,7 @@ from netlist.records import design_record, record_text
 from synth.errors import JobError
 from synth.evidence import response_error
 from synth.job import JobText
+from synth.recorded import rebuilt
 from synth.shortages import Change, Repick, Shortage
 from tests.netlist import boards
 
@@ -172,19 +173,28 @@ def test_a_file_that_is_no_record_is_refused(written, text, message) -> None:
 @pytest.mark.parametrize(
     ("path", "value", "message"),
     [
-        (("job",), 3, "job: got 3, expected an object"),
+        (("format",), True, "format: got true, expected 1"),
+        (("job",), 3, "job: got 3, expected a table"),
         (("job", "text"), None, "job.text: got nothing, expected a text"),
-        (("job", "text"), "[target]\nx = 1", "low-pass.toml:2: target.x: "),
-        (("job", "files"), [], "job.files: got a list of 0, expected an object"),
+        (("job", "text"), "[target]\nx = 1", "job.text: low-pass.toml:2: target.x: "),
+        (("job", "name"), "a\nb", r"job.name: got 'a\nb', expected one line of text"),
+        (("job", "files"), [], "job.files: got a list of 0, expected a table"),
         (("job", "files"), {"drawer.csv": 1}, "job.files.drawer.csv: got 1, expected a text"),
-        (("form",), "ladderish", "form: got 'ladderish'"),
-        (("components",), {}, "components: got a table, expected a list of objects"),
-        (("components", 0), 1, "components: got a list of 11, expected a list of objects"),
-        (("components", 0, "value"), "4k7", r"components[0].value: got '4k7', expected a positive"),
-        (("components", 2, "value"), -1.0, r"components[2].value: got -1.0, expected a positive"),
-        (("components", 1, "value"), True, r"components[1].value: got true, expected a positive"),
-        (("components", 0, "nets"), ["in"], r"components[0].nets: got a list of 1, expected two"),
-        (("yield", "boards"), 0, "yield.boards: got 0, expected a whole number from 1"),
+        (("job", "files"), {"a\nb": 1}, r"job.files.'a\nb': got 1, expected a text"),
+        (("form",), "ladderish", "form: got 'ladderish', expected one of controllable, "),
+        (("form",), "auto", "form: got 'auto', expected one of controllable, "),
+        (("form",), None, "form: got nothing, expected a text"),
+        (("components",), {}, "components: got a table, expected a list of tables"),
+        (("components", 0), 1, "components[0]: got 1, expected a table"),
+        (("components", 0, "ref"), "R2", "components[1].ref: got 'R2', expected a reference of"),
+        (("components", 0, "kind"), "coil", "components[0].kind: got 'coil', expected one of"),
+        (("components", 0, "value"), "4k7", "components[0].value: got '4k7', expected a positive"),
+        (("components", 2, "value"), -1.0, "components[2].value: got -1.0, expected a positive"),
+        (("components", 1, "value"), True, "components[1].value: got true, expected a positive"),
+        (("components", 0, "nets"), ["in"], "components[0].nets: got a list of 1, expected two"),
+        (("components", 0, "nets", 1), 7, "components[0].nets[1]: got 7, expected the name of a"),
+        (("yield", "boards"), 0, "yield.boards: got 0, expected a whole number from 1 to 10000000"),
+        (("yield", "boards"), 10_000_001, "yield.boards: got 10000001, expected a whole number"),
         (("yield", "seed"), 1.5, "yield.seed: got 1.5, expected a whole number from 0"),
     ],
 )
@@ -195,9 +205,75 @@ def test_a_damaged_record_is_refused_with_the_key(written, path, value, message)
     for step in path[:-1]:
         place = place[step]
     place[path[-1]] = value
+    folder = written(record)
     with pytest.raises(JobError) as caught:
-        read_pack(written(record))
-    assert message in str(caught.value)
+        read_pack(folder)
+    assert str(caught.value).startswith(f"{folder}/design.json: {message}")
+
+
+def leaves(content, path=()):
+    """The paths of all values within `content`, of tables and lists too."""
+    if isinstance(content, dict | list):
+        keys = content if isinstance(content, dict) else range(len(content))
+        for key in keys:
+            yield (*path, key)
+            yield from leaves(content[key], (*path, key))
+
+
+def shown(path) -> str:
+    first, *rest = (f"[{key}]" if isinstance(key, int) else f".{key}" for key in path)
+    return "".join([first.lstrip("."), *rest])
+
+
+WRONG = ("null", "-1", '"x"', "[]", "{}", "true", "1e400", '"1e400"', '"a\\nb"')
+
+
+def test_any_damage_is_one_message_with_file_and_key_or_makes_no_difference(written) -> None:
+    """Every value that is read, and every table and list, is replaced by one after the other of
+    `WRONG`: refused in one line that starts with the file and the key, or one of those that the
+    value belongs to; or what is read is the same, but for the name of the job and the seed.  An
+    empty list of earlier shortages is a sound one."""
+    error = response_error(*(2 * (boards.design().wanted.response([10.0, 100.0]),)))
+    repick = Repick(
+        asked=(NEXT,),
+        earlier=(GONE,),
+        bought=(),
+        all_free=False,
+        missing=("C1",),
+        changes=(),
+        before=error,
+        after=error,
+    )
+    design = made(repick=repick)
+    record = record_of(design)
+    folder = written(record)
+    sound = read_pack(folder)
+    read = ("format", "job", "form", "components", "yield", "repick", "title", "checks")
+    refused = 0
+    for path in (p for p in leaves(record) if p[0] in read):
+        place = record
+        for step in path[:-1]:
+            place = place[step]
+        kept, place[path[-1]] = place[path[-1]], "@"
+        text = json.dumps(record)
+        place[path[-1]] = kept
+        for wrong in WRONG:
+            written(text.replace('"@"', wrong))
+            try:
+                found = read_pack(folder)
+                rebuilt(design.circuit, found.parts, name=found.name)
+            except JobError as error_:
+                message = str(error_)
+                keys = [shown(path[:n]) for n in range(1, len(path) + 1)]
+                # What is gone is missed by the whole, and what is there twice by the other.
+                assert any(message.startswith(f"{folder}/design.json: {k}") for k in keys), message
+                assert "\n" not in message and message.count(keys[-1] + ":") <= 1
+                refused += 1
+            else:
+                source = replace(found.job.source, name=sound.job.source.name)
+                same = replace(found, job=replace(found.job, source=source), seed=sound.seed)
+                assert same == sound or path == ("repick", "already_without"), (path, wrong)
+    assert refused > 500
 
 
 @pytest.mark.parametrize(

@@ -16,6 +16,7 @@ from synth.choosing.pairs import (
     pair_values,
     with_pairs,
 )
+from synth.choosing.refine import refine
 from synth.choosing.task import Task
 from synth.circuit import Circuit
 from synth.errors import CircuitError
@@ -98,6 +99,11 @@ def test_no_pair_where_none_is_needed(options: dict[str, object]) -> None:
     assert not found.needed
     assert found.pairs == ()
     assert found.choice is plain
+    board = job_of(**options).board
+    (said,) = refine(task, plain, replace(board, pairs=True)).notices
+    assert said.startswith("no resistor became a pair, as single parts suffice: with them the")
+    assert f"reaches {worst_share(plain.circuit, task):.2g} times its limit" in said
+    assert not refine(task, plain, board).notices
 
 
 def test_no_pair_where_none_helps() -> None:
@@ -107,6 +113,9 @@ def test_no_pair_where_none_helps() -> None:
     found = choose_with_pairs(task, plain)
     assert found.needed
     assert found.share_after <= found.share_before
+    assert found.pairs == ()
+    (said,) = refine(task, plain, replace(job_of().board, pairs=True)).notices
+    assert said.startswith("no resistor became a pair: with single parts the error reaches")
 
 
 def test_one_pair_where_one_is_enough() -> None:
