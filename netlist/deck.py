@@ -15,13 +15,15 @@ from collections.abc import Callable
 from netlist.opamp_models import linear_model, number, saturating_model
 from synth.circuit import Circuit, Passive
 from synth.errors import CircuitError
-from synth.parts import OpAmp
+from synth.parts import OpAmp, VendorModel
 
-__all__ = ["board_deck", "filtered", "step_deck"]
+__all__ = ["board_deck", "filtered", "sine_deck", "step_deck", "vendor_deck"]
 
 LONGEST_TEXT = 120
 SOURCE = "Vin"
 _LETTER = {"resistor": "R", "capacitor": "C"}
+# Nets of the rails; no net of a circuit starts with an underscore.
+_RAILS = {"vcc": "_rail_high", "vee": "_rail_low"}
 # Names that a SPICE program gives another meaning.
 _RESERVED_NETS = frozenset({"frequency", "gnd", "null", "time"})
 
@@ -108,21 +110,129 @@ def step_deck(
     if not math.isfinite(step_volts):
         raise CircuitError(f"got a step of {step_volts} V, expected a finite voltage")
 
+    high = number(step_volts)
+    source = (
+        f"{SOURCE} {circuit.input_net} 0 PWL(0.0 0.0 {number(delay)} 0.0 "
+        f"{number(delay + edge)} {high} {number(stop_s)} {high})"
+    )
+    return _transient_deck(
+        circuit,
+        f"* {filtered(title)}",
+        "* The step response: op-amps that saturate at the rails and slew, no noise.",
+        source,
+        supply=supply,
+        times=(largest, stop_s, 0.0, largest),
+    )
+
+
+def sine_deck(
+    circuit: Circuit,
+    *,
+    title: str,
+    supply: tuple[float, float],
+    peak_volts: float,
+    frequency_hz: float,
+    rise_s: float,
+    stop_s: float,
+    kept_s: float,
+    largest_step_s: float,
+) -> str:
+    """A sine into op-amps that saturate and slew, its size rising smoothly over `rise_s`.
+
+    The smooth rise hardly stirs what is slower than the sine itself, integrators included.
+
+    Parameters
+    ----------
+    supply
+        Negative and positive rail [V].
+    peak_volts, frequency_hz
+        Of the sine at the input [V], [Hz].
+    rise_s, stop_s, kept_s
+        Length of the rise, end of the run, and how much before the end is reported [s].
+    largest_step_s
+        Upper bound of the time step [s].
+
+    Raises
+    ------
+    CircuitError
+        A name that SPICE cannot take, or figures that are not positive or not in order.
+    """
+    figures = (peak_volts, frequency_hz, rise_s, stop_s, kept_s, largest_step_s)
+    if not (all(0 < x < math.inf for x in figures) and rise_s + kept_s <= stop_s):
+        raise CircuitError(f"got {figures} for a sine, expected positive figures in order")
+    rise = f"sin(0.5*pi*min(1.0,time/{number(rise_s)}))"
+    turn = f"sin({number(2 * math.pi * frequency_hz)}*time)"
+    return _transient_deck(
+        circuit,
+        f"* {filtered(title)}",
+        "* A sine of the largest input: op-amps that saturate at the rails and slew, no noise.",
+        f"Bsine {circuit.input_net} 0 v={number(peak_volts)}*{turn}*{rise}*{rise}",
+        supply=supply,
+        times=(largest_step_s, stop_s, stop_s - kept_s, largest_step_s),
+    )
+
+
+def _transient_deck(
+    circuit: Circuit,
+    title: str,
+    told: str,
+    source: str,
+    *,
+    supply: tuple[float, float],
+    times: tuple[float, float, float, float],
+) -> str:
     def model(name: str, figures: OpAmp) -> tuple[str, ...]:
         return saturating_model(name, figures, supply=supply)
 
-    high = number(step_volts)
     return _text(
         [
-            f"* {filtered(title)}",
-            "* The step response: op-amps that saturate at the rails and slew, no noise.",
-            f"{SOURCE} {circuit.input_net} 0 PWL(0.0 0.0 {number(delay)} 0.0 "
-            f"{number(delay + edge)} {high} {number(stop_s)} {high})",
+            title,
+            told,
+            source,
             *_components(circuit, model),
             "* Trapezoidal rule: Gear's method would damp resonances of its own accord.",
             ".options method=trap reltol=1e-05",
-            f".tran {number(largest)} {number(stop_s)} 0.0 {number(largest)}",
+            f".tran {' '.join(number(t) for t in times)}",
             f".print tran v({circuit.input_net}) v({circuit.output_net})",
+        ]
+    )
+
+
+def vendor_deck(
+    circuit: Circuit,
+    model: VendorModel,
+    *,
+    title: str,
+    supply: tuple[float, float],
+    start_hz: float,
+    stop_hz: float,
+    points_per_decade: int,
+) -> str:
+    """The AC deck with a vendor's model for every op-amp, between rails.
+
+    Its statements are those `netlist.vendormodel` let pass.
+
+    Raises
+    ------
+    CircuitError
+        A name that SPICE cannot take.
+    """
+    _check_nets(circuit)
+    lines = [line for part in circuit.passives for line in _passive(part)]
+    for amp in circuit.amplifiers:
+        pins = {"plus": amp.plus, "minus": amp.minus, "out": amp.output, **_RAILS}
+        nets = " ".join(pins[pin] for pin in model.pins)
+        lines.append(f"X{amp.ref} {nets} {model.subcircuit}")
+    return _text(
+        [
+            f"* {filtered(title)}",
+            "* The response with a vendor's model of the op-amp.",
+            f"{SOURCE} {circuit.input_net} 0 DC 0 AC 1",
+            f"Vrail_low {_RAILS['vee']} 0 DC {number(supply[0])}",
+            f"Vrail_high {_RAILS['vcc']} 0 DC {number(supply[1])}",
+            *lines,
+            *model.cards,
+            f".ac dec {points_per_decade:d} {number(start_hz)} {number(stop_hz)}",
         ]
     )
 

@@ -24,7 +24,7 @@ from netlist.textfile import read_text_file
 from synth.errors import JobError
 from synth.job import Accept, Board, Job, JobText, Loop, Signal
 from synth.op_amps import DEFAULT_CLASS, op_amp_class
-from synth.parts import OpAmp, PartRule, StockItem
+from synth.parts import OpAmp, PartRule, StockItem, VendorModel
 from synth.quantities import what_came
 
 if TYPE_CHECKING:
@@ -191,7 +191,10 @@ def _board(table: BoardTable, mistakes: Mistakes, files: NamedFiles) -> Board | 
         mistakes.attempt(f"board.fixed.{ref}", partial(read_fixed, ref, value))
         for ref, value in table.fixed.items()
     ]
-    op_amp = mistakes.attempt("board.op_amp", lambda: _op_amp(purchase_keys(table.op_amp)))
+    figures = purchase_keys(table.op_amp)
+    stated = {key: figures.pop(key, None) for key in ("model", "subcircuit", "pins")}
+    op_amp = mistakes.attempt("board.op_amp", lambda: _op_amp(figures))
+    model = mistakes.attempt("board.op_amp", lambda: _vendor_model(stated, files))
     population = read_population(table, mistakes)
     plain = ("supply", "form", "inverted", "share_values", "pairs")
     rest = {k: v for k, v in table.given().items() if k in plain}
@@ -211,6 +214,7 @@ def _board(table: BoardTable, mistakes: Mistakes, files: NamedFiles) -> Board | 
             capacitors=capacitors,
             fixed=tuple(pair for pair in fixed if pair),
             population=population,
+            vendor_model=model,
             **rest,
         ),
     )
@@ -237,6 +241,28 @@ def _op_amp(given: dict[str, Any]) -> OpAmp:
     """A class with the figures that were stated in place of its own."""
     kind = given.pop("kind", DEFAULT_CLASS)
     return replace(op_amp_class(kind, key="kind"), **given)
+
+
+def _vendor_model(stated: Mapping[str, Any], files: NamedFiles) -> VendorModel | None:
+    """The model the job names, read and checked; None without one."""
+    if all(value is None for value in stated.values()):
+        return None
+    missing = [key for key, value in stated.items() if value is None]
+    if missing:
+        raise JobError(
+            f"{' and '.join(missing)} missing, expected model, subcircuit and pins together",
+            key=missing[0],
+        )
+    from netlist.vendormodel import parse_model, read_model_text
+
+    text, name = files.take(stated["model"], read_model_text)
+    return parse_model(
+        text,
+        name=name,
+        file=stated["model"],
+        subcircuit=stated["subcircuit"],
+        pins=stated["pins"],
+    )
 
 
 def _loop(table: LoopTable) -> Loop:

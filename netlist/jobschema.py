@@ -50,6 +50,7 @@ PerKelvin = Annotated[float | None, PlainValidator(read_quantity("ppm/K"))]
 Temperatures = Annotated[tuple[float, float] | None, PlainValidator(jobvalues.read_temperatures)]
 References = Annotated[tuple[str, ...], PlainValidator(jobvalues.read_references)]
 Band = Annotated[tuple[float, float], PlainValidator(jobvalues.read_band)]
+Texts = Annotated[tuple[str, ...] | None, PlainValidator(jobvalues.read_texts)]
 Rails = Annotated[tuple[float, float] | None, PlainValidator(jobvalues.read_rails)]
 Coefficients = Annotated[tuple[Fraction, ...], PlainValidator(jobvalues.read_coefficients)]
 Roots = Annotated[tuple[RootEntry, ...], PlainValidator(jobvalues.read_roots)]
@@ -161,6 +162,9 @@ class OpAmpTable(Table):
     swing_headroom: Volt = None
     output_current: Ampere = None
     supply_current: Ampere = None
+    model: FileName = None
+    subcircuit: Text = None
+    pins: Texts = None
 
 
 class NetworkTable(Table):

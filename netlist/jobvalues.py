@@ -64,6 +64,13 @@ def read_text(value: object) -> str:
     return value
 
 
+def read_texts(value: object) -> tuple[str, ...]:
+    """A list of short texts."""
+    if not isinstance(value, list):
+        raise JobError(f"got {what_came(value)}, expected a list of texts in quotes")
+    return tuple(read_text(each) for each in value)
+
+
 def read_file_name(value: object) -> str:
     """The name of a file beside the job."""
     name = read_text(value)

@@ -20,9 +20,10 @@ import math
 from dataclasses import asdict
 from typing import TYPE_CHECKING, TypeAlias
 
+from netlist.boardrecords import loop_record, worst_record, yield_record
 from synth.evidence import Check, ResponseError, verdict
-from synth.results import Candidate, Design, ErrorFigures, ToleranceResult
-from synth.worstcase import WorstError
+from synth.headroom import tightest_limit
+from synth.results import Candidate, Design, ErrorFigures
 
 if TYPE_CHECKING:
     from netlist.verification import Verification
@@ -81,7 +82,7 @@ def design_record(design: Design, verification: Verification) -> dict[str, Json]
         "components": _components(design),
         "surroundings": _surroundings(design),
         "checks": [_check(c) for c in all_checks(design, verification)],
-        "yield": _yield(design),
+        "yield": yield_record(design),
         "nominal": {
             "rms_error": design.nominal.rms,
             "nearest_rms_error": design.nearest.rms,
@@ -89,13 +90,14 @@ def design_record(design: Design, verification: Verification) -> dict[str, Json]
         **_choice(design),
         **_allowance(design),
         **_budget(design),
-        **_worst(design),
+        **worst_record(design),
         "noise": {
             "band_hz": list(job.signal.band_hz),
             "output_rms_v": design.noise.output_rms,
         },
-        **_loop(design),
+        **loop_record(design),
         "swing": [asdict(s) for s in design.swings],
+        **_tightest(design),
         "offset_v": design.offset,
         "drift": [asdict(d) for d in design.drifts],
         "forms": candidate_records(design.candidates),
@@ -209,37 +211,6 @@ def _check(check: Check) -> dict[str, object]:
     }
 
 
-def _yield(design: Design) -> dict[str, object]:
-    run = design.tolerance
-    return {
-        "boards": run.boards,
-        "frequencies": len(run.frequency_hz),
-        "passed": run.passed,
-        "share": run.share,
-        "low": run.low,
-        "high": run.high,
-        "confidence": run.confidence,
-        "error_95_db": run.error_95_db,
-        "seed": run.seed,
-        **_failures(run),
-        "drivers": [asdict(d) for d in run.drivers],
-    }
-
-
-def _failures(run: ToleranceResult) -> dict[str, object]:
-    """Which limit the boards that fail reach first, and where."""
-    found = run.failures
-    if found is None:
-        return {}
-    return {
-        "failures": {
-            "boards": found.boards,
-            "both": found.both,
-            "first": [asdict(f) for f in found.first],
-        }
-    }
-
-
 def _choice(design: Design) -> dict[str, object]:
     """How good the choice of values is against any other, in the measure of the search."""
     found = design.certificate
@@ -296,47 +267,18 @@ def _budget(design: Design) -> dict[str, object]:
     return {"budget": record}
 
 
-def _worst(design: Design) -> dict[str, object]:
-    """The worst board within tolerance: what is reached, and what none can pass."""
-    found = design.worst
-    if found is None:
-        return {}
-    return {
-        "worst_case": {
-            "magnitude_db": _worst_error(found.magnitude_db),
-            "phase_deg": _worst_error(found.phase_deg),
-            "frequencies": found.frequencies,
-        }
-    }
-
-
-def _worst_error(error: WorstError) -> dict[str, object]:
-    return {
-        "reached": error.reached,
-        "bound": error.bound,
-        "meet": error.meets,
-        "sign": error.sign,
-        "frequency_hz": error.frequency_hz,
-        "values": error.values,
-        "at_low_end": list(error.low),
-        "at_high_end": list(error.high),
-        "between": list(error.between),
-    }
-
-
-def _loop(design: Design) -> dict[str, object]:
-    """Margins of H(s) itself and of the nominal board, where the job names a plant."""
-    if design.loop is None:
-        return {}
-    return {"loop": {"target": asdict(design.loop.target), "nominal": asdict(design.loop.nominal)}}
-
-
 def _source(design: Design) -> dict[str, object]:
     """What the job was read from, where there is a text of it."""
     source = design.job.source
     if source is None:
         return {}
     return {"job": {"name": source.name, "text": source.text, "files": dict(source.files)}}
+
+
+def _tightest(design: Design) -> dict[str, object]:
+    """The limit of the op-amps with the least room, where there are op-amps."""
+    found = tightest_limit(design)
+    return {} if found is None else {"tightest_limit": asdict(found)}
 
 
 def _repick(design: Design) -> dict[str, object]:
@@ -373,8 +315,33 @@ def _simulation(verification: Verification) -> dict[str, object]:
         "failure": verification.failure,
         "rms_error": verification.error.rms if done and verification.error is not None else None,
         "nodal_disagreement": verification.nodal_disagreement,
+        "worst_boards_disagreement": verification.worst_disagreement,
         "noise_rms_v": verification.noise_rms,
+        "sine": _sine(verification),
+        "vendor_model": _vendor(verification),
         "operating_point_v": dict(sorted((verification.operating_point or {}).items())),
+    }
+
+
+def _vendor(verification: Verification) -> dict[str, object] | None:
+    """How far the response with the vendor's model is from that with the one-pole model."""
+    if verification.vendor is None and verification.vendor_failure is None:
+        return None
+    error = verification.vendor
+    return {"failure": verification.vendor_failure, "difference": error and _error(error)}
+
+
+def _sine(verification: Verification) -> dict[str, object] | None:
+    """The sine that showed whether a predicted peak clips."""
+    run = verification.sine
+    if run is None:
+        return None
+    return {
+        "amplifier": run.amplifier,
+        "net": run.net,
+        "frequency_hz": run.frequency_hz,
+        "input_peak_v": run.input_peak,
+        "expected_v": run.expected,
     }
 
 

@@ -9,11 +9,12 @@ import math
 from dataclasses import dataclass
 
 from netlist.deck import board_deck, step_deck
+from synth.circuit import Circuit
 from synth.grid import points_per_decade
 from synth.results import Design
 from synth.transfer import TransferFunction
 
-__all__ = ["Decks", "decks_of", "settling_time", "step_duration"]
+__all__ = ["Decks", "decks_of", "settling_time", "step_duration", "sweep_deck"]
 
 SETTLING = 7.0
 """Time constants until a decay is within 0.1 % of its end."""
@@ -45,17 +46,10 @@ def decks_of(design: Design) -> Decks:
         A name that SPICE cannot take.
     """
     job = design.job
-    band = job.signal.band_hz
-    board = board_deck(
-        design.circuit,
-        title=job.title,
-        start_hz=band[0],
-        stop_hz=band[1],
-        points_per_decade=points_per_decade(design.wanted, band_hz=band),
-    )
+    board = sweep_deck(design, design.circuit)
     stop = step_duration(
         design.wanted,
-        band_hz=band,
+        band_hz=job.signal.band_hz,
         step_volts=job.signal.input_peak,
         swing_limit=job.board.swing_limit,
     )
@@ -69,6 +63,18 @@ def decks_of(design: Design) -> Decks:
         largest_step_s=largest,
     )
     return Decks(board, step)
+
+
+def sweep_deck(design: Design, circuit: Circuit) -> str:
+    """The linear deck of a board of the design: AC over its band."""
+    band = design.job.signal.band_hz
+    return board_deck(
+        circuit,
+        title=design.job.title,
+        start_hz=band[0],
+        stop_hz=band[1],
+        points_per_decade=points_per_decade(design.wanted, band_hz=band),
+    )
 
 
 def step_duration(

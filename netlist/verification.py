@@ -12,9 +12,11 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
+from netlist.clipping import SineRun, sine_check, sine_run
 from netlist.comparison import compare
+from netlist.deck import vendor_deck
 from netlist.ngspice import Simulator, TransientResult
-from netlist.stimulus import Decks, decks_of, settling_time
+from netlist.stimulus import Decks, decks_of, settling_time, sweep_deck
 from synth.circuit import GROUND
 from synth.errors import SimulatorError
 from synth.evidence import Check, ResponseError, response_error
@@ -35,6 +37,9 @@ LARGEST_DISAGREEMENT = 1e-6
 
 LARGEST_MOVEMENT = 5.0
 """Of the largest swing [%]."""
+
+AGREEMENT_ON_WORST = "difference on the worst boards"
+"""Name of the check of both analyses on the boards of the run that come out worst."""
 
 SMALLEST_COMPARED = 1e-6
 """Below this share of its largest value a response is compared absolutely."""
@@ -58,11 +63,22 @@ class Verification:
         input.
     noise_rms
         Noise of the output over the band [V].
+    sine
+        The steady sine that every op-amp output was held against, None where there was none.
+    vendor
+        Response with the vendor's model of the op-amp against that with the one-pole model, where
+        the job names a model and it could be simulated; no check rests on it.
+    vendor_failure
+        Why it could not be.
     nodal_disagreement
         Of ngspice and the nodal engine on the same circuit, see `disagreement`.
+    worst_disagreement
+        The largest on the worst boards of the tolerance run; None where none were kept.
     checks
-        ``magnitude error`` and ``phase error``, the difference of the two analyses, then
-        ``settling after a step`` where the target settles; empty without a response.
+        ``magnitude error`` and ``phase error``, the difference of the two analyses on the
+        nominal board and on the worst ones, then ``settling after a step`` where the target
+        settles and ``clipping of the largest sine`` where the predicted peaks do not clip; empty
+        without a response.
     failure
         Why the simulator did not deliver, or None.  What it did not deliver is None above; a
         response may be there although a later analysis failed.
@@ -75,7 +91,11 @@ class Verification:
     operating_point: dict[str, float] | None = None
     step: TransientResult | None = None
     noise_rms: float | None = None
+    sine: SineRun | None = None
+    vendor: ResponseError | None = None
+    vendor_failure: str | None = None
     nodal_disagreement: float | None = None
+    worst_disagreement: float | None = None
     checks: tuple[Check, ...] = ()
     failure: str | None = None
 
@@ -145,11 +165,14 @@ def _verify(design: Design, decks: Decks, simulator: Simulator) -> Verification:
     try:
         response = simulator.ac(decks.board, [out])
         so_far = _compared(design, response.frequency_hz, response.voltages[out])
+        so_far = _worst_compared(design, decks, simulator, so_far, response.frequency_hz)
         so_far = replace(so_far, operating_point=simulator.operating_point(decks.board, nets))
         noise = simulator.noise(decks.board, out, *band, density)
         so_far = replace(so_far, noise_rms=noise.total_rms)
         step = simulator.transient(decks.step, watched, time_limit=STEP_LIMIT_S)
-        return replace(so_far, step=step, checks=(*so_far.checks, *settling(design, step)))
+        so_far = replace(so_far, step=step, checks=(*so_far.checks, *settling(design, step)))
+        so_far = _with_sine(design, simulator, so_far)
+        return _with_vendor(design, simulator, so_far)
     except SimulatorError as problem:
         return replace(so_far, failure=str(problem))
 
@@ -160,12 +183,8 @@ def _compared(design: Design, frequency_hz: Real, simulated: Complex) -> Verific
     target = design.wanted.response(frequency_hz)
     nodal = compile_circuit(design.circuit).solve(frequency_hz)
     differing = disagreement(simulated, nodal)
-    agreement = Check.at_most(
-        "difference of the two analyses",
-        1e6 * differing,
-        1e6 * LARGEST_DISAGREEMENT,
-        "ppm",
-        "ngspice against the nodal engine",
+    agreement = _agreement(
+        "difference of the two analyses", differing, "ngspice against the nodal engine"
     )
     return Verification(
         frequency_hz=frequency_hz,
@@ -175,3 +194,87 @@ def _compared(design: Design, frequency_hz: Real, simulated: Complex) -> Verific
         nodal_disagreement=differing,
         checks=(*compare(frequency_hz, simulated, target, design.job.accept), agreement),
     )
+
+
+def _worst_compared(
+    design: Design, decks: Decks, simulator: Simulator, so_far: Verification, swept_hz: Real
+) -> Verification:
+    """The worst boards of the run in ngspice."""
+    circuit, worst = design.circuit, design.tolerance.worst
+    if not worst:
+        return so_far
+    found = _worst_responses(design, decks, simulator)
+    keep = judged(design.wanted, swept_hz)
+    gain_bandwidth = [b.gain_bandwidth for b in worst if b.gain_bandwidth is not None]
+    nodal = compile_circuit(circuit).solve(
+        swept_hz[keep],
+        values=[b.values for b in worst],
+        gain_bandwidth=gain_bandwidth or None,
+    )
+    differing = [disagreement(one[keep], other) for one, other in zip(found, nodal, strict=True)]
+    place = int(np.argmax(differing))
+    largest, which = differing[place], worst[place]
+    note = (
+        f"ngspice against the nodal engine, {len(worst)} of {design.tolerance.boards} boards; "
+        f"largest on number {which.number + 1}"
+    )
+    check = _agreement(AGREEMENT_ON_WORST, largest, note)
+    return replace(so_far, worst_disagreement=largest, checks=(*so_far.checks, check))
+
+
+def _worst_responses(design: Design, decks: Decks, simulator: Simulator) -> list[Complex]:
+    """The response of each: the same deck with its values; where op-amps spread too, whose figures
+    no deck can alter, a deck of its own."""
+    circuit, worst = design.circuit, design.tolerance.worst
+    refs = [p.ref for p in circuit.passives]
+    drawn = [dict(zip(refs, board.values, strict=True)) for board in worst]
+    if all(board.gain_bandwidth is None for board in worst):
+        return list(simulator.alter_ac(decks.board, drawn, circuit.output_net))
+    found = []
+    for board, values in zip(worst, drawn, strict=True):
+        amplifiers = tuple(
+            replace(amp, figures=replace(amp.figures, gain_bandwidth=figure))
+            for amp, figure in zip(circuit.amplifiers, board.gain_bandwidth or (), strict=True)
+        )
+        made = replace(circuit.with_values(values), amplifiers=amplifiers)
+        swept = simulator.ac(sweep_deck(design, made), [circuit.output_net])
+        found.append(swept.voltages[circuit.output_net])
+    return found
+
+
+def _with_sine(design: Design, simulator: Simulator, so_far: Verification) -> Verification:
+    """A sine at the hottest output's peak, where every output is predicted to be in its limits."""
+    run = sine_run(design)
+    if run is None:
+        return so_far
+    found = simulator.transient(run.deck, list(run.expected), time_limit=STEP_LIMIT_S)
+    return replace(so_far, sine=run, checks=(*so_far.checks, sine_check(run, found)))
+
+
+def _with_vendor(design: Design, simulator: Simulator, so_far: Verification) -> Verification:
+    """The response with the vendor's model; a model that fails is told, and no more."""
+    model, band = design.job.board.vendor_model, design.job.signal.band_hz
+    if model is None or so_far.simulated is None:
+        return so_far
+    deck = vendor_deck(
+        design.circuit,
+        model,
+        title=design.job.title,
+        supply=design.job.board.supply,
+        start_hz=band[0],
+        stop_hz=band[1],
+        points_per_decade=points_per_decade(design.wanted, band_hz=band),
+    )
+    out = design.circuit.output_net
+    try:
+        found = simulator.ac(deck, [out])
+    except SimulatorError as problem:
+        return replace(so_far, vendor_failure=str(problem))
+    response = found.voltages[out][judged(design.wanted, found.frequency_hz)]
+    if not np.all(np.isfinite(response)):
+        return replace(so_far, vendor_failure="the response is not a number everywhere")
+    return replace(so_far, vendor=response_error(response, so_far.simulated))
+
+
+def _agreement(name: str, differing: float, note: str) -> Check:
+    return Check.at_most(name, 1e6 * differing, 1e6 * LARGEST_DISAGREEMENT, "ppm", note)

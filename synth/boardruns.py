@@ -7,6 +7,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from synth.evidence import WorstBoard
+
 __all__ = ["Driver", "Failures", "LimitFailures", "ToleranceResult"]
 
 Real = NDArray[np.float64]
@@ -92,6 +94,8 @@ class ToleranceResult:
         Which limit fails first, and where; None where that was not counted.
     drivers
         The parts that drive the error, by falling share; none with too few boards to tell.
+    worst
+        The boards farthest from the target, the worst first; empty where nobody kept them.
     """
 
     boards: int
@@ -108,6 +112,7 @@ class ToleranceResult:
     seed: int
     failures: Failures | None = None
     drivers: tuple[Driver, ...] = ()
+    worst: tuple[WorstBoard, ...] = ()
 
     @property
     def share(self) -> float:

@@ -12,6 +12,7 @@ from synth.limits import swing_checks
 from synth.loop import loop_checks, loop_margins
 from synth.nodal import compile_circuit
 from synth.results import LoopResult, Swing, ToleranceResult
+from synth.tolerance import loop_yield_check
 
 __all__ = ["board_checks", "loop_of_board", "yield_check"]
 
@@ -19,10 +20,11 @@ __all__ = ["board_checks", "loop_of_board", "yield_check"]
 def board_checks(
     job: Job, circuit: Circuit, swing: tuple[Swing, ...], loop: LoopResult | None
 ) -> tuple[Check, ...]:
-    """Every predicted check of the nominal board."""
+    """Every predicted check of the nominal board, and of the loop around any."""
     names = {c.amplifier: _cell_name(circuit, c.amplifier) for c in circuit.cells}
     return (
         *(loop_checks(job.loop, loop.nominal) if job.loop and loop else ()),
+        *((loop_yield_check(loop.boards),) if loop and loop.boards else ()),
         *swing_checks(swing, names),
     )
 

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["Check", "ResponseError", "response_error", "verdict"]
+__all__ = ["Check", "ResponseError", "WorstBoard", "response_error", "verdict"]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -87,6 +87,22 @@ class ResponseError:
     def largest_deg(self) -> float:
         """Largest phase error, absolute [deg]."""
         return float(np.max(np.abs(self.phase_deg)))
+
+
+@dataclass(frozen=True, kw_only=True)
+class WorstBoard:
+    """A board of a run that comes out far from the target.
+
+    `number` counts from 0 in the run; `limit_share` is its largest error over the band as a
+    share of the limit, of magnitude or phase, whichever is more; `values` are those of the
+    passives in circuit order [ohm], [F], `gain_bandwidth` those of the op-amps in circuit order
+    [Hz]; None where all have their figure.
+    """
+
+    number: int
+    limit_share: float
+    values: tuple[float, ...]
+    gain_bandwidth: tuple[float, ...] | None = None
 
 
 def response_error(response: Complex, target: Complex) -> ResponseError:

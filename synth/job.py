@@ -12,7 +12,7 @@ from collections import Counter
 from dataclasses import dataclass, field
 
 from synth.errors import JobError
-from synth.parts import OpAmp, PartRule
+from synth.parts import OpAmp, PartRule, VendorModel
 from synth.population import Population
 from synth.preferred import nearest
 from synth.quantities import show
@@ -94,6 +94,8 @@ class Board:
         Whether two resistors may stand for one where one cannot reach the limit.
     population
         From what population the parts of the boards come.
+    vendor_model
+        A model of the op-amp to simulate the response with as well; no check rests on it.
     """
 
     op_amp: OpAmp
@@ -106,6 +108,7 @@ class Board:
     share_values: bool = False
     pairs: bool = False
     population: Population = field(default_factory=Population)
+    vendor_model: VendorModel | None = None
 
     def __post_init__(self) -> None:
         low, high = self.supply

@@ -13,12 +13,21 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from synth.errors import JobError
 from synth.evidence import Check
 from synth.job import Loop
 from synth.nyquist import unstable_poles
 from synth.transfer import TransferFunction
 
-__all__ = ["LoopMargins", "loop_checks", "loop_margins", "loop_response"]
+__all__ = [
+    "LoopBoards",
+    "LoopMargins",
+    "Percentiles",
+    "checked_loop",
+    "loop_checks",
+    "loop_margins",
+    "loop_response",
+]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -62,6 +71,48 @@ class LoopMargins:
     def is_stable(self) -> bool:
         """Whether the closed loop is known to be stable."""
         return self.unstable_poles == 0
+
+
+@dataclass(frozen=True, kw_only=True)
+class Percentiles:
+    """Percentiles over boards; None where they fall on boards that have no such number."""
+
+    p5: float | None
+    p50: float | None
+    p95: float | None
+
+
+@dataclass(frozen=True, kw_only=True)
+class LoopBoards:
+    """The loop around each board of a run.
+
+    Parameters
+    ----------
+    boards, stable, passed
+        How many were drawn, how many of them are stable by the Nyquist criterion, and how many
+        of these keep the job's limits on the margins.
+    low, high
+        Clopper-Pearson interval of passed / boards at `confidence`, ratios.
+    phase_margin_deg, gain_margin_db, crossover_hz, disk_margin
+        Percentiles of what `LoopMargins` says of each board.  A margin without a crossing
+        counts as larger than any other, that of an unstable board as negative.
+    """
+
+    boards: int
+    stable: int
+    passed: int
+    low: float
+    high: float
+    confidence: float
+    phase_margin_deg: Percentiles
+    gain_margin_db: Percentiles
+    crossover_hz: Percentiles
+    disk_margin: Percentiles
+
+    @property
+    def share(self) -> float:
+        """Share of the boards that are stable and keep the limits, a ratio."""
+        return self.passed / self.boards
 
 
 def loop_response(loop: Loop, compensator: Response) -> Response:
@@ -118,6 +169,26 @@ def loop_margins(
         disk_margin=_disk_margin(response, grid, value) if not poles else 0.0,
         unstable_poles=poles,
     )
+
+
+def checked_loop(loop: Loop, target: TransferFunction) -> LoopMargins:
+    """Margins of the loop with H(s) itself.
+
+    Raises
+    ------
+    JobError
+        That loop is unstable: no board could be any better than what was asked.
+    """
+    margins = loop_margins(loop, target)
+    if margins.unstable_poles:
+        poles = margins.unstable_poles
+        raise JobError(
+            f"got a plant around which H(s) itself leaves the closed loop unstable, with {poles} "
+            f"pole{'' if poles == 1 else 's'} in the right half-plane or at the origin; expected "
+            "L = P H that is stable with negative feedback",
+            key="loop",
+        )
+    return margins
 
 
 def loop_checks(loop: Loop, margins: LoopMargins) -> tuple[Check, ...]:

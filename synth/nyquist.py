@@ -17,7 +17,15 @@ from numpy.typing import NDArray
 
 from synth.transfer import TransferFunction
 
-__all__ = ["unstable_poles"]
+__all__ = [
+    "LIKE_TARGET",
+    "ROUND",
+    "TURN",
+    "freed_of_axis",
+    "is_decidable",
+    "turns_due",
+    "unstable_poles",
+]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -59,40 +67,56 @@ def unstable_poles(
         of op-amps turns a pole at the origin into one close to it; below the frequency from
         which the board is like H(s) nothing is counted.
     """
-    poles = [p for tf in parts for p in tf.poles]
-    on_axis = [p.imag for p in poles if p.real == 0 and p.imag > 0]
     if asked is not None:
-        if np.any((parts[1].poles.real == 0) & (parts[1].poles.imag != 0)):
+        if not is_decidable(parts[1]):
             return None
         alike = np.flatnonzero(np.abs(value / asked - 1) < LIKE_TARGET)
         start = int(alike[0]) if alike.size and parts[1].poles_at_origin else 0
         grid, value = grid[start:], value[start:]
     elif delay and sum(tf.relative_degree for tf in parts) <= 0 and abs(value[-1]) >= 1:
         return None
-    turn = _turn(response, grid, value, on_axis)
-    if turn is None:
-        return None
-    right = sum(1 for p in poles if p.real > 0)
+    turn = _turn(response, grid, value, parts)
+    return None if turn is None else round(turns_due(parts) - turn / math.pi)
+
+
+def is_decidable(target: TransferFunction) -> bool:
+    """Whether the poles of a board of H(s) = `target` are on known sides of the imaginary axis:
+    not where H(s) has a pair on it."""
+    return not np.any((target.poles.real == 0) & (target.poles.imag != 0))
+
+
+def turns_due(parts: tuple[TransferFunction, TransferFunction]) -> float:
+    """Half turns of 1 + L, less the poles on the axis, in a stable closed loop: P + m/2."""
+    right = sum(1 for tf in parts for p in tf.poles if p.real > 0)
     origin = sum(tf.poles_at_origin for tf in parts)
     cancelled = min(origin, sum(tf.zeros_at_origin for tf in parts))
-    return round(right + (origin + cancelled) / 2 - turn / math.pi)
+    return right + (origin + cancelled) / 2
 
 
-def _turn(response: Response, grid: Real, value: Complex, on_axis: list[float]) -> float | None:
+def freed_of_axis(
+    frequency_hz: Real, loop: Complex, parts: tuple[TransferFunction, TransferFunction]
+) -> Complex:
+    """1 + L with its pairs of poles on the imaginary axis multiplied away; `loop` is L at
+    `frequency_hz` [Hz], shapes (..., F)."""
+    s = 2j * np.pi * frequency_hz
+    product = np.asarray(1 + loop)
+    for w0 in (p.imag for tf in parts for p in tf.poles if p.real == 0 and p.imag > 0):
+        product = product * ((s * s + w0 * w0) / (s + w0) ** 2)
+    return product
+
+
+def _turn(
+    response: Response,
+    grid: Real,
+    value: Complex,
+    parts: tuple[TransferFunction, TransferFunction],
+) -> float | None:
     """Angle by which 1 + L turns over the grid [rad], without the poles on the axis; None when
     no reasonable number of points settles it."""
-
-    def without_poles(frequency_hz: Real, loop: Complex) -> Complex:
-        s = 2j * np.pi * frequency_hz
-        product = 1 + loop
-        for w0 in on_axis:
-            product = product * (s * s + w0 * w0) / (s + w0) ** 2
-        return product
-
     keep = np.isfinite(value)
     grid, value = grid[keep], value[keep]
     while True:
-        product = without_poles(grid, value)
+        product = freed_of_axis(grid, value, parts)
         steps = np.angle(product[1:] / product[:-1])
         size = np.maximum(np.abs(value[1:]), np.abs(value[:-1]))
         apart = grid[1:] > grid[:-1] * (1 + 1e-12)

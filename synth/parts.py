@@ -16,7 +16,7 @@ from synth.errors import JobError
 from synth.preferred import decade, nearest, series_values
 from synth.quantities import show
 
-__all__ = ["OP_AMPS_PER_PACKAGE", "OpAmp", "PartRule", "StockItem"]
+__all__ = ["OP_AMPS_PER_PACKAGE", "OpAmp", "PartRule", "StockItem", "VendorModel"]
 
 OP_AMPS_PER_PACKAGE = 4
 """Of the largest package; those of a board fill packages in order of their references."""
@@ -134,6 +134,28 @@ class PartRule:
         for item in sorted(self.stock, key=lambda i: i.tolerance):
             found.setdefault(item.value, []).append(item)
         return {value: tuple(items) for value, items in found.items()}
+
+
+@dataclass(frozen=True, kw_only=True)
+class VendorModel:
+    """A SPICE model of an op-amp that the job names, for a second look at the response.
+
+    Parameters
+    ----------
+    file
+        Its name as the job states it.
+    subcircuit
+        Which subcircuit of it is the op-amp.
+    pins
+        What its nodes are, in their order: ``plus``, ``minus``, ``vcc``, ``vee``, ``out``.
+    cards
+        The file without comments, one statement an entry, each of an allowed kind.
+    """
+
+    file: str
+    subcircuit: str
+    pins: tuple[str, ...]
+    cards: tuple[str, ...]
 
 
 @dataclass(frozen=True, kw_only=True)

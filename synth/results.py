@@ -16,7 +16,7 @@ from synth.circuit import Circuit
 from synth.evidence import Check, ResponseError
 from synth.graph import BlockGraph
 from synth.job import Job
-from synth.loop import LoopMargins
+from synth.loop import LoopBoards, LoopMargins
 from synth.shortages import Repick
 from synth.transfer import TransferFunction
 from synth.worstcase import WorstCase
@@ -278,10 +278,11 @@ class Candidate:
 
 @dataclass(frozen=True, kw_only=True)
 class LoopResult:
-    """Margins of the loop with H(s) itself, and with the nominal board in its place."""
+    """Margins of the loop with H(s) itself, with the nominal board, and over a run of boards."""
 
     target: LoopMargins
     nominal: LoopMargins
+    boards: LoopBoards | None = None
 
 
 @dataclass(frozen=True, kw_only=True)

@@ -9,12 +9,14 @@ from netlist.partslist import PartLine
 from netlist.report.wording import NONE, decibel, number, percent, quantity, spelled, stated
 from synth.circuit import Circuit, Passive
 from synth.evidence import Check
-from synth.loop import LoopMargins
+from synth.headroom import tightest_limit
+from synth.loop import LoopMargins, Percentiles
 from synth.results import Candidate, Design, Drift, LoopResult, Swing
 
 __all__ = [
     "check_rows",
     "drift_rows",
+    "first_to_bite",
     "form_rows",
     "largest_noise",
     "loop_rows",
@@ -130,6 +132,20 @@ def swing_rows(swings: Iterable[Swing], circuit: Circuit) -> list[Row]:
     ]
 
 
+def first_to_bite(design: Design) -> str:
+    """The limit of the op-amps with the least room, in one sentence; empty without op-amps."""
+    found = tightest_limit(design)
+    if found is None:
+        return ""
+    whose = f"the {found.quantity} of {found.amplifier}" if found.amplifier else found.quantity
+    room = "the op-amp has" if found.ratio >= 1 else "the op-amp has only"
+    left = {
+        "gain-bandwidth": "what the limits on the response need",
+        "swing": "what is needed; by that factor the input may grow until it clips",
+    }.get(found.quantity, "what is needed")
+    return f"First to bite: {whose}. There {room} {number(found.ratio)} times {left}."
+
+
 def _where(peak_hz: float | None) -> str:
     if peak_hz is None:
         return "any waveform"
@@ -137,29 +153,31 @@ def _where(peak_hz: float | None) -> str:
 
 
 def loop_rows(loop: LoopResult | None) -> list[Row]:
-    """Margins with H(s) itself and with the nominal board."""
+    """Margins with H(s) itself, with the nominal board, and their percentiles over boards."""
     if loop is None:
         return []
-    both = (loop.target, loop.nominal)
+    both, run = (loop.target, loop.nominal), loop.boards
+    columns = ("target", "board", "p5", "p50", "p95")
 
-    def row(name: str, values: Iterable[float | None], unit: str) -> Row:
-        target, board = (
-            NONE if v is None else (quantity(v, unit) if unit else number(v)) for v in values
-        )
-        return {"name": name, "target": target, "board": board}
+    def row(name: str, quantity_of: str, unit: str) -> Row:
+        spread = getattr(run, quantity_of) if run else Percentiles(p5=None, p50=None, p95=None)
+        values = (*(getattr(m, quantity_of) for m in both), spread.p5, spread.p50, spread.p95)
+        shown = (quantity(v, unit) if unit else number(v) for v in values)
+        return {"name": name, **dict(zip(columns, shown, strict=True))}
 
     def poles(margins: LoopMargins) -> str:
         return NONE if margins.unstable_poles is None else str(margins.unstable_poles)
 
     return [
-        row("crossover", [m.crossover_hz for m in both], "Hz"),
-        row("phase margin, deg", [m.phase_margin_deg for m in both], ""),
-        row("gain margin, dB", [m.gain_margin_db for m in both], ""),
-        row("disk margin", [m.disk_margin for m in both], ""),
+        row("crossover", "crossover_hz", "Hz"),
+        row("phase margin, deg", "phase_margin_deg", ""),
+        row("gain margin, dB", "gain_margin_db", ""),
+        row("disk margin", "disk_margin", ""),
         {
             "name": "closed-loop poles in the right half-plane (Nyquist)",
             "target": poles(loop.target),
             "board": poles(loop.nominal),
+            **dict.fromkeys(columns[2:], ""),
         },
     ]
 

@@ -86,6 +86,7 @@ def report_page(
             change_errors=changes.change_errors(design.repick) if design.repick else [],
             forms=found.form_rows(design.candidates, design.form),
             ranked_boards=RANKED_BOARDS,
+            first_to_bite=found.first_to_bite(design),
             swings=found.swing_rows(design.swings, design.circuit),
             values=found.value_rows(design.circuit),
             choice=choice.shown(design),

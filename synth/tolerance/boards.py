@@ -21,7 +21,7 @@ from numpy.typing import ArrayLike, NDArray
 from synth.boardruns import Driver, ToleranceResult
 from synth.circuit import Circuit
 from synth.errors import CircuitError, JobError
-from synth.evidence import DB_PER_NEPER
+from synth.evidence import DB_PER_NEPER, WorstBoard
 from synth.job import Accept
 from synth.nodal import NodalProgram
 from synth.population import Population
@@ -29,7 +29,7 @@ from synth.tolerance.drawing import BoardSource, Drawn
 from synth.tolerance.failures import DriverTally, FailureTally, Place
 from synth.tolerance.interval import clopper_pearson
 
-__all__ = ["drawn_values", "run_boards", "tolerances_of"]
+__all__ = ["drawn_blocks", "drawn_values", "run_boards", "tolerances_of"]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -39,6 +39,9 @@ BLOCK = 500
 
 STORE = 140_000_000
 """Bytes that hold errors until their percentiles are taken."""
+
+WORST = 5
+"""Boards whose values are kept, so that the simulator can be asked about them too."""
 
 
 def tolerances_of(circuit: Circuit) -> Real:
@@ -51,6 +54,16 @@ def drawn_values(
 ) -> Real:
     """Values of the passives of the first so many boards, shape (boards, P) [ohm], [F]."""
     return BoardSource(circuit, population or Population(), seed).draw(boards).values
+
+
+def drawn_blocks(
+    circuit: Circuit, population: Population | None = None, *, boards: int, seed: int
+) -> Iterator[tuple[int, int, Drawn]]:
+    """(first board, last + 1, boards) of a run, block by block."""
+    source = BoardSource(circuit, population or Population(), seed)
+    for start in range(0, boards, BLOCK):
+        stop = min(start + BLOCK, boards)
+        yield start, stop, source.draw(stop - start)
 
 
 def run_boards(
@@ -109,7 +122,7 @@ def run_boards(
     at_once = max(1, STORE // (8 * boards))
     percentiles = np.empty((4, frequency.size))
     tally = FailureTally(frequency, accept)
-    worst_db = np.empty(boards)
+    worst_db, worst_share = np.empty(boards), np.empty(boards)
     for first in range(0, frequency.size, at_once):
         kept = slice(first, min(first + at_once, frequency.size))
         store = np.empty((2, kept.stop - first, boards), dtype=np.float32)
@@ -118,7 +131,7 @@ def run_boards(
             store[0, :, start:stop] = db[:, :width].T
             store[1, :, start:stop] = deg[:, :width].T
             if first == 0:
-                worst_db[start:stop] = tally.add(db, deg)
+                worst_db[start:stop], worst_share[start:stop] = tally.add(db, deg)
                 if progress is not None:
                     progress(stop, boards)
         for quantity in (0, 1):
@@ -141,6 +154,7 @@ def run_boards(
         seed=seed,
         failures=tally.failures(),
         drivers=run.drivers(tally.places()),
+        worst=run.worst(worst_share),
     )
 
 
@@ -156,7 +170,7 @@ class _Run:
 
     def errors(self, kept: slice) -> Iterator[tuple[int, int, Real, Real]]:
         """(first board, last + 1, dB, deg) block by block, shapes (block, frequencies kept)."""
-        for start, stop, drawn in self._blocks():
+        for start, stop, drawn in self.blocks():
             yield start, stop, *self._errors_of(drawn, kept)
 
     def drivers(self, places: tuple[Place, ...]) -> tuple[Driver, ...]:
@@ -164,15 +178,23 @@ class _Run:
         tally = DriverTally(self.circuit, places)
         if not places or self.boards < DriverTally.LEAST_BOARDS:
             return ()
-        for _, _, drawn in self._blocks():
+        for _, _, drawn in self.blocks():
             tally.add(drawn, *self._errors_of(drawn, [p.index for p in places]))
         return tally.drivers()
 
-    def _blocks(self) -> Iterator[tuple[int, int, Drawn]]:
-        source = BoardSource(self.circuit, self.population, self.seed)
-        for start in range(0, self.boards, BLOCK):
-            stop = min(start + BLOCK, self.boards)
-            yield start, stop, source.draw(stop - start)
+    def worst(self, share: Real) -> tuple[WorstBoard, ...]:
+        """The boards with the largest shares of a limit, the worst first; `share` per board."""
+        share = np.nan_to_num(share, nan=np.inf)
+        numbers = np.argsort(-share, kind="stable")[:WORST].tolist()
+        found: dict[int, Drawn] = {}
+        for start, stop, drawn in self.blocks():
+            found |= {
+                n: drawn.part(slice(n - start, n - start + 1)) for n in numbers if start <= n < stop
+            }
+        return tuple(_worst_board(n, float(share[n]), found[n]) for n in numbers)
+
+    def blocks(self) -> Iterator[tuple[int, int, Drawn]]:
+        return drawn_blocks(self.circuit, self.population, boards=self.boards, seed=self.seed)
 
     def _errors_of(self, drawn: Drawn, kept: slice | list[int]) -> tuple[Real, Real]:
         with np.errstate(divide="ignore"):
@@ -181,6 +203,16 @@ class _Run:
             self.frequency[kept], values=drawn.values, gain_bandwidth=drawn.gain_bandwidth
         )
         return _errors(np.multiply(ratio, inverse_target, out=ratio))
+
+
+def _worst_board(number: int, share: float, drawn: Drawn) -> WorstBoard:
+    gain_bandwidth = drawn.gain_bandwidth
+    return WorstBoard(
+        number=number,
+        limit_share=share,
+        values=tuple(drawn.values[0].tolist()),
+        gain_bandwidth=None if gain_bandwidth is None else tuple(gain_bandwidth[0].tolist()),
+    )
 
 
 def _errors(ratio: Complex) -> tuple[Real, Real]:

@@ -55,9 +55,9 @@ class FailureTally:
         self._failing = np.zeros((2, frequency_hz.size), dtype=np.int64)
         self._every = np.zeros((2, frequency_hz.size), dtype=np.int64)
 
-    def add(self, db: Real, deg: Real) -> Real:
+    def add(self, db: Real, deg: Real) -> tuple[Real, Real]:
         """Count a block of boards by their errors, shapes (boards, F); returns the largest dB error
-        of each board, shape (boards,)."""
+        of each board and its largest error as a share of the limit, shapes (boards,)."""
         sizes = [np.abs(db), np.abs(deg)]
         where = np.array([size.argmax(axis=1) for size in sizes])
         rows = np.arange(db.shape[0])
@@ -72,8 +72,7 @@ class FailureTally:
         at = where[first, rows]
         np.add.at(self._every, (first, at), 1)
         np.add.at(self._failing, (first[failing], at[failing]), 1)
-        largest_db: Real = worst[0]
-        return largest_db
+        return worst[0], shares.max(axis=0)
 
     def failures(self) -> Failures:
         """What has been counted."""

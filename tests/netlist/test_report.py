@@ -10,12 +10,13 @@ from html.parser import HTMLParser
 import pytest
 
 from netlist.partslist import parts_list
+from netlist.records import design_record
 from netlist.report.found import check_rows, margin
 from netlist.report.page import headline, inlined, report_page
 from netlist.report.wording import decibel, number, quantity, stated
 from synth.evidence import Check
 from synth.job import Loop
-from synth.loop import loop_margins
+from synth.loop import LoopBoards, Percentiles, loop_margins
 from synth.results import LoopResult
 from synth.transfer import TransferFunction
 from tests.netlist import boards
@@ -230,3 +231,43 @@ def test_with_a_loop_the_note_below_the_checks_still_sends_to_the_spread_alone()
     ).text
     assert "closed-loop poles" in found
     assert "assumed distributions of part values ( spread )." in found
+
+
+def test_the_limit_that_bites_first_is_told_in_one_line():
+    found = Page(page()).text
+    assert "First to bite: the swing of U1. There the op-amp has 5.00 times what is needed" in found
+
+
+def test_the_loop_over_the_boards_stands_beside_the_nominal_one():
+    """Percentiles, a dash where there is none, and how many boards keep the loop."""
+    made = boards.design()
+    margins = loop_margins(Loop(plant=TransferFunction.from_polynomials([1.0], [1.0, 1.0])),
+                           made.job.target)  # fmt: skip
+    none = Percentiles(p5=None, p50=None, p95=None)
+    some = Percentiles(p5=41.5, p50=52.5, p95=63.5)
+    run = LoopBoards(
+        boards=60, stable=58, passed=57, low=0.86, high=0.99, confidence=0.95,
+        phase_margin_deg=some, gain_margin_db=none, crossover_hz=none, disk_margin=some,
+    )  # fmt: skip
+    made = replace(
+        made,
+        job=replace(made.job, loop=Loop(plant=TransferFunction.from_polynomials([1.0], [1.0]))),
+        loop=LoopResult(target=margins, nominal=margins, boards=run),
+    )
+    found = Page(
+        report_page(made, boards.verification(made), drawings=boards.drawings(), lines=())
+    ).text
+    assert "41.5 52.5 63.5" in found
+    assert "58 of 60 boards are stable by the Nyquist criterion, and 57 of them" in found
+    assert "The boards are those of the tolerance run" in found
+    longer = replace(made, tolerance=replace(made.tolerance, boards=400))
+    page_of_longer = report_page(
+        longer, boards.verification(longer), drawings=boards.drawings(), lines=()
+    )
+    assert (
+        "The boards are the first 60 of the 400 of the tolerance run" in Page(page_of_longer).text
+    )
+    record = design_record(made, boards.verification(made))["loop"]["boards"]
+    assert record["phase_margin_deg"] == {"p5": 41.5, "p50": 52.5, "p95": 63.5}
+    assert record["gain_margin_db"]["p50"] is None
+    assert (record["stable"], record["passed"], record["low"]) == (58 / 60, 57, 0.86)

@@ -213,3 +213,39 @@ def test_the_loop_of_an_inverting_board_is_that_of_h() -> None:
     assert found.loop.nominal.phase_margin_deg == pytest.approx(
         found.loop.target.phase_margin_deg, abs=1.0
     )
+
+
+def test_the_loop_is_run_over_the_boards_of_the_tolerance_run() -> None:
+    """Half of them lie on either side of the median, which is near the nominal board; too few
+    good ones draw a notice."""
+    plant = TransferFunction.from_polynomials([3e5], [1, 2e3, 0])
+    job = replace(job_for(PI, (10.0, 5e3), input_peak=0.1), loop=Loop(plant=plant))
+    found = design(job, boards=60)
+    run = found.loop.boards
+    assert run.stable == run.passed == run.boards == 60
+    assert run.phase_margin_deg.p50 == pytest.approx(found.loop.nominal.phase_margin_deg, abs=1.0)
+    assert run.crossover_hz.p5 < found.loop.nominal.crossover_hz < run.crossover_hz.p95
+    check = next(c for c in found.checks if c.name == "yield of the loop")
+    assert (check.value, check.limit, check.passed) == (100.0, None, True)
+    strict = Loop(plant=plant, phase_margin_deg=run.phase_margin_deg.p50)
+    notices = design(replace(job, loop=strict), boards=60).notices
+    assert any("boards give a stable loop within the margins" in n for n in notices)
+
+
+def test_the_loop_is_run_over_the_first_boards_alone_where_there_are_many(monkeypatch) -> None:
+    """A run of as many boards as the loop is looked at on finds the same loops."""
+    monkeypatch.setattr("synth.design.LOOP_BOARDS", 40)
+    plant = TransferFunction.from_polynomials([3e5], [1, 2e3, 0])
+    job = replace(job_for(PI, (10.0, 5e3), input_peak=0.1), loop=Loop(plant=plant))
+    many, few = (design(job, boards=n) for n in (60, 40))
+    assert (many.tolerance.boards, many.loop.boards.boards) == (60, 40)
+    assert many.loop.boards == few.loop.boards
+
+
+@pytest.mark.parametrize("call", [design, compare_forms])
+def test_a_plant_that_h_itself_cannot_hold_is_refused(call) -> None:
+    """0.5 / (s - 1) needs twice the gain that H has: the job contradicts itself."""
+    plant = TransferFunction.from_polynomials([0.5], [1, -1])
+    job = replace(job_for(butterworth(1, 1e3), BAND), loop=Loop(plant=plant))
+    with pytest.raises(JobError, match=r"^loop: got a plant .* with 1 pole in the right"):
+        call(job)

@@ -11,8 +11,9 @@ from synth.errors import CircuitError, JobError
 from synth.evidence import response_error
 from synth.job import Accept
 from synth.nodal import compile_circuit
+from synth.population import Population
+from synth.tolerance import BoardSource, drawn_values, run_boards, tolerances_of
 from synth.tolerance import boards as boards_module
-from synth.tolerance import drawn_values, run_boards, tolerances_of
 from tests.synth.nodal.boards import capacitor, chain, op_amp, resistor
 
 BAND = np.geomspace(20.0, 2e3, 31)
@@ -186,3 +187,31 @@ print(int(re.search(r"VmHWM:\\s*(\\d+) kB", Path("/proc/self/status").read_text(
         [sys.executable, "-c", script], capture_output=True, text=True, check=True, timeout=120
     )
     assert float(done.stdout) < 400
+
+
+@pytest.mark.parametrize("spread", [0.0, 0.5])
+@pytest.mark.parametrize("count", [3, 700])
+def test_the_worst_boards_of_a_run_are_kept_with_their_values(count, spread, monkeypatch):
+    """Against all boards drawn at once, op-amps that spread among them; neither order nor values
+    hang on the size of a block."""
+    circuit = chain(3, op_amp(), source=100.0)
+    monkeypatch.setattr(boards_module, "BLOCK", 37)
+    program = compile_circuit(circuit)
+    target = program.solve(BAND)
+    population = Population(gain_bandwidth_spread=spread)
+    found = run(circuit, boards=count, population=population).worst
+    drawn = BoardSource(circuit, population, 3).draw(count)
+    values, speeds = drawn.values, drawn.gain_bandwidth
+    error = response_error(program.solve(BAND, values=values, gain_bandwidth=speeds), target)
+    share = np.maximum(
+        np.abs(error.magnitude_db).max(axis=1) / LIMITS.magnitude_db,
+        np.abs(error.phase_deg).max(axis=1) / LIMITS.phase_deg,
+    )
+    expected = np.argsort(-share)[:5]
+    assert [board.number for board in found] == expected.tolist()
+    np.testing.assert_allclose([board.limit_share for board in found], share[expected], rtol=1e-9)
+    np.testing.assert_array_equal([board.values for board in found], values[expected])
+    if spread:
+        np.testing.assert_array_equal([b.gain_bandwidth for b in found], speeds[expected])
+    else:
+        assert all(board.gain_bandwidth is None for board in found)

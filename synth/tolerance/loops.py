@@ -1,0 +1,141 @@
+"""Margins and stability of the loop around every board of a run.
+
+What `synth.loop.loop_margins` reads off one loop, here for many boards at once.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from synth.circuit import Circuit
+from synth.evidence import Check
+from synth.job import Loop
+from synth.loop import LoopBoards, Percentiles
+from synth.nodal import NodalProgram
+from synth.population import Population
+from synth.tolerance.boards import drawn_blocks
+from synth.tolerance.drawing import Drawn
+from synth.tolerance.interval import clopper_pearson
+from synth.tolerance.loopsweep import LoopSweep
+from synth.transfer import TransferFunction
+
+__all__ = ["BoardMargins", "board_margins", "loop_yield_check", "run_loops"]
+
+Real = NDArray[np.float64]
+
+HELD = 300_000
+"""Boards times frequencies whose responses are held at once."""
+
+
+@dataclass(frozen=True, kw_only=True)
+class BoardMargins:
+    """What `LoopMargins` says, for many boards, shapes (boards,); NaN stands for None."""
+
+    crossover_hz: Real
+    phase_margin_deg: Real
+    gain_margin_db: Real
+    disk_margin: Real
+    unstable_poles: Real
+
+    @property
+    def stable(self) -> NDArray[np.bool_]:
+        """Which closed loops are known to be stable."""
+        return np.asarray(self.unstable_poles == 0)
+
+
+def run_loops(
+    program: NodalProgram,
+    circuit: Circuit,
+    loop: Loop,
+    target: TransferFunction,
+    *,
+    inverted: bool,
+    boards: int,
+    seed: int,
+    population: Population | None = None,
+    confidence: float = 0.95,
+) -> LoopBoards:
+    """Margins over the first `boards` boards that `run_boards` draws with the same seed and
+    population, however many it draws.
+
+    Parameters
+    ----------
+    program, circuit
+        As `run_boards`.
+    target
+        H(s), not inverted.
+    inverted
+        Whether the board is one of -H(s), to be inverted once more.
+    """
+    parts = [
+        board_margins(program, loop, target, drawn, inverted=inverted)
+        for _, _, drawn in drawn_blocks(circuit, population, boards=boards, seed=seed)
+    ]
+    names = BoardMargins.__dataclass_fields__
+    found = BoardMargins(**{n: np.concatenate([getattr(p, n) for p in parts]) for n in names})
+    stable = found.stable
+    passed = stable.copy()
+    for margin, limit in (
+        (found.phase_margin_deg, loop.phase_margin_deg),
+        (found.gain_margin_db, loop.gain_margin_db),
+    ):
+        if limit is not None:
+            passed &= np.isnan(margin) | (margin >= limit)
+    low, high = clopper_pearson(int(passed.sum()), boards, confidence)
+    return LoopBoards(
+        boards=boards,
+        stable=int(stable.sum()),
+        passed=int(passed.sum()),
+        low=low,
+        high=high,
+        confidence=confidence,
+        phase_margin_deg=_percentiles(_ordered(found.phase_margin_deg, stable)),
+        gain_margin_db=_percentiles(_ordered(found.gain_margin_db, stable)),
+        crossover_hz=_percentiles(found.crossover_hz[~np.isnan(found.crossover_hz)]),
+        disk_margin=_percentiles(found.disk_margin),
+    )
+
+
+def board_margins(
+    program: NodalProgram,
+    loop: Loop,
+    target: TransferFunction,
+    drawn: Drawn,
+    *,
+    inverted: bool = False,
+) -> BoardMargins:
+    """Margins of the boards that were drawn."""
+    sweep = LoopSweep.of(program, loop, target, -1.0 if inverted else 1.0)
+    count = max(1, HELD // sweep.grid.size)
+    starts = range(0, len(drawn.values), count)
+    rows = [sweep.margins(drawn.part(slice(start, start + count))) for start in starts]
+    columns = [np.concatenate(column) for column in zip(*rows, strict=True)]
+    return BoardMargins(**dict(zip(BoardMargins.__dataclass_fields__, columns, strict=True)))
+
+
+def loop_yield_check(found: LoopBoards) -> Check:
+    """How many boards keep the loop, a line of the verdict without a limit of its own."""
+    note = (
+        f"{found.passed} of {found.boards} boards stable and within the margins, "
+        f"{100 * found.low:.1f} to {100 * found.high:.1f} % at "
+        f"{100 * found.confidence:.0f} % confidence"
+    )
+    return Check.at_least("yield of the loop", 100 * found.share, None, "%", note)
+
+
+def _ordered(margin: Real, stable: NDArray[np.bool_]) -> Real:
+    """Margins so that a larger one is better on every board."""
+    return np.where(stable, np.nan_to_num(margin, nan=np.inf), -np.abs(np.nan_to_num(margin)))
+
+
+def _percentiles(values: Real) -> Percentiles:
+    """The 5th, 50th and 95th, each one of the values; infinity and no values at all are None."""
+    ordered = np.sort(values)
+    ranks = [max(math.ceil(share * ordered.size) - 1, 0) for share in (0.05, 0.5, 0.95)]
+    found = [float(ordered[k]) if ordered.size else math.inf for k in ranks]
+    p5, p50, p95 = (v if math.isfinite(v) else None for v in found)
+    return Percentiles(p5=p5, p50=p50, p95=p95)
