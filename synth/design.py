@@ -47,6 +47,9 @@ SMALL_CAPACITOR = 100e-12
 DEFAULT_BOARDS = 10_000
 DEFAULT_SEED = 1
 
+# Below this share of the usual work the search hardly begins.
+LEAST_EFFORT = 0.01
+
 
 def compare_forms(
     job: Job,
@@ -84,7 +87,7 @@ def design(
     *,
     boards: int = DEFAULT_BOARDS,
     seed: int = DEFAULT_SEED,
-    effort: int = 1,
+    effort: float = 1,
     progress: Progress | None = None,
     mapper: Mapper | None = None,
 ) -> Design:
@@ -97,7 +100,8 @@ def design(
     seed
         Of the choice of values and of the boards; the same seed gives the same design.
     effort
-        Multiple of the default work that the search for values is given, at least 1.
+        Multiple of the default work that the search for values is given; a small part of it gives
+        values that are merely good.
     progress
         Called with the stage's name, and how much of how much of it is done.
     mapper
@@ -109,8 +113,8 @@ def design(
     JobError, RealizationError
         The job contradicts itself, or no circuit within its rules exists.
     """
-    if effort < 1:
-        raise JobError(f"got the effort {effort}, expected 1 or more", key="effort")
+    if not effort >= LEAST_EFFORT:
+        raise JobError(f"got the effort {effort}, expected {LEAST_EFFORT} or more", key="effort")
     say = progress or (lambda stage, done, total: None)
     frequency = judging_frequencies(job.target, job.signal.band_hz)
     if job.board.form == "auto":
@@ -126,7 +130,7 @@ def design(
         sketch = sketch_form(job, job.board.form, frequency)
         candidates = (sketch.candidate,)
     response = wanted_of(sketch, job).response(frequency)
-    search = ValueSearch(sketch, job, response, frequency, seed, effort * DEFAULT_EFFORT)
+    search = ValueSearch(sketch, job, response, frequency, seed, int(effort * DEFAULT_EFFORT))
     choice, unaware = search.both(say)
     made = judged_design(
         job, sketch, candidates, choice, frequency, boards=boards, seed=seed, progress=say
