@@ -55,6 +55,9 @@ times what the response of its board takes, and so many tell a share to within a
 
 DEFAULT_SEED = 1
 
+# Below this share of the usual work the search hardly begins.
+LEAST_EFFORT = 0.01
+
 
 def compare_forms(
     job: Job,
@@ -96,7 +99,7 @@ def design(
     *,
     boards: int = DEFAULT_BOARDS,
     seed: int = DEFAULT_SEED,
-    effort: int = 1,
+    effort: float = 1,
     progress: Progress | None = None,
     mapper: Mapper | None = None,
 ) -> Design:
@@ -109,7 +112,8 @@ def design(
     seed
         Of the choice of values and of the boards; the same seed gives the same design.
     effort
-        Multiple of the default work that the search for values is given, at least 1.
+        Multiple of the default work that the search for values is given; a small part of it gives
+        values that are merely good.
     progress
         Called with the stage's name, and how much of how much of it is done.
     mapper
@@ -121,8 +125,8 @@ def design(
     JobError, RealizationError
         The job contradicts itself, or no circuit within its rules exists.
     """
-    if effort < 1:
-        raise JobError(f"got the effort {effort}, expected 1 or more", key="effort")
+    if not effort >= LEAST_EFFORT:
+        raise JobError(f"got the effort {effort}, expected {LEAST_EFFORT} or more", key="effort")
     if job.loop is not None:
         checked_loop(job.loop, job.target)
     say = progress or (lambda stage, done, total: None)
@@ -140,7 +144,7 @@ def design(
         sketch = sketch_form(job, job.board.form, frequency)
         candidates = (sketch.candidate,)
     response = wanted_of(sketch, job).response(frequency)
-    search = ValueSearch(sketch, job, response, frequency, seed, effort * DEFAULT_EFFORT)
+    search = ValueSearch(sketch, job, response, frequency, seed, int(effort * DEFAULT_EFFORT))
     choice, unaware = search.both(say)
     made = judged_design(
         job, sketch, candidates, choice, frequency, boards=boards, seed=seed, progress=say

@@ -351,7 +351,7 @@ class Design:
     allowance: OpAmpAllowance | None = None
     budget: ErrorBudget | None = None
     worst: WorstCase | None = None
-    effort: int = 1
+    effort: float = 1
     loop: LoopResult | None = None
     notices: tuple[str, ...] = field(default=())
     repick: Repick | None = None

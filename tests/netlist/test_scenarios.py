@@ -81,7 +81,7 @@ def test_ngspice_accepts_every_form_and_agrees_at_every_net(scenario, form, simu
     millionth of its largest voltage; nothing overlaps in the schematic."""
     job = read_job(FOLDER / f"{scenario}.toml")
     try:
-        made = design(replace(job, board=replace(job.board, form=form)), boards=20)
+        made = design(replace(job, board=replace(job.board, form=form)), boards=20, effort=0.1)
     except RealizationError:
         if FORMS[form].everywhere:
             raise
