@@ -30,7 +30,7 @@ def test_a_design_holds_together() -> None:
     """Nominal error from the values, yield within its interval, swing below the rails, the
     block diagram's weights those of the parts."""
     job = job_for(butterworth(3, 1e3), BAND, input_peak=3.0)
-    found = design(job, boards=200)
+    found = design(job, boards=200, effort=0.1)
     response = job.target.response(found.frequency_hz)
     error = response_error(compile_circuit(found.circuit).solve(found.frequency_hz), response)
     assert error.rms == pytest.approx(found.nominal.rms, rel=1e-9)
@@ -58,7 +58,7 @@ def test_a_design_holds_together() -> None:
 def test_same_seed_same_design_and_another_seed_other_boards() -> None:
     """The seed decides the choice of values and the boards."""
     job = job_for(butterworth(2, 1e3), BAND)
-    first, again, other = (design(job, boards=150, seed=s) for s in (1, 1, 2))
+    first, again, other = (design(job, boards=150, effort=0.1, seed=s) for s in (1, 1, 2))
     assert first.circuit == again.circuit
     assert first.tolerance.error_95_db == again.tolerance.error_95_db
     assert first.tolerance.error_95_db != other.tolerance.error_95_db
@@ -67,7 +67,7 @@ def test_same_seed_same_design_and_another_seed_other_boards() -> None:
 def test_an_output_that_must_clip_fails_its_swing_check() -> None:
     """H alone sets the output: 20 V peak on 12 V rails fails, and nothing else does."""
     job = job_for(butterworth(2, 1e3), BAND, input_peak=20.0)
-    failed = [c for c in design(job, boards=50).checks if not c.passed]
+    failed = [c for c in design(job, boards=50, effort=0.1).checks if not c.passed]
     assert failed
     assert all(c.name.startswith(("peak of", "inverter")) for c in failed)
     assert failed[0].value == pytest.approx(20.0, rel=0.05)
@@ -96,7 +96,7 @@ def test_every_output_is_watched_where_its_op_amp_shows_the_peak() -> None:
 def test_an_input_above_the_rails_is_inverted_below_them(seed: int) -> None:
     """The inverter of the input keeps below its rail whatever values the seed leads to."""
     target = TransferFunction.from_factors(2000, [], [Factor.real(-6000)])
-    found = design(job_for(target, BAND, input_peak=20.0), boards=10, seed=seed)
+    found = design(job_for(target, BAND, input_peak=20.0), boards=10, effort=0.1, seed=seed)
     assert [s.net for s in found.swings] == ["in_n", "out"]
     assert all(s.peak <= s.peak_limit for s in found.swings)
 
@@ -104,7 +104,7 @@ def test_an_input_above_the_rails_is_inverted_below_them(seed: int) -> None:
 def test_pole_at_the_origin_is_allowed_flagged_and_measured_from_the_band() -> None:
     """The integrator drifts at Vos/(R C) + Ib/C, and peaks are those from the band's edge up."""
     job = job_for(PI, (10.0, 5e3), input_peak=0.1)
-    found = design(job, boards=50)
+    found = design(job, boards=50, effort=0.1)
     (drift,) = found.drifts
     cell = next(c for c in found.circuit.cells if c.kind == "integrator")
     capacitor = found.circuit.by_ref[cell.feedback].value
@@ -121,7 +121,7 @@ def test_any_input_uses_the_l1_bound() -> None:
     q = 2.0
     w0 = 2 * math.pi * 1e3
     target = TransferFunction.from_factors(w0**2, [], [Factor.pair(w0, q)])
-    found = design(job_for(target, BAND, swing="any", input_peak=1.0), boards=50)
+    found = design(job_for(target, BAND, swing="any", input_peak=1.0), boards=50, effort=0.1)
     zeta = 1 / (2 * q)
     l1 = 1 / math.tanh(math.pi * zeta / (2 * math.sqrt(1 - zeta**2)))
     output = next(s for s in found.swings if s.net == "out")
@@ -133,13 +133,13 @@ def test_any_input_uses_the_l1_bound() -> None:
 def test_any_input_with_a_pole_at_the_origin_is_refused() -> None:
     """No bound exists; the message says what to use."""
     with pytest.raises(RealizationError, match=r"signal.swing: got 'any'.*expected 'sine'"):
-        design(job_for(PI, (10.0, 5e3), swing="any"), boards=10)
+        design(job_for(PI, (10.0, 5e3), swing="any"), boards=10, effort=0.1)
 
 
 def test_either_polarity_gives_the_negative_where_it_saves_an_op_amp() -> None:
     """The wanted response is -H, the error is measured against it."""
     job = job_for(butterworth(1, 1e3), BAND, inverted="either")
-    found = design(job, boards=50)
+    found = design(job, boards=50, effort=0.1)
     assert found.inverted
     assert len(found.circuit.amplifiers) == 1
     assert found.nominal.largest_deg < 1.0
@@ -169,7 +169,7 @@ def test_yield_limit_is_a_check() -> None:
         capacitors=capacitor_rule(tolerance=0.05),
         accept=Accept(magnitude_db=0.1, phase_deg=1.0, yield_share=0.9),
     )
-    check = next(c for c in design(job, boards=100).checks if c.name == "yield")
+    check = next(c for c in design(job, boards=100, effort=0.1).checks if c.name == "yield")
     assert not check.passed
     assert check.limit == pytest.approx(90)
 
@@ -179,7 +179,7 @@ def test_loop_margins_are_checked_against_their_limits() -> None:
     plant = TransferFunction.from_polynomials([3e5], [1, 2e3, 0])
     job = job_for(PI, (10.0, 5e3), input_peak=0.1)
     job = replace(job, loop=Loop(plant=plant, phase_margin_deg=89.0))
-    found = design(job, boards=50)
+    found = design(job, boards=50, effort=0.1)
     assert found.loop.nominal.phase_margin_deg == pytest.approx(
         found.loop.target.phase_margin_deg, abs=1.0
     )
@@ -190,7 +190,7 @@ def test_loop_margins_are_checked_against_their_limits() -> None:
 def test_unknown_form_is_refused() -> None:
     """With the names there are."""
     with pytest.raises(JobError, match="expected auto, controllable, observable, cascade"):
-        design(job_for(butterworth(2, 1e3), BAND, form="spiral"), boards=10)
+        design(job_for(butterworth(2, 1e3), BAND, form="spiral"), boards=10, effort=0.1)
 
 
 def test_progress_is_told_stage_by_stage() -> None:
@@ -210,7 +210,7 @@ def test_the_loop_of_an_inverting_board_is_that_of_h() -> None:
     """A board of -H stands in a loop that inverts once more: its margins are those of H(s)."""
     plant = TransferFunction.from_polynomials([3e5], [1, 2e3, 0])
     job = job_for(PI, (10.0, 5e3), input_peak=0.1, inverted="yes")
-    found = design(replace(job, loop=Loop(plant=plant)), boards=10)
+    found = design(replace(job, loop=Loop(plant=plant)), boards=10, effort=0.1)
     assert found.inverted
     assert found.loop.target.unstable_poles == 0
     assert found.loop.nominal.unstable_poles == 0
@@ -224,7 +224,7 @@ def test_the_loop_is_run_over_the_boards_of_the_tolerance_run() -> None:
     good ones draw a notice."""
     plant = TransferFunction.from_polynomials([3e5], [1, 2e3, 0])
     job = replace(job_for(PI, (10.0, 5e3), input_peak=0.1), loop=Loop(plant=plant))
-    found = design(job, boards=60)
+    found = design(job, boards=60, effort=0.1)
     run = found.loop.boards
     assert run.stable == run.passed == run.boards == 60
     assert run.phase_margin_deg.p50 == pytest.approx(found.loop.nominal.phase_margin_deg, abs=1.0)
@@ -232,7 +232,7 @@ def test_the_loop_is_run_over_the_boards_of_the_tolerance_run() -> None:
     check = next(c for c in found.checks if c.name == "yield of the loop")
     assert (check.value, check.limit, check.passed) == (100.0, None, True)
     strict = Loop(plant=plant, phase_margin_deg=run.phase_margin_deg.p50)
-    notices = design(replace(job, loop=strict), boards=60).notices
+    notices = design(replace(job, loop=strict), boards=60, effort=0.1).notices
     assert any("boards give a stable loop within the margins" in n for n in notices)
 
 
