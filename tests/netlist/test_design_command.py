@@ -25,6 +25,8 @@ numerator = [5000]
 denominator = [1, 5000]
 [signal]
 band = ["10 Hz", "5 kHz"]
+[board]
+form = "cascade"
 """
 
 needs_ngspice = pytest.mark.skipif(

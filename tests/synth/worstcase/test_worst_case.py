@@ -129,7 +129,7 @@ def test_every_corner_and_many_boards_inside_stay_below_the_bound(circuit):
     target = compile_circuit(circuit).solve(frequency)
     found = worst_case(circuit, target, frequency)
     generator = np.random.default_rng(5)
-    inside = drawn_values(circuit, 2000, generator)
+    inside = drawn_values(circuit, 2000, int(generator.integers(2**31)))
     boards = np.vstack([corners(circuit), inside])
     assert_holds(found, circuit, boards, target, frequency)
     for error, size in zip(
@@ -141,7 +141,7 @@ def test_every_corner_and_many_boards_inside_stay_below_the_bound(circuit):
         assert error.reached >= size.max() * (1 - 1e-6)
 
 
-@settings(max_examples=12, deadline=None)
+@settings(max_examples=6, deadline=None)
 @given(seed=st.integers(0, 2**32 - 1), order=st.integers(1, 3))
 def test_boards_of_any_target_stay_below_the_bound(seed, order):
     """Ends and values between, of targets with poles and zeros of any Q up to 20."""
@@ -155,7 +155,7 @@ def test_boards_of_any_target_stay_below_the_bound(seed, order):
         return
     wanted = target.response(frequency)
     found = worst_case(circuit, wanted, frequency, work=100_000)
-    boards = drawn_values(circuit, 300, generator)
+    boards = drawn_values(circuit, 300, int(generator.integers(2**31)))
     nominal = np.array([p.value for p in circuit.passives])
     tolerance = np.array([p.tolerance for p in circuit.passives])
     ends = nominal * (1 + tolerance * generator.choice([-1.0, 1.0], boards.shape))
@@ -181,7 +181,13 @@ def test_bound_and_reached_meet_at_order_four(form, tolerance):
     largest = response_error(worst, nominal).largest_db
     assert largest == pytest.approx(found.magnitude_db.reached, rel=0.01)
     generator = np.random.default_rng(1)
-    assert_holds(found, circuit, drawn_values(circuit, 200, generator), wanted, frequency)
+    assert_holds(
+        found,
+        circuit,
+        drawn_values(circuit, 200, int(generator.integers(2**31))),
+        wanted,
+        frequency,
+    )
 
 
 def test_without_work_the_bound_still_holds_and_is_wider():
