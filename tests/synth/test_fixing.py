@@ -45,7 +45,9 @@ def test_each_part_alone_can_be_fixed_and_the_ideal_circuit_still_is_h(
     """A third above its ideal value, which the levels or the other impedances make up for, up to
     the steps of the capacitors and where the factor of a source resistance settles."""
     target = LEAD if exists(form, LEAD) else butterworth(2, 1e3)
-    for part in parts_of(form, target).bought:
+    # Every other part of three forms; some of the others, whose cells are the same.
+    step = 2 if form in ("controllable", "observable", "cascade") else 4
+    for part in parts_of(form, target).bought[::step]:
         value = float(f"{part.ideal * 1.3:.2g}")
         check_ideal(form, {part.ref: value}, source_resistance, target)
 
