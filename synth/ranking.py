@@ -44,7 +44,7 @@ RANKED_BOARDS = 1000
 
 # Share of the usual work that the search for values gets: a form is not told from another by
 # the last digit of its nominal error, which tolerance drowns.
-EFFORT_SHARE = 0.1
+EFFORT_SHARE = 0.05
 
 
 @dataclass(frozen=True, kw_only=True)

@@ -7,7 +7,7 @@ Input: a `Sketch` and the response its output must show.  Output: a `Choice`.  C
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -35,6 +35,10 @@ Progress = Callable[[str, int, int], None]
 
 # The search for values sees the response at about this many frequencies.
 FREQUENCIES_OF_THE_SEARCH = 200
+
+# Share of the search that goes into values as if op-amps were ideal: they are where the search for
+# the real ones sets out, and what shows what allowing for the op-amps brings.
+UNAWARE_SHARE = 0.5
 
 # What a level may lack of its maximum and still count as its peak.
 FLAT = 0.01
@@ -84,7 +88,8 @@ class ValueSearch:
         alone.
         """
         say("values", 0, 2)
-        unaware = self.task(with_ideal_op_amps(self.sketch.circuit)).choose()
+        ideal = self.task(with_ideal_op_amps(self.sketch.circuit))
+        unaware = replace(ideal, effort=int(UNAWARE_SHARE * self.effort)).choose()
         say("values", 1, 2)
         task = self.task(self.sketch.circuit)
         choice = refine(task, task.choose(known=unaware.circuit), self.job.board)

@@ -21,6 +21,9 @@ __all__ = ["Neighbourhood"]
 Real = NDArray[np.float64]
 Index = NDArray[np.intp]
 
+# Its square, beside costs: never the best.
+FAR = 1e100
+
 
 @dataclass(frozen=True, eq=False)
 class Neighbourhood:
@@ -38,21 +41,38 @@ class Neighbourhood:
     supply: Supply | None = None
 
     @cached_property
-    def _steps(self) -> Index:
-        return np.array([*self.reach, *(-m for m in self.reach)])
-
-    @cached_property
     def _part(self) -> Index:
-        return np.repeat(np.arange(len(self.grid.parts)), self._steps.size)
+        """Of which part each step is, shape (n,)."""
+        movable = np.flatnonzero((self.grid.counts > 1) & ~self.grid.fine)
+        return np.repeat(movable, 2 * len(self.reach))
 
     @cached_property
     def _step(self) -> Index:
-        return np.tile(self._steps, len(self.grid.parts))
+        """How many places each step goes, shape (n,)."""
+        steps = np.array([*self.reach, *(-m for m in self.reach)])
+        return np.tile(steps, self._part.size // steps.size)
+
+    @cached_property
+    def _gram(self) -> Real:
+        """Twice the products of the effects of a step each, per change of ln, shape (n, n)."""
+        effects = self.model.matrix[:, self._part]
+        return np.asarray(2 * effects.T @ effects)
+
+    @cached_property
+    def _clash(self) -> Real:
+        """Infinite for two steps of one part, else 0, shape (n, n)."""
+        return np.where(np.equal.outer(self._part, self._part), np.inf, 0.0)
+
+    @cached_property
+    def _couples(self) -> tuple[Index, Index]:
+        """All pairs of steps of two parts, each once."""
+        first, second = np.nonzero(np.triu(np.isfinite(self._clash)))
+        return first, second
 
     @property
     def pairs(self) -> int:
         """Pairs of steps one look evaluates, the quads counted as such."""
-        return self._part.size**2 + self.quads**2
+        return (2 * len(self.reach) * len(self.grid.parts)) ** 2 + self.quads**2
 
     def descend(self, index: Index) -> tuple[Index, float, int]:
         """A local minimum from `index`: index vector, |residual|^2, and how many
@@ -74,72 +94,65 @@ class Neighbourhood:
         return float(residual @ residual)
 
     def _best_move(self, index: Index, cost: float) -> Index | None:
-        steps = self._steps_from(index)
-        if steps.part.size < 2:
+        """`index` after the best step, two steps or four, None where none gains."""
+        target = index[self._part] + self._step
+        inside = (target >= 0) & (target < self.grid.counts[self._part])
+        if not inside.any():
             return None
-        residual = self.model.residual(self.grid.logs_at(index))
-        gram = steps.effects.T @ steps.effects
-        single = 2 * (residual @ steps.effects) + np.diagonal(gram)
-        pair = 2 * gram + single[:, None] + single[None, :]
-        pair[np.equal.outer(steps.part, steps.part)] = np.inf
+        target = np.where(inside, target, index[self._part])
+        logs = self.grid.logs_at(index)
+        change = self.grid.logs[self._part, target] - logs[self._part]
+        slope = 2 * (self.model.residual(logs) @ self.model.matrix)[self._part]
+        single = change * (slope + 0.5 * np.diagonal(self._gram) * change)
+        single[~inside] = np.inf
+        pair = self._gram * change
+        pair *= change[:, None]
+        pair += single
+        pair += single[:, None]
+        pair += self._clash
         if self.supply is not None:
-            target = index[steps.part] + steps.step
-            fits, both_fit = self.supply.steps(index, steps.part, target)
+            fits, both_fit = self.supply.steps(index, self._part, target)
             single = np.where(fits, single, np.inf)
             pair = np.where(both_fit, pair, np.inf)
         alone, both = int(np.argmin(single)), int(np.argmin(pair))
         gain = -1e-12 * max(cost, 1e-18)
         if single[alone] <= pair.flat[both] and single[alone] < gain:
-            return steps.taken(index, alone)
+            return self._taken(index, alone)
         if pair.flat[both] < gain:
-            return steps.taken(index, *divmod(both, steps.part.size))
-        return self._best_quad(index, steps, pair, gain) if self.quads else None
+            return self._taken(index, *divmod(both, change.size))
+        return self._best_quad(index, change, pair, gain) if self.quads else None
 
-    def _best_quad(self, index: Index, steps: _Steps, pair: Real, gain: float) -> Index | None:
+    def _best_quad(self, index: Index, change: Real, pair: Real, gain: float) -> Index | None:
         """The best two of the cheapest pairs together, on four different parts."""
-        rows, columns = np.triu_indices(steps.part.size, k=1)
+        rows, columns = self._couples
         costs = pair[rows, columns]
-        allowed = np.isfinite(costs)
-        rows, columns, costs = rows[allowed], columns[allowed], costs[allowed]
+        if costs.size > self.quads:
+            chosen = np.argpartition(costs, self.quads)[: self.quads]
+            rows, columns, costs = rows[chosen], columns[chosen], costs[chosen]
+        possible = np.isfinite(costs)
+        a, b, costs = rows[possible], columns[possible], costs[possible]
         if costs.size < 2:
             return None
-        count = min(self.quads, costs.size - 1)
-        chosen = np.argpartition(costs, count)[:count]
-        a, b = rows[chosen], columns[chosen]
-        joint = steps.effects[:, a] + steps.effects[:, b]
-        total = 2 * (joint.T @ joint) + costs[chosen][:, None] + costs[chosen][None, :]
-        for left in (steps.part[a], steps.part[b]):
-            for right in (steps.part[a], steps.part[b]):
-                total[np.equal.outer(left, right)] = np.inf
+        effects = self.model.matrix[:, self._part] * change
+        joint = effects[:, a] + effects[:, b]
+        total = 2 * (joint.T @ joint)
+        total += costs
+        total += costs[:, None]
+        used = np.zeros((costs.size, index.size))
+        each = np.arange(costs.size)
+        used[each, self._part[a]] = used[each, self._part[b]] = FAR
+        total += used @ used.T
         best = int(np.argmin(total))
         if not total.flat[best] < gain:
             return None
-        i, j = divmod(best, count)
-        moved = steps.taken(index, int(a[i]), int(b[i]), int(a[j]), int(b[j]))
+        i, j = divmod(best, costs.size)
+        moved = self._taken(index, int(a[i]), int(b[i]), int(a[j]), int(b[j]))
         enough = self.supply is None or self.supply.suffices(moved)
         return moved if enough else None
 
-    def _steps_from(self, index: Index) -> _Steps:
-        """The steps that stay within the lists of values, and what each does."""
-        target = index[self._part] + self._step
-        inside = (target >= 0) & (target < self.grid.counts[self._part])
-        inside &= ~self.grid.fine[self._part]
-        part, step, target = self._part[inside], self._step[inside], target[inside]
-        change = self.grid.logs[part, target] - self.grid.logs_at(index)[part]
-        return _Steps(part, step, self.model.matrix[:, part] * change)
-
-
-@dataclass(frozen=True, eq=False)
-class _Steps:
-    """Possible steps: of which part, how many places, and the change of the residual (K, n)."""
-
-    part: Index
-    step: Index
-    effects: Real
-
-    def taken(self, index: Index, *moves: int) -> Index:
+    def _taken(self, index: Index, *moves: int) -> Index:
         """`index` after some of the steps, each of another part."""
         out = index.copy()
         for move in moves:
-            out[self.part[move]] += self.step[move]
+            out[self._part[move]] += self._step[move]
         return out

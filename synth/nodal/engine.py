@@ -10,6 +10,7 @@ from __future__ import annotations
 
 import contextlib
 from dataclasses import dataclass, replace
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -17,7 +18,7 @@ from numpy.typing import NDArray
 from synth.errors import NumericalError
 from synth.nodal import dense
 from synth.nodal.plan import Plan, plan
-from synth.nodal.reduction import Reduction, quantities
+from synth.nodal.reduction import REMEMBERED, Reduction, quantities
 from synth.nodal.region import Boards, Region
 from synth.nodal.structure import Structure
 
@@ -157,7 +158,7 @@ def choose_engine(
     except NumericalError:
         return none
     quantity = quantities(structure, boards.values, boards.gain_bandwidth, boards.open_loop_gain)
-    for candidate in sorted(_candidates(system, wanted), key=lambda p: p.tape.cost):
+    for candidate in _candidates(system, wanted):
         with np.errstate(all="ignore"):
             solved = candidate.solve(quantity, s)[:, board, point].T
         if _is_accurate(solved, exact[:, columns], rounding[:, columns]):
@@ -198,8 +199,10 @@ class LazyEngine:
         return self._engine.solve(boards, s)
 
 
-def _candidates(system: Reduction, wanted: tuple[int, ...]) -> list[Plan]:
-    """Plans to measure: with free pivots for one unknown, along the signal flow for any."""
+@lru_cache(maxsize=REMEMBERED)
+def _candidates(system: Reduction, wanted: tuple[int, ...]) -> tuple[Plan, ...]:
+    """Plans to measure, the cheapest first: with free pivots for one unknown, along the signal
+    flow for any."""
     drawn = []
     if len(wanted) == 1:
         drawn += [plan(system, wanted, np.random.default_rng(k)) for k in range(TRIES)]
@@ -208,7 +211,7 @@ def _candidates(system: Reduction, wanted: tuple[int, ...]) -> list[Plan]:
             plan(system, wanted, np.random.default_rng(k), along_flow=True)
             for k in range(FLOW_TRIES)
         ]
-    return drawn
+    return tuple(sorted(drawn, key=lambda p: p.tape.cost))
 
 
 def _is_accurate(solved: Complex, exact: Complex, rounding: Real) -> bool:

@@ -14,18 +14,22 @@ from __future__ import annotations
 
 from collections import defaultdict
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
 
-from synth.nodal.structure import Structure
+from synth.nodal.structure import Structure, Wiring
 
-__all__ = ["DEGREE", "Entry", "Reduction", "quantities", "reduce"]
+__all__ = ["DEGREE", "REMEMBERED", "Entry", "Reduction", "quantities", "reduce"]
 
 Real = NDArray[np.float64]
 
 DEGREE = 2
 """Largest power of s in an entry: a capacitor times the pole of one op-amp."""
+
+REMEMBERED = 64
+"""Wirings remembered with what follows from them: a design compiles the same one many times."""
 
 Entry = dict[tuple[int, int, int], int]
 """Integer coefficients by (power of s, quantity i, quantity j), i <= j."""
@@ -86,10 +90,7 @@ class Reduction:
 
     def transposed(self, observed: int) -> Reduction:
         """The system whose unknowns psi solve M^T psi = unit vector at column `observed`."""
-        entries = {(c, r): entry for (r, c), entry in self.entries.items() if c != self.source}
-        entries[observed, self.source] = {(0, 0, 0): -1}
-        flow = {column: row for row, column in self.flow.items()}
-        return Reduction(self.columns, self.rows, self.source, entries, (), flow)
+        return _transposed(self, observed)
 
 
 def quantities(structure: Structure, values: Real, gain_bandwidth: Real, gain: Real) -> Real:
@@ -100,23 +101,37 @@ def quantities(structure: Structure, values: Real, gain_bandwidth: Real, gain: R
 
 
 def reduce(structure: Structure) -> Reduction:
-    """Take the op-amps' input nets out of the nodal equations."""
-    n = structure.size
-    voltages, pairs = _taken_out(structure)
+    """Take the op-amps' input nets out of the nodal equations; the same object for circuits wired
+    alike, as long as it is remembered."""
+    return _reduced(structure.wiring)
+
+
+@lru_cache(maxsize=REMEMBERED)
+def _transposed(system: Reduction, observed: int) -> Reduction:
+    entries = {(c, r): entry for (r, c), entry in system.entries.items() if c != system.source}
+    entries[observed, system.source] = {(0, 0, 0): -1}
+    flow = {column: row for row, column in system.flow.items()}
+    return Reduction(system.columns, system.rows, system.source, entries, (), flow)
+
+
+@lru_cache(maxsize=REMEMBERED)
+def _reduced(wiring: Wiring) -> Reduction:
+    n = wiring.size
+    voltages, pairs = _taken_out(wiring)
     taken = {net for _, net in pairs}
     used = {k for k, _ in pairs}
-    add = _Adder(len(structure.refs), len(structure.amplifiers))
+    add = _Adder(len(wiring.ends), len(wiring.pins))
     rows: dict[int, dict[int, Entry]] = {}
-    for k, (plus, minus, out) in enumerate(structure.pins):
+    for k, (plus, minus, out) in enumerate(wiring.pins):
         if k not in used:
-            row = rows.setdefault(int(out), defaultdict(dict))
+            row = rows.setdefault(out, defaultdict(dict))
             add(row, voltages[plus], 1)
             add(row, voltages[minus], -1)
-            add(row, {int(out): {k: 1}}, -1)
-    for part, ends in enumerate(structure.ends):
-        load = (1 + part, 0 if structure.is_resistor[part] else 1)
-        for p, q in ((int(ends[0]), int(ends[1])), (int(ends[1]), int(ends[0]))):
-            if p < n and p not in structure.driver:
+            add(row, {out: {k: 1}}, -1)
+    for part, (one, other) in enumerate(wiring.ends):
+        load = (1 + part, 0 if wiring.is_resistor[part] else 1)
+        for p, q in ((one, other), (other, one)):
+            if p < n and p not in wiring.driver:
                 row = rows.setdefault(p, defaultdict(dict))
                 add(row, voltages[p], 1, load)
                 add(row, voltages[q], -1, load)
@@ -127,25 +142,25 @@ def reduce(structure: Structure) -> Reduction:
             if kept:
                 entries[r, c] = kept
     columns = tuple(c for c in range(n) if c not in taken)
-    flow = {r: r for r in rows} | {net: int(structure.pins[k, 2]) for k, net in pairs}
+    flow = {r: r for r in rows} | {net: wiring.pins[k][2] for k, net in pairs}
     return Reduction(tuple(sorted(rows)), columns, n, entries, tuple(pairs), flow)
 
 
-def _taken_out(structure: Structure) -> tuple[list[_Voltage], list[tuple[int, int]]]:
+def _taken_out(wiring: Wiring) -> tuple[list[_Voltage], list[tuple[int, int]]]:
     """Every net as a combination of the unknowns that stay, and the (op-amp, net) pairs used."""
-    n = structure.size
+    n = wiring.size
     voltages: list[_Voltage] = [{k: {-1: 1}} for k in range(n + 1)]
     voltages.append({})  # ground
     pairs: list[tuple[int, int]] = []
-    for k, (plus, minus, out) in enumerate(structure.pins):
+    for k, (plus, minus, out) in enumerate(wiring.pins):
         equation: _Voltage = defaultdict(lambda: defaultdict(int))
         for voltage, sign in ((voltages[plus], 1), (voltages[minus], -1), ({out: {k: 1}}, -1)):
             for column, terms in voltage.items():
                 for a, coefficient in terms.items():
-                    equation[int(column)][a] += sign * coefficient
-        for net in (int(minus), int(plus)):
+                    equation[column][a] += sign * coefficient
+        for net in (minus, plus):
             terms = {a: c for a, c in equation.get(net, {}).items() if c}
-            fixed = net >= n or net in structure.driver or net == structure.output
+            fixed = net >= n or net in wiring.driver or net == wiring.output
             if fixed or set(terms) != {-1} or abs(terms[-1]) != 1:
                 continue
             _substitute(voltages, net, equation, terms[-1])

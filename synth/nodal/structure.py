@@ -22,7 +22,26 @@ from numpy.typing import NDArray
 from synth.circuit import GROUND, Circuit
 from synth.errors import CircuitError
 
-__all__ = ["Structure", "structure_of"]
+__all__ = ["Structure", "Wiring", "structure_of"]
+
+
+@dataclass(frozen=True)
+class Wiring:
+    """What of a structure does not depend on values or names; circuits alike share it.
+
+    `size` is the number of unknown nets; the others are as in `Structure`.
+    """
+
+    size: int
+    ends: tuple[tuple[int, ...], ...]
+    is_resistor: tuple[bool, ...]
+    pins: tuple[tuple[int, ...], ...]
+    output: int
+
+    @cached_property
+    def driver(self) -> dict[int, int]:
+        """Op-amp that drives a net, by column."""
+        return {pins[2]: k for k, pins in enumerate(self.pins)}
 
 
 @dataclass(frozen=True, eq=False)
@@ -73,7 +92,18 @@ class Structure:
     @cached_property
     def driver(self) -> dict[int, int]:
         """Op-amp that drives a net, by column."""
-        return {int(out): k for k, out in enumerate(self.pins[:, 2])}
+        return self.wiring.driver
+
+    @cached_property
+    def wiring(self) -> Wiring:
+        """What depends neither on values nor on names."""
+        return Wiring(
+            size=self.size,
+            ends=tuple(map(tuple, self.ends.tolist())),
+            is_resistor=tuple(self.is_resistor.tolist()),
+            pins=tuple(map(tuple, self.pins.tolist())),
+            output=self.output,
+        )
 
     def column(self, net: str) -> int:
         """Column of a net.

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import replace
 
 import control
@@ -35,6 +36,39 @@ def test_published_margins() -> None:
     assert 10 ** (found.gain_margin_db / 20) == pytest.approx(gm, rel=1e-6)
     assert found.phase_margin_deg == pytest.approx(pm, rel=1e-6)
     assert 2 * np.pi * found.crossover_hz == pytest.approx(wc, rel=1e-6)
+
+
+@pytest.mark.parametrize(
+    ("num", "den"),
+    [
+        ([25], [1, 10, 10, 10]),
+        ([3, 3], [0.1, 1, 0, 0]),
+        ([0.8], [1, 0.05, 1, 0]),
+        ([2, 1], [1, 0.4, 4, 1]),
+        ([40], [0.01, 1, 1]),
+    ],
+)
+def test_disk_margin_is_that_of_python_control(num: list[float], den: list[float]) -> None:
+    """python-control's `disk_margins`, balanced (skew 0), on a grid dense enough for 1e-4."""
+    found = loop_margins(loop_of(num, den), ONE)
+    stable = np.roots(np.polyadd(num, den)).real.max() < 0
+    assert found.unstable_poles == (0 if stable else 2)
+    if stable:
+        disk, _, _ = control.disk_margins(control.tf(num, den), np.logspace(-2, 3, 200_001))
+        assert found.disk_margin == pytest.approx(disk, rel=1e-4)
+    else:
+        assert found.disk_margin == 0
+
+
+@pytest.mark.parametrize(("ratio", "lead"), [(3, 30), (4, 36.870), (5, 41.810), (10, 54.903)])
+def test_a_lead_network_adds_its_largest_phase_to_the_margin(ratio: float, lead: float) -> None:
+    """asin((a - 1)/(a + 1)) of a lead network of ratio a (textbook relation, from memory): with an
+    integrator that crosses 1 where the phase of the network is largest."""
+    root = math.sqrt(ratio)
+    network = TransferFunction.from_polynomials([1, 1 / root], [1 / root, 1])
+    found = loop_margins(loop_of([1], [1, 0]), network)
+    assert 2 * np.pi * found.crossover_hz == pytest.approx(1, rel=1e-9)
+    assert found.phase_margin_deg == pytest.approx(90 + lead, abs=6e-4)
 
 
 def test_delay_is_exact() -> None:
