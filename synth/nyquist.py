@@ -49,6 +49,7 @@ def unstable_poles(
     *,
     delay: float = 0.0,
     asked: Complex | None = None,
+    excess: int = 0,
 ) -> int | None:
     """How many closed-loop poles lie in the right half-plane; None where that is not decided.
 
@@ -66,6 +67,8 @@ def unstable_poles(
         L with H(s) itself on the grid, where `response` has a board instead.  The finite gain
         of op-amps turns a pole at the origin into one close to it; below the frequency from
         which the board is like H(s) nothing is counted.
+    excess
+        How many poles the board has right of the axis beyond those of H(s).
     """
     if asked is not None:
         if not is_decidable(parts[1]):
@@ -76,7 +79,7 @@ def unstable_poles(
     elif delay and sum(tf.relative_degree for tf in parts) <= 0 and abs(value[-1]) >= 1:
         return None
     turn = _turn(response, grid, value, parts)
-    return None if turn is None else round(turns_due(parts) - turn / math.pi)
+    return None if turn is None else round(turns_due(parts) + excess - turn / math.pi)
 
 
 def is_decidable(target: TransferFunction) -> bool:

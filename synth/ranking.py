@@ -181,7 +181,7 @@ def _figures(
         peak=hottest.peak,
         hottest=hottest.amplifier,
         gain_bandwidth_needed=gain_bandwidth_needed(
-            circuit, response, frequency_hz, accept=job.accept
+            circuit, response, frequency_hz, accept=job.accept, wanted=job.target
         ),
         missed=tuple(_missed(c) for c in checks if not c.passed),
     )
