@@ -151,7 +151,7 @@ def test_offset_and_bias_move_outputs_as_predicted(design, simulator, output):
 
 def test_a_square_wave_all_but_reaches_the_bound_for_any_input(simulator):
     """Op-amps raise the Q of a resonance, and what bounds every waveform must know them: with ideal
-    ones in their place the bound would lie 15 % below what ngspice shows."""
+    ones in their place the bound would lie 12 % lower at the output."""
     pair = Factor.pair(2 * np.pi * 3e3, 5.0)
     target = TransferFunction.from_factors(2 * pair.natural_frequency**2, [], [pair])
     slow = {"gain_bandwidth": 5e5}
