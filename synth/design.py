@@ -49,10 +49,6 @@ SMALL_CAPACITOR = 100e-12
 LOW_SHARE = 0.9
 
 DEFAULT_BOARDS = 10_000
-LOOP_BOARDS = 1000
-"""Most boards of the run whose loop is looked at, the first ones: a loop takes about 1 ms, some 15
-times what the response of its board takes, and so many tell a share to within about 3 %."""
-
 DEFAULT_SEED = 1
 
 # Below this share of the usual work the search hardly begins.
@@ -188,7 +184,7 @@ def judged_design(
     worst = worst_case(circuit, response, frequency)
     progress("limits", 0, 1)
     swing = swings(circuit, wanted, job)
-    loop = _loop(job, program, sketch.polarity.output_inverted, boards=boards, seed=seed)
+    loop = _loop(job, program, sketch, boards=boards, seed=seed, progress=progress)
     nominal = response_error(program.solve(frequency), response)
     return Design(
         job=job,
@@ -221,10 +217,16 @@ def judged_design(
 
 
 def _loop(
-    job: Job, program: NodalProgram, inverted: bool, *, boards: int, seed: int
+    job: Job,
+    program: NodalProgram,
+    sketch: Sketch,
+    *,
+    boards: int,
+    seed: int,
+    progress: Progress,
 ) -> LoopResult | None:
     """Margins of the job's loop, those over the run of boards among them."""
-    circuit = program.circuit
+    circuit, inverted = program.circuit, sketch.polarity.output_inverted
     found = loop_of_board(job, circuit, inverted=inverted)
     if job.loop is None or found is None:
         return None
@@ -234,9 +236,10 @@ def _loop(
         job.loop,
         job.target,
         inverted=inverted,
-        boards=min(boards, LOOP_BOARDS),
+        boards=boards,
         seed=seed,
         population=job.board.population,
+        progress=lambda done, total: progress("loops", done, total),
     )
     return replace(found, boards=run)
 

@@ -58,12 +58,18 @@ def drawn_values(
 
 
 def drawn_blocks(
-    circuit: Circuit, population: Population | None = None, *, boards: int, seed: int
+    circuit: Circuit,
+    population: Population | None = None,
+    *,
+    boards: int,
+    seed: int,
+    block: int | None = None,
 ) -> Iterator[tuple[int, int, Drawn]]:
-    """(first board, last + 1, boards) of a run, block by block."""
+    """(first board, last + 1, boards) of a run, `block` boards at once (None: `BLOCK`)."""
     source = BoardSource(circuit, population or Population(), seed)
-    for start in range(0, boards, BLOCK):
-        stop = min(start + BLOCK, boards)
+    step = block or BLOCK
+    for start in range(0, boards, step):
+        stop = min(start + step, boards)
         yield start, stop, source.draw(stop - start)
 
 

@@ -58,7 +58,7 @@ class Drawn:
     values: Real
     gain_bandwidth: Real | None = None
 
-    def part(self, which: slice) -> Drawn:
+    def part(self, which: slice | Places) -> Drawn:
         """Some of these boards."""
         gain_bandwidth = self.gain_bandwidth
         return Drawn(self.values[which], None if gain_bandwidth is None else gain_bandwidth[which])

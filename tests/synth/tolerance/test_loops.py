@@ -12,9 +12,13 @@ from synth.loop import loop_margins
 from synth.nodal import compile_circuit
 from synth.population import Population
 from synth.tolerance import BoardSource, board_margins, loop_yield_check, run_loops
+from synth.tolerance import loops as loops_module
 from synth.tolerance.drawing import Drawn
+from synth.tolerance.loopblock import scanned_margins
+from synth.tolerance.loopscan import LoopScan
+from synth.tolerance.loopsweep import LoopSweep
 from synth.transfer import Factor, TransferFunction
-from tests.circuits import figures, tow_thomas
+from tests.circuits import figures, integrator, tow_thomas
 
 RESISTANCE, CAPACITANCE = 10e3, 1.59e-9
 W0 = 1 / (RESISTANCE * CAPACITANCE)
@@ -72,6 +76,7 @@ PLANTS = {
     "a delayed gain": ([0.6], [1], 3e-6),
     "an unstable one": ([4e4], [1, -1e4], 0.0),
     "a resonance": ([2e9], [1, 200, 1e9], 0.0),
+    "a lossless resonance": ([2e9], [1, 0, 1e9], 0.0),
     "a small gain": ([0.01], [1], 0.0),
     "one that blocks DC": ([1e-4, 0], [1e-5, 1], 0.0),
 }
@@ -189,3 +194,106 @@ def test_poles_of_h_on_the_imaginary_axis_leave_the_count_open() -> None:
     found = board_margins(compile_circuit(circuit), loop, target, drawn)
     assert np.isnan(found.unstable_poles).all()
     assert not found.stable.any()
+
+
+def edge(q: float):
+    """A loop whose nominal board is all but on the edge, as above."""
+    circuit, target = resonator(q)
+    a = W0 / 3
+    k = (W0 / q + a) * (W0**2 + a * W0 / q) / (a * W0**2) - 1
+    plant = TransferFunction.from_polynomials([float(np.sign(target.gain)) * k * a], [1, a])
+    return circuit, target, Loop(plant=plant)
+
+
+def scan_of(circuit, loop, target, drawn):
+    sweep = LoopSweep.of(compile_circuit(circuit), loop, target, 1.0)
+    return LoopScan.of(sweep, drawn.part(slice(0, 20)))
+
+
+@pytest.mark.parametrize("q", [0.7, 3.0, 14.0])
+def test_the_scan_counts_poles_as_the_dense_grid_does(q: float) -> None:
+    """On the edge of stability, where nearly every board has its turns counted: the grid is the
+    second method.  The scan follows its boards by itself."""
+    circuit, target, loop = edge(q)
+    drawn = spread(circuit, 300)
+    scan = scan_of(circuit, loop, target, drawn)
+    apart = scan.apart(drawn)
+    assert scan.follows(apart, scan.panels.high_orders(apart)).mean() > 0.97
+    found, expected = scanned_margins(scan, drawn), scan.sweep.margins(drawn)
+    np.testing.assert_array_equal(found[4], expected[4])
+    assert 0.05 < (found[4] == 0).mean() < 0.95
+    np.testing.assert_allclose(found[2], expected[2], rtol=1e-3, atol=1e-3)
+
+
+@pytest.mark.parametrize("gain", [0.9, 1.0, 1.1])
+@pytest.mark.parametrize("delay", [0.0, 3e-6])
+def test_a_pole_of_h_at_the_origin_is_counted_as_in_each_loop(gain: float, delay: float) -> None:
+    """The finite gain of the op-amp moves it off; integrator and two lags at the limit of Routh,
+    2 a = w0 k, of 0.9 to 1.1 times that gain."""
+    resistance, capacitance = 10e3, 10e-9
+    circuit = integrator(figures(gain_bandwidth=1e6, open_loop_gain=1e3), resistance, capacitance)
+    target = TransferFunction.from_polynomials([-1 / (resistance * capacitance)], [1, 0])
+    a = 0.3 / (resistance * capacitance)
+    k = -2 * a * resistance * capacitance * gain
+    loop = Loop(
+        plant=TransferFunction.from_polynomials([k * a * a], [1, 2 * a, a * a]), delay=delay
+    )
+    drawn = spread(circuit, 12)
+    scan = scan_of(circuit, loop, target, drawn)
+    expected = one_by_one(circuit, loop, target, drawn)
+    found = scanned_margins(scan, drawn)
+    np.testing.assert_array_equal(found[4], expected[4])
+    np.testing.assert_allclose(found[:4], expected[:4], rtol=1e-5, atol=1e-6)
+    if gain != 1.0:
+        assert set(found[4]) == ({0.0} if gain < 1 else {2.0})
+
+
+def test_a_board_unlike_those_of_the_pilot_is_done_on_the_grid() -> None:
+    """One resonance far from all others: the panels are not made for it, its own coefficients say
+    so, and it comes out as on the grid, the others as if it was not there."""
+    circuit, target = resonator(12.0)
+    loop = Loop(plant=TransferFunction.from_polynomials([2e4], [1, 0]))
+    drawn = spread(circuit, 40)
+    far = drawn.values.copy()
+    far[30] *= 1.35
+    changed = Drawn(far, drawn.gain_bandwidth)
+    scan = scan_of(circuit, loop, target, drawn)
+    apart = scan.apart(changed)
+    followed = scan.follows(apart, scan.panels.high_orders(apart))
+    assert np.flatnonzero(~followed).tolist() == [30]
+    found = scanned_margins(scan, changed)
+    np.testing.assert_array_equal(
+        found[:, 30], scan.sweep.margins(changed.part(slice(30, 31)))[:, 0]
+    )
+    others = np.arange(40) != 30
+    np.testing.assert_allclose(
+        found[:, others], scanned_margins(scan, drawn)[:, others], rtol=1e-9, atol=1e-9
+    )
+
+
+@pytest.mark.parametrize("q", [0.8, 12.0])
+def test_margins_do_not_hang_on_the_size_of_a_block(monkeypatch, q: float) -> None:
+    """Places are looked at by bounds over a block: no board may lose a crossing to another."""
+    circuit, target, loop = edge(q)
+    drawn = spread(circuit, 90)
+    program = compile_circuit(circuit)
+    whole = board_margins(program, loop, target, drawn)
+    monkeypatch.setattr(loops_module, "BLOCK", 7)
+    parts = board_margins(program, loop, target, drawn)
+    for name in NAMES:
+        np.testing.assert_allclose(
+            getattr(parts, name), getattr(whole, name), rtol=1e-9, atol=1e-9, err_msg=name
+        )
+
+
+def test_responses_too_sharp_for_a_scan_are_run_on_the_first_boards(monkeypatch) -> None:
+    """At Q = 1000 no board is like another; the number of boards is said."""
+    circuit, target = resonator(1e3)
+    loop = Loop(plant=TransferFunction.from_polynomials([0.01], [1]))
+    grid = LoopSweep.of(compile_circuit(circuit), loop, target, 1.0).grid
+    monkeypatch.setattr(loops_module, "WORK", 3 * grid.size)
+    options = {"inverted": False, "seed": SEED}
+    run = run_loops(compile_circuit(circuit), circuit, loop, target, boards=8, **options)
+    assert run.boards == 3
+    few = run_loops(compile_circuit(circuit), circuit, loop, target, boards=2, **options)
+    assert few.boards == 2
