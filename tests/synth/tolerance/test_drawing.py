@@ -19,7 +19,8 @@ from synth.errors import JobError
 from synth.nodal import compile_circuit
 from synth.population import Network, PartSpread, Population
 from synth.tolerance import BoardSource, check_networks
-from synth.tolerance.drawing import packages_of, within_tolerance
+from synth.tolerance.drawing import within_tolerance
+from synth.tolerance.makeup import packages_of
 from tests.synth.nodal.boards import amplifier, capacitor, chain, op_amp, resistor
 
 BOARDS = 20_000
