@@ -23,7 +23,7 @@ from synth.choosing import DEFAULT_EFFORT, Choice
 from synth.choosing.supply import allotted
 from synth.circuit import Circuit
 from synth.errors import JobError
-from synth.evidence import response_error
+from synth.evidence import ResponseError, response_error
 from synth.grid import judging_frequencies
 from synth.job import Job
 from synth.limits import drifts, swings
@@ -31,7 +31,7 @@ from synth.loop import checked_loop
 from synth.nodal import NodalProgram, compile_circuit
 from synth.noise import output_noise
 from synth.ranking import Mapper, rank_forms
-from synth.results import Candidate, Design, LoopResult, Swing
+from synth.results import Candidate, Design, ErrorBudget, LoopResult, Swing
 from synth.tolerance import error_budget, run_boards, run_loops
 from synth.values import ValueSearch, level_ratios, wanted_of
 from synth.worstcase import worst_case
@@ -204,7 +204,7 @@ def judged_design(
         checks=(yield_check(tolerance, job), *board_checks(job, circuit, swing, loop)),
         offset=_offset(circuit),
         certificate=choice.certificate,
-        budget=error_budget(program, circuit, nominal, frequency, accept=job.accept, seed=seed),
+        budget=_budget(job, program, nominal, frequency, seed),
         worst=worst,
         loop=loop,
         notices=(
@@ -242,6 +242,21 @@ def _loop(
         progress=lambda done, total: progress("loops", done, total),
     )
     return replace(found, boards=run)
+
+
+def _budget(
+    job: Job, program: NodalProgram, nominal: ResponseError, frequency: Real, seed: int
+) -> ErrorBudget:
+    """What values and the population of the job take of the error."""
+    return error_budget(
+        program,
+        program.circuit,
+        nominal,
+        frequency,
+        accept=job.accept,
+        seed=seed,
+        population=job.board.population,
+    )
 
 
 def _notices(
