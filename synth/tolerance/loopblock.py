@@ -52,27 +52,30 @@ SHRINKS, SHRINK = 3, 8.0
 """Rounds of the search for the place nearest to -1, and by what its steps shrink."""
 
 
-def scanned_margins(scan: LoopScan, drawn: Drawn) -> Real:
+def scanned_margins(scan: LoopScan, drawn: Drawn, excess: Index | None = None) -> Real:
     """As `LoopSweep.margins`."""
+    if excess is None:
+        excess = np.zeros(len(drawn.values), dtype=np.intp)
     apart = scan.apart(drawn)
     high = scan.panels.high_orders(apart)
     followed = scan.follows(apart, high)
     out, left = np.empty((5, followed.size)), ~followed
     kept = np.flatnonzero(followed)
     if kept.size:
-        out[:, kept], left[kept] = _scanned(scan, apart[kept], high[kept])
+        out[:, kept], left[kept] = _scanned(scan, apart[kept], high[kept], excess[kept])
     rest = np.flatnonzero(left)
     if rest.size:
-        out[:, rest] = scan.sweep.margins(drawn.part(rest))
+        out[:, rest] = scan.sweep.margins(drawn.part(rest), excess[rest])
     return out
 
 
-def _scanned(scan: LoopScan, apart: Complex, high: Complex) -> tuple[Real, Mask]:
+def _scanned(scan: LoopScan, apart: Complex, high: Complex, excess: Index) -> tuple[Real, Mask]:
     """The five results of boards that are followed, and those that are not settled."""
     bounds = scan.panels.bounds(apart, high)
     widest = bounds.max(axis=0)[scan.panel_of_point]
     boards = _Boards(scan, apart, apart + scan.nominal, widest)
     poles, unsettled = boards.unstable(bounds)
+    poles += excess
     crossover, phase = boards.phase()
     gain = boards.gain()
     stable = poles == 0

@@ -26,6 +26,7 @@ from synth.tolerance.interval import clopper_pearson
 from synth.tolerance.loopblock import scanned_margins
 from synth.tolerance.loopscan import LoopScan
 from synth.tolerance.loopsweep import LoopSweep
+from synth.tolerance.oscillation import OscillationWatch
 from synth.transfer import TransferFunction
 
 __all__ = ["BoardMargins", "board_margins", "loop_yield_check", "run_loops"]
@@ -147,9 +148,13 @@ def _margins_of(
     """What finds the margins of boards like those of the pilot, and of how many it should."""
     sweep = LoopSweep.of(program, loop, target, -1.0 if inverted else 1.0)
     scan = LoopScan.of(sweep, pilot)
-    if scan is None:
-        return sweep.margins, max(WORK // sweep.grid.size, 1)
-    return partial(scanned_margins, scan), sys.maxsize
+    found = sweep.margins if scan is None else partial(scanned_margins, scan)
+    watch = OscillationWatch(program, target)
+
+    def margins(drawn: Drawn) -> Real:
+        return found(drawn, watch.excess(drawn))
+
+    return margins, max(WORK // sweep.grid.size, 1) if scan is None else sys.maxsize
 
 
 def loop_yield_check(found: LoopBoards) -> Check:

@@ -100,18 +100,21 @@ class LoopSweep:
         """L of the nominal board."""
         return loop_response(self.loop, lambda f: self.sign * self.program.solve(f))(frequency_hz)
 
-    def margins(self, drawn: Drawn) -> Real:
+    def margins(self, drawn: Drawn, excess: Index | None = None) -> Real:
         """Crossover [Hz], phase margin [deg], gain margin [dB], disk margin and unstable poles of
-        the boards drawn, shape (5, boards); NaN where `LoopMargins` has None."""
+        the boards drawn, shape (5, boards); NaN where `LoopMargins` has None.  `excess` is how many
+        poles each board by itself has right of the axis beyond those of H(s); None: none."""
+        if excess is None:
+            excess = np.zeros(len(drawn.values), dtype=np.intp)
         count = max(1, HELD // self.grid.size)
-        starts = range(0, len(drawn.values), count)
-        rows = [self._margins(drawn.part(slice(start, start + count))) for start in starts]
+        parts = [slice(k, k + count) for k in range(0, len(drawn.values), count)]
+        rows = [self._margins(drawn.part(part), excess[part]) for part in parts]
         return np.concatenate(rows, axis=1)
 
-    def _margins(self, drawn: Drawn) -> Real:
+    def _margins(self, drawn: Drawn, excess: Index) -> Real:
         ratio = self.boards(self.grid, drawn) / self.nominal
         value = self.reference * ratio
-        poles = self._unstable(ratio, value, drawn)
+        poles = self._unstable(ratio, value, drawn) + excess
         crossover, phase = self._phase(ratio, value)
         gain = self._gain(ratio, value)
         stable = poles == 0

@@ -93,8 +93,15 @@ class Panels:
     def at(self, values: Complex, function: Index, x: Real) -> Complex:
         """Function `function[k]` at `x[k]`."""
         panel = self.panel_of(x)
-        found = values[function[:, None], self.members[panel]]
-        return np.asarray(np.einsum("kn,kn->k", found, self.weights(x, panel)))
+        weights = self.weights(x, panel)
+        out = np.empty(x.size, dtype=complex)
+        for k in np.unique(panel):
+            here = np.flatnonzero(panel == k)
+            # Pairs of real and imaginary parts: half the products of complex numbers.
+            own = values[function[here], DEGREE * k : DEGREE * (k + 1) + 1]
+            pairs = own.view(float).reshape(*own.shape, 2)
+            out[here] = np.einsum("knc,kn->kc", pairs, weights[here]).view(complex)[:, 0]
+        return out
 
     def everywhere(self, values: Complex, x: Real) -> Complex:
         """All functions at the same `x` in rising order, shape (functions, x)."""
@@ -110,7 +117,10 @@ class Panels:
 
     def high_orders(self, values: Complex) -> Complex:
         """Coefficients of T_k with k above `HALF`, shape (functions, panels, DEGREE - HALF)."""
-        return np.asarray(values[:, self.members] @ _COEFFICIENTS[HALF + 1 :].T)
+        own = values[:, self.members].reshape(-1, DEGREE + 1)
+        matrix = _COEFFICIENTS[HALF + 1 :].T
+        found = own.real @ matrix + 1j * (own.imag @ matrix)
+        return found.reshape(len(values), self.count, DEGREE - HALF)
 
     def bounds(self, values: Complex, high_orders: Complex) -> Real:
         """What no function exceeds in a panel, shape (functions, panels)."""

@@ -11,11 +11,12 @@ from synth.job import Loop
 from synth.loop import loop_margins
 from synth.nodal import compile_circuit
 from synth.population import Population
+from synth.stability import poles_on_the_right, right_of_target
 from synth.tolerance import BoardSource, board_margins, loop_yield_check, run_loops
 from synth.tolerance import loops as loops_module
 from synth.tolerance.drawing import Drawn
 from synth.tolerance.loopblock import scanned_margins
-from synth.tolerance.loopscan import LoopScan
+from synth.tolerance.loopscan import KEPT, LoopScan
 from synth.tolerance.loopsweep import LoopSweep
 from synth.transfer import Factor, TransferFunction
 from tests.circuits import figures, integrator, tow_thomas
@@ -48,9 +49,18 @@ def spread(circuit, boards: int):
 def one_by_one(circuit, loop, target, drawn, *, sign=1.0):
     """The same from `loop_margins` with the circuit of each board, shape (5, boards)."""
     programs = [compile_circuit(made) for made in circuits_of(circuit, drawn)]
-    found = [loop_margins(loop, target, lambda f, p=p: sign * p.solve(f)) for p in programs]
+    found = [
+        loop_margins(loop, target, lambda f, p=p: sign * p.solve(f), excess=excess_of(p, target))
+        for p in programs
+    ]
     return np.array([[np.nan if getattr(m, n) is None else getattr(m, n) for m in found]
                      for n in NAMES], dtype=float)  # fmt: skip
+
+
+def excess_of(program, target):
+    """Poles right of the axis beyond those of H(s)."""
+    right = int(poles_on_the_right(program.poles()[None], target)[0])
+    return right - right_of_target(target)
 
 
 def circuits_of(circuit, drawn):
@@ -211,6 +221,27 @@ def scan_of(circuit, loop, target, drawn):
 
 
 @pytest.mark.parametrize("q", [0.7, 3.0, 14.0])
+@pytest.mark.parametrize("gain", [0.3, 1.0])
+def test_the_scan_knows_every_board_everywhere(q: float, gain: float) -> None:
+    """Second method: boards solved at frequencies of no grid, all over the range.  What the scan
+    says of ln H there is right to what it promises of every board it keeps."""
+    circuit, target, loop = edge(q)
+    numerator, denominator = loop.plant.numerator, loop.plant.denominator
+    scaled = [gain * float(c) for c in numerator], [float(c) for c in denominator]
+    plant = TransferFunction.from_polynomials(*scaled)
+    drawn = spread(circuit, 60)
+    scan = scan_of(circuit, Loop(plant=plant), target, drawn)
+    apart = scan.apart(drawn)
+    kept = np.flatnonzero(scan.follows(apart, scan.panels.high_orders(apart)))
+    x = np.sort(np.random.default_rng(8).uniform(scan.x[0], scan.x[-1], 400))
+    found = scan.panels.everywhere((apart + scan.nominal)[kept], x)
+    exact = scan.sweep.boards(np.exp(x), drawn)[kept] / target.response(np.exp(x))
+    error = np.abs(np.exp(found) / exact - 1)
+    assert kept.size > 50
+    assert np.all(error <= 3 * KEPT * scan.scale[scan.panels.panel_of(x)])
+
+
+@pytest.mark.parametrize("q", [0.7, 3.0, 14.0])
 def test_the_scan_counts_poles_as_the_dense_grid_does(q: float) -> None:
     """On the edge of stability, where nearly every board has its turns counted: the grid is the
     second method.  The scan follows its boards by itself."""
@@ -269,6 +300,31 @@ def test_a_board_unlike_those_of_the_pilot_is_done_on_the_grid() -> None:
     np.testing.assert_allclose(
         found[:, others], scanned_margins(scan, drawn)[:, others], rtol=1e-9, atol=1e-9
     )
+
+
+@pytest.mark.parametrize("gain", [1e-3, 0.5])
+def test_boards_that_oscillate_by_themselves_are_counted(gain: float) -> None:
+    """A Q of 25 with op-amps of 100 times the resonance, whose 1/Q less 4/100 is 0: some boards
+    have their pair right of the axis, and a loop that hardly closes keeps it there.  That the
+    closed loop is stable is for the poles of each board and its own curve."""
+    circuit, target = resonator(25.0)
+    slow = replace(
+        circuit,
+        amplifiers=tuple(
+            replace(a, figures=replace(a.figures, gain_bandwidth=1e6)) for a in circuit.amplifiers
+        ),
+    )
+    plant = TransferFunction.from_polynomials([float(np.sign(target.gain)) * gain], [1e-5, 1])
+    loop, drawn = Loop(plant=plant), spread(slow, 40)
+    program = compile_circuit(slow)
+    found = board_margins(program, loop, target, drawn)
+    expected = one_by_one(slow, loop, target, drawn)
+    np.testing.assert_array_equal(found.unstable_poles, expected[-1])
+    by_itself = np.array([excess_of(compile_circuit(c), target) for c in circuits_of(slow, drawn)])
+    assert 0 < np.count_nonzero(by_itself) < 40
+    if gain < 0.01:
+        np.testing.assert_array_equal(found.unstable_poles, by_itself)
+    np.testing.assert_array_equal(found.disk_margin > 0, found.stable)
 
 
 @pytest.mark.parametrize("q", [0.8, 12.0])
