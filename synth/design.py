@@ -31,7 +31,7 @@ from synth.loop import checked_loop
 from synth.nodal import NodalProgram, compile_circuit
 from synth.noise import output_noise
 from synth.ranking import Mapper, rank_forms
-from synth.results import Candidate, Design, ErrorBudget, LoopResult, Swing
+from synth.results import Candidate, Design, ErrorBudget, LoopResult, Swing, ToleranceResult
 from synth.tolerance import error_budget, run_boards, run_loops
 from synth.values import ValueSearch, level_ratios, wanted_of
 from synth.worstcase import worst_case
@@ -178,6 +178,7 @@ def judged_design(
         boards=boards,
         seed=seed,
         population=job.board.population,
+        wanted=job.target,
         progress=lambda done, total: progress("boards", done, total),
     )
     progress("worst case", 0, 1)
@@ -208,10 +209,8 @@ def judged_design(
         worst=worst,
         loop=loop,
         notices=(
-            *job.notices,
-            *sketch.notices,
-            *choice.notices,
-            *_notices(circuit, job, swing, loop),
+            *(*job.notices, *sketch.notices, *choice.notices),
+            *(*_notices(circuit, job, swing, loop), *_oscillation(tolerance)),
         ),
     )
 
@@ -295,6 +294,16 @@ def _notices(
             f"only {run.passed} of {run.boards} boards give a stable loop within the margins"
         )
     return tuple(said)
+
+
+def _oscillation(run: ToleranceResult) -> tuple[str, ...]:
+    """A notice of boards that oscillate by themselves, which the nominal board need not do."""
+    if not run.unstable:
+        return ()
+    return (
+        f"{run.unstable} of {run.boards} boards are unstable by themselves: they oscillate "
+        "whatever their response over the band; faster op-amps or another form may help",
+    )
 
 
 def _offset(circuit: Circuit) -> float | None:

@@ -154,6 +154,7 @@ def _figures(
         boards=RANKED_BOARDS,
         seed=seed,
         population=job.board.population,
+        wanted=job.target,
     )
     swing = swings(circuit, wanted, job)
     nominal = ErrorFigures.of(response_error(program.solve(frequency_hz), response))

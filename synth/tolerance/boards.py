@@ -28,7 +28,9 @@ from synth.population import Population
 from synth.tolerance.drawing import BoardSource, Drawn
 from synth.tolerance.failures import DriverTally, FailureTally, Place
 from synth.tolerance.interval import clopper_pearson
+from synth.tolerance.oscillation import OscillationWatch
 from synth.tolerance.percentiles import RowPercentiles, percentiles_of_rows
+from synth.transfer import TransferFunction
 
 __all__ = ["drawn_blocks", "drawn_values", "run_boards", "tolerances_of"]
 
@@ -85,8 +87,10 @@ def run_boards(
     population: Population | None = None,
     progress: Callable[[int, int], None] | None = None,
     confidence: float = 0.95,
+    wanted: TransferFunction | None = None,
 ) -> ToleranceResult:
-    """Run `boards` boards and count those whose error keeps both limits at every frequency.
+    """Run `boards` boards and count those whose error keeps both limits at every frequency and
+    that are stable by themselves.
 
     Parameters
     ----------
@@ -108,6 +112,8 @@ def run_boards(
         Called with (boards done, boards) as the run goes on.
     confidence
         Of the interval of the yield.
+    wanted
+        H(s), whose poles tell where those of a board belong; None: nobody looks at poles.
 
     Raises
     ------
@@ -127,17 +133,22 @@ def run_boards(
     clopper_pearson(0, boards, confidence)
     run = _Run(program, circuit, frequency, target, population or Population(), boards, seed)
     tally, worst = FailureTally(frequency, accept), _WorstBoards()
-    worst_db = np.empty(boards)
+    watch = None if wanted is None else OscillationWatch(program, wanted)
+    worst_db, unstable, both = np.empty(boards), 0, 0
     percentiles = RowPercentiles(2 * frequency.size, boards, min(BLOCK, boards))
     for start, stop, drawn, db, deg in run.errors(slice(None)):
         worst_db[start:stop], share = tally.add(db, deg)
         worst.add(start, share, drawn)
+        if watch is not None:
+            oscillates = watch.excess(drawn) != 0
+            unstable += int(oscillates.sum())
+            both += int((oscillates & ~(share <= 1)).sum())
         percentiles.add(np.concatenate([db.T, deg.T], dtype=np.float32, casting="same_kind"))
         if progress is not None:
             progress(stop, boards)
     found, lost = percentiles.found()
     run.again(np.unique(lost % frequency.size), found)
-    passed = boards - tally.failed
+    passed = boards - tally.failed - (unstable - both)
     low, high = clopper_pearson(passed, boards, confidence)
     return ToleranceResult(
         boards=boards,
@@ -155,6 +166,7 @@ def run_boards(
         failures=tally.failures(),
         drivers=run.drivers(tally.places()),
         worst=worst.found(),
+        unstable=unstable,
     )
 
 
