@@ -50,8 +50,8 @@ class Sketch:
     polarity, peaks, circuit
         Its signs, the peaks of its signals before scaling, and its circuit.
     spread_db, spread_deg
-        Predicted standard deviation of magnitude and phase from part tolerance, the largest
-        over the band.
+        Predicted standard deviation of magnitude and phase over the boards of the job, the
+        largest over the band.
     notices
         What the user should know of how the form became a circuit.
     """

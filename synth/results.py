@@ -292,8 +292,8 @@ class FormFigures:
 class Candidate:
     """A form that was considered.
 
-    `spread_db` and `spread_deg` are the predicted spreads of magnitude and phase from part
-    tolerance (one standard deviation, largest over the band) [dB], [deg]; None with a
+    `spread_db` and `spread_deg` are the predicted spreads of magnitude and phase over the boards of
+    the job (one standard deviation, largest over the band) [dB], [deg]; None with a
     `reason` where the form could not be built.  `figures` is there where its values were
     chosen; `verdict` is then ``"pass"`` or ``"fail"``, and `reason` says why it was not taken.
     """

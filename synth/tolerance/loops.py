@@ -161,7 +161,7 @@ def loop_yield_check(found: LoopBoards) -> Check:
     """How many boards keep the loop, a line of the verdict without a limit of its own."""
     note = (
         f"{found.passed} of {found.boards} boards stable and within the margins, "
-        f"{100 * found.low:.1f} to {100 * found.high:.1f} % at "
+        f"{100 * found.low:.4g} to {100 * found.high:.4g} % at "
         f"{100 * found.confidence:.0f} % confidence"
     )
     return Check.at_least("yield of the loop", 100 * found.share, None, "%", note)

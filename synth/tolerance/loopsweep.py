@@ -282,8 +282,8 @@ def bracketed_roots(
     hides the change of sign it is at the end with the smaller value.
     """
     at_low, at_high = ends or (function(low), function(high))
-    hidden = (at_low < 0) == (at_high < 0)
-    at_end = np.where(np.abs(at_low) < np.abs(at_high), low, high)
+    done = (at_low < 0) == (at_high < 0)
+    found = np.where(np.abs(at_low) < np.abs(at_high), low, high)
     x, was_left = low, np.zeros(low.shape, dtype=np.int8)
     for _ in range(STEPS):
         step = at_high - at_low
@@ -291,7 +291,10 @@ def bracketed_roots(
             x = high - at_high * (high - low) / step
         x = np.where(np.isfinite(x) & (x >= low) & (x <= high), x, (low + high) / 2)
         here = function(x)
-        if np.all((np.abs(here) < ROOT) | hidden):
+        # A place that is found stays, however long others take.
+        now = ~done & (np.abs(here) < ROOT)
+        found[now], done = x[now], done | now
+        if done.all():
             break
         left = np.where(np.sign(here) == np.sign(at_low), 1, -1).astype(np.int8)
         again = left == was_left
@@ -300,7 +303,7 @@ def bracketed_roots(
         at_low = np.where(moves_low, here, np.where(again, at_low / 2, at_low))
         low, high = np.where(moves_low, x, low), np.where(moves_low, high, x)
         was_left = left
-    return np.where(hidden, at_end, x)
+    return np.where(done, found, x)
 
 
 def crossings(value: Real) -> tuple[Index, Index]:
