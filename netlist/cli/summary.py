@@ -13,7 +13,7 @@ import click
 from netlist.cli.progress import colour_on
 from netlist.cli.running import say
 from netlist.partslist import packages
-from netlist.records import all_checks, verdict_of
+from netlist.records import all_checks, all_notices, verdict_of
 from netlist.report.changes import change_errors, change_rows
 from netlist.report.choice import proof_line
 from netlist.report.found import check_rows, form_rows
@@ -106,7 +106,7 @@ def forms_table(chosen: str, candidates: Iterable[Candidate]) -> str:
 
 def warn(design: Design, verification: Verification) -> None:
     """What the user should know, on standard error."""
-    for notice in dict.fromkeys((*design.job.notices, *design.notices)):
+    for notice in all_notices(design, verification):
         say(f"warning: {notice}")
     share = design.tolerance.share
     if design.job.accept.yield_share is None and share < LOW_YIELD:
