@@ -133,6 +133,7 @@ def _environment() -> Environment:
         quantity=wording.quantity,
         decibel=wording.decibel,
         percent=wording.percent,
+        share=wording.share,
         stated=wording.stated,
         spelled=wording.spelled,
         clean=lambda text: _CONTROL.sub(" ", str(text)),

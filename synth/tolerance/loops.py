@@ -17,6 +17,7 @@ from synth.job import Loop
 from synth.loop import LoopBoards, Percentiles
 from synth.nodal import NodalProgram
 from synth.population import Population
+from synth.quantities import show_share
 from synth.tolerance.boards import drawn_blocks
 from synth.tolerance.drawing import Drawn
 from synth.tolerance.interval import clopper_pearson
@@ -78,13 +79,14 @@ def run_loops(
     names = BoardMargins.__dataclass_fields__
     found = BoardMargins(**{n: np.concatenate([getattr(p, n) for p in parts]) for n in names})
     stable = found.stable
-    passed = stable.copy()
+    passed, short = stable.copy(), []
     for margin, limit in (
         (found.phase_margin_deg, loop.phase_margin_deg),
         (found.gain_margin_db, loop.gain_margin_db),
     ):
-        if limit is not None:
-            passed &= np.isnan(margin) | (margin >= limit)
+        kept = np.isnan(margin) | (limit is None or margin >= limit)
+        short.append(int((stable & ~kept).sum()))
+        passed &= kept
     low, high = clopper_pearson(int(passed.sum()), boards, confidence)
     return LoopBoards(
         boards=boards,
@@ -97,6 +99,8 @@ def run_loops(
         gain_margin_db=_percentiles(_ordered(found.gain_margin_db, stable)),
         crossover_hz=_percentiles(found.crossover_hz[~np.isnan(found.crossover_hz)]),
         disk_margin=_percentiles(found.disk_margin),
+        short_of_phase=short[0],
+        short_of_gain=short[1],
     )
 
 
@@ -121,7 +125,7 @@ def loop_yield_check(found: LoopBoards) -> Check:
     """How many boards keep the loop, a line of the verdict without a limit of its own."""
     note = (
         f"{found.passed} of {found.boards} boards stable and within the margins, "
-        f"{100 * found.low:.1f} to {100 * found.high:.1f} % at "
+        f"{show_share(found.low)} to {show_share(found.high)} at "
         f"{100 * found.confidence:.0f} % confidence"
     )
     return Check.at_least("yield of the loop", 100 * found.share, None, "%", note)
