@@ -228,6 +228,7 @@ def _choice(design: Design) -> dict[str, object]:
         "choice": {
             "rms_error": found.rms,
             "lower_bound": found.lower_bound,
+            **({"unshared_rms_error": found.unshared.rms} if found.unshared else {}),
             "gap": found.gap,
             "proven": found.proven,
             "exhausted": found.exhausted,
