@@ -20,6 +20,7 @@ from netlist.ngspice import Simulator
 from synth.errors import SimulatorError
 from synth.evidence import Check, ResponseError, response_error
 from synth.grid import judged, points_per_decade
+from synth.quantities import show
 from synth.results import Design
 
 __all__ = ["FOLLOWS", "VendorLook", "look_at_vendor_model", "vendor_notices"]
@@ -74,6 +75,11 @@ class VendorLook:
     def __post_init__(self) -> None:
         if (self.difference is None) == (self.failure is None):
             raise ValueError("got both or neither of a response and a failure, expected one")
+
+    @property
+    def is_silent(self) -> bool:
+        """Whether there is a response and it is zero somewhere, as of an output at its rail."""
+        return self.difference is not None and not np.isfinite(self.difference.largest_db)
 
     @property
     def keeps_limits(self) -> bool:
@@ -147,7 +153,8 @@ def _follows(design: Design, simulator: Simulator) -> Check:
     except SimulatorError as problem:
         return Check(FOLLOWS, limit, None, "V", False, _told(problem))
     rise = found["out_up"] - found["out_down"]
-    note = f"rise of the output as + goes from {-DRIVE:g} V to {DRIVE:g} V, - at 0 V"
+    drive = show(DRIVE, "V")
+    note = f"rise as the + input goes from -{drive} to {drive}, the - input at ground"
     if rise <= -limit:
         note += "; it falls: plus and minus are exchanged in the job's pins"
     elif not rise >= limit:

@@ -156,6 +156,16 @@ def test_an_offset_is_no_reason_to_fail(design, simulator, offset):
     assert found.checks[-1].passed
 
 
+def test_a_board_without_a_response_is_told_in_words(design, simulator):
+    """A dead output gives no decibels to print."""
+    made = with_model(design, parsed(DEAD))
+    found = verify(made, simulator=simulator)
+    assert found.vendor.is_silent
+    page = report_page(made, found, drawings=boards.drawings(), lines=())
+    assert "shows no response at all" in page
+    assert "by at most –" not in page
+
+
 @pytest.mark.parametrize(
     ("text", "pins", "reason"),
     [
