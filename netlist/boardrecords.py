@@ -28,6 +28,7 @@ def yield_record(design: Design) -> dict[str, object]:
         "confidence": run.confidence,
         "error_95_db": run.error_95_db,
         "seed": run.seed,
+        "unstable": run.unstable,
         **_failures(run),
         "drivers": [asdict(d) for d in run.drivers],
         "worst": [{"number": b.number + 1, "limit_share": b.limit_share} for b in run.worst],

@@ -142,9 +142,11 @@ def _frequency(design: Design, hottest: Swing) -> float:
 def _settling_periods(design: Design, frequency_hz: float) -> float | None:
     """How many periods the modes near a frequency take to die away; None for too many."""
     w = 2 * math.pi * frequency_hz
-    near = [p for p in design.wanted.poles if w / NEAR < abs(p) < w * NEAR]
-    damping = min((-float(p.real) for p in near), default=math.inf)
-    if damping <= 0 or any(p.real > 0 for p in design.wanted.poles):
+    poles = compile_circuit(design.circuit).poles()
+    poles = poles[np.isfinite(poles)]
+    if any(p.real > 0 for p in (*poles, *design.wanted.poles)):
         return None
+    near = [p for p in poles if w / NEAR < abs(p) < w * NEAR]
+    damping = min((-float(p.real) for p in near), default=math.inf)
     periods = DECAY / damping * frequency_hz
     return max(periods, 2.0) if periods < LONGEST_PERIODS else None

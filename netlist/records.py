@@ -265,12 +265,12 @@ def _figures(error: ErrorFigures) -> dict[str, object]:
 
 
 def _budget(design: Design) -> dict[str, object]:
-    """What the choice of values and what part tolerance take of the error."""
+    """What the choice of values and what the spread of boards take of the error."""
     found = design.budget
     if found is None:
         return {}
     record = asdict(found)
-    record["shares"] = [{"ref": ref, "share": share} for ref, share in found.shares]
+    record["by_cause"] = found.by_cause
     record["tighter_part"], record["tighter_kinds"] = record.pop("part"), record.pop("kinds")
     record |= {"values_share": found.values_share, "tolerance_share": found.tolerance_share}
     return {"budget": record}

@@ -16,6 +16,8 @@ from synth.circuit import Circuit
 from synth.evidence import response_error
 from synth.job import Accept
 from synth.nodal import compile_circuit
+from synth.stability import poles_on_the_right, right_of_target
+from synth.transfer import TransferFunction
 
 __all__ = ["gain_bandwidth_needed"]
 
@@ -31,10 +33,15 @@ REFINEMENTS = 2
 
 
 def gain_bandwidth_needed(
-    circuit: Circuit, target: Complex, frequency_hz: Real, *, accept: Accept
+    circuit: Circuit,
+    target: Complex,
+    frequency_hz: Real,
+    *,
+    accept: Accept,
+    wanted: TransferFunction,
 ) -> float | None:
-    """Smallest gain-bandwidth [Hz] from which up to that of the job both limits hold; where
-    the board misses one, the smallest above it that mends this.
+    """Smallest gain-bandwidth [Hz] from which up to that of the job both limits hold and the board
+    is stable by itself; where it misses one, the smallest above it that mends this.
 
     Parameters
     ----------
@@ -44,6 +51,8 @@ def gain_bandwidth_needed(
         What the output must show, shape (F,).
     frequency_hz
         Shape (F,) [Hz].
+    wanted
+        H(s), or -H(s): its poles.
 
     Returns
     -------
@@ -55,12 +64,15 @@ def gain_bandwidth_needed(
     usual = np.array([a.figures.gain_bandwidth for a in circuit.amplifiers])
 
     def kept(factors: Real) -> NDArray[np.bool_]:
-        """Whether both limits hold with every op-amp at each factor (N,) of its figure."""
-        response = program.solve(frequency_hz, gain_bandwidth=np.outer(factors, usual))
+        """Whether both limits hold, and no pole is out of place, with every op-amp at each factor
+        (N,) of its figure."""
+        figures = np.outer(factors, usual)
+        response = program.solve(frequency_hz, gain_bandwidth=figures)
         error = response_error(response, target)
         magnitude = np.max(np.abs(error.magnitude_db), axis=-1) <= accept.magnitude_db
         phase = np.max(np.abs(error.phase_deg), axis=-1) <= accept.phase_deg
-        return np.asarray(magnitude & phase)
+        right = poles_on_the_right(program.poles(gain_bandwidth=figures), wanted)
+        return np.asarray(magnitude & phase & (right == right_of_target(wanted)))
 
     if kept(np.ones(1))[0]:
         factors = np.geomspace(1.0, SLOWEST, STEPS)

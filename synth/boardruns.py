@@ -96,6 +96,8 @@ class ToleranceResult:
         The parts that drive the error, by falling share; none with too few boards to tell.
     worst
         The boards farthest from the target, the worst first; empty where nobody kept them.
+    unstable
+        How many are unstable by themselves where H(s) is not; none of them passes.
     """
 
     boards: int
@@ -113,6 +115,7 @@ class ToleranceResult:
     failures: Failures | None = None
     drivers: tuple[Driver, ...] = ()
     worst: tuple[WorstBoard, ...] = ()
+    unstable: int = 0
 
     @property
     def share(self) -> float:

@@ -50,8 +50,8 @@ class Sketch:
     polarity, peaks, circuit
         Its signs, the peaks of its signals before scaling, and its circuit.
     spread_db, spread_deg
-        Predicted standard deviation of magnitude and phase from part tolerance, the largest
-        over the band.
+        Predicted standard deviation of magnitude and phase over the boards of the job, the
+        largest over the band.
     notices
         What the user should know of how the form became a circuit.
     """
@@ -96,9 +96,8 @@ def sketch_form(job: Job, form: str, frequency_hz: Real) -> Sketch:
     fitted = _fitted(realize(job.target, form), job, few)
     circuit = fitted.circuit
     check_networks(circuit, job.board.population)
-    tolerances = np.array([p.tolerance for p in circuit.passives])
     sensitivities = compile_circuit(circuit).sensitivities(frequency_hz)
-    spread = predicted_spread(sensitivities, tolerances)
+    spread = predicted_spread(sensitivities, circuit, job.board.population)
     return Sketch(
         form=form,
         graph=fitted.scaled.graph,

@@ -1,4 +1,4 @@
-"""The predicted lines of the verdict: yield, loop margins, swing, slew and current.
+"""The predicted lines of the verdict: yield, stability, loop margins, swing, slew and current.
 
 The nominal response is the simulator's to judge; its two checks stand before these.
 """
@@ -13,6 +13,7 @@ from synth.loop import loop_checks, loop_margins
 from synth.nodal import compile_circuit
 from synth.quantities import show_share
 from synth.results import LoopResult, Swing, ToleranceResult
+from synth.stability import poles_check, poles_on_the_right, right_of_target
 from synth.tolerance import loop_yield_check
 
 __all__ = ["board_checks", "loop_of_board", "yield_check"]
@@ -24,6 +25,7 @@ def board_checks(
     """Every predicted check of the nominal board, and of the loop around any."""
     names = {c.amplifier: _cell_name(circuit, c.amplifier) for c in circuit.cells}
     return (
+        poles_check(compile_circuit(circuit).poles(), job.target),
         *(loop_checks(job.loop, loop.nominal) if job.loop and loop else ()),
         *((loop_yield_check(loop.boards),) if loop and loop.boards else ()),
         *swing_checks(swing, names),
@@ -36,9 +38,13 @@ def loop_of_board(job: Job, circuit: Circuit, *, inverted: bool) -> LoopResult |
         return None
     program = compile_circuit(circuit)
     sign = -1.0 if inverted else 1.0
+    right = int(poles_on_the_right(program.poles()[None], job.target)[0])
+    excess = right - right_of_target(job.target)
     return LoopResult(
         target=loop_margins(job.loop, job.target),
-        nominal=loop_margins(job.loop, job.target, lambda f: sign * program.solve(f)),
+        nominal=loop_margins(
+            job.loop, job.target, lambda f: sign * program.solve(f), excess=excess
+        ),
     )
 
 

@@ -23,7 +23,7 @@ from synth.choosing import DEFAULT_EFFORT, Choice
 from synth.choosing.supply import allotted
 from synth.circuit import Circuit
 from synth.errors import JobError
-from synth.evidence import response_error
+from synth.evidence import ResponseError, response_error
 from synth.grid import judging_frequencies
 from synth.job import Job, Loop
 from synth.limits import drifts, swings
@@ -32,7 +32,7 @@ from synth.nodal import NodalProgram, compile_circuit
 from synth.noise import output_noise
 from synth.quantities import show
 from synth.ranking import Mapper, rank_forms
-from synth.results import Candidate, Design, LoopResult, Swing
+from synth.results import Candidate, Design, ErrorBudget, LoopResult, Swing, ToleranceResult
 from synth.tolerance import error_budget, run_boards, run_loops
 from synth.values import ValueSearch, level_ratios, wanted_of
 from synth.worstcase import worst_case
@@ -50,10 +50,6 @@ SMALL_CAPACITOR = 100e-12
 LOW_SHARE = 0.9
 
 DEFAULT_BOARDS = 10_000
-LOOP_BOARDS = 1000
-"""Most boards of the run whose loop is looked at, the first ones: a loop takes about 1 ms, some 15
-times what the response of its board takes, and so many tell a share to within about 3 %."""
-
 DEFAULT_SEED = 1
 
 # Below this share of the usual work the search hardly begins.
@@ -183,13 +179,14 @@ def judged_design(
         boards=boards,
         seed=seed,
         population=job.board.population,
+        wanted=job.target,
         progress=lambda done, total: progress("boards", done, total),
     )
     progress("worst case", 0, 1)
     worst = worst_case(circuit, response, frequency)
     progress("limits", 0, 1)
     swing = swings(circuit, wanted, job)
-    loop = _loop(job, program, sketch.polarity.output_inverted, boards=boards, seed=seed)
+    loop = _loop(job, program, sketch, boards=boards, seed=seed, progress=progress)
     nominal = response_error(program.solve(frequency), response)
     return Design(
         job=job,
@@ -209,23 +206,27 @@ def judged_design(
         checks=(yield_check(tolerance, job), *board_checks(job, circuit, swing, loop)),
         offset=_offset(circuit),
         certificate=choice.certificate,
-        budget=error_budget(program, circuit, nominal, frequency, accept=job.accept, seed=seed),
+        budget=_budget(job, program, nominal, frequency, seed),
         worst=worst,
         loop=loop,
         notices=(
-            *job.notices,
-            *sketch.notices,
-            *choice.notices,
-            *_notices(circuit, job, swing, loop),
+            *(*job.notices, *sketch.notices, *choice.notices),
+            *(*_notices(circuit, job, swing, loop), *_oscillation(tolerance)),
         ),
     )
 
 
 def _loop(
-    job: Job, program: NodalProgram, inverted: bool, *, boards: int, seed: int
+    job: Job,
+    program: NodalProgram,
+    sketch: Sketch,
+    *,
+    boards: int,
+    seed: int,
+    progress: Progress,
 ) -> LoopResult | None:
     """Margins of the job's loop, those over the run of boards among them."""
-    circuit = program.circuit
+    circuit, inverted = program.circuit, sketch.polarity.output_inverted
     found = loop_of_board(job, circuit, inverted=inverted)
     if job.loop is None or found is None:
         return None
@@ -235,11 +236,27 @@ def _loop(
         job.loop,
         job.target,
         inverted=inverted,
-        boards=min(boards, LOOP_BOARDS),
+        boards=boards,
+        seed=seed,
+        population=job.board.population,
+        progress=lambda done, total: progress("loops", done, total),
+    )
+    return replace(found, boards=run)
+
+
+def _budget(
+    job: Job, program: NodalProgram, nominal: ResponseError, frequency: Real, seed: int
+) -> ErrorBudget:
+    """What values and the population of the job take of the error."""
+    return error_budget(
+        program,
+        program.circuit,
+        nominal,
+        frequency,
+        accept=job.accept,
         seed=seed,
         population=job.board.population,
     )
-    return replace(found, boards=run)
 
 
 def _notices(
@@ -294,6 +311,16 @@ def _lost_loops(run: LoopBoards, loop: Loop | None) -> str:
     return (
         f"only {run.passed} of {run.boards} boards keep the loop stable and within its margins: "
         f"{', '.join(reasons)}"
+    )
+
+
+def _oscillation(run: ToleranceResult) -> tuple[str, ...]:
+    """A notice of boards that oscillate by themselves, which the nominal board need not do."""
+    if not run.unstable:
+        return ()
+    return (
+        f"{run.unstable} of {run.boards} boards are unstable by themselves: they oscillate "
+        "whatever their response over the band; faster op-amps or another form may help",
     )
 
 

@@ -41,7 +41,9 @@ def tightest_limit(design: Design) -> Tightest | None:
     ]
     frequency = design.frequency_hz
     target = design.wanted.response(frequency)
-    need = gain_bandwidth_needed(design.circuit, target, frequency, accept=design.job.accept)
+    need = gain_bandwidth_needed(
+        design.circuit, target, frequency, accept=design.job.accept, wanted=design.wanted
+    )
     if need is not None:
         has = design.job.board.op_amp.gain_bandwidth
         found.append(Tightest(quantity="gain-bandwidth", amplifier="", ratio=has / need))

@@ -15,7 +15,6 @@ from synth.nodal import NodalProgram, compile_circuit
 from synth.peaks import frequencies_of_interest, frequencies_within
 from synth.readback import block_names, graph_of
 from synth.results import Drift, Swing
-from synth.statespace import StateSpace
 from synth.transfer import TransferFunction
 
 __all__ = ["drifts", "swing_checks", "swings"]
@@ -66,11 +65,12 @@ def swings(circuit: Circuit, target: TransferFunction, job: Job) -> tuple[Swing,
 
 
 def _any_input_peaks(circuit: Circuit, input_peak: float) -> dict[str, float]:
-    """Bound on every op-amp output for any input up to the peak, by net [V]."""
-    graph = graph_of(circuit)
-    names = block_names(circuit)
-    norms = StateSpace.of_signals(graph, tuple(names.values())).l1_norms()
-    return {net: input_peak * float(v) for net, v in zip(names, norms, strict=True)}
+    """Bound on every op-amp output for any input up to the peak, by net [V]: infinite where the
+    board is not stable by itself."""
+    nets = [a.output for a in circuit.amplifiers]
+    system = compile_circuit(circuit).state_space(nets)
+    norms = system.l1_norms() if system.is_stable else np.full(len(nets), np.inf)
+    return {net: input_peak * float(v) for net, v in zip(nets, norms, strict=True)}
 
 
 def _output_currents(program: NodalProgram, amplifier: Amplifier, frequency_hz: Real) -> Real:

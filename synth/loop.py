@@ -133,7 +133,11 @@ def loop_response(loop: Loop, compensator: Response) -> Response:
 
 
 def loop_margins(
-    loop: Loop, target: TransferFunction, compensator: Response | None = None
+    loop: Loop,
+    target: TransferFunction,
+    compensator: Response | None = None,
+    *,
+    excess: int = 0,
 ) -> LoopMargins:
     """Margins of the loop with `compensator` in place of `target` (None: the target itself).
 
@@ -144,6 +148,8 @@ def loop_margins(
         in the right half-plane or at the origin.
     compensator
         Response of the board over frequency [Hz].
+    excess
+        How many poles the board by itself has right of the axis beyond those of H(s).
     """
     response = loop_response(loop, compensator or target.response)
     grid = _grid(loop, target)
@@ -156,6 +162,7 @@ def loop_margins(
         value,
         delay=loop.delay,
         asked=loop_response(loop, target.response)(grid) if compensator else None,
+        excess=excess,
     )
     crossover, phase_margin = _phase_margin(response, grid, value)
     origin = sum(tf.poles_at_origin - tf.zeros_at_origin for tf in parts)

@@ -23,6 +23,7 @@ __all__ = [
     "TURN",
     "freed_of_axis",
     "is_decidable",
+    "settled_turns",
     "turns_due",
     "unstable_poles",
 ]
@@ -49,6 +50,7 @@ def unstable_poles(
     *,
     delay: float = 0.0,
     asked: Complex | None = None,
+    excess: int = 0,
 ) -> int | None:
     """How many closed-loop poles lie in the right half-plane; None where that is not decided.
 
@@ -66,6 +68,8 @@ def unstable_poles(
         L with H(s) itself on the grid, where `response` has a board instead.  The finite gain
         of op-amps turns a pole at the origin into one close to it; below the frequency from
         which the board is like H(s) nothing is counted.
+    excess
+        How many poles the board has right of the axis beyond those of H(s).
     """
     if asked is not None:
         if not is_decidable(parts[1]):
@@ -75,8 +79,10 @@ def unstable_poles(
         grid, value = grid[start:], value[start:]
     elif delay and sum(tf.relative_degree for tf in parts) <= 0 and abs(value[-1]) >= 1:
         return None
-    turn = _turn(response, grid, value, parts)
-    return None if turn is None else round(turns_due(parts) - turn / math.pi)
+    settled = settled_turns(response, grid, value, parts)
+    if settled is None:
+        return None
+    return round(turns_due(parts) + excess - float(np.sum(settled[2])) / math.pi)
 
 
 def is_decidable(target: TransferFunction) -> bool:
@@ -105,14 +111,15 @@ def freed_of_axis(
     return product
 
 
-def _turn(
+def settled_turns(
     response: Response,
     grid: Real,
     value: Complex,
     parts: tuple[TransferFunction, TransferFunction],
-) -> float | None:
-    """Angle by which 1 + L turns over the grid [rad], without the poles on the axis; None when
-    no reasonable number of points settles it."""
+) -> tuple[Real, Complex, Real] | None:
+    """How 1 + L turns from point to point [rad], without the poles on the axis, on a grid with
+    points added until that is beyond doubt: frequencies [Hz], L, and one turn less; None when no
+    reasonable number of points settles it."""
     keep = np.isfinite(value)
     grid, value = grid[keep], value[keep]
     while True:
@@ -122,7 +129,7 @@ def _turn(
         apart = grid[1:] > grid[:-1] * (1 + 1e-12)
         wide = np.flatnonzero((np.abs(steps) > TURN) & (size > ROUND) & apart)
         if not wide.size:
-            return float(np.sum(steps))
+            return grid, value, steps
         if grid.size + wide.size > MOST_POINTS:
             return None
         middle = np.sqrt(grid[wide] * grid[wide + 1])

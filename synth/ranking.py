@@ -155,6 +155,7 @@ def _figures(
         boards=RANKED_BOARDS,
         seed=seed,
         population=job.board.population,
+        wanted=job.target,
     )
     swing = swings(circuit, wanted, job)
     nominal = ErrorFigures.of(response_error(program.solve(frequency_hz), response))
@@ -182,7 +183,7 @@ def _figures(
         peak=hottest.peak,
         hottest=hottest.amplifier,
         gain_bandwidth_needed=gain_bandwidth_needed(
-            circuit, response, frequency_hz, accept=job.accept
+            circuit, response, frequency_hz, accept=job.accept, wanted=job.target
         ),
         missed=tuple(_missed(c) for c in checks if not c.passed),
     )

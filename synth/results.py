@@ -132,13 +132,34 @@ class OpAmpAllowance:
 
 
 @dataclass(frozen=True, kw_only=True)
+class SpreadShare:
+    """A cause of the spread over boards, and its share of the variance.
+
+    Parameters
+    ----------
+    cause
+        ``"own"``: what a part has on its own; ``"lot"``, ``"network"``: what the parts of a reel
+        or of a network share; ``"temperature"``: the drift of all parts; ``"op_amp"``: the
+        gain-bandwidth of the op-amps of a package.
+    refs
+        What it moves.
+    share
+        A ratio; those of all causes add up to 1.
+    """
+
+    cause: str
+    refs: tuple[str, ...]
+    share: float
+
+
+@dataclass(frozen=True, kw_only=True)
 class Tightened:
     """What tighter parts are predicted to give, to first order.
 
     Parameters
     ----------
     kind
-        ``"part"``: one part; ``"resistor"``, ``"capacitor"``: all of a kind.
+        ``"part"``: one part, or all of a network; ``"resistor"``, ``"capacitor"``: all of a kind.
     refs
         The parts with a tighter grade.
     tolerance, grade
@@ -160,7 +181,8 @@ class Tightened:
 
 @dataclass(frozen=True, kw_only=True)
 class ErrorBudget:
-    """How the error divides between the choice of values and part tolerance, to first order.
+    """How the error divides between the choice of values and the spread of boards about the
+    nominal one, to first order: by part tolerance, temperature and op-amps as the job states them.
 
     Parameters
     ----------
@@ -169,9 +191,9 @@ class ErrorBudget:
     frequency_hz
         Where |nominal error| + `sigmas` standard deviations is the largest share of the limit.
     nominal, spread
-        Error of the nominal board and standard deviation from tolerance there, in `unit`.
+        Error of the nominal board and standard deviation over boards there, in `unit`.
     shares
-        By falling share: parts and their shares of the variance there, ratios.
+        By falling share: the causes and their shares of the variance there.
     error_95_db, limit_share_95
         95th percentiles over boards: of the largest dB error over the band, and of the largest
         share of a limit, magnitude or phase.
@@ -187,7 +209,7 @@ class ErrorBudget:
     nominal: float
     spread: float
     sigmas: float
-    shares: tuple[tuple[str, float], ...]
+    shares: tuple[SpreadShare, ...]
     error_95_db: float
     limit_share_95: float
     part: Tightened | None
@@ -201,9 +223,19 @@ class ErrorBudget:
 
     @property
     def tolerance_share(self) -> float:
-        """Share of part tolerance in it, a ratio."""
+        """Share of the spread of boards in it, a ratio."""
         both = self.nominal**2 + self.spread**2
         return self.spread**2 / both if both else 0.0
+
+    @property
+    def by_cause(self) -> dict[str, float]:
+        """Shares of the variance there of ``"parts"`` at 25 deg C, ``"temperature"`` and
+        ``"op_amps"``, ratios; only of what spreads, the largest first."""
+        found: dict[str, float] = {}
+        for one in self.shares:
+            name = {"temperature": "temperature", "op_amp": "op_amps"}.get(one.cause, "parts")
+            found[name] = found.get(name, 0.0) + one.share
+        return dict(sorted(found.items(), key=lambda item: -item[1]))
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -260,8 +292,8 @@ class FormFigures:
 class Candidate:
     """A form that was considered.
 
-    `spread_db` and `spread_deg` are the predicted spreads of magnitude and phase from part
-    tolerance (one standard deviation, largest over the band) [dB], [deg]; None with a
+    `spread_db` and `spread_deg` are the predicted spreads of magnitude and phase over the boards of
+    the job (one standard deviation, largest over the band) [dB], [deg]; None with a
     `reason` where the form could not be built.  `figures` is there where its values were
     chosen; `verdict` is then ``"pass"`` or ``"fail"``, and `reason` says why it was not taken.
     """

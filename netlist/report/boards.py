@@ -66,15 +66,21 @@ def left_out(population: Population) -> str:
 def failure_lines(run: ToleranceResult) -> list[str]:
     """Which limit fails first, and where, in sentences."""
     found = run.failures
+    oscillating = []
+    if run.unstable:
+        oscillating = [
+            f"{_boards(run.unstable)} {'oscillates' if run.unstable == 1 else 'oscillate'} by "
+            f"{'itself' if run.unstable == 1 else 'themselves'}: poles lie right of the axis."
+        ]
     if found is None:
-        return []
+        return oscillating
     if not found.boards:
-        return ["No board misses a limit."]
+        return [*oscillating, "No board misses a limit."]
     first = [_first(f, found.boards) for f in found.first if f.boards]
     line = f"{_boards(found.boards)} {_s('miss', found.boards)} a limit. {' '.join(first)}"
     if found.both:
         line += f" {_boards(found.both)} {'is' if found.both == 1 else 'are'} beyond both."
-    return [line]
+    return [*oscillating, line]
 
 
 def driver_remarks(drivers: Iterable[Driver], circuit: Circuit) -> list[str]:

@@ -6,7 +6,14 @@ from __future__ import annotations
 from netlist.report.wording import decibel, listed, percent, quantity, stated
 from synth.choosing.certificate import PROVEN_RATIO, Certificate
 from synth.circuit import Circuit
-from synth.results import Design, ErrorBudget, ErrorFigures, OpAmpAllowance, Tightened
+from synth.results import (
+    Design,
+    ErrorBudget,
+    ErrorFigures,
+    OpAmpAllowance,
+    SpreadShare,
+    Tightened,
+)
 
 __all__ = [
     "allowance_rows",
@@ -27,6 +34,9 @@ USEFUL_RATIO = 2.0
 LARGEST_SHARES = 8
 WORTH_NAMING = 0.5
 
+# Smaller shares of the variance are not put in digits.
+WORTH_DIGITS = 0.001
+
 # References of parts that were no choice, or else of those that were, are listed up to this many.
 MOST_NAMED = 4
 
@@ -34,6 +44,19 @@ MOST_NAMED = 4
 _OTHERS = "choice of values on offer that keeps the levels and impedances"
 
 _NOUNS = {"resistor": "all resistors", "capacitor": "all capacitors"}
+
+# What spreads the boards.
+_CAUSES = {
+    "parts": "the parts at 25\N{NO-BREAK SPACE}\N{DEGREE SIGN}C",
+    "temperature": "temperature",
+    "op_amps": "the gain-bandwidth of the op-amps",
+}
+_SHARED = {
+    "lot": "offset of their reel",
+    "network": "deviation they share as matched parts",
+    "temperature": "drift with temperature",
+    "op_amp": "gain-bandwidth",
+}
 
 
 def proof_line(found: Certificate, circuit: Circuit) -> str:
@@ -128,18 +151,35 @@ def allowance_rows(found: OpAmpAllowance) -> list[Row]:
 
 
 def budget_lines(found: ErrorBudget) -> list[str]:
-    """Where the budget is tightest, how it divides there, and what would help, in sentences."""
-    unit = found.unit
+    """Where the budget is tightest, how it divides there, what drives the spread, and what would
+    help, in sentences."""
+    unit, causes = found.unit, found.by_cause
+    if _is_of_parts(found):
+        spread = "part tolerance spreads"
+    else:
+        spread = f"{listed([_CAUSES[name] for name in causes])} spread"
     lines = [
         f"A limit is used up most by the {found.quantity} at "
         f"{quantity(found.frequency_hz, 'Hz')}, where {stated(found.limit, unit)} are allowed: "
         f"the nominal board is off by "
-        f"{_with(abs(found.nominal), unit)}, and part tolerance spreads boards around it with a "
+        f"{_with(abs(found.nominal), unit)}, and {spread} boards around it with a "
         f"standard deviation of {_with(found.spread, unit)}. Of the mean square error of a board "
         f"there, {_division(found)}."
     ]
+    if not _is_of_parts(found):
+        first, *others = [(_at_least(share), _CAUSES[name]) for name, share in causes.items()]
+        due = [
+            f"{first[0]} is due to {first[1]}",
+            *(f"{share} to {name}" for share, name in others),
+        ]
+        lines.append(f"Of the variance over boards, {listed(due)}.")
     if found.part is None:
         lines.append("No part has a tighter grade that is commonly sold.")
+    elif len(found.part.refs) > 1:
+        lines.append(
+            f"The parts whose tighter grade helps most are {listed(found.part.refs)}, which are "
+            f"matched: {_gains(found.part, found)}."
+        )
     else:
         lines.append(
             f"The part whose tighter grade helps most is {found.part.refs[0]}: "
@@ -154,21 +194,33 @@ def budget_lines(found: ErrorBudget) -> list[str]:
 
 
 def budget_rows(found: ErrorBudget, circuit: Circuit) -> list[Row]:
-    """The parts with the largest shares of the variance, and the rest as one line."""
-    rows: list[Row] = [
-        {
-            "ref": ref,
-            "share": percent(share, 2),
-            "tolerance": stated(circuit.by_ref[ref].tolerance, "%"),
-            "sets": circuit.by_ref[ref].sets,
-        }
-        for ref, share in found.shares[:LARGEST_SHARES]
-    ]
-    rest = [share for _, share in found.shares[LARGEST_SHARES:]]
+    """What has the largest shares of the variance, and the rest as one line."""
+    rows = [_share_row(one, circuit) for one in found.shares[:LARGEST_SHARES]]
+    rest = [one.share for one in found.shares[LARGEST_SHARES:]]
     if rest:
         name = f"{len(rest)} other{'' if len(rest) == 1 else 's'}"
         rows.append({"ref": name, "share": percent(sum(rest), 2), "tolerance": "", "sets": ""})
     return rows
+
+
+def _share_row(one: SpreadShare, circuit: Circuit) -> Row:
+    """One cause of the spread: a part, or what several have in common."""
+    names = listed(one.refs) if one.refs else "all parts"
+    tolerance, sets = "", _SHARED.get(one.cause, "")
+    if one.cause == "own":
+        part = circuit.by_ref[one.refs[0]]
+        tolerance, sets = stated(part.tolerance, "%"), part.sets
+    return {"ref": names, "share": percent(one.share, 2), "tolerance": tolerance, "sets": sets}
+
+
+def _at_least(share: float) -> str:
+    """A share in digits where it is worth any."""
+    return percent(share, 2) if share >= WORTH_DIGITS else f"under {percent(WORTH_DIGITS, 1)}"
+
+
+def _is_of_parts(found: ErrorBudget) -> bool:
+    """Whether nothing but the tolerance of parts spreads the boards."""
+    return set(found.by_cause) <= {"parts"}
 
 
 def shown(design: Design) -> dict[str, object]:
@@ -185,11 +237,12 @@ def shown(design: Design) -> dict[str, object]:
 
 def _division(found: ErrorBudget) -> str:
     """The smaller share in digits, the larger as the rest."""
+    spread = "part tolerance" if _is_of_parts(found) else "the spread of boards"
     if found.values_share <= found.tolerance_share:
         share = percent(found.values_share, 2)
-        return f"{share} is the choice of values and the rest part tolerance"
+        return f"{share} is the choice of values and the rest {spread}"
     share = percent(found.tolerance_share, 2)
-    return f"{share} is part tolerance and the rest the choice of values"
+    return f"{share} is {spread} and the rest the choice of values"
 
 
 def _gains(tighter: Tightened, found: ErrorBudget) -> str:

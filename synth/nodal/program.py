@@ -25,7 +25,9 @@ from synth.nodal.offsets import Offsets, offsets_of
 from synth.nodal.reduction import Reduction, reduce
 from synth.nodal.region import Boards
 from synth.nodal.sensitivity import Sensitivities, sensitivities_from
+from synth.nodal.states import natural_frequencies, pole_slopes, state_space
 from synth.nodal.structure import Structure, structure_of
+from synth.statespace import StateSpace
 
 __all__ = ["NodalProgram", "compile_circuit"]
 
@@ -101,13 +103,7 @@ class NodalProgram:
         """
         structure = self.structure
         frequency = checked_frequency(frequency_hz)
-        parts = checked_columns("values", values, structure.values)
-        gbw = checked_columns("gain_bandwidth", gain_bandwidth, structure.gain_bandwidth)
-        gain = checked_columns("open_loop_gain", open_loop_gain, structure.open_loop_gain)
-        count = common_boards(parts, gbw, gain)
-        boards = Boards(
-            *(np.broadcast_to(array, (count or 1, array.shape[-1])) for array in (parts, gbw, gain))
-        )
+        boards, count = self._boards(values, gain_bandwidth, open_loop_gain)
         solved: Complex
         if nets is None:
             solved = self._voltages((structure.output,), boards, frequency)[0]
@@ -115,6 +111,21 @@ class NodalProgram:
             columns = tuple(structure.column(net) for net in nets)
             solved = np.moveaxis(self._voltages(columns, boards, frequency), 0, -1)
         return solved if count else np.asarray(solved[0])
+
+    def _boards(
+        self,
+        values: ArrayLike | None,
+        gain_bandwidth: ArrayLike | None,
+        open_loop_gain: ArrayLike | None,
+    ) -> tuple[Boards, int]:
+        """The boards asked for, and how many; one, and 0, where no argument has an axis of them."""
+        structure = self.structure
+        parts = checked_columns("values", values, structure.values)
+        gbw = checked_columns("gain_bandwidth", gain_bandwidth, structure.gain_bandwidth)
+        gain = checked_columns("open_loop_gain", open_loop_gain, structure.open_loop_gain)
+        count = common_boards(parts, gbw, gain) or 0
+        arrays = (np.broadcast_to(a, (count or 1, a.shape[-1])) for a in (parts, gbw, gain))
+        return Boards(*arrays), count
 
     def _voltages(self, columns: tuple[int, ...], boards: Boards, frequency: Real) -> Complex:
         """Voltages of nets, shape (nets, boards, F)."""
@@ -247,6 +258,44 @@ class NodalProgram:
             voltage_noise=np.array([f.voltage_noise for f in figures]),
             current_noise=np.array([f.current_noise for f in figures]),
         )
+
+    def poles(
+        self,
+        *,
+        values: ArrayLike | None = None,
+        gain_bandwidth: ArrayLike | None = None,
+        open_loop_gain: ArrayLike | None = None,
+    ) -> Complex:
+        """Natural frequencies [rad/s]: as many as capacitors and op-amps, inf for what is none.
+
+        Arguments as of `solve`; shape (r,), or (boards, r) when any of them has boards.
+
+        Raises
+        ------
+        CircuitError, NumericalError
+            As `solve`.
+        """
+        boards, count = self._boards(values, gain_bandwidth, open_loop_gain)
+        found = natural_frequencies(self.structure, boards)
+        return found if count else np.asarray(found[0])
+
+    def pole_slopes(self) -> tuple[Complex, Complex]:
+        """Poles of the nominal board, shape (r,), and their slopes over ln of every passive and of
+        every op-amp's gain-bandwidth, shape (r, P + U) [rad/s]; errors as of `solve`."""
+        return pole_slopes(self.structure, self._boards(None, None, None)[0])
+
+    def state_space(self, nets: Sequence[str]) -> StateSpace:
+        """The nominal board from its input to the voltages of `nets`.
+
+        Raises
+        ------
+        CircuitError
+            An unknown net.
+        NumericalError
+            A loop of capacitors, or a state space that does not give the response back.
+        """
+        columns = tuple(self.structure.column(net) for net in nets)
+        return state_space(self.structure, self._boards(None, None, None)[0], columns)
 
     def dc_offsets(self, *, values: ArrayLike | None = None) -> Offsets:
         """What offsets and bias currents do to every op-amp output at DC, the input at 0 V.

@@ -4,9 +4,10 @@ budget that names whose tighter grade would help most."""
 
 from synth.tolerance.boards import drawn_values, run_boards, tolerances_of
 from synth.tolerance.budget import error_budget, next_grade
-from synth.tolerance.drawing import BoardSource, check_networks
+from synth.tolerance.drawing import BoardSource
 from synth.tolerance.interval import clopper_pearson
 from synth.tolerance.loops import board_margins, loop_yield_check, run_loops
+from synth.tolerance.makeup import check_networks
 from synth.tolerance.spread import Spread, predicted_spread
 
 __all__ = [

@@ -5,9 +5,9 @@ being stated each bought part is uniform within +-tolerance of its value: pessim
 lots crowd around a mean, and common practice where nothing is known of the lot; op-amps have
 their figures.
 
-Board k of a seed is the same whatever the number of boards and the size of the blocks.  Memory is
-bounded: errors are kept in single precision for as many frequencies as fit, and further
-frequencies are run again with the same boards.
+Board k of a seed is the same whatever the number of boards and the size of the blocks.  Every board
+is solved once, and memory is bounded: of many boards only the errors near a percentile are kept, in
+single precision; a frequency at which that fails is run again with the same boards.
 """
 
 from __future__ import annotations
@@ -28,6 +28,9 @@ from synth.population import Population
 from synth.tolerance.drawing import BoardSource, Drawn
 from synth.tolerance.failures import DriverTally, FailureTally, Place
 from synth.tolerance.interval import clopper_pearson
+from synth.tolerance.oscillation import OscillationWatch
+from synth.tolerance.percentiles import RowPercentiles, percentiles_of_rows
+from synth.transfer import TransferFunction
 
 __all__ = ["drawn_blocks", "drawn_values", "run_boards", "tolerances_of"]
 
@@ -38,7 +41,7 @@ BLOCK = 500
 """Boards run at once."""
 
 STORE = 140_000_000
-"""Bytes that hold errors until their percentiles are taken."""
+"""Bytes that hold the errors at frequencies that are run again."""
 
 WORST = 5
 """Boards whose values are kept, so that the simulator can be asked about them too."""
@@ -57,12 +60,18 @@ def drawn_values(
 
 
 def drawn_blocks(
-    circuit: Circuit, population: Population | None = None, *, boards: int, seed: int
+    circuit: Circuit,
+    population: Population | None = None,
+    *,
+    boards: int,
+    seed: int,
+    block: int | None = None,
 ) -> Iterator[tuple[int, int, Drawn]]:
-    """(first board, last + 1, boards) of a run, block by block."""
+    """(first board, last + 1, boards) of a run, `block` boards at once (None: `BLOCK`)."""
     source = BoardSource(circuit, population or Population(), seed)
-    for start in range(0, boards, BLOCK):
-        stop = min(start + BLOCK, boards)
+    step = block or BLOCK
+    for start in range(0, boards, step):
+        stop = min(start + step, boards)
         yield start, stop, source.draw(stop - start)
 
 
@@ -78,8 +87,10 @@ def run_boards(
     population: Population | None = None,
     progress: Callable[[int, int], None] | None = None,
     confidence: float = 0.95,
+    wanted: TransferFunction | None = None,
 ) -> ToleranceResult:
-    """Run `boards` boards and count those whose error keeps both limits at every frequency.
+    """Run `boards` boards and count those whose error keeps both limits at every frequency and
+    that are stable by themselves.
 
     Parameters
     ----------
@@ -101,6 +112,8 @@ def run_boards(
         Called with (boards done, boards) as the run goes on.
     confidence
         Of the interval of the yield.
+    wanted
+        H(s), whose poles tell where those of a board belong; None: nobody looks at poles.
 
     Raises
     ------
@@ -119,25 +132,23 @@ def run_boards(
         raise JobError(f"got the seed {seed}, expected 0 or more", key="seed")
     clopper_pearson(0, boards, confidence)
     run = _Run(program, circuit, frequency, target, population or Population(), boards, seed)
-    at_once = max(1, STORE // (8 * boards))
-    percentiles = np.empty((4, frequency.size))
-    tally = FailureTally(frequency, accept)
-    worst_db, worst_share = np.empty(boards), np.empty(boards)
-    for first in range(0, frequency.size, at_once):
-        kept = slice(first, min(first + at_once, frequency.size))
-        store = np.empty((2, kept.stop - first, boards), dtype=np.float32)
-        for start, stop, db, deg in run.errors(slice(None) if first == 0 else kept):
-            width = store.shape[1]
-            store[0, :, start:stop] = db[:, :width].T
-            store[1, :, start:stop] = deg[:, :width].T
-            if first == 0:
-                worst_db[start:stop], worst_share[start:stop] = tally.add(db, deg)
-                if progress is not None:
-                    progress(stop, boards)
-        for quantity in (0, 1):
-            percentiles[2 * quantity : 2 * quantity + 2, kept] = _percentiles(store[quantity])
-        del store
-    passed = boards - tally.failed
+    tally, worst = FailureTally(frequency, accept), _WorstBoards()
+    watch = None if wanted is None else OscillationWatch(program, wanted)
+    worst_db, unstable, both = np.empty(boards), 0, 0
+    percentiles = RowPercentiles(2 * frequency.size, boards, min(BLOCK, boards))
+    for start, stop, drawn, db, deg in run.errors(slice(None)):
+        worst_db[start:stop], share = tally.add(db, deg)
+        worst.add(start, share, drawn)
+        if watch is not None:
+            oscillates = watch.excess(drawn) != 0
+            unstable += int(oscillates.sum())
+            both += int((oscillates & ~(share <= 1)).sum())
+        percentiles.add(np.concatenate([db.T, deg.T], dtype=np.float32, casting="same_kind"))
+        if progress is not None:
+            progress(stop, boards)
+    found, lost = percentiles.found()
+    run.again(np.unique(lost % frequency.size), found)
+    passed = boards - tally.failed - (unstable - both)
     low, high = clopper_pearson(passed, boards, confidence)
     return ToleranceResult(
         boards=boards,
@@ -146,15 +157,16 @@ def run_boards(
         high=high,
         confidence=confidence,
         frequency_hz=frequency,
-        magnitude_5=percentiles[0],
-        magnitude_95=percentiles[1],
-        phase_5=percentiles[2],
-        phase_95=percentiles[3],
+        magnitude_5=found[0, : frequency.size],
+        magnitude_95=found[1, : frequency.size],
+        phase_5=found[0, frequency.size :],
+        phase_95=found[1, frequency.size :],
         error_95_db=float(np.percentile(worst_db, 95)),
         seed=seed,
         failures=tally.failures(),
         drivers=run.drivers(tally.places()),
-        worst=run.worst(worst_share),
+        worst=worst.found(),
+        unstable=unstable,
     )
 
 
@@ -168,10 +180,26 @@ class _Run:
     boards: int
     seed: int
 
-    def errors(self, kept: slice) -> Iterator[tuple[int, int, Real, Real]]:
-        """(first board, last + 1, dB, deg) block by block, shapes (block, frequencies kept)."""
+    def errors(self, kept: slice | list[int]) -> Iterator[tuple[int, int, Drawn, Real, Real]]:
+        """(first board, last + 1, boards, dB, deg) block by block, errors of shapes
+        (block, frequencies kept)."""
         for start, stop, drawn in self.blocks():
-            yield start, stop, *self._errors_of(drawn, kept)
+            yield start, stop, drawn, *self._errors_of(drawn, kept)
+
+    def again(self, places: NDArray[np.intp], percentiles: Real) -> None:
+        """Put in the percentiles at some frequencies, of all errors of the same boards there.
+
+        `percentiles` has the shape (shares, 2 F): those of the magnitude, then of the phase.
+        """
+        at_once = max(1, STORE // (8 * self.boards))
+        for first in range(0, places.size, at_once):
+            kept = places[first : first + at_once]
+            store = np.empty((2, kept.size, self.boards), dtype=np.float32)
+            for start, stop, _, db, deg in self.errors(kept.tolist()):
+                store[0, :, start:stop], store[1, :, start:stop] = db.T, deg.T
+            for quantity in (0, 1):
+                rows = kept + quantity * self.frequency.size
+                percentiles[:, rows] = percentiles_of_rows(store[quantity])
 
     def drivers(self, places: tuple[Place, ...]) -> tuple[Driver, ...]:
         """The parts that drive the errors at these places: the same boards once more."""
@@ -181,17 +209,6 @@ class _Run:
         for _, _, drawn in self.blocks():
             tally.add(drawn, *self._errors_of(drawn, [p.index for p in places]))
         return tally.drivers()
-
-    def worst(self, share: Real) -> tuple[WorstBoard, ...]:
-        """The boards with the largest shares of a limit, the worst first; `share` per board."""
-        share = np.nan_to_num(share, nan=np.inf)
-        numbers = np.argsort(-share, kind="stable")[:WORST].tolist()
-        found: dict[int, Drawn] = {}
-        for start, stop, drawn in self.blocks():
-            found |= {
-                n: drawn.part(slice(n - start, n - start + 1)) for n in numbers if start <= n < stop
-            }
-        return tuple(_worst_board(n, float(share[n]), found[n]) for n in numbers)
 
     def blocks(self) -> Iterator[tuple[int, int, Drawn]]:
         return drawn_blocks(self.circuit, self.population, boards=self.boards, seed=self.seed)
@@ -203,6 +220,27 @@ class _Run:
             self.frequency[kept], values=drawn.values, gain_bandwidth=drawn.gain_bandwidth
         )
         return _errors(np.multiply(ratio, inverse_target, out=ratio))
+
+
+class _WorstBoards:
+    """The boards with the largest shares of a limit, the worst first, earlier ones before."""
+
+    def __init__(self) -> None:
+        self._boards: list[WorstBoard] = []
+
+    def add(self, first: int, share: Real, drawn: Drawn) -> None:
+        """A block of boards, `first` the number of its first one; `share` per board."""
+        share = np.nan_to_num(share, nan=np.inf)
+        candidates = np.argsort(-share, kind="stable")[:WORST].tolist()
+        self._boards += [
+            _worst_board(first + k, float(share[k]), drawn.part(slice(k, k + 1)))
+            for k in candidates
+        ]
+        self._boards = sorted(self._boards, key=lambda b: -b.limit_share)[:WORST]
+
+    def found(self) -> tuple[WorstBoard, ...]:
+        """Those of all blocks."""
+        return tuple(self._boards)
 
 
 def _worst_board(number: int, share: float, drawn: Drawn) -> WorstBoard:
@@ -227,22 +265,6 @@ def _errors(ratio: Complex) -> tuple[Real, Real]:
         np.log(re, out=re)
     re *= DB_PER_NEPER / 2
     return re, deg
-
-
-def _percentiles(rows: NDArray[np.float32], shares: tuple[float, ...] = (0.05, 0.95)) -> Real:
-    """Percentiles of every row, linear between neighbours; shape (shares, rows).
-
-    Partitions the rows in place, so that it needs no memory of its own.
-    """
-    last = rows.shape[1] - 1
-    ends = [(int(share * last), min(int(share * last) + 1, last)) for share in shares]
-    rows.partition(sorted({k for pair in ends for k in pair}), axis=1)
-    out = np.empty((len(shares), rows.shape[0]))
-    for k, (share, (low, high)) in enumerate(zip(shares, ends, strict=True)):
-        a, b = rows[:, low].astype(float), rows[:, high].astype(float)
-        with np.errstate(invalid="ignore"):
-            out[k] = np.where(a == b, a, a + (b - a) * (share * last - low))
-    return out
 
 
 def _checked(

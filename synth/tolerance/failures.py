@@ -18,7 +18,8 @@ from numpy.typing import NDArray
 from synth.boardruns import Driver, Failures, LimitFailures
 from synth.circuit import Circuit
 from synth.job import Accept
-from synth.tolerance.drawing import Drawn, packages_of
+from synth.tolerance.drawing import Drawn
+from synth.tolerance.makeup import packages_of
 
 __all__ = ["DriverTally", "FailureTally", "Place"]
 

@@ -6,7 +6,10 @@ What `synth.loop.loop_margins` reads off one loop, here for many boards at once.
 from __future__ import annotations
 
 import math
+import sys
+from collections.abc import Callable
 from dataclasses import dataclass
+from functools import partial
 
 import numpy as np
 from numpy.typing import NDArray
@@ -21,15 +24,26 @@ from synth.quantities import show_share
 from synth.tolerance.boards import drawn_blocks
 from synth.tolerance.drawing import Drawn
 from synth.tolerance.interval import clopper_pearson
+from synth.tolerance.loopblock import scanned_margins
+from synth.tolerance.loopscan import LoopScan
 from synth.tolerance.loopsweep import LoopSweep
+from synth.tolerance.oscillation import OscillationWatch
 from synth.transfer import TransferFunction
 
 __all__ = ["BoardMargins", "board_margins", "loop_yield_check", "run_loops"]
 
 Real = NDArray[np.float64]
+_Margins = Callable[[Drawn], Real]
 
-HELD = 300_000
-"""Boards times frequencies whose responses are held at once."""
+BLOCK = 1000
+"""Boards that are scanned at once."""
+
+PILOT = 48
+"""Boards, the first ones, that tell how dense the frequencies of a scan must be."""
+
+WORK = 10_000_000
+"""Boards times points of the grid where responses are too sharp for a scan, about 2 s: then only
+the first boards are done, as many as that allows."""
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -41,6 +55,11 @@ class BoardMargins:
     gain_margin_db: Real
     disk_margin: Real
     unstable_poles: Real
+
+    @classmethod
+    def of(cls, rows: Real) -> BoardMargins:
+        """From one row a margin, in the order of the fields."""
+        return cls(**dict(zip(cls.__dataclass_fields__, rows, strict=True)))
 
     @property
     def stable(self) -> NDArray[np.bool_]:
@@ -58,10 +77,11 @@ def run_loops(
     boards: int,
     seed: int,
     population: Population | None = None,
+    progress: Callable[[int, int], None] | None = None,
     confidence: float = 0.95,
 ) -> LoopBoards:
-    """Margins over the first `boards` boards that `run_boards` draws with the same seed and
-    population, however many it draws.
+    """Margins over the boards that `run_boards` draws with the same seed and population: all, or
+    the first ones, as `WORK` allows, where their responses are too sharp for a `LoopScan`.
 
     Parameters
     ----------
@@ -71,13 +91,19 @@ def run_loops(
         H(s), not inverted.
     inverted
         Whether the board is one of -H(s), to be inverted once more.
+    progress
+        Called with (boards done, boards) as the run goes on.
     """
-    parts = [
-        board_margins(program, loop, target, drawn, inverted=inverted)
-        for _, _, drawn in drawn_blocks(circuit, population, boards=boards, seed=seed)
-    ]
-    names = BoardMargins.__dataclass_fields__
-    found = BoardMargins(**{n: np.concatenate([getattr(p, n) for p in parts]) for n in names})
+    pilot = next(drawn_blocks(circuit, population, boards=min(boards, PILOT), seed=seed))[2]
+    margins, most = _margins_of(program, loop, target, pilot, inverted=inverted)
+    boards = min(boards, most)
+    blocks = drawn_blocks(circuit, population, boards=boards, seed=seed, block=BLOCK)
+    each = np.empty((len(BoardMargins.__dataclass_fields__), boards))
+    for start, stop, drawn in blocks:
+        each[:, start:stop] = margins(drawn)
+        if progress is not None:
+            progress(stop, boards)
+    found = BoardMargins.of(each)
     stable = found.stable
     passed, short = stable.copy(), []
     for margin, limit in (
@@ -113,12 +139,26 @@ def board_margins(
     inverted: bool = False,
 ) -> BoardMargins:
     """Margins of the boards that were drawn."""
+    pilot = drawn.part(slice(0, PILOT))
+    margins, _ = _margins_of(program, loop, target, pilot, inverted=inverted)
+    starts = range(0, len(drawn.values), BLOCK)
+    rows = [margins(drawn.part(slice(start, start + BLOCK))) for start in starts]
+    return BoardMargins.of(np.concatenate(rows, axis=1))
+
+
+def _margins_of(
+    program: NodalProgram, loop: Loop, target: TransferFunction, pilot: Drawn, *, inverted: bool
+) -> tuple[_Margins, int]:
+    """What finds the margins of boards like those of the pilot, and of how many it should."""
     sweep = LoopSweep.of(program, loop, target, -1.0 if inverted else 1.0)
-    count = max(1, HELD // sweep.grid.size)
-    starts = range(0, len(drawn.values), count)
-    rows = [sweep.margins(drawn.part(slice(start, start + count))) for start in starts]
-    columns = [np.concatenate(column) for column in zip(*rows, strict=True)]
-    return BoardMargins(**dict(zip(BoardMargins.__dataclass_fields__, columns, strict=True)))
+    scan = LoopScan.of(sweep, pilot)
+    found = sweep.margins if scan is None else partial(scanned_margins, scan)
+    watch = OscillationWatch(program, target)
+
+    def margins(drawn: Drawn) -> Real:
+        return found(drawn, watch.excess(drawn))
+
+    return margins, max(WORK // sweep.grid.size, 1) if scan is None else sys.maxsize
 
 
 def loop_yield_check(found: LoopBoards) -> Check:

@@ -33,7 +33,7 @@ from synth.nyquist import (
 from synth.tolerance.drawing import Drawn
 from synth.transfer import TransferFunction
 
-__all__ = ["LoopSweep"]
+__all__ = ["LoopSweep", "bracketed_roots", "crossings", "nearest", "picked", "wrapped"]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -58,6 +58,9 @@ CLOSEST = 1e-6
 
 GAIN_SLACK = 0.05
 """How much nearer to 1 [Np] a crossing may turn out than the grid says."""
+
+HELD = 300_000
+"""Boards times frequencies whose responses are held at once."""
 
 STEPS, ROOT = 60, 1e-11
 """Most steps of a root search, and how near to 0 its function must come; less than what the
@@ -97,31 +100,40 @@ class LoopSweep:
         """L of the nominal board."""
         return loop_response(self.loop, lambda f: self.sign * self.program.solve(f))(frequency_hz)
 
-    def margins(self, drawn: Drawn) -> tuple[Real, Real, Real, Real, Real]:
+    def margins(self, drawn: Drawn, excess: Index | None = None) -> Real:
         """Crossover [Hz], phase margin [deg], gain margin [dB], disk margin and unstable poles of
-        the boards drawn; NaN where `LoopMargins` has None."""
-        ratio = self._boards(self.grid, drawn) / self.nominal
+        the boards drawn, shape (5, boards); NaN where `LoopMargins` has None.  `excess` is how many
+        poles each board by itself has right of the axis beyond those of H(s); None: none."""
+        if excess is None:
+            excess = np.zeros(len(drawn.values), dtype=np.intp)
+        count = max(1, HELD // self.grid.size)
+        parts = [slice(k, k + count) for k in range(0, len(drawn.values), count)]
+        rows = [self._margins(drawn.part(part), excess[part]) for part in parts]
+        return np.concatenate(rows, axis=1)
+
+    def _margins(self, drawn: Drawn, excess: Index) -> Real:
+        ratio = self.boards(self.grid, drawn) / self.nominal
         value = self.reference * ratio
-        poles = self._unstable(ratio, value, drawn)
+        poles = self._unstable(ratio, value, drawn) + excess
         crossover, phase = self._phase(ratio, value)
         gain = self._gain(ratio, value)
         stable = poles == 0
         phase[stable], gain[stable] = np.abs(phase[stable]), np.abs(gain[stable])
         disk = np.where(stable | np.isnan(poles), self._disk(ratio, value), 0.0)
-        return crossover, phase, gain, disk, poles
+        return np.array([crossover, phase, gain, disk, poles])
 
     def _phase(self, ratio: Complex, value: Complex) -> tuple[Real, Real]:
         """Crossover and phase margin, NaN without one."""
-        board, cell = _crossings(np.log(np.abs(value)))
+        board, cell = crossings(np.log(np.abs(value)))
         between = _Between.cells(self, ratio, board, cell)
         x = between.roots(lambda loop: np.log(np.abs(loop)))
         phase = np.degrees(np.angle(-between(x)))
-        best = _nearest(board, np.abs(phase), len(value))
-        return _picked(np.exp(x), best), _picked(phase, best)
+        best = nearest(board, np.abs(phase), len(value))
+        return picked(np.exp(x), best), picked(phase, best)
 
     def _gain(self, ratio: Complex, value: Complex) -> Real:
         """Gain margin with its sign [dB], NaN without one."""
-        board, cell = _crossings(value.imag)
+        board, cell = crossings(value.imag)
         left = value.real[board, cell] < 0
         board, cell = board[left], cell[left]
         ends = np.log(np.abs([value[board, cell], value[board, cell + 1]]))
@@ -136,8 +148,8 @@ class LoopSweep:
             at_dc = np.flatnonzero(value.real[:, 0] < 0)
             board = np.concatenate([board, at_dc])
             size = np.concatenate([size, np.log(np.abs(value.real[at_dc, 0]))])
-        best = _nearest(board, np.abs(size), len(value))
-        return -20 / math.log(10) * _picked(size, best)
+        best = nearest(board, np.abs(size), len(value))
+        return -20 / math.log(10) * picked(size, best)
 
     def _disk(self, ratio: Complex, value: Complex) -> Real:
         """Disk margin as if every loop was stable."""
@@ -165,7 +177,7 @@ class LoopSweep:
         if not is_decidable(self.target):
             return np.full(len(value), np.nan)
         angle = np.angle(freed_of_axis(self.grid, value, self.parts))
-        steps = _wrapped(np.diff(angle, axis=1))
+        steps = wrapped(np.diff(angle, axis=1))
         if self.target.poles_at_origin:
             alike = np.abs(value / self.asked - 1) < LIKE_TARGET
             start = np.where(alike.any(axis=1), alike.argmax(axis=1), 0)
@@ -178,7 +190,7 @@ class LoopSweep:
             between = _Between.cells(self, ratio, board, cell)
             x = np.linspace(between.low, between.high, 33, axis=1)
             loop = between(x)
-            finer = _wrapped(np.diff(np.angle(freed_of_axis(np.exp(x), loop, self.parts)), axis=1))
+            finer = wrapped(np.diff(np.angle(freed_of_axis(np.exp(x), loop, self.parts)), axis=1))
             steps[board, cell] = finer.sum(axis=1)
             unsettled[board[~(np.abs(finer) <= TURN).all(axis=1)]] = True
         poles = np.round(turns_due(self.parts) - np.nan_to_num(steps).sum(axis=1) / math.pi)
@@ -186,14 +198,14 @@ class LoopSweep:
             poles[k] = self._one_by_one(drawn.part(slice(k, k + 1)), value[k])
         return np.asarray(poles)
 
-    def _boards(self, frequency_hz: Real, drawn: Drawn) -> Complex:
+    def boards(self, frequency_hz: Real, drawn: Drawn) -> Complex:
         """H of the boards drawn, shape (boards, frequencies)."""
         return self.sign * self.program.solve(
             frequency_hz, values=drawn.values, gain_bandwidth=drawn.gain_bandwidth
         )
 
     def _one_by_one(self, one: Drawn, value: Complex) -> float:
-        response = loop_response(self.loop, lambda f: self._boards(f, one)[0])
+        response = loop_response(self.loop, lambda f: self.boards(f, one)[0])
         count = unstable_poles(
             self.parts, response, self.grid, value, delay=self.loop.delay, asked=self.asked
         )
@@ -253,35 +265,54 @@ class _Between:
         return loop if x.ndim == 2 else loop[:, 0]
 
     def roots(self, quantity: Callable[[Complex], Real]) -> Real:
-        """Where a quantity of L that changes its sign from `low` to `high` is 0.
-
-        Illinois method: a secant that halves the value of an end that stays.
-        """
-        low, high = self.low.copy(), self.high.copy()
-        at_low, at_high = quantity(self(low)), quantity(self(high))
-        x = low
-        for _ in range(STEPS):
-            step = at_high - at_low
-            with np.errstate(divide="ignore", invalid="ignore"):
-                x = high - at_high * (high - low) / step
-            x = np.where(np.isfinite(x) & (x >= low) & (x <= high), x, (low + high) / 2)
-            here = quantity(self(x))
-            left = np.sign(here) == np.sign(at_low)
-            at_high = np.where(left, at_high / 2, here)
-            at_low = np.where(left, here, at_low / 2)
-            low, high = np.where(left, x, low), np.where(left, high, x)
-            if np.all(np.abs(here) < ROOT):
-                break
-        return x
+        """Where a quantity of L that changes its sign from `low` to `high` is 0."""
+        return bracketed_roots(lambda x: quantity(self(x)), self.low, self.high)
 
 
-def _crossings(value: Real) -> tuple[Index, Index]:
+def bracketed_roots(
+    function: Callable[[Real], Real],
+    low: Real,
+    high: Real,
+    ends: tuple[Real, Real] | None = None,
+) -> Real:
+    """Where a function, of one place each, that changes its sign from `low` to `high` is 0;
+    `ends` are its values there, where these are known.
+
+    Illinois method: a secant that halves the value of an end that stays twice.  Where rounding
+    hides the change of sign it is at the end with the smaller value.
+    """
+    at_low, at_high = ends or (function(low), function(high))
+    done = (at_low < 0) == (at_high < 0)
+    found = np.where(np.abs(at_low) < np.abs(at_high), low, high)
+    x, was_left = low, np.zeros(low.shape, dtype=np.int8)
+    for _ in range(STEPS):
+        step = at_high - at_low
+        with np.errstate(divide="ignore", invalid="ignore"):
+            x = high - at_high * (high - low) / step
+        x = np.where(np.isfinite(x) & (x >= low) & (x <= high), x, (low + high) / 2)
+        here = function(x)
+        # A place that is found stays, however long others take.
+        now = ~done & (np.abs(here) < ROOT)
+        found[now], done = x[now], done | now
+        if done.all():
+            break
+        left = np.where(np.sign(here) == np.sign(at_low), 1, -1).astype(np.int8)
+        again = left == was_left
+        moves_low = left > 0
+        at_high = np.where(moves_low, np.where(again, at_high / 2, at_high), here)
+        at_low = np.where(moves_low, here, np.where(again, at_low / 2, at_low))
+        low, high = np.where(moves_low, x, low), np.where(moves_low, high, x)
+        was_left = left
+    return np.where(done, found, x)
+
+
+def crossings(value: Real) -> tuple[Index, Index]:
     """Boards and the points after which `value` changes its sign."""
     board, cell = np.nonzero((value[:, :-1] < 0) != (value[:, 1:] < 0))
     return board, cell
 
 
-def _nearest(board: Index, size: Real, boards: int) -> Index:
+def nearest(board: Index, size: Real, boards: int) -> Index:
     """Which entry of each board is the smallest; -1 for a board without one."""
     order = np.argsort(-size, kind="stable")
     best = np.full(boards, -1)
@@ -289,12 +320,12 @@ def _nearest(board: Index, size: Real, boards: int) -> Index:
     return best
 
 
-def _picked(values: Real, place: Index) -> Real:
+def picked(values: Real, place: Index) -> Real:
     """The value at each place, NaN at -1."""
     return np.append(values, np.nan)[place]
 
 
-def _wrapped(angle: Real) -> Real:
+def wrapped(angle: Real) -> Real:
     """Angles [rad] within +-pi."""
     return np.asarray(angle - 2 * np.pi * np.round(angle / (2 * np.pi)))
 

@@ -19,10 +19,15 @@ from netlist.report.choice import (
 )
 from netlist.report.page import report_page
 from synth.choosing.bottlenecks import Bottleneck
+from synth.nodal import compile_circuit
+from synth.population import Network, PartSpread, Population
+from synth.results import SpreadShare
+from synth.tolerance import error_budget
 from tests.netlist import boards
 
 MADE = boards.design()
 BARE = replace(MADE, certificate=None, allowance=None, budget=None)
+VERIFIED = boards.verification(MADE)
 
 
 def page(design) -> str:
@@ -143,11 +148,65 @@ def test_without_a_tighter_grade_the_budget_says_so() -> None:
 
 def test_shares_in_the_table_add_up() -> None:
     """The largest by name, all others in one line."""
-    many = tuple((f"R{k % 6 + 1}", 0.1) for k in range(10))
+    many = tuple(SpreadShare(cause="own", refs=(f"R{k % 6 + 1}",), share=0.1) for k in range(10))
     rows = budget_rows(replace(MADE.budget, shares=many), MADE.circuit)
     assert len(rows) == 9
     assert rows[-1]["ref"] == "2 others"
     assert plain(rows[-1]["share"]) == "20 %"
+
+
+WARM = Population(
+    resistors=PartSpread(lot=0.5, temperature_coefficient=1e-4),
+    networks=(Network(refs=("R1", "R4"), tolerance=0.001),),
+    temperature=(0, 60),
+    gain_bandwidth_spread=0.4,
+)
+
+
+def test_what_drives_the_spread_is_named_where_it_is_more_than_the_parts() -> None:
+    """Parts, temperature and op-amps with shares that add up, what a reel and a network share by
+    name, and matched parts as one."""
+    program = compile_circuit(MADE.circuit)
+    found = error_budget(
+        program,
+        MADE.circuit,
+        MADE.nominal,
+        MADE.frequency_hz,
+        accept=MADE.job.accept,
+        seed=1,
+        population=WARM,
+    )
+    assert sum(found.by_cause.values()) == pytest.approx(1)
+    first, second, *_ = (plain(line) for line in budget_lines(found))
+    assert "the parts at 25 °C, temperature and the gain-bandwidth of the op-amps spread" in first
+    assert "and the rest the spread of boards" in first
+    shares = re.findall(r"([\d.]+) %(?: is due)? to", second)
+    assert sum(map(float, shares)) == pytest.approx(100, abs=0.6)
+    assert second.startswith("Of the variance over boards, ")
+    assert "% is due to the parts at 25 °C, " in second
+    rows = {(r["ref"], r["sets"]) for r in budget_rows(found, MADE.circuit)}
+    assert ("R1 and R4", "deviation they share as matched parts") in rows
+    assert ("all parts", "drift with temperature") in rows
+    record = json.loads(record_text(design_record(replace(MADE, budget=found), VERIFIED)))
+    assert record["budget"]["by_cause"].keys() == {"parts", "temperature", "op_amps"}
+    assert sum(s["share"] for s in record["budget"]["shares"]) == pytest.approx(1)
+    hardly = tuple(
+        SpreadShare(cause=cause, refs=("U1",), share=share)
+        for cause, share in (("temperature", 0.9995), ("op_amp", 0.0005))
+    )
+    assert "and under 0.1 % to the gain-bandwidth" in plain(
+        budget_lines(replace(found, shares=hardly))[1]
+    )
+    matched = replace(found, part=replace(found.part, refs=("R1", "R4")))
+    assert "The parts whose tighter grade helps most are R1 and R4, which are matched: " in plain(
+        " ".join(budget_lines(matched))
+    )
+
+
+def test_the_page_speaks_of_the_population_where_the_job_states_one() -> None:
+    warm = replace(MADE, job=replace(MADE.job, board=replace(MADE.job.board, population=WARM)))
+    assert "of the population that the run of boards draws from" in page(warm)
+    assert "each part independent and uniform within its own" in page(MADE)
 
 
 def test_the_page_says_all_of_it_and_leaves_out_what_is_not_known() -> None:

@@ -1,17 +1,21 @@
 """Predicted peaks and DC levels against op-amps that saturate, in ngspice."""
 
+import re
 from dataclasses import replace
 
 import numpy as np
 import pytest
 
 from netlist.clipping import sine_check, sine_run
+from netlist.deck import number, sine_deck
 from netlist.ngspice import TransientResult
 from netlist.stimulus import decks_of
+from synth.candidates import sketch_form
 from synth.headroom import tightest_limit
 from synth.limits import swings
 from synth.nodal import compile_circuit
 from synth.transfer import Factor, TransferFunction
+from tests.jobs import job_for
 from tests.netlist import boards
 
 
@@ -61,9 +65,9 @@ def test_a_peak_at_dc_is_shown_by_a_slow_sine(design, simulator):
 def test_no_run_where_peaks_are_predicted_to_clip_or_a_sine_never_settles(design):
     hot = tuple(replace(s, peak=2 * s.peak_limit) for s in design.swings)
     assert sine_run(replace(design, swings=hot)) is None
-    for q in (100.0, np.inf):
-        ringing = TransferFunction.from_factors(1, (), [Factor.pair(boards.W0, q)])
-        assert sine_run(replace(design, wanted=ringing)) is None
+    for damping in (1.5e6, 1e9):  # Q of 100, and op-amps that turn what is left of it negative
+        ringing = design.circuit.with_values({"R2": damping})
+        assert sine_run(replace(design, circuit=ringing)) is None
     growing = TransferFunction.from_factors(1, (), [Factor.real(1.0), Factor.real(-1e6)])
     assert sine_run(replace(design, wanted=growing)) is None
     assert sine_run(replace(design, swings=())) is None
@@ -143,3 +147,43 @@ def test_offset_and_bias_move_outputs_as_predicted(design, simulator, output):
     np.testing.assert_allclose(levels, expected, rtol=1e-5, atol=1e-9)
     assert abs(levels[output]) == pytest.approx(found.worst[output], rel=1e-5)
     assert found.worst[output] > 1e-3
+
+
+def test_a_square_wave_all_but_reaches_the_bound_for_any_input(simulator):
+    """Op-amps raise the Q of a resonance, and what bounds every waveform must know them: with ideal
+    ones in their place the bound would lie 12 % lower at the output."""
+    pair = Factor.pair(2 * np.pi * 3e3, 5.0)
+    target = TransferFunction.from_factors(2 * pair.natural_frequency**2, [], [pair])
+    slow = {"gain_bandwidth": 5e5}
+    job = job_for(
+        target, (30.0, 9e3), op_amp_figures=slow, input_peak=0.3, swing="any", form="tow_thomas"
+    )
+    frequency = np.geomspace(30.0, 9e3, 200)
+    circuit = sketch_form(job, "tow_thomas", frequency).circuit
+    circuit = circuit.with_values({p.ref: p.ideal for p in circuit.passives})
+    found = {s.net: s for s in swings(circuit, target, job)}
+    sine = {s.net: s for s in swings(circuit, target, as_sine(job))}
+    hot = max(sine.values(), key=lambda s: s.peak)
+    deck = sine_deck(
+        circuit,
+        title="square wave",
+        supply=job.board.supply,
+        peak_volts=0.3,
+        frequency_hz=hot.peak_hz,
+        rise_s=1e-6,
+        stop_s=30 / hot.peak_hz,
+        kept_s=29 / hot.peak_hz,
+        largest_step_s=5e-3 / hot.peak_hz,
+    )
+    turn = f"sin({number(2 * np.pi * hot.peak_hz)}*time)"
+    square, count = re.subn(r"(?m)^Bsine (\S+) 0 v=.*$", rf"Bsine \1 0 v=0.3*sgn({turn})", deck)
+    assert count == 1
+    volts = simulator.transient(square, list(found)).voltages
+    for net, swing in found.items():
+        assert np.max(np.abs(volts[net])) <= 1.002 * swing.peak
+    assert np.max(np.abs(volts[hot.net])) > 0.95 * found[hot.net].peak
+
+
+def as_sine(job):
+    """The same job judged by sines."""
+    return replace(job, signal=replace(job.signal, swing="sine"))

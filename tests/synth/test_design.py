@@ -242,14 +242,17 @@ def test_the_loop_is_run_over_the_boards_of_the_tolerance_run() -> None:
     )
 
 
-def test_the_loop_is_run_over_the_first_boards_alone_where_there_are_many(monkeypatch) -> None:
-    """A run of as many boards as the loop is looked at on finds the same loops."""
-    monkeypatch.setattr("synth.design.LOOP_BOARDS", 40)
+def test_the_loop_is_run_over_every_board() -> None:
+    """However many there are, and it says how far it has come."""
     plant = TransferFunction.from_polynomials([3e5], [1, 2e3, 0])
     job = replace(job_for(PI, (10.0, 5e3), input_peak=0.1), loop=Loop(plant=plant))
-    many, few = (design(job, boards=n) for n in (60, 40))
-    assert (many.tolerance.boards, many.loop.boards.boards) == (60, 40)
-    assert many.loop.boards == few.loop.boards
+    stages = []
+    found = design(job, boards=1200, effort=0.1, progress=lambda *stage: stages.append(stage))
+    assert found.tolerance.boards == found.loop.boards.boards == 1200
+    assert [stage for stage in stages if stage[0] == "loops"] == [
+        ("loops", 1000, 1200),
+        ("loops", 1200, 1200),
+    ]
 
 
 @pytest.mark.parametrize("call", [design, compare_forms])

@@ -149,7 +149,7 @@ def test_needed_gain_bandwidth_is_where_the_first_limit_is_missed(form: str) -> 
     frequency = np.geomspace(*BAND, 100)
     circuit = sketch_form(job, form, frequency).circuit
     target = job.target.response(frequency)
-    needed = gain_bandwidth_needed(circuit, target, frequency, accept=job.accept)
+    needed = gain_bandwidth_needed(circuit, target, frequency, accept=job.accept, wanted=job.target)
     assert needed is not None
     program = compile_circuit(circuit)
 
@@ -174,7 +174,9 @@ def test_a_board_too_slow_for_its_limits_needs_a_faster_op_amp_or_has_none() -> 
             replace(a, figures=replace(a.figures, gain_bandwidth=2e4)) for a in circuit.amplifiers
         ),
     )
-    ask = partial(gain_bandwidth_needed, frequency_hz=frequency, accept=job.accept)
+    ask = partial(
+        gain_bandwidth_needed, frequency_hz=frequency, accept=job.accept, wanted=job.target
+    )
     assert ask(slow, target) == pytest.approx(ask(circuit, target), rel=0.01)
     assert ask(slow, 2 * target) is None
 

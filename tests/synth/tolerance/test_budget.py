@@ -12,6 +12,7 @@ from synth.circuit import Circuit
 from synth.evidence import DB_PER_NEPER, ResponseError, response_error
 from synth.job import Accept
 from synth.nodal import compile_circuit
+from synth.population import Network, PartSpread, Population
 from synth.tolerance import error_budget, next_grade, run_boards
 from tests.circuits import integrator, near_ideal, state_variable, tow_thomas
 
@@ -58,8 +59,9 @@ def test_budget_of_an_integrator_is_that_of_its_rc() -> None:
     assert found.nominal == -0.1
     assert found.values_share == pytest.approx(0.1**2 / (0.1**2 + spread**2), rel=1e-6)
     assert found.values_share + found.tolerance_share == pytest.approx(1, rel=1e-12)
-    assert [ref for ref, _ in found.shares] == ["C1", "R1"]
-    assert dict(found.shares)["R1"] == pytest.approx(1 / 26, rel=1e-5)
+    assert [(s.cause, s.refs) for s in found.shares] == [("own", ("C1",)), ("own", ("R1",))]
+    assert found.shares[1].share == pytest.approx(1 / 26, rel=1e-5)
+    assert found.by_cause == {"parts": pytest.approx(1)}
     assert found.part.refs == ("C1",)
     assert (found.part.tolerance, found.part.grade) == (0.05, 0.02)
     tighter = DB_PER_NEPER * math.sqrt((0.01**2 + 0.02**2) / 3)
@@ -70,7 +72,7 @@ def test_shares_are_whole_and_of_the_tightest_frequency() -> None:
     """Second method: the spread there from drawn boards, not from derivatives."""
     circuit = tow_thomas(near_ideal(), damping=25e3)
     found = budget_of(circuit)
-    assert sum(share for _, share in found.shares) == pytest.approx(1, rel=1e-9)
+    assert sum(s.share for s in found.shares) == pytest.approx(1, rel=1e-9)
     program = compile_circuit(circuit)
     values = np.array([p.value for p in circuit.passives])
     drawn = np.random.default_rng(5).uniform(-1, 1, (4000, values.size))
@@ -167,3 +169,61 @@ def test_parts_without_tolerance_have_no_share() -> None:
 )
 def test_next_grade_is_the_first_below(kind: str, tolerance: float, grade: float | None) -> None:
     assert next_grade(kind, tolerance) == grade
+
+
+def test_the_budget_is_of_the_population() -> None:
+    """Capacitors of one reel, resistors that are matched, drift and slow op-amps
+    change sigma, the shares and what helps; what the budget says of the boards' 95th percentile is
+    what a run of them finds."""
+    slow = replace(near_ideal(), gain_bandwidth=5e6)
+    circuit = at(tow_thomas(slow, damping=20e3), C1=0.02, C2=0.02)
+    population = Population(
+        resistors=PartSpread(distribution="normal"),
+        capacitors=PartSpread(lot=0.8, temperature_coefficient=2e-4),
+        networks=(Network(refs=("R1", "R3"), tolerance=0.001),),
+        temperature=(-20.0, 80.0),
+        gain_bandwidth_spread=0.3,
+    )
+    program = compile_circuit(circuit)
+    found = error_budget(
+        program, circuit, off(0.0), BAND, accept=MAGNITUDE, seed=3, population=population
+    )
+    assert sum(s.share for s in found.shares) == pytest.approx(1, rel=1e-9)
+    assert found.by_cause.keys() == {"parts", "temperature", "op_amps"}
+    causes = {(s.cause, s.refs) for s in found.shares}
+    assert {("lot", ("C1", "C2")), ("temperature", ()), ("op_amp", ("U1", "U2", "U3"))} <= causes
+    run = run_boards(
+        program,
+        circuit,
+        program.solve(BAND),
+        BAND,
+        accept=MAGNITUDE,
+        boards=8000,
+        seed=11,
+        population=population,
+    )
+    assert found.error_95_db == pytest.approx(run.error_95_db, rel=0.06)
+    assert budget_of(circuit).by_cause.keys() == {"parts"}
+
+
+def test_matched_parts_are_tightened_together() -> None:
+    """The grade of a network is one of all its parts, however much less each of them is worth than
+    a part beside it."""
+    circuit = at(tow_thomas(near_ideal(), damping=20e3), C1=0.01, C2=0.01, R2=0.05)
+    pair = Population(networks=(Network(refs=("R3", "R4", "R5"), tolerance=0.001),))
+    found = error_budget(
+        compile_circuit(circuit),
+        circuit,
+        off(0.0),
+        BAND,
+        accept=MAGNITUDE,
+        seed=3,
+        population=pair,
+    )
+    assert found.part.refs == ("R2",)
+    tight = at(circuit, R2=0.001, R1=0.001, R6=0.001)
+    found = error_budget(
+        compile_circuit(tight), tight, off(0.0), BAND, accept=MAGNITUDE, seed=3, population=pair
+    )
+    assert found.part.refs == ("R3", "R4", "R5")
+    assert found.part.spread < found.spread

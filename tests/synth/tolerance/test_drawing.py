@@ -19,7 +19,8 @@ from synth.errors import JobError
 from synth.nodal import compile_circuit
 from synth.population import Network, PartSpread, Population
 from synth.tolerance import BoardSource, check_networks
-from synth.tolerance.drawing import packages_of, within_tolerance
+from synth.tolerance.drawing import within_tolerance
+from synth.tolerance.makeup import packages_of
 from tests.synth.nodal.boards import amplifier, capacitor, chain, op_amp, resistor
 
 BOARDS = 20_000
@@ -332,3 +333,19 @@ def test_every_op_amp_of_a_circuit_has_a_column():
 EVERYTHING_BUT_NETWORKS = Population(
     resistors=EVERYTHING.resistors, temperature=(0.0, 50.0), gain_bandwidth_spread=0.2
 )
+
+
+def test_other_tolerances_give_the_same_boards_otherwise():
+    """R1 at half its tolerance deviates half as much, about the same offset of its reel; C1 moves
+    as before; in a network the tightest part binds all."""
+    lots = Population(resistors=PartSpread(lot=0.5), capacitors=PartSpread(lot=0.2))
+    before = deviations(lots, boards=50)
+    source = BoardSource(ladder(), lots, 4, tolerances={"R1": 0.005})
+    nominal = np.array([p.value for p in ladder().passives])
+    after = dict(zip(before, (source.draw(50).values / nominal - 1).T, strict=True))
+    np.testing.assert_allclose(after["R1"], before["R1"] / 2, rtol=1e-9, atol=1e-15)
+    for ref in before.keys() - {"R1"}:
+        np.testing.assert_array_equal(after[ref], before[ref])
+    pair = Population(networks=(Network(refs=("R1", "R3"), tolerance=0.001),))
+    tight = BoardSource(ladder(), pair, 4, tolerances={"R1": 0.002}).draw(BOARDS)
+    assert np.abs(tight.values[:, 2] / 20e3 - 1).max() <= 0.002 * (1 + 1e-9)

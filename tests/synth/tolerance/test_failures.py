@@ -136,7 +136,6 @@ def test_blocks_do_not_matter(monkeypatch):
     )
     whole = run(chain(2, op_amp()), boards=700, population=population)
     monkeypatch.setattr(boards_module, "BLOCK", 37)
-    monkeypatch.setattr(boards_module, "STORE", 8 * 700 * 4)
     parts = run(chain(2, op_amp()), boards=700, population=population)
     assert parts.failures == whole.failures
     assert parts.error_95_db == pytest.approx(whole.error_95_db, rel=1e-12)

@@ -11,10 +11,15 @@ from synth.job import Loop
 from synth.loop import loop_margins
 from synth.nodal import compile_circuit
 from synth.population import Population
+from synth.stability import poles_on_the_right, right_of_target
 from synth.tolerance import BoardSource, board_margins, loop_yield_check, run_loops
+from synth.tolerance import loops as loops_module
 from synth.tolerance.drawing import Drawn
+from synth.tolerance.loopblock import scanned_margins
+from synth.tolerance.loopscan import KEPT, LoopScan
+from synth.tolerance.loopsweep import LoopSweep
 from synth.transfer import Factor, TransferFunction
-from tests.circuits import figures, tow_thomas
+from tests.circuits import figures, integrator, tow_thomas
 
 RESISTANCE, CAPACITANCE = 10e3, 1.59e-9
 W0 = 1 / (RESISTANCE * CAPACITANCE)
@@ -44,9 +49,18 @@ def spread(circuit, boards: int):
 def one_by_one(circuit, loop, target, drawn, *, sign=1.0):
     """The same from `loop_margins` with the circuit of each board, shape (5, boards)."""
     programs = [compile_circuit(made) for made in circuits_of(circuit, drawn)]
-    found = [loop_margins(loop, target, lambda f, p=p: sign * p.solve(f)) for p in programs]
+    found = [
+        loop_margins(loop, target, lambda f, p=p: sign * p.solve(f), excess=excess_of(p, target))
+        for p in programs
+    ]
     return np.array([[np.nan if getattr(m, n) is None else getattr(m, n) for m in found]
                      for n in NAMES], dtype=float)  # fmt: skip
+
+
+def excess_of(program, target):
+    """Poles right of the axis beyond those of H(s)."""
+    right = int(poles_on_the_right(program.poles()[None], target)[0])
+    return right - right_of_target(target)
 
 
 def circuits_of(circuit, drawn):
@@ -72,6 +86,7 @@ PLANTS = {
     "a delayed gain": ([0.6], [1], 3e-6),
     "an unstable one": ([4e4], [1, -1e4], 0.0),
     "a resonance": ([2e9], [1, 200, 1e9], 0.0),
+    "a lossless resonance": ([2e9], [1, 0, 1e9], 0.0),
     "a small gain": ([0.01], [1], 0.0),
     "one that blocks DC": ([1e-4, 0], [1e-5, 1], 0.0),
 }
@@ -191,3 +206,152 @@ def test_poles_of_h_on_the_imaginary_axis_leave_the_count_open() -> None:
     found = board_margins(compile_circuit(circuit), loop, target, drawn)
     assert np.isnan(found.unstable_poles).all()
     assert not found.stable.any()
+
+
+def edge(q: float):
+    """A loop whose nominal board is all but on the edge, as above."""
+    circuit, target = resonator(q)
+    a = W0 / 3
+    k = (W0 / q + a) * (W0**2 + a * W0 / q) / (a * W0**2) - 1
+    plant = TransferFunction.from_polynomials([float(np.sign(target.gain)) * k * a], [1, a])
+    return circuit, target, Loop(plant=plant)
+
+
+def scan_of(circuit, loop, target, drawn):
+    sweep = LoopSweep.of(compile_circuit(circuit), loop, target, 1.0)
+    return LoopScan.of(sweep, drawn.part(slice(0, 20)))
+
+
+@pytest.mark.parametrize("q", [0.7, 3.0, 14.0])
+@pytest.mark.parametrize("gain", [0.3, 1.0])
+def test_the_scan_knows_every_board_everywhere(q: float, gain: float) -> None:
+    """Second method: boards solved at frequencies of no grid, all over the range.  What the scan
+    says of ln H there is right to what it promises of every board it keeps."""
+    circuit, target, loop = edge(q)
+    numerator, denominator = loop.plant.numerator, loop.plant.denominator
+    scaled = [gain * float(c) for c in numerator], [float(c) for c in denominator]
+    plant = TransferFunction.from_polynomials(*scaled)
+    drawn = spread(circuit, 60)
+    scan = scan_of(circuit, Loop(plant=plant), target, drawn)
+    apart = scan.apart(drawn)
+    kept = np.flatnonzero(scan.follows(apart, scan.panels.high_orders(apart)))
+    x = np.sort(np.random.default_rng(8).uniform(scan.x[0], scan.x[-1], 400))
+    found = scan.panels.everywhere((apart + scan.nominal)[kept], x)
+    exact = scan.sweep.boards(np.exp(x), drawn)[kept] / target.response(np.exp(x))
+    error = np.abs(np.exp(found) / exact - 1)
+    assert kept.size > 50
+    assert np.all(error <= 3 * KEPT * scan.scale[scan.panels.panel_of(x)])
+
+
+@pytest.mark.parametrize("q", [0.7, 3.0, 14.0])
+def test_the_scan_counts_poles_as_the_dense_grid_does(q: float) -> None:
+    """On the edge of stability, where nearly every board has its turns counted: the grid is the
+    second method.  The scan follows its boards by itself."""
+    circuit, target, loop = edge(q)
+    drawn = spread(circuit, 300)
+    scan = scan_of(circuit, loop, target, drawn)
+    apart = scan.apart(drawn)
+    assert scan.follows(apart, scan.panels.high_orders(apart)).mean() > 0.97
+    found, expected = scanned_margins(scan, drawn), scan.sweep.margins(drawn)
+    np.testing.assert_array_equal(found[4], expected[4])
+    assert 0.05 < (found[4] == 0).mean() < 0.95
+    np.testing.assert_allclose(found[2], expected[2], rtol=1e-3, atol=1e-3)
+
+
+@pytest.mark.parametrize("gain", [0.9, 1.0, 1.1])
+@pytest.mark.parametrize("delay", [0.0, 3e-6])
+def test_a_pole_of_h_at_the_origin_is_counted_as_in_each_loop(gain: float, delay: float) -> None:
+    """The finite gain of the op-amp moves it off; integrator and two lags at the limit of Routh,
+    2 a = w0 k, of 0.9 to 1.1 times that gain."""
+    resistance, capacitance = 10e3, 10e-9
+    circuit = integrator(figures(gain_bandwidth=1e6, open_loop_gain=1e3), resistance, capacitance)
+    target = TransferFunction.from_polynomials([-1 / (resistance * capacitance)], [1, 0])
+    a = 0.3 / (resistance * capacitance)
+    k = -2 * a * resistance * capacitance * gain
+    loop = Loop(
+        plant=TransferFunction.from_polynomials([k * a * a], [1, 2 * a, a * a]), delay=delay
+    )
+    drawn = spread(circuit, 12)
+    scan = scan_of(circuit, loop, target, drawn)
+    expected = one_by_one(circuit, loop, target, drawn)
+    found = scanned_margins(scan, drawn)
+    np.testing.assert_array_equal(found[4], expected[4])
+    np.testing.assert_allclose(found[:4], expected[:4], rtol=1e-5, atol=1e-6)
+    if gain != 1.0:
+        assert set(found[4]) == ({0.0} if gain < 1 else {2.0})
+
+
+def test_a_board_unlike_those_of_the_pilot_is_done_on_the_grid() -> None:
+    """One resonance far from all others: the panels are not made for it, its own coefficients say
+    so, and it comes out as on the grid, the others as if it was not there."""
+    circuit, target = resonator(12.0)
+    loop = Loop(plant=TransferFunction.from_polynomials([2e4], [1, 0]))
+    drawn = spread(circuit, 40)
+    far = drawn.values.copy()
+    far[30] *= 1.35
+    changed = Drawn(far, drawn.gain_bandwidth)
+    scan = scan_of(circuit, loop, target, drawn)
+    apart = scan.apart(changed)
+    followed = scan.follows(apart, scan.panels.high_orders(apart))
+    assert np.flatnonzero(~followed).tolist() == [30]
+    found = scanned_margins(scan, changed)
+    np.testing.assert_array_equal(
+        found[:, 30], scan.sweep.margins(changed.part(slice(30, 31)))[:, 0]
+    )
+    others = np.arange(40) != 30
+    np.testing.assert_allclose(
+        found[:, others], scanned_margins(scan, drawn)[:, others], rtol=1e-9, atol=1e-9
+    )
+
+
+@pytest.mark.parametrize("gain", [1e-3, 0.5])
+def test_boards_that_oscillate_by_themselves_are_counted(gain: float) -> None:
+    """A Q of 25 with op-amps of 100 times the resonance, whose 1/Q less 4/100 is 0: some boards
+    have their pair right of the axis, and a loop that hardly closes keeps it there.  That the
+    closed loop is stable is for the poles of each board and its own curve."""
+    circuit, target = resonator(25.0)
+    slow = replace(
+        circuit,
+        amplifiers=tuple(
+            replace(a, figures=replace(a.figures, gain_bandwidth=1e6)) for a in circuit.amplifiers
+        ),
+    )
+    plant = TransferFunction.from_polynomials([float(np.sign(target.gain)) * gain], [1e-5, 1])
+    loop, drawn = Loop(plant=plant), spread(slow, 40)
+    program = compile_circuit(slow)
+    found = board_margins(program, loop, target, drawn)
+    expected = one_by_one(slow, loop, target, drawn)
+    np.testing.assert_array_equal(found.unstable_poles, expected[-1])
+    by_itself = np.array([excess_of(compile_circuit(c), target) for c in circuits_of(slow, drawn)])
+    assert 0 < np.count_nonzero(by_itself) < 40
+    if gain < 0.01:
+        np.testing.assert_array_equal(found.unstable_poles, by_itself)
+    np.testing.assert_array_equal(found.disk_margin > 0, found.stable)
+
+
+@pytest.mark.parametrize("q", [0.8, 12.0])
+def test_margins_do_not_hang_on_the_size_of_a_block(monkeypatch, q: float) -> None:
+    """Places are looked at by bounds over a block: no board may lose a crossing to another."""
+    circuit, target, loop = edge(q)
+    drawn = spread(circuit, 90)
+    program = compile_circuit(circuit)
+    whole = board_margins(program, loop, target, drawn)
+    monkeypatch.setattr(loops_module, "BLOCK", 7)
+    parts = board_margins(program, loop, target, drawn)
+    for name in NAMES:
+        np.testing.assert_allclose(
+            getattr(parts, name), getattr(whole, name), rtol=1e-9, atol=1e-9, err_msg=name
+        )
+
+
+def test_responses_too_sharp_for_a_scan_are_run_on_the_first_boards(monkeypatch) -> None:
+    """At Q = 1000 no board is like another; the number of boards is said."""
+    circuit, target = resonator(1e3)
+    loop = Loop(plant=TransferFunction.from_polynomials([0.01], [1]))
+    grid = LoopSweep.of(compile_circuit(circuit), loop, target, 1.0).grid
+    monkeypatch.setattr(loops_module, "WORK", 3 * grid.size)
+    options = {"inverted": False, "seed": SEED}
+    run = run_loops(compile_circuit(circuit), circuit, loop, target, boards=8, **options)
+    assert run.boards == 3
+    few = run_loops(compile_circuit(circuit), circuit, loop, target, boards=2, **options)
+    assert few.boards == 2
