@@ -17,13 +17,15 @@ from synth.circuit import Circuit, Passive
 from synth.errors import CircuitError
 from synth.parts import OpAmp, VendorModel
 
-__all__ = ["board_deck", "filtered", "sine_deck", "step_deck", "vendor_deck"]
+__all__ = ["board_deck", "filtered", "follower_deck", "sine_deck", "step_deck", "vendor_deck"]
 
 LONGEST_TEXT = 120
 SOURCE = "Vin"
 _LETTER = {"resistor": "R", "capacitor": "C"}
 # Nets of the rails; no net of a circuit starts with an underscore.
 _RAILS = {"vcc": "_rail_high", "vee": "_rail_low"}
+# On an output that is driven alone [ohm]: little, but never nothing (common practice).
+_LIGHT_LOAD = 100e3
 # Names that a SPICE program gives another meaning.
 _RESERVED_NETS = frozenset({"frequency", "gnd", "null", "time"})
 
@@ -219,22 +221,50 @@ def vendor_deck(
     """
     _check_nets(circuit)
     lines = [line for part in circuit.passives for line in _passive(part)]
-    for amp in circuit.amplifiers:
-        pins = {"plus": amp.plus, "minus": amp.minus, "out": amp.output, **_RAILS}
-        nets = " ".join(pins[pin] for pin in model.pins)
-        lines.append(f"X{amp.ref} {nets} {model.subcircuit}")
+    lines += [
+        f"X{amp.ref} {_called(model, amp.plus, amp.minus, amp.output)}"
+        for amp in circuit.amplifiers
+    ]
     return _text(
         [
             f"* {filtered(title)}",
             "* The response with a vendor's model of the op-amp.",
             f"{SOURCE} {circuit.input_net} 0 DC 0 AC 1",
-            f"Vrail_low {_RAILS['vee']} 0 DC {number(supply[0])}",
-            f"Vrail_high {_RAILS['vcc']} 0 DC {number(supply[1])}",
+            *_rails(supply),
             *lines,
             *model.cards,
             f".ac dec {points_per_decade:d} {number(start_hz)} {number(stop_hz)}",
         ]
     )
+
+
+def follower_deck(model: VendorModel, *, supply: tuple[float, float], drive: float) -> str:
+    """A vendor's model twice, without feedback: the + input at `drive` [V] in the one, whose
+    output is net ``out_up``, at the opposite in the other, ``out_down``; the - inputs at ground.
+    """
+    lines = []
+    for name, volts in (("up", drive), ("down", -drive)):
+        lines += [
+            f"Vdrive_{name} plus_{name} 0 DC {number(volts)}",
+            f"Xmodel_{name} {_called(model, f'plus_{name}', '0', f'out_{name}')}",
+            f"Rload_{name} out_{name} 0 {number(_LIGHT_LOAD)}",
+        ]
+    told = "* A vendor's model of the op-amp on its own."
+    return _text([told, *_rails(supply), *lines, *model.cards, ".op"])
+
+
+def _called(model: VendorModel, plus: str, minus: str, out: str) -> str:
+    """The nets in the order of the model's pins, and its name."""
+    pins = {"plus": plus, "minus": minus, "out": out, **_RAILS}
+    return " ".join([*(pins[pin] for pin in model.pins), model.subcircuit])
+
+
+def _rails(supply: tuple[float, float]) -> list[str]:
+    """The sources of the supply [V]."""
+    return [
+        f"Vrail_low {_RAILS['vee']} 0 DC {number(supply[0])}",
+        f"Vrail_high {_RAILS['vcc']} 0 DC {number(supply[1])}",
+    ]
 
 
 def filtered(text: str) -> str:

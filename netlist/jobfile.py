@@ -83,7 +83,13 @@ def parse_job(
         path of the first.
     """
     mistakes = Mistakes(text, name)
-    table = _checked(_parsed(text, name), mistakes)
+    document = _parsed(text, name)
+    if not document:
+        raise JobError(
+            f"{name}: got a job without a key, expected at least a table [target] that states H(s) "
+            "and a table [signal] with band = ['1 Hz', '20 kHz']"
+        )
+    table = _checked(document, mistakes)
     if table is None:
         mistakes.stop()
     signal = mistakes.attempt("signal", lambda: Signal(**table.signal.given()))
@@ -255,7 +261,11 @@ def _vendor_model(stated: Mapping[str, Any], files: NamedFiles) -> VendorModel |
         )
     from netlist.vendormodel import parse_model, read_model_text
 
-    text, name = files.take(stated["model"], read_model_text)
+    try:
+        text, name = files.take(stated["model"], read_model_text)
+    except JobError as error:
+        error.key = error.key or "model"
+        raise
     return parse_model(
         text,
         name=name,

@@ -4,16 +4,20 @@ from __future__ import annotations
 
 import re
 from collections import Counter
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
 from typing import NoReturn, TypeVar
 
-from synth.errors import ExpressionError, JobError
+from synth.errors import ExpressionError, JobError, RealizationError
 from synth.quantities import what_came
 
-__all__ = ["Mistakes", "lines_of_keys"]
+__all__ = ["Mistakes", "lines_of_keys", "telling_lines"]
 
 T = TypeVar("T")
 
+# What starts at the root of a job.
+_TABLES = ("title", "target", "signal", "board", "accept", "loop")
+_KEYED = re.compile(rf"((?:{'|'.join(_TABLES)})(?:\.[A-Za-z0-9_\[\]]+)*): (.*)", re.DOTALL)
 _BARE = re.compile(r"[A-Za-z0-9_-]+(\[[0-9]+\])?")
 _HEADER = re.compile(r"\s*\[{1,2}([^\[\]]+)\]{1,2}\s*(#.*)?")
 _ASSIGNMENT = re.compile(r"\s*([A-Za-z0-9_\-.\"' ]+?)\s*=")
@@ -68,6 +72,22 @@ class Mistakes:
         error = JobError("\n".join(message for _, message in self.found))
         error.key = self.found[0][0] if self.found else ""
         raise error
+
+
+@contextmanager
+def telling_lines(text: str, name: str) -> Iterator[None]:
+    """Puts file and line before what is said of a key of the job after it was read.
+
+    `text` is that of the job file, `name` what to call it.
+    """
+    try:
+        yield
+    except (JobError, RealizationError) as error:
+        if found := _KEYED.fullmatch(str(error)):
+            told = Mistakes(text, name)
+            told.add(tuple(found[1].split(".")), found[2])
+            error.args = (told.found[0][1],)
+        raise
 
 
 def lines_of_keys(text: str) -> dict[tuple[str, ...], int]:

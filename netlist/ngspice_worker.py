@@ -36,7 +36,10 @@ LENGTH = struct.Struct("<Q")
 PARENT_POLL_S = 0.5
 LONGEST_COMMAND = 1000
 _BAD = re.compile(r"error|abort|fatal|singular|unknown|too many|can't|cannot", re.IGNORECASE)
-_HARMLESS = re.compile(r"Note:|Warning:|Using |Doing analysis|No\. of Data", re.IGNORECASE)
+# A step towards an operating point may fail, and the next one succeed.
+_HARMLESS = re.compile(
+    r"Note:|Warning:|Using |Doing analysis|No\. of Data|Trying gmin", re.IGNORECASE
+)
 
 
 class _RefusedError(Exception):

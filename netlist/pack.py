@@ -86,7 +86,8 @@ def pack_files(
 
     decks = decks_of(design)
     drawings = draw_all(design, verification)
-    lines = parts_list(design.circuit, supply=design.job.board.supply)
+    board = design.job.board
+    lines = parts_list(design.circuit, supply=board.supply, networks=board.population.networks)
     texts = {
         "report.html": report_page(
             design, verification, drawings=drawings, lines=lines, job_name=job_name

@@ -12,6 +12,9 @@ takes for granted (all common practice):
 - the rated voltage of a capacitor is the next standard one at or above twice what it can see:
   the rails across a signal capacitor, one rail across a decoupling capacitor.
 
+A line holds parts that are bought alike: those of a matched network stand apart from single ones
+of the same value, and a remark names the network, and the parts whose value the job states.
+
 The marking starts with the value code of IEC 60062; for a capacitor, dielectric and rated
 voltage follow it.
 """
@@ -19,12 +22,13 @@ voltage follow it.
 from __future__ import annotations
 
 import re
-from collections.abc import Iterable, Iterator
+from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass
 
 from synth.circuit import Amplifier, Circuit, Passive
 from synth.parts import OP_AMPS_PER_PACKAGE
-from synth.quantities import marking
+from synth.population import Network
+from synth.quantities import marking, show
 
 __all__ = ["Package", "PartLine", "dielectric", "packages", "parts_list", "rated_voltage"]
 
@@ -87,13 +91,23 @@ class Package:
         return len(self.op_amps) + len(self.spares)
 
 
-def parts_list(circuit: Circuit, *, supply: tuple[float, float]) -> tuple[PartLine, ...]:
-    """Every part of the board; `supply` is the negative and the positive rail [V]."""
+def parts_list(
+    circuit: Circuit, *, supply: tuple[float, float], networks: Sequence[Network] = ()
+) -> tuple[PartLine, ...]:
+    """Every part of the board.
+
+    Parameters
+    ----------
+    supply
+        The negative and the positive rail [V].
+    networks
+        Parts that are bought matched to each other.
+    """
     low, high = supply
     across = rated_voltage(high - low)
     chips = packages(circuit.amplifiers, taken=circuit.by_ref)
     return (
-        *_grouped(circuit.bought, across),
+        *_grouped(circuit.bought, across, networks),
         *_op_amps(circuit.amplifiers, chips),
         *_supply_parts(chips, supply, taken=circuit.by_ref),
     )
@@ -126,24 +140,45 @@ def rated_voltage(seen: float) -> float:
     return next((r for r in RATINGS if r >= 2 * seen * (1 - 1e-9)), 2 * seen)
 
 
-def _grouped(parts: tuple[Passive, ...], across: float) -> Iterator[PartLine]:
-    """Identical resistors, then identical capacitors, by rising value."""
-    groups: dict[tuple[str, float, str, float], list[str]] = {}
+def _grouped(
+    parts: tuple[Passive, ...], across: float, networks: Sequence[Network]
+) -> Iterator[PartLine]:
+    """Identical resistors, then identical capacitors, by rising value; those of a network
+    behind single ones."""
+    network_of = {ref: k for k, each in enumerate(networks) for ref in each.refs}
+    groups: dict[tuple[str, float, str, float, int], list[Passive]] = {}
     for part in parts:
-        key = part.kind, part.value, part.source, part.tolerance
-        groups.setdefault(key, []).append(part.ref)
+        place = network_of.get(part.ref, -1)
+        key = part.kind, part.value, part.source, part.tolerance, place
+        groups.setdefault(key, []).append(part)
     for kind in ("resistor", "capacitor"):
         for key in sorted(k for k in groups if k[0] == kind):
-            _, value, series, tolerance = key
+            _, value, series, tolerance, place = key
             words = "" if kind == "resistor" else f" {dielectric(value)} {across:g}V"
+            said = [] if place < 0 else [_matched(networks[place])]
             yield PartLine(
-                refs=tuple(sorted(groups[key], key=_natural)),
+                refs=tuple(sorted((p.ref for p in groups[key]), key=_natural)),
                 kind=kind,
                 value=value,
                 marking=marking(value, kind) + words,
                 series=series,
                 tolerance=tolerance,
+                note="; ".join([*said, *_stated(groups[key])]),
             )
+
+
+def _matched(network: Network) -> str:
+    """What to order of a network."""
+    tracking = network.tracking
+    tracks = "" if tracking is None else f", tracking {show(tracking, 'ppm/K')}"
+    refs = " ".join(sorted(network.refs, key=_natural))
+    return f"matched network {refs}: ratio within {show(network.tolerance, '%')}{tracks}"
+
+
+def _stated(parts: Iterable[Passive]) -> list[str]:
+    """Which parts of a line have their value from the job."""
+    refs = sorted((p.ref for p in parts if p.fixed), key=_natural)
+    return [f"value of {' '.join(refs)} stated in the job"] if refs else []
 
 
 def _op_amps(amplifiers: tuple[Amplifier, ...], chips: tuple[Package, ...]) -> Iterator[PartLine]:

@@ -21,6 +21,7 @@ from dataclasses import asdict
 from typing import TYPE_CHECKING, TypeAlias
 
 from netlist.boardrecords import loop_record, worst_record, yield_record
+from netlist.vendorlook import vendor_notices
 from synth.evidence import Check, ResponseError, verdict
 from synth.headroom import tightest_limit
 from synth.results import Candidate, Design, ErrorFigures
@@ -31,6 +32,7 @@ if TYPE_CHECKING:
 __all__ = [
     "FORMAT",
     "all_checks",
+    "all_notices",
     "candidate_records",
     "design_record",
     "record_text",
@@ -52,6 +54,12 @@ def all_checks(design: Design, verification: Verification) -> tuple[Check, ...]:
         Check("phase error", accept.phase_deg, None, "deg", False, note),
         *design.checks,
     )
+
+
+def all_notices(design: Design, verification: Verification) -> list[str]:
+    """Everything the user should know, each once: of the job, the design and the simulation."""
+    said = (*design.job.notices, *design.notices, *vendor_notices(verification.vendor))
+    return list(dict.fromkeys(said))
 
 
 def verdict_of(design: Design, verification: Verification) -> str:
@@ -104,7 +112,7 @@ def design_record(design: Design, verification: Verification) -> dict[str, Json]
         "simulation": _simulation(verification),
         **_repick(design),
         **_source(design),
-        "notices": list(dict.fromkeys((*job.notices, *design.notices))),
+        "notices": all_notices(design, verification),
     }
     return {key: _finite(value) for key, value in record.items()}
 
@@ -220,6 +228,7 @@ def _choice(design: Design) -> dict[str, object]:
         "choice": {
             "rms_error": found.rms,
             "lower_bound": found.lower_bound,
+            **({"unshared_rms_error": found.unshared.rms} if found.unshared else {}),
             "gap": found.gap,
             "proven": found.proven,
             "exhausted": found.exhausted,
@@ -324,11 +333,17 @@ def _simulation(verification: Verification) -> dict[str, object]:
 
 
 def _vendor(verification: Verification) -> dict[str, object] | None:
-    """How far the response with the vendor's model is from that with the one-pole model."""
-    if verification.vendor is None and verification.vendor_failure is None:
+    """How far the response with the vendor's model is from that with the one-pole model, and
+    whether it keeps the limits against H(s)."""
+    look = verification.vendor
+    if look is None:
         return None
-    error = verification.vendor
-    return {"failure": verification.vendor_failure, "difference": error and _error(error)}
+    return {
+        "failure": look.failure,
+        "difference": look.difference and _error(look.difference),
+        "keeps_limits": look.keeps_limits if look.failure is None else None,
+        "against_target": [_check(c) for c in look.against_target],
+    }
 
 
 def _sine(verification: Verification) -> dict[str, object] | None:

@@ -38,7 +38,7 @@ RESPONSE_HEADER = (
     "error_db",
     "error_deg",
 )
-PARTS_HEADER = ("refs", "quantity", "kind", "value", "marking", "series", "tolerance")
+PARTS_HEADER = ("refs", "quantity", "kind", "value", "marking", "series", "tolerance", "note")
 
 
 def response_table(design: Design, verification: Verification) -> str:
@@ -74,6 +74,7 @@ def parts_table(lines: Iterable[PartLine]) -> str:
                 line.marking,
                 line.series,
                 "" if line.tolerance is None else repr(float(line.tolerance)),
+                line.note,
             ]
             for line in lines
         ),

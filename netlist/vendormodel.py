@@ -3,7 +3,9 @@
 A deck is a program, and a model file becomes part of it.  So only statements that describe a
 circuit pass: elements of passive parts, semiconductors and sources inside subcircuits, and
 ``.model``, ``.subckt``, ``.ends``, ``.param``.  Continuation lines are joined before anything is
-looked at, comments are dropped, and what is left is plain ASCII.
+looked at, comments are dropped, and what is left is plain ASCII.  An element has a name that is
+no SPICE statement and as many words as its kind needs; a source is driven by no program, and
+nothing is drawn at random: the same model gives the same response.
 """
 
 from __future__ import annotations
@@ -28,7 +30,26 @@ LONGEST_CARD = 20_000
 """Characters of one statement."""
 
 _DIRECTIVES = frozenset({".model", ".subckt", ".ends", ".param"})
-_ELEMENTS = frozenset("rcldqjmefghbvix")
+# Fewest words of an element of each letter: its name, its nodes and what it is.
+_ELEMENTS = {
+    **dict.fromkeys("rcldebg", 4),
+    **dict.fromkeys("fhqjm", 5),
+    **dict.fromkeys("vix", 3),
+}
+# Statements without their dot, which a simulator reads as elements.  DC, IC and IF are left out:
+# models have elements of these names.
+_STATEMENTS = frozenset(
+    {"control", "csparam", "disto", "echo", "else", "elseif", "end", "endc", "endif", "endl"}
+    | {"ends", "four", "func", "global", "inc", "include", "lib", "library", "load", "meas"}
+    | {"measure", "model", "quit"}
+)
+_ELEMENT = re.compile(r"[a-z][a-z0-9_.+\-#!:]{0,60}", re.IGNORECASE)
+_DRIVEN = re.compile(r"\b(external|tr(?:noise|random)\b)", re.IGNORECASE)
+_RANDOM = re.compile(
+    r"\b(agauss|gauss|aunif|unif|rnd|rand|random|sgauss|sunif|poisson|exponential)\s*\(",
+    re.IGNORECASE,
+)
+_LIMIT = re.compile(r"\blimit\s*\(", re.IGNORECASE)
 _NAME = re.compile(r"[a-z][a-z0-9_]{0,40}", re.IGNORECASE)
 _OPENS_FILE = re.compile(r"file\s*=", re.IGNORECASE)
 _SUSPECT = re.compile(r"[\"`\\]")
@@ -136,6 +157,8 @@ def _checked(card: str, place: str, inside: int) -> int:
         raise _refused(place, card, "no double quote, backquote or backslash")
     if _OPENS_FILE.search(card):
         raise _refused(place, card, "nothing that opens a file")
+    if _RANDOM.search(card) or any(_two_arguments(card[m.end() :]) for m in _LIMIT.finditer(card)):
+        raise _refused(place, card, "values that are not drawn at random")
     if word.startswith("."):
         if word not in _DIRECTIVES:
             raise _refused(place, card, f"only {', '.join(sorted(_DIRECTIVES))} and elements")
@@ -144,12 +167,30 @@ def _checked(card: str, place: str, inside: int) -> int:
         if word == ".ends" and not inside:
             raise _refused(place, card, "a .subckt before it")
         return {".subckt": 1, ".ends": -1}.get(word, 0)
-    if word[0] not in _ELEMENTS:
+    if word[0] not in _ELEMENTS or word in _STATEMENTS or not _ELEMENT.fullmatch(word):
         kinds = " ".join(sorted(_ELEMENTS)).upper()
-        raise _refused(place, card, f"only the elements {kinds}")
+        raise _refused(place, card, f"only the elements {kinds} by names such as R1")
     if not inside:
         raise _refused(place, card, "elements inside a .subckt alone")
+    if len(rest) + 1 < _ELEMENTS[word[0]]:
+        raise _refused(
+            place, card, f"a name, nodes and a value or model, {_ELEMENTS[word[0]]} words or more"
+        )
+    if word[0] in "vi" and _DRIVEN.search(" ".join(rest[2:])):
+        raise _refused(place, card, "a source of its own, not driven from outside or at random")
     return 0
+
+
+def _two_arguments(text: str) -> bool:
+    """Whether a call, `text` from behind its parenthesis, has two arguments: ``limit`` of two is
+    drawn at random, of three it is a clamp."""
+    depth, commas = 0, 0
+    for character in text:
+        if character == ")" and depth == 0:
+            break
+        depth += {"(": 1, ")": -1}.get(character, 0)
+        commas += character == "," and depth == 0
+    return commas == 1
 
 
 def _nodes(words: list[str]) -> int:

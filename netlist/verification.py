@@ -14,9 +14,9 @@ from numpy.typing import NDArray
 
 from netlist.clipping import SineRun, sine_check, sine_run
 from netlist.comparison import compare
-from netlist.deck import vendor_deck
 from netlist.ngspice import Simulator, TransientResult
 from netlist.stimulus import Decks, decks_of, settling_time, sweep_deck
+from netlist.vendorlook import VendorLook, look_at_vendor_model
 from synth.circuit import GROUND
 from synth.errors import SimulatorError
 from synth.evidence import Check, ResponseError, response_error
@@ -66,10 +66,7 @@ class Verification:
     sine
         The steady sine that every op-amp output was held against, None where there was none.
     vendor
-        Response with the vendor's model of the op-amp against that with the one-pole model, where
-        the job names a model and it could be simulated; no check rests on it.
-    vendor_failure
-        Why it could not be.
+        The second look with the vendor's model of the op-amp, where the job names one.
     nodal_disagreement
         Of ngspice and the nodal engine on the same circuit, see `disagreement`.
     worst_disagreement
@@ -77,8 +74,8 @@ class Verification:
     checks
         ``magnitude error`` and ``phase error``, the difference of the two analyses on the
         nominal board and on the worst ones, then ``settling after a step`` where the target
-        settles and ``clipping of the largest sine`` where the predicted peaks do not clip; empty
-        without a response.
+        settles, ``clipping of the largest sine`` where the predicted peaks do not clip, and that
+        of the pins of a vendor's model; empty without a response.
     failure
         Why the simulator did not deliver, or None.  What it did not deliver is None above; a
         response may be there although a later analysis failed.
@@ -92,8 +89,7 @@ class Verification:
     step: TransientResult | None = None
     noise_rms: float | None = None
     sine: SineRun | None = None
-    vendor: ResponseError | None = None
-    vendor_failure: str | None = None
+    vendor: VendorLook | None = None
     nodal_disagreement: float | None = None
     worst_disagreement: float | None = None
     checks: tuple[Check, ...] = ()
@@ -252,28 +248,13 @@ def _with_sine(design: Design, simulator: Simulator, so_far: Verification) -> Ve
 
 
 def _with_vendor(design: Design, simulator: Simulator, so_far: Verification) -> Verification:
-    """The response with the vendor's model; a model that fails is told, and no more."""
-    model, band = design.job.board.vendor_model, design.job.signal.band_hz
-    if model is None or so_far.simulated is None:
+    """The second look with the vendor's model; a model that fails is told."""
+    if so_far.simulated is None:
         return so_far
-    deck = vendor_deck(
-        design.circuit,
-        model,
-        title=design.job.title,
-        supply=design.job.board.supply,
-        start_hz=band[0],
-        stop_hz=band[1],
-        points_per_decade=points_per_decade(design.wanted, band_hz=band),
-    )
-    out = design.circuit.output_net
-    try:
-        found = simulator.ac(deck, [out])
-    except SimulatorError as problem:
-        return replace(so_far, vendor_failure=str(problem))
-    response = found.voltages[out][judged(design.wanted, found.frequency_hz)]
-    if not np.all(np.isfinite(response)):
-        return replace(so_far, vendor_failure="the response is not a number everywhere")
-    return replace(so_far, vendor=response_error(response, so_far.simulated))
+    look = look_at_vendor_model(design, simulator, so_far.simulated)
+    if look is None:
+        return so_far
+    return replace(so_far, vendor=look, checks=(*so_far.checks, look.follows))
 
 
 def _agreement(name: str, differing: float, note: str) -> Check:

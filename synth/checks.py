@@ -11,6 +11,7 @@ from synth.job import Job
 from synth.limits import swing_checks
 from synth.loop import loop_checks, loop_margins
 from synth.nodal import compile_circuit
+from synth.quantities import show_share
 from synth.results import LoopResult, Swing, ToleranceResult
 from synth.stability import poles_check, poles_on_the_right, right_of_target
 from synth.tolerance import loop_yield_check
@@ -59,7 +60,7 @@ def yield_check(tolerance: ToleranceResult, job: Job) -> Check:
     limit = job.accept.yield_share
     note = (
         f"{tolerance.passed} of {tolerance.boards} boards, "
-        f"{100 * tolerance.low:.1f} to {100 * tolerance.high:.1f} % at "
+        f"{show_share(tolerance.low)} to {show_share(tolerance.high)} at "
         f"{100 * tolerance.confidence:.0f} % confidence"
     )
     percent = 100 * tolerance.share

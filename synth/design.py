@@ -25,11 +25,12 @@ from synth.circuit import Circuit
 from synth.errors import JobError
 from synth.evidence import ResponseError, response_error
 from synth.grid import judging_frequencies
-from synth.job import Job
+from synth.job import Job, Loop
 from synth.limits import drifts, swings
-from synth.loop import checked_loop
+from synth.loop import LoopBoards, checked_loop
 from synth.nodal import NodalProgram, compile_circuit
 from synth.noise import output_noise
+from synth.quantities import show
 from synth.ranking import Mapper, rank_forms
 from synth.results import Candidate, Design, ErrorBudget, LoopResult, Swing, ToleranceResult
 from synth.tolerance import error_budget, run_boards, run_loops
@@ -290,10 +291,27 @@ def _notices(
         )
     run = loop.boards if loop else None
     if run is not None and run.share < LOW_SHARE:
-        said.append(
-            f"only {run.passed} of {run.boards} boards give a stable loop within the margins"
-        )
+        said.append(_lost_loops(run, job.loop))
     return tuple(said)
+
+
+def _lost_loops(run: LoopBoards, loop: Loop | None) -> str:
+    """Why boards do not keep the loop: those that are unstable, and of the stable ones how many
+    miss which margin."""
+    unstable = run.boards - run.stable
+    reasons = [f"{unstable or 'none'} {'is' if unstable < 2 else 'are'} unstable"]
+    limits = (loop.phase_margin_deg, loop.gain_margin_db) if loop else (None, None)
+    for short, limit, unit, name in zip(
+        (run.short_of_phase, run.short_of_gain), limits, ("deg", "dB"), ("phase", "gain"),
+        strict=True,
+    ):  # fmt: skip
+        if short and limit is not None:
+            verb = "is stable but misses" if short == 1 else "are stable but miss"
+            reasons.append(f"{short} {verb} the {name} margin of {show(limit, unit)}")
+    return (
+        f"only {run.passed} of {run.boards} boards keep the loop stable and within its margins: "
+        f"{', '.join(reasons)}"
+    )
 
 
 def _oscillation(run: ToleranceResult) -> tuple[str, ...]:

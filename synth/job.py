@@ -197,7 +197,8 @@ class Accept:
             raise JobError(f"got {self.phase_deg}, expected a positive angle", key="accept.phase")
         if self.yield_share is not None and not (0 < self.yield_share <= 1):
             raise JobError(
-                f"got {self.yield_share}, expected above 0 and up to 100 %", key="accept.yield"
+                f"got {show(self.yield_share, '%')}, expected above 0 and up to 100 %",
+                key="accept.yield",
             )
 
 

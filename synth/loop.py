@@ -96,6 +96,8 @@ class LoopBoards:
     phase_margin_deg, gain_margin_db, crossover_hz, disk_margin
         Percentiles of what `LoopMargins` says of each board.  A margin without a crossing
         counts as larger than any other, that of an unstable board as negative.
+    short_of_phase, short_of_gain
+        How many stable boards miss the limit on the phase and on the gain margin.
     """
 
     boards: int
@@ -108,6 +110,8 @@ class LoopBoards:
     gain_margin_db: Percentiles
     crossover_hz: Percentiles
     disk_margin: Percentiles
+    short_of_phase: int = 0
+    short_of_gain: int = 0
 
     @property
     def share(self) -> float:

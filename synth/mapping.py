@@ -28,6 +28,7 @@ from synth.errors import RealizationError
 from synth.graph import INPUT, Block, BlockGraph
 from synth.job import Job
 from synth.polarity import Polarity
+from synth.quantities import show
 
 __all__ = ["Sizing", "input_factor", "map_graph"]
 
@@ -217,8 +218,8 @@ def input_factor(graph: BlockGraph, polarity: Polarity, sizing: Sizing, job: Job
     factor = 1 - resistance * conductance
     if factor <= 0:
         raise RealizationError(
-            f"signal.source_resistance: got {resistance:g} ohm, but the board's input "
-            f"resistance would have to be {1 / conductance:.4g} ohm in all for its gain; "
+            f"signal.source_resistance: got {show(resistance, 'ohm')}, but the board's input "
+            f"resistance would have to be {show(1 / conductance, 'ohm')} in all for its gain; "
             "expected a smaller source resistance, or a buffer before the board"
         )
     return factor

@@ -33,6 +33,7 @@ __all__ = [
     "parse_exact",
     "parse_rails",
     "show",
+    "show_share",
     "tolerance_letter",
     "what_came",
 ]
@@ -198,6 +199,19 @@ def show(value: float, unit: str, digits: int = 4) -> str:
     if not -5 <= mantissa.adjusted() <= 6:
         return f"{rounded.normalize():e}{name}"
     return f"{mantissa:f}{name[:1]}{prefixes[exponent]}{name[1:]}"
+
+
+def show_share(ratio: float) -> str:
+    """A share in percent, to a hundredth; finer where that would make all or nothing of it.
+
+    >>> show_share(0.9996), show_share(1.0), show_share(0.9999968), show_share(0.5)
+    ('99.96 %', '100 %', '99.9997 %', '50.00 %')
+    """
+    if not math.isfinite(ratio) or ratio in (0.0, 1.0):
+        return f"{100 * ratio:g} %"
+    shown = (f"{100 * ratio:.{decimals}f}" for decimals in range(2, 15))
+    text = next((t for t in shown if float(t) not in (0.0, 100.0)), f"{100 * ratio:g}")
+    return f"{text} %"
 
 
 def marking(value: float, kind: str) -> str:

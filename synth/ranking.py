@@ -29,6 +29,7 @@ from synth.job import Job
 from synth.limits import swings
 from synth.nodal import compile_circuit
 from synth.noise import dynamic_range_db, output_noise
+from synth.quantities import show_share
 from synth.results import Candidate, ErrorFigures, FormFigures
 from synth.tolerance import run_boards
 from synth.values import standard_values, wanted_of
@@ -246,8 +247,8 @@ def _reason(candidate: Candidate, first: Candidate, best: Candidate) -> str:
         return f"misses a limit with nominal parts: {figures.missed[0]}{more}"
     if figures.high < _of(best).low:
         return (
-            f"yield {100 * figures.share:.1f} %, at most {100 * figures.high:.1f} %, is below the "
-            f"{100 * _of(best).share:.1f} % of {best.form}, at least {100 * _of(best).low:.1f} %"
+            f"yield {show_share(figures.share)}, at most {show_share(figures.high)}, is below the "
+            f"{show_share(_of(best).share)} of {best.form}, at least {show_share(_of(best).low)}"
         )
     if candidate.op_amps != first.op_amps:
         return f"{candidate.op_amps} op-amps, {first.form} does it with {first.op_amps}"

@@ -62,4 +62,5 @@ def polewright() -> None:
       2   the job cannot be read or cannot be realised
       3   the simulator is missing or failed; the pack is marked unverified
       70  a defect in the program
+      130 interrupted; 143 terminated; nothing is half-written
     """

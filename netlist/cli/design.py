@@ -62,17 +62,19 @@ def command(
     written whole or not at all; an earlier pack in its place is replaced.
     """
     from netlist.jobfile import read_job
+    from netlist.mistakes import telling_lines
     from netlist.pack import check_pack_folder
 
     folder = default_folder(job_file) if into is None else into
     job = read_job(job_file)
+    text = job.source.text if job.source else ""
     check_pack_folder(folder)
 
     def make(report: Report) -> Design:
         from netlist.processes import workers
         from synth.design import design
 
-        with workers() as mapper:
+        with telling_lines(text, str(job_file)), workers() as mapper:
             return design(
                 job, boards=boards, seed=seed, effort=effort, progress=report, mapper=mapper
             )

@@ -25,6 +25,7 @@ def command(job_file: Path, as_json: bool) -> Result:
     """
     from netlist.cli.progress import progress
     from netlist.jobfile import read_job
+    from netlist.mistakes import telling_lines
 
     job = read_job(job_file)
     with progress() as report:
@@ -32,7 +33,8 @@ def command(job_file: Path, as_json: bool) -> Result:
         from netlist.processes import workers
         from synth.design import compare_forms
 
-        with workers() as mapper:
+        text = job.source.text if job.source else ""
+        with telling_lines(text, str(job_file)), workers() as mapper:
             chosen, candidates = compare_forms(job, progress=report, mapper=mapper)
 
     from netlist.cli.summary import forms_table

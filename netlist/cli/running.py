@@ -7,18 +7,25 @@ the pipe early does not change the exit code.
 from __future__ import annotations
 
 import os
+import signal
 import sys
+import threading
 import traceback
+from collections.abc import Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
+from types import FrameType
 
 import click
 
 from synth.errors import ExpressionError, PolewrightError
 
-__all__ = ["DEFECT", "INTERRUPTED", "USAGE", "Result", "run", "say"]
+__all__ = ["DEFECT", "INTERRUPTED", "TERMINATED", "USAGE", "Result", "run", "say"]
 
-USAGE, DEFECT, INTERRUPTED = 2, 70, 130
+USAGE, DEFECT = 2, 70
+# 128 and the number of the signal, the convention of shells.
+INTERRUPTED, TERMINATED = 130, 143
 
 
 @dataclass(frozen=True)
@@ -29,8 +36,40 @@ class Result:
     text: str
 
 
+class _TerminatedError(BaseException):
+    """The process was asked to end; not an `Exception`, so that nothing takes it for a failure."""
+
+
 def run(arguments: list[str]) -> int:
     """Run the command line with these arguments; the exit code."""
+    try:
+        with _ending_in_order():
+            return _run(arguments)
+    except _TerminatedError:
+        say("terminated")
+        return TERMINATED
+
+
+@contextmanager
+def _ending_in_order() -> Iterator[None]:
+    """Lets SIGTERM end the work like an interrupt, processes and temporary folders tidied up; a
+    second one ends the process at once."""
+    if threading.current_thread() is not threading.main_thread():
+        yield
+        return
+
+    def end(number: int, frame: FrameType | None) -> None:
+        signal.signal(signal.SIGTERM, signal.SIG_DFL)
+        raise _TerminatedError
+
+    before = signal.signal(signal.SIGTERM, end)
+    try:
+        yield
+    finally:
+        signal.signal(signal.SIGTERM, before)
+
+
+def _run(arguments: list[str]) -> int:
     from netlist.cli.commands import polewright
 
     code = 0

@@ -13,12 +13,12 @@ import click
 from netlist.cli.progress import colour_on
 from netlist.cli.running import say
 from netlist.partslist import packages
-from netlist.records import all_checks, verdict_of
+from netlist.records import all_checks, all_notices, verdict_of
 from netlist.report.changes import change_errors, change_rows
 from netlist.report.choice import proof_line
 from netlist.report.found import check_rows, form_rows
 from netlist.report.page import LOW_YIELD
-from netlist.report.wording import percent, stated
+from netlist.report.wording import share, stated
 from netlist.report.worst import worst_line
 from synth.results import Candidate, Design
 
@@ -43,13 +43,13 @@ def summary(design: Design, verification: Verification, *, folder: Path) -> str:
     limit = "" if design.job.accept.yield_share is not None else ", no limit stated"
     facts = (
         ("verdict", _coloured(outcome.upper(), _COLOURS[outcome])
-         + f", {percent(run.share, 4)} of boards within limits"),
+         + f", {share(run.share)} of boards within limits"),
         ("form", design.form + (", output inverted" if design.inverted else "")),
         ("op-amps", f"{len(circuit.amplifiers)} in {_counted(len(chips), 'package')}"),
         ("parts", f"{_counted(kinds.count('resistor'), 'resistor')}, "
          f"{_counted(kinds.count('capacitor'), 'capacitor')}"),
         ("yield", f"{run.passed} of {run.boards} boards, "
-         f"{percent(run.low, 4)} to {percent(run.high, 4)} at {stated(run.confidence, '%')} "
+         f"{share(run.low)} to {share(run.high)} at {stated(run.confidence, '%')} "
          f"confidence{limit}"),
         *((("worst", worst_line(design.worst)),) if design.worst else ()),
     )  # fmt: skip
@@ -106,11 +106,11 @@ def forms_table(chosen: str, candidates: Iterable[Candidate]) -> str:
 
 def warn(design: Design, verification: Verification) -> None:
     """What the user should know, on standard error."""
-    for notice in dict.fromkeys((*design.job.notices, *design.notices)):
+    for notice in all_notices(design, verification):
         say(f"warning: {notice}")
-    share = design.tolerance.share
-    if design.job.accept.yield_share is None and share < LOW_YIELD:
-        say(f"warning: only {_plain_spaces(percent(share, 4))} of the boards meet the limits")
+    met = design.tolerance.share
+    if design.job.accept.yield_share is None and met < LOW_YIELD:
+        say(f"warning: only {_plain_spaces(share(met))} of the boards meet the limits")
     if verification.failure is not None:
         say(f"not verified: {verification.failure}")
         say("the pack is written and marked unverified; repeat the command once ngspice runs")

@@ -134,7 +134,7 @@ def _figures(amp: OpAmp) -> str:
     return ", ".join(
         (
             f"{stated(amp.gain_bandwidth, 'Hz')} gain-bandwidth",
-            f"{stated(20 * math.log10(amp.open_loop_gain), 'dB')} open-loop gain",
+            f"{stated(round(20 * math.log10(amp.open_loop_gain), 1), 'dB')} open-loop gain",
             f"{number(amp.slew_rate / 1e6)}\N{NO-BREAK SPACE}V/µs",
             f"offset {stated(amp.offset, 'V')}",
             f"bias {stated(amp.bias_current, 'A')}",

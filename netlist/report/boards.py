@@ -18,7 +18,7 @@ __all__ = ["assumptions", "driver_remarks", "failure_lines", "left_out", "popula
 MOST_NAMED = 6
 
 # How much of what a part sets stands beside its bar, in characters.
-LONGEST_REMARK = 36
+LONGEST_REMARK = 48
 
 
 def assumptions(population: Population) -> list[str]:
@@ -91,10 +91,25 @@ def driver_remarks(drivers: Iterable[Driver], circuit: Circuit) -> list[str]:
             remarks.append("gain-bandwidth")
             continue
         part = circuit.by_ref[driver.refs[0]]
-        short = len(part.sets) <= LONGEST_REMARK
-        words = part.sets if short else part.sets[: LONGEST_REMARK - 1].rstrip(" ,") + "…"
+        words = _shortened(part.sets)
         remarks.append(f"±{stated(part.tolerance, '%')}{', ' if words else ''}{words}")
     return remarks
+
+
+def _shortened(sets: str) -> str:
+    """What a part sets, of several things as many as fit, never a piece of a word."""
+    things = sets.split(" + ")
+    for count in range(len(things), 0, -1):
+        more = f" + {len(things) - count} more" if count < len(things) else ""
+        text = " + ".join(things[:count]) + more
+        if len(text) <= LONGEST_REMARK:
+            return text
+    kept = things[0]
+    while len(kept) >= LONGEST_REMARK and " " in kept:
+        kept = kept.rpartition(" ")[0]
+    if kept.count("(") > kept.count(")"):
+        kept = kept.rpartition("(")[0]
+    return kept[: LONGEST_REMARK - 1].rstrip(" ,(+") + "…"
 
 
 def population_rows(job: Job) -> list[tuple[str, str]]:

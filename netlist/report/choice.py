@@ -60,8 +60,20 @@ _SHARED = {
 
 
 def proof_line(found: Certificate, circuit: Circuit) -> str:
-    """How the choice stands against the best there could be, in up to three sentences."""
+    """How the choice stands against the best there could be, in a few sentences."""
+    if found.unshared is not None:
+        return _before_sharing(found, found.unshared) + _held(found, circuit)
     return _standing(found) + _held(found, circuit)
+
+
+def _before_sharing(found: Certificate, unshared: Certificate) -> str:
+    """Of the choice before values were shared, and what sharing them did to it."""
+    return (
+        f"Of the choice before values were shared: {_standing(unshared)} Values were shared "
+        f"afterwards, so that fewer are bought, and the rms error went from "
+        f"{percent(unshared.rms)} to {percent(found.rms)}; the bound is that of the unshared "
+        "choice."
+    )
 
 
 def _held(found: Certificate, circuit: Circuit) -> str:

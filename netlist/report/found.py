@@ -6,7 +6,17 @@ from __future__ import annotations
 from collections.abc import Iterable
 
 from netlist.partslist import PartLine
-from netlist.report.wording import NONE, decibel, number, percent, quantity, spelled, stated
+from netlist.report.wording import (
+    NONE,
+    decibel,
+    number,
+    percent,
+    prefixed,
+    quantity,
+    share,
+    spelled,
+    stated,
+)
 from synth.circuit import Circuit, Passive
 from synth.evidence import Check
 from synth.headroom import tightest_limit
@@ -46,8 +56,8 @@ def check_rows(checks: Iterable[Check]) -> list[Row]:
     """Name, limit, value, margin and result of each check."""
     rows: list[Row] = []
     for check in checks:
-        left = margin(check)
-        share = f" ({number(100 * left / check.limit, 2)} %)" if left and check.limit else ""
+        left = None if check.unit == COUNTED else margin(check)
+        part = f" ({number(100 * left / check.limit, 2)} %)" if left and check.limit else ""
         result = "pass" if check.passed else "FAIL"
         if check.value is None:
             result = "no value"
@@ -58,11 +68,11 @@ def check_rows(checks: Iterable[Check]) -> list[Row]:
                 "name": check.name,
                 "limit": "none" if check.limit is None else _limit(check.limit, check.unit),
                 "value": NONE if check.value is None else _with(check.value, check.unit),
-                "margin": NONE if left is None else _with(left, check.unit) + share,
+                "margin": NONE if left is None else _with(left, check.unit) + part,
                 "result": result,
                 "passed": check.passed,
                 "limited": check.limit is not None,
-                "note": check.note,
+                "note": prefixed(check.note),
             }
         )
     return rows
@@ -99,8 +109,8 @@ def _figures(candidate: Candidate) -> Row:
         "capacitors": str(found.capacitors),
         "ratio": number(found.value_ratio),
         "nominal": percent(found.nominal.rms),
-        "yield": percent(found.share, 4),
-        "interval": f"{percent(found.low, 4)} to {percent(found.high, 4)}",
+        "yield": share(found.share),
+        "interval": f"{share(found.low)} to {share(found.high)}",
         "error_95": f"{decibel(found.error_95_db)}{NBSP}dB",
         "noise": quantity(found.noise_rms, "V"),
         "range": f"{number(found.dynamic_range_db)}{NBSP}dB",
@@ -213,9 +223,9 @@ def largest_noise(design: Design, count: int = 8) -> list[Row]:
     sets = {p.ref: p.sets for p in design.circuit.passives}
     sets |= {a.ref: a.sets or f"op-amp at net {a.output}" for a in design.circuit.amplifiers}
     return [
-        {"ref": ref, "share": percent(share, 2), "sets": sets.get(ref, NONE)}
-        for ref, share in shares[:count]
-        if share > 0
+        {"ref": ref, "share": percent(part, 2), "sets": sets.get(ref, NONE)}
+        for ref, part in shares[:count]
+        if part > 0
     ]
 
 
@@ -255,6 +265,8 @@ def _with(value: float, unit: str) -> str:
         text = f"{value:.0f}".replace("-", "−")
     else:
         text = decibel(value) if unit in ("dB", "deg") else number(value, 4)
+        if unit == "%" and value < 100 and float(text.replace("−", "-")) == 100:
+            text = share(value / 100).partition(NBSP)[0]
     return f"{text}\N{NO-BREAK SPACE}{unit.replace('us', 'µs')}".strip()
 
 

@@ -13,7 +13,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from netlist.partslist import PartLine, packages
-from netlist.records import all_checks, verdict_of
+from netlist.records import all_checks, all_notices, verdict_of
 from netlist.report import asked, boards, changes, choice, found, wording, worst
 from netlist.svg import prefix_ids
 from synth.evidence import Check
@@ -72,7 +72,7 @@ def report_page(
             verification=verification,
             verdict=outcome,
             headline=headline(checks, outcome),
-            notices=list(dict.fromkeys((*job.notices, *design.notices))),
+            notices=all_notices(design, verification),
             numerator=asked.polynomial(job.target.numerator),
             denominator=asked.polynomial(job.target.denominator),
             roots=asked.roots(job.target),
@@ -81,6 +81,7 @@ def report_page(
             checks=found.check_rows(
                 sorted(checks, key=lambda c: c.passed)
             ),  # what fails comes first
+            vendor_checks=_vendor_rows(verification),
             low_yield=job.accept.yield_share is None and design.tolerance.share < LOW_YIELD,
             changes=changes.change_rows(design.repick) if design.repick else [],
             change_errors=changes.change_errors(design.repick) if design.repick else [],
@@ -110,6 +111,12 @@ def report_page(
     )
 
 
+def _vendor_rows(verification: Verification) -> list[dict[str, object]]:
+    """The response with the vendor's model against H(s), where there is one."""
+    look = verification.vendor
+    return found.check_rows(look.against_target) if look else []
+
+
 def _environment() -> Environment:
     """Templates of this folder, everything escaped, with the filters the page uses."""
     from jinja2 import Environment, FileSystemLoader, StrictUndefined
@@ -126,6 +133,7 @@ def _environment() -> Environment:
         quantity=wording.quantity,
         decibel=wording.decibel,
         percent=wording.percent,
+        share=wording.share,
         stated=wording.stated,
         spelled=wording.spelled,
         clean=lambda text: _CONTROL.sub(" ", str(text)),
@@ -136,9 +144,9 @@ def _environment() -> Environment:
 def headline(checks: Sequence[Check], outcome: str) -> str:
     """The verdict in one sentence."""
     limited = [c for c in checks if c.limit is not None]
-    missed = [c.name for c in checks if not c.passed and c.value is not None]
     if outcome == "pass":
         return f"Every limit is met: {len(limited)} of {len(limited)}."
+    missed = [c.name for c in checks if not c.passed and (c.value is not None or outcome == "fail")]
     if outcome == "fail":
         return f"{len(missed)} of {len(limited)} limits missed: {', '.join(missed)}."
     predicted = f" The prediction already misses: {', '.join(missed)}." if missed else ""

@@ -4,7 +4,10 @@ line of their number."""
 from __future__ import annotations
 
 import math
+import re
 from collections.abc import Iterable
+
+from synth.quantities import show_share
 
 __all__ = [
     "NONE",
@@ -12,8 +15,10 @@ __all__ = [
     "listed",
     "number",
     "percent",
+    "prefixed",
     "quantity",
     "scientific",
+    "share",
     "spelled",
     "stated",
 ]
@@ -21,6 +26,7 @@ __all__ = [
 NONE = "–"
 _SPACE = "\N{NO-BREAK SPACE}"
 _MINUS = "\N{MINUS SIGN}"
+_HERTZ = re.compile(r"(?<![\w.])(\d+(?:\.\d+)?(?:e[+-]?\d+)?) Hz\b")
 _PREFIXES = {
     -18: "a",
     -15: "f",
@@ -106,6 +112,30 @@ def percent(ratio: float | None, digits: int = 3) -> str:
     if ratio is None or not math.isfinite(ratio):
         return NONE
     return f"{number(100 * ratio, digits)}{_SPACE}%"
+
+
+def share(ratio: float | None) -> str:
+    """A share of boards in percent, never rounded to all or none of them.
+
+    Examples
+    --------
+    >>> share(0.9996), share(0.99998), share(1.0)
+    ('99.96\\xa0%', '99.998\\xa0%', '100\\xa0%')
+    """
+    if ratio is None or not math.isfinite(ratio):
+        return NONE
+    return show_share(ratio).replace(" ", _SPACE)
+
+
+def prefixed(text: str) -> str:
+    """A text with its plain numbers of hertz as the page prints them.
+
+    Examples
+    --------
+    >>> prefixed("largest at 7.779e+04 Hz"), prefixed("0.5 V at 12 Hz, 5 kHz")
+    ('largest at 77.8\\xa0kHz', '0.5 V at 12.0\\xa0Hz, 5 kHz')
+    """
+    return _HERTZ.sub(lambda found: quantity(float(found[1]), "Hz"), text)
 
 
 def scientific(value: float, digits: int = 6) -> tuple[str, int]:

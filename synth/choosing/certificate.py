@@ -56,6 +56,9 @@ class Certificate:
         How many assignments and completions the exact search evaluated.
     held
         Parts whose values were no choice: fixed by the job, or kept from an earlier design.
+    unshared
+        What was known of the choice before values were shared, where they were; the lower bound
+        is that of this one.
     """
 
     rms: float
@@ -67,6 +70,7 @@ class Certificate:
     better: Index | None = None
     looked: int = 0
     held: tuple[str, ...] = ()
+    unshared: Certificate | None = None
 
     @property
     def gap(self) -> float:

@@ -7,16 +7,11 @@ from __future__ import annotations
 
 from dataclasses import replace
 
-import numpy as np
-
 from synth.choosing.choose import Choice
 from synth.choosing.pairs import BINDING_SHARE, WORTHWHILE, Pair, Pairing, choose_with_pairs
 from synth.choosing.sharing import Sharing, share_values
 from synth.choosing.task import Task
-from synth.circuit import Circuit
-from synth.evidence import response_error
 from synth.job import Board
-from synth.nodal import compile_circuit
 
 __all__ = ["refine"]
 
@@ -33,7 +28,7 @@ def refine(task: Task, choice: Choice, board: Board) -> Choice:
         task, choice = paired.task, paired.choice
     if board.share_values:
         shared = share_values(task, choice)
-        said.append(_of_sharing(task, choice, shared))
+        said.append(_of_sharing(shared))
         choice = shared.choice
     return replace(choice, notices=(*choice.notices, *said))
 
@@ -64,17 +59,12 @@ def _words(pairs: tuple[Pair, ...]) -> str:
     )
 
 
-def _of_sharing(task: Task, choice: Choice, found: Sharing) -> str:
+def _of_sharing(found: Sharing) -> str:
     fewer = found.before - found.after
     if not fewer:
         return f"no fewer than {found.before} distinct values keep the error about where it is"
-    before, after = _rms(task, choice.circuit), _rms(task, found.choice.circuit)
+    before, after = 100 * found.share_before, 100 * found.share_after
     return (
-        f"{fewer} fewer distinct values, {found.after} instead of {found.before}: rms error "
-        f"{100 * after:.2g} % instead of {100 * before:.2g} %"
+        f"{fewer} fewer distinct values, {found.after} instead of {found.before}: the largest "
+        f"error is {after:.2g} % of its limit instead of {before:.2g} %"
     )
-
-
-def _rms(task: Task, circuit: Circuit) -> float:
-    response = compile_circuit(circuit).solve(task.frequency_hz)
-    return response_error(np.asarray(response), task.target).rms

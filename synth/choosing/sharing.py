@@ -27,10 +27,11 @@ __all__ = ["ALLOWED_RATIO", "ALLOWED_SHARE", "Sharing", "distinct_values", "shar
 Real = NDArray[np.float64]
 ValueSet = frozenset[tuple[str, float]]
 
-# The allowance: the weighted rms error may grow to the larger of this ratio of what it was and
-# this share of the accepted limits.  No limit that held may be missed for it.
+# The allowance: the largest error, of magnitude or phase as a share of its limit, whichever is
+# more, may grow to the larger of this ratio of what it was and this share.  No limit that held may
+# be missed for it.
 ALLOWED_RATIO = 1.25
-ALLOWED_SHARE = 0.05
+ALLOWED_SHARE = 0.1
 
 # Sets of values looked at in one step, and how many results of them the nodal engine judges.
 LARGEST_OPTIONS = 400
@@ -43,13 +44,14 @@ QUADS = 60
 
 @dataclass(frozen=True, kw_only=True)
 class Sharing:
-    """What sharing did: distinct values and weighted rms error before and after."""
+    """What sharing did: distinct values, and the largest error as a share of its limit, before and
+    after."""
 
     choice: Choice
     before: int
     after: int
-    rms_before: float
-    rms_after: float
+    share_before: float
+    share_after: float
 
 
 def distinct_values(circuit: Circuit) -> ValueSet:
@@ -64,26 +66,31 @@ def share_values(task: Task, choice: Choice) -> Sharing:
     choice of values.
     """
     values = np.array([p.value for p in choice.circuit.passives])
-    square = float(task.mean_squares(values)[0])
-    most = max(ALLOWED_RATIO * np.sqrt(square), ALLOWED_SHARE * task.limit_rms) ** 2
-    worst = max(1.0, float(task.shares(values)[0]))
-    shared, shared_square = values, square
-    while (found := _step(task, shared, most, worst)) is not None:
-        shared, shared_square = found
+    share_before = float(task.shares(values)[0])
+    most = min(max(ALLOWED_RATIO * share_before, ALLOWED_SHARE), max(1.0, share_before))
+    shared, share_after = values, share_before
+    while (found := _step(task, shared, most)) is not None:
+        shared, share_after = found
     before, after = _in_use(task, values), _in_use(task, shared)
-    rms_before, rms_after = float(np.sqrt(square)), float(np.sqrt(shared_square))
     if len(after) < len(before):
+        rms_after = float(np.sqrt(task.mean_squares(shared)[0]))
         refs = (p.ref for p in choice.circuit.passives)
         circuit = choice.circuit.with_values(dict(zip(refs, shared.tolist(), strict=True)))
-        certificate = replace(choice.certificate, rms=rms_after, proven=False, better=None)
+        certificate = replace(
+            choice.certificate,
+            rms=rms_after,
+            proven=False,
+            better=None,
+            unshared=choice.certificate,
+        )
         circuit = with_ideals(circuit, task.goal)
         choice = replace(choice, circuit=circuit, certificate=certificate)
     return Sharing(
         choice=choice,
         before=len(before),
         after=len(after),
-        rms_before=rms_before,
-        rms_after=rms_after,
+        share_before=share_before,
+        share_after=share_after,
     )
 
 
@@ -92,10 +99,9 @@ def _in_use(task: Task, values: Real) -> ValueSet:
     return frozenset((part.kind, value) for part, value in parts if part.on_board)
 
 
-def _step(task: Task, values: Real, most: float, worst: float) -> tuple[Real, float] | None:
-    """The cheapest choice with one distinct value less, and its mean square; None without one.
-
-    `most` is the allowed mean square, `worst` the allowed share of the limits.
+def _step(task: Task, values: Real, most: float) -> tuple[Real, float] | None:
+    """The choice with one distinct value less whose largest error is the smallest share of its
+    limit, and that share; None where every such share is above `most`.
     """
     model = LinearModel.about(task.program, values, task.goal)
     limits = None if task.ceilings is None else task.ceilings.about(task.program, values)
@@ -113,11 +119,9 @@ def _step(task: Task, values: Real, most: float, worst: float) -> tuple[Real, fl
     boards = np.array(sorted(found, key=lambda key: (found[key], key))[:JUDGED])
     if not boards.size:
         return None
-    squares = task.mean_squares(boards)
-    kept = (task.shares(boards) <= worst) & task.levels_hold(boards)
-    squares = np.where(kept, squares, np.inf)
-    k = int(np.argmin(squares))
-    return (boards[k], float(squares[k])) if squares[k] <= most else None
+    shares = np.where(task.levels_hold(boards), task.shares(boards), np.inf)
+    k = int(np.argmin(shares))
+    return (boards[k], float(shares[k])) if shares[k] <= most else None
 
 
 def _options(task: Task, used: ValueSet) -> list[ValueSet]:

@@ -20,6 +20,7 @@ from synth.job import Loop
 from synth.loop import LoopBoards, Percentiles
 from synth.nodal import NodalProgram
 from synth.population import Population
+from synth.quantities import show_share
 from synth.tolerance.boards import drawn_blocks
 from synth.tolerance.drawing import Drawn
 from synth.tolerance.interval import clopper_pearson
@@ -104,13 +105,14 @@ def run_loops(
             progress(stop, boards)
     found = BoardMargins.of(each)
     stable = found.stable
-    passed = stable.copy()
+    passed, short = stable.copy(), []
     for margin, limit in (
         (found.phase_margin_deg, loop.phase_margin_deg),
         (found.gain_margin_db, loop.gain_margin_db),
     ):
-        if limit is not None:
-            passed &= np.isnan(margin) | (margin >= limit)
+        kept = np.isnan(margin) | (limit is None or margin >= limit)
+        short.append(int((stable & ~kept).sum()))
+        passed &= kept
     low, high = clopper_pearson(int(passed.sum()), boards, confidence)
     return LoopBoards(
         boards=boards,
@@ -123,6 +125,8 @@ def run_loops(
         gain_margin_db=_percentiles(_ordered(found.gain_margin_db, stable)),
         crossover_hz=_percentiles(found.crossover_hz[~np.isnan(found.crossover_hz)]),
         disk_margin=_percentiles(found.disk_margin),
+        short_of_phase=short[0],
+        short_of_gain=short[1],
     )
 
 
@@ -161,7 +165,7 @@ def loop_yield_check(found: LoopBoards) -> Check:
     """How many boards keep the loop, a line of the verdict without a limit of its own."""
     note = (
         f"{found.passed} of {found.boards} boards stable and within the margins, "
-        f"{100 * found.low:.4g} to {100 * found.high:.4g} % at "
+        f"{show_share(found.low)} to {show_share(found.high)} at "
         f"{100 * found.confidence:.0f} % confidence"
     )
     return Check.at_least("yield of the loop", 100 * found.share, None, "%", note)

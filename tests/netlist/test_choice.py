@@ -221,6 +221,18 @@ def test_the_command_that_repeats_the_design_has_its_effort() -> None:
     assert "--effort" not in page(MADE)
 
 
+def test_shared_values_are_told_and_the_bound_is_that_of_the_choice_before() -> None:
+    """What was proven of the unshared choice is said of that one alone."""
+    before = replace(MADE.certificate, rms=1.6e-3, proven=True)
+    after = replace(MADE.certificate, rms=3e-3, proven=False, unshared=before)
+    said = proof_line(after, MADE.circuit)
+    assert said.startswith("Of the choice before values were shared: Proven best")
+    assert "went from 0.160\xa0% to 0.300\xa0%; the bound is that of the unshared choice" in said
+    record = design_record(replace(MADE, certificate=after), boards.verification(MADE))
+    assert record["choice"]["unshared_rms_error"] == 1.6e-3
+    assert record["choice"]["proven"] is False
+
+
 def test_the_record_holds_the_same_for_programs() -> None:
     record = json.loads(record_text(design_record(MADE, boards.verification(MADE))))
     assert record["choice"] == {

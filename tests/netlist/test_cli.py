@@ -116,7 +116,7 @@ def test_without_a_simulator_it_is_3_and_the_pack_is_marked_unverified(stages, c
 @pytest.mark.parametrize(
     ("error", "code", "line"),
     [
-        (JobError("got -1, expected more", key="signal.band"), 2, "signal.band: got -1, expected"),
+        (JobError("got -1, want more", key="signal.band"), 2, "x.toml: signal.band: got -1, want"),
         (RealizationError("no circuit fits"), 2, "no circuit fits"),
         (SimulationTimeoutError("took too long"), 3, "took too long"),
         (NumericalError("lost digits"), 70, "a defect in the program: NumericalError: lost"),

@@ -61,3 +61,11 @@ def test_responses_of_other_points_are_refused():
     with pytest.raises(SimulationFailedError, match="the same points"):
         empty = np.ones(0, dtype=complex)
         compare(F[:0], empty, empty, ACCEPT)
+
+
+def test_a_response_of_zero_has_no_phase_either():
+    """Its angle in floating point is 0, which would pass."""
+    target = np.array([1.0, 1.0, 1.0], dtype=complex)
+    checks = compare(F, np.array([1.0, 0.0, 1.0], dtype=complex), target, Accept())
+    assert [c.passed for c in checks] == [False, False]
+    assert [c.value for c in checks] == [None, None]

@@ -16,8 +16,8 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from netlist.jobfile import LARGEST_FILE, parse_job, read_job
-from netlist.mistakes import lines_of_keys
-from synth.errors import JobError
+from netlist.mistakes import lines_of_keys, telling_lines
+from synth.errors import CircuitError, JobError, RealizationError
 from synth.job import Accept, Job
 from synth.op_amps import OP_AMP_CLASSES
 from synth.targets import Root, from_coefficients, from_expression, from_roots
@@ -407,7 +407,7 @@ ONE_LINE = [
     ),
     (
         {"accept": "[accept]\nyield = '0 %'"},
-        ":8: accept.yield: got 0.0, expected above 0 and up to 100 %",
+        ":8: accept.yield: got 0 %, expected above 0 and up to 100 %",
     ),
     (
         {"accept": "[accept]\nmagnitude = '3 deg'"},
@@ -695,11 +695,37 @@ def test_a_file_above_a_megabyte_is_refused(tmp_path):
         read_job(path)
 
 
-def test_an_empty_file_is_told_what_is_missing(tmp_path):
+@pytest.mark.parametrize("text", ["", "\n# to be written\n"])
+def test_an_empty_file_is_told_what_is_missing_in_one_message(tmp_path, text):
     path = tmp_path / "empty.toml"
-    path.touch()
-    with pytest.raises(JobError, match=r"empty.toml: target: is missing.*\n.*signal: is missing"):
+    path.write_text(text)
+    with pytest.raises(JobError, match=r"empty.toml: got a job without a key, .* \[target\] ") as e:
         read_job(path)
+    assert "\n" not in str(e.value)
+
+
+@pytest.mark.parametrize(
+    ("error", "line"),
+    [
+        (RealizationError("board.fixed.R99: got that"), "x.toml:4: "),
+        (JobError("got that", key="board.networks[2].refs"), "x.toml:8: "),
+        (CircuitError("board.stock: the circuit: needs\n9"), "x.toml:2: "),
+        (JobError("got a plant", key="loop"), "x.toml: "),
+        (RealizationError("no circuit fits: R9"), ""),
+        (JobError("got old, expected another", key="--into"), ""),
+    ],
+)
+def test_what_is_said_of_a_key_after_reading_bears_its_line(error, line):
+    """Its own line, or that of the nearest table around it; what names no key stays as it is."""
+    text = (
+        'title = "x"\n[board]\n[board.fixed]\nR99 = 1\n[[board.networks]]\nrefs = ["R1"]\n'
+        '[[board.networks]]\nrefs = ["R2"]\n'
+    )
+    plain = str(error)
+    with pytest.raises(type(error)) as caught, telling_lines(text, "x.toml"):
+        raise error
+    assert str(caught.value) == line + plain
+    assert caught.value.exit_code == 2
 
 
 # Lines of keys

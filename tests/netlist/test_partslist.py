@@ -2,11 +2,16 @@
 
 from __future__ import annotations
 
+import csv
+import io
 from dataclasses import replace
 
 import pytest
 
 from netlist.partslist import dielectric, packages, parts_list, rated_voltage
+from netlist.report.found import part_rows
+from netlist.tables import parts_table
+from synth.population import Network
 from tests.netlist import boards
 
 RAILS = (-12.0, 12.0)
@@ -34,6 +39,31 @@ def test_identical_parts_share_a_line_and_others_do_not():
         (("R1", "R3"), 15.8e3),
         (("R4",), 16.2e3),
     ]
+
+
+def test_the_buyer_is_told_of_matched_networks_and_stated_values():
+    """R1 and R3 share a value, R1 and R4 are a network: three lines, the network named on both of
+    its own; in the table the remark is the last column."""
+    made = boards.circuit()
+    made = replace(
+        made,
+        passives=tuple(replace(p, fixed=True) if p.ref == "R3" else p for p in made.passives),
+    )
+    network = Network(refs=("R4", "R1"), tolerance=1e-3, tracking=5e-6)
+    lines = parts_list(made, supply=RAILS, networks=(network,))
+    notes = {line.refs: line.note for line in lines if line.kind == "resistor"}
+    told = "matched network R1 R4: ratio within 0.1 %, tracking 5 ppm/K"
+    assert notes == {
+        ("R5", "R6"): "",
+        ("R2",): "",
+        ("R3",): "value of R3 stated in the job",
+        ("R1",): told,
+        ("R4",): told,
+    }
+    rows = list(csv.DictReader(io.StringIO(parts_table(lines))))
+    assert [r["note"] for r in rows] == [line.note for line in lines]
+    (shown,) = [r for r in part_rows(lines) if r["refs"] == "R4"]
+    assert shown["note"] == told
 
 
 def test_what_hangs_on_the_terminals_is_not_bought():

@@ -8,17 +8,21 @@ import re
 import subprocess
 import sys
 import xml.etree.ElementTree as ET
+from dataclasses import replace
 
 import numpy as np
 import pytest
 
 from netlist.plots import bode_plot, driver_chart, noise_plot, step_plot, style, swing_chart
 from netlist.plots.bode import magnitude_range, unwrapped_deg
+from netlist.report.boards import LONGEST_REMARK, driver_remarks
+from netlist.schematic.lettering import width
 from netlist.svg import escape, prefix_ids
 from synth.boardruns import Driver, ToleranceResult
 from synth.job import Accept
 from synth.results import Swing
 from synth.transfer import Factor, TransferFunction
+from tests.netlist import boards
 
 W = 2 * math.pi
 F = np.geomspace(1, 20e3, 300)
@@ -242,6 +246,49 @@ def test_drivers_are_ranked_bars_as_long_as_their_shares():
     assert len(widths) == 12
     assert widths[0] / widths[1] == pytest.approx(0.42 / 0.105, rel=0.01)
     assert widths == sorted(widths, reverse=True)
+
+
+@pytest.mark.parametrize("tolerance", ["1", "0.071", "0.0071"])
+def test_shares_and_remarks_of_drivers_do_not_touch(tolerance):
+    """However small the share and long the remark: measured in the face of the plot, columns stand
+    apart and within the picture."""
+    shares = (0.99994, 0.0994, 0.00899, 0.00089, 0.00004)
+    remarks = [f"±{tolerance} %, {'section 2: gain, h1 in'.ljust(LONGEST_REMARK, 'n')}"] * 5
+    made = [Driver(refs=("R1",), kind="resistor", share=s) for s in shares]
+    svg = driver_chart(made, remarks=remarks)
+    found = {"start": [], "end": []}
+    for el in ET.fromstring(svg).iter():
+        style_of = el.get("style") or ""
+        if not el.tag.endswith("}text") or "font-size: 8px" not in style_of:
+            continue
+        anchor = "end" if "text-anchor: end" in style_of else "start"
+        found[anchor].append((float(el.get("x")), "".join(el.itertext())))
+    assert [text for _, text in found["end"]] == ["100 %", "9.9 %", "0.90 %", "0.09 %", "<0.01 %"]
+    right_of_bars = 547.2 * 0.40
+    for (end, share), (start, remark) in zip(found["end"], found["start"], strict=True):
+        assert end - width(share, 8) > right_of_bars
+        assert end + 4 < start
+        assert start + width(remark, 8) < 547.2
+
+
+@pytest.mark.parametrize(
+    ("sets", "expected"),
+    [
+        ("section 2: frequency, h2 into x2 (x1 part of h2)",) * 2,
+        ("one thing + another thing", "one thing + another thing"),
+        ("section 2: b2, h2 to y2 (x2 part of h2) + section 2: b1, x2 to y2",
+         "section 2: b2, h2 to y2 (x2 part of h2) + 1 more"),
+        ("stage g1 for section 12: frequency, h12 into x12 (x11 part of h12)",
+         "stage g1 for section 12: frequency, h12 into…"),
+        ("x" * 60, "x" * 47 + "…"),
+    ],
+)  # fmt: skip
+def test_a_long_remark_ends_between_things_or_words(sets, expected):
+    made = boards.circuit()
+    parts = (replace(p, sets=sets) if p.ref == "R1" else p for p in made.passives)
+    made = replace(made, passives=tuple(parts))
+    (remark,) = driver_remarks([Driver(refs=("R1",), kind="resistor", share=0.5)], made)
+    assert remark == f"±1\xa0%, {expected}"
 
 
 def test_ids_are_unique_over_a_page_and_every_reference_is_met():

@@ -11,6 +11,7 @@ from pathlib import Path
 
 import pytest
 
+from netlist.cli.running import TERMINATED, run
 from netlist.processes import workers
 
 
@@ -63,3 +64,49 @@ def test_processes_end_when_the_command_is_killed(tmp_path) -> None:
         time.sleep(0.05)
     else:
         pytest.fail("a process outlived the command that started it")
+
+
+def test_a_command_that_is_terminated_ends_in_order(tmp_path) -> None:
+    """Like an interrupt: no process, no temporary folder and no complaint of a library is left, and
+    the exit code is that of shells, 128 and 15."""
+    script = tmp_path / "command.py"
+    script.write_text(
+        "import os, sys, time\n"
+        "from netlist.cli import running\n"
+        "from netlist.ngspice import Simulator\n"
+        "from netlist.processes import workers\n"
+        "def wait(x):\n"
+        "    print(os.getpid(), flush=True)\n"
+        "    time.sleep(60)\n"
+        "def work(command, arguments):\n"
+        "    with Simulator(), workers() as mapper:\n"
+        "        list(mapper(wait, [1, 2]))\n"
+        "if __name__ == '__main__':\n"
+        "    running._attempt = work\n"
+        "    sys.exit(running.run([]))\n"
+    )
+    temporary = tmp_path / "temporary"
+    temporary.mkdir()
+    path = os.pathsep.join(p for p in sys.path if p)
+    with subprocess.Popen(
+        [sys.executable, str(script)],
+        stdout=subprocess.PIPE,
+        stderr=subprocess.PIPE,
+        text=True,
+        env={**os.environ, "PYTHONPATH": path, "TMPDIR": str(temporary)},
+    ) as process:
+        assert process.stdout is not None
+        inner = int(process.stdout.readline())
+        assert list(temporary.iterdir())
+        process.send_signal(signal.SIGTERM)
+        _, complaints = process.communicate(timeout=30)
+    assert process.returncode == TERMINATED == 143
+    assert complaints == "polewright: terminated\n"
+    assert list(temporary.iterdir()) == []
+    assert not Path(f"/proc/{inner}").exists()
+
+
+def test_the_handler_is_gone_after_the_command() -> None:
+    before = signal.getsignal(signal.SIGTERM)
+    assert run(["--version"]) == 0
+    assert signal.getsignal(signal.SIGTERM) == before

@@ -13,7 +13,7 @@ from netlist.partslist import parts_list
 from netlist.records import design_record
 from netlist.report.found import check_rows, margin
 from netlist.report.page import headline, inlined, report_page
-from netlist.report.wording import decibel, number, quantity, stated
+from netlist.report.wording import decibel, number, quantity, share, stated
 from synth.evidence import Check
 from synth.job import Loop
 from synth.loop import LoopBoards, Percentiles, loop_margins
@@ -180,6 +180,19 @@ def test_numbers_read_well_and_round_up_across_a_prefix():
     assert stated(100.0, "Hz") == "100\xa0Hz"
 
 
+@pytest.mark.parametrize("boards_passed", [0, 1, 5_000, 9_995, 9_999, 99_999, 999_999])
+def test_a_share_is_all_or_none_only_where_it_is(boards_passed):
+    """Whatever the count of boards: read back, a share short of 1 is below 100 %."""
+    for run in (10_000, 100_000, 1_000_000):
+        ratio = min(boards_passed / run, 1.0)
+        back = float(share(ratio).partition("\xa0")[0])
+        assert (back == 100, back == 0) == (ratio == 1, ratio == 0)
+        assert back == pytest.approx(100 * ratio, abs=0.005)
+    (row,) = check_rows([Check("yield", 99.0, 99.9999, "%", True, "9 at 7.779e+04 Hz")])
+    assert row["value"] == "99.9999\xa0%"
+    assert row["note"] == "9 at 77.8\xa0kHz"
+
+
 def test_what_was_not_measured_is_a_dash_not_a_crash():
     made = replace(boards.design(), swings=(), drifts=(), candidates=())
     text = report_page(
@@ -213,7 +226,7 @@ def test_what_fails_stands_at_the_top_of_the_checks():
 
 def test_poles_are_counted_in_whole_numbers():
     (row,) = check_rows([Check("closed loop", 0.0, 106.0, "unstable poles", False)])
-    assert (row["value"], row["margin"]) == ("106\xa0unstable poles", "−106\xa0unstable poles")
+    assert (row["value"], row["margin"]) == ("106\xa0unstable poles", "–")
 
 
 def test_with_a_loop_the_note_below_the_checks_still_sends_to_the_spread_alone():

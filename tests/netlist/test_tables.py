@@ -25,7 +25,7 @@ def test_the_headers_are_exactly_those_scripts_rely_on():
     assert response.splitlines()[0] == (
         "frequency_hz,target_db,target_deg,simulated_db,simulated_deg,error_db,error_deg"
     )
-    assert parts.splitlines()[0] == "refs,quantity,kind,value,marking,series,tolerance"
+    assert parts.splitlines()[0] == "refs,quantity,kind,value,marking,series,tolerance,note"
 
 
 def test_the_response_table_gives_target_and_simulated_response_back():
@@ -67,4 +67,5 @@ def test_parts_have_a_quantity_that_counts_their_references():
         "marking": "15K8",
         "series": "E96",
         "tolerance": "0.01",
+        "note": "",
     }

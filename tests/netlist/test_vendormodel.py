@@ -1,14 +1,19 @@
 """A vendor's op-amp model: what is let into a deck, and what the response with it says."""
 
+import html
+import re
 from dataclasses import replace
 
 import numpy as np
 import pytest
 
+from netlist import ngspice_worker
+from netlist.cli.summary import EXIT_CODES
 from netlist.deck import vendor_deck
 from netlist.jobfile import parse_job
-from netlist.records import design_record
+from netlist.records import all_notices, design_record, verdict_of
 from netlist.report.page import report_page
+from netlist.vendorlook import FOLLOWS, vendor_notices
 from netlist.vendormodel import parse_model
 from netlist.verification import verify
 from synth.errors import JobError
@@ -67,27 +72,138 @@ def test_the_response_with_a_model_of_half_the_bandwidth_is_that_predicted(desig
         program.solve(found.frequency_hz, gain_bandwidth=5e6, open_loop_gain=1e5),
         program.solve(found.frequency_hz),
     )
-    assert found.vendor_failure is None
-    np.testing.assert_allclose(found.vendor.magnitude_db, expected.magnitude_db, atol=2e-5)
-    np.testing.assert_allclose(found.vendor.phase_deg, expected.phase_deg, atol=2e-4)
+    look = found.vendor
+    assert look.failure is None
+    np.testing.assert_allclose(look.difference.magnitude_db, expected.magnitude_db, atol=2e-5)
+    np.testing.assert_allclose(look.difference.phase_deg, expected.phase_deg, atol=2e-4)
     assert expected.largest_deg > 0.01
-    assert [c.name for c in found.checks] == [
-        c.name for c in verify(design, simulator=simulator).checks
-    ]
+    plain = verify(design, simulator=simulator).checks
+    assert [c.name for c in found.checks] == [*(c.name for c in plain), FOLLOWS]
+    assert found.checks[-1].passed
+    # The output rises from one rail to the other.
+    assert found.checks[-1].value == pytest.approx(24.0, rel=0.1)
 
 
-def test_a_model_that_cannot_be_simulated_is_told_and_fails_nothing(design, simulator):
-    """A subcircuit that is not there, within the model."""
-    broken = MODEL.replace("Rpole pole 0 100meg", "Xpole pole 0 nowhere")
-    made = with_model(design, parsed(broken))
+def test_the_board_with_the_model_is_held_against_the_target(design, simulator):
+    """Not against the one-pole model: the errors are those of the nodal engine's response with
+    the model's figures against H(s), beside the limits of the job."""
+    look = verify(with_model(design, parsed()), simulator=simulator).vendor
+    program = compile_circuit(design.circuit)
+    f = design.frequency_hz
+    response = program.solve(f, gain_bandwidth=5e6, open_loop_gain=1e5)
+    expected = response_error(response, design.wanted.response(f))
+    magnitude, phase = look.against_target
+    assert magnitude.value == pytest.approx(expected.largest_db, rel=1e-3)
+    assert phase.value == pytest.approx(expected.largest_deg, rel=1e-3)
+    accept = design.job.accept
+    assert (magnitude.limit, phase.limit) == (accept.magnitude_db, accept.phase_deg)
+    assert look.keeps_limits
+    assert vendor_notices(look) == ()
+
+
+SLOW = MODEL.replace("=5meg", "=50k")
+DEAD = MODEL.replace("i n 1m", "i n 0")
+NO_SUBCIRCUIT = MODEL.replace("Rpole pole 0 100meg", "Xpole pole 0 nowhere")
+NO_DIODE = MODEL.replace("Dup pole p clamp", "Dup pole p other")
+SWAPPED = ("out", "vcc", "plus", "vee", "minus")
+OUT_ON_RAIL = ("vcc", "out", "minus", "vee", "plus")
+
+
+def test_a_model_too_slow_for_the_limits_is_told_but_fails_nothing(design, simulator):
+    made = with_model(design, parsed(SLOW))
+    found = verify(made, simulator=simulator)
+    assert not found.vendor.keeps_limits
+    assert verdict_of(made, found) == "pass"
+    (said,) = [n for n in all_notices(made, found) if "vendor" in n]
+    assert "the board misses its limits of magnitude and phase" in said
+    record = design_record(made, found)
+    assert said in record["notices"]
+    assert record["simulation"]["vendor_model"]["keeps_limits"] is False
+    page = report_page(made, found, drawings=boards.drawings(), lines=())
+    assert "<strong>does not keep its limits</strong>" in page
+    assert "outside</td>" in page
+    assert html.unescape(page).count(said) == 1
+
+
+@pytest.mark.parametrize(
+    ("text", "pins", "said"),
+    [
+        (DEAD, PINS, "hardly moves"),
+        (MODEL, SWAPPED, "plus and minus are exchanged"),
+        (MODEL.replace("v=v(pole)", "v=0.001*v(pole)"), PINS, "hardly moves"),
+    ],
+)
+def test_a_model_whose_output_does_not_follow_its_plus_input_fails(
+    design, simulator, text, pins, said
+):
+    """With plus and minus exchanged the AC response alone is as good as ever."""
+    made = with_model(design, parsed(text, pins=pins))
+    found = verify(made, simulator=simulator)
+    check = found.checks[-1]
+    assert check.name == FOLLOWS
+    assert not check.passed
+    assert said in check.note
+    assert verdict_of(made, found) == "fail"
+    assert EXIT_CODES[verdict_of(made, found)] == 1
+    page = report_page(made, found, drawings=boards.drawings(), lines=())
+    assert f"limits missed: {FOLLOWS}" in page
+
+
+@pytest.mark.parametrize("offset", [-5e-3, 5e-3])
+def test_an_offset_is_no_reason_to_fail(design, simulator, offset):
+    text = MODEL.replace("Gstage 0 pole i n 1m", f"Voff i2 i {offset}\nGstage 0 pole i2 n 1m")
+    found = verify(with_model(design, parsed(text)), simulator=simulator)
+    assert found.checks[-1].passed
+
+
+def test_a_board_without_a_response_is_told_in_words(design, simulator):
+    """A dead output gives no decibels to print."""
+    made = with_model(design, parsed(DEAD))
+    found = verify(made, simulator=simulator)
+    assert found.vendor.is_silent
+    page = report_page(made, found, drawings=boards.drawings(), lines=())
+    assert "shows no response at all" in page
+    assert "by at most –" not in page
+
+
+@pytest.mark.parametrize(
+    ("text", "pins", "reason"),
+    [
+        (NO_SUBCIRCUIT, PINS, r"unknown subckt: .* nowhere"),
+        (
+            NO_DIODE,
+            PINS,
+            r"'other' from line; dup pole p other; .*find a valid modelname",
+        ),
+        (MODEL.replace("{1m", "{missing*1m"), PINS, r"Undefined parameter \[missing\]"),
+        (MODEL, OUT_ON_RAIL, "Timestep too small"),
+    ],
+)
+def test_a_model_that_cannot_be_simulated_is_told_and_fails(design, simulator, text, pins, reason):
+    """Nothing shows that its output follows its input; the reason is what ngspice says, whole."""
+    made = with_model(design, parsed(text, pins=pins))
     found = verify(made, simulator=simulator)
     assert found.failure is None
-    assert found.vendor is None
-    assert found.vendor_failure
-    record = design_record(made, found)["simulation"]["vendor_model"]
-    assert record == {"failure": found.vendor_failure, "difference": None}
+    look = found.vendor
+    assert look.difference is None
+    assert re.search(reason, look.failure)
+    assert (look.follows.value, look.follows.passed) == (None, False)
+    assert verdict_of(made, found) == "fail"
+    record = design_record(made, found)
+    assert record["simulation"]["vendor_model"] == {
+        "failure": look.failure, "difference": None, "keeps_limits": None, "against_target": [],
+    }  # fmt: skip
+    (said,) = vendor_notices(look)
+    assert look.failure in said
+    assert said in record["notices"]
     page = report_page(made, found, drawings=boards.drawings(), lines=())
-    assert "nothing came of it" in page
+    assert "<strong>nothing is known</strong>" in page
+
+
+def test_a_step_towards_the_operating_point_that_fails_is_no_failure(simulator):
+    """ngspice reports singular matrices on the way to one it then finds."""
+    message = "Trying gmin =   1.0000E-03 Warning: singular matrix:  check node x"
+    assert ngspice_worker._HARMLESS.match(message)
 
 
 def test_the_deck_has_rails_and_no_one_pole_model(design):
@@ -122,15 +238,47 @@ def test_the_deck_has_rails_and_no_one_pole_model(design):
         ("Rx o 0 1\\", "no double quote, backquote or backslash"),
         ("Rµ o 0 1", "plain ASCII outside comments"),
         ("Rx o 0 \x1b[31m1", "plain ASCII outside comments"),
-        ("Rx o 0\x85.control", "only .ends"),
-        ("Rx o 0\u2028.control", "only .ends"),
-        ("Rx o 0\r.control", "only .ends"),
+        ("Rx o 0 1\x85.control", "only .ends"),
+        ("Rx o 0 1\u2028.control", "only .ends"),
+        ("Rx o 0 1\r.control", "only .ends"),
+        ("V1 a 0 dc 0 external", "a source of its own"),
+        ("I1 a 0 EXTERNAL", "a source of its own"),
+        ("V1 a 0 dc 0 trnoise(1m 1u 0 0)", "a source of its own"),
+        ("V1 a 0 dc 0\n+ trrandom(2 10m 0 1)", "a source of its own"),
+        ("R1 a 0 {agauss(1k,10,1)}", "values that are not drawn at random"),
+        (".param r=gauss (1k,10,1)", "values that are not drawn at random"),
+        (".param r={limit(1k,(1+2))}", "values that are not drawn at random"),
+        ("B1 a 0 v=aunif(1,2)", "values that are not drawn at random"),
+        ("include x", "only the elements"),
+        ("include x y 1k", "only the elements"),
+        ("lib x tt", "only the elements"),
+        ("ends", "only the elements"),
+        ("R(1) a 0 1k", "only the elements"),
+        ("R1 a 0", "a name, nodes and a value or model, 4 words or more"),
+        ("I1 a", "a name, nodes and a value or model, 3 words or more"),
+        ("Q1 a b c", "a name, nodes and a value or model, 5 words or more"),
     ],
 )
 def test_a_statement_that_does_more_than_describe_is_refused_with_its_line(line, expected):
     text = MODEL.replace("Dup pole p clamp", f"{line}\nDup pole p clamp")
     with pytest.raises(JobError, match=rf"^model: amp\.lib:1[0-9]: got .*, expected {expected}"):
         parsed(text)
+
+
+@pytest.mark.parametrize(
+    "line",
+    [
+        "DC o p clamp",
+        "Vsense a 0",
+        "E1 a 0 VALUE={limit(v(i)-v(n), -1, max(1, 2))}",
+        "F1 a 0 Vsense 2",
+        "M1 a b p mos",
+        "Vexternal external 0 1",
+        "Rlimit a 0 {2*1k}",
+    ],
+)
+def test_what_models_commonly_hold_is_let_in(line):
+    assert line in parsed(MODEL.replace("Dup pole p clamp", f"{line}\nDup pole p clamp")).cards
 
 
 @pytest.mark.parametrize(

@@ -147,6 +147,7 @@ def test_a_run_counts_and_ranks_its_boards() -> None:
     limited = replace(loop, phase_margin_deg=float(ordered[19] + ordered[20]) / 2)
     half = run_loops(program, circuit, limited, target, inverted=False, boards=40, seed=2)
     assert (half.stable, half.passed) == (40, 20)
+    assert (half.short_of_phase, half.short_of_gain) == (20, 0)
     assert half.low < half.share < half.high
     assert loop_yield_check(half).value == 50
     turned = run_loops(program, circuit, loop, target, inverted=True, boards=40, seed=2)
@@ -154,6 +155,7 @@ def test_a_run_counts_and_ranks_its_boards() -> None:
     expected = one_by_one(circuit, loop, target, nominal, sign=-1.0)
     assert expected[-1] > 0
     assert turned.stable == turned.passed == 0
+    assert (turned.short_of_phase, turned.short_of_gain) == (0, 0)
     assert turned.disk_margin.p95 == 0
     assert turned.phase_margin_deg.p95 < 0
 
