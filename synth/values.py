@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.candidates import Sketch
-from synth.choosing import DEFAULT_EFFORT, Choice, Task, refine, with_ideal_op_amps
+from synth.choosing import DEFAULT_EFFORT, Choice, Level, Task, refine, with_ideal_op_amps
 from synth.circuit import Cell, Circuit
 from synth.job import Job
 from synth.nodal import compile_circuit
@@ -124,22 +124,23 @@ def level_ratios(sketch: Sketch, circuit: Circuit, frequency_hz: Real) -> dict[s
     }
 
 
-def level_limits(sketch: Sketch, job: Job) -> dict[str, tuple[float, float]]:
-    """For each op-amp output but the board's: where it peaks [Hz], and by what ratio the peak
-    may rise before it meets the rail or half the slew rate."""
+def level_limits(sketch: Sketch, job: Job) -> dict[str, Level]:
+    """For each op-amp output but the board's: where it peaks, how large H(s) makes it there, and
+    by what ratio that may rise before it meets the rail or half the slew rate."""
     peaks = sketch.peaks
     grid = frequencies_of_interest(job.target, from_hz=peaks.from_hz)
     signals = sketch.graph.signals(2j * np.pi * grid)
-    limits: dict[str, tuple[float, float]] = {}
+    limits: dict[str, Level] = {}
     for cell in sketch.circuit.cells:
         if cell.output == sketch.circuit.output_net:
             continue
         if cell.block not in signals:  # the inverter of the input: the same gain everywhere
-            limits[cell.output] = (job.signal.band_hz[0], _input_inverter_may(sketch, job, cell))
+            rising = _input_inverter_may(sketch, job, cell)
+            limits[cell.output] = Level(job.signal.band_hz[0], rising)
             continue
-        volts = job.signal.input_peak * sketch.levels[cell.block]
-        if cell.kind == "inverter":  # of a gain other than -1 where values were chosen before
-            volts *= _inverter_gain(sketch.circuit, cell)
+        # An inverter has a gain other than -1 where values were chosen before.
+        turned = _inverter_gain(sketch.circuit, cell) if cell.kind == "inverter" else 1.0
+        volts = job.signal.input_peak * sketch.levels[cell.block] * turned
         rising = min(
             job.board.swing_limit / (volts * peaks.peak[cell.block]),
             job.board.op_amp.slew_rate / 2 / (volts * peaks.rate[cell.block]),
@@ -149,7 +150,7 @@ def level_limits(sketch: Sketch, job: Job) -> dict[str, tuple[float, float]]:
         watch = float(grid[int(np.argmax(size >= (1 - FLAT) * np.max(size)))])
         # One already above its ceiling must not be pushed further; that values cannot bring it
         # below is for the swing check to say.
-        limits[cell.output] = (watch, max(rising, 1.0))
+        limits[cell.output] = Level(watch, max(rising, 1.0), float(np.max(size)) * turned)
     return limits
 
 
