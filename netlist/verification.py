@@ -20,7 +20,7 @@ from netlist.stimulus import Decks, decks_of, settling_time, sweep_deck
 from synth.circuit import GROUND
 from synth.errors import SimulatorError
 from synth.evidence import Check, ResponseError, response_error
-from synth.grid import judged, points_per_decade
+from synth.grid import judged, points_per_decade, sweeps
 from synth.nodal import compile_circuit
 from synth.results import Design
 
@@ -253,17 +253,19 @@ def _with_sine(design: Design, simulator: Simulator, so_far: Verification) -> Ve
 
 def _with_vendor(design: Design, simulator: Simulator, so_far: Verification) -> Verification:
     """The response with the vendor's model; a model that fails is told, and no more."""
-    model, band = design.job.board.vendor_model, design.job.signal.band_hz
+    model = design.job.board.vendor_model
     if model is None or so_far.simulated is None:
         return so_far
+    whole, *further = sweeps(design.wanted, design.job.signal.band_hz)
     deck = vendor_deck(
         design.circuit,
         model,
         title=design.job.title,
         supply=design.job.board.supply,
-        start_hz=band[0],
-        stop_hz=band[1],
-        points_per_decade=points_per_decade(design.wanted, band_hz=band),
+        start_hz=whole.start_hz,
+        stop_hz=whole.stop_hz,
+        points_per_decade=whole.points_per_decade,
+        further=further,
     )
     out = design.circuit.output_net
     try:

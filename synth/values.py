@@ -31,10 +31,15 @@ __all__ = [
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
+Index = NDArray[np.intp]
 Progress = Callable[[str, int, int], None]
 
 # The search for values sees the response at about this many frequencies.
 FREQUENCIES_OF_THE_SEARCH = 200
+
+# And about so many where the grid is denser than elsewhere: below this share of its median step.
+FREQUENCIES_ABOUT_SHARP = 60
+CLOSE = 0.6
 
 # Share of the search that goes into values as if op-amps were ideal: they are where the search for
 # the real ones sets out, and what shows what allowing for the op-amps brings.
@@ -49,9 +54,16 @@ def wanted_of(sketch: Sketch, job: Job) -> TransferFunction:
     return job.target.negated() if sketch.polarity.output_inverted else job.target
 
 
-def thinned(frequency_hz: Real) -> slice:
-    """About `FREQUENCIES_OF_THE_SEARCH` of the frequencies."""
-    return slice(None, None, max(1, frequency_hz.size // FREQUENCIES_OF_THE_SEARCH))
+def thinned(frequency_hz: Real) -> slice | Index:
+    """Places of about `FREQUENCIES_OF_THE_SEARCH` of the frequencies, and of about
+    `FREQUENCIES_ABOUT_SHARP` of those that lie closer than the others, about what is sharp."""
+    step = max(1, frequency_hz.size // FREQUENCIES_OF_THE_SEARCH)
+    apart = np.diff(np.log(frequency_hz))
+    close = np.flatnonzero(apart < CLOSE * np.median(apart))
+    if not close.size:
+        return slice(None, None, step)
+    some = close[:: max(1, close.size // FREQUENCIES_ABOUT_SHARP)]
+    return np.union1d(np.arange(0, frequency_hz.size, step), some)
 
 
 def standard_values(
