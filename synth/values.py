@@ -96,16 +96,22 @@ class ValueSearch:
     def both(self, say: Progress) -> tuple[Choice, Choice]:
         """For the job's op-amps, and as if they were ideal; the one improves on the other.
 
-        What the job asks beyond the least error, pairs and few values, is done for the first
-        alone.
+        What is beyond the usual effort goes into improving on what that gives, so that more is
+        never worse.  What the job asks beyond the least error, pairs and few values, is done for
+        the first alone.
         """
+        usual = min(self.effort, DEFAULT_EFFORT)
+        rest = self.effort - usual
         say("values", 0, 2)
         ideal = self.task(with_ideal_op_amps(self.sketch.circuit))
-        unaware = replace(ideal, effort=int(UNAWARE_SHARE * self.effort)).choose()
+        unaware = replace(ideal, effort=int(UNAWARE_SHARE * usual)).choose()
         say("values", 1, 2)
         task = self.task(self.sketch.circuit)
-        choice = refine(task, task.choose(known=unaware.circuit), self.job.board)
-        return choice, unaware
+        choice = replace(task, effort=usual).choose(known=unaware.circuit)
+        if rest:
+            unaware = _improved(ideal, unaware, int(UNAWARE_SHARE * rest))
+            choice = _improved(task, choice, rest)
+        return refine(task, choice, self.job.board), unaware
 
     def task(self, circuit: Circuit) -> Task:
         """What is asked of `circuit`, the sketch's own or one like it, on at most about
@@ -120,6 +126,14 @@ class ValueSearch:
             seed=self.seed,
             effort=self.effort,
         )
+
+
+def _improved(task: Task, known: Choice, effort: int) -> Choice:
+    """A choice at least as good as `known`, by other kicks."""
+    found = replace(task, seed=task.seed + 1, effort=effort).choose(known=known.circuit)
+    # Values that had to leave what the scaling wants kept are no start for ones that need not.
+    better = min(found, known, key=lambda choice: choice.certificate.rms)
+    return replace(better, looked=known.looked + found.looked)
 
 
 def level_ratios(sketch: Sketch, circuit: Circuit, frequency_hz: Real) -> dict[str, float]:
