@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 
 from synth.candidates import Sketch
 from synth.choosing import DEFAULT_EFFORT, Choice, Level, Task, refine, with_ideal_op_amps
+from synth.choosing.model import AROUND_PEAK
 from synth.circuit import Cell, Circuit
 from synth.job import Job
 from synth.nodal import compile_circuit
@@ -176,7 +177,8 @@ def level_limits(sketch: Sketch, job: Job) -> dict[str, Level]:
         watch = float(grid[int(np.argmax(size >= (1 - FLAT) * np.max(size)))])
         # One already above its ceiling must not be pushed further; that values cannot bring it
         # below is for the swing check to say.
-        limits[cell.output] = Level(watch, max(rising, 1.0), float(np.max(size)) * turned)
+        near = np.abs(sketch.graph.signals(2j * np.pi * watch * AROUND_PEAK)[cell.block])
+        limits[cell.output] = Level(watch, max(rising, 1.0), float(np.max(near)) * turned)
     return limits
 
 

@@ -19,7 +19,15 @@ from synth.evidence import DB_PER_NEPER
 from synth.job import Accept
 from synth.nodal import NodalProgram
 
-__all__ = ["Ceilings", "Goal", "Level", "LevelLimits", "LinearModel", "compensation"]
+__all__ = [
+    "AROUND_PEAK",
+    "Ceilings",
+    "Goal",
+    "Level",
+    "LevelLimits",
+    "LinearModel",
+    "compensation",
+]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -174,8 +182,9 @@ class Level:
     may_rise
         By what ratio it may rise, or must fall where that is below 1.
     gain
-        From where: the peak that it is meant to have, a ratio.  What the op-amps make of ideal
-        values may be above that, and does not count.  None: what it is with the ideal values.
+        From where: the largest that it is meant to be at `AROUND_PEAK` times `peak_hz`, a ratio.
+        What the op-amps make of ideal values may be above that, and does not count.  None: what it
+        is with the ideal values.
     """
 
     peak_hz: float
@@ -212,8 +221,10 @@ class Ceilings:
         found = cls(tuple(levels), peak_hz, ratios, LOWEST_FALL * np.minimum(ratios, 1.0))
         gains = found._gains(program, values[None, :])[0]
         firm = np.max(np.abs(found._slopes(program, values)), axis=1) <= FIRM_SLOPE
-        meant = [level.gain for level in levels.values()]
-        base = np.where([m is None for m in meant], gains, [m or 0.0 for m in meant])
+        # Outputs are watched elsewhere too, where an integrator is larger: both by the same ratio.
+        near = found._near_peaks(program, values)
+        meant = np.array([np.nan if m.gain is None else m.gain for m in levels.values()])
+        base = gains * np.where(np.isnan(meant), 1.0, meant / near)
         lowest = firm * found.lowest * np.minimum(gains, base)
         return replace(found, highest=found.highest * base, lowest=lowest)
 
@@ -234,6 +245,12 @@ class Ceilings:
                 for net, peak_hz in zip(self.nets, self.peak_hz, strict=True)
             ]
         )
+
+    def _near_peaks(self, program: NodalProgram, values: Real) -> Real:
+        """Largest gain to each output around its own peak at `values` (P,), shape (U,)."""
+        around = np.multiply.outer(AROUND_PEAK, self.peak_hz)
+        gains = np.abs(program.solve(around.ravel(), values=values, nets=self.nets))
+        return np.asarray(np.diagonal(gains.reshape(*around.shape, -1).max(axis=0)))
 
     def _gains(self, program: NodalProgram, values: Real) -> Real:
         """Largest gain to each output around the peaks of all and at a few frequencies between

@@ -10,6 +10,7 @@ import numpy as np
 import pytest
 
 from synth.candidates import sketch_form
+from synth.choosing.model import Ceilings
 from synth.design import compare_forms, design
 from synth.errors import JobError, RealizationError
 from synth.evidence import response_error
@@ -119,6 +120,24 @@ def test_levels_end_at_the_rails_whatever_slow_op_amps_make_of_ideal_values() ->
     assert np.all(volts > 0.95 * job.board.swing_limit)
     found = swings(task.choose().circuit, target, job)
     assert all(s.peak <= s.peak_limit for s in found)
+
+
+@pytest.mark.parametrize("target", [PI, butterworth(4, 1e3)])
+def test_with_ideal_op_amps_levels_are_what_the_values_make_them(target) -> None:
+    """Where H(s) says how large an output is, and where the ideal values do: the same ceilings,
+    those of integrators that are larger below the band too."""
+    ideal = {"gain_bandwidth": 1e13, "open_loop_gain": 1e12, "slew_rate": 1e12}
+    job = job_for(target, BAND, form="cascade", input_peak=0.1, op_amp_figures=ideal)
+    sketch = sketch_form(job, "cascade", np.geomspace(*BAND, 100))
+    program, values = compile_circuit(sketch.circuit), [p.ideal for p in sketch.circuit.passives]
+    levels = level_limits(sketch, job)
+    assert any(level.gain for level in levels.values())
+    plain = {net: replace(level, gain=None) for net, level in levels.items()}
+    one, other = (Ceilings.of(program, np.array(values), each) for each in (levels, plain))
+    assert one is not None
+    assert other is not None
+    np.testing.assert_allclose(one.highest, other.highest, rtol=1e-6)
+    np.testing.assert_allclose(one.lowest, other.lowest, rtol=1e-6)
 
 
 def test_pole_at_the_origin_is_allowed_flagged_and_measured_from_the_band() -> None:
