@@ -10,11 +10,12 @@ nor join two.
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 
 from netlist.opamp_models import linear_model, number, saturating_model
 from synth.circuit import Circuit, Passive
 from synth.errors import CircuitError
+from synth.grid import Sweep
 from synth.parts import OpAmp, VendorModel
 
 __all__ = ["board_deck", "filtered", "follower_deck", "sine_deck", "step_deck", "vendor_deck"]
@@ -33,11 +34,18 @@ Model = Callable[[str, OpAmp], tuple[str, ...]]
 
 
 def board_deck(
-    circuit: Circuit, *, title: str, start_hz: float, stop_hz: float, points_per_decade: int
+    circuit: Circuit,
+    *,
+    title: str,
+    start_hz: float,
+    stop_hz: float,
+    points_per_decade: int,
+    further: Sequence[Sweep] = (),
 ) -> str:
     """The linear deck: AC response at the output, operating point, noise sources in place.
 
-    ``ngspice -b`` runs it as it is; see `synth.grid.band_grid` for its frequencies.
+    ``ngspice -b`` runs it as it is; see `synth.grid.band_grid` for its frequencies.  Of `further`
+    sweeps each is another table.
 
     Raises
     ------
@@ -62,7 +70,7 @@ def board_deck(
             f"{SOURCE} {circuit.input_net} 0 DC 0 AC 1",
             *_components(circuit, linear_model),
             "* Response at the output: magnitude in dB, phase in radians.",
-            f".ac dec {points_per_decade:d} {number(start_hz)} {number(stop_hz)}",
+            *_sweep_lines(Sweep(start_hz, stop_hz, points_per_decade), further),
             f".print ac vdb({out}) vp({out})",
             ".op",
         ]
@@ -209,6 +217,7 @@ def vendor_deck(
     start_hz: float,
     stop_hz: float,
     points_per_decade: int,
+    further: Sequence[Sweep] = (),
 ) -> str:
     """The AC deck with a vendor's model for every op-amp, between rails.
 
@@ -233,7 +242,7 @@ def vendor_deck(
             *_rails(supply),
             *lines,
             *model.cards,
-            f".ac dec {points_per_decade:d} {number(start_hz)} {number(stop_hz)}",
+            *_sweep_lines(Sweep(start_hz, stop_hz, points_per_decade), further),
         ]
     )
 
@@ -264,6 +273,13 @@ def _rails(supply: tuple[float, float]) -> list[str]:
     return [
         f"Vrail_low {_RAILS['vee']} 0 DC {number(supply[0])}",
         f"Vrail_high {_RAILS['vcc']} 0 DC {number(supply[1])}",
+    ]
+
+
+def _sweep_lines(whole: Sweep, further: Sequence[Sweep]) -> list[str]:
+    return [
+        f".ac dec {s.points_per_decade:d} {number(s.start_hz)} {number(s.stop_hz)}"
+        for s in (whole, *further)
     ]
 
 

@@ -74,14 +74,16 @@ def read_pack(folder: str | Path) -> Earlier:
             place=part.path,
         )
     drawn = top.table("yield")
+    boards = drawn.count("boards", least=1, most=MOST_BOARDS)
     return Earlier(
         job=job,
         form=form,
         parts=tuple(parts.values()),
-        boards=drawn.count("boards", least=1, most=MOST_BOARDS),
+        boards=boards,
         seed=drawn.count("seed", least=0, most=LARGEST_SEED),
         shortages=_shortages(top) if "repick" in record else (),
         name=str(name),
+        passed=drawn.count("passed", least=0, most=boards),
     )
 
 

@@ -303,8 +303,8 @@ def _repick(design: Design) -> dict[str, object]:
             "all_free": found.all_free,
             "missing": list(found.missing),
             "changed": [asdict(c) for c in found.changes],
-            "before": _error(found.before),
-            "after": _error(found.after),
+            "before": {**_error(found.before), "yield": found.share_before},
+            "after": {**_error(found.after), "yield": found.share_after},
         }
     }
 

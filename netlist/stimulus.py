@@ -10,7 +10,7 @@ from dataclasses import dataclass
 
 from netlist.deck import board_deck, step_deck
 from synth.circuit import Circuit
-from synth.grid import points_per_decade
+from synth.grid import sweeps
 from synth.results import Design
 from synth.transfer import TransferFunction
 
@@ -67,13 +67,14 @@ def decks_of(design: Design) -> Decks:
 
 def sweep_deck(design: Design, circuit: Circuit) -> str:
     """The linear deck of a board of the design: AC over its band."""
-    band = design.job.signal.band_hz
+    whole, *further = sweeps(design.wanted, design.job.signal.band_hz)
     return board_deck(
         circuit,
         title=design.job.title,
-        start_hz=band[0],
-        stop_hz=band[1],
-        points_per_decade=points_per_decade(design.wanted, band_hz=band),
+        start_hz=whole.start_hz,
+        stop_hz=whole.stop_hz,
+        points_per_decade=whole.points_per_decade,
+        further=further,
     )
 
 

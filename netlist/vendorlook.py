@@ -19,7 +19,7 @@ from netlist.deck import follower_deck, vendor_deck
 from netlist.ngspice import Simulator
 from synth.errors import SimulatorError
 from synth.evidence import Check, ResponseError, response_error
-from synth.grid import judged, points_per_decade
+from synth.grid import judged, sweeps
 from synth.quantities import show
 from synth.results import Design
 
@@ -94,18 +94,20 @@ def look_at_vendor_model(
 
     `simulated` is the response with the one-pole model at the frequencies judged, shape (F,).
     """
-    model, band = design.job.board.vendor_model, design.job.signal.band_hz
+    model = design.job.board.vendor_model
     if model is None:
         return None
+    whole, *further = sweeps(design.wanted, design.job.signal.band_hz)
     follows = _follows(design, simulator)
     deck = vendor_deck(
         design.circuit,
         model,
         title=design.job.title,
         supply=design.job.board.supply,
-        start_hz=band[0],
-        stop_hz=band[1],
-        points_per_decade=points_per_decade(design.wanted, band_hz=band),
+        start_hz=whole.start_hz,
+        stop_hz=whole.stop_hz,
+        points_per_decade=whole.points_per_decade,
+        further=further,
     )
     out = design.circuit.output_net
     try:

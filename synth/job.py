@@ -206,7 +206,8 @@ class Accept:
 class Loop:
     """The plant P(s) exp(-s delay) that the board drives; L = P H, negative feedback.
 
-    `delay` in [s], `phase_margin_deg` in [deg], `gain_margin_db` in [dB]; None: no limit.
+    `plant` has no more zeros than poles.  `delay` in [s], `phase_margin_deg` in [deg],
+    `gain_margin_db` in [dB]; None: no limit.
     """
 
     plant: TransferFunction
@@ -215,6 +216,13 @@ class Loop:
     gain_margin_db: float | None = None
 
     def __post_init__(self) -> None:
+        if self.plant.relative_degree < 0:
+            zeros, poles = (len(p) - 1 for p in (self.plant.numerator, self.plant.denominator))
+            raise JobError(
+                f"got {zeros} zeros and {poles} pole{'' if poles == 1 else 's'}, expected a plant "
+                "with no more zeros than poles",
+                key="loop.numerator",
+            )
         if not (0 <= self.delay < math.inf):
             raise JobError(f"got {self.delay}, expected zero or a positive time", key="loop.delay")
 

@@ -5,6 +5,9 @@ Computed on the circuit as it will be built, with its chosen values and its op-a
 
 from __future__ import annotations
 
+from collections.abc import Collection
+from dataclasses import replace
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -23,6 +26,9 @@ Real = NDArray[np.float64]
 
 # Outputs this close (a ratio) to their peak count as being at it.
 FLAT = 1e-6
+
+# Gain of an op-amp whose output is held at 0 V: what it passes on is out of sight.
+GAIN_HELD = 1e-9
 
 
 def swings(circuit: Circuit, target: TransferFunction, job: Job) -> tuple[Swing, ...]:
@@ -118,32 +124,60 @@ def drifts(circuit: Circuit) -> tuple[Drift, ...]:
     """Integrators with no feedback at DC, and how fast offset and bias make them drift.
 
     An integrator has DC feedback when its output finds a way back to its input through other
-    cells.  The rate is Vos/(R C) + Ib/C with R the parallel value of its input resistors.
+    cells.  Offsets and bias currents of all op-amps act: its own, and those of the cells that
+    feed it, each with its sign along all paths, and then all of the worst sign.  Their sum is the
+    current into the capacitor: with the output held at 0 V by an op-amp of the gain g -> 0, the
+    output is g times what stands between the inputs, so that the rate is (output / g) sum(1/R) / C
+    with R the input resistors.  All bare integrators are held so, and none of them feeds another.
     """
     graph = graph_of(circuit)
     names = block_names(circuit)
     reads = {b.name: {t.source for t in b.terms} for b in graph.blocks}
-    amplifiers = {a.ref: a for a in circuit.amplifiers}
+    behind = {name: _sources_of(name, reads) for name in reads}
+    bare = [
+        cell
+        for cell in circuit.cells
+        if cell.kind == "integrator" and names[cell.output] not in behind[names[cell.output]]
+    ]
+    if not bare:
+        return ()
+    held = {cell.amplifier for cell in bare}
+    offsets = compile_circuit(_held(circuit, held)).dc_offsets()
+    volts = dict(zip(offsets.nets, offsets.worst / GAIN_HELD, strict=True))
     out: list[Drift] = []
-    for cell in circuit.cells:
-        if cell.kind != "integrator" or _reaches_itself(names[cell.output], reads):
-            continue
-        figures = amplifiers[cell.amplifier].figures
+    for cell in bare:
         capacitance = circuit.by_ref[cell.feedback].value
         conductance = sum(1 / circuit.branch(cell, r).resistance for r in cell.inputs)
-        rate = (figures.offset * conductance + figures.bias_current) / capacitance
-        out.append(Drift(amplifier=cell.amplifier, net=cell.output, rate=rate))
+        before = behind[names[cell.output]]
+        out.append(
+            Drift(
+                amplifier=cell.amplifier,
+                net=cell.output,
+                rate=float(volts[cell.output]) * conductance / capacitance,
+                behind=tuple(c.amplifier for c in bare if names[c.output] in before),
+            )
+        )
     return tuple(out)
 
 
-def _reaches_itself(name: str, reads: dict[str, set[str]]) -> bool:
+def _held(circuit: Circuit, held: Collection[str]) -> Circuit:
+    """The circuit with the op-amps `held`, by reference, of a gain that is as good as none."""
+    return replace(
+        circuit,
+        amplifiers=tuple(
+            replace(a, figures=replace(a.figures, open_loop_gain=GAIN_HELD)) if a.ref in held else a
+            for a in circuit.amplifiers
+        ),
+    )
+
+
+def _sources_of(name: str, reads: dict[str, set[str]]) -> set[str]:
+    """Every block or input whose signal reaches the inputs of block `name`."""
     seen: set[str] = set()
     waiting = set(reads[name])
     while waiting:
         source = waiting.pop()
-        if source == name:
-            return True
-        if source in reads and source not in seen:
+        if source not in seen:
             seen.add(source)
-            waiting |= reads[source]
-    return False
+            waiting |= reads.get(source, set())
+    return seen

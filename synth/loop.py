@@ -34,6 +34,10 @@ Complex = NDArray[np.complex128]
 Response = Callable[[Real], Complex]
 
 
+# An L that tends to a number is there when its imaginary part is below this share of the real one.
+REAL = 0.05
+
+
 @dataclass(frozen=True, kw_only=True)
 class LoopMargins:
     """What a loop has in hand; None where there is no crossing.
@@ -166,7 +170,10 @@ def loop_margins(
     )
     crossover, phase_margin = _phase_margin(response, grid, value)
     origin = sum(tf.poles_at_origin - tf.zeros_at_origin for tf in parts)
-    gain_margin = _gain_margin(response, grid, value, finite_at_dc=origin == 0)
+    flat = not loop.delay and sum(tf.relative_degree for tf in parts) == 0
+    gain_margin = _gain_margin(
+        response, grid, value, finite_at_dc=origin == 0, finite_at_infinity=flat
+    )
     falls = gain_margin is not None and gain_margin < 0
     if poles == 0:
         # Either way from a stable loop is a distance from instability.
@@ -188,8 +195,18 @@ def checked_loop(loop: Loop, target: TransferFunction) -> LoopMargins:
     Raises
     ------
     JobError
-        That loop is unstable: no board could be any better than what was asked.
+        That loop is unstable: no board could be any better than what was asked.  Or it does not
+        fall below 1: there is no crossover, and what P and H leave out, where the board's
+        op-amps end at the latest, decides whether it is stable (at -1 or below it never is).
     """
+    end = _at_infinity(loop, target)
+    if abs(end) >= 1:
+        raise JobError(
+            f"got L = P H that tends to {end:.4g} at high frequencies, where op-amps end and "
+            "nothing here says whether the loop is stable; expected a plant with its poles there, "
+            "so that L falls below 1",
+            key="loop",
+        )
     margins = loop_margins(loop, target)
     if margins.unstable_poles:
         poles = margins.unstable_poles
@@ -200,6 +217,14 @@ def checked_loop(loop: Loop, target: TransferFunction) -> LoopMargins:
             key="loop",
         )
     return margins
+
+
+def _at_infinity(loop: Loop, target: TransferFunction) -> float:
+    """What L tends to at high frequencies, but for the delay."""
+    parts = (loop.plant, target)
+    if sum(tf.relative_degree for tf in parts) > 0:
+        return 0.0
+    return float(math.prod(tf.numerator[0] / tf.denominator[0] for tf in parts))
 
 
 def loop_checks(loop: Loop, margins: LoopMargins) -> tuple[Check, ...]:
@@ -312,9 +337,15 @@ def _phase_margin(
 
 
 def _gain_margin(
-    response: Response, grid: Real, value: Complex, *, finite_at_dc: bool
+    response: Response,
+    grid: Real,
+    value: Complex,
+    *,
+    finite_at_dc: bool,
+    finite_at_infinity: bool,
 ) -> float | None:
-    """20 log10 of the 1 / |L| nearest to 1 where L is negative and real, DC included [dB]."""
+    """20 log10 of the 1 / |L| nearest to 1 where L is negative and real [dB], DC included, and
+    the end of the grid where L tends to a number there."""
 
     def imaginary(f: float) -> float:
         return float(response(np.array([f]))[0].imag)
@@ -327,6 +358,9 @@ def _gain_margin(
     best = math.inf
     if finite_at_dc and value.real[0] < 0:
         best = math.log(abs(value.real[0]))
+    if finite_at_infinity and -value.real[-1] > abs(value.imag[-1]) / REAL:
+        end = math.log(abs(value.real[-1]))
+        best = min(best, end, key=abs)
     for place, rough in sorted(zip(k, size, strict=True), key=lambda pair: abs(pair[1])):
         if abs(rough) > abs(best) + 0.1:
             break

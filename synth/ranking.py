@@ -1,10 +1,10 @@
 """Every form carried through to standard values and boards, and the choice among them.
 
 Each form gets values, a run of boards, noise, swing and the op-amp it needs, all by the same
-limits, seed and effort.  Among the forms whose nominal board keeps every limit and whose yield
-is not clearly below the best one's (their intervals overlap) the one with the fewest op-amps
-is taken, then the one with the smallest 95th percentile of the error; each other one is told
-why it was not.
+limits, seed and effort.  Among the forms whose nominal board keeps every limit, whose yield keeps
+the job's limit on it, and whose yield is not clearly below the best one's (their intervals
+overlap) the one with the fewest op-amps is taken, then the one with the smallest 95th percentile
+of the error; each other one is told why it was not.
 """
 
 from __future__ import annotations
@@ -105,7 +105,7 @@ def rank_forms(
     possible = [one for one in found if one.sketch is not None]
     if not possible:
         raise refused([(one.candidate, one.unreadable) for one in found])
-    ordered = chosen_among([one.candidate for one in possible])
+    ordered = chosen_among([one.candidate for one in possible], least=job.accept.yield_share)
     others = [one.candidate for one in found if one.sketch is None]
     (sketch,) = (o.sketch for o in possible if o.candidate.form == ordered[0].form)
     assert sketch is not None
@@ -132,11 +132,8 @@ def _assess(job: Job, form: str, *, frequency_hz: Real, seed: int) -> Assessed:
             unreadable=error if isinstance(error, JobError) else None,
         )
     figures = _figures(job, sketch, allotted(choice.circuit), frequency_hz, seed)
-    least = job.accept.yield_share
-    short = least is not None and figures.share < least
-    candidate = replace(
-        sketch.candidate, figures=figures, verdict="fail" if figures.missed or short else "pass"
-    )
+    failed = figures.missed or _is_short(figures, job.accept.yield_share)
+    candidate = replace(sketch.candidate, figures=figures, verdict="fail" if failed else "pass")
     return Assessed(candidate=candidate, sketch=sketch)
 
 
@@ -204,15 +201,25 @@ def _missed(check: Check) -> str:
     return f"{check.name} {value}, limit {check.limit:.3g} {check.unit}"
 
 
-def chosen_among(candidates: Iterable[Candidate]) -> list[Candidate]:
+def chosen_among(candidates: Iterable[Candidate], *, least: float | None = None) -> list[Candidate]:
     """Forms with figures in their order: the one to take, then the others by the same rule,
-    each with the reason why it comes after; ties go to the earlier one."""
+    each with the reason why it comes after; ties go to the earlier one.
+
+    `least` is the smallest share of boards the job accepts, a ratio; None for no limit.
+    """
     waiting = list(candidates)
     sound = [c for c in waiting if not _of(c).missed]
-    best = max(sound or waiting, key=lambda c: (_of(c).share, -_of(c).error_95_db))
-    ordered = sorted(waiting, key=partial(_key, floor=_of(best).low))
+    kept = [c for c in sound if not _is_short(_of(c), least)]
+    best = max(kept or sound or waiting, key=lambda c: (_of(c).share, -_of(c).error_95_db))
+    ordered = sorted(waiting, key=partial(_key, floor=_of(best).low, least=least))
     first = ordered[0]
-    return [first, *(replace(c, reason=_reason(c, first, best)) for c in ordered[1:])]
+    rest = (replace(c, reason=_reason(c, first, best, least)) for c in ordered[1:])
+    return [first, *rest]
+
+
+def _is_short(figures: FormFigures, least: float | None) -> bool:
+    """Whether the yield misses the job's limit, by the share of the boards, as in the verdict."""
+    return least is not None and figures.share < least
 
 
 def _of(candidate: Candidate) -> FormFigures:
@@ -220,13 +227,15 @@ def _of(candidate: Candidate) -> FormFigures:
     return candidate.figures
 
 
-def _key(candidate: Candidate, *, floor: float) -> tuple[object, ...]:
-    """Sound before unsound, among the best yields before below them, then fewest op-amps, then
-    the smallest error; below the best yields by yield."""
+def _key(candidate: Candidate, *, floor: float, least: float | None) -> tuple[object, ...]:
+    """Sound before unsound, those that keep the limit on the yield before those that miss it,
+    among the best yields before below them, then fewest op-amps, then the smallest error; below
+    the best yields by yield."""
     figures = _of(candidate)
     below = figures.high < floor
     return (
         bool(figures.missed),
+        _is_short(figures, least),
         below,
         -figures.share if below else 0.0,
         candidate.op_amps,
@@ -239,12 +248,17 @@ def _shown(error_db: float) -> float:
     return float(f"{error_db:.3g}")
 
 
-def _reason(candidate: Candidate, first: Candidate, best: Candidate) -> str:
+def _reason(candidate: Candidate, first: Candidate, best: Candidate, least: float | None) -> str:
     """Why `candidate` comes after `first`."""
     figures, taken = _of(candidate), _of(first)
     if figures.missed and not taken.missed:
         more = f" and {len(figures.missed) - 1} more" if len(figures.missed) > 1 else ""
         return f"misses a limit with nominal parts: {figures.missed[0]}{more}"
+    if least is not None and _is_short(figures, least) and not _is_short(taken, least):
+        return (
+            f"yield {100 * figures.share:.1f} % misses the limit of {100 * least:.4g} %, which "
+            f"{first.form} keeps"
+        )
     if figures.high < _of(best).low:
         return (
             f"yield {show_share(figures.share)}, at most {show_share(figures.high)}, is below the "

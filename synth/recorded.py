@@ -33,8 +33,9 @@ class RecordedPart:
 class Earlier:
     """An earlier design, as much of it as is needed to make it again.
 
-    `boards` and `seed` are those of its tolerance run; `shortages` what it had to do without;
-    `name` is that of the record in messages.
+    `boards` and `seed` are those of its tolerance run, of which `passed` were within the limits,
+    None where that is not known; `shortages` what it had to do without; `name` is that of the
+    record in messages.
     """
 
     job: Job
@@ -44,6 +45,12 @@ class Earlier:
     seed: int
     shortages: tuple[Shortage, ...] = ()
     name: str = ""
+    passed: int | None = None
+
+    @property
+    def share(self) -> float | None:
+        """Share of its boards within the limits, a ratio; None where it is not known."""
+        return None if self.passed is None else self.passed / self.boards
 
 
 def paired(circuit: Circuit, parts: Sequence[RecordedPart]) -> Circuit:

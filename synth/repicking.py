@@ -40,7 +40,7 @@ from synth.nodal import compile_circuit
 from synth.recorded import Earlier, rebuilt, recorded_pairs
 from synth.request import Request, checked_request, limited
 from synth.results import Design, ToleranceResult
-from synth.shortages import Change, Repick
+from synth.shortages import Repick, changes_between
 from synth.tolerance import run_boards
 from synth.values import level_ratios, standard_values, thinned, wanted_of
 
@@ -105,22 +105,19 @@ def repick(earlier: Earlier, request: Request, *, progress: Progress | None = No
         seed=earlier.seed,
         progress=say,
     )
-    changes = tuple(
-        Change(ref=p.ref, kind=p.kind, before=p.value, after=new.value, sets=p.sets)
-        for p, new in zip(circuit.passives, choice.circuit.passives, strict=True)
-        if p.value != new.value
-    )
     changed = Repick(
         asked=request.shortages,
         earlier=earlier.shortages,
         bought=request.bought,
         all_free=request.all_free,
         missing=work.missing,
-        changes=changes,
+        changes=changes_between(circuit, choice.circuit),
         before=work.before,
         after=made.nominal,
+        share_before=earlier.share,
+        share_after=made.tolerance.share,
     )
-    notices = made.notices
+    notices = (*made.notices, *changed.notices)
     if job.board.pairs and not work.within_limits(choice.circuit):
         notices = (*notices, NO_NEW_PAIRS)
     return replace(made, job=earlier.job, repick=changed, notices=notices)

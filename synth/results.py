@@ -72,12 +72,16 @@ class Swing:
 class Drift:
     """An integrator whose capacitor no resistive path discharges at DC.
 
-    `rate` is Vos/(R C) + Ib/C [V/s], R the parallel value of its input resistors.
+    `rate` is how fast its output can move [V/s]: sum |dV| / (R C) + Ib/C over its input resistors
+    R, dV its own offset and what those of all op-amps before it leave at each R, of the worst
+    signs.  `behind` names the op-amps of further such integrators whose output reaches it; with
+    these it has no rate of its own, and `rate` is that while they are still at 0 V.
     """
 
     amplifier: str
     net: str
     rate: float
+    behind: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True, kw_only=True)

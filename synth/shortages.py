@@ -5,14 +5,19 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 
-from synth.circuit import Passive
+from synth.circuit import Circuit, Passive
 from synth.evidence import ResponseError
 from synth.quantities import show
 
-__all__ = ["Change", "Repick", "Shortage"]
+__all__ = ["Change", "Repick", "Shortage", "changes_between"]
 
 SAME_VALUE = 1e-9
 """Two values of a part are the same within this ratio; far below the step of any series."""
+
+
+FALL_TOLD = 0.01
+"""A yield that falls by more than this share of the boards is told: less is hardly more than two
+runs of some thousand boards differ by."""
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -72,6 +77,15 @@ class Change:
     sets: str = ""
 
 
+def changes_between(old: Circuit, new: Circuit) -> tuple[Change, ...]:
+    """The parts with another value in `new`, the same circuit, in circuit order."""
+    return tuple(
+        Change(ref=p.ref, kind=p.kind, before=p.value, after=q.value, sets=p.sets)
+        for p, q in zip(old.passives, new.passives, strict=True)
+        if p.value != q.value
+    )
+
+
 @dataclass(frozen=True, kw_only=True, eq=False)
 class Repick:
     """What a design without some values changed.
@@ -93,6 +107,9 @@ class Repick:
     before, after
         Error of the nominal circuit over the band, with the values of the earlier design and
         with those of this one.
+    share_before, share_after
+        Share of the boards within both limits, ratios: that of the earlier design as recorded,
+        None where it is not known, and that of this one, from as many boards with the same seed.
     """
 
     asked: tuple[Shortage, ...]
@@ -103,3 +120,14 @@ class Repick:
     changes: tuple[Change, ...]
     before: ResponseError
     after: ResponseError
+    share_before: float | None
+    share_after: float
+
+    @property
+    def notices(self) -> tuple[str, ...]:
+        """What is said of a yield that falls by more than `FALL_TOLD`, one sentence."""
+        if self.share_before is None or self.share_after > self.share_before - FALL_TOLD:
+            return ()
+        shares = (self.share_before, self.share_after)
+        before, after = (f"{100 * share:.4g} %" for share in shares)
+        return (f"the yield falls from {before} of the boards to {after}",)

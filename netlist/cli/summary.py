@@ -128,7 +128,7 @@ def _repicked(design: Design) -> list[str]:
         "",
         *_table(("changed", "from", "to", "by", "sets"), rows),
         "",
-        *_table(("nominal error", "before", "after"), errors),
+        *_table(("over the band", "before", "after"), errors),
         *_proof(design),
     ]
 

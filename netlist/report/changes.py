@@ -30,16 +30,20 @@ def change_rows(found: Repick) -> list[Row]:
 
 
 def change_errors(found: Repick) -> list[Row]:
-    """The nominal error before and after, as this program computes it."""
+    """Nominal error and yield before and after, as this program computes them."""
     both = (found.before, found.after)
 
     def row(name: str, texts: list[str]) -> Row:
         return {"name": name, "before": texts[0], "after": texts[1]}
 
     return [
-        row("rms of |ln(H/T)|", [percent(e.rms, 3) for e in both]),
-        row("largest, dB", [decibel(e.largest_db) for e in both]),
-        row("largest, deg", [decibel(e.largest_deg) for e in both]),
+        row("nominal rms of |ln(H/T)|", [percent(e.rms, 3) for e in both]),
+        row("nominal largest, dB", [decibel(e.largest_db) for e in both]),
+        row("nominal largest, deg", [decibel(e.largest_deg) for e in both]),
+        row(
+            "yield, boards within limits",
+            [NONE if s is None else percent(s, 4) for s in (found.share_before, found.share_after)],
+        ),
     ]
 
 

@@ -232,7 +232,15 @@ def largest_noise(design: Design, count: int = 8) -> list[Row]:
 def drift_rows(drifts: Iterable[Drift]) -> list[Row]:
     """Integrators without DC feedback and how fast they run away on their own."""
     return [
-        {"amplifier": d.amplifier, "net": d.net, "rate": quantity(d.rate, "V/s")} for d in drifts
+        {
+            "amplifier": d.amplifier,
+            "net": d.net,
+            "rate": quantity(d.rate, "V/s"),
+            "behind": f"with {', '.join(d.behind)} at 0 V; ever faster as it drifts"
+            if d.behind
+            else "",
+        }
+        for d in drifts
     ]
 
 

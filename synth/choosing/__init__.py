@@ -6,7 +6,16 @@ rounded to its nearest neighbour, to compare with.  Called by `synth.design` onl
 """
 
 from synth.choosing.choose import DEFAULT_EFFORT, Choice, choose_values, with_ideal_op_amps
+from synth.choosing.model import Level
 from synth.choosing.refine import refine
 from synth.choosing.task import Task
 
-__all__ = ["DEFAULT_EFFORT", "Choice", "Task", "choose_values", "refine", "with_ideal_op_amps"]
+__all__ = [
+    "DEFAULT_EFFORT",
+    "Choice",
+    "Level",
+    "Task",
+    "choose_values",
+    "refine",
+    "with_ideal_op_amps",
+]

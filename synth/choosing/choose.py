@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -10,7 +11,7 @@ from numpy.typing import NDArray
 from synth.choosing.certificate import Certificate
 from synth.choosing.enumeration import best_of_all
 from synth.choosing.grid import ValueGrid
-from synth.choosing.model import Ceilings, Goal, LinearModel, compensation
+from synth.choosing.model import Ceilings, Goal, Level, LinearModel, compensation
 from synth.choosing.search import SearchOutcome, search_values
 from synth.choosing.settling import Problem, settle
 from synth.choosing.supply import Supply, check_supply
@@ -77,7 +78,7 @@ def choose_values(
     target: Complex,
     frequency_hz: Real,
     accept: Accept | None = None,
-    level_limits: dict[str, tuple[float, float]] | None = None,
+    level_limits: Mapping[str, Level] | None = None,
     known: Circuit | None = None,
     seed: int = 1,
     effort: int = DEFAULT_EFFORT,
@@ -95,8 +96,7 @@ def choose_values(
     accept
         Limits that weight magnitude against phase; None weights them alike.
     level_limits
-        By op-amp output net: the frequency of its peak [Hz], and the ratio by which the peak
-        may still rise.
+        By op-amp output net: how far it may rise.
     known
         The same parts with values from the series, to be improved on: the choice is never
         worse than these, as long as they keep the level limits.
@@ -130,6 +130,10 @@ def choose_values(
     if not np.isfinite(problem.judged(outcome.index[None])[0]):
         # Nothing was found between ceilings and floors: the rails come first.
         problem = problem.eased(everything)
+        outcome = _searched(problem, logs, start, seed, effort)
+    if not np.isfinite(problem.judged(outcome.index[None])[0]):
+        # Values do not undo what the op-amps do to the levels: that is for the swing check to say.
+        problem = problem.raised(np.exp(logs))
         outcome = _searched(problem, logs, start, seed, effort)
     best, certificate, more = settle(
         problem,

@@ -9,6 +9,7 @@ A singular value decomposition keeps the few directions that matter.
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -18,7 +19,15 @@ from synth.evidence import DB_PER_NEPER
 from synth.job import Accept
 from synth.nodal import NodalProgram
 
-__all__ = ["Ceilings", "Goal", "LevelLimits", "LinearModel", "compensation"]
+__all__ = [
+    "AROUND_PEAK",
+    "Ceilings",
+    "Goal",
+    "Level",
+    "LevelLimits",
+    "LinearModel",
+    "compensation",
+]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -162,6 +171,27 @@ WATCHED_BETWEEN = 40
 BEYOND_PEAKS = 10.0
 
 
+@dataclass(frozen=True)
+class Level:
+    """How large the gain from the input to an op-amp output may become.
+
+    Parameters
+    ----------
+    peak_hz
+        Frequency of its peak [Hz].
+    may_rise
+        By what ratio it may rise, or must fall where that is below 1.
+    gain
+        From where: the largest that it is meant to be at `AROUND_PEAK` times `peak_hz`, a ratio.
+        What the op-amps make of ideal values may be above that, and does not count.  None: what it
+        is with the ideal values.
+    """
+
+    peak_hz: float
+    may_rise: float
+    gain: float | None = None
+
+
 @dataclass(frozen=True, eq=False)
 class Ceilings:
     """Between which bounds the gain to each op-amp output stays, at the frequency of its peak.
@@ -176,22 +206,32 @@ class Ceilings:
 
     @classmethod
     def of(
-        cls, program: NodalProgram, values: Real, levels: dict[str, tuple[float, float]]
+        cls, program: NodalProgram, values: Real, levels: Mapping[str, Level]
     ) -> Ceilings | None:
-        """From the peak's frequency and the ratio by which each may rise above what it is with
-        `values` (P,), or must fall where that is below 1.  None may fall
-        below `LOWEST_FALL` of what it is, or of its ceiling where that is lower, unless it hangs on
-        a small difference."""
+        """From what each output may do, `values` (P,) being the ideal ones.  None may fall below
+        `LOWEST_FALL` of what it is, or of its ceiling where that is lower, unless it hangs on a
+        small difference."""
         if not levels:
             return None
-        peak_hz, ratios = (np.array(column) for column in zip(*levels.values(), strict=True))
+        peak_hz = np.array([level.peak_hz for level in levels.values()])
+        ratios = np.array([level.may_rise for level in levels.values()])
         # One that may not rise at all keeps the room that the choice of values takes by itself.
         roomy = np.maximum(ratios * (1 - PEAK_MARGIN), 1 + PEAK_MARGIN)
         ratios = np.where(ratios >= 1, roomy, ratios)
         found = cls(tuple(levels), peak_hz, ratios, LOWEST_FALL * np.minimum(ratios, 1.0))
         gains = found._gains(program, values[None, :])[0]
         firm = np.max(np.abs(found._slopes(program, values)), axis=1) <= FIRM_SLOPE
-        return replace(found, highest=found.highest * gains, lowest=firm * found.lowest * gains)
+        # Outputs are watched elsewhere too, where an integrator is larger: both by the same ratio.
+        near = found._near_peaks(program, values)
+        meant = np.array([np.nan if m.gain is None else m.gain for m in levels.values()])
+        base = gains * np.where(np.isnan(meant), 1.0, meant / near)
+        lowest = firm * found.lowest * np.minimum(gains, base)
+        return replace(found, highest=found.highest * base, lowest=lowest)
+
+    def raised(self, program: NodalProgram, values: Real) -> Ceilings:
+        """The same, but that no output must be below what it is with `values` (P,)."""
+        gains = self._gains(program, values[None, :])[0]
+        return replace(self, highest=np.maximum(self.highest, gains * (1 + PEAK_MARGIN)))
 
     def without_floors(self) -> Ceilings:
         """The same ceilings, with every level free to fall."""
@@ -205,6 +245,12 @@ class Ceilings:
                 for net, peak_hz in zip(self.nets, self.peak_hz, strict=True)
             ]
         )
+
+    def _near_peaks(self, program: NodalProgram, values: Real) -> Real:
+        """Largest gain to each output around its own peak at `values` (P,), shape (U,)."""
+        around = np.multiply.outer(AROUND_PEAK, self.peak_hz)
+        gains = np.abs(program.solve(around.ravel(), values=values, nets=self.nets))
+        return np.asarray(np.diagonal(gains.reshape(*around.shape, -1).max(axis=0)))
 
     def _gains(self, program: NodalProgram, values: Real) -> Real:
         """Largest gain to each output around the peaks of all and at a few frequencies between

@@ -78,6 +78,12 @@ class Problem:
         ceilings = None if self.ceilings is None else self.ceilings.without_floors()
         return replace(self, grid=grid, ceilings=ceilings, supply=Supply.of(grid))
 
+    def raised(self, values: Real) -> Problem:
+        """The same with no level bound to be below what it is with `values` (P,)."""
+        if self.ceilings is None:
+            return self
+        return replace(self, ceilings=self.ceilings.raised(self.program, values))
+
     def model(self, values: Real) -> LinearModel:
         """The response about `values` (P,), the matrix with ideal op-amps."""
         return LinearModel.about(self.program, values, self.goal, jacobian=self.ideal)

@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from synth.choosing.choose import DEFAULT_EFFORT, Choice, choose_values
 from synth.choosing.grid import ValueGrid
-from synth.choosing.model import Ceilings, Goal
+from synth.choosing.model import Ceilings, Goal, Level
 from synth.circuit import Circuit
 from synth.evidence import DB_PER_NEPER, response_error
 from synth.job import Accept
@@ -42,8 +42,7 @@ class Task:
     accept
         The limits of the response.
     level_limits
-        By op-amp output net: the frequency of its peak [Hz], and the ratio by which the peak
-        may still rise.
+        By op-amp output net: how far it may rise.
     seed, effort
         As of `choose_values`.
     """
@@ -52,7 +51,7 @@ class Task:
     target: Complex
     frequency_hz: Real
     accept: Accept
-    level_limits: Mapping[str, tuple[float, float]] = field(default_factory=dict)
+    level_limits: Mapping[str, Level] = field(default_factory=dict)
     seed: int = 1
     effort: int = DEFAULT_EFFORT
 
@@ -63,7 +62,7 @@ class Task:
             target=self.target,
             frequency_hz=self.frequency_hz,
             accept=self.accept,
-            level_limits=dict(self.level_limits),
+            level_limits=self.level_limits,
             known=known,
             seed=self.seed,
             effort=self.effort,
@@ -92,7 +91,7 @@ class Task:
     def ceilings(self) -> Ceilings | None:
         """How large the op-amp outputs may be."""
         ideal = np.array([p.ideal for p in self.circuit.passives])
-        return Ceilings.of(self.program, ideal, dict(self.level_limits))
+        return Ceilings.of(self.program, ideal, self.level_limits)
 
     @property
     def limit_rms(self) -> float:

@@ -417,6 +417,11 @@ ONE_LINE = [
         {"loop": "[loop]\nnumerator = [1]\ndenominator = [1, 1]\ndelay = '-1 us'"},
         ":10: loop.delay: got '-1 us' with a sign, expected a time such as '50 us'",
     ),
+    (
+        {"loop": "[loop]\nnumerator = [1, 2, 3]\ndenominator = [1, 100]"},
+        ":8: loop.numerator: got 2 zeros and 1 pole, expected a plant with no more zeros than "
+        "poles",
+    ),
     # the target
     (
         {"target": "[target]"},

@@ -20,6 +20,8 @@ from synth.errors import (
     SimulationTimeoutError,
     SimulatorMissingError,
 )
+from synth.grid import judging_frequencies, sweeps
+from synth.transfer import Factor, TransferFunction
 from tests.circuits import figures, integrator, rc, tow_thomas
 
 SWEEP = {"start_hz": 10.0, "stop_hz": 1e6, "points_per_decade": 20}
@@ -36,6 +38,22 @@ def test_the_response_is_complex_and_exact(simulator):
     found = simulator.ac(RC, ["in", "out"])
     np.testing.assert_allclose(found.voltages["out"], rc_response(found.frequency_hz), rtol=1e-12)
     np.testing.assert_array_equal(found.voltages["in"], 1.0)
+
+
+def test_sweeps_about_a_sharp_pair_join_to_the_grid_on_which_errors_are_taken(simulator):
+    """To the last bit, nothing beyond the end of a fine sweep, and the same for altered values."""
+    target = TransferFunction.from_factors(1e4, [], [Factor.pair(2 * np.pi * 1e3, 3000.0)])
+    whole, *further = sweeps(target, (10.0, 1e4))
+    assert len(further) == 2
+    deck = board_deck(
+        rc(), title="t", start_hz=10.0, stop_hz=1e4, points_per_decade=whole.points_per_decade,
+        further=further,
+    )  # fmt: skip
+    found = simulator.ac(deck, ["out"])
+    np.testing.assert_array_equal(found.frequency_hz, judging_frequencies(target, (10.0, 1e4)))
+    np.testing.assert_allclose(found.voltages["out"], rc_response(found.frequency_hz), rtol=1e-12)
+    (altered,) = simulator.alter_ac(deck, [{"R1": 20e3}], "out")
+    np.testing.assert_allclose(altered, rc_response(2 * found.frequency_hz), rtol=1e-12)
 
 
 def test_the_operating_point_of_a_biased_circuit(simulator):

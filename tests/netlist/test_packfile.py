@@ -84,6 +84,8 @@ def test_what_was_out_of_stock_is_read_back_with_what_was_so_before(written) -> 
         changes=(Change(ref="C1", kind="capacitor", before=1e-8, after=1.2e-8),),
         before=error,
         after=error,
+        share_before=0.98,
+        share_after=0.91,
     )
     record = record_of(made(repick=repick))
     assert record["repick"]["changed"][0]["after"] == 1.2e-8
@@ -243,6 +245,8 @@ def test_any_damage_is_one_message_with_file_and_key_or_makes_no_difference(writ
         changes=(),
         before=error,
         after=error,
+        share_before=0.98,
+        share_after=0.91,
     )
     design = made(repick=repick)
     record = record_of(design)

@@ -5,6 +5,7 @@ from __future__ import annotations
 import ctypes.util
 import json
 import os
+import re
 import subprocess
 import sys
 from pathlib import Path
@@ -73,7 +74,8 @@ def test_a_pack_without_a_value_is_verified_and_says_what_changed(packed) -> Non
     value = values(old)["R2"]
     done = polewright(packed, "repick", "smooth", "--without", f"R2={value:g}")
     assert done.returncode == 0, done.stderr
-    assert "changed" in done.stdout and "nominal error" in done.stdout
+    assert "changed" in done.stdout and "over the band" in done.stdout
+    told = next(line for line in done.stdout.splitlines() if "yield, boards" in line)
     assert contents(packed / "smooth") == before
     new = record(packed / "smooth-repick")
     assert new["verdict"] == "pass"
@@ -85,6 +87,9 @@ def test_a_pack_without_a_value_is_verified_and_says_what_changed(packed) -> Non
     }
     errors = [new["repick"][k]["rms_error"] for k in ("before", "after")]
     assert errors == pytest.approx([d["nominal"]["rms_error"] for d in (old, new)], rel=1e-9)
+    shares = [new["repick"][k]["yield"] for k in ("before", "after")]
+    assert shares == [d["yield"]["passed"] / d["yield"]["boards"] for d in (old, new)]
+    assert re.findall(r"[0-9.]+ %", told) == [f"{100 * s:#.4g} %" for s in shares]
     assert new["job"] == old["job"]
     page = (packed / "smooth-repick" / "report.html").read_text(encoding="utf-8")
     assert 'id="changed"' in page and "polewright repick PACK --without" in page

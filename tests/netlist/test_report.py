@@ -17,7 +17,7 @@ from netlist.report.wording import decibel, number, quantity, share, stated
 from synth.evidence import Check
 from synth.job import Loop
 from synth.loop import LoopBoards, Percentiles, loop_margins
-from synth.results import LoopResult
+from synth.results import Drift, LoopResult
 from synth.transfer import TransferFunction
 from tests.netlist import boards
 
@@ -202,6 +202,16 @@ def test_what_was_not_measured_is_a_dash_not_a_crash():
         lines=(),
     )
     assert "none drifts to a rail by itself" in text
+
+
+def test_the_drift_of_an_integrator_behind_another_is_told_with_its_condition():
+    one = Drift(amplifier="U1", net="x1", rate=16.2)
+    two = Drift(amplifier="U2", net="out", rate=250.0, behind=("U1",))
+    made = replace(boards.design(), drifts=(one, two))
+    checked = boards.verification(made)
+    text = Page(report_page(made, checked, drawings=boards.drawings(), lines=())).text
+    assert "offset and bias current of the integrator itself, Vos/(RC) + Ib/C" in text
+    assert "U1 x1 16.2 V/s U2 out 250 V/s with U1 at 0 V; ever faster as it drifts" in text
 
 
 def test_an_operating_point_at_ground_is_one_sentence_and_another_is_listed():

@@ -8,12 +8,14 @@ import numpy as np
 import pytest
 
 from synth.allowance import op_amp_allowance
+from synth.candidates import sketch_form
 from synth.choosing import with_ideal_op_amps
 from synth.design import design
 from synth.errors import JobError
 from synth.evidence import response_error
 from synth.nodal import compile_circuit
 from synth.results import ErrorFigures
+from synth.values import ValueSearch, wanted_of
 from tests.circuits import figures, tow_thomas
 from tests.jobs import job_for
 from tests.strategies import butterworth
@@ -81,6 +83,27 @@ def test_the_choice_is_no_worse_than_the_one_without_allowance() -> None:
     job = job_for(butterworth(2, 1e3), BAND, form="cascade")
     found = design(job, boards=50).allowance
     assert found.with_allowance.rms <= found.without_allowance.rms * 1.01
+
+
+@pytest.mark.parametrize(("form", "seed"), [("cascade", 1), ("cascade", 2), ("tow_thomas", 1)])
+def test_more_effort_than_usual_begins_with_what_the_usual_finds(form, seed, monkeypatch) -> None:
+    """And is never worse, nor is a little more; the usual effort is a hundredth here."""
+    usual = 1_000_000
+    monkeypatch.setattr("synth.values.DEFAULT_EFFORT", usual)
+    target = butterworth(4, 1e3)
+    job = job_for(target, BAND, form=form)
+    frequency = np.geomspace(*BAND, 60)
+    sketch = sketch_form(job, form, frequency)
+    response = wanted_of(sketch, job).response(frequency)
+
+    def error(effort: int) -> float:
+        search = ValueSearch(sketch, job, response, frequency, seed, effort)
+        choice, _ = search.both(lambda stage, done, total: None)
+        return float(choice.certificate.rms)
+
+    one = error(usual)
+    assert error(3 * usual) <= one * (1 + 1e-12)
+    assert error(usual + 10) <= one * (1 + 1e-12)
 
 
 def test_more_effort_is_never_worse_here_and_none_is_refused() -> None:

@@ -10,6 +10,7 @@ import numpy as np
 import pytest
 
 from synth.candidates import sketch_form
+from synth.choosing.model import Ceilings
 from synth.design import compare_forms, design
 from synth.errors import JobError, RealizationError
 from synth.evidence import response_error
@@ -19,7 +20,7 @@ from synth.nodal import compile_circuit
 from synth.quantities import show
 from synth.readback import block_names, graph_of
 from synth.transfer import Factor, TransferFunction
-from synth.values import level_limits
+from synth.values import ValueSearch, level_limits
 from tests.jobs import capacitor_rule, job_for
 from tests.strategies import butterworth
 
@@ -88,8 +89,8 @@ def test_every_output_is_watched_where_its_op_amp_shows_the_peak() -> None:
     peaks = {s.net: s.peak for s in swings(sketch.circuit, job.target, job)}
     watched = level_limits(sketch, job)
     assert {"y1", "y1_n"} < set(watched)
-    for net, (frequency, _) in watched.items():
-        shown = job.signal.input_peak * abs(program.solve([frequency], nets=[net])[0, 0])
+    for net, level in watched.items():
+        shown = job.signal.input_peak * abs(program.solve([level.peak_hz], nets=[net])[0, 0])
         assert shown == pytest.approx(peaks[net], rel=0.02)
 
 
@@ -100,6 +101,44 @@ def test_an_input_above_the_rails_is_inverted_below_them(seed: int) -> None:
     found = design(job_for(target, BAND, input_peak=20.0), boards=10, effort=0.1, seed=seed)
     assert [s.net for s in found.swings] == ["in_n", "out"]
     assert all(s.peak <= s.peak_limit for s in found.swings)
+
+
+def test_levels_end_at_the_rails_whatever_slow_op_amps_make_of_ideal_values() -> None:
+    """At Q = 5 and 3 kHz op-amps of 500 kHz raise the peaks of ideal values by an eighth; values
+    that make up for that take it away again, and an inverter whose gain is free keeps below its
+    rail all the same."""
+    w = 2 * math.pi * 3e3
+    target = TransferFunction.from_factors(2 * w * w, [], [Factor.pair(w, 5)])
+    slow = {"gain_bandwidth": 500e3}
+    job = job_for(target, (30.0, 9e3), form="tow_thomas", input_peak=0.5, op_amp_figures=slow)
+    frequency = np.geomspace(30.0, 9e3, 200)
+    sketch = sketch_form(job, "tow_thomas", frequency)
+    search = ValueSearch(sketch, job, target.response(frequency), frequency, 1, 10_000_000)
+    task = search.task(sketch.circuit)
+    assert task.ceilings is not None
+    volts = job.signal.input_peak * task.ceilings.highest
+    assert np.all(volts <= job.board.swing_limit)
+    assert np.all(volts > 0.95 * job.board.swing_limit)
+    found = swings(task.choose().circuit, target, job)
+    assert all(s.peak <= s.peak_limit for s in found)
+
+
+@pytest.mark.parametrize("target", [PI, butterworth(4, 1e3)])
+def test_with_ideal_op_amps_levels_are_what_the_values_make_them(target) -> None:
+    """Where H(s) says how large an output is, and where the ideal values do: the same ceilings,
+    those of integrators that are larger below the band too."""
+    ideal = {"gain_bandwidth": 1e13, "open_loop_gain": 1e12, "slew_rate": 1e12}
+    job = job_for(target, BAND, form="cascade", input_peak=0.1, op_amp_figures=ideal)
+    sketch = sketch_form(job, "cascade", np.geomspace(*BAND, 100))
+    program, values = compile_circuit(sketch.circuit), [p.ideal for p in sketch.circuit.passives]
+    levels = level_limits(sketch, job)
+    assert any(level.gain for level in levels.values())
+    plain = {net: replace(level, gain=None) for net, level in levels.items()}
+    one, other = (Ceilings.of(program, np.array(values), each) for each in (levels, plain))
+    assert one is not None
+    assert other is not None
+    np.testing.assert_allclose(one.highest, other.highest, rtol=1e-6)
+    np.testing.assert_allclose(one.lowest, other.lowest, rtol=1e-6)
 
 
 def test_pole_at_the_origin_is_allowed_flagged_and_measured_from_the_band() -> None:

@@ -6,7 +6,8 @@ import numpy as np
 import pytest
 
 from synth.errors import JobError
-from synth.grid import band_grid, judged, points_per_decade
+from synth.evidence import response_error
+from synth.grid import band_grid, judged, judging_frequencies, points_per_decade, sweeps
 from synth.transfer import Factor, TransferFunction
 
 
@@ -76,3 +77,59 @@ def test_only_points_on_a_zero_on_the_axis_are_left_out():
     keep = judged(notch, [99.0, 99.9999, 100.0, 100.0001])
     assert keep.tolist() == [True, True, False, True]
     assert judged(low_pass(0.6, 5.0), [3000.0 / (2 * math.pi)]).all()
+
+
+BAND = (20.0, 5e3)
+
+
+def shifted(q: float, notch: bool, *, by: float, q_by: float = 1.0):
+    """A sharp resonance, or notch, whose board has it elsewhere."""
+
+    def one(w: float, sharp: float) -> TransferFunction:
+        pairs = [Factor.pair(w, sharp)], [Factor.pair(2000.0, 0.7)]
+        zeros, poles = pairs if notch else ([], pairs[0])
+        return TransferFunction.from_factors(1.0 if notch else w * w, zeros, poles)
+
+    return one(2000.0, q), one(2000.0 * (1 + by), q * q_by)
+
+
+@pytest.mark.parametrize("notch", [False, True])
+@pytest.mark.parametrize("q", [20.0, 107.0, 110.0, 300.0, 1000.0])
+@pytest.mark.parametrize(("by", "widths"), [(0.2, True), (-1.0, True), (0.0, True), (-0.02, False)])
+def test_the_grid_sees_the_largest_error_of_a_board_beside_its_target(q, notch, by, widths):
+    """A resonance or notch that a board has elsewhere, by some of its width or by 2 %, or of
+    another sharpness: no frequency of a dense sweep has an error above the largest of the grid by
+    more than 2 %, and 1 % where the grid has points of its own there."""
+    shift = by / q if widths else by
+    target, board = shifted(q, notch, by=shift, q_by=1.1 if by == 0 else 1.0)
+    f0 = 2000.0 / (2 * math.pi)
+    dense = f0 * (1 + np.linspace(-0.04, 0.04, 400_001))
+
+    def largest(f):
+        error = response_error(board.response(f), target.response(f))
+        return np.array([error.largest_db, error.largest_deg])
+
+    found = largest(judging_frequencies(target, BAND))
+    assert np.all(largest(dense) <= found * (1.01 if q > 108 else 1.02))
+
+
+@pytest.mark.parametrize("q", [0.7, 10.0, 100.0, math.inf])
+def test_one_sweep_is_enough_up_to_a_quality_of_a_hundred(q):
+    (one,) = sweeps(low_pass(q), BAND)
+    assert one.points_per_decade == points_per_decade(low_pass(q), band_hz=BAND)
+    np.testing.assert_array_equal(one.frequencies, judging_frequencies(low_pass(q), BAND))
+
+
+@pytest.mark.parametrize("q", [200.0, 1e4, 1e8])
+def test_the_sweeps_about_a_sharp_pair_are_few_points_and_stay_in_the_band(q):
+    target = low_pass(q)
+    whole, *further = sweeps(target, BAND)
+    assert 1 <= len(further) <= 3
+    assert sum(s.frequencies.size for s in further) < 2100
+    grid = judging_frequencies(target, BAND)
+    assert np.all(np.diff(grid) > 0)
+    np.testing.assert_array_equal(np.isin(whole.frequencies, grid), True)
+    f0 = 2000.0 / (2 * math.pi)
+    cut = judging_frequencies(target, (20.0, f0 * 1.001))
+    assert cut[-1] == pytest.approx(f0 * 1.001, rel=1e-12)
+    assert sweeps(target, (1e3, 5e3)) == sweeps(target, (1e3, 5e3))[:1]

@@ -8,6 +8,7 @@ import math
 import numpy as np
 import pytest
 
+from netlist.ngspice import Simulator
 from synth.candidates import sketch_form
 from synth.circuit import Circuit
 from synth.forms import FORMS
@@ -79,26 +80,115 @@ def test_peaks_and_rates_are_those_of_a_dense_sweep(form: str) -> None:
         assert swing.slew == pytest.approx(rate, rel=2e-3)
 
 
+def drifting(form: str, times: int, **figures: float) -> Circuit | None:
+    """A pair behind one or two poles at the origin; None where the form does not exist."""
+    zeros = [Factor.real(-0.2 * W0)] * times
+    poles = [Factor.real(0)] * times + [Factor.pair(W0, 1.5)]
+    target = TransferFunction.from_factors(W0**2, zeros, poles)
+    if not exists(form, target):
+        return None
+    return built(job_for(target, BAND, input_peak=1e-2, op_amp_figures=figures), form)
+
+
+def conductance_over_capacitance(circuit: Circuit, amplifier: str) -> float:
+    """sum(1/R) / C of an integrator [1/s]."""
+    cell = circuit.cell_of(amplifier)
+    assert cell is not None
+    conductance = sum(1 / circuit.by_ref[r].value for r in cell.inputs)
+    return conductance / circuit.by_ref[cell.feedback].value
+
+
 @pytest.mark.parametrize("form", FORMS)
 def test_only_integrators_without_feedback_at_dc_drift(form: str) -> None:
-    """One for every pole at the origin, whatever loops the others stand in, at
-    Vos sum(1/R)/C + Ib/C; a low-pass has none."""
+    """One for every pole at the origin, whatever loops the others stand in, at no less than its
+    own Vos sum(1/R)/C + Ib/C; a low-pass has none."""
     assert drifts(built(job_for(butterworth(3, 1e3), BAND), form)) == ()
     for times in (1, 2):
-        zeros = [Factor.real(-0.2 * W0)] * times
-        poles = [Factor.real(0)] * times + [Factor.pair(W0, 1.5)]
-        target = TransferFunction.from_factors(W0**2, zeros, poles)
-        if not exists(form, target):
+        circuit = drifting(form, times)
+        if circuit is None:
             continue
-        circuit = built(job_for(target, BAND, input_peak=1e-2), form)
         found = drifts(circuit)
         assert len(found) == times
         for drift in found:
             cell = circuit.cell_of(drift.amplifier)
             assert cell is not None
-            conductance = sum(1 / circuit.by_ref[r].value for r in cell.inputs)
-            capacitor = circuit.by_ref[cell.feedback].value
-            assert drift.rate == pytest.approx(1e-3 * conductance / capacitor + 1e-7 / capacitor)
+            own = 1e-3 * conductance_over_capacitance(circuit, drift.amplifier)
+            own += 1e-7 / circuit.by_ref[cell.feedback].value
+            assert drift.rate >= own * (1 - 1e-6)
+        assert sum(len(d.behind) for d in found) <= times - 1
+
+
+@pytest.mark.parametrize("form", FORMS)
+def test_drift_is_what_the_largest_dc_offset_of_the_output_says(form: str) -> None:
+    """With finite gain A0 a bare integrator stands where the current into its capacitor is
+    output / A0 sum(1/R): the DC analysis of the whole circuit gives the rate a second time."""
+    gain = 3e5
+    circuit = drifting(form, 1, open_loop_gain=gain)
+    if circuit is None:
+        return
+    (drift,) = drifts(circuit)
+    offsets = compile_circuit(circuit).dc_offsets()
+    worst = offsets.worst[offsets.nets.index(drift.net)]
+    rate = worst / gain * conductance_over_capacitance(circuit, drift.amplifier)
+    assert drift.rate == pytest.approx(rate, rel=1e-6)
+    assert drift.behind == ()
+
+
+def offset_deck(
+    circuit: Circuit,
+    ref: str,
+    *,
+    volts: float = 0.0,
+    minus_amperes: float = 0.0,
+    plus_amperes: float = 0.0,
+) -> str:
+    """The circuit at rest with one op-amp that has an offset or a bias current."""
+    lines = ["* offsets", "Vin in 0 DC 0"]
+    lines += [f"{p.ref} {p.nets[0]} {p.nets[1]} {p.value!r}" for p in circuit.passives]
+    for a in circuit.amplifiers:
+        on = float(a.ref == ref)
+        lines.append(f"V{a.ref} p{a.ref} {a.plus} DC {on * volts!r}")
+        lines.append(f"E{a.ref} {a.output} 0 p{a.ref} {a.minus} 1e7")
+        lines.append(f"IM{a.ref} {a.minus} 0 DC {on * minus_amperes!r}")
+        lines.append(f"IP{a.ref} {a.plus} 0 DC {on * plus_amperes!r}")
+    return "\n".join([*lines, ".tran 1e-4 0.06 0 1e-4 uic", ".end", ""])
+
+
+@pytest.mark.parametrize("form", ["cascade", "observable", "khn"])
+def test_drift_is_the_sum_of_what_ngspice_finds_of_each_op_amp(form: str) -> None:
+    """Each offset and each bias current alone, the slope after everything else has settled; each
+    has its sign along all of its paths, and the worst signs add."""
+    circuit = drifting(form, 1, open_loop_gain=1e7, bias_current=1e-6)
+    assert circuit is not None
+    (drift,) = drifts(circuit)
+    slopes = []
+    with Simulator() as simulator:
+        for a in circuit.amplifiers:
+            inputs = {"volts": 1e-3}, {"minus_amperes": 1e-6}, {"plus_amperes": 1e-6}
+            for one in inputs:
+                deck = offset_deck(circuit, a.ref, **one)
+                found = simulator.transient(deck, [drift.net])
+                at = np.interp([0.04, 0.06], found.time_s, found.voltages[drift.net])
+                slopes.append(abs(float(at[1] - at[0])) / 0.02)
+    assert drift.rate == pytest.approx(sum(slopes), rel=1e-3)
+    own = 1e-3 * conductance_over_capacitance(circuit, drift.amplifier)
+    assert drift.rate > 10 * own
+
+
+def test_an_integrator_behind_another_has_no_rate_of_its_own() -> None:
+    """1/s^2: the second follows the first; its rate is told for the first at 0 V."""
+    target = TransferFunction.from_factors(1e6, [], [Factor.real(0)] * 2)
+    circuit = built(job_for(target, BAND, input_peak=1e-2), "cascade")
+    first, second = drifts(circuit)
+    assert first.behind == ()
+    assert second.behind == (first.amplifier,)
+    for drift in (first, second):
+        cell = circuit.cell_of(drift.amplifier)
+        assert cell is not None
+        capacitor = circuit.by_ref[cell.feedback].value
+        own = 1e-3 * conductance_over_capacitance(circuit, drift.amplifier) + 1e-7 / capacitor
+        if len(circuit.amplifiers) == 2:
+            assert drift.rate == pytest.approx(own, rel=1e-6)
 
 
 def test_an_inverter_in_front_loads_the_source_too() -> None:

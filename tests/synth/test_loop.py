@@ -11,8 +11,9 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from synth.errors import JobError
 from synth.job import Loop
-from synth.loop import loop_checks, loop_margins
+from synth.loop import checked_loop, loop_checks, loop_margins
 from synth.transfer import Factor, TransferFunction
 from tests.strategies import random_target
 
@@ -112,6 +113,54 @@ def test_nyquist_count_is_that_of_the_closed_loop_roots(
         return
     found = loop_margins(Loop(plant=plant), ONE)
     assert found.unstable_poles == int(np.sum(roots.real > 0))
+
+
+@settings(deadline=None, derandomize=True, max_examples=40)
+@given(
+    st.integers(0, 2**32 - 1),
+    st.sampled_from([-0.95, -0.4, 0.1, 0.95]),
+    st.sampled_from([0.02, 1.0, 30.0]),
+)
+def test_the_count_is_right_for_loops_that_do_not_end_at_zero(
+    seed: int, end: float, plant_gain: float
+) -> None:
+    """A plant and a compensator with as many zeros as poles, P H of any sign below 1 at high
+    frequencies and of any size elsewhere: the roots of num + den in the right half-plane."""
+    rng = np.random.default_rng(seed)
+    zeros, poles = (-(10 ** rng.uniform(-1, 2, size=4)) for _ in range(2))
+    zeros *= rng.choice([-1, 1], size=4, p=[0.3, 0.7])
+    gains = (plant_gain, end / plant_gain)
+    plant, target = (
+        TransferFunction.from_factors(
+            gain, [Factor.real(z) for z in zeros[part]], [Factor.real(p) for p in poles[part]]
+        )
+        for gain, part in zip(gains, (slice(2), slice(2, 4)), strict=True)
+    )
+    num = float(plant.gain * target.gain) * np.poly(zeros)
+    roots = np.roots(np.polyadd(num, np.poly(poles)))
+    if np.min(np.abs(roots.real) / np.abs(roots)) < 1e-3:
+        return
+    found = loop_margins(Loop(plant=plant), target)
+    assert found.unstable_poles == int(np.sum(roots.real > 0))
+
+
+@pytest.mark.parametrize("end", [-0.5, -0.8])
+def test_where_a_negative_loop_ends_is_a_gain_margin(end: float) -> None:
+    """1 + k L for L = end (s + 0.5)/(s + 1), which is half as large at DC, loses its stability
+    where k end passes -1."""
+    found = loop_margins(loop_of([end, end / 2], [1, 1]), ONE)
+    assert found.gain_margin_db == pytest.approx(-20 * math.log10(-end), rel=1e-6)
+
+
+@pytest.mark.parametrize("end", [-3.0, -1.0, 1.0, 2.5])
+def test_a_loop_that_never_falls_below_one_is_refused(end: float) -> None:
+    """L = end (s + 3)/(s + 2): its closed loop as it is written is stable for end = -3, and any
+    lag or delay at all makes it unstable; for a positive end the op-amps decide."""
+    loop = loop_of([end], [1.0])
+    target = TransferFunction.from_polynomials([1, 3], [1, 2])
+    with pytest.raises(JobError, match=rf"L = P H that tends to {end:g} at high frequencies"):
+        checked_loop(loop, target)
+    checked_loop(loop_of([0.9], [1.0]), TransferFunction.from_polynomials([1, 3], [1, 2]))
 
 
 @pytest.mark.parametrize("gain", [59.99, 59.99999, 60.00001, 60.01])

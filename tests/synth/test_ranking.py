@@ -15,6 +15,7 @@ from synth.errors import RealizationError
 from synth.evidence import response_error
 from synth.forms import FORMS
 from synth.grid import judging_frequencies
+from synth.job import Accept
 from synth.limits import swings
 from synth.nodal import compile_circuit
 from synth.noise import dynamic_range_db, output_noise
@@ -22,7 +23,7 @@ from synth.ranking import RANKED_BOARDS, chosen_among, rank_forms
 from synth.results import Candidate
 from synth.tolerance.interval import clopper_pearson
 from synth.transfer import Factor, TransferFunction
-from tests.jobs import job_for
+from tests.jobs import capacitor_rule, job_for
 from tests.netlist.boards import figures
 from tests.strategies import butterworth
 
@@ -73,6 +74,40 @@ def test_a_form_that_misses_a_limit_with_exact_parts_is_taken_only_where_all_do(
     )
     worse = candidate("c", 2, 0.1, 500, missed=("y",))
     assert [c.form for c in chosen_among([worse, bad])] == ["a", "c"]
+
+
+def test_a_form_that_misses_the_limit_on_the_yield_is_taken_only_where_all_do() -> None:
+    """However few op-amps it has, and although its interval reaches that of the best one; the
+    share of the boards decides, as in the verdict."""
+    found = chosen_among(
+        [candidate("a", 4, 0.9, 995), candidate("b", 6, 0.5, 999), candidate("c", 5, 0.8, 998)],
+        least=0.998,
+    )
+    assert [c.form for c in found] == ["c", "b", "a"]
+    assert found[2].reason == "yield 99.5 % misses the limit of 99.8 %, which c keeps"
+    assert found[1].reason == "6 op-amps, c does it with 5"
+    short = chosen_among([candidate("b", 6, 0.5, 996), candidate("a", 4, 0.9, 995)], least=0.998)
+    assert [c.form for c in short] == ["a", "b"]
+    assert short[1].reason == "6 op-amps, a does it with 4"
+    missed = candidate("d", 3, 0.1, 1000, missed=("phase error 4 deg, limit 3 deg",))
+    assert chosen_among([missed, candidate("a", 4, 0.9, 995)], least=0.998)[0].form == "a"
+
+
+def test_the_form_taken_keeps_the_limit_on_the_yield_where_one_does() -> None:
+    """A limit between the yields of the companion forms and those of the others."""
+    job = job_for(
+        butterworth(4, 1e3),
+        (10.0, 2e3),
+        form="auto",
+        capacitors=capacitor_rule(tolerance=0.02),
+        accept=Accept(magnitude_db=0.98, phase_deg=7.4, yield_share=0.998),
+    )
+    chosen, candidates = compare_forms(job)
+    verdicts = [c.verdict for c in candidates if c.possible]
+    assert "pass" in verdicts
+    assert "fail" in verdicts
+    assert candidates[0].form == chosen
+    assert candidates[0].verdict == "pass"
 
 
 def test_every_form_stands_in_the_ranking_with_its_figures() -> None:

@@ -326,3 +326,22 @@ def test_a_record_that_is_not_the_circuit_of_the_job_is_refused() -> None:
     ):
         refused(message, *{**parts, "R1": record}.values())
     assert rebuilt(found.circuit, tuple(parts.values())).by_ref["R1"].value == parts["R1"].value
+
+
+def test_a_yield_that_falls_is_told_beside_what_it_was() -> None:
+    """One resistor a step of its series off, within the limits on the nominal board."""
+    old = made(Accept(magnitude_db=0.9, phase_deg=8.0))
+    before = replace(earlier(old), passed=40, boards=40)
+    gone = (out_of(old, "R2"),)
+    kept = tuple(ref for ref in values_of(old) if ref != "R2")
+    new = repick(before, Request(shortages=gone, bought=kept))
+    found = new.repick
+    assert found is not None
+    assert (found.share_before, found.share_after) == (1.0, new.tolerance.share)
+    assert new.tolerance.share < 0.99
+    told = f"the yield falls from 100 % of the boards to {100 * new.tolerance.share:.4g} %"
+    assert told in new.notices
+    unknown = repick(earlier(old), Request(shortages=gone, bought=kept))
+    assert unknown.repick is not None
+    assert unknown.repick.share_before is None
+    assert unknown.repick.notices == ()

@@ -9,6 +9,7 @@ import numpy as np
 import pytest
 
 from synth.candidates import sketch_form
+from synth.choosing.model import Level
 from synth.choosing.sharing import (
     ALLOWED_RATIO,
     ALLOWED_SHARE,
@@ -83,7 +84,8 @@ def test_op_amp_ceilings_hold_after_sharing() -> None:
     nets = [a.output for a in plain.circuit.amplifiers if a.output != "out"]
     levels = np.abs(compile_circuit(plain.circuit).solve(FREQUENCY, nets=nets))
     peaks = {
-        net: (float(FREQUENCY[int(np.argmax(levels[:, k]))]), 1.01) for k, net in enumerate(nets)
+        net: Level(float(FREQUENCY[int(np.argmax(levels[:, k]))]), 1.01)
+        for k, net in enumerate(nets)
     }
     task = replace(plain, level_limits=peaks)
     found = share_values(task, task.choose())
