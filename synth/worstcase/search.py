@@ -27,8 +27,8 @@ from synth.circuit import Circuit
 from synth.errors import CircuitError
 from synth.evidence import DB_PER_NEPER, response_error
 from synth.worstcase.ascent import climb, follow
-from synth.worstcase.boxes import Pair, Start, at_once, divided
-from synth.worstcase.enclosure import MOST_CORNERS, enclose
+from synth.worstcase.boxes import Pair, Start, Taken, at_once, divided
+from synth.worstcase.enclosure import enclose
 from synth.worstcase.expansion import Expansion, Parts
 from synth.worstcase.result import WorstCase, WorstError
 
@@ -38,7 +38,7 @@ Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
 Climb = Callable[..., tuple[Real, Real]]
 
-DEFAULT_WORK = 2_000_000
+DEFAULT_WORK = 60_000_000
 """Work for the bound of each of magnitude and phase, in entries of arrays: a second at most."""
 
 BOX_WORK = 600
@@ -49,6 +49,13 @@ CLOSE = 0.02
 
 BATCH = 64
 """Boxes enclosed at once."""
+
+STRONG = (8, 12, 16)
+"""Parts whose corners are gone through, with rising care."""
+
+WEAK_SHARE = 0.5
+"""A box is looked at with more care, instead of being divided, where the parts that are not gone
+through make more than this share of what is open."""
 
 CLIMBS = 6
 """Climbs from first-order corners, at different frequencies, and as many from random boards."""
@@ -251,7 +258,7 @@ class _Search:
                     tau = np.zeros((size, low.size))
                     tau[:, group] = ((high - low) / (high + low))[group]
                     found = enclose(
-                        part, part.response, np.full(size, c), tau, cubic=False, corners=False
+                        part, part.response, np.full(size, c), tau, cubic=False
                     )
                     bounds[kept, g] = found.bound
             self._pairs += [
@@ -260,38 +267,47 @@ class _Search:
 
     def _enclose(self, pairs: list[Pair]) -> int:
         """Take up the most doubtful box of each pair; the work it took."""
-        start = self.start
-        taken = [pair.take() for pair in pairs]
-        place = np.array([pair.place for pair in pairs])
-        low = np.stack([box[0] for _, _, box in taken])
-        high = np.stack([box[1] for _, _, box in taken])
-        c = np.array(DIRECTIONS[self.unit], dtype=complex)[[pair.sign for pair in pairs]]
-        centre = (low + high) / 2
-        widest = int((high > low).sum(axis=1).max())
-        entries = max(widest**3, 2**widest if widest <= MOST_CORNERS else 0)
-        step = at_once(entries)
-        for first in range(0, len(pairs), step):
-            kept = slice(first, first + step)
-            expansion = start.parts.expand(start.s[place[kept]], centre[kept])
-            found = enclose(
-                expansion,
-                start.expansion.response[place[kept]],
-                c[kept],
-                ((high - low) / (high + low))[kept],
-            )
-            for k, (pair, (group, bound, _)) in enumerate(
-                zip(pairs[kept], taken[kept], strict=True)
-            ):
-                here = min(bound, float(found.bound[k]))
-                j = first + k
-                for box in divided(low[j], high[j], found, k):
-                    pair.put(group, here, box)
-                pair.note(group, float(found.centre[k]), centre[j])
-                at_corner = np.where(found.corner[k] > 0, high[j], low[j])
-                pair.note(group, float(found.best[k]), at_corner)
-                self._combine(pair)
+        taken = [(pair, pair.take()) for pair in pairs]
+        work = 0
+        for level, strong in enumerate(STRONG):
+            chosen = [(pair, box) for pair, box in taken if box.level == level]
+            widest = max((int((box.high > box.low).sum()) for _, box in chosen), default=0)
+            weak = max(widest - strong, 0)
+            entries = max(widest**3, 2 ** min(strong, widest) * (4 + weak * weak))
+            step = at_once(entries)
+            for first in range(0, len(chosen), step):
+                self._enclosed(chosen[first : first + step], strong)
+            work += len(chosen) * (BOX_WORK + entries)
         self.enclosed += len(pairs)
-        return len(pairs) * (BOX_WORK + entries)
+        return work
+
+    def _enclosed(self, chosen: list[tuple[Pair, Taken]], strong: int) -> None:
+        """Enclose boxes by the corners of `strong` parts, and put back what is left of them."""
+        place = np.array([pair.place for pair, _ in chosen])
+        low, high = (np.stack([getattr(box, end) for _, box in chosen]) for end in ("low", "high"))
+        c = np.array(DIRECTIONS[self.unit], dtype=complex)[[pair.sign for pair, _ in chosen]]
+        centre, tau = (low + high) / 2, (high - low) / (high + low)
+        found = enclose(
+            self.start.parts.expand(self.start.s[place], centre),
+            self.start.expansion.response[place],
+            c,
+            tau,
+            strong=strong,
+        )
+        at_corner = centre * (1 + tau * found.corner)
+        for k, (pair, box) in enumerate(chosen):
+            here = min(box.bound, float(found.bound[k]))
+            pair.note(box.group, float(found.centre[k]), centre[k])
+            pair.note(box.group, float(found.best[k]), at_corner[k])
+            open_by = here - pair.best[box.group]
+            moving = int((high[k] > low[k]).sum())
+            more = moving > strong and box.level + 1 < len(STRONG)
+            if more and not found.weak[k] <= WEAK_SHARE * open_by:
+                pair.put(box.group, here, (low[k], high[k]), box.level + 1)
+            else:
+                for smaller in divided(low[k], high[k], found, k):
+                    pair.put(box.group, here, smaller, box.level)
+            self._combine(pair)
 
     def _combine(self, pair: Pair) -> None:
         """Note the board that is put together of the best of every group."""

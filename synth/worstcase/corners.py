@@ -1,0 +1,234 @@
+"""Bounds of an error by the corners of a box, which need no series to converge.
+
+Numerator n and denominator d are multi-affine, so at every board (n, d) is one convex combination
+of their values at the corners of the box (Zadeh and Desoer 1963, "Linear System Theory", from
+memory).  For any angle p at which all Re(d e^-jp) are positive, |n|/|d| <= |n|/Re(d e^-jp), a
+convex function over a linear one, so at most its largest value at a corner; the best of some
+angles is taken.  The phase of n and of d is extreme at corners as long as a half-plane holds them
+all.  A sharp resonance that sweeps past is bounded at once so.
+
+Only the parts that move n and d most, the strong ones, are gone through: 2^K corners.  At each the
+others, the weak ones, move within their whole range.  What eliminating the strong parts leaves of
+X is L, and d = d_v det(I + L E) with E the diagonal of their deviations, within +-1.  The linear
+part of that is taken as it is, jointly for n and d; the second order is at most the sum of the
+principal minors of L, and what is beyond at most prod(1 + r_i) less its own first three terms,
+r_i the norm of row i (Hadamard 1893: a determinant is at most the product of the norms of its
+rows).  Scaling L by a diagonal similarity, which leaves minors as they are, keeps the r_i small.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+__all__ = ["Corners", "Range", "magnitude", "phase"]
+
+Real = NDArray[np.float64]
+Complex = NDArray[np.complex128]
+
+# Angles tried for the half-plane that holds the denominator, and how they are refined.
+ANGLES = np.linspace(-1.5, 1.5, 25)
+REFINED = np.linspace(-0.8, 0.8, 5)
+REFINEMENTS = (0.125, 0.05)
+
+# Rounds in which rows and columns of L are brought to the same size.
+BALANCING = 2
+
+# Entries above this in the middle of the elimination spoil what comes after: no bound there.
+LARGEST_ENTRY = 1e5
+
+# Where the weak parts move a number by more than this share, its size is bounded more plainly.
+MOVED = 0.5
+
+
+@dataclass(frozen=True, eq=False)
+class Corners:
+    """A determinant det(I + A diag(e)) at the corners of the strong parts.
+
+    Parameters
+    ----------
+    value
+        With all weak parts in the middle, shape (N, M), M = 2^K.
+    linear
+        What it changes by with each weak part at its end, shape (N, M, W).
+    rest
+        What it changes by beyond that at most, shape (N, M).
+    """
+
+    value: Complex
+    linear: Complex
+    rest: Real
+
+    @classmethod
+    def of(cls, a: Complex, strong: int) -> Corners:
+        """Those of A, shape (N, V, V), its first `strong` parts strong."""
+        value, left = _eliminated(_balanced(a, strong), strong)
+        size = np.abs(value)
+        first = np.diagonal(left, axis1=2, axis2=3)
+        return cls(value, value[..., None] * first, size * _beyond(left, first))
+
+    def or_else(self, other: Corners, where: NDArray[np.bool_]) -> Corners:
+        """The `other` for the boxes `where` (N,) is true."""
+        pick = where[:, None]
+        return Corners(
+            np.where(pick, other.value, self.value),
+            np.where(pick[..., None], other.linear, self.linear),
+            np.where(pick, other.rest, self.rest),
+        )
+
+
+@dataclass(frozen=True, eq=False)
+class Range:
+    """How far an error may rise over a box from its value in the middle.
+
+    Parameters
+    ----------
+    up
+        No board rises more, shape (N,); inf where no half-plane was found.
+    around
+        For the phase, no board moves more either way, shape (N,).
+    weak
+        The part of `up` that comes of weak parts, shape (N,).
+    best
+        What the worst corner of the strong parts rises by, the weak ones in the middle, (N,).
+    corner
+        The end +-1 each part takes there, 0 for the middle, shape (N, V).
+    """
+
+    up: Real
+    around: Real
+    weak: Real
+    best: Real
+    corner: Real
+
+
+def magnitude(over: Corners, under: Corners, parts: int) -> Range:
+    """Of ln |over/under|, `parts` in all."""
+    size = np.abs(over.value)
+    angle, ratio = _best_angle(size, under.value)
+    turn = np.exp(-1j * angle)[:, None]
+    along = (under.value * turn).real
+    steps = (under.linear * turn[..., None]).real
+    least = along - np.abs(steps).sum(axis=2) - under.rest
+    # |1 + x| <= 1 + Re x + (Im x)^2 / (2 (1 + Re x)).
+    unit = over.linear / over.value[..., None]
+    back, across = np.abs(unit.real).sum(axis=2), np.abs(unit.imag).sum(axis=2)
+    gentle = back < MOVED
+    bent = np.where(gentle, across**2 / (2 * (1 - back)), 0.0) * size
+    pull = np.where(gentle[..., None], unit.real * size[..., None], 0.0)
+    plain = np.where(gentle, 0.0, np.abs(over.linear).sum(axis=2))
+    most = size + bent + plain + over.rest
+    moved = np.abs(pull - ratio[:, None, None] * steps).sum(axis=2)
+    excess = most - ratio[:, None] * (along - under.rest) + moved
+    valid = (least > 0).all(axis=1)
+    above = np.maximum((excess / least).max(axis=1), 0.0)
+    up = np.where(valid, np.log(ratio + above), np.inf)
+    up = np.where(np.isnan(up), np.inf, up)
+    change = np.log(size / np.abs(under.value))
+    weak = np.where(valid, up - np.log(ratio), np.inf)
+    return Range(up, np.full(up.shape, np.inf), weak, *_worst(change, parts))
+
+
+def phase(over: Corners, under: Corners, sign: Real, parts: int) -> Range:
+    """Of sign * arg(over/under), `sign` +-1 of shape (N,)."""
+    held = np.ones(sign.shape, dtype=bool)
+    change = np.zeros(over.value.shape)
+    high, low, weak = np.zeros(sign.shape), np.zeros(sign.shape), np.zeros(sign.shape)
+    for found, turned in ((over, sign), (under, -sign)):
+        size = np.abs(found.value)
+        unit = found.linear / found.value[..., None]
+        rest = found.rest / size
+        ahead = 1 - np.abs(unit.real).sum(axis=2) - rest
+        swing = np.arctan2(np.abs(unit.imag).sum(axis=2) + rest, ahead)
+        angle = np.angle(found.value)
+        held &= (ahead > 0).all(axis=1) & np.isfinite(angle).all(axis=1)
+        held &= (angle + swing).max(axis=1) - (angle - swing).min(axis=1) < np.pi
+        angle = turned[:, None] * angle
+        change += angle
+        high += (angle + swing).max(axis=1)
+        low += (angle - swing).min(axis=1)
+        weak += (angle + swing).max(axis=1) - angle.max(axis=1)
+    up = np.where(held, high, np.inf)
+    around = np.where(held, np.maximum(np.abs(high), np.abs(low)), np.inf)
+    change = np.where(held[:, None], change, -np.inf)
+    return Range(up, around, np.where(held, weak, np.inf), *_worst(change, parts))
+
+
+def _worst(change: Real, parts: int) -> tuple[Real, Real]:
+    """The largest change at a corner, and the ends there."""
+    change = np.where(np.isfinite(change), change, -np.inf)
+    worst = np.argmax(change, axis=1)
+    strong = change.shape[1].bit_length() - 1
+    ends = np.zeros((change.shape[0], parts))
+    ends[:, :strong] = 2.0 * (worst[:, None] >> np.arange(strong)[::-1] & 1) - 1
+    return change.max(axis=1), ends
+
+
+def _best_angle(size: Real, under: Complex) -> tuple[Real, Real]:
+    """The angle p with the least of the largest size/Re(under e^-jp), and that ratio, (N,)."""
+    real, imag = np.ascontiguousarray(under.real), np.ascontiguousarray(under.imag)
+
+    def tried(angle: Real) -> Real:
+        along = np.cos(angle)[:, None] * real + np.sin(angle)[:, None] * imag
+        ratio = np.where((along > 0).all(axis=1), (size / along).max(axis=1), np.inf)
+        return np.where(np.isnan(ratio), np.inf, ratio)
+
+    best = np.zeros(size.shape[0])
+    least = np.full(best.shape, np.inf)
+    for offsets in (ANGLES, *(REFINED * step for step in REFINEMENTS)):
+        about = best.copy()
+        for offset in offsets:
+            ratio = tried(about + offset)
+            best = np.where(ratio < least, about + offset, best)
+            least = np.minimum(least, ratio)
+    return best, least
+
+
+def _balanced(a: Complex, strong: int) -> Complex:
+    """A with rows and columns of the weak parts of like size, by a diagonal similarity."""
+    if strong >= a.shape[1]:
+        return a
+    size = np.abs(a)
+    size = np.where(np.eye(a.shape[1], dtype=bool), 0.0, size)
+    scale = np.ones(a.shape[:2])
+    for _ in range(BALANCING):
+        scaled = size * scale[:, None, :] / scale[:, :, None]
+        rows, columns = np.sqrt((scaled**2).sum(axis=2)), np.sqrt((scaled**2).sum(axis=1))
+        ratio = np.sqrt(rows / columns)
+        scale *= np.where(np.isfinite(ratio) & (ratio > 0), ratio, 1.0)
+    return np.asarray(a * scale[:, None, :] / scale[:, :, None])
+
+
+def _eliminated(a: Complex, strong: int) -> tuple[Complex, Complex]:
+    """det(I + A diag(e)) at all e of -1 and 1 of the strong parts, the others 0, shape (N, 2^K),
+    and L, (N, 2^K, W, W): one part after the other, what is left of A after eliminating part 0
+    has the same form, A_ij - A_i0 e A_0j / (1 + A_00 e)."""
+    values = np.ones((a.shape[0], 1), dtype=complex)
+    left = a[:, None]
+    ends = np.array([-1.0, 1.0])
+    for _ in range(strong):
+        spoilt = ~(np.abs(left).max(axis=(2, 3)) <= LARGEST_ENTRY)
+        values = np.where(spoilt, np.nan, values)
+        pivot = 1 + left[:, :, None, 0, 0] * ends
+        values = (values[:, :, None] * pivot).reshape(a.shape[0], -1)
+        scaled = left[:, :, 1:, 0, None] * left[:, :, 0, None, 1:]
+        rest = left[:, :, None, 1:, 1:] - scaled[:, :, None] * (ends / pivot)[..., None, None]
+        left = rest.reshape(a.shape[0], values.shape[1], *rest.shape[3:])
+    return values, left
+
+
+def _beyond(left: Complex, first: Complex) -> Real:
+    """What det(I + L E) is beyond its linear part at most, shape (N, M)."""
+    if not left.shape[2]:
+        return np.zeros(left.shape[:2])
+    minors = np.abs(first[..., :, None] * first[..., None, :] - left * left.swapaxes(2, 3))
+    second = minors.sum(axis=(2, 3)) / 2
+    norms = np.sqrt((left.real**2 + left.imag**2).sum(axis=3))
+    one, two, more = (np.zeros(left.shape[:2]) for _ in range(3))
+    for row in np.moveaxis(norms, 2, 0):
+        more = more * (1 + row) + row * two
+        two = two + row * one
+        one = one + row
+    return np.asarray(second + more)
