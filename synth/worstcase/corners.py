@@ -5,7 +5,7 @@ of their values at the corners of the box (Zadeh and Desoer 1963, "Linear System
 memory).  For any angle p at which all Re(d e^-jp) are positive, |n|/|d| <= |n|/Re(d e^-jp), a
 convex function over a linear one, so at most its largest value at a corner; the best of some
 angles is taken.  The phase of n and of d is extreme at corners as long as a half-plane holds them
-all.  A sharp resonance that sweeps past is bounded at once so.
+all; `synth.worstcase.phases` bounds them together.  A sharp resonance that sweeps past is bounded at once so.
 
 Only the parts that move n and d most, the strong ones, are gone through: 2^K corners.  At each the
 others, the weak ones, move within their whole range.  What eliminating the strong parts leaves of
@@ -23,6 +23,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from synth.worstcase.phases import Phases, together
+
 __all__ = ["Corners", "Range", "magnitude", "phase"]
 
 Real = NDArray[np.float64]
@@ -39,6 +41,10 @@ BALANCING = 2
 # Entries above this in the middle of the elimination spoil what comes after: no bound there.
 LARGEST_ENTRY = 1e5
 
+# Share of a bound of phase above its worst corner from which numerator and denominator are looked
+# at together.
+TOGETHER = 0.01
+
 # Where the weak parts move a number by more than this share, its size is bounded more plainly.
 MOVED = 0.5
 
@@ -50,9 +56,10 @@ class Corners:
     Parameters
     ----------
     value
-        With all weak parts in the middle, shape (N, M), M = 2^K.
+        With all weak parts in the middle, shape (N, M), M = 2^K; part k is at its upper end where
+        bit k of the number of a corner is set.
     linear
-        What it changes by with each weak part at its end, shape (N, M, W).
+        What it changes by with each weak part at its end, shape (W, N, M).
     rest
         What it changes by beyond that at most, shape (N, M).
     """
@@ -65,16 +72,15 @@ class Corners:
     def of(cls, a: Complex, strong: int) -> Corners:
         """Those of A, shape (N, V, V), its first `strong` parts strong."""
         value, left = _eliminated(_balanced(a, strong), strong)
-        size = np.abs(value)
-        first = np.diagonal(left, axis1=2, axis2=3)
-        return cls(value, value[..., None] * first, size * _beyond(left, first))
+        first = np.moveaxis(np.diagonal(left), -1, 0)
+        return cls(value, value * first, np.abs(value) * _beyond(left, first))
 
     def or_else(self, other: Corners, where: NDArray[np.bool_]) -> Corners:
         """The `other` for the boxes `where` (N,) is true."""
         pick = where[:, None]
         return Corners(
             np.where(pick, other.value, self.value),
-            np.where(pick[..., None], other.linear, self.linear),
+            np.where(pick, other.linear, self.linear),
             np.where(pick, other.rest, self.rest),
         )
 
@@ -110,17 +116,17 @@ def magnitude(over: Corners, under: Corners, parts: int) -> Range:
     angle, ratio = _best_angle(size, under.value)
     turn = np.exp(-1j * angle)[:, None]
     along = (under.value * turn).real
-    steps = (under.linear * turn[..., None]).real
-    least = along - np.abs(steps).sum(axis=2) - under.rest
+    steps = (under.linear * turn).real
+    least = along - np.abs(steps).sum(axis=0) - under.rest
     # |1 + x| <= 1 + Re x + (Im x)^2 / (2 (1 + Re x)).
-    unit = over.linear / over.value[..., None]
-    back, across = np.abs(unit.real).sum(axis=2), np.abs(unit.imag).sum(axis=2)
+    unit = over.linear / over.value
+    back, across = np.abs(unit.real).sum(axis=0), np.abs(unit.imag).sum(axis=0)
     gentle = back < MOVED
     bent = np.where(gentle, across**2 / (2 * (1 - back)), 0.0) * size
-    pull = np.where(gentle[..., None], unit.real * size[..., None], 0.0)
-    plain = np.where(gentle, 0.0, np.abs(over.linear).sum(axis=2))
+    pull = np.where(gentle, unit.real * size, 0.0)
+    plain = np.where(gentle, 0.0, np.abs(over.linear).sum(axis=0))
     most = size + bent + plain + over.rest
-    moved = np.abs(pull - ratio[:, None, None] * steps).sum(axis=2)
+    moved = np.abs(pull - ratio[:, None] * steps).sum(axis=0)
     excess = most - ratio[:, None] * (along - under.rest) + moved
     valid = (least > 0).all(axis=1)
     above = np.maximum((excess / least).max(axis=1), 0.0)
@@ -131,29 +137,20 @@ def magnitude(over: Corners, under: Corners, parts: int) -> Range:
     return Range(up, np.full(up.shape, np.inf), weak, *_worst(change, parts))
 
 
-def phase(over: Corners, under: Corners, sign: Real, parts: int) -> Range:
-    """Of sign * arg(over/under), `sign` +-1 of shape (N,)."""
-    held = np.ones(sign.shape, dtype=bool)
-    change = np.zeros(over.value.shape)
-    high, low, weak = np.zeros(sign.shape), np.zeros(sign.shape), np.zeros(sign.shape)
-    for found, turned in ((over, sign), (under, -sign)):
-        size = np.abs(found.value)
-        unit = found.linear / found.value[..., None]
-        rest = found.rest / size
-        ahead = 1 - np.abs(unit.real).sum(axis=2) - rest
-        swing = np.arctan2(np.abs(unit.imag).sum(axis=2) + rest, ahead)
-        angle = np.angle(found.value)
-        held &= (ahead > 0).all(axis=1) & np.isfinite(angle).all(axis=1)
-        held &= (angle + swing).max(axis=1) - (angle - swing).min(axis=1) < np.pi
-        angle = turned[:, None] * angle
-        change += angle
-        high += (angle + swing).max(axis=1)
-        low += (angle - swing).min(axis=1)
-        weak += (angle + swing).max(axis=1) - angle.max(axis=1)
-    up = np.where(held, high, np.inf)
-    around = np.where(held, np.maximum(np.abs(high), np.abs(low)), np.inf)
-    change = np.where(held[:, None], change, -np.inf)
-    return Range(up, around, np.where(held, weak, np.inf), *_worst(change, parts))
+def phase(over: Corners, under: Corners, parts: int) -> Range:
+    """Of arg(over/under), `parts` in all."""
+    ahead, behind = Phases.of(over), Phases.of(under)
+    held = ahead.held & behind.held
+    change = np.where(held[:, None], ahead.angle - behind.angle, -np.inf)
+    up, down = ahead.high - behind.low, behind.high - ahead.low
+    best, corner = _worst(change, parts)
+    for k in np.flatnonzero(held & (up > best + TOGETHER * np.abs(up))):
+        up[k] = min(up[k], together(over, under, ahead, behind, int(k)))
+    # With the weak parts in their middle, n and d each by itself.
+    alone = ahead.angle.max(axis=1) - behind.angle.min(axis=1)
+    weak = np.where(held, np.maximum(ahead.high - behind.low - alone, 0.0), np.inf)
+    around = np.where(held, np.maximum(up, down), np.inf)
+    return Range(np.where(held, up, np.inf), around, weak, best, corner)
 
 
 def _worst(change: Real, parts: int) -> tuple[Real, Real]:
@@ -162,7 +159,7 @@ def _worst(change: Real, parts: int) -> tuple[Real, Real]:
     worst = np.argmax(change, axis=1)
     strong = change.shape[1].bit_length() - 1
     ends = np.zeros((change.shape[0], parts))
-    ends[:, :strong] = 2.0 * (worst[:, None] >> np.arange(strong)[::-1] & 1) - 1
+    ends[:, :strong] = 2.0 * (worst[:, None] >> np.arange(strong) & 1) - 1
     return change.max(axis=1), ends
 
 
@@ -203,32 +200,32 @@ def _balanced(a: Complex, strong: int) -> Complex:
 
 def _eliminated(a: Complex, strong: int) -> tuple[Complex, Complex]:
     """det(I + A diag(e)) at all e of -1 and 1 of the strong parts, the others 0, shape (N, 2^K),
-    and L, (N, 2^K, W, W): one part after the other, what is left of A after eliminating part 0
+    and L, (W, W, N, 2^K): one part after the other, what is left of A after eliminating part 0
     has the same form, A_ij - A_i0 e A_0j / (1 + A_00 e)."""
-    values = np.ones((a.shape[0], 1), dtype=complex)
-    left = a[:, None]
-    ends = np.array([-1.0, 1.0])
+    count = a.shape[0]
+    values = np.ones((count, 1), dtype=complex)
+    left = np.ascontiguousarray(np.moveaxis(a, 0, -1))[..., None]
+    ends = np.array([-1.0, 1.0])[:, None]
     for _ in range(strong):
-        spoilt = ~(np.abs(left).max(axis=(2, 3)) <= LARGEST_ENTRY)
+        spoilt = ~(np.abs(left).max(axis=(0, 1)) <= LARGEST_ENTRY)
         values = np.where(spoilt, np.nan, values)
-        pivot = 1 + left[:, :, None, 0, 0] * ends
-        values = (values[:, :, None] * pivot).reshape(a.shape[0], -1)
-        scaled = left[:, :, 1:, 0, None] * left[:, :, 0, None, 1:]
-        rest = left[:, :, None, 1:, 1:] - scaled[:, :, None] * (ends / pivot)[..., None, None]
-        left = rest.reshape(a.shape[0], values.shape[1], *rest.shape[3:])
+        pivot = 1 + left[0, 0, :, None, :] * ends
+        scaled = left[1:, 0, :, None, :] * (ends / pivot)
+        rest = scaled[:, None] * left[0, 1:, :, None, :]
+        rest = np.subtract(left[1:, 1:, :, None, :], rest, out=rest)
+        values = (values[:, None, :] * pivot).reshape(count, -1)
+        left = rest.reshape(*rest.shape[:2], *values.shape)
     return values, left
 
 
 def _beyond(left: Complex, first: Complex) -> Real:
     """What det(I + L E) is beyond its linear part at most, shape (N, M)."""
-    if not left.shape[2]:
-        return np.zeros(left.shape[:2])
-    minors = np.abs(first[..., :, None] * first[..., None, :] - left * left.swapaxes(2, 3))
-    second = minors.sum(axis=(2, 3)) / 2
-    norms = np.sqrt((left.real**2 + left.imag**2).sum(axis=3))
-    one, two, more = (np.zeros(left.shape[:2]) for _ in range(3))
-    for row in np.moveaxis(norms, 2, 0):
-        more = more * (1 + row) + row * two
-        two = two + row * one
-        one = one + row
-    return np.asarray(second + more)
+    second, one, two, more = (np.zeros(left.shape[2:]) for _ in range(4))
+    for i in range(left.shape[0]):
+        for j in range(i):
+            second += np.abs(first[i] * first[j] - left[i, j] * left[j, i])
+        row = np.sqrt((left[i].real ** 2 + left[i].imag ** 2).sum(axis=0))
+        more += row * (more + two)
+        two += row * one
+        one += row
+    return second + more

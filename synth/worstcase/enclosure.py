@@ -216,9 +216,7 @@ def _by_corners(x: Complex, y: Complex, direction: Complex, strong: int) -> corn
     """By the corners of the `strong` parts that stand first, errors from the centre."""
     d, n = corners.Corners.of(x, strong), corners.Corners.of(y, strong)
     parts = x.shape[1]
-    turns = direction.imag != 0
-    if turns.all():
-        # Re(c z) is -Im(c) Im(z) for an imaginary c.
-        return corners.phase(n, d, -direction.imag, parts)
-    falls = direction.real < 0
-    return corners.magnitude(n.or_else(d, falls), d.or_else(n, falls), parts)
+    # Re(c z) is -Im(c) Im(z) for an imaginary c.
+    turns, falls = direction.imag != 0, direction.real - direction.imag < 0
+    over, under = n.or_else(d, falls), d.or_else(n, falls)
+    return (corners.phase if turns.all() else corners.magnitude)(over, under, parts)

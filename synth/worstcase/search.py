@@ -31,6 +31,7 @@ from synth.worstcase.boxes import Pair, Start, Taken, at_once, divided
 from synth.worstcase.enclosure import enclose
 from synth.worstcase.expansion import Expansion, Parts
 from synth.worstcase.result import WorstCase, WorstError
+from synth.worstcase.vanishing import Vanishing, find_vanishing
 
 __all__ = ["DEFAULT_WORK", "worst_case"]
 
@@ -68,6 +69,10 @@ RETURNS = 4
 
 NEAR = (-4, -2, -1, 0, 1, 2, 4)
 """Frequencies beside the worst one that are tried as well, in steps of the grid."""
+
+SUSPICIOUS = 2.0
+"""An error reached [Np, rad] from which its frequency is searched for a board on which the
+response vanishes or grows without limit."""
 
 SEED = 1
 """Of the random boards."""
@@ -113,13 +118,17 @@ def worst_case(
     if not parts.active.size:
         return _without_tolerance(parts, target, frequency)
     start = Start.of(parts, 2j * np.pi * frequency)
-    found, boxes = {}, 0
-    for unit in DIRECTIONS:
-        search = _Search(start, target, unit)
+    searches = {unit: _Search(start, target, unit) for unit in DIRECTIONS}
+    for search in searches.values():
         search.climb()
-        bound = search.bound(work)
-        found[unit] = _worst_error(search, bound, frequency)
-        boxes += search.enclosed
+    suspects = [s.place for s in searches.values() if s.reached > SUSPICIOUS]
+    vanishing = find_vanishing(start, target, suspects)
+    found = {}
+    for unit, search in searches.items():
+        if vanishing is not None:
+            search.note_vanishing(vanishing)
+        found[unit] = _worst_error(search, search.bound(work), frequency)
+    boxes = sum(search.enclosed for search in searches.values())
     return WorstCase(
         magnitude_db=found["dB"],
         phase_deg=found["deg"],
@@ -140,6 +149,7 @@ class _Search:
     place: int = 0
     sign: int = 0
     enclosed: int = 0
+    unlimited: str = ""
     _pairs: list[Pair] = field(default_factory=list)
 
     def climb(self) -> None:
@@ -187,6 +197,20 @@ class _Search:
             if not self.reached > before * (1 + CLOSE / 10):
                 break
 
+    def note_vanishing(self, found: Vanishing) -> None:
+        """Take over a proof that the magnitude has no limit and the phase takes every value."""
+        if self.unit == "dB":
+            self.unlimited = found.what
+        board = found.board if self.unit == "dB" else found.opposite
+        if board is None:
+            return
+        k = found.place
+        with np.errstate(all="ignore"):
+            response = self.start.parts.response(self.start.s[k : k + 1], board[None])
+            error = np.log(response / self.target[k])
+        for sign, c in enumerate(DIRECTIONS[self.unit]):
+            self._note((c * error).real, np.array([k]), np.array([sign]), board[None])
+
     def _return_to_worst(self, method: Climb) -> None:
         """Go on from the board reached, at the frequencies where it is worst."""
         start = self.start
@@ -223,6 +247,8 @@ class _Search:
 
     def bound(self, work: int) -> float:
         """Enclose boxes until bound and reached are close or the work is done [Np], [rad]."""
+        if self.unlimited:
+            return math.inf
         self._enclose_whole()
         before = self.reached
         ranked = [(-pair.total, k) for k, pair in enumerate(self._pairs)]
@@ -302,7 +328,7 @@ class _Search:
             open_by = here - pair.best[box.group]
             moving = int((high[k] > low[k]).sum())
             more = moving > strong and box.level + 1 < len(STRONG)
-            if more and not found.weak[k] <= WEAK_SHARE * open_by:
+            if more and not (math.isfinite(here) and found.weak[k] <= WEAK_SHARE * open_by):
                 pair.put(box.group, here, (low[k], high[k]), box.level + 1)
             else:
                 for smaller in divided(low[k], high[k], found, k):
@@ -381,6 +407,7 @@ def _worst_error(search: _Search, bound: float, frequency: Real) -> WorstError:
         reached=float(scale * max(search.reached, 0.0)),
         sign=1 if search.sign == 0 else -1,
         bound=float(scale * max(bound, 0.0)) if math.isfinite(bound) else None,
+        unlimited=search.unlimited,
         frequency_hz=float(frequency[search.place]),
         values=dict(zip(refs, values.tolist(), strict=True)),
         low=named(at_low),
