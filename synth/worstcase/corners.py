@@ -30,10 +30,12 @@ __all__ = ["Corners", "Range", "magnitude", "phase"]
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
 
-# Angles tried for the half-plane that holds the denominator, and how they are refined.
-ANGLES = np.linspace(-1.5, 1.5, 25)
-REFINED = np.linspace(-0.8, 0.8, 5)
-REFINEMENTS = (0.125, 0.05)
+# Angles tried for the half-plane that holds the denominator, as shares of the range that may hold
+# any, how they are refined, and what an angle scores that holds none.
+ANGLES = np.linspace(-0.48, 0.48, 17)
+REFINED = np.array([-0.67, -0.33, 0.33, 0.67])
+REFINEMENTS = (0.06, 0.02)
+NONE = 1e100
 
 # Rounds in which rows and columns of L are brought to the same size.
 BALANCING = 2
@@ -113,9 +115,9 @@ class Range:
 def magnitude(over: Corners, under: Corners, parts: int) -> Range:
     """Of ln |over/under|, `parts` in all."""
     size = np.abs(over.value)
-    angle, ratio = _best_angle(size, under.value)
-    turn = np.exp(-1j * angle)[:, None]
+    turn = np.exp(-1j * _best_angle(size, under))[:, None]
     along = (under.value * turn).real
+    ratio = (size / along).max(axis=1)
     steps = (under.linear * turn).real
     least = along - np.abs(steps).sum(axis=0) - under.rest
     # |1 + x| <= 1 + Re x + (Im x)^2 / (2 (1 + Re x)).
@@ -163,24 +165,32 @@ def _worst(change: Real, parts: int) -> tuple[Real, Real]:
     return change.max(axis=1), ends
 
 
-def _best_angle(size: Real, under: Complex) -> tuple[Real, Real]:
-    """The angle p with the least of the largest size/Re(under e^-jp), and that ratio, (N,)."""
-    real, imag = np.ascontiguousarray(under.real), np.ascontiguousarray(under.imag)
+def _best_angle(size: Real, under: Corners) -> Real:
+    """The angle p with the least of the largest size/Re(under e^-jp), weak parts included, (N,)."""
+    values = [np.ascontiguousarray(part) for part in (under.value.real, under.value.imag)]
+    steps = [np.ascontiguousarray(part) for part in (under.linear.real, under.linear.imag)]
 
     def tried(angle: Real) -> Real:
-        along = np.cos(angle)[:, None] * real + np.sin(angle)[:, None] * imag
-        ratio = np.where((along > 0).all(axis=1), (size / along).max(axis=1), np.inf)
-        return np.where(np.isnan(ratio), np.inf, ratio)
+        cos, sin = np.cos(angle)[:, None], np.sin(angle)[:, None]
+        least = cos * values[0] + sin * values[1] - under.rest
+        for real, imag in zip(*steps, strict=True):
+            least -= np.abs(cos * real + sin * imag)
+        missing = NONE * (1 - least.min(axis=1))
+        score = np.where(missing < NONE, (size / least).max(axis=1), missing)
+        return np.where(np.isnan(score), np.inf, score)
 
-    best = np.zeros(size.shape[0])
-    least = np.full(best.shape, np.inf)
+    # An angle that suits every corner lies within a quarter turn of each.
+    turned = np.angle(under.value)
+    low, high = turned.max(axis=1) - np.pi / 2, turned.min(axis=1) + np.pi / 2
+    best, lowest = (low + high) / 2, np.full(size.shape[0], np.inf)
     for offsets in (ANGLES, *(REFINED * step for step in REFINEMENTS)):
         about = best.copy()
         for offset in offsets:
-            ratio = tried(about + offset)
-            best = np.where(ratio < least, about + offset, best)
-            least = np.minimum(least, ratio)
-    return best, least
+            angle = about + offset * (high - low)
+            score = tried(angle)
+            best = np.where(score < lowest, angle, best)
+            lowest = np.minimum(lowest, score)
+    return best
 
 
 def _balanced(a: Complex, strong: int) -> Complex:
