@@ -5,7 +5,8 @@ of their values at the corners of the box (Zadeh and Desoer 1963, "Linear System
 memory).  For any angle p at which all Re(d e^-jp) are positive, |n|/|d| <= |n|/Re(d e^-jp), a
 convex function over a linear one, so at most its largest value at a corner; the best of some
 angles is taken.  The phase of n and of d is extreme at corners as long as a half-plane holds them
-all; `synth.worstcase.phases` bounds them together.  A sharp resonance that sweeps past is bounded at once so.
+all; `synth.worstcase.phases` bounds them together.  A sharp resonance that sweeps past is bounded
+at once so.
 
 Only the parts that move n and d most, the strong ones, are gone through: 2^K corners.  At each the
 others, the weak ones, move within their whole range.  What eliminating the strong parts leaves of
@@ -41,7 +42,11 @@ NONE = 1e100
 BALANCING = 2
 
 # Entries above this in the middle of the elimination spoil what comes after: no bound there.
-LARGEST_ENTRY = 1e5
+LARGEST_ENTRY = 1e4
+
+# What rounding may change a value by, against the largest at any corner: far above that of an
+# elimination of some twenty parts with entries up to the largest.
+ROUNDING = 1e-10
 
 # Share of a bound of phase above its worst corner from which numerator and denominator are looked
 # at together.
@@ -73,9 +78,11 @@ class Corners:
     @classmethod
     def of(cls, a: Complex, strong: int) -> Corners:
         """Those of A, shape (N, V, V), its first `strong` parts strong."""
-        value, left = _eliminated(_balanced(a, strong), strong)
+        value, left = _eliminated(_balanced(a), strong)
+        size = np.abs(value)
+        spare = ROUNDING * size.max(axis=1, keepdims=True)
         first = np.moveaxis(np.diagonal(left), -1, 0)
-        return cls(value, value * first, np.abs(value) * _beyond(left, first))
+        return cls(value, value * first, size * _beyond(left, first) + spare)
 
     def or_else(self, other: Corners, where: NDArray[np.bool_]) -> Corners:
         """The `other` for the boxes `where` (N,) is true."""
@@ -103,6 +110,9 @@ class Range:
         What the worst corner of the strong parts rises by, the weak ones in the middle, (N,).
     corner
         The end +-1 each part takes there, 0 for the middle, shape (N, V).
+    turns
+        How far the error turns round with each part: it rises that much from the lower to the
+        upper end with the others at some corner, and falls that much at another; shape (N, V).
     """
 
     up: Real
@@ -110,6 +120,7 @@ class Range:
     weak: Real
     best: Real
     corner: Real
+    turns: Real
 
 
 def magnitude(over: Corners, under: Corners, parts: int) -> Range:
@@ -145,24 +156,28 @@ def phase(over: Corners, under: Corners, parts: int) -> Range:
     held = ahead.held & behind.held
     change = np.where(held[:, None], ahead.angle - behind.angle, -np.inf)
     up, down = ahead.high - behind.low, behind.high - ahead.low
-    best, corner = _worst(change, parts)
+    best, corner, turns = _worst(change, parts)
     for k in np.flatnonzero(held & (up > best + TOGETHER * np.abs(up))):
         up[k] = min(up[k], together(over, under, ahead, behind, int(k)))
     # With the weak parts in their middle, n and d each by itself.
     alone = ahead.angle.max(axis=1) - behind.angle.min(axis=1)
     weak = np.where(held, np.maximum(ahead.high - behind.low - alone, 0.0), np.inf)
     around = np.where(held, np.maximum(up, down), np.inf)
-    return Range(np.where(held, up, np.inf), around, weak, best, corner)
+    return Range(np.where(held, up, np.inf), around, weak, best, corner, turns)
 
 
-def _worst(change: Real, parts: int) -> tuple[Real, Real]:
-    """The largest change at a corner, and the ends there."""
+def _worst(change: Real, parts: int) -> tuple[Real, Real, Real]:
+    """The largest change at a corner, the ends there, and how far it turns round."""
     change = np.where(np.isfinite(change), change, -np.inf)
     worst = np.argmax(change, axis=1)
-    strong = change.shape[1].bit_length() - 1
-    ends = np.zeros((change.shape[0], parts))
+    count, strong = change.shape[0], change.shape[1].bit_length() - 1
+    ends, turns = np.zeros((count, parts)), np.zeros((count, parts))
     ends[:, :strong] = 2.0 * (worst[:, None] >> np.arange(strong) & 1) - 1
-    return change.max(axis=1), ends
+    for k in range(strong):
+        halves = change.reshape(count, -1, 2, 2**k)
+        rise = np.nan_to_num(halves[:, :, 1] - halves[:, :, 0], posinf=0.0, neginf=0.0)
+        turns[:, k] = np.minimum(rise.max(axis=(1, 2)), -rise.min(axis=(1, 2)))
+    return change.max(axis=1), ends, np.maximum(turns, 0.0)
 
 
 def _best_angle(size: Real, under: Corners) -> Real:
@@ -177,7 +192,7 @@ def _best_angle(size: Real, under: Corners) -> Real:
             least -= np.abs(cos * real + sin * imag)
         missing = NONE * (1 - least.min(axis=1))
         score = np.where(missing < NONE, (size / least).max(axis=1), missing)
-        return np.where(np.isnan(score), np.inf, score)
+        return np.asarray(np.where(np.isnan(score), np.inf, score))
 
     # An angle that suits every corner lies within a quarter turn of each.
     turned = np.angle(under.value)
@@ -193,10 +208,8 @@ def _best_angle(size: Real, under: Corners) -> Real:
     return best
 
 
-def _balanced(a: Complex, strong: int) -> Complex:
-    """A with rows and columns of the weak parts of like size, by a diagonal similarity."""
-    if strong >= a.shape[1]:
-        return a
+def _balanced(a: Complex) -> Complex:
+    """A with rows and columns of like size, by a diagonal similarity."""
     size = np.abs(a)
     size = np.where(np.eye(a.shape[1], dtype=bool), 0.0, size)
     scale = np.ones(a.shape[:2])

@@ -44,6 +44,9 @@ Complex = NDArray[np.complex128]
 # Far above the rounding of a solve of some twenty unknowns, far below what anyone reads.
 ROUNDING = 1e-9
 
+# What a part adds to the doubt for its mere effect, where the error does not turn round with it.
+UNTURNED = 1e-3
+
 # Sum of a row of Z above which its inverse is not even looked at.
 HOPELESS = 1e3
 
@@ -132,28 +135,39 @@ def _enclosed(
     series = np.where(diverges | np.isnan(series), np.inf, series)
     spread = np.where(diverges | np.isnan(spread), np.inf, spread + rest)
     reached, weak = np.full(centre.shape, -np.inf), np.zeros(centre.shape)
+    by_corners, turns = diverges, np.zeros_like(width)
+    effect = np.take_along_axis(effect, order, axis=1)
     if strong:
         found = _by_corners(x, y, direction, min(strong, width.shape[1]))
         weak = np.where(found.up < series, found.weak, 0.0)
         weak = np.where(np.isinf(series) & np.isinf(found.up), np.inf, weak)
+        by_corners = diverges | (found.up < series)
         series, spread = np.minimum(series, found.up), np.minimum(spread, found.around)
-        reached, corner = found.best, found.corner
+        reached, corner, turns = found.best, found.corner, found.turns
     bound = centre + series
     # The phase counts modulo a turn: a box that may reach beyond half a turn is not bounded.
     wraps = (direction.imag != 0) & ~(np.abs(centre) + spread <= np.pi)
     bound = np.where(wraps | np.isnan(bound), np.inf, bound)
     unsure = np.abs(second).sum(axis=2) + third + tail
     slope = np.where((np.abs(first) > unsure) & ~diverges[:, None], np.sign(first), 0.0)
-    doubt = np.where(
-        diverges[:, None],
-        np.abs(_diagonal(x)) + np.abs(_diagonal(y)),
-        leaving + third / 3 + tail / 4,
-    )
+    doubt = np.where(by_corners[:, None], turns + UNTURNED * effect, leaving + third / 3 + tail / 4)
     doubt = np.where(width > 0, np.nan_to_num(doubt, nan=1.0, posinf=1e300), -1.0)
-    out = [np.zeros_like(tau), np.zeros_like(tau), np.full_like(tau, -1.0)]
-    for into, own in zip(out, (slope, corner, doubt), strict=True):
+    bound += ROUNDING * (1 + np.abs(bound))
+
+    def spread_out(own: Real, fixed: float) -> Real:
+        into = np.full_like(tau, fixed)
         np.put_along_axis(into, order, own, axis=1)
-    return Enclosure(centre, bound + ROUNDING * (1 + np.abs(bound)), centre + reached, *out, weak)
+        return into
+
+    return Enclosure(
+        centre=centre,
+        bound=bound,
+        best=centre + reached,
+        slope=spread_out(slope, 0.0),
+        corner=spread_out(corner, 0.0),
+        doubt=spread_out(doubt, -1.0),
+        weak=weak,
+    )
 
 
 def _picked(matrix: Complex, order: NDArray[np.intp]) -> Complex:

@@ -14,6 +14,7 @@ of `synth.worstcase.corners` are added to the left side at their worst.
 from __future__ import annotations
 
 import heapq
+import itertools
 from dataclasses import dataclass
 from typing import Protocol
 
@@ -86,7 +87,7 @@ def together(over: Values, under: Values, ahead: Phases, behind: Phases, k: int)
     slices = _Slices(over, under, ahead, behind, k)
     edges = np.linspace(slices.lowest, slices.highest, SLICES + 1)
     heap: list[tuple[float, float, float, float]] = []
-    for below, above in zip(edges[:-1], edges[1:], strict=True):
+    for below, above in itertools.pairwise(edges):
         angle = slices.limit(float(above))
         heapq.heappush(heap, (-(angle - below), float(below), float(above), angle))
     for _ in range(HALVINGS):

@@ -53,7 +53,9 @@ class WorstError:
             raise ValueError(f"got {self.reached} of sign {self.sign}, expected a size and a sign")
         if self.bound is not None and not self.reached <= self.bound:
             raise ValueError(f"got the bound {self.bound}, expected {self.reached} or more")
-        if self.unlimited not in ("", "pole", "zero") or (self.unlimited and self.bound is not None):
+        if self.unlimited not in ("", "pole", "zero") or (
+            self.unlimited and self.bound is not None
+        ):
             raise ValueError(f"got {self.unlimited!r} and the bound {self.bound}, expected one")
 
     @property

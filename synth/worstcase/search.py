@@ -39,8 +39,8 @@ Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
 Climb = Callable[..., tuple[Real, Real]]
 
-DEFAULT_WORK = 60_000_000
-"""Work for the bound of each of magnitude and phase, in entries of arrays: a second at most."""
+DEFAULT_WORK = 25_000_000
+"""Work for the bound of each of magnitude and phase, in entries of arrays: five seconds at most."""
 
 BOX_WORK = 600
 """Work of a box beside its arrays."""
@@ -283,9 +283,7 @@ class _Search:
                 for g, group in enumerate(start.groups):
                     tau = np.zeros((size, low.size))
                     tau[:, group] = ((high - low) / (high + low))[group]
-                    found = enclose(
-                        part, part.response, np.full(size, c), tau, cubic=False
-                    )
+                    found = enclose(part, part.response, np.full(size, c), tau, cubic=False)
                     bounds[kept, g] = found.bound
             self._pairs += [
                 Pair(k, sign, float(offset[k]), start, bounds[k].tolist()) for k in range(count)

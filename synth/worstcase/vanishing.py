@@ -78,9 +78,7 @@ class Vanishing:
     opposite: Real | None
 
 
-def find_vanishing(
-    start: Start, target: Complex, suspects: Sequence[int] = ()
-) -> Vanishing | None:
+def find_vanishing(start: Start, target: Complex, suspects: Sequence[int] = ()) -> Vanishing | None:
     """A proof that numerator or denominator vanishes on some board; None where none was found,
     which proves nothing.  `target` (F,) as the error is taken against, `suspects` frequencies to
     look at beside the likeliest."""
