@@ -24,6 +24,9 @@ class WorstError:
         Of that error, +1 or -1.
     bound
         No board has an error of larger size; None where no bound was found or none exists.
+    everywhere
+        The same at every frequency from the lowest to the highest, those between the ones at
+        which errors are taken included; None where no such bound was found or none exists.
     unlimited
         Empty, or why no bound exists, which is then proven: ``"pole"``, the response grows without
         limit towards a board within tolerance, at one of the frequencies; ``"zero"``, it vanishes
@@ -46,6 +49,7 @@ class WorstError:
     low: tuple[str, ...]
     high: tuple[str, ...]
     between: tuple[str, ...]
+    everywhere: float | None = None
     unlimited: str = ""
 
     def __post_init__(self) -> None:

@@ -26,11 +26,13 @@ from numpy.typing import ArrayLike, NDArray
 from synth.circuit import Circuit
 from synth.errors import CircuitError
 from synth.evidence import DB_PER_NEPER, response_error
+from synth.transfer import TransferFunction
 from synth.worstcase.ascent import climb, follow
+from synth.worstcase.between import Cover
 from synth.worstcase.boxes import Pair, Start, Taken, at_once, divided
 from synth.worstcase.enclosure import enclose
 from synth.worstcase.expansion import Expansion, Parts
-from synth.worstcase.result import WorstCase, WorstError
+from synth.worstcase.result import MEET, WorstCase, WorstError
 from synth.worstcase.vanishing import Vanishing, find_vanishing
 
 __all__ = ["DEFAULT_WORK", "worst_case"]
@@ -70,6 +72,9 @@ RETURNS = 4
 NEAR = (-4, -2, -1, 0, 1, 2, 4)
 """Frequencies beside the worst one that are tried as well, in steps of the grid."""
 
+SHARE = 3
+"""The work between the frequencies is this part of that at them."""
+
 SUSPICIOUS = 2.0
 """An error reached [Np, rad] from which its frequency is searched for a board on which the
 response vanishes or grows without limit."""
@@ -85,6 +90,7 @@ def worst_case(
     target_response: ArrayLike,
     frequency_hz: ArrayLike,
     *,
+    target: TransferFunction | None = None,
     work: int = DEFAULT_WORK,
 ) -> WorstCase:
     """Largest errors of magnitude and phase over all boards within tolerance.
@@ -97,6 +103,8 @@ def worst_case(
         What the output should show, complex, shape (F,).
     frequency_hz
         Where it is compared [Hz], shape (F,).
+    target
+        H(s) of `target_response`; with it, a bound at all frequencies of the band is looked for.
     work
         See `DEFAULT_WORK`; the bound is valid whatever it is.
 
@@ -108,26 +116,29 @@ def worst_case(
         The equations are singular on a board.
     """
     frequency = np.asarray(frequency_hz, dtype=float)
-    target = np.asarray(target_response, dtype=complex)
-    if frequency.ndim != 1 or not frequency.size or target.shape != frequency.shape:
+    wanted = np.asarray(target_response, dtype=complex)
+    if frequency.ndim != 1 or not frequency.size or wanted.shape != frequency.shape:
         raise CircuitError(
-            f"got a target of shape {target.shape} at frequencies of shape {frequency.shape}, "
+            f"got a target of shape {wanted.shape} at frequencies of shape {frequency.shape}, "
             "expected one value at each of one or more frequencies"
         )
     parts = Parts.of(circuit)
     if not parts.active.size:
-        return _without_tolerance(parts, target, frequency)
+        return _without_tolerance(parts, wanted, frequency)
     start = Start.of(parts, 2j * np.pi * frequency)
-    searches = {unit: _Search(start, target, unit) for unit in DIRECTIONS}
+    searches = {unit: _Search(start, wanted, unit) for unit in DIRECTIONS}
     for search in searches.values():
         search.climb()
     suspects = [s.place for s in searches.values() if s.reached > SUSPICIOUS]
-    vanishing = find_vanishing(start, target, suspects)
+    vanishing = find_vanishing(start, wanted, suspects)
+    cover = None if target is None else Cover.of(parts, target, 2 * np.pi * frequency)
     found = {}
     for unit, search in searches.items():
         if vanishing is not None:
             search.note_vanishing(vanishing)
-        found[unit] = _worst_error(search, search.bound(work), frequency)
+        bound = search.bound(work)
+        everywhere = math.inf if cover is None else search.between(cover, bound, work // SHARE)
+        found[unit] = _worst_error(search, bound, everywhere, frequency)
     boxes = sum(search.enclosed for search in searches.values())
     return WorstCase(
         magnitude_db=found["dB"],
@@ -266,6 +277,16 @@ class _Search:
             self._return_to_worst(follow)
         return min(max(self.reached, -ranked[0][0]), most)
 
+    def between(self, cover: Cover, bound: float, work: int) -> float:
+        """What no board passes at any frequency of the band [Np], [rad]."""
+        if not self._pairs:
+            return math.inf
+        totals = np.array([pair.total for pair in self._pairs]).reshape(2, -1)
+        c = np.array(DIRECTIONS[self.unit], dtype=complex)
+        goal = (1 + MEET - CLOSE / 4) * self.reached
+        found = cover.bound(totals, c, goal, work)
+        return max(min(found, math.pi if self.unit == "deg" else math.inf), bound)
+
     def _enclose_whole(self) -> None:
         """The whole box of every group at every frequency, both ways."""
         start = self.start
@@ -387,7 +408,7 @@ def _without_tolerance(parts: Parts, target: Complex, frequency: Real) -> WorstC
     )
 
 
-def _worst_error(search: _Search, bound: float, frequency: Real) -> WorstError:
+def _worst_error(search: _Search, bound: float, everywhere: float, frequency: Real) -> WorstError:
     parts, (low, high) = search.start.parts, search.start.box
     scale = DB_PER_NEPER if search.unit == "dB" else 180 / np.pi
     columns = parts.varied
@@ -405,6 +426,7 @@ def _worst_error(search: _Search, bound: float, frequency: Real) -> WorstError:
         reached=float(scale * max(search.reached, 0.0)),
         sign=1 if search.sign == 0 else -1,
         bound=float(scale * max(bound, 0.0)) if math.isfinite(bound) else None,
+        everywhere=float(scale * max(everywhere, 0.0)) if math.isfinite(everywhere) else None,
         unlimited=search.unlimited,
         frequency_hz=float(frequency[search.place]),
         values=dict(zip(refs, values.tolist(), strict=True)),

@@ -1,0 +1,236 @@
+"""What no board passes at any frequency of the band, those between the judged ones included.
+
+Around every frequency lies a cell, eta to either side in u = ln(omega).  A frequency e^v times as
+high multiplies every capacitor and every s/(2 pi GBW) by e^v; both are variables here, W of them,
+beside the parts.  A cell is bounded in one of two ways:
+
+- By a slope: the error rises from its bound in the middle by at most eta times the largest
+  |Re c (ln H - ln T)'|, where (ln det(I + X D))' = sum over W of (1 + D_w) R_ww with
+  R = (I + X D)^-1 X = X - X D X + ...  The terms without D and with one D_j are taken as they
+  are, numerator, denominator and target together; beyond that |R| is at most
+  Z^2 (I - Z)^-1 |X|, Z = |X| diag of the largest |D_j| (see `synth.worstcase.enclosure`).
+- As one box, in which frequency widens the range of every capacitor and op-amp by itself, and
+  the target moves by itself: wider, but good where no series converges.
+
+The cell with the highest bound is cut in half until none passes the goal, or the work is done.
+Derivatives of ln T come from its roots: s/(s - r) of a root r, then -s r/(s - r)^2, then
+s r (s + r)/(s - r)^3.
+"""
+
+from __future__ import annotations
+
+import heapq
+import math
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from synth.transfer import TransferFunction
+from synth.worstcase.boxes import at_once
+from synth.worstcase.enclosure import HOPELESS, enclose
+from synth.worstcase.expansion import Expansion, Parts
+from synth.worstcase.groups import independent_groups
+
+__all__ = ["Cover"]
+
+Real = NDArray[np.float64]
+Complex = NDArray[np.complex128]
+Index = NDArray[np.intp]
+
+STRONG = 12
+"""Parts whose corners are gone through in a cell."""
+
+CELLS = 8
+"""Cells taken up at once."""
+
+CELL_WORK = 4000
+"""Work of a cell beside its arrays."""
+
+
+@dataclass(frozen=True, eq=False)
+class Cover:
+    """The cells of a circuit.
+
+    Parameters
+    ----------
+    parts
+        Of the circuit.
+    target
+        T(s).
+    frequency
+        Frequencies at which errors are judged [rad/s], rising, shape (F,).
+    groups
+        Of the variables with those of frequency appended.
+    """
+
+    parts: Parts
+    target: TransferFunction
+    frequency: Real
+    start: Expansion
+    groups: tuple[Index, ...]
+
+    @classmethod
+    def of(cls, parts: Parts, target: TransferFunction, frequency: Real) -> Cover:
+        """That of `parts` with its cells about `frequency` (F,) [rad/s]."""
+        s = 1j * frequency
+        step = at_once(parts.with_frequency.size**2)
+        chunks = [_expanded(parts, s[k : k + step]) for k in range(0, s.size, step)]
+        start = Expansion(
+            *(
+                np.concatenate([getattr(chunk, name) for chunk in chunks])
+                for name in ("response", "denominator", "numerator")
+            )
+        )
+        return cls(parts, target, frequency, start, independent_groups(start))
+
+    def bound(self, totals: Real, directions: Complex, goal: float, work: int) -> float:
+        """No board has a larger error at any frequency from the first to the last.
+
+        Parameters
+        ----------
+        totals
+            What no board passes at each frequency in each direction, shape (2, F).
+        directions
+            The two c of the error, shape (2,).
+        goal
+            A bound that is good enough.
+        work
+            In entries of arrays.
+        """
+        u = np.log(self.frequency)
+        ends = np.concatenate([u[:1], (u[1:] + u[:-1]) / 2, u[-1:]])
+        half = np.maximum(u - ends[:-1], ends[1:] - u)
+        heap: list[tuple[float, int, float, float, bool]] = []
+        for sign, c in enumerate(directions):
+            slope = self._slope(self.start, self.frequency, half, np.full(u.size, c))
+            bounds = totals[sign] + half * slope
+            bounds = np.where(np.isnan(bounds), np.inf, bounds)
+            whole = np.isfinite(bounds)
+            heap += zip(
+                (-bounds).tolist(), [sign] * u.size, u.tolist(), half.tolist(), whole, strict=True
+            )
+        heapq.heapify(heap)
+        while -heap[0][0] > goal and work > 0:
+            cells: list[tuple[float, int, float, float]] = []
+            while heap and len(cells) < 2 * CELLS and -heap[0][0] > goal:
+                above, sign, middle, eta, whole = heapq.heappop(heap)
+                if whole:
+                    halves = (middle - eta / 2, middle + eta / 2)
+                    cells += [(-above, sign, place, eta / 2) for place in halves]
+                else:
+                    cells.append((-above, sign, middle, eta))
+            found, took = self._cells(cells, directions)
+            work -= took
+            for (above, sign, middle, eta), own in zip(cells, found.tolist(), strict=True):
+                heapq.heappush(heap, (-min(above, own), sign, middle, eta, True))
+        return -heap[0][0]
+
+    def _cells(
+        self, cells: list[tuple[float, int, float, float]], directions: Complex
+    ) -> tuple[Real, int]:
+        """Bounds of some cells, and the work they took."""
+        sign = np.array([cell[1] for cell in cells])
+        omega = np.exp([cell[2] for cell in cells])
+        eta = np.array([cell[3] for cell in cells])
+        c = directions[sign]
+        expansion = _expanded(self.parts, 1j * omega)
+        target = self.target.response(omega / (2 * np.pi))
+        with np.errstate(all="ignore"):
+            centre = (c * np.log(expansion.response / target)).real
+        slope = self._slope(expansion, omega, eta, c)
+        gentle = np.isfinite(slope)
+        tau = np.where(gentle[:, None], self._tolerance(0 * eta), self._tolerance(eta))
+        bound = centre + np.where(gentle, eta * slope, self._target_moves(omega, eta, c))
+        work = CELL_WORK * len(cells)
+        for group in self.groups:
+            own = np.zeros_like(tau)
+            own[:, group] = tau[:, group]
+            weak = max(group.size - STRONG, 0)
+            entries = max(group.size**3, 2 ** min(STRONG, group.size) * (4 + weak * weak))
+            step = at_once(entries)
+            for k in range(0, len(cells), step):
+                kept = slice(k, k + step)
+                part = Expansion(
+                    expansion.response[kept],
+                    expansion.denominator[kept],
+                    expansion.numerator[kept],
+                )
+                bound[kept] += enclose(part, part.response, c[kept], own[kept], strong=STRONG).bound
+            work += entries * len(cells)
+        return np.where(np.isnan(bound), np.inf, bound), work
+
+    def _tolerance(self, eta: Real) -> Real:
+        """Largest |D_j| in cells of half-width `eta` (N,), shape (N, variables)."""
+        low, high = self.parts.box
+        moves = self.parts.with_frequency
+        tau = np.zeros(moves.size)
+        tau[: low.size] = (high - low) / (high + low)
+        return np.where(moves, (1 + tau) * np.exp(eta)[:, None] - 1, tau)
+
+    def _slope(self, found: Expansion, omega: Real, eta: Real, direction: Complex) -> Real:
+        """The largest slope of the error along u in a cell, shape (N,); inf where the series may
+        diverge."""
+        moves = self.parts.with_frequency
+        tau, still = self._tolerance(eta), self._tolerance(0 * eta)
+        least = still + np.where(moves, eta[:, None], 0.0)
+        first, second, third = self._target_slopes(omega, eta)
+        with np.errstate(all="ignore"):
+            own, gains, rest = np.zeros(eta.size, complex), 0, np.zeros(eta.size)
+            for sign, matrix in ((1, found.numerator), (-1, found.denominator)):
+                diagonal = np.diagonal(matrix, axis1=1, axis2=2)
+                own = own + sign * diagonal[:, moves].sum(axis=1)
+                gain = -np.einsum("ncj,njc->nj", matrix[:, moves], matrix[:, :, moves])
+                gain = gain + np.where(moves, diagonal, 0.0)
+                gains = gains + sign * gain
+                rest += ((tau - least) * np.abs(gain)).sum(axis=1)
+                rest += _remainder(np.abs(matrix), tau, moves)
+            c = direction[:, None]
+            slope = np.abs((direction * (own - first)).real)
+            slope += (np.abs((c * gains).real) * still).sum(axis=1)
+            along = gains[:, moves].sum(axis=1) - second
+            slope += eta * np.abs((direction * along).real) + eta**2 / 2 * third + rest
+        return np.where(np.isnan(slope), np.inf, slope)
+
+    def _target_slopes(self, omega: Real, eta: Real) -> tuple[Complex, Complex, Real]:
+        """(ln T)' and (ln T)'' in the middle, |(ln T)'''| at most in the cell; shapes (N,)."""
+        s = 1j * omega
+        first, second = np.zeros(s.shape, complex), np.zeros(s.shape, complex)
+        third = np.zeros(s.shape)
+        for sign, roots in ((1, self.target.zeros), (-1, self.target.poles)):
+            for root in roots:
+                away = s - root
+                first += sign * s / away
+                second -= sign * s * root / away**2
+                near = np.maximum(np.abs(away) - omega * np.expm1(eta), 0.0)
+                far = omega * np.exp(eta)
+                with np.errstate(divide="ignore"):
+                    third += far * abs(root) * (far + abs(root)) / near**3
+        return first, second, third
+
+    def _target_moves(self, omega: Real, eta: Real, direction: Complex) -> Real:
+        """How far Re c ln T moves in the cell at most, shape (N,)."""
+        first, second, third = self._target_slopes(omega, eta)
+        with np.errstate(all="ignore"):
+            moved = np.abs((direction * first).real) * eta
+            moved += np.abs((direction * second).real) * eta**2 / 2 + third * eta**3 / 6
+        return np.asarray(np.where(np.isnan(moved), np.inf, moved))
+
+
+def _expanded(parts: Parts, s: Complex) -> Expansion:
+    """About the middle of the box."""
+    low, high = parts.box
+    return parts.expand(s, np.tile((low + high) / 2, (s.size, 1)), frequency=True)
+
+
+def _remainder(x: Real, tau: Real, moves: NDArray[np.bool_]) -> Real:
+    """sum over W of (1 + D_w) R_ww less its terms up to first order, at most; shape (N,)."""
+    z = x * tau[:, None, :]
+    hopeless = ~(z.sum(axis=2).max(axis=1) <= HOPELESS)
+    z = np.where(hopeless[:, None, None], 0.0, z)
+    inverse = np.linalg.inv(np.eye(x.shape[1]) - z)
+    diverges = hopeless | ~(inverse.sum(axis=2) > 0).all(axis=1)
+    once = np.einsum("nij,nji->ni", z @ inverse, x)
+    twice = np.einsum("nij,nji->ni", z @ z @ inverse, x)
+    rest = ((twice + tau * once)[:, moves]).sum(axis=1)
+    return np.where(diverges, math.inf, rest)
