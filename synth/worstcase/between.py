@@ -38,13 +38,19 @@ Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
 Index = NDArray[np.intp]
 
-STRONG = 12
-"""Parts whose corners are gone through in a cell."""
+STRONG = 8
+"""Parts whose corners are gone through in a cell: many cells do better than careful ones."""
+
+GOAL = 1.045
+"""A bound is good enough where it is at most this many times what some board reaches."""
 
 CELLS = 8
 """Cells taken up at once."""
 
-CELL_WORK = 4000
+ON_THE_AXIS = 1e-9
+"""Real part of a zero on the imaginary axis at most, against its size."""
+
+CELL_WORK = 20_000
 """Work of a cell beside its arrays."""
 
 
@@ -73,7 +79,7 @@ class Cover:
     @classmethod
     def of(cls, parts: Parts, target: TransferFunction, frequency: Real) -> Cover:
         """That of `parts` with its cells about `frequency` (F,) [rad/s]."""
-        s = 1j * frequency
+        s = np.asarray(1j * frequency, dtype=np.complex128)
         step = at_once(parts.with_frequency.size**2)
         chunks = [_expanded(parts, s[k : k + step]) for k in range(0, s.size, step)]
         start = Expansion(
@@ -84,8 +90,11 @@ class Cover:
         )
         return cls(parts, target, frequency, start, independent_groups(start))
 
-    def bound(self, totals: Real, directions: Complex, goal: float, work: int) -> float:
-        """No board has a larger error at any frequency from the first to the last.
+    def bound(
+        self, totals: Real, directions: Complex, *, reached: float, board: Real, work: int
+    ) -> float:
+        """No board has a larger error at any frequency from the first to the last; inf where the
+        target vanishes at one.
 
         Parameters
         ----------
@@ -93,11 +102,17 @@ class Cover:
             What no board passes at each frequency in each direction, shape (2, F).
         directions
             The two c of the error, shape (2,).
-        goal
-            A bound that is good enough.
+        reached, board
+            The largest error known, and the multiples (V,) that reach it.
         work
             In entries of arrays.
         """
+        if any(
+            abs(zero.real) <= ON_THE_AXIS * abs(zero)
+            and self.frequency[0] <= abs(zero) <= self.frequency[-1]
+            for zero in self.target.zeros
+        ):
+            return math.inf
         u = np.log(self.frequency)
         ends = np.concatenate([u[:1], (u[1:] + u[:-1]) / 2, u[-1:]])
         half = np.maximum(u - ends[:-1], ends[1:] - u)
@@ -106,12 +121,10 @@ class Cover:
             slope = self._slope(self.start, self.frequency, half, np.full(u.size, c))
             bounds = totals[sign] + half * slope
             bounds = np.where(np.isnan(bounds), np.inf, bounds)
-            whole = np.isfinite(bounds)
-            heap += zip(
-                (-bounds).tolist(), [sign] * u.size, u.tolist(), half.tolist(), whole, strict=True
-            )
+            own = zip((-bounds).tolist(), u.tolist(), half.tolist(), strict=True)
+            heap += [(above, sign, place, eta, above > -math.inf) for above, place, eta in own]
         heapq.heapify(heap)
-        while -heap[0][0] > goal and work > 0:
+        while -heap[0][0] > (goal := GOAL * reached) and work > 0:
             cells: list[tuple[float, int, float, float]] = []
             while heap and len(cells) < 2 * CELLS and -heap[0][0] > goal:
                 above, sign, middle, eta, whole = heapq.heappop(heap)
@@ -120,21 +133,22 @@ class Cover:
                     cells += [(-above, sign, place, eta / 2) for place in halves]
                 else:
                     cells.append((-above, sign, middle, eta))
-            found, took = self._cells(cells, directions)
-            work -= took
+            found, took, known = self._cells(cells, directions, board)
+            work, reached = work - took, max(reached, known)
             for (above, sign, middle, eta), own in zip(cells, found.tolist(), strict=True):
                 heapq.heappush(heap, (-min(above, own), sign, middle, eta, True))
         return -heap[0][0]
 
     def _cells(
-        self, cells: list[tuple[float, int, float, float]], directions: Complex
-    ) -> tuple[Real, int]:
-        """Bounds of some cells, and the work they took."""
+        self, cells: list[tuple[float, int, float, float]], directions: Complex, board: Real
+    ) -> tuple[Real, int, float]:
+        """Bounds of some cells, the work they took, and the largest error of `board` and of the
+        corners of first order in the middle of them."""
         sign = np.array([cell[1] for cell in cells])
         omega = np.exp([cell[2] for cell in cells])
         eta = np.array([cell[3] for cell in cells])
         c = directions[sign]
-        expansion = _expanded(self.parts, 1j * omega)
+        expansion = _expanded(self.parts, np.asarray(1j * omega, dtype=np.complex128))
         target = self.target.response(omega / (2 * np.pi))
         with np.errstate(all="ignore"):
             centre = (c * np.log(expansion.response / target)).real
@@ -158,7 +172,14 @@ class Cover:
                 )
                 bound[kept] += enclose(part, part.response, c[kept], own[kept], strong=STRONG).bound
             work += entries * len(cells)
-        return np.where(np.isnan(bound), np.inf, bound), work
+        low, high = self.parts.box
+        own = np.diagonal(expansion.numerator - expansion.denominator, axis1=1, axis2=2)
+        corners = np.where((c[:, None] * own[:, : low.size]).real > 0, high, low)
+        tried = np.vstack([corners, np.tile(board, (len(cells), 1))])
+        with np.errstate(all="ignore"):
+            response = self.parts.response(np.tile(1j * omega, 2), tried)
+            error = np.nan_to_num((np.tile(c, 2) * np.log(response / np.tile(target, 2))).real)
+        return np.where(np.isnan(bound), np.inf, bound), work, float(error.max())
 
     def _tolerance(self, eta: Real) -> Real:
         """Largest |D_j| in cells of half-width `eta` (N,), shape (N, variables)."""
@@ -176,7 +197,8 @@ class Cover:
         least = still + np.where(moves, eta[:, None], 0.0)
         first, second, third = self._target_slopes(omega, eta)
         with np.errstate(all="ignore"):
-            own, gains, rest = np.zeros(eta.size, complex), 0, np.zeros(eta.size)
+            own, rest = np.zeros(eta.size, complex), np.zeros(eta.size)
+            gains = np.zeros((eta.size, moves.size), complex)
             for sign, matrix in ((1, found.numerator), (-1, found.denominator)):
                 diagonal = np.diagonal(matrix, axis1=1, axis2=2)
                 own = own + sign * diagonal[:, moves].sum(axis=1)

@@ -205,7 +205,7 @@ def _best_angle(size: Real, under: Corners) -> Real:
             score = tried(angle)
             best = np.where(score < lowest, angle, best)
             lowest = np.minimum(lowest, score)
-    return best
+    return np.asarray(best)
 
 
 def _balanced(a: Complex) -> Complex:
@@ -216,8 +216,8 @@ def _balanced(a: Complex) -> Complex:
     for _ in range(BALANCING):
         scaled = size * scale[:, None, :] / scale[:, :, None]
         rows, columns = np.sqrt((scaled**2).sum(axis=2)), np.sqrt((scaled**2).sum(axis=1))
-        ratio = np.sqrt(rows / columns)
-        scale *= np.where(np.isfinite(ratio) & (ratio > 0), ratio, 1.0)
+        usual = (rows > 0) & (columns > 0)
+        scale *= np.sqrt(np.where(usual, rows, 1.0) / np.where(usual, columns, 1.0))
     return np.asarray(a * scale[:, None, :] / scale[:, :, None])
 
 

@@ -8,9 +8,9 @@ sign over the whole box are set to the end that is worse, otherwise the part tha
 doubt is cut in half.  The search is done once no sum is more than `CLOSE` above what is reached.
 When the work is used up, the highest sum still holds; it is just wider.
 
-Errors are taken at the given frequencies alone; between two of them the bound says nothing.  On
-the grid of `synth.grid`, eight points across the sharpest resonance, the worst boards of the
-scenarios show at most 0.7 % more between its points than on them.
+A bound is first that of the given frequencies alone.  Where the target is known between them as
+well, `synth.worstcase.between` extends it to the whole band.  Where a board is found on which the
+response vanishes or grows without limit (`synth.worstcase.vanishing`), there is none.
 """
 
 from __future__ import annotations
@@ -25,14 +25,14 @@ from numpy.typing import ArrayLike, NDArray
 
 from synth.circuit import Circuit
 from synth.errors import CircuitError
-from synth.evidence import DB_PER_NEPER, response_error
 from synth.transfer import TransferFunction
 from synth.worstcase.ascent import climb, follow
 from synth.worstcase.between import Cover
 from synth.worstcase.boxes import Pair, Start, Taken, at_once, divided
 from synth.worstcase.enclosure import enclose
 from synth.worstcase.expansion import Expansion, Parts
-from synth.worstcase.result import MEET, WorstCase, WorstError
+from synth.worstcase.outcome import without_tolerance, worst_error
+from synth.worstcase.result import MEET, WorstCase
 from synth.worstcase.vanishing import Vanishing, find_vanishing
 
 __all__ = ["DEFAULT_WORK", "worst_case"]
@@ -42,7 +42,8 @@ Complex = NDArray[np.complex128]
 Climb = Callable[..., tuple[Real, Real]]
 
 DEFAULT_WORK = 25_000_000
-"""Work for the bound of each of magnitude and phase, in entries of arrays: five seconds at most."""
+"""Work for the bound of each of magnitude and phase, in entries of arrays, and as much again for
+the band between the frequencies: some two seconds each."""
 
 BOX_WORK = 600
 """Work of a box beside its arrays."""
@@ -71,9 +72,6 @@ RETURNS = 4
 
 NEAR = (-4, -2, -1, 0, 1, 2, 4)
 """Frequencies beside the worst one that are tried as well, in steps of the grid."""
-
-SHARE = 3
-"""The work between the frequencies is this part of that at them."""
 
 SUSPICIOUS = 2.0
 """An error reached [Np, rad] from which its frequency is searched for a board on which the
@@ -124,7 +122,7 @@ def worst_case(
         )
     parts = Parts.of(circuit)
     if not parts.active.size:
-        return _without_tolerance(parts, wanted, frequency)
+        return without_tolerance(parts, wanted, frequency)
     start = Start.of(parts, 2j * np.pi * frequency)
     searches = {unit: _Search(start, wanted, unit) for unit in DIRECTIONS}
     for search in searches.values():
@@ -137,8 +135,8 @@ def worst_case(
         if vanishing is not None:
             search.note_vanishing(vanishing)
         bound = search.bound(work)
-        everywhere = math.inf if cover is None else search.between(cover, bound, work // SHARE)
-        found[unit] = _worst_error(search, bound, everywhere, frequency)
+        everywhere = math.inf if cover is None else search.between(cover, bound, work)
+        found[unit] = worst_error(parts, search, bound, everywhere, frequency)
     boxes = sum(search.enclosed for search in searches.values())
     return WorstCase(
         magnitude_db=found["dB"],
@@ -283,8 +281,10 @@ class _Search:
             return math.inf
         totals = np.array([pair.total for pair in self._pairs]).reshape(2, -1)
         c = np.array(DIRECTIONS[self.unit], dtype=complex)
-        goal = (1 + MEET - CLOSE / 4) * self.reached
-        found = cover.bound(totals, c, goal, work)
+        # A phase error is taken modulo a turn: half a turn is always a bound.
+        if self.unit == "deg" and (1 + MEET) * self.reached >= math.pi:
+            return math.pi
+        found = cover.bound(totals, c, reached=self.reached, board=self.board, work=work)
         return max(min(found, math.pi if self.unit == "deg" else math.inf), bound)
 
     def _enclose_whole(self) -> None:
@@ -377,60 +377,3 @@ def _apart(likely: Real, place: NDArray[np.intp]) -> NDArray[np.intp]:
         if len(chosen) == CLIMBS:
             break
     return np.array(chosen, dtype=np.intp)
-
-
-def _without_tolerance(parts: Parts, target: Complex, frequency: Real) -> WorstCase:
-    """Of a circuit with one board only."""
-    response = parts.response(
-        np.asarray(2j * np.pi * frequency, dtype=np.complex128), np.empty((frequency.size, 0))
-    )
-    error = response_error(response, target)
-
-    def largest(unit: str, signed: Real) -> WorstError:
-        place = int(np.argmax(np.abs(signed)))
-        return WorstError(
-            unit=unit,
-            reached=abs(float(signed[place])),
-            sign=1 if signed[place] >= 0 else -1,
-            bound=abs(float(signed[place])),
-            frequency_hz=float(frequency[place]),
-            values={},
-            low=(),
-            high=(),
-            between=(),
-        )
-
-    return WorstCase(
-        magnitude_db=largest("dB", error.magnitude_db),
-        phase_deg=largest("deg", error.phase_deg),
-        frequencies=frequency.size,
-        boxes=0,
-    )
-
-
-def _worst_error(search: _Search, bound: float, everywhere: float, frequency: Real) -> WorstError:
-    parts, (low, high) = search.start.parts, search.start.box
-    scale = DB_PER_NEPER if search.unit == "dB" else 180 / np.pi
-    columns = parts.varied
-    refs = [parts.structure.refs[k] for k in columns]
-    values, lowest, highest = (parts.values(m)[columns] for m in (search.board, low, high))
-    smallest, largest = np.minimum(lowest, highest), np.maximum(lowest, highest)
-    at_low = np.isclose(values, smallest, rtol=1e-9, atol=0.0)
-    at_high = np.isclose(values, largest, rtol=1e-9, atol=0.0)
-
-    def named(which: NDArray[np.bool_]) -> tuple[str, ...]:
-        return tuple(ref for ref, is_so in zip(refs, which, strict=True) if is_so)
-
-    return WorstError(
-        unit=search.unit,
-        reached=float(scale * max(search.reached, 0.0)),
-        sign=1 if search.sign == 0 else -1,
-        bound=float(scale * max(bound, 0.0)) if math.isfinite(bound) else None,
-        everywhere=float(scale * max(everywhere, 0.0)) if math.isfinite(everywhere) else None,
-        unlimited=search.unlimited,
-        frequency_hz=float(frequency[search.place]),
-        values=dict(zip(refs, values.tolist(), strict=True)),
-        low=named(at_low),
-        high=named(at_high),
-        between=named(~at_low & ~at_high),
-    )
