@@ -22,6 +22,7 @@ from __future__ import annotations
 import heapq
 import math
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -66,6 +67,10 @@ class Cover:
         T(s).
     frequency
         Frequencies at which errors are judged [rad/s], rising, shape (F,).
+    half
+        Half the width of their cells in u, shape (F,).
+    start
+        H about the middle of the box at `frequency`.
     groups
         Of the variables with those of frequency appended.
     """
@@ -73,6 +78,7 @@ class Cover:
     parts: Parts
     target: TransferFunction
     frequency: Real
+    half: Real
     start: Expansion
     groups: tuple[Index, ...]
 
@@ -88,7 +94,15 @@ class Cover:
                 for name in ("response", "denominator", "numerator")
             )
         )
-        return cls(parts, target, frequency, start, independent_groups(start))
+        u = np.log(frequency)
+        ends = np.concatenate([u[:1], (u[1:] + u[:-1]) / 2, u[-1:]])
+        half = np.maximum(u - ends[:-1], ends[1:] - u)
+        return cls(parts, target, frequency, half, start, independent_groups(start))
+
+    @cached_property
+    def terms(self) -> _Terms:
+        """Of the cells about `frequency`."""
+        return self._terms(self.start, self.frequency, self.half)
 
     def bound(
         self, totals: Real, directions: Complex, *, reached: float, board: Real, work: int
@@ -113,12 +127,10 @@ class Cover:
             for zero in self.target.zeros
         ):
             return math.inf
-        u = np.log(self.frequency)
-        ends = np.concatenate([u[:1], (u[1:] + u[:-1]) / 2, u[-1:]])
-        half = np.maximum(u - ends[:-1], ends[1:] - u)
+        u, half = np.log(self.frequency), self.half
         heap: list[tuple[float, int, float, float, bool]] = []
         for sign, c in enumerate(directions):
-            slope = self._slope(self.start, self.frequency, half, np.full(u.size, c))
+            slope = self.terms.slope(np.full(u.size, c))
             bounds = totals[sign] + half * slope
             bounds = np.where(np.isnan(bounds), np.inf, bounds)
             own = zip((-bounds).tolist(), u.tolist(), half.tolist(), strict=True)
@@ -152,7 +164,7 @@ class Cover:
         target = self.target.response(omega / (2 * np.pi))
         with np.errstate(all="ignore"):
             centre = (c * np.log(expansion.response / target)).real
-        slope = self._slope(expansion, omega, eta, c)
+        slope = self._terms(expansion, omega, eta).slope(c)
         gentle = np.isfinite(slope)
         tau = np.where(gentle[:, None], self._tolerance(0 * eta), self._tolerance(eta))
         bound = centre + np.where(gentle, eta * slope, self._target_moves(omega, eta, c))
@@ -189,15 +201,14 @@ class Cover:
         tau[: low.size] = (high - low) / (high + low)
         return np.where(moves, (1 + tau) * np.exp(eta)[:, None] - 1, tau)
 
-    def _slope(self, found: Expansion, omega: Real, eta: Real, direction: Complex) -> Real:
-        """The largest slope of the error along u in a cell, shape (N,); inf where the series may
-        diverge."""
+    def _terms(self, found: Expansion, omega: Real, eta: Real) -> _Terms:
+        """The slope of ln(H/T) along u in some cells, term by term."""
         moves = self.parts.with_frequency
         tau, still = self._tolerance(eta), self._tolerance(0 * eta)
         least = still + np.where(moves, eta[:, None], 0.0)
         first, second, third = self._target_slopes(omega, eta)
         with np.errstate(all="ignore"):
-            own, rest = np.zeros(eta.size, complex), np.zeros(eta.size)
+            own, rest = -first, eta**2 / 2 * third
             gains = np.zeros((eta.size, moves.size), complex)
             for sign, matrix in ((1, found.numerator), (-1, found.denominator)):
                 diagonal = np.diagonal(matrix, axis1=1, axis2=2)
@@ -205,14 +216,10 @@ class Cover:
                 gain = -np.einsum("ncj,njc->nj", matrix[:, moves], matrix[:, :, moves])
                 gain = gain + np.where(moves, diagonal, 0.0)
                 gains = gains + sign * gain
-                rest += ((tau - least) * np.abs(gain)).sum(axis=1)
-                rest += _remainder(np.abs(matrix), tau, moves)
-            c = direction[:, None]
-            slope = np.abs((direction * (own - first)).real)
-            slope += (np.abs((c * gains).real) * still).sum(axis=1)
+                rest = rest + ((tau - least) * np.abs(gain)).sum(axis=1)
+                rest = rest + _remainder(np.abs(matrix), tau, moves)
             along = gains[:, moves].sum(axis=1) - second
-            slope += eta * np.abs((direction * along).real) + eta**2 / 2 * third + rest
-        return np.where(np.isnan(slope), np.inf, slope)
+        return _Terms(own, np.asarray(gains * still, dtype=np.complex128), eta * along, rest)
 
     def _target_slopes(self, omega: Real, eta: Real) -> tuple[Complex, Complex, Real]:
         """(ln T)' and (ln T)'' in the middle, |(ln T)'''| at most in the cell; shapes (N,)."""
@@ -237,6 +244,24 @@ class Cover:
             moved = np.abs((direction * first).real) * eta
             moved += np.abs((direction * second).real) * eta**2 / 2 + third * eta**3 / 6
         return np.asarray(np.where(np.isnan(moved), np.inf, moved))
+
+
+@dataclass(frozen=True, eq=False)
+class _Terms:
+    """(ln(H/T))' in the middle of N cells (N,), what it moves by with each part (N, variables) and
+    with frequency (N,), and beyond that at most (N,), inf where the series may diverge."""
+
+    own: Complex
+    parts: Complex
+    along: Complex
+    rest: Real
+
+    def slope(self, direction: Complex) -> Real:
+        """The largest slope of the error anywhere in a cell, shape (N,)."""
+        with np.errstate(all="ignore"):
+            slope = np.abs((direction * self.own).real) + np.abs((direction * self.along).real)
+            slope += np.abs((direction[:, None] * self.parts).real).sum(axis=1) + self.rest
+        return np.asarray(np.where(np.isnan(slope), np.inf, slope))
 
 
 def _expanded(parts: Parts, s: Complex) -> Expansion:
