@@ -42,10 +42,12 @@ Complex = NDArray[np.complex128]
 Climb = Callable[..., tuple[Real, Real]]
 
 DEFAULT_WORK = 25_000_000
-"""Work for the bound of each of magnitude and phase, in entries of arrays, and as much again for
-the band between the frequencies: some two seconds each."""
+"""Work for the bound of each of magnitude and phase, in entries of arrays: some three seconds."""
 
-BOX_WORK = 600
+BAND_SHARE = 0.6
+"""Work for the band between the frequencies, against that at them, beside what that leaves."""
+
+BOX_WORK = 10_000
 """Work of a box beside its arrays."""
 
 CLOSE = 0.02
@@ -135,7 +137,11 @@ def worst_case(
         if vanishing is not None:
             search.note_vanishing(vanishing)
         bound = search.bound(work)
-        everywhere = math.inf if cover is None else search.between(cover, bound, work)
+        everywhere = (
+            math.inf
+            if cover is None
+            else search.between(cover, bound, search.spare + int(BAND_SHARE * work))
+        )
         found[unit] = worst_error(parts, search, bound, everywhere, frequency)
     boxes = sum(search.enclosed for search in searches.values())
     return WorstCase(
@@ -158,6 +164,7 @@ class _Search:
     place: int = 0
     sign: int = 0
     enclosed: int = 0
+    spare: int = 0
     unlimited: str = ""
     _pairs: list[Pair] = field(default_factory=list)
 
@@ -271,6 +278,7 @@ class _Search:
             work -= self._enclose([self._pairs[k] for k in batch])
             for k in batch:
                 heapq.heappush(ranked, (-self._pairs[k].total, k))
+        self.spare = max(work, 0)
         if self.reached > before:
             self._return_to_worst(follow)
         return min(max(self.reached, -ranked[0][0]), most)
