@@ -84,6 +84,8 @@ def _worst_error(error: WorstError) -> dict[str, object]:
     return {
         "reached": error.reached,
         "bound": error.bound,
+        "everywhere": error.everywhere,
+        "unlimited": error.unlimited or None,
         "meet": error.meets,
         "sign": error.sign,
         "frequency_hz": error.frequency_hz,

@@ -15,9 +15,14 @@ Row = dict[str, object]
 
 _UNITS = {"resistor": "Ω", "capacitor": "F"}
 
+_LIMITLESS = {
+    "pole": "within tolerance a pole reaches the imaginary axis",
+    "zero": "within tolerance the response vanishes",
+}
+
 
 def worst_rows(found: WorstCase, design: Design) -> list[Row]:
-    """Reached, bound and limit of magnitude and phase."""
+    """Reached, both bounds and limit of magnitude and phase."""
     accept = design.job.accept
     rows: list[Row] = []
     for name, error, limit in (
@@ -27,8 +32,9 @@ def worst_rows(found: WorstCase, design: Design) -> list[Row]:
         rows.append(
             {
                 "name": f"{name} error, {error.unit}",
-                "reached": decibel(error.reached),
-                "bound": _bound(error),
+                "reached": "no limit" if error.unlimited else decibel(error.reached),
+                "bound": _rounded_up(error.bound),
+                "everywhere": _rounded_up(error.everywhere),
                 "limit": stated(limit, error.unit),
                 "at": quantity(error.frequency_hz, "Hz"),
             }
@@ -50,6 +56,11 @@ def worst_sentence(name: str, error: WorstError, circuit: Circuit) -> str:
     if not where:
         return f"No part has a tolerance that could move the {name}."
     sign = "+" if error.sign > 0 else "−"
+    if error.unlimited:
+        return (
+            f"The {name} error has no limit, which is proven: {_LIMITLESS[error.unlimited]} near "
+            f"{quantity(error.frequency_hz, 'Hz')}, on a board with {'; '.join(where)}."
+        )
     return (
         f"The {name} error of {sign}{decibel(error.reached)} {error.unit} at "
         f"{quantity(error.frequency_hz, 'Hz')} is that of the board with {'; '.join(where)}."
@@ -70,22 +81,26 @@ def shown(design: Design) -> dict[str, object]:
     return {
         "rows": worst_rows(found, design),
         "lines": [worst_sentence(name, error, design.circuit) for name, error in errors],
-        "wide": [name for name, error in errors if not error.meets],
+        "wide": [name for name, error in errors if not error.meets and not error.unlimited],
         "frequencies": found.frequencies,
     }
 
 
 def _range(error: WorstError) -> str:
     reached = f"{decibel(error.reached)} {error.unit}"
-    if error.bound is None:
-        return f"{reached} or more"
-    return f"{reached} (none above {_bound(error)})"
+    if error.unlimited:
+        return f"{error.unit} without limit ({_LIMITLESS[error.unlimited]})"
+    if error.everywhere is not None:
+        return f"{reached} (none above {_rounded_up(error.everywhere)} in the whole band)"
+    if error.bound is not None:
+        return f"{reached} (none above {_rounded_up(error.bound)} at the judged frequencies)"
+    return f"{reached} or more"
 
 
-def _bound(error: WorstError) -> str:
-    """The bound to the digits of an error, rounded up."""
-    if error.bound is None:
+def _rounded_up(bound: float | None) -> str:
+    """A bound to the digits of an error."""
+    if bound is None:
         return NONE
-    step = 10.0 ** (math.floor(math.log10(error.bound)) - 2) if error.bound > 0 else 1.0
+    step = 10.0 ** (math.floor(math.log10(bound)) - 2) if bound > 0 else 1.0
     # What rounding alone lifted above a step is not lifted to the next.
-    return decibel(step * math.ceil(error.bound / step - 1e-6))
+    return decibel(step * math.ceil(bound / step - 1e-6))

@@ -13,7 +13,7 @@ from synth.worstcase.enclosure import Enclosure
 from synth.worstcase.expansion import Expansion, Parts
 from synth.worstcase.groups import independent_groups
 
-__all__ = ["Box", "Pair", "Start", "at_once", "divided"]
+__all__ = ["Box", "Pair", "Start", "Taken", "at_once", "divided"]
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -22,6 +22,18 @@ Box = tuple[Real, Real]
 
 ENTRIES = 200_000
 """Entries of the largest array of a batch."""
+
+
+@dataclass(frozen=True, eq=False)
+class Taken:
+    """A box of a group taken up: no board of it has a larger error than `bound`, `level` is the
+    care with which it is to be looked at next."""
+
+    group: int
+    bound: float
+    low: Real
+    high: Real
+    level: int
 
 
 @dataclass(frozen=True, eq=False)
@@ -75,7 +87,9 @@ class Pair:
         self.best = [0.0] * len(bounds)
         self.boards = [centre] * len(bounds)
         self._made = 0
-        self._open: list[list[tuple[float, int, Box | None]]] = [[(-b, 0, None)] for b in bounds]
+        self._open: list[list[tuple[float, int, Box | None, int]]] = [
+            [(-b, 0, None, 0)] for b in bounds
+        ]
         self._start = start
 
     @property
@@ -84,17 +98,18 @@ class Pair:
         found = self.offset + sum(-boxes[0][0] for boxes in self._open)
         return math.inf if math.isnan(found) else found
 
-    def take(self) -> tuple[int, float, Box]:
-        """Group, bound and box of the most doubtful one, out of the open ones."""
+    def take(self) -> Taken:
+        """The most doubtful box, out of the open ones."""
         gaps = [-boxes[0][0] - best for boxes, best in zip(self._open, self.best, strict=True)]
         group = int(np.argmax(gaps))
-        bound, _, box = heapq.heappop(self._open[group])
-        return group, -bound, box if box is not None else self._start.box_of(group)
+        bound, _, box, level = heapq.heappop(self._open[group])
+        low, high = box if box is not None else self._start.box_of(group)
+        return Taken(group, -bound, low, high, level)
 
-    def put(self, group: int, bound: float, box: Box) -> None:
-        """Add a box of a group."""
+    def put(self, group: int, bound: float, box: Box, level: int) -> None:
+        """Add a box of a group, to be looked at with so much care."""
         self._made += 1
-        heapq.heappush(self._open[group], (-bound, self._made, box))
+        heapq.heappush(self._open[group], (-bound, self._made, box, level))
 
     def note(self, group: int, gain: float, board: Real) -> None:
         """A board, and what the parts of a group add to the error on it."""

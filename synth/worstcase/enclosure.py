@@ -20,13 +20,8 @@ The slope along part k, times tau_k, is g_k within sum_j |B_kj| + G_k + [Z^4 (I 
 numerator and denominator: beyond that the error has its extreme at an end of this part,
 whatever the others are.
 
-Beside that stand the corners of the box themselves, where those are not too many.  Numerator n
-and denominator d are multi-affine, so at every board (n, d) is one convex combination of their
-values (n_v, d_v) at the corners (Zadeh and Desoer 1963, "Linear System Theory", from memory).
-For any angle p at which all Re(d_v e^-jp) are positive, |n|/|d| <= |n|/Re(d e^-jp), a convex
-function over a linear one, so at most its largest value at a corner; the best of some angles is
-taken.  The phase of n and of d is extreme at corners as long as a half-plane holds them all.
-This needs no series to converge: a sharp resonance that sweeps past is bounded at once.
+Beside that stand the corners of the box (`synth.worstcase.corners`): a sharp resonance that sweeps
+past, where no series converges, is bounded by them.
 
 The bounds hold up to rounding, for which `ROUNDING` is added.
 """
@@ -38,6 +33,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from synth.worstcase import corners
 from synth.worstcase.expansion import Expansion
 
 __all__ = ["Enclosure", "enclose"]
@@ -48,14 +44,11 @@ Complex = NDArray[np.complex128]
 # Far above the rounding of a solve of some twenty unknowns, far below what anyone reads.
 ROUNDING = 1e-9
 
+# What a part adds to the doubt for its mere effect, where the error does not turn round with it.
+UNTURNED = 1e-3
+
 # Sum of a row of Z above which its inverse is not even looked at.
 HOPELESS = 1e3
-
-# Most varying parts whose corners are gone through, 2^12 of them.
-MOST_CORNERS = 12
-
-# Angles tried for the half-plane that holds the denominator.
-ANGLES = np.linspace(-1.5, 1.5, 25)
 
 
 @dataclass(frozen=True, eq=False)
@@ -74,9 +67,11 @@ class Enclosure:
     best
         Error of the worst corner, shape (N,); -inf where corners were not gone through.
     corner
-        The end each part takes there, +-1, shape (N, V).
+        The end each part takes there, +-1, or 0 for the middle, shape (N, V).
     doubt
         What each part adds to the distance between the bound and the corner, shape (N, V).
+    weak
+        The part of the bound that more strong parts may take away, shape (N,).
     """
 
     centre: Real
@@ -85,6 +80,7 @@ class Enclosure:
     slope: Real
     corner: Real
     doubt: Real
+    weak: Real
 
 
 def enclose(
@@ -94,7 +90,7 @@ def enclose(
     tau: Real,
     *,
     cubic: bool = True,
-    corners: bool = True,
+    strong: int = 0,
 ) -> Enclosure:
     """Enclose the error over boxes about the boards of `expansion`.
 
@@ -107,18 +103,20 @@ def enclose(
     cubic
         Whether the third order is taken by itself; without, it is part of the tail: quicker,
         wider.
-    corners
-        Whether the corners of the box are gone through.
+    strong
+        Of how many parts at most all corners are gone through; none without.
     """
     with np.errstate(all="ignore"):
         centre = (direction * np.log(expansion.response / target)).real
-        return _enclosed(expansion, centre, direction, tau, cubic=cubic, corners=corners)
+        return _enclosed(expansion, centre, direction, tau, cubic=cubic, strong=strong)
 
 
 def _enclosed(
-    expansion: Expansion, centre: Real, direction: Complex, tau: Real, *, cubic: bool, corners: bool
+    expansion: Expansion, centre: Real, direction: Complex, tau: Real, *, cubic: bool, strong: int
 ) -> Enclosure:
-    order = np.argsort(tau <= 0, axis=1, kind="stable")
+    effect = np.abs(_diagonal(expansion.denominator)) + np.abs(_diagonal(expansion.numerator))
+    effect = np.where(tau > 0, np.nan_to_num(effect * tau, nan=1.0), -1.0)
+    order = np.argsort(-effect, axis=1, kind="stable")
     # Parts at a fixed value take no part in the arithmetic.
     order = order[:, : max(1, int((tau > 0).sum(axis=1).max()))]
     width = np.take_along_axis(tau, order, axis=1)
@@ -136,26 +134,40 @@ def _enclosed(
     series = np.minimum(best + leaving.sum(axis=1), spread) + rest
     series = np.where(diverges | np.isnan(series), np.inf, series)
     spread = np.where(diverges | np.isnan(spread), np.inf, spread + rest)
-    reached = np.full(centre.shape, -np.inf)
-    if corners and width.shape[1] <= MOST_CORNERS:
-        up, around, reached, corner = _at_corners(x, y, direction)
-        series, spread = np.minimum(series, up), np.minimum(spread, around)
+    reached, weak = np.full(centre.shape, -np.inf), np.zeros(centre.shape)
+    by_corners, turns = diverges, np.zeros_like(width)
+    effect = np.take_along_axis(effect, order, axis=1)
+    if strong:
+        found = _by_corners(x, y, direction, min(strong, width.shape[1]))
+        weak = np.where(found.up < series, found.weak, 0.0)
+        weak = np.where(np.isinf(series) & np.isinf(found.up), np.inf, weak)
+        by_corners = diverges | (found.up < series)
+        series, spread = np.minimum(series, found.up), np.minimum(spread, found.around)
+        reached, corner, turns = found.best, found.corner, found.turns
     bound = centre + series
     # The phase counts modulo a turn: a box that may reach beyond half a turn is not bounded.
     wraps = (direction.imag != 0) & ~(np.abs(centre) + spread <= np.pi)
     bound = np.where(wraps | np.isnan(bound), np.inf, bound)
     unsure = np.abs(second).sum(axis=2) + third + tail
     slope = np.where((np.abs(first) > unsure) & ~diverges[:, None], np.sign(first), 0.0)
-    doubt = np.where(
-        diverges[:, None],
-        np.abs(_diagonal(x)) + np.abs(_diagonal(y)),
-        leaving + third / 3 + tail / 4,
-    )
+    doubt = np.where(by_corners[:, None], turns + UNTURNED * effect, leaving + third / 3 + tail / 4)
     doubt = np.where(width > 0, np.nan_to_num(doubt, nan=1.0, posinf=1e300), -1.0)
-    out = [np.zeros_like(tau), np.ones_like(tau), np.full_like(tau, -1.0)]
-    for into, found in zip(out, (slope, corner, doubt), strict=True):
-        np.put_along_axis(into, order, found, axis=1)
-    return Enclosure(centre, bound + ROUNDING * (1 + np.abs(bound)), centre + reached, *out)
+    bound += ROUNDING * (1 + np.abs(bound))
+
+    def spread_out(own: Real, fixed: float) -> Real:
+        into = np.full_like(tau, fixed)
+        np.put_along_axis(into, order, own, axis=1)
+        return into
+
+    return Enclosure(
+        centre=centre,
+        bound=bound,
+        best=centre + reached,
+        slope=spread_out(slope, 0.0),
+        corner=spread_out(corner, 0.0),
+        doubt=spread_out(doubt, -1.0),
+        weak=weak,
+    )
 
 
 def _picked(matrix: Complex, order: NDArray[np.intp]) -> Complex:
@@ -214,49 +226,11 @@ def _tail(x: Real, y: Real, power: int) -> tuple[Real, NDArray[np.bool_]]:
     return np.where(diverges[:, None], np.inf, total), diverges
 
 
-def _at_corners(x: Complex, y: Complex, direction: Complex) -> tuple[Real, Real, Real, Real]:
-    """Largest change of the error from the centre, and of its size either way for the phase,
-    shapes (N,), by the corners of the box; inf where no half-plane was found.  And the change at
-    the worst corner, (N,), with its ends, (N, V)."""
-    d, n = _corner_values(x), _corner_values(y)
-    magnitude, falls = direction.imag == 0, direction.real < 0
-    over, under = np.where(falls[:, None], d, n), np.where(falls[:, None], n, d)
-    size = np.abs(over)
-    least = np.full(d.shape[0], np.inf)
-    for angle in ANGLES:
-        along = (under * np.exp(-1j * angle)).real
-        ratio = np.where((along > 0).all(axis=1), (size / along).max(axis=1), np.inf)
-        least = np.fmin(least, ratio)
-    turned = direction.imag[:, None] * np.stack([-np.angle(n), np.angle(d)])
+def _by_corners(x: Complex, y: Complex, direction: Complex, strong: int) -> corners.Range:
+    """By the corners of the `strong` parts that stand first, errors from the centre."""
+    d, n = corners.Corners.of(x, strong), corners.Corners.of(y, strong)
+    parts = x.shape[1]
     # Re(c z) is -Im(c) Im(z) for an imaginary c.
-    high, low = turned.max(axis=2).sum(axis=0), turned.min(axis=2).sum(axis=0)
-    held = _in_half_plane(n) & _in_half_plane(d)
-    up = np.where(magnitude, np.log(least), np.where(held, high, np.inf))
-    around = np.where(magnitude | ~held, np.inf, np.maximum(np.abs(high), np.abs(low)))
-    change = np.where(magnitude[:, None], np.log(size / np.abs(under)), turned.sum(axis=0))
-    change = np.where(np.isfinite(change) & (magnitude | held)[:, None], change, -np.inf)
-    worst = np.argmax(change, axis=1)
-    bits = worst[:, None] >> np.arange(x.shape[1])[::-1] & 1
-    return np.where(np.isnan(up), np.inf, up), around, change.max(axis=1), 2.0 * bits - 1
-
-
-def _in_half_plane(values: Complex) -> NDArray[np.bool_]:
-    """Whether the phases of all values, one of them 1 in the middle, span less than half a turn."""
-    phase = np.angle(values)
-    spans = phase.max(axis=1) - phase.min(axis=1)
-    return np.asarray(np.isfinite(values).all(axis=1) & (spans < np.pi))
-
-
-def _corner_values(a: Complex) -> Complex:
-    """det(I + A diag(e)) at all e of -1 and 1, shape (N, 2^V), one part after the other: what is
-    left of A after eliminating part 0 has the same form, A_ij - A_i0 e A_0j / (1 + A_00 e)."""
-    values = np.ones((a.shape[0], 1), dtype=complex)
-    left = a[:, None]
-    ends = np.array([-1.0, 1.0])
-    while left.shape[2]:
-        pivot = 1 + left[:, :, None, 0, 0] * ends
-        values = (values[:, :, None] * pivot).reshape(a.shape[0], -1)
-        scaled = left[:, :, 1:, 0, None] * left[:, :, 0, None, 1:]
-        rest = left[:, :, None, 1:, 1:] - scaled[:, :, None] * (ends / pivot)[..., None, None]
-        left = rest.reshape(a.shape[0], values.shape[1], *rest.shape[3:])
-    return values
+    turns, falls = direction.imag != 0, direction.real - direction.imag < 0
+    over, under = n.or_else(d, falls), d.or_else(n, falls)
+    return (corners.phase if turns.all() else corners.magnitude)(over, under, parts)

@@ -136,41 +136,63 @@ class Parts:
         a = dense.inverse_gains(s, own.gain_bandwidth, own.open_loop_gain)
         return dense.solve_samples(own, y, a)[:, own.output]
 
-    def expand(self, s: Complex, multiples: Real) -> Expansion:
+    @property
+    def others(self) -> Index:
+        """Columns of the capacitors that are no variable, shape (O,)."""
+        return np.setdiff1d(np.flatnonzero(~self.structure.is_resistor), self.active)
+
+    @property
+    def with_frequency(self) -> NDArray[np.bool_]:
+        """Which variables grow in proportion to frequency where `expand` appends those that only
+        frequency moves, shape (V + O + U,)."""
+        extra = np.ones(self.others.size + len(self.structure.driver), dtype=bool)
+        return np.append(~self.structure.is_resistor[self.active], extra)
+
+    def expand(self, s: Complex, multiples: Real, *, frequency: bool = False) -> Expansion:
         """About N boards, each at its own `s` (N,) [rad/s], `multiples` (N, V).
+
+        With `frequency`, the capacitors that are no variable and s / (2 pi GBW) of every op-amp
+        are appended to the variables, O and U of them.
 
         Raises
         ------
         NumericalError
             The equations are singular at a sample.
         """
-        own, count, parts = self.structure, s.size, self.active.size
+        own, count = self.structure, s.size
         n = own.size
+        columns = np.append(self.active, self.others) if frequency else self.active
+        driven = np.array(list(own.driver) if frequency else [], dtype=np.intp)
+        passives = columns.size
+        parts = passives + driven.size
         y = dense.admittances(own, s, np.broadcast_to(own.values, (count, own.values.size))).copy()
         y[:, self.active] *= multiples
         a = dense.inverse_gains(s, own.gain_bandwidth, own.open_loop_gain)
         matrix = dense.equations(own, y, a)
         right = np.empty((count, n, parts + 1), dtype=complex)
-        right[:, :, :parts] = self._columns * y[:, None, self.active]
+        right[:, :, :passives] = self._columns(columns) * y[:, None, columns]
+        right[:, :, passives:] = 0.0
+        which = [own.driver[int(net)] for net in driven]
+        gains = s[:, None] / (2 * np.pi * own.gain_bandwidth[which])
+        right[:, driven, passives + np.arange(driven.size)] = -gains
         right[:, :, parts] = -matrix[:, :, n]
         solved = np.zeros((count, n + 2, parts + 1), dtype=complex)
         solved[:, :n] = dense.solve_rows(matrix[:, :, :n], right)
         # The input holds 1 V whatever the parts are; ground stays 0.
         solved[:, n, parts] = 1.0
-        p, q = own.ends[self.active, 0], own.ends[self.active, 1]
-        across = solved[:, p] - solved[:, q]
+        p, q = own.ends[columns, 0], own.ends[columns, 1]
+        across = np.concatenate([solved[:, p] - solved[:, q], solved[:, driven]], axis=1)
         x, beta = across[:, :, :parts], across[:, :, parts]
         alpha, response = solved[:, own.output, :parts], solved[:, own.output, parts]
         with np.errstate(divide="ignore", invalid="ignore"):
             numerator = x - beta[:, :, None] * (alpha / response[:, None])[:, None, :]
         return Expansion(response, x, np.asarray(numerator, dtype=np.complex128))
 
-    @property
-    def _columns(self) -> Real:
-        """u of every part on the rows of Kirchhoff's current law, shape (n, V)."""
+    def _columns(self, parts: Index) -> Real:
+        """u of some parts on the rows of Kirchhoff's current law, shape (n, parts)."""
         own = self.structure
-        columns = np.zeros((own.size + 2, self.active.size))
-        ends, each = own.ends[self.active], np.arange(self.active.size)
+        columns = np.zeros((own.size + 2, parts.size))
+        ends, each = own.ends[parts], np.arange(parts.size)
         np.add.at(columns, (ends[:, 0], each), 1.0)
         np.add.at(columns, (ends[:, 1], each), -1.0)
         columns[list(own.driver)] = 0.0

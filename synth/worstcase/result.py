@@ -23,7 +23,14 @@ class WorstError:
     sign
         Of that error, +1 or -1.
     bound
-        No board has an error of larger size; None where no bound was found.
+        No board has an error of larger size; None where no bound was found or none exists.
+    everywhere
+        The same at every frequency from the lowest to the highest, those between the ones at
+        which errors are taken included; None where no such bound was found or none exists.
+    unlimited
+        Empty, or why no bound exists, which is then proven: ``"pole"``, the response grows without
+        limit towards a board within tolerance, at one of the frequencies; ``"zero"``, it vanishes
+        towards one.
     frequency_hz
         Where it is reached [Hz].
     values
@@ -42,12 +49,18 @@ class WorstError:
     low: tuple[str, ...]
     high: tuple[str, ...]
     between: tuple[str, ...]
+    everywhere: float | None = None
+    unlimited: str = ""
 
     def __post_init__(self) -> None:
         if self.sign not in (1, -1) or not self.reached >= 0:
             raise ValueError(f"got {self.reached} of sign {self.sign}, expected a size and a sign")
         if self.bound is not None and not self.reached <= self.bound:
             raise ValueError(f"got the bound {self.bound}, expected {self.reached} or more")
+        if self.unlimited not in ("", "pole", "zero") or (
+            self.unlimited and self.bound is not None
+        ):
+            raise ValueError(f"got {self.unlimited!r} and the bound {self.bound}, expected one")
 
     @property
     def meets(self) -> bool:

@@ -8,9 +8,9 @@ sign over the whole box are set to the end that is worse, otherwise the part tha
 doubt is cut in half.  The search is done once no sum is more than `CLOSE` above what is reached.
 When the work is used up, the highest sum still holds; it is just wider.
 
-Errors are taken at the given frequencies alone; between two of them the bound says nothing.  On
-the grid of `synth.grid`, eight points across the sharpest resonance, the worst boards of the
-scenarios show at most 0.7 % more between its points than on them.
+A bound is first that of the given frequencies alone.  Where the target is known between them as
+well, `synth.worstcase.between` extends it to the whole band.  Where a board is found on which the
+response vanishes or grows without limit (`synth.worstcase.vanishing`), there is none.
 """
 
 from __future__ import annotations
@@ -25,12 +25,15 @@ from numpy.typing import ArrayLike, NDArray
 
 from synth.circuit import Circuit
 from synth.errors import CircuitError
-from synth.evidence import DB_PER_NEPER, response_error
+from synth.transfer import TransferFunction
 from synth.worstcase.ascent import climb, follow
-from synth.worstcase.boxes import Pair, Start, at_once, divided
-from synth.worstcase.enclosure import MOST_CORNERS, enclose
+from synth.worstcase.between import Cover
+from synth.worstcase.boxes import Pair, Start, Taken, at_once, divided
+from synth.worstcase.enclosure import enclose
 from synth.worstcase.expansion import Expansion, Parts
-from synth.worstcase.result import WorstCase, WorstError
+from synth.worstcase.outcome import without_tolerance, worst_error
+from synth.worstcase.result import MEET, WorstCase
+from synth.worstcase.vanishing import Vanishing, find_vanishing
 
 __all__ = ["DEFAULT_WORK", "worst_case"]
 
@@ -38,10 +41,13 @@ Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
 Climb = Callable[..., tuple[Real, Real]]
 
-DEFAULT_WORK = 2_000_000
-"""Work for the bound of each of magnitude and phase, in entries of arrays: a second at most."""
+DEFAULT_WORK = 25_000_000
+"""Work for the bound of each of magnitude and phase, in entries of arrays: some three seconds."""
 
-BOX_WORK = 600
+BAND_SHARE = 0.6
+"""Work for the band between the frequencies, against that at them, beside what that leaves."""
+
+BOX_WORK = 10_000
 """Work of a box beside its arrays."""
 
 CLOSE = 0.02
@@ -49,6 +55,13 @@ CLOSE = 0.02
 
 BATCH = 64
 """Boxes enclosed at once."""
+
+STRONG = (8, 12, 16)
+"""Parts whose corners are gone through, with rising care."""
+
+WEAK_SHARE = 0.5
+"""A box is looked at with more care, instead of being divided, where the parts that are not gone
+through make more than this share of what is open."""
 
 CLIMBS = 6
 """Climbs from first-order corners, at different frequencies, and as many from random boards."""
@@ -62,6 +75,10 @@ RETURNS = 4
 NEAR = (-4, -2, -1, 0, 1, 2, 4)
 """Frequencies beside the worst one that are tried as well, in steps of the grid."""
 
+SUSPICIOUS = 2.0
+"""An error reached [Np, rad] from which its frequency is searched for a board on which the
+response vanishes or grows without limit."""
+
 SEED = 1
 """Of the random boards."""
 
@@ -73,6 +90,7 @@ def worst_case(
     target_response: ArrayLike,
     frequency_hz: ArrayLike,
     *,
+    target: TransferFunction | None = None,
     work: int = DEFAULT_WORK,
 ) -> WorstCase:
     """Largest errors of magnitude and phase over all boards within tolerance.
@@ -85,6 +103,8 @@ def worst_case(
         What the output should show, complex, shape (F,).
     frequency_hz
         Where it is compared [Hz], shape (F,).
+    target
+        H(s) of `target_response`; with it, a bound at all frequencies of the band is looked for.
     work
         See `DEFAULT_WORK`; the bound is valid whatever it is.
 
@@ -96,23 +116,34 @@ def worst_case(
         The equations are singular on a board.
     """
     frequency = np.asarray(frequency_hz, dtype=float)
-    target = np.asarray(target_response, dtype=complex)
-    if frequency.ndim != 1 or not frequency.size or target.shape != frequency.shape:
+    wanted = np.asarray(target_response, dtype=complex)
+    if frequency.ndim != 1 or not frequency.size or wanted.shape != frequency.shape:
         raise CircuitError(
-            f"got a target of shape {target.shape} at frequencies of shape {frequency.shape}, "
+            f"got a target of shape {wanted.shape} at frequencies of shape {frequency.shape}, "
             "expected one value at each of one or more frequencies"
         )
     parts = Parts.of(circuit)
     if not parts.active.size:
-        return _without_tolerance(parts, target, frequency)
+        return without_tolerance(parts, wanted, frequency)
     start = Start.of(parts, 2j * np.pi * frequency)
-    found, boxes = {}, 0
-    for unit in DIRECTIONS:
-        search = _Search(start, target, unit)
+    searches = {unit: _Search(start, wanted, unit) for unit in DIRECTIONS}
+    for search in searches.values():
         search.climb()
+    suspects = [s.place for s in searches.values() if s.reached > SUSPICIOUS]
+    vanishing = find_vanishing(start, wanted, suspects)
+    cover = None if target is None else Cover.of(parts, target, 2 * np.pi * frequency)
+    found = {}
+    for unit, search in searches.items():
+        if vanishing is not None:
+            search.note_vanishing(vanishing)
         bound = search.bound(work)
-        found[unit] = _worst_error(search, bound, frequency)
-        boxes += search.enclosed
+        everywhere = (
+            math.inf
+            if cover is None
+            else search.between(cover, bound, search.spare + int(BAND_SHARE * work))
+        )
+        found[unit] = worst_error(parts, search, bound, everywhere, frequency)
+    boxes = sum(search.enclosed for search in searches.values())
     return WorstCase(
         magnitude_db=found["dB"],
         phase_deg=found["deg"],
@@ -133,6 +164,8 @@ class _Search:
     place: int = 0
     sign: int = 0
     enclosed: int = 0
+    spare: int = 0
+    unlimited: str = ""
     _pairs: list[Pair] = field(default_factory=list)
 
     def climb(self) -> None:
@@ -180,6 +213,20 @@ class _Search:
             if not self.reached > before * (1 + CLOSE / 10):
                 break
 
+    def note_vanishing(self, found: Vanishing) -> None:
+        """Take over a proof that the magnitude has no limit and the phase takes every value."""
+        if self.unit == "dB":
+            self.unlimited = found.what
+        board = found.board if self.unit == "dB" else found.opposite
+        if board is None:
+            return
+        k = found.place
+        with np.errstate(all="ignore"):
+            response = self.start.parts.response(self.start.s[k : k + 1], board[None])
+            error = np.log(response / self.target[k])
+        for sign, c in enumerate(DIRECTIONS[self.unit]):
+            self._note((c * error).real, np.array([k]), np.array([sign]), board[None])
+
     def _return_to_worst(self, method: Climb) -> None:
         """Go on from the board reached, at the frequencies where it is worst."""
         start = self.start
@@ -216,6 +263,8 @@ class _Search:
 
     def bound(self, work: int) -> float:
         """Enclose boxes until bound and reached are close or the work is done [Np], [rad]."""
+        if self.unlimited:
+            return math.inf
         self._enclose_whole()
         before = self.reached
         ranked = [(-pair.total, k) for k, pair in enumerate(self._pairs)]
@@ -229,9 +278,22 @@ class _Search:
             work -= self._enclose([self._pairs[k] for k in batch])
             for k in batch:
                 heapq.heappush(ranked, (-self._pairs[k].total, k))
+        self.spare = max(work, 0)
         if self.reached > before:
             self._return_to_worst(follow)
         return min(max(self.reached, -ranked[0][0]), most)
+
+    def between(self, cover: Cover, bound: float, work: int) -> float:
+        """What no board passes at any frequency of the band [Np], [rad]."""
+        if not self._pairs:
+            return math.inf
+        totals = np.array([pair.total for pair in self._pairs]).reshape(2, -1)
+        c = np.array(DIRECTIONS[self.unit], dtype=complex)
+        # A phase error is taken modulo a turn: half a turn is always a bound.
+        if self.unit == "deg" and (1 + MEET) * self.reached >= math.pi:
+            return math.pi
+        found = cover.bound(totals, c, reached=self.reached, board=self.board, work=work)
+        return max(min(found, math.pi if self.unit == "deg" else math.inf), bound)
 
     def _enclose_whole(self) -> None:
         """The whole box of every group at every frequency, both ways."""
@@ -250,9 +312,7 @@ class _Search:
                 for g, group in enumerate(start.groups):
                     tau = np.zeros((size, low.size))
                     tau[:, group] = ((high - low) / (high + low))[group]
-                    found = enclose(
-                        part, part.response, np.full(size, c), tau, cubic=False, corners=False
-                    )
+                    found = enclose(part, part.response, np.full(size, c), tau, cubic=False)
                     bounds[kept, g] = found.bound
             self._pairs += [
                 Pair(k, sign, float(offset[k]), start, bounds[k].tolist()) for k in range(count)
@@ -260,38 +320,47 @@ class _Search:
 
     def _enclose(self, pairs: list[Pair]) -> int:
         """Take up the most doubtful box of each pair; the work it took."""
-        start = self.start
-        taken = [pair.take() for pair in pairs]
-        place = np.array([pair.place for pair in pairs])
-        low = np.stack([box[0] for _, _, box in taken])
-        high = np.stack([box[1] for _, _, box in taken])
-        c = np.array(DIRECTIONS[self.unit], dtype=complex)[[pair.sign for pair in pairs]]
-        centre = (low + high) / 2
-        widest = int((high > low).sum(axis=1).max())
-        entries = max(widest**3, 2**widest if widest <= MOST_CORNERS else 0)
-        step = at_once(entries)
-        for first in range(0, len(pairs), step):
-            kept = slice(first, first + step)
-            expansion = start.parts.expand(start.s[place[kept]], centre[kept])
-            found = enclose(
-                expansion,
-                start.expansion.response[place[kept]],
-                c[kept],
-                ((high - low) / (high + low))[kept],
-            )
-            for k, (pair, (group, bound, _)) in enumerate(
-                zip(pairs[kept], taken[kept], strict=True)
-            ):
-                here = min(bound, float(found.bound[k]))
-                j = first + k
-                for box in divided(low[j], high[j], found, k):
-                    pair.put(group, here, box)
-                pair.note(group, float(found.centre[k]), centre[j])
-                at_corner = np.where(found.corner[k] > 0, high[j], low[j])
-                pair.note(group, float(found.best[k]), at_corner)
-                self._combine(pair)
+        taken = [(pair, pair.take()) for pair in pairs]
+        work = 0
+        for level, strong in enumerate(STRONG):
+            chosen = [(pair, box) for pair, box in taken if box.level == level]
+            widest = max((int((box.high > box.low).sum()) for _, box in chosen), default=0)
+            weak = max(widest - strong, 0)
+            entries = max(widest**3, 2 ** min(strong, widest) * (4 + weak * weak))
+            step = at_once(entries)
+            for first in range(0, len(chosen), step):
+                self._enclosed(chosen[first : first + step], strong)
+            work += len(chosen) * (BOX_WORK + entries)
         self.enclosed += len(pairs)
-        return len(pairs) * (BOX_WORK + entries)
+        return work
+
+    def _enclosed(self, chosen: list[tuple[Pair, Taken]], strong: int) -> None:
+        """Enclose boxes by the corners of `strong` parts, and put back what is left of them."""
+        place = np.array([pair.place for pair, _ in chosen])
+        low, high = (np.stack([getattr(box, end) for _, box in chosen]) for end in ("low", "high"))
+        c = np.array(DIRECTIONS[self.unit], dtype=complex)[[pair.sign for pair, _ in chosen]]
+        centre, tau = (low + high) / 2, (high - low) / (high + low)
+        found = enclose(
+            self.start.parts.expand(self.start.s[place], centre),
+            self.start.expansion.response[place],
+            c,
+            tau,
+            strong=strong,
+        )
+        at_corner = centre * (1 + tau * found.corner)
+        for k, (pair, box) in enumerate(chosen):
+            here = min(box.bound, float(found.bound[k]))
+            pair.note(box.group, float(found.centre[k]), centre[k])
+            pair.note(box.group, float(found.best[k]), at_corner[k])
+            open_by = here - pair.best[box.group]
+            moving = int((high[k] > low[k]).sum())
+            more = moving > strong and box.level + 1 < len(STRONG)
+            if more and not (math.isfinite(here) and found.weak[k] <= WEAK_SHARE * open_by):
+                pair.put(box.group, here, (low[k], high[k]), box.level + 1)
+            else:
+                for smaller in divided(low[k], high[k], found, k):
+                    pair.put(box.group, here, smaller, box.level)
+            self._combine(pair)
 
     def _combine(self, pair: Pair) -> None:
         """Note the board that is put together of the best of every group."""
@@ -316,58 +385,3 @@ def _apart(likely: Real, place: NDArray[np.intp]) -> NDArray[np.intp]:
         if len(chosen) == CLIMBS:
             break
     return np.array(chosen, dtype=np.intp)
-
-
-def _without_tolerance(parts: Parts, target: Complex, frequency: Real) -> WorstCase:
-    """Of a circuit with one board only."""
-    response = parts.response(
-        np.asarray(2j * np.pi * frequency, dtype=np.complex128), np.empty((frequency.size, 0))
-    )
-    error = response_error(response, target)
-
-    def largest(unit: str, signed: Real) -> WorstError:
-        place = int(np.argmax(np.abs(signed)))
-        return WorstError(
-            unit=unit,
-            reached=abs(float(signed[place])),
-            sign=1 if signed[place] >= 0 else -1,
-            bound=abs(float(signed[place])),
-            frequency_hz=float(frequency[place]),
-            values={},
-            low=(),
-            high=(),
-            between=(),
-        )
-
-    return WorstCase(
-        magnitude_db=largest("dB", error.magnitude_db),
-        phase_deg=largest("deg", error.phase_deg),
-        frequencies=frequency.size,
-        boxes=0,
-    )
-
-
-def _worst_error(search: _Search, bound: float, frequency: Real) -> WorstError:
-    parts, (low, high) = search.start.parts, search.start.box
-    scale = DB_PER_NEPER if search.unit == "dB" else 180 / np.pi
-    columns = parts.varied
-    refs = [parts.structure.refs[k] for k in columns]
-    values, lowest, highest = (parts.values(m)[columns] for m in (search.board, low, high))
-    smallest, largest = np.minimum(lowest, highest), np.maximum(lowest, highest)
-    at_low = np.isclose(values, smallest, rtol=1e-9, atol=0.0)
-    at_high = np.isclose(values, largest, rtol=1e-9, atol=0.0)
-
-    def named(which: NDArray[np.bool_]) -> tuple[str, ...]:
-        return tuple(ref for ref, is_so in zip(refs, which, strict=True) if is_so)
-
-    return WorstError(
-        unit=search.unit,
-        reached=float(scale * max(search.reached, 0.0)),
-        sign=1 if search.sign == 0 else -1,
-        bound=float(scale * max(bound, 0.0)) if math.isfinite(bound) else None,
-        frequency_hz=float(frequency[search.place]),
-        values=dict(zip(refs, values.tolist(), strict=True)),
-        low=named(at_low),
-        high=named(at_high),
-        between=named(~at_low & ~at_high),
-    )

@@ -15,7 +15,12 @@ from synth.worstcase import WorstError, worst_case
 from tests.netlist import boards
 
 MADE = boards.design()
-WORST = worst_case(MADE.circuit, MADE.wanted.response(MADE.frequency_hz), MADE.frequency_hz)
+WORST = worst_case(
+    MADE.circuit,
+    MADE.wanted.response(MADE.frequency_hz),
+    MADE.frequency_hz,
+    target=MADE.wanted,
+)
 DESIGN = replace(MADE, worst=WORST)
 
 
@@ -35,8 +40,8 @@ def test_ngspice_finds_the_error_that_is_said_to_be_reached(simulator, unit):
     signed = against.magnitude_db if unit == "dB" else against.phase_deg
     there = np.interp(np.log(error.frequency_hz), np.log(found.frequency_hz), signed)
     assert error.sign * there == pytest.approx(error.reached, rel=2e-3)
-    # No frequency of ngspice's own sweep shows more than the bound.
-    assert np.abs(signed).max() <= error.bound * (1 + 2e-3)
+    # No frequency of ngspice's own sweep shows more than the bound of the whole band.
+    assert np.abs(signed).max() <= error.everywhere * (1 + 2e-3)
 
 
 def test_the_record_holds_reached_and_bound():
@@ -44,6 +49,8 @@ def test_the_record_holds_reached_and_bound():
     for key, error in (("magnitude_db", WORST.magnitude_db), ("phase_deg", WORST.phase_deg)):
         assert record[key]["reached"] == error.reached
         assert record[key]["reached"] <= record[key]["bound"] == error.bound
+        assert record[key]["bound"] <= record[key]["everywhere"] == error.everywhere
+        assert record[key]["unlimited"] is None
         assert record[key]["meet"] is True
         assert set(record[key]["values"]) == {p.ref for p in MADE.circuit.bought}
     assert record["frequencies"] == MADE.frequency_hz.size
@@ -75,10 +82,31 @@ def one(**changes) -> WorstError:
 
 def test_a_bound_is_rounded_up_and_a_missing_one_is_told():
     both = replace(WORST, magnitude_db=one(), phase_deg=one(unit="deg", bound=None))
-    assert worst_line(both) == "0.400 dB (none above 0.402), 0.400 deg or more"
+    assert worst_line(both) == (
+        "0.400 dB (none above 0.402 at the judged frequencies), 0.400 deg or more"
+    )
+    whole = replace(both, magnitude_db=one(everywhere=0.41001))
+    assert worst_line(whole).startswith("0.400 dB (none above 0.411 in the whole band), ")
     told = shown(replace(DESIGN, worst=both))
     assert told["wide"] == ["phase"]
     assert told["rows"][1]["bound"] == "–"
+
+
+@pytest.mark.parametrize(
+    ("what", "words"),
+    [("pole", "a pole reaches the imaginary axis"), ("zero", "the response vanishes")],
+)
+def test_an_error_without_limit_is_told_as_proven(what, words):
+    none = one(bound=None, reached=280.0, unlimited=what)
+    both = replace(WORST, magnitude_db=none)
+    assert worst_line(both).startswith(f"dB without limit (within tolerance {words}), ")
+    told = shown(replace(DESIGN, worst=both))
+    assert "which is proven" in told["lines"][0]
+    assert words in told["lines"][0]
+    assert told["rows"][0]["reached"] == "no limit"
+    assert told["wide"] == []
+    record = design_record(replace(DESIGN, worst=both), boards.verification(DESIGN))
+    assert record["worst_case"]["magnitude_db"]["unlimited"] == what
 
 
 def test_a_part_between_its_ends_is_told_with_its_value():

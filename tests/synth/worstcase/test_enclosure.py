@@ -101,9 +101,9 @@ def test_no_board_of_a_box_passes_its_bound(circuit, direction, share):
     ratio = responses(circuit, parts, centre * (1 + tau * inside)) / target
     error = (direction * np.log(ratio)).real
     wide = np.tile(tau, (S.size, 1))
-    for cubic, corners in ((False, False), (True, False), (True, True)):
+    for cubic, strong in ((False, 0), (True, 3), (True, 12)):
         found = enclose(
-            expansion, target, np.full(S.size, direction), wide, cubic=cubic, corners=corners
+            expansion, target, np.full(S.size, direction), wide, cubic=cubic, strong=strong
         )
         assert np.all(error.max(axis=0) <= found.bound)
         assert np.all(found.centre <= found.bound)
@@ -124,8 +124,8 @@ def test_a_resonance_that_sweeps_past_is_bounded_without_a_series():
     centre, tau = middle(parts)
     expansion = parts.expand(S[2:3], centre[None])
     one = np.array([1.0 + 0j])
-    open_ended = enclose(expansion, expansion.response, one, tau[None], corners=False)
-    bounded = enclose(expansion, expansion.response, one, tau[None])
+    open_ended = enclose(expansion, expansion.response, one, tau[None])
+    bounded = enclose(expansion, expansion.response, one, tau[None], strong=12)
     assert np.isinf(open_ended.bound[0])
     error, _ = climb(parts, S[2:3], expansion.response, one, centre[None])
     assert error[0] <= bounded.bound[0] <= 1.1 * error[0] + 0.1
