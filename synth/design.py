@@ -33,7 +33,7 @@ from synth.noise import output_noise
 from synth.quantities import show
 from synth.ranking import Mapper, rank_forms
 from synth.results import Candidate, Design, ErrorBudget, LoopResult, Swing, ToleranceResult
-from synth.tolerance import error_budget, run_boards, run_loops
+from synth.tolerance import error_budget, run_boards, run_loops, value_ranges
 from synth.values import ValueSearch, level_ratios, wanted_of
 from synth.worstcase import worst_case
 
@@ -183,7 +183,13 @@ def judged_design(
         progress=lambda done, total: progress("boards", done, total),
     )
     progress("worst case", 0, 1)
-    worst = worst_case(circuit, response, frequency, target=wanted)
+    worst = worst_case(
+        circuit,
+        response,
+        frequency,
+        target=wanted,
+        ranges=value_ranges(circuit, job.board.population),
+    )
     progress("limits", 0, 1)
     swing = swings(circuit, wanted, job)
     loop = _loop(job, program, sketch, boards=boards, seed=seed, progress=progress)

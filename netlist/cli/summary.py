@@ -37,7 +37,7 @@ _COLOURS = {"pass": "green", "fail": "red", "unverified": "yellow"}
 def summary(design: Design, verification: Verification, *, folder: Path) -> str:
     """The design in a dozen lines: form, parts, each check, where the pack is."""
     outcome = verdict_of(design, verification)
-    circuit, run = design.circuit, design.tolerance
+    circuit, run, population = design.circuit, design.tolerance, design.job.board.population
     kinds = [p.kind for p in circuit.bought]
     chips = packages(circuit.amplifiers)
     limit = "" if design.job.accept.yield_share is not None else ", no limit stated"
@@ -51,7 +51,7 @@ def summary(design: Design, verification: Verification, *, folder: Path) -> str:
         ("yield", f"{run.passed} of {run.boards} boards, "
          f"{share(run.low)} to {share(run.high)} at {stated(run.confidence, '%')} "
          f"confidence{limit}"),
-        *((("worst", worst_line(design.worst)),) if design.worst else ()),
+        *((("worst", worst_line(design.worst, population)),) if design.worst else ()),
     )  # fmt: skip
     rows = [
         (str(r["name"]), str(r["limit"]), str(r["value"]), str(r["result"]), str(r["note"]))

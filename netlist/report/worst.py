@@ -6,10 +6,11 @@ import math
 
 from netlist.report.wording import NONE, decibel, quantity, stated
 from synth.circuit import Circuit
+from synth.population import Population
 from synth.results import Design
 from synth.worstcase import WorstCase, WorstError
 
-__all__ = ["shown", "worst_line", "worst_rows", "worst_sentence"]
+__all__ = ["covered", "shown", "worst_line", "worst_rows", "worst_sentence"]
 
 Row = dict[str, object]
 
@@ -67,9 +68,32 @@ def worst_sentence(name: str, error: WorstError, circuit: Circuit) -> str:
     )
 
 
-def worst_line(found: WorstCase) -> str:
-    """Both in one short line."""
-    return ", ".join(_range(error) for error in (found.magnitude_db, found.phase_deg))
+def worst_line(found: WorstCase, population: Population) -> str:
+    """Both in one short line, and what is not in them."""
+    line = ", ".join(_range(error) for error in (found.magnitude_db, found.phase_deg))
+    spread = population.gain_bandwidth_spread
+    return f"{line}; op-amps at their figures" if spread else line
+
+
+def covered(population: Population) -> list[str]:
+    """What the worst case holds for, in sentences, beyond parts within their tolerance."""
+    said = []
+    if population.temperature is not None:
+        said.append(
+            "The range of temperatures is in it, each part at its own temperature and with the "
+            "largest coefficient of either sign."
+        )
+    if population.networks:
+        said.append(
+            "Matched parts are taken as free of each other: the bounds hold for them all the more, "
+            "but the board that reaches the first figure may not exist."
+        )
+    if population.gain_bandwidth_spread:
+        said.append(
+            "The spread of the op-amps is not in it, they have their figures: boards of the run "
+            "may be beyond the bounds."
+        )
+    return said
 
 
 def shown(design: Design) -> dict[str, object]:
@@ -83,6 +107,7 @@ def shown(design: Design) -> dict[str, object]:
         "lines": [worst_sentence(name, error, design.circuit) for name, error in errors],
         "wide": [name for name, error in errors if not error.meets and not error.unlimited],
         "frequencies": found.frequencies,
+        "covered": covered(design.job.board.population),
     }
 
 

@@ -7,7 +7,7 @@ from synth.tolerance.budget import error_budget, next_grade
 from synth.tolerance.drawing import BoardSource
 from synth.tolerance.interval import clopper_pearson
 from synth.tolerance.loops import board_margins, loop_yield_check, run_loops
-from synth.tolerance.makeup import check_networks
+from synth.tolerance.makeup import check_networks, value_ranges
 from synth.tolerance.spread import Spread, predicted_spread
 
 __all__ = [
@@ -24,4 +24,5 @@ __all__ = [
     "run_boards",
     "run_loops",
     "tolerances_of",
+    "value_ranges",
 ]

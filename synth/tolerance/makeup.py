@@ -15,10 +15,10 @@ from numpy.typing import NDArray
 from synth.circuit import Circuit, Passive
 from synth.errors import JobError
 from synth.parts import OP_AMPS_PER_PACKAGE
-from synth.population import Network, PartSpread, Population
+from synth.population import REFERENCE_TEMPERATURE, Network, PartSpread, Population
 from synth.quantities import show
 
-__all__ = ["Makeup", "Matched", "check_networks", "packages_of"]
+__all__ = ["Makeup", "Matched", "check_networks", "packages_of", "value_ranges"]
 
 Real = NDArray[np.float64]
 Places = NDArray[np.intp]
@@ -115,6 +115,28 @@ class Makeup:
             figures=np.array([a.figures.gain_bandwidth for a in circuit.amplifiers]),
             packages=np.array(packages_of(len(circuit.amplifiers)), dtype=np.intp),
         )
+
+
+def value_ranges(circuit: Circuit, population: Population) -> Real:
+    """Smallest and largest multiple of its nominal value that any passive of any board may have, by
+    its tolerance and by what its temperature coefficient makes of the range of temperatures.
+
+    Shape (2, P), in circuit order, 1 for what is not on the board.
+    """
+    makeup = Makeup.of(circuit, population)
+    drift = makeup.coefficient.copy()
+    for matched in makeup.networks:
+        if matched.tracking is not None:
+            drift[matched.places] = matched.drift + matched.tracking
+    if population.temperature is None:
+        drift[:] = 0.0
+    else:
+        drift *= max(abs(t - REFERENCE_TEMPERATURE) for t in population.temperature)
+    out = np.ones((2, len(circuit.passives)))
+    on_board = [p.on_board for p in circuit.passives]
+    out[0, on_board] = (1 - makeup.tolerance) * (1 - drift)
+    out[1, on_board] = (1 + makeup.tolerance) * (1 + drift)
+    return out
 
 
 def packages_of(amplifiers: int) -> tuple[int, ...]:

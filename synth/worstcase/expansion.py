@@ -23,9 +23,10 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from numpy.typing import NDArray
+from numpy.typing import ArrayLike, NDArray
 
 from synth.circuit import Circuit
+from synth.errors import CircuitError
 from synth.nodal import dense
 from synth.nodal.structure import Structure, structure_of
 
@@ -69,21 +70,36 @@ class Parts:
         Column of the part of each variable, shape (V,).
     partner
         Column of the other part, or -1, shape (V,).
-    tolerance
-        Relative tolerance of the value of every passive, shape (P,).
+    ranges
+        Smallest and largest multiple of the nominal value of every passive, shape (2, P).
     """
 
     structure: Structure
     active: Index
     partner: Index
-    tolerance: Real
+    ranges: Real
 
     @classmethod
-    def of(cls, circuit: Circuit) -> Parts:
-        """Those of a circuit."""
+    def of(cls, circuit: Circuit, ranges: ArrayLike | None = None) -> Parts:
+        """Those of a circuit, within `ranges` (2, P) or its tolerances.
+
+        Raises
+        ------
+        CircuitError
+            Ranges of another shape, or not from above 0 to 1 and from 1.
+        """
         tolerance = np.array([p.tolerance for p in circuit.passives], dtype=float)
+        found = np.array([1 - tolerance, 1 + tolerance])
+        if ranges is not None:
+            found = np.asarray(ranges, dtype=float)
+            if found.shape != (2, tolerance.size) or np.any((found[0] <= 0) | (found[0] > 1)):
+                raise CircuitError(
+                    f"got ranges of shape {found.shape}, expected the smallest and the largest "
+                    f"multiple of {tolerance.size} values, around 1"
+                )
+        spread = found[1] - found[0]
         structure = structure_of(circuit)
-        varied = [int(k) for k in np.flatnonzero(tolerance > 0)]
+        varied = [int(k) for k in np.flatnonzero(spread > 0)]
         partner = _partners(structure, varied)
         taken = set(partner.values())
         active = [k for k in varied if k not in taken]
@@ -91,13 +107,13 @@ class Parts:
             structure,
             np.array(active, dtype=np.intp),
             np.array([partner.get(k, -1) for k in active], dtype=np.intp),
-            tolerance,
+            found,
         )
 
     @property
     def varied(self) -> Index:
         """Columns of all parts with a tolerance."""
-        return np.flatnonzero(self.tolerance > 0)
+        return np.flatnonzero(self.ranges[1] > self.ranges[0])
 
     @property
     def box(self) -> tuple[Real, Real]:
@@ -125,9 +141,9 @@ class Parts:
 
     def _ends(self, columns: Index) -> tuple[Real, Real]:
         """Smallest and largest multiple of the admittances of some parts, 1 for none."""
-        t = np.where(columns < 0, 0.0, self.tolerance[columns])
+        low, high = np.where(columns < 0, 1.0, self.ranges[:, columns])
         inverted = self.structure.is_resistor[columns]
-        return np.where(inverted, 1 / (1 + t), 1 - t), np.where(inverted, 1 / (1 - t), 1 + t)
+        return np.where(inverted, 1 / high, low), np.where(inverted, 1 / low, high)
 
     def response(self, s: Complex, multiples: Real) -> Complex:
         """H of N boards, each at its own `s` (N,) [rad/s], `multiples` (N, V); shape (N,)."""

@@ -91,6 +91,7 @@ def worst_case(
     frequency_hz: ArrayLike,
     *,
     target: TransferFunction | None = None,
+    ranges: ArrayLike | None = None,
     work: int = DEFAULT_WORK,
 ) -> WorstCase:
     """Largest errors of magnitude and phase over all boards within tolerance.
@@ -105,6 +106,9 @@ def worst_case(
         Where it is compared [Hz], shape (F,).
     target
         H(s) of `target_response`; with it, a bound at all frequencies of the band is looked for.
+    ranges
+        Smallest and largest multiple of its nominal value that each passive may have, shape
+        (2, P); None: by its tolerance.
     work
         See `DEFAULT_WORK`; the bound is valid whatever it is.
 
@@ -122,7 +126,7 @@ def worst_case(
             f"got a target of shape {wanted.shape} at frequencies of shape {frequency.shape}, "
             "expected one value at each of one or more frequencies"
         )
-    parts = Parts.of(circuit)
+    parts = Parts.of(circuit, ranges)
     if not parts.active.size:
         return without_tolerance(parts, wanted, frequency)
     start = Start.of(parts, 2j * np.pi * frequency)

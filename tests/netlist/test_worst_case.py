@@ -9,8 +9,9 @@ import pytest
 
 from netlist.deck import board_deck
 from netlist.records import design_record
-from netlist.report.worst import shown, worst_line, worst_sentence
+from netlist.report.worst import covered, shown, worst_line, worst_sentence
 from synth.evidence import response_error
+from synth.population import PartSpread, Population
 from synth.worstcase import WorstError, worst_case
 from tests.netlist import boards
 
@@ -22,6 +23,7 @@ WORST = worst_case(
     target=MADE.wanted,
 )
 DESIGN = replace(MADE, worst=WORST)
+PLAIN = Population()
 
 
 @pytest.mark.parametrize("unit", ["dB", "deg"])
@@ -82,11 +84,11 @@ def one(**changes) -> WorstError:
 
 def test_a_bound_is_rounded_up_and_a_missing_one_is_told():
     both = replace(WORST, magnitude_db=one(), phase_deg=one(unit="deg", bound=None))
-    assert worst_line(both) == (
+    assert worst_line(both, PLAIN) == (
         "0.400 dB (none above 0.402 at the judged frequencies), 0.400 deg or more"
     )
     whole = replace(both, magnitude_db=one(everywhere=0.41001))
-    assert worst_line(whole).startswith("0.400 dB (none above 0.411 in the whole band), ")
+    assert worst_line(whole, PLAIN).startswith("0.400 dB (none above 0.411 in the whole band), ")
     told = shown(replace(DESIGN, worst=both))
     assert told["wide"] == ["phase"]
     assert told["rows"][1]["bound"] == "–"
@@ -99,7 +101,7 @@ def test_a_bound_is_rounded_up_and_a_missing_one_is_told():
 def test_an_error_without_limit_is_told_as_proven(what, words):
     none = one(bound=None, reached=280.0, unlimited=what)
     both = replace(WORST, magnitude_db=none)
-    assert worst_line(both).startswith(f"dB without limit (within tolerance {words}), ")
+    assert worst_line(both, PLAIN).startswith(f"dB without limit (within tolerance {words}), ")
     told = shown(replace(DESIGN, worst=both))
     assert "which is proven" in told["lines"][0]
     assert words in told["lines"][0]
@@ -113,3 +115,14 @@ def test_a_part_between_its_ends_is_told_with_its_value():
     sentence = worst_sentence("magnitude", one(), MADE.circuit)
     assert sentence.startswith("The magnitude error of −0.400 dB at 1.00\xa0kHz")
     assert sentence.endswith("R1 at 10.00\xa0kΩ.")
+
+
+def test_what_the_worst_case_leaves_out_of_the_population_is_told():
+    """The range of temperatures is in it, the spread of op-amps is not."""
+    warm = PartSpread(temperature_coefficient=1e-4)
+    hot = Population(resistors=warm, temperature=(0.0, 70.0))
+    assert covered(PLAIN) == []
+    assert "temperatures is in it" in covered(hot)[0]
+    loose = Population(gain_bandwidth_spread=0.3)
+    assert "may be beyond" in covered(loose)[0]
+    assert worst_line(WORST, loose) == worst_line(WORST, PLAIN) + "; op-amps at their figures"

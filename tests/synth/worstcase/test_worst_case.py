@@ -16,7 +16,8 @@ from synth.errors import CircuitError, PolewrightError
 from synth.evidence import DB_PER_NEPER, response_error
 from synth.grid import judging_frequencies
 from synth.nodal import compile_circuit
-from synth.tolerance import drawn_values
+from synth.population import Network, PartSpread, Population
+from synth.tolerance import drawn_values, value_ranges
 from synth.worstcase import WorstCase, WorstError, worst_case
 from tests.circuits import (
     amplifier,
@@ -160,6 +161,47 @@ def test_boards_of_any_target_stay_below_the_bound(seed, order):
     tolerance = np.array([p.tolerance for p in circuit.passives])
     ends = nominal * (1 + tolerance * generator.choice([-1.0, 1.0], boards.shape))
     assert_holds(found, circuit, np.vstack([boards, ends]), wanted, frequency)
+
+
+def test_no_board_of_a_population_with_temperatures_passes_the_bound():
+    """Nor a board whose parts stand at the ends of tolerance and temperature; some pass the bound
+    of tolerance alone."""
+    target, band = butterworth(3, 1e3), (100.0, 2e3)
+    frequency = judging_frequencies(target, band)
+    circuit = sketch_form(job_for(target, band), "cascade", frequency).circuit
+    circuit = circuit.with_values({p.ref: p.ideal for p in circuit.passives})
+    wanted = compile_circuit(circuit).solve(frequency)
+    population = Population(
+        resistors=PartSpread(temperature_coefficient=2e-4),
+        capacitors=PartSpread(temperature_coefficient=8e-4),
+        networks=(Network(refs=("R1", "R2"), tolerance=0.001, tracking=1e-5),),
+        temperature=(-40.0, 125.0),
+    )
+    ranges = value_ranges(circuit, population)
+    found = worst_case(circuit, wanted, frequency, ranges=ranges)
+    plain = worst_case(circuit, wanted, frequency)
+    nominal = np.array([p.value for p in circuit.passives])
+    ends = np.random.default_rng(1).integers(0, 2, (2000, nominal.size))
+    extreme = nominal * ranges[ends, np.arange(nominal.size)]
+    boards = np.vstack([drawn_values(circuit, 2000, 1, population), extreme])
+    assert np.all(boards[:2000] >= nominal * ranges[0] * (1 - 1e-12))
+    assert np.all(boards[:2000] <= nominal * ranges[1] * (1 + 1e-12))
+    for worst, size in zip(
+        (found.magnitude_db, found.phase_deg),
+        errors(circuit, boards, wanted, frequency),
+        strict=True,
+    ):
+        assert np.max(size) <= worst.bound
+        assert worst.reached <= worst.bound
+    db, _ = errors(circuit, boards[:2000], wanted, frequency)
+    assert np.max(db) > plain.magnitude_db.bound
+
+
+def test_ranges_that_do_not_fit_are_refused():
+    with pytest.raises(CircuitError, match="ranges of shape"):
+        worst_case(rc(), [0.5], [100.0], ranges=[[0.9], [1.1]])
+    with pytest.raises(CircuitError, match="ranges of shape"):
+        worst_case(rc(), [0.5], [100.0], ranges=[[-0.1, 1], [1.1, 1]])
 
 
 @pytest.mark.parametrize("form", ["cascade", "controllable"])
