@@ -31,8 +31,8 @@ Complex = NDArray[np.complex128]
 # Eigenvalues below this share of the largest are those of loops of capacitors.
 NO_POLE = 1e-14
 
-# How far the state space may be from the nodal equations, as a share of the largest voltage over
-# the frequencies it is checked at.
+# How far the state space may be from the nodal equations, in volts per volt of the input, or as a
+# share of the largest voltage over the frequencies it is checked at where that is more.
 AGREEMENT = 1e-6
 
 
@@ -223,7 +223,7 @@ def _check(structure: Structure, board: Boards, nets: tuple[int, ...], system: S
     identity = np.eye(system.order)
     found = np.array([system.C @ np.linalg.solve(p * identity - system.A, system.B) for p in s])
     difference = np.max(np.abs(found + system.D - wanted), axis=0)
-    if np.any(difference > AGREEMENT * np.max(np.abs(wanted), axis=0)):
+    if np.any(difference > AGREEMENT * np.maximum(np.max(np.abs(wanted), axis=0), 1.0)):
         raise NumericalError(
             "the state space of the board does not give its response back: got a difference of "
             f"{float(np.max(difference)):.2g} V per volt, expected almost none"

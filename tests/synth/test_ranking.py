@@ -52,7 +52,7 @@ def test_fewest_op_amps_among_yields_that_overlap_the_best() -> None:
     assert [c.form for c in found] == ["b", "a", "c"]
     assert found[0].reason == ""
     assert found[1].reason == "7 op-amps, b does it with 5"
-    assert found[2].reason.startswith("yield 90.0 %, at most 91.8 %, is below the 99.5 % of a")
+    assert found[2].reason.startswith("yield 90.00 %, at most 91.79 %, is below the 99.50 % of a")
 
 
 def test_the_smaller_error_decides_between_equal_op_amps_and_the_order_between_equals() -> None:
