@@ -142,7 +142,7 @@ def test_neither_hashes_nor_threads_change_a_byte(tmp_path):
     """The order of sets follows the hashes, the last digit of a matrix product the threads."""
     for name, hashes, threads in (("one", "7", "1"), ("two", "8", "2")):
         command(
-            "current_loop_pi",
+            "spare_gauge_drawer",
             tmp_path / name,
             PYTHONHASHSEED=hashes,
             OPENBLAS_NUM_THREADS=threads,
