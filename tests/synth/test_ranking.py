@@ -127,7 +127,7 @@ def test_every_form_stands_in_the_ranking_with_its_figures() -> None:
         assert 0 <= found.low <= found.share <= found.high <= 1
         assert (one.verdict == "pass") == (not found.missed)
         assert found.peak <= job.board.swing_limit
-    made = design(job)
+    made = design(job, effort=0.1)
     assert made.form == chosen
     assert made.candidates == candidates
     first = candidates[0].figures
