@@ -17,6 +17,9 @@ __all__ = ["assumptions", "driver_remarks", "failure_lines", "left_out", "popula
 # References of a network are listed up to this many.
 MOST_NAMED = 6
 
+# Fewer boards than this have no tenths worth telling.
+FEW_BOARDS = 20
+
 # How much of what a part sets stands beside its bar, in characters.
 LONGEST_REMARK = 48
 
@@ -191,10 +194,12 @@ def _first(found: LimitFailures, failing: int) -> str:
     share = "All" if found.boards == failing else f"{found.boards} of them"
     text = f"{share} by the {found.quantity} first"
     low, middle, high = (
-        quantity(f, "Hz") for f in (found.low_hz, found.frequency_hz, found.high_hz)
+        quantity(f, "Hz", 4) for f in (found.low_hz, found.frequency_hz, found.high_hz)
     )
     if low == high:
         return f"{text}, at {middle}."
+    if found.boards < FEW_BOARDS:
+        return f"{text}, most of them from {low} to {high}."
     return f"{text}, half of them below {middle}, nine of ten from {low} to {high}."
 
 
