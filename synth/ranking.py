@@ -24,7 +24,7 @@ from synth.choosing.supply import allotted
 from synth.circuit import Circuit
 from synth.errors import JobError, NumericalError, RealizationError
 from synth.evidence import Check, response_error
-from synth.forms import FORMS
+from synth.forms import FORMS, realize
 from synth.job import Job
 from synth.limits import swings
 from synth.nodal import compile_circuit
@@ -95,21 +95,51 @@ def rank_forms(
         No form fits; the message has each reason.
     """
     say = progress or (lambda done, total: None)
-    names = list(FORMS)
-    say(0, len(names))
+    alike = _alike(job)
+    say(0, len(FORMS))
     found: list[Assessed] = []
     work = partial(_assess, job, frequency_hz=frequency_hz, seed=seed)
-    for one in (mapper or map)(work, names):
-        found.append(one)
-        say(len(found), len(names))
+    for names, one in zip(alike, (mapper or map)(work, [n[0] for n in alike]), strict=True):
+        found += [one, *(_named(one, name) for name in names[1:])]
+        say(len(found), len(FORMS))
+    found.sort(key=lambda one: list(FORMS).index(one.candidate.form))
     possible = [one for one in found if one.sketch is not None]
     if not possible:
         raise refused([(one.candidate, one.unreadable) for one in found])
     ordered = chosen_among([one.candidate for one in possible], least=job.accept.yield_share)
+    first = {name: names[0] for names in alike for name in names[1:]}
+    ordered = [
+        replace(c, reason=f"the same circuit as {first[c.form]}") if c.form in first else c
+        for c in ordered
+    ]
     others = [one.candidate for one in found if one.sketch is None]
     (sketch,) = (o.sketch for o in possible if o.candidate.form == ordered[0].form)
     assert sketch is not None
     return Ranking(sketch=sketch, candidates=(*ordered, *others))
+
+
+def _alike(job: Job) -> list[list[str]]:
+    """All forms, those together that give the same graph: sections of one real pole are the same
+    whatever their kind."""
+    found: dict[object, list[str]] = {}
+    for form in FORMS:
+        try:
+            graph = realize(job.target, form)
+        except (RealizationError, NumericalError):
+            found[form] = [form]
+            continue
+        blocks = tuple(
+            (b.name, b.kind, b.both_signs, tuple((t.source, t.weight) for t in b.terms))
+            for b in graph.blocks
+        )
+        found.setdefault((blocks, graph.output), []).append(form)
+    return list(found.values())
+
+
+def _named(one: Assessed, form: str) -> Assessed:
+    """What was found of one form, for another that has the same graph."""
+    sketch = None if one.sketch is None else replace(one.sketch, form=form)
+    return replace(one, candidate=replace(one.candidate, form=form), sketch=sketch)
 
 
 def _assess(job: Job, form: str, *, frequency_hz: Real, seed: int) -> Assessed:

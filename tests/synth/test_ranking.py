@@ -136,6 +136,31 @@ def test_every_form_stands_in_the_ranking_with_its_figures() -> None:
     assert made.tolerance.share == pytest.approx(first.share, abs=0.02)
 
 
+def test_forms_that_are_one_circuit_are_assessed_once_and_say_so() -> None:
+    """Two real poles and a zero: sections of every kind are the same.  What is said of one that is
+    not looked at by itself is what looking at it gives."""
+    zeros, poles = [Factor.real(-700.0)], [Factor.real(-2e3), Factor.real(-9e3)]
+    job = job_for(TransferFunction.from_factors(1e4, zeros, poles), BAND)
+    asked, used = [], []
+
+    def watched(work, names):
+        used.append(work)
+        asked.extend(names := list(names))
+        return map(work, names)
+
+    frequency = judging_frequencies(job.target, job.signal.band_hz)
+    candidates = rank_forms(job, frequency, seed=1, mapper=watched).candidates
+    assert "cascade" in asked
+    by_form = {c.form: c for c in candidates}
+    assert set(by_form) == set(FORMS)
+    for form in ("tow_thomas", "khn", "normal"):
+        assert form not in asked
+        assert by_form[form].reason == "the same circuit as cascade"
+        alone = used[0](form).candidate
+        assert alone.figures == by_form[form].figures
+        assert alone.op_amps == by_form[form].op_amps
+
+
 def test_another_way_to_map_gives_the_same_ranking() -> None:
     """In whatever order the work is done."""
     job = job_for(butterworth(2, 1e3), BAND)
