@@ -40,7 +40,8 @@ prepare() {
     log=$root/.setup.log
     # Nothing of the caller's Python may leak in.  pip's other settings (index, proxy,
     # certificates) are the user's and stay as they are.
-    unset PYTHONPATH PYTHONHOME PYTHONSAFEPATH PIP_TARGET PIP_PREFIX PIP_ROOT
+    unset PYTHONPATH PYTHONHOME PYTHONSAFEPATH PYTHONDONTWRITEBYTECODE
+    unset PIP_TARGET PIP_PREFIX PIP_ROOT
     export PYTHONNOUSERSITE=1 PIP_USER=0 PIP_DISABLE_PIP_VERSION_CHECK=1
 
     name_homebrew_library
