@@ -43,6 +43,8 @@ def workers() -> Iterator[Mapper]:  # type: ignore[type-arg]
     except BaseException:
         for process in list((pool._processes or {}).values()):
             process.terminate()
+        # Its thread must be done before the interpreter ends, or that complains of a closed pipe.
+        pool.shutdown(wait=True, cancel_futures=True)
         raise
     finally:
         pool.shutdown(wait=False, cancel_futures=True)

@@ -183,13 +183,8 @@ def judged_design(
         progress=lambda done, total: progress("boards", done, total),
     )
     progress("worst case", 0, 1)
-    worst = worst_case(
-        circuit,
-        response,
-        frequency,
-        target=wanted,
-        ranges=value_ranges(circuit, job.board.population),
-    )
+    ranges = value_ranges(circuit, job.board.population)
+    worst = worst_case(circuit, response, frequency, target=wanted, ranges=ranges)
     progress("limits", 0, 1)
     swing = swings(circuit, wanted, job)
     loop = _loop(job, program, sketch, boards=boards, seed=seed, progress=progress)

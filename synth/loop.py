@@ -353,7 +353,8 @@ def _gain_margin(
     # The size between two points of the grid is between theirs, near enough: only the
     # crossing that may be the nearest to 1 is worth finding exactly.
     k = _crossings(value.imag)
-    k = k[value.real[k] < 0]
+    # Across a pair of poles on the axis both parts change their signs, and that is no crossing.
+    k = k[(value.real[k] < 0) & (value.real[k + 1] < 0)]
     size = np.log(np.abs(value[k] * value[k + 1])) / 2
     best = math.inf
     if finite_at_dc and value.real[0] < 0:

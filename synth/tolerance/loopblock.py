@@ -1,4 +1,5 @@
-"""Margins and unstable poles of a block of boards, by a `LoopScan`: fast, and exact to about 1e-7.
+"""Margins and unstable poles of a block of boards, by a `LoopScan`: fast, and mostly exact to
+about 1e-7; margins of sharp crossings, where |L| runs along 1, may be a percent off.
 
 Only places are looked at where a board of the block may cross 1, cross -180 deg or come nearest
 to -1, by bounds on how far boards are from the nominal one.  A board that the scan does not

@@ -134,7 +134,7 @@ class LoopSweep:
     def _gain(self, ratio: Complex, value: Complex) -> Real:
         """Gain margin with its sign [dB], NaN without one."""
         board, cell = crossings(value.imag)
-        left = value.real[board, cell] < 0
+        left = (value.real[board, cell] < 0) & (value.real[board, cell + 1] < 0)
         board, cell = board[left], cell[left]
         ends = np.log(np.abs([value[board, cell], value[board, cell + 1]]))
         rough, reach = np.abs(ends.mean(axis=0)), np.abs(np.diff(ends, axis=0)[0]) / 2 + GAIN_SLACK

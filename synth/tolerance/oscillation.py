@@ -2,7 +2,7 @@
 
 The poles of every board would take longer than its response over a band.  First-order slopes about
 the nominal board tell which boards come closest to the axis; those are solved exactly, closest
-first, until a whole batch of them has its poles where H(s) has them.
+first, until several batches in a row have theirs where H(s) has them.
 """
 
 from __future__ import annotations
@@ -17,8 +17,10 @@ from synth.transfer import TransferFunction
 
 __all__ = ["OscillationWatch"]
 
-# Boards of a block solved at a time.
-BATCH = 16
+# Boards of a block solved at a time, and after how many such batches without a find it stops: the
+# order is to first order only.
+BATCH = 32
+CLEAN_BATCHES = 3
 
 
 class OscillationWatch:
@@ -29,6 +31,10 @@ class OscillationWatch:
         self._program, self._target = program, target
         poles, slopes = program.pole_slopes()
         own = of_its_own(poles[None], target)[0]
+        # Poles that are wanted on the right say nothing of those that are not.
+        for wanted in target.poles[target.poles.real > 0]:
+            distance = np.where(np.isfinite(own), np.abs(own - wanted), np.inf)
+            own[int(np.argmin(distance))] = np.inf
         used = np.isfinite(own) & np.all(np.isfinite(slopes), axis=1)
         self._damping = -own[used].real / np.abs(own[used])
         self._slopes = -slopes[used].real / np.abs(own[used])[:, None]
@@ -39,6 +45,7 @@ class OscillationWatch:
         """By board, how many poles lie right of the axis beyond those of H(s), shape (boards,)."""
         found = np.zeros(drawn.values.shape[0], dtype=np.intp)
         order = np.argsort(self._predicted(drawn), kind="stable")
+        clean = 0
         for start in range(0, order.size, BATCH):
             batch = order[start : start + BATCH]
             gain_bandwidth = drawn.gain_bandwidth
@@ -47,7 +54,8 @@ class OscillationWatch:
                 gain_bandwidth=None if gain_bandwidth is None else gain_bandwidth[batch],
             )
             found[batch] = poles_on_the_right(poles, self._target) - right_of_target(self._target)
-            if not found[batch].any():
+            clean = 0 if found[batch].any() else clean + 1
+            if clean == CLEAN_BATCHES:
                 break
         return found
 

@@ -293,3 +293,15 @@ def test_the_board_of_a_double_integrator_is_counted_as_one(leak: float) -> None
 
     assert loop_margins(loop, target).unstable_poles == 0
     assert loop_margins(loop, target, board).unstable_poles == 0
+
+
+def test_a_pair_of_poles_on_the_axis_is_no_crossing() -> None:
+    """Across it L changes the signs of both its parts at once: a grid that straddles it must
+    not take that for a passage of -180 deg."""
+    for f0 in (344.99427464588877, 100.0, 1e3):
+        w0 = 2 * np.pi * f0
+        plant = TransferFunction.from_factors(0.05 * w0**2, [], [Factor.pair(w0, np.inf)])
+        lead = TransferFunction.from_factors(1, [Factor.real(-w0 / 3)], [Factor.real(-3 * w0)])
+        found = loop_margins(Loop(plant=plant), lead)
+        assert found.unstable_poles == 0
+        assert found.gain_margin_db is None or found.gain_margin_db < 300

@@ -110,3 +110,18 @@ def test_poles_on_the_axis_may_lie_on_either_side_of_it():
     check = poles_check(np.append(poles, [5e3 + 1e5j, 5e3 - 1e5j]), target)
     assert (check.value, check.limit, check.passed) == (3.0, 1.0, False)
     assert not poles_check(np.delete(poles, 3), target).passed
+
+
+def test_poles_wanted_on_the_right_do_not_hide_others():
+    """H(s) has a growing pair, and slow op-amps drive another pair over the axis on some boards:
+    the wanted pair is always the one farthest to the right."""
+    poles = [Factor.pair(1.7e3, -3.0), Factor.pair(W0, 2.0)]
+    target = TransferFunction.from_factors(1.7e3**2 * W0**2, [], poles)
+    figures = {"gain_bandwidth": 8e6}
+    job = job_for(target, BAND, form="khn", op_amp_figures=figures, input_peak=1e-3)
+    circuit = sketch_form(job, "khn", FREQUENCY).circuit
+    circuit = circuit.with_values({p.ref: p.ideal for p in circuit.passives})
+    program, drawn, found = drawn_poles(circuit, 400)
+    expected = poles_on_the_right(found, target) - 2
+    assert 0 < np.mean(expected > 0) < 1
+    np.testing.assert_array_equal(OscillationWatch(program, target).excess(drawn), expected)
