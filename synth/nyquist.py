@@ -21,6 +21,7 @@ __all__ = [
     "LIKE_TARGET",
     "ROUND",
     "TURN",
+    "follows_target",
     "freed_of_axis",
     "is_decidable",
     "settled_turns",
@@ -38,7 +39,8 @@ TURN = 1.0
 ROUND = 0.9
 MOST_POINTS = 300_000
 
-# How far (a ratio) the board may be from H(s) at the frequency from which turning is counted.
+# How far the phase of the board may be from that of H(s) at the frequency from which turning is
+# counted [rad].
 LIKE_TARGET = 0.2
 
 
@@ -74,7 +76,7 @@ def unstable_poles(
     if asked is not None:
         if not is_decidable(parts[1]):
             return None
-        alike = np.flatnonzero(np.abs(value / asked - 1) < LIKE_TARGET)
+        alike = np.flatnonzero(follows_target(value, asked, parts[1]))
         start = int(alike[0]) if alike.size and parts[1].poles_at_origin else 0
         grid, value = grid[start:], value[start:]
     elif delay and sum(tf.relative_degree for tf in parts) <= 0 and abs(value[-1]) >= 1:
@@ -83,6 +85,18 @@ def unstable_poles(
     if settled is None:
         return None
     return round(turns_due(parts) + excess - float(np.sum(settled[2])) / math.pi)
+
+
+def follows_target(value: Complex, asked: Complex, target: TransferFunction) -> NDArray[np.bool_]:
+    """Where L of a board turns as that of H(s) = `target` does.
+
+    A pole at the origin that finite gain has moved shows in the phase, a quarter turn for each; a
+    gain that is off turns nothing, nor does its sign.  Arrays over frequency, any shape.
+    """
+    ratio = value / asked
+    if target.poles_at_origin == 1:
+        ratio = ratio * np.where(ratio.real < 0, -1.0, 1.0)
+    return np.asarray(np.abs(np.angle(ratio)) < LIKE_TARGET)
 
 
 def is_decidable(target: TransferFunction) -> bool:

@@ -22,9 +22,9 @@ from synth.job import Loop
 from synth.loop import loop_response
 from synth.nodal import NodalProgram
 from synth.nyquist import (
-    LIKE_TARGET,
     ROUND,
     TURN,
+    follows_target,
     freed_of_axis,
     is_decidable,
     turns_due,
@@ -179,7 +179,7 @@ class LoopSweep:
         angle = np.angle(freed_of_axis(self.grid, value, self.parts))
         steps = wrapped(np.diff(angle, axis=1))
         if self.target.poles_at_origin:
-            alike = np.abs(value / self.asked - 1) < LIKE_TARGET
+            alike = follows_target(value, self.asked, self.target)
             start = np.where(alike.any(axis=1), alike.argmax(axis=1), 0)
             steps[np.arange(steps.shape[1]) < start[:, None]] = 0.0
         size = np.abs(value)

@@ -305,3 +305,23 @@ def test_a_pair_of_poles_on_the_axis_is_no_crossing() -> None:
         found = loop_margins(Loop(plant=plant), lead)
         assert found.unstable_poles == 0
         assert found.gain_margin_db is None or found.gain_margin_db < 300
+
+
+@pytest.mark.parametrize("gain", [50.0, 300.0])
+@pytest.mark.parametrize("sign", [1, -1])
+def test_turns_count_from_where_the_phase_of_a_leaky_integrator_follows(
+    gain: float, sign: int
+) -> None:
+    """L = P H with H = 1/s and a board of (s + 40)/(s + 30)/(s + 1e-3), a third off but at high
+    frequencies, or inverted: as many unstable poles as the roots of the closed loop say."""
+    plant = TransferFunction.from_polynomials([gain], [1, 11, 10])
+    target = TransferFunction.from_polynomials([1], [1, 0])
+
+    def board(frequency_hz: np.ndarray) -> np.ndarray:
+        s = 2j * np.pi * frequency_hz
+        return sign * (s + 40) / (s + 30) / (s + 1e-3)
+
+    num = sign * gain * np.array([1.0, 40.0])
+    closed = np.polyadd(np.polymul(np.polymul([1, 11, 10], [1, 1e-3]), [1, 30]), num)
+    expected = int(np.sum(np.roots(closed).real > 0))
+    assert loop_margins(Loop(plant=plant), target, board).unstable_poles == expected
