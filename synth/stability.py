@@ -3,8 +3,7 @@
 Input: poles of boards as `NodalProgram.poles` gives them, and H(s).  Output: how many lie in the
 right half-plane.  A response over the band shows nothing of an op-amp that oscillates beyond it,
 and nothing of a resonance whose damping the op-amps have turned negative: |H| is the same on both
-sides of the axis.  Called by `synth.checks`, `synth.loop`, `synth.bandwidth`, `synth.tolerance`
-and what simulates a design.
+sides of the axis.  Called by `synth.checks`, `synth.bandwidth` and `synth.tolerance`.
 """
 
 from __future__ import annotations
